@@ -1,0 +1,1 @@
+//! Coherent averaging of shots.

@@ -1,0 +1,551 @@
+//! What the gauge must be told before it can measure: probe, material, zero, span, window.
+//!
+//! Everything here is `const`, so that a set-up written into firmware is checked by the compiler:
+//! [`GaugeSetup::new`] in a `const` stops the build with the sentence that names the field, while
+//! [`GaugeSetup::try_new`] returns a [`SetupError`] for a set-up that comes from a file or a menu.
+
+use crate::units::{Hertz, Metres, MetresPerSecond, Seconds};
+use core::fmt;
+
+/// Longest reference pulse, in samples. A pulse that needs more is refused with
+/// [`SetupError::PulseTooLong`]: lower the sample rate or average neighbouring samples.
+pub const PULSE_CAPACITY: usize = 512;
+
+/// Which two events the thickness is read between.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum Span {
+    /// 2 d / c = first back wall - zero offset. Needs a zero learned on a block.
+    TransmissionPulseToBackWall,
+    /// 2 d / c = first back wall - interface echo - zero offset (normally 0).
+    InterfaceToBackWall,
+    /// 2 d / c = the period of the back-wall train; the zero offset is only used to check.
+    BackWallToBackWall,
+}
+
+/// How the probe meets the part.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum ProbeKind {
+    /// The element sits on the part, with a wear plate and a couplant film between.
+    Contact,
+    /// A delay line or a water path stands between; its end gives an interface echo.
+    DelayLine,
+    /// A transmitter and a receiver under an angle: the sound path is a V.
+    DualElement,
+}
+
+/// What touches the couplant: decides how much a film of it shifts the echo.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum ProbeFace {
+    /// Ceramic wear plate, about 38.5 MRayl.
+    Hard,
+    /// Plastic (polystyrene or alike), about 2.5 MRayl.
+    Plastic,
+}
+
+/// The probe as its data sheet describes it.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct Probe {
+    /// How it meets the part.
+    pub kind: ProbeKind,
+    /// Arithmetic middle of the -6 dB limits of the two-way spectrum.
+    pub centre_frequency: Hertz,
+    /// -6 dB width of the two-way spectrum over the centre frequency: 0.6 is 60 %. Above 0, up to 2.
+    pub relative_bandwidth: f32,
+    /// Diameter of the active element, if known: without it the budget has no term for the beam.
+    pub element_diameter: Option<Metres>,
+    /// What touches the couplant.
+    pub face: ProbeFace,
+    /// How far the couplant film may differ from the film that the zero was learned with. The
+    /// uncertainty's coupling term follows from it; 0 leaves it out.
+    pub couplant_film: Metres,
+}
+
+impl Probe {
+    const fn of_kind(kind: ProbeKind, face: ProbeFace, centre_frequency: Hertz, relative_bandwidth: f32) -> Self {
+        Self {
+            kind,
+            centre_frequency,
+            relative_bandwidth,
+            element_diameter: None,
+            face,
+            couplant_film: Metres::new(2e-6),
+        }
+    }
+
+    /// A contact probe with a hard face and 2 µm of uncertain couplant film.
+    #[must_use]
+    pub const fn contact(centre_frequency: Hertz, relative_bandwidth: f32) -> Self {
+        Self::of_kind(
+            ProbeKind::Contact,
+            ProbeFace::Hard,
+            centre_frequency,
+            relative_bandwidth,
+        )
+    }
+
+    /// A probe with a plastic delay line (or a water path) and 2 µm of uncertain couplant film.
+    #[must_use]
+    pub const fn delay_line(centre_frequency: Hertz, relative_bandwidth: f32) -> Self {
+        Self::of_kind(
+            ProbeKind::DelayLine,
+            ProbeFace::Plastic,
+            centre_frequency,
+            relative_bandwidth,
+        )
+    }
+
+    /// A dual-element probe. Its V-shaped path is not corrected yet: every reading carries
+    /// [`crate::outcome::Doubt::VPathUncorrected`].
+    #[must_use]
+    pub const fn dual_element(centre_frequency: Hertz, relative_bandwidth: f32) -> Self {
+        Self::of_kind(
+            ProbeKind::DualElement,
+            ProbeFace::Plastic,
+            centre_frequency,
+            relative_bandwidth,
+        )
+    }
+
+    /// The same probe with a known element diameter.
+    #[must_use]
+    pub const fn with_element_diameter(mut self, diameter: Metres) -> Self {
+        self.element_diameter = Some(diameter);
+        self
+    }
+
+    /// The same probe with another bound on the couplant film's change.
+    #[must_use]
+    pub const fn with_couplant_film(mut self, film: Metres) -> Self {
+        self.couplant_film = film;
+        self
+    }
+
+    /// The same probe with another face.
+    #[must_use]
+    pub const fn with_face(mut self, face: ProbeFace) -> Self {
+        self.face = face;
+        self
+    }
+
+    /// -6 dB width of the spectrum.
+    #[must_use]
+    pub const fn bandwidth(&self) -> Hertz {
+        Hertz::new(self.centre_frequency.get() * self.relative_bandwidth)
+    }
+
+    /// Upper -6 dB limit of the spectrum.
+    #[must_use]
+    pub const fn upper_frequency(&self) -> Hertz {
+        Hertz::new(self.centre_frequency.get() * (1.0 + 0.5 * self.relative_bandwidth))
+    }
+}
+
+/// The part's material.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct Material {
+    /// Velocity of longitudinal waves in the part.
+    pub velocity: MetresPerSecond,
+    /// Its standard uncertainty (k = 1), for the part and not only for a block.
+    pub velocity_standard_uncertainty: MetresPerSecond,
+}
+
+impl Material {
+    /// A material with its velocity and the velocity's standard uncertainty.
+    #[must_use]
+    pub const fn new(velocity: MetresPerSecond, velocity_standard_uncertainty: MetresPerSecond) -> Self {
+        Self {
+            velocity,
+            velocity_standard_uncertainty,
+        }
+    }
+}
+
+/// A coating between probe and part.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct Coating {
+    /// Velocity of longitudinal waves in the coating.
+    pub velocity: MetresPerSecond,
+}
+
+/// The probe's zero, as learned on a block. It belongs to the reference pulse it was learned with.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct Zero {
+    /// Where the part's front surface lies on the record's time axis.
+    pub offset: Seconds,
+    /// Its standard uncertainty (k = 1).
+    pub standard_uncertainty: Seconds,
+    /// Correlation between the errors of velocity and offset, from -1 to 1. A two-block calibration
+    /// makes it strongly positive; to leave it out would misstate every uncertainty.
+    pub velocity_correlation: f32,
+}
+
+impl Zero {
+    /// A zero whose error has nothing to do with the velocity's.
+    #[must_use]
+    pub const fn new(offset: Seconds, standard_uncertainty: Seconds) -> Self {
+        Self {
+            offset,
+            standard_uncertainty,
+            velocity_correlation: 0.0,
+        }
+    }
+}
+
+/// The part of the record in which echoes are looked for.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct Window {
+    /// Start: beyond the transmission pulse and its recovery (the dead zone).
+    pub from: Seconds,
+    /// End. A record that ends earlier is used as far as it goes.
+    pub to: Seconds,
+}
+
+/// Thicknesses that a calibration has covered.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct CalibratedRange {
+    /// Thinnest block.
+    pub from: Metres,
+    /// Thickest block.
+    pub to: Metres,
+}
+
+/// The complete set-up of a gauge.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct GaugeSetup {
+    /// Samples per second of every record that will be measured.
+    pub sample_rate: Hertz,
+    /// The probe.
+    pub probe: Probe,
+    /// The part's material.
+    pub material: Material,
+    /// The zero.
+    pub zero: Zero,
+    /// Between which events the thickness is read.
+    pub span: Span,
+    /// Where echoes are looked for.
+    pub window: Window,
+    /// k of the expanded uncertainty: 2 stands for about 95 %.
+    pub coverage_factor: f32,
+    /// A coating, if its thickness shall be read too.
+    pub coating: Option<Coating>,
+    /// What the calibration covered, if there was one.
+    pub calibrated: Option<CalibratedRange>,
+}
+
+impl GaugeSetup {
+    /// Checks everything and builds the set-up. k is 2; no coating; no calibrated range.
+    ///
+    /// # Errors
+    /// The first field that is wrong, as a [`SetupError`].
+    pub const fn try_new(
+        sample_rate: Hertz,
+        probe: Probe,
+        material: Material,
+        zero: Zero,
+        span: Span,
+        window: Window,
+    ) -> Result<Self, SetupError> {
+        let setup = Self {
+            sample_rate,
+            probe,
+            material,
+            zero,
+            span,
+            window,
+            coverage_factor: 2.0,
+            coating: None,
+            calibrated: None,
+        };
+        match setup.check() {
+            None => Ok(setup),
+            Some(error) => Err(error),
+        }
+    }
+
+    /// The same for a `const`, where a wrong set-up stops the build with the sentence that names
+    /// the field.
+    ///
+    /// # Panics
+    /// On a wrong set-up. Meant for `const` only; at run time use [`GaugeSetup::try_new`].
+    #[must_use]
+    #[allow(clippy::panic)]
+    pub const fn new(
+        sample_rate: Hertz,
+        probe: Probe,
+        material: Material,
+        zero: Zero,
+        span: Span,
+        window: Window,
+    ) -> Self {
+        match Self::try_new(sample_rate, probe, material, zero, span, window) {
+            Ok(setup) => setup,
+            Err(error) => panic!("{}", error.sentence()),
+        }
+    }
+
+    /// The same set-up with another coverage factor.
+    #[must_use]
+    pub const fn with_coverage_factor(mut self, k: f32) -> Self {
+        self.coverage_factor = k;
+        self
+    }
+
+    /// The same set-up for a coated part.
+    #[must_use]
+    pub const fn with_coating(mut self, coating: Coating) -> Self {
+        self.coating = Some(coating);
+        self
+    }
+
+    /// The same set-up with the thicknesses that its calibration covered.
+    #[must_use]
+    pub const fn with_calibrated_range(mut self, range: CalibratedRange) -> Self {
+        self.calibrated = Some(range);
+        self
+    }
+
+    /// Samples per cycle of the centre frequency.
+    #[must_use]
+    pub const fn samples_per_cycle(&self) -> f32 {
+        self.sample_rate.get() / self.probe.centre_frequency.get()
+    }
+
+    /// The first thing that is wrong with this set-up; `None` if it can be used. Called by
+    /// [`GaugeSetup::try_new`] and again when a gauge is made, because the fields are public.
+    #[must_use]
+    pub const fn check(&self) -> Option<SetupError> {
+        let rate = self.sample_rate.get();
+        let probe = &self.probe;
+        // `is_finite` first: every comparison below then means what it says.
+        if !(rate.is_finite() && rate > 0.0) {
+            return Some(SetupError::SampleRate);
+        }
+        if !(probe.centre_frequency.is_finite() && probe.centre_frequency.get() > 0.0) {
+            return Some(SetupError::CentreFrequency);
+        }
+        if !(probe.relative_bandwidth > 0.0 && probe.relative_bandwidth <= 2.0) {
+            return Some(SetupError::RelativeBandwidth);
+        }
+        if rate < 2.0 * probe.upper_frequency().get() {
+            return Some(SetupError::SampleRateBelowBand);
+        }
+        if let Some(diameter) = probe.element_diameter
+            && !(diameter.is_finite() && diameter.get() > 0.0)
+        {
+            return Some(SetupError::ElementDiameter);
+        }
+        if !(probe.couplant_film.is_finite() && probe.couplant_film.get() >= 0.0) {
+            return Some(SetupError::CouplantFilm);
+        }
+        if !(self.material.velocity.is_finite() && self.material.velocity.get() > 0.0) {
+            return Some(SetupError::Velocity);
+        }
+        let velocity_uncertainty = self.material.velocity_standard_uncertainty;
+        if !(velocity_uncertainty.is_finite() && velocity_uncertainty.get() >= 0.0) {
+            return Some(SetupError::VelocityUncertainty);
+        }
+        if !self.zero.offset.is_finite() {
+            return Some(SetupError::ZeroOffset);
+        }
+        if !(self.zero.standard_uncertainty.is_finite() && self.zero.standard_uncertainty.get() >= 0.0) {
+            return Some(SetupError::ZeroUncertainty);
+        }
+        if !(self.zero.velocity_correlation >= -1.0 && self.zero.velocity_correlation <= 1.0) {
+            return Some(SetupError::ZeroCorrelation);
+        }
+        let window = &self.window;
+        if !(window.from.is_finite() && window.to.is_finite() && window.from.get() < window.to.get()) {
+            return Some(SetupError::Window);
+        }
+        if !(self.coverage_factor.is_finite() && self.coverage_factor > 0.0) {
+            return Some(SetupError::CoverageFactor);
+        }
+        if let Some(coating) = self.coating
+            && !(coating.velocity.is_finite() && coating.velocity.get() > 0.0)
+        {
+            return Some(SetupError::CoatingVelocity);
+        }
+        if let Some(range) = self.calibrated {
+            let ordered = range.from.is_finite() && range.to.is_finite() && range.from.get() <= range.to.get();
+            if !(ordered && range.from.get() > 0.0) {
+                return Some(SetupError::CalibratedRange);
+            }
+        }
+        None
+    }
+}
+
+/// What is wrong with a set-up: the caller's fault, found at build or at start.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+#[non_exhaustive]
+pub enum SetupError {
+    /// The sample rate is not a positive number.
+    SampleRate,
+    /// The sample rate is below twice the upper band limit.
+    SampleRateBelowBand,
+    /// The centre frequency is not a positive number.
+    CentreFrequency,
+    /// The relative bandwidth is not above 0 and up to 200 %.
+    RelativeBandwidth,
+    /// The element diameter is not a positive number.
+    ElementDiameter,
+    /// The couplant film is negative or not a number.
+    CouplantFilm,
+    /// The velocity is not a positive number.
+    Velocity,
+    /// The velocity's uncertainty is negative or not a number.
+    VelocityUncertainty,
+    /// The zero offset is not a number.
+    ZeroOffset,
+    /// The zero's uncertainty is negative or not a number.
+    ZeroUncertainty,
+    /// The correlation of velocity and zero is not between -1 and 1.
+    ZeroCorrelation,
+    /// The window's start does not lie before its end.
+    Window,
+    /// The coverage factor is not a positive number.
+    CoverageFactor,
+    /// The coating's velocity is not a positive number.
+    CoatingVelocity,
+    /// The calibrated range is empty, reversed or not positive.
+    CalibratedRange,
+    /// The reference pulse needs more than [`PULSE_CAPACITY`] samples.
+    PulseTooLong,
+    /// The reference pulse has no echo in it: too short, all zero, or not numbers.
+    PulseEmpty,
+    /// The caller's scratch memory is too small; the numbers are samples of a record.
+    WorkspaceTooSmall {
+        /// What is needed.
+        needed: u32,
+        /// What was given.
+        got: u32,
+    },
+}
+
+impl SetupError {
+    /// The field and the remedy, in one sentence.
+    #[must_use]
+    pub const fn sentence(&self) -> &'static str {
+        match self {
+            Self::SampleRate => "sample rate must be a positive number of hertz",
+            Self::SampleRateBelowBand => {
+                "sample rate must be at least twice the probe's upper -6 dB frequency: sample faster or use a lower probe"
+            }
+            Self::CentreFrequency => "centre frequency must be a positive number of hertz",
+            Self::RelativeBandwidth => "relative bandwidth must be above 0 and at most 200 %",
+            Self::ElementDiameter => "element diameter must be a positive length, or left out if unknown",
+            Self::CouplantFilm => "couplant film must be zero or a positive length",
+            Self::Velocity => "velocity must be a positive number of metres per second",
+            Self::VelocityUncertainty => "velocity standard uncertainty must be zero or positive",
+            Self::ZeroOffset => "zero offset must be a number of seconds",
+            Self::ZeroUncertainty => "zero standard uncertainty must be zero or positive",
+            Self::ZeroCorrelation => "correlation of velocity and zero must lie between -1 and 1",
+            Self::Window => "the window must start before it ends",
+            Self::CoverageFactor => "coverage factor must be a positive number, normally 2",
+            Self::CoatingVelocity => "coating velocity must be a positive number of metres per second",
+            Self::CalibratedRange => "calibrated range must go from a positive thickness to one not below it",
+            Self::PulseTooLong => {
+                "the reference pulse is longer than the gauge can hold: lower the sample rate or use a wider band"
+            }
+            Self::PulseEmpty => "the reference pulse holds no echo: learn it again on a block",
+            Self::WorkspaceTooSmall { .. } => "the scratch memory is smaller than the record",
+        }
+    }
+}
+
+impl fmt::Display for SetupError {
+    fn fmt(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
+        f.write_str(self.sentence())?;
+        if let Self::WorkspaceTooSmall { needed, got } = self {
+            write!(f, " (needed {needed} samples, got {got})")?;
+        }
+        Ok(())
+    }
+}
+
+impl core::error::Error for SetupError {}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    const GOOD: GaugeSetup = GaugeSetup::new(
+        Hertz::from_mhz(50.0),
+        Probe::contact(Hertz::from_mhz(5.0), 0.6).with_element_diameter(Metres::from_mm(6.0)),
+        Material::new(MetresPerSecond::new(5920.0), MetresPerSecond::new(17.0)),
+        Zero::new(Seconds::ZERO, Seconds::from_ns(1.0)),
+        Span::BackWallToBackWall,
+        Window {
+            from: Seconds::from_us(0.5),
+            to: Seconds::from_us(60.0),
+        },
+    );
+
+    /// Spoils one field and returns what the check says.
+    fn spoilt(change: impl Fn(&mut GaugeSetup)) -> Option<SetupError> {
+        let mut setup = GOOD;
+        change(&mut setup);
+        setup.check()
+    }
+
+    #[test]
+    fn every_field_is_checked() {
+        assert_eq!(GOOD.check(), None);
+        assert_eq!(spoilt(|s| s.sample_rate = Hertz::ZERO), Some(SetupError::SampleRate));
+        assert_eq!(
+            spoilt(|s| s.sample_rate = Hertz::from_mhz(12.9)),
+            Some(SetupError::SampleRateBelowBand)
+        );
+        assert_eq!(
+            spoilt(|s| s.probe.centre_frequency = Hertz::new(f32::NAN)),
+            Some(SetupError::CentreFrequency)
+        );
+        assert_eq!(
+            spoilt(|s| s.probe.relative_bandwidth = 2.01),
+            Some(SetupError::RelativeBandwidth)
+        );
+        assert_eq!(
+            spoilt(|s| s.probe.element_diameter = Some(Metres::ZERO)),
+            Some(SetupError::ElementDiameter)
+        );
+        assert_eq!(
+            spoilt(|s| s.probe.couplant_film = Metres::new(-1e-6)),
+            Some(SetupError::CouplantFilm)
+        );
+        assert_eq!(
+            spoilt(|s| s.material.velocity = MetresPerSecond::new(-1.0)),
+            Some(SetupError::Velocity)
+        );
+        assert_eq!(
+            spoilt(|s| s.material.velocity_standard_uncertainty = MetresPerSecond::new(f32::NAN)),
+            Some(SetupError::VelocityUncertainty)
+        );
+        assert_eq!(
+            spoilt(|s| s.zero.offset = Seconds::new(f32::INFINITY)),
+            Some(SetupError::ZeroOffset)
+        );
+        assert_eq!(
+            spoilt(|s| s.zero.standard_uncertainty = Seconds::new(-1.0)),
+            Some(SetupError::ZeroUncertainty)
+        );
+        assert_eq!(
+            spoilt(|s| s.zero.velocity_correlation = 1.1),
+            Some(SetupError::ZeroCorrelation)
+        );
+        assert_eq!(spoilt(|s| s.window.to = s.window.from), Some(SetupError::Window));
+        assert_eq!(spoilt(|s| s.coverage_factor = 0.0), Some(SetupError::CoverageFactor));
+        assert_eq!(
+            spoilt(|s| s.coating = Some(Coating {
+                velocity: MetresPerSecond::ZERO
+            })),
+            Some(SetupError::CoatingVelocity)
+        );
+        assert_eq!(
+            spoilt(|s| s.calibrated = Some(CalibratedRange {
+                from: Metres::new(2.0),
+                to: Metres::new(1.0)
+            })),
+            Some(SetupError::CalibratedRange)
+        );
+    }
+}

@@ -1,0 +1,1 @@
+//! Blocks to zero and velocity.

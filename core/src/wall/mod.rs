@@ -1,0 +1,5 @@
+//! What the echoes say about the part.
+
+pub mod calibration;
+pub mod thickness;
+pub mod uncertainty;

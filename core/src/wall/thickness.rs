@@ -1,0 +1,1 @@
+//! Times to thickness.

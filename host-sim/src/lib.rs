@@ -1,0 +1,1 @@
+//! The simulator: makes A-scans with known truth, and measures them with the core.

@@ -1,0 +1,1 @@
+//! Every check; the file names tell where the truth comes from: val_ outside, law_ symmetry, regress_ our own past.
