@@ -1,1 +1,4 @@
 //! What the checks share.
+
+pub mod oracle;
+pub mod published;

@@ -1,0 +1,139 @@
+//! Reads the tables of `tests/published/`, which `tests/published/README.md` describes.
+//!
+//! Plain comma-separated numbers and words, no quotes. A table that is missing or malformed is a
+//! mistake in this repository, so everything here panics with file, line and column.
+
+use std::path::PathBuf;
+
+fn text(name: &str) -> String {
+    let path = PathBuf::from(env!("CARGO_MANIFEST_DIR")).join("published").join(name);
+    std::fs::read_to_string(&path).unwrap_or_else(|error| panic!("{}: {error}", path.display()))
+}
+
+/// A table with a header line.
+#[derive(Debug)]
+pub struct Table {
+    name: String,
+    header: Vec<String>,
+    rows: Vec<Vec<String>>,
+}
+
+impl Table {
+    /// Reads `tests/published/{name}`.
+    #[must_use]
+    pub fn read(name: &str) -> Self {
+        let text = text(name);
+        let mut lines = text
+            .lines()
+            .map(|line| line.split(',').map(|cell| cell.trim().to_owned()).collect::<Vec<_>>());
+        let header = lines.next().unwrap_or_default();
+        let rows: Vec<_> = lines.collect();
+        for (index, row) in rows.iter().enumerate() {
+            assert_eq!(row.len(), header.len(), "{name}, line {}: number of cells", index + 2);
+        }
+        assert!(!rows.is_empty(), "{name} has no rows");
+        Self {
+            name: name.to_owned(),
+            header,
+            rows,
+        }
+    }
+
+    /// The rows in the order of the file.
+    pub fn rows(&self) -> impl Iterator<Item = Row<'_>> {
+        (0..self.rows.len()).map(|index| Row { table: self, index })
+    }
+
+    /// The first row whose `column` holds `word`.
+    #[must_use]
+    pub fn row_where(&self, column: &str, word: &str) -> Row<'_> {
+        self.rows()
+            .find(|row| row.text(column) == word)
+            .unwrap_or_else(|| panic!("{}: no row with {column} = {word}", self.name))
+    }
+}
+
+/// One row of a [`Table`].
+#[derive(Clone, Copy, Debug)]
+pub struct Row<'t> {
+    table: &'t Table,
+    index: usize,
+}
+
+impl<'t> Row<'t> {
+    /// A cell as it stands in the file.
+    #[must_use]
+    pub fn text(&self, column: &str) -> &'t str {
+        let place = self.table.header.iter().position(|name| name == column);
+        let place = place.unwrap_or_else(|| panic!("{}: no column {column}", self.table.name));
+        &self.table.rows[self.index][place]
+    }
+
+    /// A cell as a number.
+    #[must_use]
+    pub fn number(&self, column: &str) -> f64 {
+        self.text(column)
+            .parse()
+            .unwrap_or_else(|error| panic!("{}, line {}, column {column}: {error}", self.table.name, self.index + 2))
+    }
+
+    /// A cell as a number, `None` if it is empty.
+    #[must_use]
+    pub fn optional_number(&self, column: &str) -> Option<f64> {
+        (!self.text(column).is_empty()).then(|| self.number(column))
+    }
+
+    /// A cell as a count.
+    #[must_use]
+    pub fn count(&self, column: &str) -> usize {
+        let value = self.number(column);
+        assert!(
+            value >= 0.0 && value.fract() == 0.0,
+            "{}: {column} is no count",
+            self.table.name
+        );
+        value as usize
+    }
+}
+
+/// A file without a header: one record a line.
+#[must_use]
+pub fn number_rows(name: &str) -> Vec<Vec<f64>> {
+    let rows: Vec<Vec<f64>> = text(name)
+        .lines()
+        .enumerate()
+        .map(|(line, cells)| {
+            let number = |cell: &str| {
+                cell.parse()
+                    .unwrap_or_else(|error| panic!("{name}, line {}: {cell}: {error}", line + 1))
+            };
+            cells.split(',').map(number).collect()
+        })
+        .collect();
+    assert!(!rows.is_empty(), "{name} is empty");
+    rows
+}
+
+/// A file of ADC codes without a header: one record a line.
+#[must_use]
+pub fn code_rows(name: &str) -> Vec<Vec<i16>> {
+    let code = |value: &f64| {
+        let whole = value.fract() == 0.0 && (-32768.0..=32767.0).contains(value);
+        assert!(whole, "{name}: {value} is no 16-bit code");
+        *value as i16
+    };
+    number_rows(name)
+        .iter()
+        .map(|row| row.iter().map(code).collect())
+        .collect()
+}
+
+/// The delay-line A-scan: 900 codes of 16 bits with full scale 1, at 100 MS/s, the first one
+/// 6.0 µs after the trigger.
+#[must_use]
+pub fn delay_line_codes() -> Vec<i16> {
+    Table::read("delay_line_ascan.csv")
+        .rows()
+        .map(|row| (row.number("y") * 32768.0).round() as i16)
+        .collect()
+}
