@@ -1,1 +1,4 @@
 //! The simulator: makes A-scans with known truth, and measures them with the core.
+
+pub mod input_error;
+pub mod record_file;
