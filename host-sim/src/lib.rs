@@ -1,4 +1,5 @@
 //! The simulator: makes A-scans with known truth, and measures them with the core.
 
+pub mod cli;
 pub mod input_error;
 pub mod record_file;

@@ -1,1 +1,5 @@
-fn main() {}
+//! The command `halfpulse`.
+
+fn main() -> std::process::ExitCode {
+    halfpulse_sim::cli::main()
+}

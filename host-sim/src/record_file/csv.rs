@@ -153,7 +153,7 @@ fn clock(path: &Path, columns: &Columns) -> Result<(Option<StatedRate>, Option<f
     }
     let steps = (times.len() - 1) as f64;
     let step = (last - first) / steps;
-    if !(step > 0.0) {
+    if step.is_nan() || step <= 0.0 {
         return Err(InputError::in_line(
             path,
             columns.lines.last().copied().unwrap_or(0),

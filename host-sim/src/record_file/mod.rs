@@ -264,7 +264,7 @@ fn floats_to_codes(path: &Path, raw: &Raw, values: &[f64], coding: &Coding) -> R
         }
         let scaled = value / full_scale;
         // Half a step of headroom in the comparison, so that rounding of the stored value is no fault.
-        if !(scaled.abs() <= 1.0 + 0.5 / 32768.0) {
+        if scaled.abs() > 1.0 + 0.5 / 32768.0 {
             return Err(fault_at(
                 path,
                 raw,
