@@ -7,13 +7,13 @@ use crate::setup::PULSE_CAPACITY;
 
 /// Lags of one correlation window: enough for three quarters of a cycle each way at 200 samples a
 /// cycle, and the interpolation kernel beyond.
-pub const CORRELATION_CAPACITY: usize = 384;
+pub const CORRELATION_CAPACITY: usize = 512;
 
 /// Most echoes that one record yields.
 pub const ECHO_CAPACITY: usize = 16;
 
 /// Lags kept for each echo while a train is fitted.
-pub const TRAIN_LAGS: usize = 24;
+pub const TRAIN_LAGS: usize = 26;
 
 /// Scratch memory for records of up to `SAMPLES` samples: 2 bytes a sample and about 6 KiB.
 #[derive(Debug)]

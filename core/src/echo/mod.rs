@@ -1,5 +1,9 @@
 //! What came back, and when.
 
+pub mod arrival;
+pub mod correlation;
+pub mod envelope;
+pub mod interpolate;
 pub mod pulse;
 pub mod separation;
 

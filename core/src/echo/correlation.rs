@@ -1,0 +1,153 @@
+//! Correlation of a stretch of the record with the reference pulse, at whole lags and between them.
+//!
+//! For white noise the delay that maximises the squared correlation is the least-squares (and
+//! maximum-likelihood) delay of a pulse of known shape and unknown amplitude, because shifting a
+//! band-limited pulse does not change its energy. So every fit of a pulse is a search in these
+//! numbers, and the record is touched once.
+
+use crate::echo::interpolate;
+use crate::echo::pulse::ReferencePulse;
+use crate::math;
+
+/// Half the distance, in samples, of the three points that a maximum is interpolated from. Small enough for the
+/// curvature to be the local one, large enough for `f32`.
+const STEP: f32 = 0.25;
+
+/// R\[k\] = Σ_j s\[j\] x\[first + k + j\] for every k of `lags`. Samples outside the record count as zero.
+pub fn correlate_into(codes: &[i16], first: i32, pulse: &ReferencePulse<'_>, lags: &mut [f32]) {
+    let length = pulse.samples.len();
+    let mut start = first;
+    let mut blocks = lags.chunks_exact_mut(4);
+    for block in &mut blocks {
+        // Four lags at a time: every pulse sample is loaded once for the four.
+        let inside = usize::try_from(start)
+            .ok()
+            .and_then(|s| codes.get(s..)?.get(..length + 3));
+        if let (Some(x), [a, b, c, d]) = (inside, &mut *block) {
+            let (mut ra, mut rb, mut rc, mut rd) = (0.0, 0.0, 0.0, 0.0);
+            for (s, w) in pulse.samples.iter().zip(x.windows(4)) {
+                if let [p, q, r, t] = w {
+                    ra += s * f32::from(*p);
+                    rb += s * f32::from(*q);
+                    rc += s * f32::from(*r);
+                    rd += s * f32::from(*t);
+                }
+            }
+            (*a, *b, *c, *d) = (ra, rb, rc, rd);
+        } else {
+            for (k, lag) in block.iter_mut().enumerate() {
+                *lag = single(codes, start.saturating_add(k as i32), pulse);
+            }
+        }
+        start = start.saturating_add(4);
+    }
+    for (k, lag) in blocks.into_remainder().iter_mut().enumerate() {
+        *lag = single(codes, start.saturating_add(k as i32), pulse);
+    }
+}
+
+/// One lag, with zeros outside the record.
+fn single(codes: &[i16], start: i32, pulse: &ReferencePulse<'_>) -> f32 {
+    let skip = if start < 0 { start.unsigned_abs() as usize } else { 0 };
+    let begin = usize::try_from(start).unwrap_or(0);
+    let (Some(samples), Some(x)) = (pulse.samples.get(skip..), codes.get(begin..)) else {
+        return 0.0;
+    };
+    let mut sum = 0.0;
+    for (s, &code) in samples.iter().zip(x) {
+        sum += s * f32::from(code);
+    }
+    sum
+}
+
+/// Which sign of the correlation a search accepts.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum Sign {
+    /// The pulse as it is.
+    Positive,
+    /// The pulse upside down.
+    Negative,
+    /// Whichever fits better.
+    Either,
+}
+
+impl Sign {
+    /// The correlation as this search sees it: larger is better.
+    fn merit(self, value: f32) -> f32 {
+        match self {
+            Self::Positive => value,
+            Self::Negative => -value,
+            Self::Either => value.abs(),
+        }
+    }
+}
+
+/// The best lag between `from` and `to` (indices into `lags`), to half a sample.
+///
+/// Below eight samples a cycle the neighbours of the true maximum can both lie lower than another
+/// cycle's top sample, so the correlation is then looked at between the lags too.
+#[must_use]
+pub fn coarse_maximum(lags: &[f32], from: usize, to: usize, sign: Sign, samples_per_cycle: f32) -> Option<f32> {
+    let between = samples_per_cycle < 8.0;
+    let (mut place, mut best) = (None, 0.0);
+    for (i, &value) in lags.iter().enumerate().take(to.saturating_add(1)).skip(from) {
+        let merit = sign.merit(value);
+        if merit > best {
+            (place, best) = (Some(i as f32), merit);
+        }
+        if between {
+            for quarter in [0.25, 0.5, 0.75] {
+                let at = i as f32 + quarter;
+                let merit = sign.merit(interpolate::at(lags, at));
+                if merit > best {
+                    (place, best) = (Some(at), merit);
+                }
+            }
+        }
+    }
+    place
+}
+
+/// Climbs from `place` to the local maximum (or, where the correlation is negative, minimum) of the
+/// interpolated correlation. Gives the place and the correlation there.
+#[must_use]
+pub fn refine(lags: &[f32], place: f32) -> (f32, f32) {
+    let mut place = place;
+    let mut value = interpolate::at(lags, place);
+    for _ in 0..6 {
+        let left = interpolate::at(lags, place - STEP);
+        let right = interpolate::at(lags, place + STEP);
+        let curvature = left - 2.0 * value + right;
+        // On the way to a top the curvature points down (as the value's sign sees it).
+        if !(curvature * value < 0.0) {
+            break;
+        }
+        let step = math::clamp(STEP * 0.5 * (left - right) / curvature, -0.5, 0.5);
+        place += step;
+        value = interpolate::at(lags, place);
+        if step.abs() < 2e-4 {
+            break;
+        }
+    }
+    (place, value)
+}
+
+/// Slope of the interpolated correlation at `place`, per sample.
+#[must_use]
+pub fn slope(lags: &[f32], place: f32) -> f32 {
+    (interpolate::at(lags, place + STEP) - interpolate::at(lags, place - STEP)) / (2.0 * STEP)
+}
+
+/// Energy of a stretch of the record about its own mean.
+#[must_use]
+pub fn energy(codes: &[i16]) -> f32 {
+    // 32-bit sums of squares of 16-bit codes would overflow: 64 bits hold 2^34 of them.
+    let (mut sum, mut squares) = (0i64, 0i64);
+    for &code in codes {
+        sum += i64::from(code);
+        squares += i64::from(i32::from(code) * i32::from(code));
+    }
+    let count = codes.len().max(1) as f32;
+    let sum = sum as f32;
+    squares as f32 - sum * (sum / count)
+}
