@@ -1,0 +1,152 @@
+//! What a reading costs on the microcontroller, beside its budgets.
+
+use crate::toolchain::{CORTEX_M4F, Features, Toolchain, root};
+use crate::{Checks, Trouble, emulator, image};
+use halfpulse_mps2::canned::RECORDS;
+use serde::Deserialize;
+use std::fs;
+
+/// The committed budgets.
+#[derive(Debug, Deserialize)]
+#[serde(deny_unknown_fields)]
+struct Budget {
+    instructions: u64,
+    flash_bytes: u64,
+    static_ram_bytes: u64,
+    stack_bytes: u64,
+}
+
+/// One line of costs that the board wrote.
+#[derive(Clone, Debug, PartialEq)]
+struct Cost {
+    record: String,
+    what: String,
+    instructions: u64,
+    stack: u64,
+}
+
+pub fn run(checks: &mut Checks) -> Result<(), Trouble> {
+    let budget = read_budget().map_err(Trouble::Failed)?;
+    let toolchain = Toolchain::find(CORTEX_M4F)?;
+    let file = toolchain.build_measure(Features::Normal).map_err(Trouble::Failed)?;
+    let costs = parse(&emulator::run(&file)?).map_err(Trouble::Failed)?;
+    let sizes = image::sizes(&file).map_err(Trouble::Failed)?;
+    let records: u64 = RECORDS.iter().map(|record| record.file.len() as u64).sum();
+
+    println!(
+        "{:<20} {:<10} {:>13} {:>12}",
+        "record", "step", "instructions", "stack bytes"
+    );
+    for cost in &costs {
+        println!(
+            "{:<20} {:<10} {:>13} {:>12}",
+            cost.record, cost.what, cost.instructions, cost.stack
+        );
+    }
+    let measuring = costs.iter().filter(|cost| cost.what == "measure");
+    let instructions = measuring.map(|cost| cost.instructions).max().unwrap_or(u64::MAX);
+    let stack = costs.iter().map(|cost| cost.stack).max().unwrap_or(u64::MAX);
+    println!("\nCortex-M4F, {toolchain}; instructions as executed, not cycles; records of 4096 samples");
+    for (name, what, value, limit) in [
+        (
+            "instructions",
+            "instructions of the costliest reading",
+            instructions,
+            budget.instructions,
+        ),
+        (
+            "flash",
+            "bytes of flash without the canned records",
+            sizes.flash.saturating_sub(records),
+            budget.flash_bytes,
+        ),
+        (
+            "static_ram",
+            "bytes of static RAM, codes and scratch memory included",
+            sizes.static_ram,
+            budget.static_ram_bytes,
+        ),
+        (
+            "stack",
+            "bytes of stack from reset to the deepest call",
+            stack,
+            budget.stack_bytes,
+        ),
+    ] {
+        let text = format!("{value} {what}; budget {limit}");
+        checks.check(
+            &format!("{name}_within_budget"),
+            if value <= limit { Ok(text) } else { Err(text) },
+        );
+    }
+    Ok(())
+}
+
+fn read_budget() -> Result<Budget, String> {
+    let file = root().join("tests/board_budget.toml");
+    let text = fs::read_to_string(&file).map_err(|error| format!("{}: {error}", file.display()))?;
+    toml::from_str(&text).map_err(|error| format!("{}: {error}", file.display()))
+}
+
+/// Reads the board's `cost` lines; each belongs to the record named before it.
+fn parse(transcript: &str) -> Result<Vec<Cost>, String> {
+    let mut record = "";
+    let mut costs = Vec::new();
+    for line in transcript.lines() {
+        record = line.strip_prefix("record ").unwrap_or(record);
+        let Some(rest) = line.strip_prefix("cost ") else {
+            continue;
+        };
+        let number = |key: &str| {
+            rest.split(' ')
+                .find_map(|word| word.strip_prefix(key)?.strip_prefix('='))
+                .and_then(|digits| u64::from_str_radix(digits, 16).ok())
+                .ok_or_else(|| format!("no {key} in the board's line `{line}`"))
+        };
+        costs.push(Cost {
+            record: record.to_owned(),
+            what: rest.split(' ').next().unwrap_or_default().to_owned(),
+            instructions: number("instructions")?,
+            stack: number("stack")?,
+        });
+    }
+    if costs.iter().filter(|cost| cost.what == "measure").count() == RECORDS.len() {
+        Ok(costs)
+    } else {
+        Err(format!(
+            "the board did not write the costs of {} records:\n{transcript}",
+            RECORDS.len()
+        ))
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn the_committed_budget_can_be_read() {
+        let budget = read_budget().unwrap();
+        assert!(budget.instructions > 0 && budget.stack_bytes > 0);
+    }
+
+    #[test]
+    fn costs_belong_to_their_record() {
+        let one = "record a\nhealth x=1\ncost measure instructions=000000ff stack=00000010\n";
+        let costs = parse(&one.repeat(RECORDS.len())).unwrap();
+        assert_eq!(
+            costs[0],
+            Cost {
+                record: "a".to_owned(),
+                what: "measure".to_owned(),
+                instructions: 255,
+                stack: 16
+            }
+        );
+        assert!(parse(one).is_err(), "too few records");
+        assert!(
+            parse(&"record a\ncost measure stack=1\n".repeat(RECORDS.len())).is_err(),
+            "no instructions"
+        );
+    }
+}

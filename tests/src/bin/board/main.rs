@@ -1,0 +1,159 @@
+//! `cargo board`: everything about the microcontroller, from a machine that has none.
+//!
+//! Finds a core library for the target (or the means to build one), builds the firmware, runs it in
+//! the emulator and looks at what came out: the same bits as on the host, no panic that can be
+//! reached, and what it costs.
+
+mod compare;
+mod emulator;
+mod figures;
+mod image;
+mod panics;
+mod toolchain;
+
+use std::process::ExitCode;
+use toolchain::{CORTEX_M0_PLUS, CORTEX_M4F, Features, Toolchain};
+
+const HELP: &str = "\
+usage: cargo board VERB
+
+  build [TARGET]  cross build: the core for Cortex-M4F and Cortex-M0+, and the image `measure`;
+                  with TARGET (thumbv7em-none-eabihf, thumbv6m-none-eabi) only for that one
+  panics          no panic can be reached in the image, and the check that says so can fail
+  figures         instructions, flash, static RAM and stack, beside the budgets of tests/board_budget.toml
+  tools           what is there and what is missing
+
+Every verb builds what it needs. Exit status 0: all is well; 1: something failed; 3: a tool is missing.
+";
+
+/// Why a verb came to nothing.
+#[derive(Debug)]
+pub enum Trouble {
+    /// A tool is missing; the text says how to get it.
+    Missing(String),
+    /// Anything else that went wrong.
+    Failed(String),
+}
+
+impl Trouble {
+    fn failed(text: impl Into<String>) -> Self {
+        Self::Failed(text.into())
+    }
+}
+
+/// Counts checks and prints them as the test runner does.
+#[derive(Debug, Default)]
+pub struct Checks {
+    passed: u32,
+    failed: u32,
+}
+
+impl Checks {
+    /// One check: `Ok` with what is worth telling, or `Err` with what is wrong.
+    pub fn check(&mut self, name: &str, outcome: Result<String, String>) {
+        let (verdict, text) = match outcome {
+            Ok(text) => {
+                self.passed += 1;
+                ("ok", text)
+            }
+            Err(text) => {
+                self.failed += 1;
+                ("FAILED", text)
+            }
+        };
+        println!("test board::{name} ... {verdict}");
+        for line in text.lines() {
+            println!("    {line}");
+        }
+    }
+
+    /// The closing line, in the test runner's words.
+    fn close(&self) -> ExitCode {
+        let (verdict, code) = if self.failed == 0 {
+            ("ok", ExitCode::SUCCESS)
+        } else {
+            ("FAILED", ExitCode::FAILURE)
+        };
+        println!(
+            "\ntest result: {verdict}. {} passed; {} failed; 0 ignored; 0 measured; 0 filtered out",
+            self.passed, self.failed
+        );
+        code
+    }
+}
+
+fn main() -> ExitCode {
+    let arguments: Vec<String> = std::env::args().skip(1).collect();
+    let words: Vec<&str> = arguments.iter().map(String::as_str).collect();
+    let mut checks = Checks::default();
+    let outcome = match words.as_slice() {
+        ["build"] => build(&mut checks, &[CORTEX_M4F, CORTEX_M0_PLUS]),
+        ["build", target] if [CORTEX_M4F, CORTEX_M0_PLUS].contains(target) => build(&mut checks, &[target]),
+        ["run"] => compare::run(&mut checks),
+        ["panics"] => panics::run(&mut checks),
+        ["figures"] => figures::run(&mut checks),
+        ["tools"] => return told(tools()),
+        ["--help" | "-h" | "help"] => {
+            print!("{HELP}");
+            return ExitCode::SUCCESS;
+        }
+        _ => {
+            eprint!("{HELP}");
+            return ExitCode::FAILURE;
+        }
+    };
+    match outcome {
+        Ok(()) => checks.close(),
+        Err(trouble) => told(Err(trouble)),
+    }
+}
+
+/// For verbs without checks.
+fn told(outcome: Result<(), Trouble>) -> ExitCode {
+    match outcome {
+        Ok(()) => ExitCode::SUCCESS,
+        Err(Trouble::Missing(text)) => {
+            eprintln!("board: {text}");
+            ExitCode::from(3)
+        }
+        Err(Trouble::Failed(text)) => {
+            eprintln!("board: {text}");
+            ExitCode::FAILURE
+        }
+    }
+}
+
+fn build(checks: &mut Checks, targets: &[&str]) -> Result<(), Trouble> {
+    for target in targets {
+        let toolchain = Toolchain::find(target)?;
+        let outcome = toolchain.build_core();
+        checks.check(
+            &format!("core_builds_for_{}", target.replace('-', "_")),
+            outcome.map(|()| toolchain.to_string()),
+        );
+        if *target == CORTEX_M4F {
+            let outcome = toolchain.build_measure(Features::Normal);
+            checks.check("measure_links", outcome.map(|image| image.display().to_string()));
+        }
+    }
+    Ok(())
+}
+
+fn tools() -> Result<(), Trouble> {
+    let mut missing = String::new();
+    for target in [CORTEX_M4F, CORTEX_M0_PLUS] {
+        match Toolchain::find(target) {
+            Ok(toolchain) => println!("{target}: {toolchain}"),
+            Err(Trouble::Missing(text) | Trouble::Failed(text)) => missing += &format!("{text}\n"),
+        }
+    }
+    match emulator::find() {
+        Ok(version) => println!("emulator: {version}"),
+        Err(Trouble::Missing(text) | Trouble::Failed(text)) => missing += &text,
+    }
+    if missing.is_empty() {
+        Ok(())
+    } else {
+        Err(Trouble::Missing(missing))
+    }
+}
