@@ -3,3 +3,5 @@
 pub mod cli;
 pub mod input_error;
 pub mod record_file;
+pub mod setup_file;
+pub mod spelling;

@@ -1,0 +1,169 @@
+//! The one table of the set-up file's keys: reading, writing and help all come from it.
+
+/// One key of the set-up file.
+#[derive(Clone, Copy, Debug)]
+pub struct Key {
+    /// The table it stands in; empty for the top of the file.
+    pub table: &'static str,
+    /// Its name.
+    pub name: &'static str,
+    /// What it says, with unit, range and default.
+    pub about: &'static str,
+}
+
+const fn key(table: &'static str, name: &'static str, about: &'static str) -> Key {
+    Key { table, name, about }
+}
+
+/// Every key that a set-up file may have, in the order in which they are written.
+pub const KEYS: &[Key] = &[
+    key("", "version", "version of the set-up file: 1"),
+    key(
+        "record",
+        "sample_rate_mhz",
+        "samples per microsecond; at least twice the probe's upper band edge",
+    ),
+    key(
+        "record",
+        "first_sample_us",
+        "time of the first sample after the transmission trigger; without it the file's own, else 0",
+    ),
+    key(
+        "record",
+        "bits",
+        "bits of the converter, 2 to 16; files of floats do without",
+    ),
+    key(
+        "record",
+        "codes",
+        "\"signed\" (default) or \"offset-binary\", right-justified",
+    ),
+    key(
+        "record",
+        "full_scale",
+        "what a file of floats calls full scale; default 1",
+    ),
+    key(
+        "probe",
+        "kind",
+        "\"contact\", \"delay-line\" (also a water path) or \"dual-element\"",
+    ),
+    key(
+        "probe",
+        "centre_frequency_mhz",
+        "middle of the -6 dB limits of the two-way spectrum",
+    ),
+    key(
+        "probe",
+        "relative_bandwidth_percent",
+        "-6 dB width over the centre frequency; above 0, at most 200",
+    ),
+    key(
+        "probe",
+        "element_diameter_mm",
+        "diameter of the active element; leave it out if unknown",
+    ),
+    key(
+        "probe",
+        "face",
+        "what touches the couplant: \"hard\" (default of contact) or \"plastic\" (default of the others)",
+    ),
+    key(
+        "probe",
+        "couplant_film_um",
+        "how far the couplant film may differ from the one at calibration; default 2",
+    ),
+    key(
+        "probe",
+        "reference_pulse",
+        ".npy file of the learned pulse, relative to this file; without it a modelled pulse is used",
+    ),
+    key("material", "name", "what the part is made of; only shown"),
+    key("material", "velocity_m_s", "velocity of longitudinal waves in the part"),
+    key(
+        "material",
+        "velocity_standard_uncertainty_m_s",
+        "its standard uncertainty (k = 1), for the part",
+    ),
+    key(
+        "coating",
+        "velocity_m_s",
+        "velocity in the coating; the table asks for coating and wall",
+    ),
+    key(
+        "zero",
+        "offset_ns",
+        "where the part's front surface lies on the record's time axis; default 0",
+    ),
+    key(
+        "zero",
+        "standard_uncertainty_ns",
+        "its standard uncertainty (k = 1); needed by transmission-pulse-to-back-wall",
+    ),
+    key(
+        "zero",
+        "reference_pulse_checksum",
+        "checksum of the pulse that the zero was learned with; written by calibrate",
+    ),
+    key(
+        "measure",
+        "span",
+        "\"transmission-pulse-to-back-wall\", \"interface-to-back-wall\" or \"back-wall-to-back-wall\"",
+    ),
+    key(
+        "measure",
+        "from_us",
+        "where to look for echoes: beyond the transmission pulse",
+    ),
+    key("measure", "to_us", "where to stop looking; default: the record's end"),
+    key("measure", "coverage_factor", "k of the expanded uncertainty; default 2"),
+    key(
+        "calibration",
+        "velocity_zero_correlation",
+        "correlation of the errors of velocity and zero, -1 to 1; default 0",
+    ),
+    key(
+        "calibration",
+        "from_mm",
+        "thinnest thickness that the calibration covers",
+    ),
+    key("calibration", "to_mm", "thickest thickness that the calibration covers"),
+    key("calibration", "blocks_mm", "thicknesses of the blocks; only shown"),
+    key("calibration", "temperature_c", "temperature of the blocks; only shown"),
+    key(
+        "calibration",
+        "date",
+        "day of the calibration, as \"2026-01-31\"; only shown",
+    ),
+];
+
+/// The names of the tables, in the order in which they are written.
+pub fn tables() -> impl Iterator<Item = &'static str> {
+    let mut last = "";
+    KEYS.iter().filter_map(move |key| {
+        let new = key.table != last;
+        last = key.table;
+        new.then_some(key.table)
+    })
+}
+
+/// The keys of one table.
+pub fn keys_of(table: &str) -> impl Iterator<Item = &'static Key> {
+    KEYS.iter().filter(move |key| key.table == table)
+}
+
+/// All keys with what they say, for help.
+#[must_use]
+pub fn help() -> String {
+    let mut text = String::from("Set-up file (TOML), its keys:\n");
+    let mut table = "";
+    for key in KEYS {
+        if key.table != table {
+            table = key.table;
+            text.push_str(&format!("  [{table}]\n"));
+        }
+        let indent = if table.is_empty() { "  " } else { "    " };
+        text.push_str(&format!("{indent}{}\n{indent}    {}\n", key.name, key.about));
+    }
+    text
+}

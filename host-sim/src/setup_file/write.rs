@@ -1,0 +1,101 @@
+//! A set-up back into its file, each key with what it says.
+
+use super::keys::KEYS;
+use super::{CODES, FACES, KINDS, SPANS, SetupKeys, word_of};
+use crate::input_error::InputError;
+use std::path::Path;
+
+fn number(value: f64) -> String {
+    // `{:?}` keeps a point in whole numbers and the shortest digits that read back the same.
+    format!("{value:?}")
+}
+
+fn quoted(text: &str) -> String {
+    let mut out = String::from("\"");
+    for c in text.chars() {
+        match c {
+            '"' | '\\' => {
+                out.push('\\');
+                out.push(c);
+            }
+            c if c.is_control() => out.push_str(&format!("\\u{:04X}", u32::from(c))),
+            c => out.push(c),
+        }
+    }
+    out.push('"');
+    out
+}
+
+impl SetupKeys {
+    /// The value of one key as it stands in a file; `None` leaves it out.
+    fn value_of(&self, table: &str, name: &str) -> Option<String> {
+        let calibration = self.calibration.as_ref();
+        let word = |text: &str| Some(quoted(text));
+        match (table, name) {
+            ("", "version") => Some("1".to_string()),
+            ("record", "sample_rate_mhz") => Some(number(self.record.sample_rate_mhz)),
+            ("record", "first_sample_us") => self.record.first_sample_us.map(number),
+            ("record", "bits") => self.record.bits.map(|bits| bits.to_string()),
+            ("record", "codes") => word(word_of(CODES, self.record.codes)),
+            ("record", "full_scale") => self.record.full_scale.map(number),
+            ("probe", "kind") => word(word_of(KINDS, self.probe.kind)),
+            ("probe", "centre_frequency_mhz") => Some(number(self.probe.centre_frequency_mhz)),
+            ("probe", "relative_bandwidth_percent") => Some(number(self.probe.relative_bandwidth_percent)),
+            ("probe", "element_diameter_mm") => self.probe.element_diameter_mm.map(number),
+            ("probe", "face") => self.probe.face.and_then(|face| word(word_of(FACES, face))),
+            ("probe", "couplant_film_um") => Some(number(self.probe.couplant_film_um)),
+            ("probe", "reference_pulse") => self.probe.reference_pulse.as_deref().and_then(word),
+            ("material", "name") => self.material.name.as_deref().and_then(word),
+            ("material", "velocity_m_s") => Some(number(self.material.velocity_m_s)),
+            ("material", "velocity_standard_uncertainty_m_s") => {
+                Some(number(self.material.velocity_standard_uncertainty_m_s))
+            }
+            ("coating", "velocity_m_s") => self.coating_velocity_m_s.map(number),
+            ("zero", "offset_ns") => Some(number(self.zero.offset_ns)),
+            ("zero", "standard_uncertainty_ns") => self.zero.standard_uncertainty_ns.map(number),
+            ("zero", "reference_pulse_checksum") => self.zero.reference_pulse_checksum.as_deref().and_then(word),
+            ("measure", "span") => word(word_of(SPANS, self.measure.span)),
+            ("measure", "from_us") => Some(number(self.measure.from_us)),
+            ("measure", "to_us") => self.measure.to_us.map(number),
+            ("measure", "coverage_factor") => Some(number(self.measure.coverage_factor)),
+            ("calibration", "velocity_zero_correlation") => {
+                calibration.and_then(|c| c.velocity_zero_correlation).map(number)
+            }
+            ("calibration", "from_mm") => calibration.and_then(|c| c.from_mm).map(number),
+            ("calibration", "to_mm") => calibration.and_then(|c| c.to_mm).map(number),
+            ("calibration", "blocks_mm") => calibration.map(|c| {
+                let blocks: Vec<String> = c.blocks_mm.iter().copied().map(number).collect();
+                format!("[{}]", blocks.join(", "))
+            }),
+            ("calibration", "temperature_c") => calibration.and_then(|c| c.temperature_c).map(number),
+            ("calibration", "date") => calibration.and_then(|c| c.date.as_deref()).and_then(word),
+            _ => None,
+        }
+    }
+
+    /// The whole file as text, with a comment above each key.
+    #[must_use]
+    pub fn to_toml(&self) -> String {
+        let mut text = String::from("# Set-up of a thickness gauge. Times count from the transmission trigger.\n");
+        let mut table = "";
+        for key in KEYS {
+            let Some(value) = self.value_of(key.table, key.name) else {
+                continue;
+            };
+            if key.table != table {
+                table = key.table;
+                text.push_str(&format!("\n[{table}]\n"));
+            }
+            text.push_str(&format!("# {}\n{} = {value}\n", key.about, key.name));
+        }
+        text
+    }
+
+    /// Writes the file.
+    ///
+    /// # Errors
+    /// A file that cannot be written.
+    pub fn write(&self, path: &Path) -> Result<(), InputError> {
+        std::fs::write(path, self.to_toml()).map_err(|error| InputError::unwritable(path, &error))
+    }
+}
