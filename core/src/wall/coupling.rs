@@ -121,7 +121,7 @@ mod tests {
             (ProbeFace::Hard, 1.0, 15.676_127),
             (ProbeFace::Hard, 2.0, 29.500_315),
             (ProbeFace::Hard, 5.0, 56.925_26),
-            (ProbeFace::Hard, 10.0, 76.785_525),
+            (ProbeFace::Hard, 10.0, 76.785_52),
             (ProbeFace::Hard, 20.0, 89.889_03),
             (ProbeFace::Plastic, 0.5, 0.913_769_85),
             (ProbeFace::Plastic, 1.0, 1.827_274_2),

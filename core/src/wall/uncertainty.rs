@@ -1,7 +1,10 @@
 //! The uncertainty budget: named terms, combined as JCGM 100:2008 (5.1.2) says.
 
 use crate::math;
-use crate::units::Metres;
+use crate::setup::{GaugeSetup, ProbeKind, Span};
+use crate::units::{Metres, Seconds};
+use crate::wall::thickness::{TrainTimes, excess, round_trip, wall_span};
+use crate::wall::{beam, coupling};
 use heapless::Vec;
 
 /// Where a share of the uncertainty comes from.
@@ -96,5 +99,389 @@ impl Budget {
             }
         }
         largest.map(|term| term.source)
+    }
+}
+
+/// 1 / sqrt(3): the standard uncertainty of a rectangular distribution over its half-width
+/// (JCGM 100:2008, 4.3.7).
+const RECTANGULAR: f32 = 0.577_350_26;
+
+/// The budget of a wall that was read with [`crate::wall::thickness::wall`].
+///
+/// | term | value |
+/// |---|---|
+/// | timing | c / 2 times the uncertainty of the round trip from noise |
+/// | velocity | d / c times the velocity's uncertainty |
+/// | zero | c / 2 times the zero's uncertainty; not between back walls |
+/// | calibration | instead of the two before, where the set-up says that their errors are correlated |
+/// | beam | c / 2 times the whole uncorrected diffraction shift, as the half-width of a rectangle; only if the element is known |
+/// | coupling | c / 2 times the shift by the couplant film, likewise |
+///
+/// Nothing but timing depends on the noise, so a budget that timing does not dominate is not made smaller by averaging.
+/// A span without its times (see [`round_trip`]) has no timing term: there is no reading then.
+#[must_use]
+pub fn budget(setup: &GaugeSetup, times: &TrainTimes, wall: Metres) -> Budget {
+    let mut budget = Budget::new();
+    let half_velocity = setup.material.velocity * 0.5;
+    if let Some(trip) = round_trip(setup, times) {
+        budget.add(Source::Timing, half_velocity * trip.standard_uncertainty);
+    }
+    add_calibration(&mut budget, setup, wall);
+    let beam = half_velocity * beam_half_width(setup, wall);
+    budget.add(Source::Beam, beam * RECTANGULAR);
+    let coupling = half_velocity * coupling::half_width(&setup.probe, wall_span(setup));
+    budget.add(Source::Coupling, coupling * RECTANGULAR);
+    budget
+}
+
+/// Velocity and zero: apart, or as one term if their errors hang together.
+///
+/// d = c (t - t0) / 2, so that ∂d/∂c = d / c and ∂d/∂t0 = -c / 2, and with A = (d / c) u(c), B = (c / 2) u(t0):
+/// u² = A² + B² - 2 r A B = (A - B)² + 2 (1 - r) A B (JCGM 100:2008, 5.2.2). The second form cannot turn negative
+/// by rounding where both cancel, which is at the thickness of the block.
+fn add_calibration(budget: &mut Budget, setup: &GaugeSetup, wall: Metres) {
+    let material = &setup.material;
+    let velocity = (wall * (material.velocity_standard_uncertainty / material.velocity)).abs();
+    if matches!(wall_span(setup), Span::BackWallToBackWall) {
+        budget.add(Source::Velocity, velocity);
+        return;
+    }
+    let zero = material.velocity * 0.5 * setup.zero.standard_uncertainty;
+    let correlation = setup.zero.velocity_correlation;
+    if correlation == 0.0 {
+        budget.add(Source::Velocity, velocity);
+        budget.add(Source::Zero, zero);
+    } else {
+        let (a, b) = (velocity.get(), zero.get());
+        let variance = (a - b) * (a - b) + 2.0 * (1.0 - correlation) * a * b;
+        budget.add(Source::Calibration, Metres::new(math::sqrt(variance)));
+    }
+}
+
+/// How far diffraction can have moved the round trip of the span.
+///
+/// * Between back walls in direct contact: the largest shift between neighbours.
+/// * Behind a delay line, whose own path is not known: as if the path in the part began at the element, see
+///   [`beam::uncorrected_shift`].
+/// * From the transmission pulse: the first back wall's own shift. If a calibration is named, its zero has taken
+///   the shift of the blocks with it, and what remains is the larger of the differences to the thinnest and to the
+///   thickest block.
+///
+/// 0 without an element diameter; a dual-element probe counts as a single element of that diameter.
+fn beam_half_width(setup: &GaugeSetup, wall: Metres) -> Seconds {
+    let Some(diameter) = setup.probe.element_diameter else {
+        return Seconds::ZERO;
+    };
+    let (velocity, frequency) = (setup.material.velocity, setup.probe.centre_frequency);
+    let shift = |from: Metres, to: Metres| beam::uncorrected_shift(diameter, velocity, frequency, from * 2.0, to * 2.0);
+    let behind_delay_line = matches!(setup.probe.kind, ProbeKind::DelayLine);
+    match (wall_span(setup), setup.calibrated) {
+        (Span::BackWallToBackWall, _) if !behind_delay_line => {
+            beam::uncorrected_period_shift(diameter, velocity, frequency, wall * 2.0)
+        }
+        (Span::TransmissionPulseToBackWall, Some(range)) if !behind_delay_line => {
+            larger(shift(range.from, wall), shift(range.to, wall))
+        }
+        (Span::TransmissionPulseToBackWall | Span::InterfaceToBackWall, Some(range)) => {
+            // The zero may or may not have been learned on the blocks: take the longer way.
+            let beyond = range.to - wall;
+            shift(Metres::ZERO, if beyond > wall { beyond } else { wall })
+        }
+        _ => shift(Metres::ZERO, wall),
+    }
+}
+
+/// Could the spreading of a beam whose element the set-up does not name move this wall by more than `limit` (a
+/// half-width: say, the expanded uncertainty)? Judged with an element of two wavelengths, smaller than any usual one and
+/// so with the largest shift. Always false if the element is known: then the shift stands in the budget.
+#[must_use]
+pub fn unknown_beam_matters(setup: &GaugeSetup, wall: Metres, limit: Metres) -> bool {
+    if setup.probe.element_diameter.is_some() {
+        return false;
+    }
+    let mut smallest = *setup;
+    smallest.probe.element_diameter = Some(setup.material.velocity / setup.probe.centre_frequency * 2.0);
+    setup.material.velocity * 0.5 * beam_half_width(&smallest, wall) > limit
+}
+
+/// Standard uncertainty (k = 1) of a coating that was read with [`crate::wall::thickness::coating`]: timing of first
+/// back wall, start and period; the zero; beam and couplant of the first back wall and of the period together, as
+/// rectangles. The coating's velocity is taken as exact: its uncertainty is for the user to add. `None` if there is no
+/// coating to read.
+#[must_use]
+pub fn coating_uncertainty(setup: &GaugeSetup, times: &TrainTimes, wall: Metres) -> Option<Metres> {
+    let half_velocity = setup.coating?.velocity * 0.5;
+    let left = excess(setup, times)?;
+    let mut budget = Budget::new();
+    budget.add(Source::Timing, half_velocity * left.standard_uncertainty);
+    budget.add(Source::Zero, half_velocity * setup.zero.standard_uncertainty);
+    let mut first = *setup;
+    first.coating = None;
+    first.span = match setup.probe.kind {
+        ProbeKind::DelayLine => Span::InterfaceToBackWall,
+        ProbeKind::Contact | ProbeKind::DualElement => Span::TransmissionPulseToBackWall,
+    };
+    let beam = beam_half_width(&first, wall) + beam_half_width(setup, wall);
+    budget.add(Source::Beam, half_velocity * beam * RECTANGULAR);
+    let film = coupling::half_width(&setup.probe, first.span) + coupling::half_width(&setup.probe, wall_span(setup));
+    budget.add(Source::Coupling, half_velocity * film * RECTANGULAR);
+    Some(budget.combined())
+}
+
+/// The longer of two times.
+fn larger(a: Seconds, b: Seconds) -> Seconds {
+    if b > a { b } else { a }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::setup::{CalibratedRange, Coating, Material, Probe, Window, Zero};
+    use crate::units::{Hertz, MetresPerSecond};
+    use crate::wall::calibration::{Block, zero_and_velocity, zero_at_known_velocity};
+    use crate::wall::thickness::Timed;
+    use proptest::prelude::*;
+
+    const STEEL: MetresPerSecond = MetresPerSecond::new(5920.0);
+
+    /// 5 MHz on steel, with neither element nor couplant film, so that those terms are nothing.
+    fn bare(probe: Probe, span: Span, velocity_uncertainty: f32, zero: Zero) -> GaugeSetup {
+        GaugeSetup::new(
+            Hertz::from_mhz(50.0),
+            probe.with_couplant_film(Metres::ZERO),
+            Material::new(STEEL, MetresPerSecond::new(velocity_uncertainty)),
+            zero,
+            span,
+            Window {
+                from: Seconds::from_us(0.5),
+                to: Seconds::from_us(60.0),
+            },
+        )
+    }
+
+    fn contact() -> Probe {
+        Probe::contact(Hertz::from_mhz(5.0), 0.6)
+    }
+
+    fn single(u_ns: f32) -> TrainTimes {
+        TrainTimes::single(Timed::new(Seconds::from_us(3.0), Seconds::from_ns(u_ns)))
+    }
+
+    fn term(budget: &Budget, source: Source) -> f32 {
+        let found = budget.terms().iter().find(|term| term.source == source);
+        found.map_or(0.0, |term| term.standard_uncertainty.get() * 1e6)
+    }
+
+    #[test]
+    fn val_independent_terms() {
+        // Root of the sum of squares by hand: velocity +- 0.5 % rectangular, time 0.5 ns, zero 2 ns, 5920 m/s; the
+        // terms as an independent budget has them (NumPy): 1.48, 5.92 and, for 2 and 10 mm, 5.77350 and 28.86751 µm.
+        let zero = Zero::new(Seconds::ZERO, Seconds::from_ns(2.0));
+        let setup = bare(
+            contact(),
+            Span::TransmissionPulseToBackWall,
+            5920.0 * 0.005 * RECTANGULAR,
+            zero,
+        );
+        for (wall, velocity, combined) in [(2.0, 5.773_503, 8.400_626f32), (10.0, 28.867_514, 29.505_41)] {
+            let budget = budget(&setup, &single(0.5), Metres::from_mm(wall));
+            assert!((term(&budget, Source::Timing) - 1.48).abs() < 1e-5);
+            assert!((term(&budget, Source::Zero) - 5.92).abs() < 1e-5);
+            assert!((term(&budget, Source::Velocity) - velocity).abs() < 1e-5);
+            assert!(
+                (budget.combined().get() * 1e6 - combined).abs() < 2e-4,
+                "{:?}",
+                budget.combined()
+            );
+            assert_eq!(budget.terms().len(), 3);
+        }
+    }
+
+    #[test]
+    fn val_root_of_squares() {
+        // JCGM 100:2008, 5.1.2: 5, 3 and 2 combine to sqrt(38) = 6.164414003.
+        let mut budget = Budget::new();
+        budget.add(Source::Timing, Metres::new(5.0));
+        budget.add(Source::Velocity, Metres::new(3.0));
+        budget.add(Source::Zero, Metres::new(2.0));
+        budget.add(Source::Beam, Metres::new(f32::NAN));
+        budget.add(Source::Coupling, Metres::ZERO);
+        assert!((budget.combined().get() - 6.164_414).abs() < 1e-6);
+        assert_eq!((budget.dominating(), budget.terms().len()), (Some(Source::Timing), 3));
+        // The rectangle: JCGM 100:2008, 4.3.7.
+        assert!((RECTANGULAR - 0.577_350_27).abs() < 1e-7);
+    }
+
+    #[test]
+    fn val_two_block_calibration() {
+        // Blocks of 5 and 25 mm (2 µm, 1 ns each), reading 1 ns: combined standard uncertainty by GTC (automatic
+        // propagation with correlations), within 0.3 % of a Monte Carlo of 400 000 draws.
+        let block = |mm: f32| Block {
+            thickness: Metres::from_mm(mm),
+            thickness_uncertainty: Metres::new(2e-6),
+            time: Seconds::from_us(0.5) + Metres::from_mm(2.0 * mm) / STEEL,
+            time_uncertainty: Seconds::from_ns(1.0),
+        };
+        let (zero, material) = zero_and_velocity(&block(5.0), &block(25.0)).unwrap();
+        let mut setup = bare(contact(), Span::TransmissionPulseToBackWall, 0.0, zero);
+        setup.material = material;
+        for (wall, um) in [
+            (1.0, 5.258_21),
+            (5.0, 4.639_310_3),
+            (10.0, 4.091_161),
+            (15.0, 3.891_323_7),
+            (25.0, 4.639_310_3),
+            (50.0, 9.659_565),
+            (100.0, 21.820_98),
+        ] {
+            let budget = budget(&setup, &single(1.0), Metres::from_mm(wall));
+            let combined = budget.combined().get() * 1e6;
+            assert!(
+                (combined - um).abs() < 0.001 * um,
+                "{wall} mm: {combined} µm, GTC {um} µm"
+            );
+            assert_eq!(term(&budget, Source::Velocity) + term(&budget, Source::Zero), 0.0);
+        }
+    }
+
+    #[test]
+    fn a_doubtful_velocity_cancels_at_the_block_that_set_the_zero() {
+        let material = Material::new(STEEL, MetresPerSecond::new(17.0));
+        let block = Block {
+            thickness: Metres::from_mm(10.0),
+            thickness_uncertainty: Metres::new(1e-6),
+            time: Seconds::from_us(0.5) + Metres::from_mm(20.0) / STEEL,
+            time_uncertainty: Seconds::ZERO,
+        };
+        let zero = zero_at_known_velocity(&block, &material).unwrap();
+        let setup = bare(contact(), Span::TransmissionPulseToBackWall, 17.0, zero);
+        let at = |mm| term(&budget(&setup, &single(0.0), Metres::from_mm(mm)), Source::Calibration);
+        // At the block only the block's own error is left; elsewhere the velocity acts on the difference.
+        assert!((at(10.0) - 1.0).abs() < 0.02, "{}", at(10.0));
+        let expected = (1.0f32 + (10.0f32 / 5920.0 * 17.0 * 1e3).powi(2)).sqrt();
+        assert!((at(20.0) - expected).abs() < 0.02 * expected, "{} {expected}", at(20.0));
+    }
+
+    #[test]
+    fn between_back_walls_the_zero_does_not_count() {
+        let zero = Zero {
+            velocity_correlation: 0.8,
+            ..Zero::new(Seconds::ZERO, Seconds::from_ns(50.0))
+        };
+        let setup = bare(contact(), Span::BackWallToBackWall, 17.0, zero);
+        let times = single(9.0).with_period(Timed::new(Seconds::from_us(3.0), Seconds::from_ns(1.0)), 0.0);
+        let budget = budget(&setup, &times, Metres::from_mm(10.0));
+        assert!((term(&budget, Source::Timing) - 2.96).abs() < 1e-5);
+        assert!((term(&budget, Source::Velocity) - 28.716_22).abs() < 1e-4);
+        assert_eq!(budget.terms().len(), 2);
+    }
+
+    #[test]
+    fn beam_and_coupling_stand_in_the_budget() {
+        let probe = contact().with_element_diameter(Metres::from_mm(6.0));
+        let mut setup = bare(
+            probe,
+            Span::TransmissionPulseToBackWall,
+            0.0,
+            Zero::new(Seconds::ZERO, Seconds::ZERO),
+        );
+        // Phase at 5 MHz of Rogers & Van Buren's factor, 10 mm of steel: 17.12837 ns, 50.69997 µm (SciPy 1.17).
+        let at = |setup: &GaugeSetup, mm| term(&budget(setup, &single(0.0), Metres::from_mm(mm)), Source::Beam);
+        assert!((at(&setup, 10.0) - 50.699_97 * RECTANGULAR).abs() < 0.01);
+        // A zero learned on a block has the shift in it: nothing at the block, the difference (42.43498 - 17.12837 ns)
+        // elsewhere.
+        let ten = Metres::from_mm(10.0);
+        setup = setup.with_calibrated_range(CalibratedRange { from: ten, to: ten });
+        assert_eq!(at(&setup, 10.0), 0.0);
+        assert!((at(&setup, 50.0) - 25.306_61 * 2.96 * RECTANGULAR).abs() < 0.02);
+        assert!(at(&setup, 2.0) > 0.99 * (17.128_37 - 6.139_24) * 2.96 * RECTANGULAR);
+        // 2 µm of film under a hard face: 29.5 ns by exact layer matrices, two ways.
+        setup.probe.couplant_film = Metres::new(2e-6);
+        let film = term(&budget(&setup, &single(0.0), ten), Source::Coupling);
+        assert!((film - 29.500_315 * 2.96 * RECTANGULAR).abs() < 0.03 * film);
+    }
+
+    #[test]
+    fn val_reference_a_scan_lies_within_its_uncertainty() {
+        // Independent numpy model of a delay-line A-scan with diffraction and 5 µm of couplant: 4.000 mm reads
+        // 3.985901 mm from the interface and 3.980367 mm between back walls.
+        let probe = Probe::delay_line(Hertz::from_mhz(5.0), 0.6)
+            .with_element_diameter(Metres::from_mm(6.0))
+            .with_couplant_film(Metres::new(5e-6));
+        let noise_free = |us: f32| Timed::new(Seconds::from_us(us), Seconds::ZERO);
+        let times = TrainTimes::single(noise_free(9.156_77))
+            .with_period(noise_free(1.344_72), 0.0)
+            .with_interface(noise_free(7.810_18));
+        for (span, reads) in [
+            (Span::InterfaceToBackWall, 3.985_901),
+            (Span::BackWallToBackWall, 3.980_367),
+        ] {
+            let mut setup = bare(probe, span, 0.0, Zero::new(Seconds::ZERO, Seconds::ZERO));
+            setup.probe.couplant_film = probe.couplant_film;
+            let budget = budget(&setup, &times, Metres::from_mm(reads));
+            let expanded = 2.0 * budget.combined().as_mm();
+            assert!(4.0 - reads < expanded, "{span:?}: {expanded} mm");
+            assert!(expanded < 0.04, "{span:?}: {expanded} mm says too little");
+            assert_eq!(budget.dominating(), Some(Source::Beam));
+        }
+    }
+
+    #[test]
+    fn an_unknown_element_matters_only_above_the_limit() {
+        let zero = Zero::new(Seconds::ZERO, Seconds::ZERO);
+        let setup = bare(contact(), Span::BackWallToBackWall, 0.0, zero);
+        let wall = Metres::from_mm(5.0);
+        assert!(unknown_beam_matters(&setup, wall, Metres::new(10e-6)));
+        assert!(!unknown_beam_matters(&setup, wall, Metres::new(200e-6)));
+        let known = contact().with_element_diameter(Metres::from_mm(6.0));
+        assert!(!unknown_beam_matters(
+            &bare(known, Span::BackWallToBackWall, 0.0, zero),
+            wall,
+            Metres::ZERO
+        ));
+    }
+
+    #[test]
+    fn coating_has_an_uncertainty_of_its_own() {
+        let zero = Zero::new(Seconds::from_us(0.5), Seconds::from_ns(1.0));
+        let setup = bare(contact(), Span::TransmissionPulseToBackWall, 0.0, zero);
+        let times = single(1.0).with_period(
+            Timed::new(Seconds::from_us(2.0), Seconds::from_ns(core::f32::consts::SQRT_2)),
+            -core::f32::consts::FRAC_1_SQRT_2,
+        );
+        let wall = Metres::from_mm(5.92);
+        assert_eq!(coating_uncertainty(&setup, &times, wall), None);
+        // Five squared nanoseconds of timing and one of the zero, at half of 2300 m/s.
+        let painted = setup.with_coating(Coating {
+            velocity: MetresPerSecond::new(2300.0),
+        });
+        let um = coating_uncertainty(&painted, &times, wall).unwrap().get() * 1e6;
+        assert!((um - 6f32.sqrt() * 1.15).abs() < 1e-3, "{um}");
+    }
+
+    proptest! {
+        #[test]
+        fn correlated_terms_stay_between_difference_and_sum(
+            wall in 0.1f32..200.0, u in 0.0f32..100.0, zero_ns in 0.0f32..50.0, r in -1.0f32..=1.0,
+        ) {
+            let zero = Zero { velocity_correlation: r, ..Zero::new(Seconds::ZERO, Seconds::from_ns(zero_ns)) };
+            let setup = bare(contact(), Span::TransmissionPulseToBackWall, u, zero);
+            let combined = budget(&setup, &single(0.0), Metres::from_mm(wall)).combined().get();
+            let (a, b) = (wall * 1e-3 * u / 5920.0, 2960.0 * zero_ns * 1e-9);
+            prop_assert!(combined >= (a - b).abs() * 0.999 - 1e-12);
+            prop_assert!(combined <= (a + b) * 1.001 + 1e-12);
+        }
+
+        #[test]
+        fn a_wider_term_never_narrows_the_budget(wall in 0.5f32..100.0, film in 0.0f32..20.0, more in 0.0f32..20.0) {
+            for span in [Span::TransmissionPulseToBackWall, Span::InterfaceToBackWall, Span::BackWallToBackWall] {
+                let probe = contact().with_element_diameter(Metres::from_mm(6.0));
+                let mut setup = bare(probe, span, 10.0, Zero::new(Seconds::ZERO, Seconds::from_ns(1.0)));
+                setup.probe.couplant_film = Metres::new(film * 1e-6);
+                let narrow = budget(&setup, &single(1.0), Metres::from_mm(wall)).combined();
+                setup.probe.couplant_film = Metres::new((film + more) * 1e-6);
+                prop_assert!(budget(&setup, &single(1.0), Metres::from_mm(wall)).combined().get() >= narrow.get() * 0.999_99);
+            }
+        }
     }
 }
