@@ -91,3 +91,82 @@ pub fn envelope(samples: &[f64]) -> Vec<f64> {
         })
         .collect()
 }
+
+/// The samples without everything outside `low` to `high` (in cycles a sample): their spectrum cut
+/// off straight, so that what is left has no noise out of the band.
+#[must_use]
+pub fn band_limited(samples: &[f64], low: f64, high: f64) -> Vec<f64> {
+    let n = samples.len();
+    let spectrum = transform(samples);
+    (0..n)
+        .map(|k| {
+            let mut sum = 0.0;
+            for (bin, &(re, im)) in spectrum.iter().enumerate().take(n.div_ceil(2)).skip(1) {
+                let frequency = bin as f64 / n as f64;
+                if (low..=high).contains(&frequency) {
+                    let (sin, cos) = (2.0 * PI * (bin * k % n) as f64 / n as f64).sin_cos();
+                    sum += re * cos - im * sin;
+                }
+            }
+            2.0 * sum / n as f64
+        })
+        .collect()
+}
+
+/// Width of the part around the largest value that stays above `share` of it, with linear
+/// interpolation at both ends (`scipy.signal.peak_widths` where the curve falls to zero).
+#[must_use]
+pub fn width_at(curve: &[f64], share: f64) -> f64 {
+    let (peak, &highest) = curve
+        .iter()
+        .enumerate()
+        .max_by(|a, b| a.1.total_cmp(b.1))
+        .expect("a curve has values");
+    let level = share * highest;
+    let crossing = |inside: usize, outside: usize| {
+        let part = (curve[inside] - level) / (curve[inside] - curve[outside]);
+        inside as f64 + part * (outside as f64 - inside as f64)
+    };
+    let low = (0..peak).rev().find(|&i| curve[i] < level).expect("the curve falls before the peak");
+    let high = (peak..curve.len()).find(|&i| curve[i] < level).expect("the curve falls behind the peak");
+    crossing(high - 1, high) - crossing(low + 1, low)
+}
+
+/// Random numbers for the checks: SplitMix64 (Steele, Lea, Flood, OOPSLA 2014), the same on every
+/// machine. Not the simulator's generator, and not for cryptography.
+#[derive(Clone, Debug)]
+pub struct Random(u64);
+
+impl Random {
+    /// A stream of its own for every seed.
+    #[must_use]
+    pub const fn new(seed: u64) -> Self {
+        Self(seed)
+    }
+
+    fn next(&mut self) -> u64 {
+        self.0 = self.0.wrapping_add(0x9e37_79b9_7f4a_7c15);
+        let mut z = self.0;
+        z = (z ^ (z >> 30)).wrapping_mul(0xbf58_476d_1ce4_e5b9);
+        z = (z ^ (z >> 27)).wrapping_mul(0x94d0_49bb_1331_11eb);
+        z ^ (z >> 31)
+    }
+
+    /// Evenly between 0 and 1.
+    pub fn uniform(&mut self) -> f64 {
+        ((self.next() >> 11) as f64 + 0.5) / (1u64 << 53) as f64
+    }
+
+    /// Normal with mean 0 and variance 1 (Box and Muller 1958).
+    pub fn normal(&mut self) -> f64 {
+        (-2.0 * self.uniform().ln()).sqrt() * (2.0 * PI * self.uniform()).cos()
+    }
+}
+
+/// The ideal converter: to the nearest whole code, limited to `bits`.
+#[must_use]
+pub fn codes(samples: &[f64], bits: u32) -> Vec<i16> {
+    let full_scale = f64::from(1u32 << (bits - 1));
+    let convert = |x: &f64| x.round().clamp(-full_scale, full_scale - 1.0) as i16;
+    samples.iter().map(convert).collect()
+}
