@@ -39,7 +39,12 @@ fn val_envelope_of_noisy_echoes() {
         let cycle = echo.number("sample_rate_hz") / echo.number("centre_frequency_hz");
         let error = largest_error(codes, cycle, exact);
         let allowed = limit(echo.number("relative_bandwidth")) + 4.0 * noise_share(&echo);
-        println!("echo {}: {:.2} % of the peak, allowed {:.2} %", echo.text("echo"), 100.0 * error, 100.0 * allowed);
+        println!(
+            "echo {}: {:.2} % of the peak, allowed {:.2} %",
+            echo.text("echo"),
+            100.0 * error,
+            100.0 * allowed
+        );
         assert!(error < allowed, "echo {}: {error}", echo.text("echo"));
     }
 }
@@ -75,14 +80,22 @@ fn val_envelope_of_gaussian_pulses() {
             let mut worst = 0.0f64;
             for phase in [0.0, 0.6, 1.2, 1.8, 2.4] {
                 let time = |k: i32| f64::from(k) - 0.3;
-                let exact: Vec<f64> = (-half..=half).map(|k| (-0.5 * (time(k) / sigma).powi(2)).exp()).collect();
+                let exact: Vec<f64> = (-half..=half)
+                    .map(|k| (-0.5 * (time(k) / sigma).powi(2)).exp())
+                    .collect();
                 let carrier = |k: i32| (2.0 * std::f64::consts::PI * time(k) / cycle + phase).cos();
                 let samples: Vec<f64> = (-half..=half).zip(&exact).map(|(k, e)| e * carrier(k)).collect();
                 // The analytic envelope itself, which at 100 % is not quite the Gaussian.
                 worst = worst.max(largest_error(&samples, cycle, &oracle::envelope(&samples)));
             }
-            println!("{relative_bandwidth:.1} bandwidth, {cycle:5.1} samples a cycle: {:.2} %", 100.0 * worst);
-            assert!(worst < 0.5 * limit(relative_bandwidth), "{relative_bandwidth} at {cycle}: {worst}");
+            println!(
+                "{relative_bandwidth:.1} bandwidth, {cycle:5.1} samples a cycle: {:.2} %",
+                100.0 * worst
+            );
+            assert!(
+                worst < 0.5 * limit(relative_bandwidth),
+                "{relative_bandwidth} at {cycle}: {worst}"
+            );
         }
     }
 }

@@ -127,8 +127,13 @@ pub fn width_at(curve: &[f64], share: f64) -> f64 {
         let part = (curve[inside] - level) / (curve[inside] - curve[outside]);
         inside as f64 + part * (outside as f64 - inside as f64)
     };
-    let low = (0..peak).rev().find(|&i| curve[i] < level).expect("the curve falls before the peak");
-    let high = (peak..curve.len()).find(|&i| curve[i] < level).expect("the curve falls behind the peak");
+    let low = (0..peak)
+        .rev()
+        .find(|&i| curve[i] < level)
+        .expect("the curve falls before the peak");
+    let high = (peak..curve.len())
+        .find(|&i| curve[i] < level)
+        .expect("the curve falls behind the peak");
     crossing(high - 1, high) - crossing(low + 1, low)
 }
 
