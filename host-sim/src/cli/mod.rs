@@ -4,7 +4,11 @@
 //! record was refused, 1 on an error; 1 wins. Errors go to stderr, one line each:
 //! `error: FILE:LINE: what; remedy`.
 
+pub mod json;
+pub mod read;
 pub mod simulate;
+pub mod text;
+pub mod words;
 
 use crate::input_error::InputError;
 use clap::{Parser, Subcommand};
@@ -51,6 +55,8 @@ struct Arguments {
 enum Command {
     /// Simulates shots of a scene, with the truth beside them
     Simulate(simulate::Arguments),
+    /// Measures recorded shots: a reading with its uncertainty, or the reason why there is none
+    Read(read::Arguments),
 }
 
 /// Prints one error in one line on stderr.
@@ -70,6 +76,7 @@ pub fn main() -> ExitCode {
     let result = match arguments.command {
         None => Err(InputError::in_argument("no command", "see halfpulse --help")),
         Some(Command::Simulate(arguments)) => simulate::run(&arguments, &mut out),
+        Some(Command::Read(arguments)) => read::run(&arguments, &mut out),
     };
     match result {
         Ok(outcome) => outcome.exit_code(),

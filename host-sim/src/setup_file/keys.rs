@@ -1,5 +1,31 @@
 //! The one table of the set-up file's keys: reading, writing and help all come from it.
 
+/// A set-up file that can be copied.
+pub const EXAMPLE: &str = r#"version = 1
+[record]
+sample_rate_mhz = 50.0
+first_sample_us = 0.0
+bits = 12
+codes = "signed"
+[probe]
+kind = "contact"
+centre_frequency_mhz = 5.0
+relative_bandwidth_percent = 60
+element_diameter_mm = 6.0
+[material]
+name = "carbon steel"
+velocity_m_s = 5920.0
+velocity_standard_uncertainty_m_s = 17.0
+[zero]
+offset_ns = 0.0
+standard_uncertainty_ns = 1.0
+[measure]
+span = "back-wall-to-back-wall"
+from_us = 0.5
+to_us = 60.0
+coverage_factor = 2.0
+"#;
+
 /// One key of the set-up file.
 #[derive(Clone, Copy, Debug)]
 pub struct Key {

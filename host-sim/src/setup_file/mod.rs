@@ -1,30 +1,6 @@
 //! The set-up file, version 1: what a gauge must be told, as TOML.
 //!
-//! ```toml
-//! version = 1
-//! [record]
-//! sample_rate_mhz = 50.0
-//! first_sample_us = 0.0
-//! bits = 12
-//! codes = "signed"
-//! [probe]
-//! kind = "contact"
-//! centre_frequency_mhz = 5.0
-//! relative_bandwidth_percent = 60
-//! element_diameter_mm = 6.0
-//! [material]
-//! name = "carbon steel"
-//! velocity_m_s = 5920.0
-//! velocity_standard_uncertainty_m_s = 17.0
-//! [zero]
-//! offset_ns = 0.0
-//! standard_uncertainty_ns = 1.0
-//! [measure]
-//! span = "back-wall-to-back-wall"
-//! from_us = 0.5
-//! to_us = 60.0
-//! coverage_factor = 2.0
-//! ```
+//! An example that can be copied stands in [`keys::EXAMPLE`].
 //!
 //! * All times count from the transmission trigger: sample i was taken at
 //!   `first_sample_us` + i / `sample_rate_mhz`.

@@ -1,0 +1,199 @@
+//! One object a record, for programs. Its keys are described in [`KEYS`].
+
+use crate::measuring::Measured;
+use crate::setup_file::span_word;
+use halfpulse::echo::pulse::PulseMetrics;
+use halfpulse::echo::separation::Separation;
+use halfpulse::{Echo, EchoRole, Polarity};
+use serde::Serialize;
+
+use super::words;
+
+/// What the keys mean, for help.
+pub const KEYS: &str = "\
+JSON, one object a record and line; numbers or null, never NaN; more keys may follow later:
+  file, shot                     as given; shots count from 0, null with --average
+  span                           as in the set-up; null without one
+  thickness_mm                   the wall without coating; null if refused
+  standard_uncertainty_mm        k = 1
+  expanded_uncertainty_mm        coverage_factor times as much
+  coverage_factor
+  coating_mm, coating_standard_uncertainty_mm
+  wrong_cycle_probability        upper bound of having read another cycle
+  doubts                         words, see below; empty if there is none
+  no_reading                     null, or {reason, detail}: a word, and a sentence with the advice
+  echoes                         [{arrival_ns, standard_uncertainty_ns, amplitude_percent, snr_db,
+                                 polarity, role, multiple}], in the order of their arrival after the
+                                 transmission trigger; amplitude: fitted envelope peak over full scale;
+                                 SNR: envelope peak over noise rms; polarity: positive or negative
+                                 relative to the reference pulse; multiple: 1.. of a back wall, else null
+  pulse                          null, or {centre_frequency_mhz, lower_frequency_mhz,
+                                 upper_frequency_mhz, relative_bandwidth_percent, q,
+                                 duration_20db_envelope_ns, duration_20db_rectified_ns,
+                                 spatial_pulse_length_mm, axial_resolution_mm}: two-way spectrum at
+                                 -6 dB; the lengths are null without a set-up
+  separation                     null, or {spacing_ns, standard_uncertainty_ns, verdict, log_odds} of
+                                 the nearest pair of echoes
+  budget                         [{term, standard_uncertainty_mm}]
+  dominating_term                the largest of them
+";
+
+#[derive(Serialize)]
+struct JsonRecord<'m> {
+    file: &'m str,
+    shot: Option<usize>,
+    span: Option<&'static str>,
+    thickness_mm: Option<f32>,
+    standard_uncertainty_mm: Option<f32>,
+    expanded_uncertainty_mm: Option<f32>,
+    coverage_factor: Option<f32>,
+    coating_mm: Option<f32>,
+    coating_standard_uncertainty_mm: Option<f32>,
+    wrong_cycle_probability: Option<f32>,
+    doubts: Vec<&'static str>,
+    no_reading: Option<JsonRefusal<'m>>,
+    echoes: Vec<JsonEcho>,
+    pulse: Option<JsonPulse>,
+    separation: Option<JsonSeparation>,
+    budget: Vec<JsonTerm>,
+    dominating_term: Option<&'static str>,
+}
+
+#[derive(Serialize)]
+struct JsonRefusal<'m> {
+    reason: &'static str,
+    detail: &'m str,
+}
+
+#[derive(Serialize)]
+struct JsonEcho {
+    arrival_ns: Option<f32>,
+    standard_uncertainty_ns: Option<f32>,
+    amplitude_percent: Option<f32>,
+    snr_db: Option<f32>,
+    polarity: &'static str,
+    role: &'static str,
+    multiple: Option<u8>,
+}
+
+#[derive(Serialize)]
+struct JsonPulse {
+    centre_frequency_mhz: Option<f32>,
+    lower_frequency_mhz: Option<f32>,
+    upper_frequency_mhz: Option<f32>,
+    relative_bandwidth_percent: Option<f32>,
+    q: Option<f32>,
+    duration_20db_envelope_ns: Option<f32>,
+    duration_20db_rectified_ns: Option<f32>,
+    spatial_pulse_length_mm: Option<f32>,
+    axial_resolution_mm: Option<f32>,
+}
+
+#[derive(Serialize)]
+struct JsonSeparation {
+    spacing_ns: Option<f32>,
+    standard_uncertainty_ns: Option<f32>,
+    verdict: &'static str,
+    log_odds: Option<f32>,
+}
+
+#[derive(Serialize)]
+struct JsonTerm {
+    term: &'static str,
+    standard_uncertainty_mm: Option<f32>,
+}
+
+/// JSON has no NaN and no infinity.
+fn finite(value: f32) -> Option<f32> {
+    value.is_finite().then_some(value)
+}
+
+fn echo(echo: &Echo, full_scale: f32) -> JsonEcho {
+    JsonEcho {
+        arrival_ns: finite(echo.arrival.as_ns()),
+        standard_uncertainty_ns: finite(echo.standard_uncertainty.as_ns()),
+        amplitude_percent: finite(100.0 * echo.amplitude / full_scale),
+        snr_db: finite(echo.snr.get()),
+        polarity: match echo.polarity {
+            Polarity::Positive => "positive",
+            Polarity::Negative => "negative",
+        },
+        role: words::role(echo.role),
+        multiple: match echo.role {
+            EchoRole::BackWall(multiple) => Some(multiple),
+            _ => None,
+        },
+    }
+}
+
+fn pulse(pulse: &PulseMetrics, velocity_known: bool) -> JsonPulse {
+    let length = |metres: halfpulse::Metres| finite(metres.as_mm()).filter(|_| velocity_known);
+    JsonPulse {
+        centre_frequency_mhz: finite(pulse.centre_frequency().as_mhz()),
+        lower_frequency_mhz: finite(pulse.lower_frequency.as_mhz()),
+        upper_frequency_mhz: finite(pulse.upper_frequency.as_mhz()),
+        relative_bandwidth_percent: finite(100.0 * pulse.relative_bandwidth()),
+        q: finite(pulse.q()),
+        duration_20db_envelope_ns: finite(pulse.envelope_duration.as_ns()),
+        duration_20db_rectified_ns: finite(pulse.rectified_duration.as_ns()),
+        spatial_pulse_length_mm: length(pulse.spatial_pulse_length),
+        axial_resolution_mm: length(pulse.axial_resolution()),
+    }
+}
+
+fn separation(separation: &Separation) -> JsonSeparation {
+    JsonSeparation {
+        spacing_ns: finite(separation.spacing.as_ns()),
+        standard_uncertainty_ns: finite(separation.standard_uncertainty.as_ns()),
+        verdict: words::verdict(separation.verdict),
+        log_odds: separation.log_odds.and_then(finite),
+    }
+}
+
+/// One record as one line of JSON, without the line's end.
+#[must_use]
+pub fn line(measured: &Measured) -> String {
+    let reading = measured.outcome.as_ref().ok();
+    let coating = reading.and_then(|reading| reading.coating);
+    let record = JsonRecord {
+        file: &measured.file,
+        shot: measured.shot,
+        span: measured.span.map(span_word),
+        thickness_mm: reading.and_then(|r| finite(r.thickness.as_mm())),
+        standard_uncertainty_mm: reading.and_then(|r| finite(r.standard_uncertainty.as_mm())),
+        expanded_uncertainty_mm: reading.and_then(|r| finite(r.expanded().as_mm())),
+        coverage_factor: reading.and_then(|r| finite(r.coverage_factor)),
+        coating_mm: coating.and_then(|c| finite(c.thickness.as_mm())),
+        coating_standard_uncertainty_mm: coating.and_then(|c| finite(c.standard_uncertainty.as_mm())),
+        wrong_cycle_probability: reading.and_then(|r| finite(r.wrong_cycle_probability)),
+        doubts: reading.map_or(Vec::new(), |r| r.doubts.iter().map(|d| d.word()).collect()),
+        no_reading: measured.outcome.as_ref().err().map(|refusal| JsonRefusal {
+            reason: refusal.reason,
+            detail: &refusal.detail,
+        }),
+        echoes: measured
+            .findings
+            .echoes
+            .iter()
+            .map(|e| echo(e, measured.full_scale))
+            .collect(),
+        pulse: measured
+            .findings
+            .pulse
+            .as_ref()
+            .map(|p| pulse(p, measured.span.is_some())),
+        separation: measured.findings.separation.as_ref().map(separation),
+        budget: reading.map_or(Vec::new(), |r| {
+            let terms = r.budget.terms().iter();
+            terms
+                .map(|term| JsonTerm {
+                    term: term.source.word(),
+                    standard_uncertainty_mm: finite(term.standard_uncertainty.as_mm()),
+                })
+                .collect()
+        }),
+        dominating_term: reading.and_then(|r| r.budget.dominating()).map(|source| source.word()),
+    };
+    // Strings and finite numbers always serialise.
+    serde_json::to_string(&record).unwrap_or_default()
+}

@@ -1,0 +1,152 @@
+//! One record as a block of text, for people.
+
+use super::words;
+use crate::measuring::Measured;
+use halfpulse::{EchoRole, Polarity, Reading};
+use std::fmt::Write as _;
+
+/// As many decimals of a millimetre as show two digits of an uncertainty: 2 to 5.
+fn decimals(uncertainty_mm: f32) -> usize {
+    let wanted = 1.0 - f64::from(uncertainty_mm).max(1e-9).log10().floor();
+    wanted.clamp(2.0, 5.0) as usize
+}
+
+fn reading_block(text: &mut String, reading: &Reading) {
+    let expanded = reading.expanded().as_mm();
+    let digits = decimals(expanded);
+    let _ = writeln!(
+        text,
+        "{:.digits$} mm +- {expanded:.digits$} mm (k = {})",
+        reading.thickness.as_mm(),
+        reading.coverage_factor
+    );
+    if let Some(coating) = reading.coating {
+        let expanded = coating.standard_uncertainty.as_mm() * reading.coverage_factor;
+        let digits = decimals(expanded);
+        let _ = writeln!(
+            text,
+            "  coating {:.digits$} mm +- {expanded:.digits$} mm",
+            coating.thickness.as_mm()
+        );
+    }
+    for doubt in reading.doubts.iter() {
+        let _ = writeln!(text, "  doubt {}: {}", doubt.word(), doubt.advice());
+    }
+    let _ = writeln!(
+        text,
+        "  another cycle was read: at most {:.0e}",
+        reading.wrong_cycle_probability
+    );
+}
+
+fn budget_block(text: &mut String, reading: &Reading) {
+    if reading.budget.terms().is_empty() {
+        return;
+    }
+    text.push_str("  uncertainty (k = 1):");
+    for (number, term) in reading.budget.terms().iter().enumerate() {
+        let separator = if number == 0 { "" } else { "," };
+        let _ = write!(
+            text,
+            "{separator} {} {:.5} mm",
+            term.source.word(),
+            term.standard_uncertainty.as_mm()
+        );
+    }
+    if let Some(largest) = reading.budget.dominating() {
+        let _ = write!(text, "; most from {}", largest.word());
+    }
+    text.push('\n');
+}
+
+/// The block of one record.
+#[must_use]
+pub fn block(measured: &Measured) -> String {
+    let mut text = measured.file.clone();
+    match measured.shot {
+        Some(shot) => {
+            let _ = write!(text, ", shot {shot}: ");
+        }
+        None => text.push_str(", average: "),
+    }
+    match &measured.outcome {
+        Ok(reading) => reading_block(&mut text, reading),
+        Err(refusal) => {
+            let _ = writeln!(text, "no reading: {}: {}", refusal.reason, refusal.detail);
+        }
+    }
+    let findings = &measured.findings;
+    if !findings.echoes.is_empty() {
+        text.push_str("     arrival ns        u ns  amplitude      SNR  polarity  role\n");
+    }
+    for echo in &findings.echoes {
+        let polarity = match echo.polarity {
+            Polarity::Positive => "positive",
+            Polarity::Negative => "negative",
+        };
+        let _ = write!(
+            text,
+            "  {:>13.2}  {:>10.3}  {:>7.1} %  {:>4.1} dB  {polarity}  {}",
+            echo.arrival.as_ns(),
+            echo.standard_uncertainty.as_ns(),
+            100.0 * echo.amplitude / measured.full_scale,
+            echo.snr.get(),
+            words::role(echo.role),
+        );
+        if let EchoRole::BackWall(multiple) = echo.role {
+            let _ = write!(text, " {multiple}");
+        }
+        if echo.clipped {
+            text.push_str(", clipped");
+        }
+        text.push('\n');
+    }
+    if let Some(pulse) = &findings.pulse {
+        let _ = write!(
+            text,
+            "  pulse: {:.2} MHz, {:.2} to {:.2} MHz at -6 dB ({:.0} %, Q {:.2}); envelope {:.0} ns at -20 dB",
+            pulse.centre_frequency().as_mhz(),
+            pulse.lower_frequency.as_mhz(),
+            pulse.upper_frequency.as_mhz(),
+            100.0 * pulse.relative_bandwidth(),
+            pulse.q(),
+            pulse.envelope_duration.as_ns()
+        );
+        if measured.span.is_some() {
+            let _ = write!(
+                text,
+                ": spatial pulse length {:.2} mm, axial resolution {:.2} mm",
+                pulse.spatial_pulse_length.as_mm(),
+                pulse.axial_resolution().as_mm()
+            );
+        }
+        text.push('\n');
+    }
+    if let Some(pair) = &findings.separation {
+        let _ = writeln!(
+            text,
+            "  nearest pair: {:.2} ns apart (u {:.3} ns), {}",
+            pair.spacing.as_ns(),
+            pair.standard_uncertainty.as_ns(),
+            words::verdict(pair.verdict)
+        );
+    }
+    if let Ok(reading) = &measured.outcome {
+        budget_block(&mut text, reading);
+    }
+    text
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn two_digits_of_the_uncertainty_are_shown() {
+        assert_eq!(decimals(0.03), 3);
+        assert_eq!(decimals(0.003), 4);
+        assert_eq!(decimals(12.0), 2);
+        assert_eq!(decimals(0.0), 5);
+        assert_eq!(decimals(f32::NAN), 5);
+    }
+}

@@ -1,0 +1,201 @@
+//! Recorded shots through the core: memory for records of any length, and what comes out.
+
+use crate::input_error::InputError;
+use crate::record_file::RecordFile;
+use crate::setup_file::SetupFile;
+use halfpulse::setup::PULSE_CAPACITY;
+use halfpulse::workspace::{CORRELATION_CAPACITY, ECHO_CAPACITY, TRAIN_LAGS};
+use halfpulse::{AdcFormat, Findings, Gauge, NoReading, Reading, Record, SampleClock, Seconds, Span, Workspace};
+use std::path::Path;
+
+/// Scratch memory on the heap, for records whose length is known only when they are read.
+pub struct HeapScratch {
+    envelope: Vec<u16>,
+    pulse: Box<[f32; PULSE_CAPACITY]>,
+    skirt: Box<[u16; PULSE_CAPACITY]>,
+    correlation: Box<[f32; CORRELATION_CAPACITY]>,
+    train: Box<[f32; ECHO_CAPACITY * TRAIN_LAGS]>,
+}
+
+impl HeapScratch {
+    /// Memory for records of up to `samples`.
+    #[must_use]
+    pub fn new(samples: usize) -> Self {
+        Self {
+            envelope: vec![0; samples],
+            pulse: Box::new([0.0; PULSE_CAPACITY]),
+            skirt: Box::new([0; PULSE_CAPACITY]),
+            correlation: Box::new([0.0; CORRELATION_CAPACITY]),
+            train: Box::new([0.0; ECHO_CAPACITY * TRAIN_LAGS]),
+        }
+    }
+
+    /// Lends the memory to a gauge.
+    pub fn workspace(&mut self) -> Workspace<'_> {
+        Workspace {
+            envelope: &mut self.envelope,
+            pulse: &mut self.pulse,
+            skirt: &mut self.skirt,
+            correlation: &mut self.correlation,
+            train: &mut self.train,
+        }
+    }
+}
+
+/// Why a record has no reading.
+#[derive(Clone, Debug, PartialEq)]
+pub struct Refusal {
+    /// One word of the documented list.
+    pub reason: &'static str,
+    /// The reason with its evidence and the advice.
+    pub detail: String,
+}
+
+/// The word for a record that was looked at without a set-up.
+pub const NO_SETUP: &str = "no-set-up";
+
+impl Refusal {
+    /// There is no set-up: echoes and pulse are all that can be told.
+    #[must_use]
+    pub fn no_setup() -> Self {
+        Self {
+            reason: NO_SETUP,
+            detail: "without a set-up there is no velocity and no zero; give one with --setup".to_string(),
+        }
+    }
+}
+
+impl From<NoReading> for Refusal {
+    fn from(why: NoReading) -> Self {
+        Self {
+            reason: why.word(),
+            detail: why.to_string(),
+        }
+    }
+}
+
+/// One record, measured.
+#[derive(Clone, Debug)]
+pub struct Measured {
+    /// The file's name as it was given.
+    pub file: String,
+    /// Which shot of the file, from 0; `None` for the average of all.
+    pub shot: Option<usize>,
+    /// The span, if a set-up names one.
+    pub span: Option<Span>,
+    /// A reading, or why there is none.
+    pub outcome: Result<Reading, Refusal>,
+    /// What the record held.
+    pub findings: Findings,
+    /// Codes from zero to full scale.
+    pub full_scale: f32,
+}
+
+/// The clock of a file's records under a set-up.
+///
+/// # Errors
+/// The file states another sample rate, or another time of its first sample, than the set-up.
+pub fn clock(path: &Path, file: &RecordFile, setup: &SetupFile) -> Result<SampleClock, InputError> {
+    let keys = &setup.keys.record;
+    let rate = keys.sample_rate_mhz * 1e6;
+    if let Some(stated) = file.sample_rate
+        && !stated.agrees_with(rate)
+    {
+        return Err(InputError::in_file(
+            path,
+            format!(
+                "was sampled at {} MHz, {} says {} MHz",
+                stated.hertz * 1e-6,
+                setup.path().display(),
+                keys.sample_rate_mhz
+            ),
+            "correct [record] sample_rate_mhz, or use the set-up that belongs to this record",
+        ));
+    }
+    let first = match (keys.first_sample_us, file.first_sample_s) {
+        (Some(us), Some(stated)) if (us * 1e-6 - stated).abs() * rate > 0.05 => {
+            return Err(InputError::in_file(
+                path,
+                format!(
+                    "starts at {} us, {} says {us} us",
+                    (stated * 1e12).round() * 1e-6,
+                    setup.path().display()
+                ),
+                "correct [record] first_sample_us, or leave it out",
+            ));
+        }
+        (Some(us), _) => us * 1e-6,
+        (None, stated) => stated.unwrap_or(0.0),
+    };
+    Ok(SampleClock {
+        rate: halfpulse::Hertz::from_mhz(keys.sample_rate_mhz as f32),
+        first_sample: Seconds::new(first as f32),
+    })
+}
+
+/// One shot, or the average of all, of a file.
+pub struct Shot {
+    /// Which one; `None` for the average.
+    pub number: Option<usize>,
+    /// Its codes.
+    pub codes: Vec<i16>,
+    /// What they stand for.
+    pub format: AdcFormat,
+}
+
+/// The shots of a file one by one, or their average.
+#[must_use]
+pub fn shots(file: RecordFile, average: bool) -> Vec<Shot> {
+    let format = file.format;
+    if average {
+        return vec![averaged(&file)];
+    }
+    let numbered = file.shots.into_iter().enumerate();
+    numbered
+        .map(|(number, codes)| Shot {
+            number: Some(number),
+            codes,
+            format,
+        })
+        .collect()
+}
+
+/// The average of a file's shots, with the resolution that averaging gains.
+#[must_use]
+pub fn averaged(file: &RecordFile) -> Shot {
+    let samples = file.shots.first().map_or(0, Vec::len);
+    let mut sums = vec![0i64; samples];
+    for shot in &file.shots {
+        for (sum, code) in sums.iter_mut().zip(shot) {
+            *sum += i64::from(*code);
+        }
+    }
+    let shots = u16::try_from(file.shots.len()).unwrap_or(u16::MAX);
+    // As many codes a step as 16 bits leave room for, but not more than the shots can fill.
+    let room = 1u32 << (16 - file.format.bits.clamp(2, 16));
+    let codes_per_step = room.min(u32::from(shots).next_power_of_two());
+    let scale = f64::from(codes_per_step) / f64::from(shots.max(1));
+    Shot {
+        number: None,
+        codes: sums.iter().map(|sum| (*sum as f64 * scale).round() as i16).collect(),
+        format: AdcFormat {
+            codes_per_step: codes_per_step as f32,
+            shots,
+            ..file.format
+        },
+    }
+}
+
+/// Measures one shot.
+pub fn measure(gauge: &mut Gauge<'_>, name: &str, shot: &Shot, clock: SampleClock) -> Measured {
+    let record = Record::new(&shot.codes, shot.format, clock);
+    let outcome = gauge.measure(&record).map_err(Refusal::from);
+    Measured {
+        file: name.to_string(),
+        shot: shot.number,
+        span: Some(gauge.setup().span),
+        outcome,
+        findings: gauge.findings().clone(),
+        full_scale: shot.format.full_scale(),
+    }
+}
