@@ -1,0 +1,251 @@
+//! Complex numbers and the discrete Fourier transform, the same to the last bit on every machine.
+//!
+//! A library's transform picks its kernel by the processor, and takes its factors from the system's
+//! sine: both differ in the last digit between machines. Records made here must not, so the transform
+//! is a plain one of radix 2 with factors from `libm`.
+
+use std::f64::consts::TAU;
+use std::ops::{Add, AddAssign, Mul, Sub};
+
+/// A complex number.
+#[derive(Clone, Copy, Debug, PartialEq, Default)]
+pub struct Complex {
+    /// Real part.
+    pub re: f64,
+    /// Imaginary part.
+    pub im: f64,
+}
+
+impl Complex {
+    /// Zero.
+    pub const ZERO: Self = Self { re: 0.0, im: 0.0 };
+
+    /// From real and imaginary part.
+    #[must_use]
+    pub const fn new(re: f64, im: f64) -> Self {
+        Self { re, im }
+    }
+
+    /// `magnitude * exp(j angle)`, the angle in radians.
+    #[must_use]
+    pub fn polar(magnitude: f64, angle: f64) -> Self {
+        let (sine, cosine) = libm::sincos(angle);
+        Self::new(magnitude * cosine, magnitude * sine)
+    }
+
+    /// The magnitude.
+    #[must_use]
+    pub fn magnitude(self) -> f64 {
+        (self.re * self.re + self.im * self.im).sqrt()
+    }
+
+    /// The conjugate.
+    #[must_use]
+    pub const fn conjugate(self) -> Self {
+        Self::new(self.re, -self.im)
+    }
+
+    /// Times a real factor.
+    #[must_use]
+    pub fn scaled(self, factor: f64) -> Self {
+        Self::new(self.re * factor, self.im * factor)
+    }
+}
+
+impl Add for Complex {
+    type Output = Self;
+    fn add(self, other: Self) -> Self {
+        Self::new(self.re + other.re, self.im + other.im)
+    }
+}
+
+impl AddAssign for Complex {
+    fn add_assign(&mut self, other: Self) {
+        *self = *self + other;
+    }
+}
+
+impl Sub for Complex {
+    type Output = Self;
+    fn sub(self, other: Self) -> Self {
+        Self::new(self.re - other.re, self.im - other.im)
+    }
+}
+
+impl Mul for Complex {
+    type Output = Self;
+    fn mul(self, other: Self) -> Self {
+        Self::new(
+            self.re * other.re - self.im * other.im,
+            self.re * other.im + self.im * other.re,
+        )
+    }
+}
+
+/// `exp(j step k)` for k = 0, 1, 2 and so on: one multiplication each, set right again from time to
+/// time so that rounding does not build up.
+#[derive(Clone, Copy, Debug)]
+pub struct Rotation {
+    step: f64,
+    turn: Complex,
+    now: Complex,
+    count: u32,
+}
+
+impl Rotation {
+    /// Starts at `exp(j step first)`.
+    #[must_use]
+    pub fn new(step: f64, first: u32) -> Self {
+        Self {
+            step,
+            turn: Complex::polar(1.0, step),
+            now: Complex::polar(1.0, step * f64::from(first)),
+            count: first,
+        }
+    }
+}
+
+impl Iterator for Rotation {
+    type Item = Complex;
+    fn next(&mut self) -> Option<Complex> {
+        let value = self.now;
+        self.count = self.count.wrapping_add(1);
+        self.now = if self.count.is_multiple_of(32) {
+            Complex::polar(1.0, self.step * f64::from(self.count))
+        } else {
+            self.now * self.turn
+        };
+        Some(value)
+    }
+}
+
+/// Transforms between a real record and its spectrum.
+#[derive(Clone, Debug)]
+pub struct RealTransform {
+    length: usize,
+    /// `exp(j 2 pi k / length)` for k below half the length.
+    factors: Vec<Complex>,
+    scratch: Vec<Complex>,
+}
+
+impl RealTransform {
+    /// For records of `length` samples, rounded up to a power of two, at least 4.
+    #[must_use]
+    pub fn new(length: usize) -> Self {
+        let length = length.max(4).next_power_of_two();
+        let factors = (0..length / 2)
+            .map(|k| Complex::polar(1.0, TAU * k as f64 / length as f64))
+            .collect();
+        Self {
+            length,
+            factors,
+            scratch: vec![Complex::ZERO; length / 2],
+        }
+    }
+
+    /// Samples of a record.
+    #[must_use]
+    pub const fn length(&self) -> usize {
+        self.length
+    }
+
+    /// The real signal whose spectrum has the given bins from bin 0 on; bins that are missing are
+    /// zero. Sum over both signs of frequency, not divided by the length: a bin `k` of `a` gives
+    /// `2 Re(a exp(j 2 pi k i / length))`, bin 0 its real part.
+    pub fn to_time(&mut self, spectrum: &[Complex], signal: &mut [f64]) {
+        let half = self.length / 2;
+        let bin = |k: usize| {
+            let value = spectrum.get(k).copied().unwrap_or(Complex::ZERO);
+            // The outermost bins have no partner at the other sign of frequency.
+            if k == 0 || k == half {
+                Complex::new(value.re, 0.0)
+            } else {
+                value
+            }
+        };
+        // Even samples become the real, odd ones the imaginary part of a transform of half the length.
+        for (k, slot) in self.scratch.iter_mut().enumerate() {
+            let (here, mirrored) = (bin(k), bin(half - k).conjugate());
+            let odd = (here - mirrored) * self.factors[k];
+            let even = here + mirrored;
+            *slot = Complex::new(even.re - odd.im, even.im + odd.re);
+        }
+        transform(&mut self.scratch, &self.factors);
+        for (pair, value) in signal.chunks_mut(2).zip(&self.scratch) {
+            pair[0] = value.re;
+            if let Some(second) = pair.get_mut(1) {
+                *second = value.im;
+            }
+        }
+    }
+}
+
+/// In place, sign +j, radix 2; `factors` are for twice the length.
+fn transform(values: &mut [Complex], factors: &[Complex]) {
+    let length = values.len();
+    if length < 2 {
+        return;
+    }
+    let shift = usize::BITS - length.trailing_zeros();
+    for index in 0..length {
+        let mirrored = index.reverse_bits() >> shift;
+        if index < mirrored {
+            values.swap(index, mirrored);
+        }
+    }
+    let mut half = 1;
+    while half < length {
+        let stride = length / half;
+        for block in values.chunks_exact_mut(2 * half) {
+            let (low, high) = block.split_at_mut(half);
+            for ((low, high), &factor) in low.iter_mut().zip(high).zip(factors.iter().step_by(stride)) {
+                let turned = *high * factor;
+                (*low, *high) = (*low + turned, *low - turned);
+            }
+        }
+        half *= 2;
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    /// Against the sum that defines it.
+    #[test]
+    fn equals_the_defining_sum() {
+        for length in [4, 8, 64, 256] {
+            let spectrum: Vec<Complex> = (0..=length / 2)
+                .map(|k| Complex::polar(1.0 / (1 + k) as f64, (k * k) as f64 * 0.7 + 0.3))
+                .collect();
+            let mut transform = RealTransform::new(length);
+            let mut signal = vec![0.0; length];
+            transform.to_time(&spectrum, &mut signal);
+            for (i, &value) in signal.iter().enumerate() {
+                let expected: f64 = (0..=length / 2)
+                    .map(|k| {
+                        let turned = spectrum[k] * Complex::polar(1.0, TAU * (k * i) as f64 / length as f64);
+                        if k == 0 {
+                            spectrum[0].re
+                        } else if k == length / 2 {
+                            // The bin at half the sample rate counts once, with its real part.
+                            spectrum[k].re * if i % 2 == 0 { 1.0 } else { -1.0 }
+                        } else {
+                            2.0 * turned.re
+                        }
+                    })
+                    .sum();
+                assert!((value - expected).abs() < 1e-11, "{length} {i}: {value} {expected}");
+            }
+        }
+    }
+
+    #[test]
+    fn rotation_does_not_drift() {
+        let step = -1.234_567;
+        for (k, value) in Rotation::new(step, 5).take(5000).enumerate() {
+            let expected = Complex::polar(1.0, step * (k + 5) as f64);
+            assert!((value - expected).magnitude() < 1e-11);
+        }
+    }
+}

@@ -1,0 +1,161 @@
+//! Receiver and converter: the transmission pulse's remains, white noise, rounding and clipping.
+
+use crate::scene::TransmissionPulse;
+use rand_chacha::ChaCha8Rng;
+use rand_chacha::rand_core::{Rng, SeedableRng};
+use std::f64::consts::{PI, TAU};
+
+/// What random numbers are drawn for: each purpose has a sequence of its own, so that one more draw
+/// for one of them leaves the others as they were.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+#[repr(u8)]
+pub enum Purpose {
+    /// Noise of the receiver.
+    Noise = 0,
+    /// What differs from shot to shot: thickness, delay, gain.
+    Variation = 1,
+}
+
+/// Random numbers that depend on seed, purpose and shot alone, whatever was drawn before: ChaCha with
+/// 8 rounds, used as a counter.
+#[derive(Clone, Debug)]
+pub struct Random {
+    generator: ChaCha8Rng,
+    spare: Option<f64>,
+}
+
+impl Random {
+    /// The sequence of one shot.
+    #[must_use]
+    pub fn new(seed: u64, purpose: Purpose, shot: u64) -> Self {
+        let mut key = [0u8; 32];
+        key[..8].copy_from_slice(&seed.to_le_bytes());
+        key[8] = purpose as u8;
+        let mut generator = ChaCha8Rng::from_seed(key);
+        generator.set_stream(shot);
+        Self { generator, spare: None }
+    }
+
+    /// Uniform, at least 0 and below 1.
+    pub fn uniform(&mut self) -> f64 {
+        (self.generator.next_u64() >> 11) as f64 * (1.0 / (1u64 << 53) as f64)
+    }
+
+    /// Normal, mean 0 and standard deviation 1 (Box and Muller 1958).
+    pub fn normal(&mut self) -> f64 {
+        if let Some(value) = self.spare.take() {
+            return value;
+        }
+        let radius = (-2.0 * libm::log(1.0 - self.uniform())).sqrt();
+        let (sine, cosine) = libm::sincos(TAU * self.uniform());
+        self.spare = Some(radius * sine);
+        radius * cosine
+    }
+}
+
+impl TransmissionPulse {
+    /// Share of full scale at `time` seconds after the trigger, with the ringing at `frequency` hertz.
+    ///
+    /// Zero before the trigger; a raised cosine over half a cycle leads into the decays, because no
+    /// receiver jumps.
+    #[must_use]
+    pub fn value(&self, time: f64, frequency: f64) -> f64 {
+        if time <= 0.0 {
+            return 0.0;
+        }
+        let onset = (2.0 * time * frequency).min(1.0);
+        let onset = 0.5 - 0.5 * libm::cos(PI * onset);
+        let fall = |percent: f64, ns: f64| 0.01 * percent * libm::exp(-time / (ns * 1e-9));
+        let ringing = fall(self.amplitude_percent, self.decay_ns) * libm::cos(TAU * frequency * time);
+        onset * (ringing + fall(self.recovery_percent, self.recovery_ns))
+    }
+}
+
+/// A converter with signed codes, full scale 2^(bits-1), its zero in the middle of a step.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub struct Converter {
+    bits: u8,
+}
+
+impl Converter {
+    /// Of 2 to 16 bits.
+    #[must_use]
+    pub fn new(bits: u8) -> Self {
+        Self {
+            bits: bits.clamp(2, 16),
+        }
+    }
+
+    /// Codes from zero to full scale.
+    #[must_use]
+    pub fn full_scale(&self) -> f64 {
+        f64::from(1u32 << (self.bits - 1))
+    }
+
+    /// The code of a value given in steps: rounded to the nearest, clipped to -full scale to full
+    /// scale - 1.
+    #[must_use]
+    pub fn code(&self, steps: f64) -> i16 {
+        let full_scale = self.full_scale();
+        (steps + 0.5).floor().clamp(-full_scale, full_scale - 1.0) as i16
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn converter_rounds_and_clips() {
+        let converter = Converter::new(12);
+        assert_eq!(converter.full_scale(), 2048.0);
+        let codes = [-0.5, -0.51, 0.49, 0.5, 2046.6, 1e9, -1e9, f64::INFINITY];
+        assert_eq!(
+            codes.map(|value| converter.code(value)),
+            [0, -1, 0, 1, 2047, 2047, -2048, 2047]
+        );
+        assert_eq!(Converter::new(16).code(-1e9), i16::MIN);
+    }
+
+    /// Mean, deviation, kurtosis and tail of a normal distribution.
+    #[test]
+    fn normals_are_normal() {
+        let mut random = Random::new(1, Purpose::Noise, 0);
+        let values: Vec<f64> = (0..200_000).map(|_| random.normal()).collect();
+        let moment = |power: i32| values.iter().map(|v| v.powi(power)).sum::<f64>() / values.len() as f64;
+        assert!(moment(1).abs() < 0.01 && moment(3).abs() < 0.03);
+        assert!((moment(2) - 1.0).abs() < 0.015 && (moment(4) - 3.0).abs() < 0.08);
+        let beyond = values.iter().filter(|v| v.abs() > 1.959_964).count() as f64 / values.len() as f64;
+        assert!((beyond - 0.05).abs() < 0.002, "{beyond}");
+    }
+
+    #[test]
+    fn sequences_depend_on_seed_purpose_and_shot() {
+        let first = |seed, purpose, shot| Random::new(seed, purpose, shot).uniform();
+        let base = first(7, Purpose::Noise, 3);
+        assert_eq!(base, first(7, Purpose::Noise, 3));
+        for other in [
+            first(8, Purpose::Noise, 3),
+            first(7, Purpose::Variation, 3),
+            first(7, Purpose::Noise, 4),
+        ] {
+            assert_ne!(base, other);
+        }
+    }
+
+    #[test]
+    fn transmission_pulse_starts_at_the_trigger_and_dies_away() {
+        let pulse = TransmissionPulse {
+            amplitude_percent: 400.0,
+            decay_ns: 200.0,
+            recovery_percent: -20.0,
+            recovery_ns: 1500.0,
+        };
+        assert_eq!(pulse.value(-1e-9, 5e6), 0.0);
+        let highest = (0..1000)
+            .map(|i| pulse.value(f64::from(i) * 1e-9, 5e6).abs())
+            .fold(0.0, f64::max);
+        assert!((1.0..4.2).contains(&highest), "{highest}");
+        assert!((pulse.value(6e-6, 5e6) + 0.2 * (-4f64).exp()).abs() < 1e-6);
+    }
+}
