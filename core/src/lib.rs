@@ -21,9 +21,12 @@ pub mod gauge;
 pub use echo::{Echo, EchoList, EchoRole, Polarity};
 pub use gauge::{CoatingReading, Findings, Gauge, Reading};
 pub use outcome::{Doubt, Doubts, NoReading};
+pub use record::average::{AverageError, Averager, Interleaver};
 pub use record::{AdcFormat, Record, SampleClock};
 pub use setup::{
     CalibratedRange, Coating, GaugeSetup, Material, Probe, ProbeFace, ProbeKind, SetupError, Span, Window, Zero,
 };
 pub use units::{Celsius, Decibels, Hertz, Metres, MetresPerSecond, SamplePosition, Seconds};
+pub use wall::calibration::{Block, CalibrationError};
+pub use wall::uncertainty::{Budget, Source, Term};
 pub use workspace::{Scratch, Workspace};

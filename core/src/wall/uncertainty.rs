@@ -1,7 +1,7 @@
 //! The uncertainty budget: named terms, combined as JCGM 100:2008 (5.1.2) says.
 
 use crate::math;
-use crate::setup::{GaugeSetup, ProbeKind, Span};
+use crate::setup::{CalibratedRange, GaugeSetup, ProbeKind, Span};
 use crate::units::{Metres, Seconds};
 use crate::wall::thickness::{TrainTimes, excess, round_trip, wall_span};
 use crate::wall::{beam, coupling};
@@ -164,8 +164,7 @@ fn add_calibration(budget: &mut Budget, setup: &GaugeSetup, wall: Metres) {
 /// * Behind a delay line, whose own path is not known: as if the path in the part began at the element, see
 ///   [`beam::uncorrected_shift`].
 /// * From the transmission pulse: the first back wall's own shift. If a calibration is named, its zero has taken
-///   the shift of the blocks with it, and what remains is the larger of the differences to the thinnest and to the
-///   thickest block.
+///   the shift of the blocks with it, see [`remaining_shift`].
 ///
 /// 0 without an element diameter; a dual-element probe counts as a single element of that diameter.
 fn beam_half_width(setup: &GaugeSetup, wall: Metres) -> Seconds {
@@ -179,15 +178,33 @@ fn beam_half_width(setup: &GaugeSetup, wall: Metres) -> Seconds {
         (Span::BackWallToBackWall, _) if !behind_delay_line => {
             beam::uncorrected_period_shift(diameter, velocity, frequency, wall * 2.0)
         }
-        (Span::TransmissionPulseToBackWall, Some(range)) if !behind_delay_line => {
-            larger(shift(range.from, wall), shift(range.to, wall))
-        }
+        (Span::TransmissionPulseToBackWall, Some(range)) if !behind_delay_line => remaining_shift(shift, range, wall),
         (Span::TransmissionPulseToBackWall | Span::InterfaceToBackWall, Some(range)) => {
             // The zero may or may not have been learned on the blocks: take the longer way.
             let beyond = range.to - wall;
             shift(Metres::ZERO, if beyond > wall { beyond } else { wall })
         }
         _ => shift(Metres::ZERO, wall),
+    }
+}
+
+/// What is left of a shift that a calibration on blocks has taken into zero and velocity: between the blocks at
+/// most the larger of the differences to them; beyond them the difference to the nearer one, and what a straight line
+/// through both adds. `shift` gives the difference between two walls.
+fn remaining_shift(shift: impl Fn(Metres, Metres) -> Seconds, range: CalibratedRange, wall: Metres) -> Seconds {
+    let (to_thin, to_thick) = (shift(range.from, wall), shift(range.to, wall));
+    let (nearest, beyond) = if wall > range.to {
+        (to_thick, wall - range.to)
+    } else if wall < range.from {
+        (to_thin, range.from - wall)
+    } else {
+        return larger(to_thin, to_thick);
+    };
+    let length = range.to - range.from;
+    if length > Metres::ZERO {
+        nearest + shift(range.from, range.to) * (beyond / length)
+    } else {
+        nearest
     }
 }
 
@@ -204,28 +221,34 @@ pub fn unknown_beam_matters(setup: &GaugeSetup, wall: Metres, limit: Metres) -> 
     setup.material.velocity * 0.5 * beam_half_width(&smallest, wall) > limit
 }
 
-/// Standard uncertainty (k = 1) of a coating that was read with [`crate::wall::thickness::coating`]: timing of first
-/// back wall, start and period; the zero; beam and couplant of the first back wall and of the period together, as
-/// rectangles. The coating's velocity is taken as exact: its uncertainty is for the user to add. `None` if there is no
-/// coating to read.
+/// Standard uncertainty (k = 1) of [`excess`] as a whole: timing of first back wall, start and period; the zero; beam and
+/// couplant of the first back wall and of the period together, as rectangles. An excess far beyond it on a part that is
+/// said to be bare contradicts the zero. `None` where there is no excess.
 #[must_use]
-pub fn coating_uncertainty(setup: &GaugeSetup, times: &TrainTimes, wall: Metres) -> Option<Metres> {
-    let half_velocity = setup.coating?.velocity * 0.5;
-    let left = excess(setup, times)?;
-    let mut budget = Budget::new();
-    budget.add(Source::Timing, half_velocity * left.standard_uncertainty);
-    budget.add(Source::Zero, half_velocity * setup.zero.standard_uncertainty);
+pub fn excess_uncertainty(setup: &GaugeSetup, times: &TrainTimes, wall: Metres) -> Option<Seconds> {
+    let timing = excess(setup, times)?.standard_uncertainty.get();
+    let zero = setup.zero.standard_uncertainty.get();
     let mut first = *setup;
     first.coating = None;
     first.span = match setup.probe.kind {
         ProbeKind::DelayLine => Span::InterfaceToBackWall,
         ProbeKind::Contact | ProbeKind::DualElement => Span::TransmissionPulseToBackWall,
     };
-    let beam = beam_half_width(&first, wall) + beam_half_width(setup, wall);
-    budget.add(Source::Beam, half_velocity * beam * RECTANGULAR);
-    let film = coupling::half_width(&setup.probe, first.span) + coupling::half_width(&setup.probe, wall_span(setup));
-    budget.add(Source::Coupling, half_velocity * film * RECTANGULAR);
-    Some(budget.combined())
+    let mut period = first;
+    period.span = Span::BackWallToBackWall;
+    let beam = (beam_half_width(&first, wall) + beam_half_width(&period, wall)).get() * RECTANGULAR;
+    let film = coupling::half_width(&setup.probe, first.span) + coupling::half_width(&setup.probe, period.span);
+    let film = film.get() * RECTANGULAR;
+    let variance = timing * timing + zero * zero + beam * beam + film * film;
+    Some(Seconds::new(math::sqrt(variance)))
+}
+
+/// Standard uncertainty (k = 1) of a coating that was read with [`crate::wall::thickness::coating`]: half its velocity
+/// times [`excess_uncertainty`]. The coating's velocity is taken as exact: what it is off by, the coating is off by in
+/// the same proportion. `None` if there is no coating to read.
+#[must_use]
+pub fn coating_uncertainty(setup: &GaugeSetup, times: &TrainTimes, wall: Metres) -> Option<Metres> {
+    Some(setup.coating?.velocity * excess_uncertainty(setup, times, wall)? * 0.5)
 }
 
 /// The longer of two times.
@@ -236,7 +259,7 @@ fn larger(a: Seconds, b: Seconds) -> Seconds {
 #[cfg(test)]
 mod tests {
     use super::*;
-    use crate::setup::{CalibratedRange, Coating, Material, Probe, Window, Zero};
+    use crate::setup::{Coating, Material, Probe, Window, Zero};
     use crate::units::{Hertz, MetresPerSecond};
     use crate::wall::calibration::{Block, zero_and_velocity, zero_at_known_velocity};
     use crate::wall::thickness::Timed;
@@ -395,6 +418,17 @@ mod tests {
         assert_eq!(at(&setup, 10.0), 0.0);
         assert!((at(&setup, 50.0) - 25.306_61 * 2.96 * RECTANGULAR).abs() < 0.02);
         assert!(at(&setup, 2.0) > 0.99 * (17.128_37 - 6.139_24) * 2.96 * RECTANGULAR);
+        // Two blocks at 5 and 25 mm (11.22276 and 35.09290 ns): a straight line through them is 0.07 ns off at 10 mm and
+        // says 64.92 ns for 50 mm, 22.49 ns too much; the budget's half-width holds both.
+        let blocks = CalibratedRange {
+            from: Metres::from_mm(5.0),
+            to: Metres::from_mm(25.0),
+        };
+        setup = setup.with_calibrated_range(blocks);
+        assert!(at(&setup, 10.0) > 0.07 * 2.96 * RECTANGULAR);
+        let expected = 42.434_98 - 35.092_9 + 1.25 * (35.092_9 - 11.222_76);
+        assert!((at(&setup, 50.0) - expected * 2.96 * RECTANGULAR).abs() < 0.02);
+        assert!(expected > 22.49);
         // 2 µm of film under a hard face: 29.5 ns by exact layer matrices, two ways.
         setup.probe.couplant_film = Metres::new(2e-6);
         let film = term(&budget(&setup, &single(0.0), ten), Source::Coupling);
@@ -457,6 +491,11 @@ mod tests {
         });
         let um = coating_uncertainty(&painted, &times, wall).unwrap().get() * 1e6;
         assert!((um - 6f32.sqrt() * 1.15).abs() < 1e-3, "{um}");
+        // Couplant: 29.5 ns on the way in and out and 31.1 ns at the reflection, added, as a rectangle.
+        let mut wet = painted;
+        wet.probe.couplant_film = Metres::new(2e-6);
+        let ns = excess_uncertainty(&wet, &times, wall).unwrap().as_ns();
+        assert!((ns - (29.5 + 31.1) * RECTANGULAR).abs() < 0.6, "{ns}");
     }
 
     proptest! {
