@@ -7,6 +7,8 @@
 
 #[cfg(test)]
 extern crate std;
+#[cfg(test)]
+mod test_support;
 
 pub mod units;
 pub mod math;

@@ -1,12 +1,23 @@
 //! What came back, and when.
+//!
+//! The steps in the order of the signal: [`scan`] finds candidates in the whole record with integers;
+//! [`measure_echo`] fits the reference pulse at one candidate, in a short `f32` window;
+//! [`separation`] says whether neighbours can be told apart; [`train`] finds the multiples of one wall.
 
-pub mod arrival;
-pub mod correlation;
 pub mod envelope;
 pub mod interpolate;
 pub mod pulse;
+pub mod correlation;
+pub mod arrival;
+pub mod scan;
 pub mod separation;
+pub mod train;
 
+use crate::echo::arrival::{Arrival, Estimator, Search, estimate};
+use crate::echo::correlation::{Sign, energy};
+use crate::echo::pulse::ReferencePulse;
+use crate::math;
+use crate::record::Record;
 use crate::units::{Decibels, SamplePosition, Seconds};
 use crate::workspace::ECHO_CAPACITY;
 use heapless::Vec;
@@ -52,13 +63,111 @@ pub struct Echo {
     pub polarity: Polarity,
     /// Envelope peak over the noise's root mean square per sample.
     pub snr: Decibels,
-    /// Root of the energy that the fitted pulse leaves unexplained (beyond what noise explains) over
-    /// the root of the pulse's energy: 0 for a perfect match.
+    /// Root of the energy that the fitted pulse leaves unexplained (beyond what noise explains with
+    /// three standard deviations to spare) over the root of the fitted energy: 0 for a perfect match.
     pub mismatch: f32,
     /// Some sample under the pulse is clipped.
     pub clipped: bool,
     /// What it was found to be.
     pub role: EchoRole,
+}
+
+impl Echo {
+    /// Fitted amplitude with the polarity's sign.
+    #[must_use]
+    pub fn signed_amplitude(&self) -> f32 {
+        match self.polarity {
+            Polarity::Positive => self.amplitude,
+            Polarity::Negative => -self.amplitude,
+        }
+    }
+}
+
+/// What one echo is measured against.
+#[derive(Clone, Copy, Debug)]
+pub struct Surroundings<'a> {
+    /// The record.
+    pub record: Record<'a>,
+    /// The reference pulse.
+    pub pulse: ReferencePulse<'a>,
+    /// Root mean square of the noise per sample, in codes.
+    pub noise: f32,
+    /// Samples a cycle of the centre frequency.
+    pub samples_per_cycle: f32,
+}
+
+impl Surroundings<'_> {
+    /// Standard deviation of a fitted amplitude, in codes.
+    #[must_use]
+    pub fn amplitude_noise(&self) -> f32 {
+        self.noise / math::sqrt(self.pulse.facts.energy)
+    }
+
+    /// Cramér-Rao bound of an arrival in samples, for a known pulse of this amplitude in white noise:
+    /// noise / (amplitude · sqrt(Σ s'²)).
+    #[must_use]
+    pub fn arrival_noise(&self, amplitude: f32) -> f32 {
+        self.noise / (amplitude.abs() * math::sqrt(self.pulse.facts.derivative_energy))
+    }
+}
+
+/// Fits the reference pulse near `index`, within three quarters of a cycle. `None` if the pulse would stand out of
+/// the record.
+///
+/// The standard uncertainty is the Cramér-Rao bound, which the fit reaches in white noise. It knows
+/// nothing of a wrong pulse, of overlapping echoes and of coherent noise: see [`Echo::mismatch`].
+#[must_use]
+pub fn measure_echo(surroundings: &Surroundings<'_>, index: u32, sign: Sign, scratch: &mut [f32]) -> Option<Echo> {
+    let samples_per_cycle = surroundings.samples_per_cycle;
+    let search = Search {
+        around: index,
+        reach: 0.75 * samples_per_cycle,
+        sign,
+        samples_per_cycle,
+    };
+    let codes = surroundings.record.codes();
+    let arrival = estimate(Estimator::LeastSquares, codes, &search, &surroundings.pulse, scratch)?;
+    echo_at(surroundings, arrival)
+}
+
+/// Everything about an echo whose arrival is known.
+#[must_use]
+pub fn echo_at(surroundings: &Surroundings<'_>, arrival: Arrival) -> Option<Echo> {
+    let Surroundings {
+        record, pulse, noise, ..
+    } = surroundings;
+    let amplitude = arrival.amplitude.abs();
+    if !(amplitude > 0.0) {
+        return None;
+    }
+    let length = pulse.samples.len();
+    let start = SamplePosition::new(arrival.position.index, arrival.position.fraction - pulse.facts.origin);
+    let start = start.index as usize;
+    let under = record.codes().get(start..start.checked_add(length)?)?;
+    let (upper, lower) = (record.format().upper_rail(), record.format().lower_rail());
+    let clipped = under.iter().any(|&code| code >= upper || code <= lower);
+
+    let explained = amplitude * amplitude * pulse.facts.energy;
+    // Three numbers were fitted: delay, amplitude, mean. Chance adds up to three standard deviations.
+    let freedom = length as f32 - 3.0;
+    let from_noise = noise * noise * (freedom + 3.0 * math::sqrt(2.0 * freedom));
+    let excess = (energy(under) - explained - from_noise) / explained;
+    let clock = record.clock();
+    Some(Echo {
+        position: arrival.position,
+        arrival: clock.time_of(arrival.position),
+        standard_uncertainty: clock.rate.period() * surroundings.arrival_noise(amplitude),
+        amplitude,
+        polarity: if arrival.amplitude < 0.0 {
+            Polarity::Negative
+        } else {
+            Polarity::Positive
+        },
+        snr: Decibels::from_amplitude_ratio(amplitude / noise),
+        mismatch: math::sqrt(excess),
+        clipped,
+        role: EchoRole::Other,
+    })
 }
 
 /// The echoes of one record in the order of their arrival.

@@ -1,6 +1,7 @@
 //! What the echoes say about the part.
 
 pub mod beam;
+pub mod judgement;
 pub mod calibration;
 pub mod coupling;
 pub mod thickness;

@@ -1,0 +1,192 @@
+//! May this reading be believed? Doubts, and the probability of a wrong cycle.
+//!
+//! **In**: everything that the steps before have found. **Out**: [`Doubts`]. A doubt is raised only
+//! where what it names could move the reading beyond its expanded uncertainty: a gauge that doubts
+//! everything says nothing.
+
+use crate::echo::train::Train;
+use crate::echo::{Echo, EchoRole, Surroundings};
+use crate::math;
+use crate::outcome::{Doubt, Doubts};
+use crate::setup::{GaugeSetup, ProbeKind, Span};
+use crate::units::{Metres, Seconds};
+use crate::wall::thickness::{self, TrainTimes};
+use crate::wall::uncertainty;
+
+/// Wrong-cycle probability above which the signal counts as low.
+const WRONG_CYCLE_LIMIT: f32 = 1e-3;
+/// Below this many samples a cycle the sampling counts as coarse.
+const SAMPLES_PER_CYCLE_LIMIT: f32 = 4.0;
+
+/// What a reading rests on.
+#[derive(Clone, Copy, Debug)]
+pub struct Evidence<'a> {
+    /// The set-up.
+    pub setup: &'a GaugeSetup,
+    /// Record, pulse and noise.
+    pub surroundings: &'a Surroundings<'a>,
+    /// All echoes with their roles.
+    pub echoes: &'a [Echo],
+    /// The multiples.
+    pub train: &'a Train,
+    /// The times that the thickness was made from.
+    pub times: &'a TrainTimes,
+    /// The thickness.
+    pub wall: Metres,
+    /// Its expanded uncertainty.
+    pub expanded: Metres,
+    /// The pulse was learned, not modelled.
+    pub learned_pulse: bool,
+}
+
+impl Evidence<'_> {
+    fn back_wall(&self, number: u8) -> Option<&Echo> {
+        self.echoes.iter().find(|echo| echo.role == EchoRole::BackWall(number))
+    }
+
+    fn interface(&self) -> Option<&Echo> {
+        self.echoes.iter().find(|echo| echo.role == EchoRole::Interface)
+    }
+
+    /// Thickness that a time stands for.
+    fn thickness_of(&self, time: Seconds) -> Metres {
+        self.setup.material.velocity * time * 0.5
+    }
+
+    /// How far an echo could have been moved by what the pulse does not explain of it: a disturbance
+    /// of relative size e in quadrature moves the best fit by e / ω.
+    fn shift_by(&self, mismatch: f32) -> Metres {
+        let samples = mismatch / self.surroundings.pulse.facts.angular_frequency;
+        self.thickness_of(self.surroundings.record.clock().rate.period() * samples)
+    }
+
+    /// Largest part of the reading that unexplained differences between its echoes could stand for.
+    fn differing_shift(&self) -> Metres {
+        let reference = match thickness::wall_span(self.setup) {
+            Span::InterfaceToBackWall => self.interface(),
+            Span::TransmissionPulseToBackWall | Span::BackWallToBackWall => self.back_wall(self.train.first_multiple),
+        };
+        let Some(reference) = reference else {
+            return Metres::ZERO;
+        };
+        let mut largest = Metres::ZERO;
+        for echo in self.echoes {
+            let steps = match (thickness::wall_span(self.setup), echo.role) {
+                (Span::InterfaceToBackWall, EchoRole::BackWall(1)) => 1.0,
+                (Span::BackWallToBackWall, EchoRole::BackWall(number)) if number > self.train.first_multiple => {
+                    f32::from(number - self.train.first_multiple)
+                }
+                _ => continue,
+            };
+            let shift = self.shift_by((echo.mismatch - reference.mismatch).abs()) / steps;
+            if shift > largest {
+                largest = shift;
+            }
+        }
+        largest
+    }
+
+    /// Echoes that the reading is made from.
+    fn used(&self) -> impl Iterator<Item = &Echo> {
+        let span = thickness::wall_span(self.setup);
+        self.echoes.iter().filter(move |echo| match (span, echo.role) {
+            (Span::BackWallToBackWall, EchoRole::BackWall(_)) => true,
+            (Span::InterfaceToBackWall, EchoRole::Interface) => true,
+            (_, EchoRole::BackWall(number)) => number == 1,
+            _ => false,
+        })
+    }
+}
+
+/// Upper bound of the probability that the reading is wrong by a cycle.
+///
+/// A neighbouring cycle wins where noise lifts it above the true one:
+/// P ~ 2 Q(sqrt(E (1 - ρ) / 2) A / σ), ρ the likeness of neighbouring cycles (half a cycle away where
+/// the echo's sign is free, ρ^(1/4) for a Gaussian pulse). Wherever events were counted, that is
+/// optimistic by a factor of 1.1 to 3.6: four times it is stated. For a train the other multiples
+/// vote too: A² is the sum over all but the strongest.
+#[must_use]
+pub fn wrong_cycle_probability(evidence: &Evidence<'_>) -> f32 {
+    let facts = &evidence.surroundings.pulse.facts;
+    let probability = |amplitude: f32, likeness: f32| {
+        let distance = facts.energy * math::larger(1.0 - likeness, 0.0) * 0.5;
+        8.0 * math::normal_tail(math::sqrt(distance) * amplitude / evidence.surroundings.noise)
+    };
+    let half_cycle = math::sqrt(math::sqrt(math::larger(facts.cycle_likeness, 0.0)));
+    let total = match thickness::wall_span(evidence.setup) {
+        Span::BackWallToBackWall => probability(evidence.train.support, facts.cycle_likeness),
+        Span::TransmissionPulseToBackWall | Span::InterfaceToBackWall => evidence
+            .used()
+            .fold(0.0, |sum, echo| sum + probability(echo.amplitude, half_cycle)),
+    };
+    math::smaller(total, 1.0)
+}
+
+/// Every doubt that applies.
+#[must_use]
+pub fn doubts(evidence: &Evidence<'_>) -> Doubts {
+    let Evidence {
+        setup,
+        train,
+        times,
+        wall,
+        expanded,
+        ..
+    } = *evidence;
+    let span = thickness::wall_span(setup);
+    let facts = &evidence.surroundings.pulse.facts;
+    let period = evidence.surroundings.record.clock().rate.period();
+    let mut doubts = Doubts::NONE;
+
+    // Two echoes have one distance, and nothing but the start can contradict it.
+    let start_agrees = train.start_difference.abs() < 0.6 * evidence.surroundings.samples_per_cycle;
+    doubts.raise_if(
+        span == Span::BackWallToBackWall && train.echoes <= 2 && !start_agrees,
+        Doubt::FewEchoes,
+    );
+    doubts.raise_if(train.period < facts.envelope_duration, Doubt::NearMinimum);
+    doubts.raise_if(train.may_be_double, Doubt::PossibleDouble);
+
+    doubts.raise_if(evidence.differing_shift() > expanded, Doubt::OverlappingEcho);
+    if span == Span::TransmissionPulseToBackWall
+        && let Some(first) = evidence.back_wall(1)
+    {
+        doubts.raise_if(evidence.shift_by(first.mismatch) > expanded, Doubt::PulseMismatch);
+    }
+    doubts.raise_if(wrong_cycle_probability(evidence) > WRONG_CYCLE_LIMIT, Doubt::LowSignal);
+    if let Some(range) = setup.calibrated {
+        doubts.raise_if(
+            wall + expanded < range.from || wall - expanded > range.to,
+            Doubt::OutsideCalibratedRange,
+        );
+    }
+    doubts.raise_if(
+        uncertainty::unknown_beam_matters(setup, wall, expanded),
+        Doubt::BeamUnknown,
+    );
+    doubts.raise_if(setup.probe.kind == ProbeKind::DualElement, Doubt::VPathUncorrected);
+    doubts.raise_if(
+        setup.samples_per_cycle() < SAMPLES_PER_CYCLE_LIMIT,
+        Doubt::CoarseSampling,
+    );
+    doubts.raise_if(evidence.used().any(|echo| echo.clipped), Doubt::ClippedEcho);
+
+    // First arrival less zero against the period: paint and a wrong zero show here.
+    if span != Span::BackWallToBackWall
+        && let Some(excess) = thickness::excess(setup, times)
+    {
+        let spread = evidence.thickness_of(excess.standard_uncertainty) * setup.coverage_factor;
+        doubts.raise_if(
+            evidence.thickness_of(excess.time).abs() > expanded + spread,
+            Doubt::ZeroContradicted,
+        );
+    }
+    // Arrivals that do not lie on a line: more than noise, and enough to matter.
+    let variance = evidence.surroundings.arrival_noise(train.support);
+    let scatter = evidence.thickness_of(period * (variance * math::sqrt(train.unevenness)));
+    doubts.raise_if(
+        span == Span::BackWallToBackWall && train.freedom > 0 && scatter > expanded,
+        Doubt::UnevenTrain,
+    );
+    doubts
+}
