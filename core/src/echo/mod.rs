@@ -64,7 +64,7 @@ pub struct Echo {
     /// Envelope peak over the noise's root mean square per sample.
     pub snr: Decibels,
     /// Root of the energy that the fitted pulse leaves unexplained (beyond what noise explains with
-    /// three standard deviations to spare) over the root of the fitted energy: 0 for a perfect match.
+    /// five standard deviations to spare) over the root of the fitted energy: 0 for a perfect match.
     pub mismatch: f32,
     /// Some sample under the pulse is clipped.
     pub clipped: bool,
@@ -148,9 +148,9 @@ pub fn echo_at(surroundings: &Surroundings<'_>, arrival: Arrival) -> Option<Echo
     let clipped = under.iter().any(|&code| code >= upper || code <= lower);
 
     let explained = amplitude * amplitude * pulse.facts.energy;
-    // Three numbers were fitted: delay, amplitude, mean. Chance adds up to three standard deviations.
+    // Three numbers were fitted: delay, amplitude, mean. Chance adds up to five standard deviations.
     let freedom = length as f32 - 3.0;
-    let from_noise = noise * noise * (freedom + 3.0 * math::sqrt(2.0 * freedom));
+    let from_noise = noise * noise * (freedom + 5.0 * math::sqrt(2.0 * freedom));
     let excess = (energy(under) - explained - from_noise) / explained;
     let clock = record.clock();
     Some(Echo {

@@ -91,6 +91,15 @@ pub struct Train {
     pub may_be_double: bool,
 }
 
+impl Train {
+    /// Do the arrivals scatter about the fit by more than noise and chance (five standard deviations
+    /// of chi-square) explain?
+    #[must_use]
+    pub fn is_uneven(&self) -> bool {
+        self.freedom > 0 && self.unevenness > 1.0 + 5.0 * math::sqrt(2.0 / f32::from(self.freedom))
+    }
+}
+
 /// No period stands out.
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub enum Undecided {

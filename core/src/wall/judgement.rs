@@ -181,11 +181,11 @@ pub fn doubts(evidence: &Evidence<'_>) -> Doubts {
             Doubt::ZeroContradicted,
         );
     }
-    // Arrivals that do not lie on a line: more than noise, and enough to matter.
-    let variance = evidence.surroundings.arrival_noise(train.support);
-    let scatter = evidence.thickness_of(period * (variance * math::sqrt(train.unevenness)));
+    // Arrivals that do not lie on a line, by more than chance and by more than the reading allows.
+    let typical = evidence.surroundings.arrival_noise(train.support) * math::sqrt(train.unevenness);
+    let scatter = evidence.thickness_of(period * typical);
     doubts.raise_if(
-        span == Span::BackWallToBackWall && train.freedom > 0 && scatter > expanded,
+        span == Span::BackWallToBackWall && train.is_uneven() && scatter > expanded,
         Doubt::UnevenTrain,
     );
     doubts

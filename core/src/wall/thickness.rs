@@ -159,7 +159,7 @@ pub fn thinnest_wall(setup: &GaugeSetup, envelope_duration: Seconds) -> Metres {
 }
 
 /// Smallest spacing of echoes that a train is read with, over the -20 dB duration of the envelope.
-const SMALLEST_SPACING: f32 = 0.62;
+pub const SMALLEST_SPACING: f32 = 0.62;
 
 /// Half the way that sound makes in a time.
 fn half_path(velocity: MetresPerSecond, time: Seconds) -> Metres {
