@@ -9,6 +9,7 @@
 #![cfg_attr(test, allow(clippy::disallowed_methods))]
 
 pub mod band;
+pub mod calibrating;
 pub mod cli;
 pub mod fourier;
 pub mod front_end;

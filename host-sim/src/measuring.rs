@@ -3,6 +3,7 @@
 use crate::input_error::InputError;
 use crate::record_file::RecordFile;
 use crate::setup_file::SetupFile;
+use halfpulse::record::average::{AverageError, Averager, MOST_SHOTS};
 use halfpulse::setup::PULSE_CAPACITY;
 use halfpulse::workspace::{CORRELATION_CAPACITY, ECHO_CAPACITY, TRAIN_LAGS};
 use halfpulse::{AdcFormat, Findings, Gauge, NoReading, Reading, Record, SampleClock, Seconds, Span, Workspace};
@@ -144,46 +145,56 @@ pub struct Shot {
 }
 
 /// The shots of a file one by one, or their average.
-#[must_use]
-pub fn shots(file: RecordFile, average: bool) -> Vec<Shot> {
-    let format = file.format;
+///
+/// # Errors
+/// More shots than one average takes.
+pub fn shots(path: &Path, file: RecordFile, average: bool) -> Result<Vec<Shot>, InputError> {
     if average {
-        return vec![averaged(&file)];
+        return Ok(vec![averaged(path, &file)?]);
     }
+    let format = file.format;
     let numbered = file.shots.into_iter().enumerate();
-    numbered
+    Ok(numbered
         .map(|(number, codes)| Shot {
             number: Some(number),
             codes,
             format,
         })
-        .collect()
+        .collect())
 }
 
 /// The average of a file's shots, with the resolution that averaging gains.
-#[must_use]
-pub fn averaged(file: &RecordFile) -> Shot {
+///
+/// # Errors
+/// More shots than one average takes.
+pub fn averaged(path: &Path, file: &RecordFile) -> Result<Shot, InputError> {
+    let fault = |error: AverageError| match error {
+        AverageError::TooManyShots => InputError::in_file(
+            path,
+            format!("has {} shots, an average takes {MOST_SHOTS}", file.shots.len()),
+            "split the file",
+        ),
+        other => InputError::in_file(
+            path,
+            format!("cannot be averaged ({other})"),
+            "measure the shots one by one",
+        ),
+    };
     let samples = file.shots.first().map_or(0, Vec::len);
-    let mut sums = vec![0i64; samples];
-    for shot in &file.shots {
-        for (sum, code) in sums.iter_mut().zip(shot) {
-            *sum += i64::from(*code);
-        }
+    let mut sums = vec![0; samples];
+    let mut averager = Averager::new(&mut sums);
+    // All shots of a file have one clock; which one does not matter here.
+    let clock = SampleClock::new(halfpulse::Hertz::from_mhz(1.0));
+    for codes in &file.shots {
+        averager.add(&Record::new(codes, file.format, clock)).map_err(fault)?;
     }
-    let shots = u16::try_from(file.shots.len()).unwrap_or(u16::MAX);
-    // As many codes a step as 16 bits leave room for, but not more than the shots can fill.
-    let room = 1u32 << (16 - file.format.bits.clamp(2, 16));
-    let codes_per_step = room.min(u32::from(shots).next_power_of_two());
-    let scale = f64::from(codes_per_step) / f64::from(shots.max(1));
-    Shot {
+    let mut codes = vec![0; samples];
+    let format = averager.finish(&mut codes).map_err(fault)?.format();
+    Ok(Shot {
         number: None,
-        codes: sums.iter().map(|sum| (*sum as f64 * scale).round() as i16).collect(),
-        format: AdcFormat {
-            codes_per_step: codes_per_step as f32,
-            shots,
-            ..file.format
-        },
-    }
+        codes,
+        format,
+    })
 }
 
 /// Measures one shot.

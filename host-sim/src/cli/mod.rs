@@ -4,6 +4,7 @@
 //! record was refused, 1 on an error; 1 wins. Errors go to stderr, one line each:
 //! `error: FILE:LINE: what; remedy`.
 
+pub mod calibrate;
 pub mod json;
 pub mod read;
 pub mod simulate;
@@ -57,6 +58,8 @@ enum Command {
     Simulate(simulate::Arguments),
     /// Measures recorded shots: a reading with its uncertainty, or the reason why there is none
     Read(read::Arguments),
+    /// Learns reference pulse, zero and velocity from blocks of known thickness
+    Calibrate(calibrate::Arguments),
 }
 
 /// Prints one error in one line on stderr.
@@ -77,6 +80,7 @@ pub fn main() -> ExitCode {
         None => Err(InputError::in_argument("no command", "see halfpulse --help")),
         Some(Command::Simulate(arguments)) => simulate::run(&arguments, &mut out),
         Some(Command::Read(arguments)) => read::run(&arguments, &mut out),
+        Some(Command::Calibrate(arguments)) => calibrate::run(&arguments, &mut out),
     };
     match result {
         Ok(outcome) => outcome.exit_code(),

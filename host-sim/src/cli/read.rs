@@ -169,7 +169,7 @@ fn read_file(
             let clock = measuring::clock(path, &file, setup)?;
             let mut scratch = HeapScratch::new(file.shots.first().map_or(0, Vec::len));
             let mut gauge = setup.gauge(scratch.workspace())?;
-            for shot in measuring::shots(file, average) {
+            for shot in measuring::shots(path, file, average)? {
                 let measured = measuring::measure(&mut gauge, &name, &shot, clock);
                 sink(&measured).map_err(|_| Stop::Output)?;
             }
@@ -177,7 +177,7 @@ fn read_file(
         Source::Unknown(unknown) => {
             let file = record_file::read(path, &unknown.coding)?;
             let clock = unknown_clock(path, &file, unknown.rate_mhz)?;
-            for shot in measuring::shots(file, average) {
+            for shot in measuring::shots(path, file, average)? {
                 let measured = look_at(&name, &shot, clock);
                 sink(&measured).map_err(|_| Stop::Output)?;
             }

@@ -1,0 +1,275 @@
+//! One block: which of its echoes is the first back wall, and when it came.
+
+use super::Learn;
+use crate::input_error::InputError;
+use crate::measuring::Shot;
+use halfpulse::wall::thickness::Timed;
+use halfpulse::{Echo, EchoRole, Gauge, GaugeSetup, Metres, Record, SampleClock, Seconds, Span};
+use std::path::PathBuf;
+
+/// A block of known thickness with its record.
+pub struct BlockRecord {
+    /// Thickness as it was typed.
+    pub thickness_mm: f64,
+    /// Thickness.
+    pub thickness: Metres,
+    /// Its standard uncertainty (k = 1).
+    pub thickness_uncertainty: Metres,
+    /// The record's file.
+    pub path: PathBuf,
+    /// The average of its shots.
+    pub average: Shot,
+    /// Its shots.
+    pub shots: Vec<Shot>,
+    /// When the samples were taken.
+    pub clock: SampleClock,
+}
+
+/// What a block's echoes say.
+#[derive(Clone, Debug)]
+pub struct BlockTimes {
+    /// The first back wall in the averaged record.
+    pub back_wall: Echo,
+    /// Its arrival, with the larger of noise and scatter as its uncertainty.
+    pub first_back_wall: Timed,
+    /// The interface echo, where the span needs it.
+    pub interface: Option<Timed>,
+    /// The period of the back walls, where there is one.
+    pub period: Option<Timed>,
+    /// The nearest echoes before and after the first back wall.
+    pub neighbours: (Option<Seconds>, Option<Seconds>),
+}
+
+impl BlockTimes {
+    /// The time that a zero refers to: the first back wall, after the interface if there is one.
+    #[must_use]
+    pub fn first(&self) -> Timed {
+        let first = self.first_back_wall;
+        match self.interface {
+            None => first,
+            Some(interface) => Timed::new(
+                first.time - interface.time,
+                Seconds::new(
+                    first
+                        .standard_uncertainty
+                        .get()
+                        .hypot(interface.standard_uncertainty.get()),
+                ),
+            ),
+        }
+    }
+}
+
+/// How far a zero that is not learned yet may lie from the set-up's: wear plate and cable (common practice).
+const UNKNOWN_ZERO: Seconds = Seconds::from_us(1.0);
+/// How far the velocity may differ from the set-up's before it is learned.
+const UNKNOWN_VELOCITY: f32 = 0.1;
+
+/// Measures one block's average, and its shots for their scatter.
+///
+/// # Errors
+/// No back wall where the thickness promises one; a clipped one; no interface echo or no period where
+/// they are needed.
+pub fn measure(gauge: &mut Gauge<'_>, block: &BlockRecord, learn: Learn) -> Result<BlockTimes, InputError> {
+    let setup = *gauge.setup();
+    let needs_period = setup.span == Span::BackWallToBackWall && learn != Learn::Zero;
+    let (echoes, outcome) = look(gauge, block, &block.average);
+    let found = find(&echoes, block, &setup);
+    let Some((back_wall, interface)) = found else {
+        let why = match outcome {
+            Err(why) => why,
+            Ok(_) => "its echoes lie elsewhere".to_string(),
+        };
+        return Err(InputError::in_file(
+            &block.path,
+            format!("no back wall near the time of {} mm: {why}", block.thickness_mm),
+            "check the block's thickness, the velocity and the window",
+        ));
+    };
+    if back_wall.clipped {
+        return Err(InputError::in_file(
+            &block.path,
+            "the back wall is clipped",
+            "lower the gain and record the block again",
+        ));
+    }
+    let period = if setup.span == Span::BackWallToBackWall {
+        match &outcome {
+            Ok(period) => Some(*period),
+            Err(why) if needs_period => {
+                return Err(InputError::in_file(
+                    &block.path,
+                    format!("no period of back walls: {why}"),
+                    "record for longer, or raise the gain",
+                ));
+            }
+            Err(_) => None,
+        }
+    } else {
+        None
+    };
+    let expected = expected_trip(block, &setup);
+    if let Some(period) = period
+        && (period.time / expected - 1.0).abs() > UNKNOWN_VELOCITY
+    {
+        return Err(InputError::in_file(
+            &block.path,
+            format!(
+                "its back walls are {} apart, {} mm promise {expected}",
+                period.time, block.thickness_mm
+            ),
+            "check the block's thickness and the set-up's velocity",
+        ));
+    }
+    let position = echoes
+        .iter()
+        .position(|echo| echo.arrival == back_wall.arrival)
+        .unwrap_or(0);
+    let neighbours = (
+        position
+            .checked_sub(1)
+            .and_then(|i| echoes.get(i))
+            .map(|echo| echo.arrival),
+        echoes.get(position + 1).map(|echo| echo.arrival),
+    );
+    let scatter = scatter(gauge, block, &setup, (&back_wall, interface.as_ref(), period));
+    Ok(BlockTimes {
+        first_back_wall: timed(&back_wall, scatter.back_wall),
+        interface: interface.map(|echo| timed(&echo, scatter.interface)),
+        period: period.map(|period| Timed::new(period.time, larger(period.standard_uncertainty, scatter.period))),
+        back_wall,
+        neighbours,
+    })
+}
+
+fn expected_trip(block: &BlockRecord, setup: &GaugeSetup) -> Seconds {
+    block.thickness * 2.0 / setup.material.velocity
+}
+
+fn larger(a: Seconds, b: Seconds) -> Seconds {
+    if b > a { b } else { a }
+}
+
+fn timed(echo: &Echo, scatter: Seconds) -> Timed {
+    Timed::new(echo.arrival, larger(echo.standard_uncertainty, scatter))
+}
+
+/// Echoes of one shot, and its period: the reading times 2 / c, or why there is none.
+fn look(gauge: &mut Gauge<'_>, block: &BlockRecord, shot: &Shot) -> (Vec<Echo>, Result<Timed, String>) {
+    let record = Record::new(&shot.codes, shot.format, block.clock);
+    let velocity = gauge.setup().material.velocity;
+    let outcome = gauge.measure(&record);
+    let period = match outcome {
+        Ok(reading) => {
+            let timing = reading
+                .budget
+                .terms()
+                .iter()
+                .find(|term| term.source == halfpulse::wall::uncertainty::Source::Timing)
+                .map_or(Metres::ZERO, |term| term.standard_uncertainty);
+            Ok(Timed::new(reading.thickness * 2.0 / velocity, timing * 2.0 / velocity))
+        }
+        Err(why) => Err(why.to_string()),
+    };
+    (gauge.findings().echoes.iter().copied().collect(), period)
+}
+
+/// The first back wall, and the interface echo where the span needs one.
+///
+/// The zero is not known yet, so the first back wall is the echo that the gauge calls so if its place
+/// fits the thickness, else the strongest echo that does.
+fn find(echoes: &[Echo], block: &BlockRecord, setup: &GaugeSetup) -> Option<(Echo, Option<Echo>)> {
+    let interface = echoes.iter().find(|echo| echo.role == EchoRole::Interface).copied();
+    let needs_interface = setup.span == Span::InterfaceToBackWall;
+    if needs_interface && interface.is_none() {
+        return None;
+    }
+    let trip = expected_trip(block, setup);
+    let (start, unknown) = match interface {
+        Some(interface) => (interface.arrival, Seconds::ZERO),
+        None => (setup.zero.offset, UNKNOWN_ZERO),
+    };
+    // One cycle more, because the pulse at hand may be only modelled.
+    let tolerance = trip * UNKNOWN_VELOCITY + unknown + setup.probe.centre_frequency.period();
+    let fits = |echo: &&Echo| {
+        echo.role != EchoRole::Interface
+            && echo.role != EchoRole::TransmissionPulse
+            && (echo.arrival - start - trip).abs() <= tolerance
+    };
+    let named = echoes
+        .iter()
+        .filter(fits)
+        .find(|echo| echo.role == EchoRole::BackWall(1));
+    let strongest = || {
+        echoes
+            .iter()
+            .filter(fits)
+            .max_by(|a, b| a.amplitude.total_cmp(&b.amplitude))
+    };
+    let back_wall = named.or_else(strongest)?;
+    Some((*back_wall, interface.filter(|_| needs_interface)))
+}
+
+/// Standard uncertainties of the mean from the scatter of the shots; zero with fewer than three.
+#[derive(Clone, Copy, Default)]
+struct Scatter {
+    back_wall: Seconds,
+    interface: Seconds,
+    period: Seconds,
+}
+
+fn scatter(
+    gauge: &mut Gauge<'_>,
+    block: &BlockRecord,
+    setup: &GaugeSetup,
+    (back_wall, interface, period): (&Echo, Option<&Echo>, Option<Timed>),
+) -> Scatter {
+    if block.shots.len() < 3 {
+        return Scatter::default();
+    }
+    let half_cycle = setup.probe.centre_frequency.period() * 0.5;
+    let near = |echoes: &[Echo], of: &Echo| {
+        let distances = echoes.iter().map(|echo| echo.arrival - of.arrival);
+        distances
+            .min_by(|a, b| a.abs().get().total_cmp(&b.abs().get()))
+            .filter(|d| d.abs() < half_cycle)
+    };
+    let (mut walls, mut interfaces, mut periods) = (Vec::new(), Vec::new(), Vec::new());
+    for shot in &block.shots {
+        let (echoes, outcome) = look(gauge, block, shot);
+        walls.extend(near(&echoes, back_wall));
+        interfaces.extend(interface.and_then(|of| near(&echoes, of)));
+        if let (Some(of), Ok(this)) = (period, outcome) {
+            periods.extend(Some(this.time - of.time).filter(|d| d.abs() < half_cycle));
+        }
+    }
+    Scatter {
+        back_wall: of_the_mean(&walls),
+        interface: of_the_mean(&interfaces),
+        period: of_the_mean(&periods),
+    }
+}
+
+/// Standard deviation of the mean (JCGM 100:2008, 4.2.3); zero of fewer than three.
+fn of_the_mean(differences: &[Seconds]) -> Seconds {
+    let count = differences.len() as f64;
+    if differences.len() < 3 {
+        return Seconds::ZERO;
+    }
+    let mean = differences.iter().map(|d| f64::from(d.get())).sum::<f64>() / count;
+    let squares: f64 = differences.iter().map(|d| (f64::from(d.get()) - mean).powi(2)).sum();
+    Seconds::new((squares / (count - 1.0) / count).sqrt() as f32)
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn val_standard_deviation_of_the_mean() {
+        // 1, 2, 3, 4 ns: variance 5/3 ns², of the mean 5/12 ns² (by hand).
+        let values: Vec<Seconds> = (1..=4).map(|ns| Seconds::from_ns(ns as f32)).collect();
+        assert!((of_the_mean(&values).as_ns() - (5.0f32 / 12.0).sqrt()).abs() < 1e-5);
+        assert_eq!(of_the_mean(&values[..2]), Seconds::ZERO);
+    }
+}

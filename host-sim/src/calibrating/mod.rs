@@ -1,0 +1,320 @@
+//! From records of blocks to reference pulse, zero and velocity.
+//!
+//! 1. Each block's averaged shots are measured with the pulse at hand (modelled, or learned before) to
+//!    find its first back wall near the time that its thickness promises ([`block`]).
+//! 2. The reference pulse is cut round the clearest first back wall ([`cut`]).
+//! 3. All blocks are measured again with that pulse, and zero and velocity follow from what the span
+//!    measures between: the first back wall; the first back wall after the interface; or the period for
+//!    the velocity and the first back wall for the zero.
+//!
+//! Uncertainties contain the thickness of the block, the noise of the averaged record or the scatter of
+//! its shots (the larger), and for a velocity also what nobody corrects: couplant films that differ
+//! between blocks, and the beam's spreading from one block to the other.
+
+pub mod block;
+pub mod cut;
+
+use crate::input_error::InputError;
+use crate::measuring::HeapScratch;
+use crate::setup_file::{CalibrationKeys, SetupFile, SetupKeys, checksum};
+use block::{BlockRecord, BlockTimes};
+use halfpulse::wall::calibration::{self, Block, CalibrationError};
+use halfpulse::wall::thickness::Timed;
+use halfpulse::wall::{beam, coupling};
+use halfpulse::{GaugeSetup, Material, Metres, Seconds, Span, Zero};
+
+/// What shall be learned from the blocks, besides the reference pulse.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, clap::ValueEnum)]
+pub enum Learn {
+    /// The zero, at the set-up's velocity: one block
+    Zero,
+    /// The velocity, with the set-up's zero: one block
+    Velocity,
+    /// Both: two blocks
+    ZeroAndVelocity,
+}
+
+/// What the blocks have taught.
+#[derive(Clone, Debug)]
+pub struct Calibrated {
+    /// The set-up with everything that was learned; its pulse's file has the name that was asked for.
+    pub keys: SetupKeys,
+    /// The reference pulse.
+    pub pulse: Vec<f32>,
+    /// The zero in force.
+    pub zero: Zero,
+    /// The material in force.
+    pub material: Material,
+    /// Which block the pulse was cut from.
+    pub pulse_from: usize,
+    /// What was measured on each block.
+    pub times: Vec<BlockTimes>,
+}
+
+/// Standard uncertainty over half-width of a rectangular distribution (JCGM 100:2008, 4.3.7).
+const RECTANGULAR: f32 = 0.577_350_26;
+
+/// Calibrates a set-up on blocks. `pulse_name` is what the set-up will call the pulse's file.
+///
+/// # Errors
+/// A block whose back wall is not found or contradicts its thickness; blocks that do not determine what
+/// shall be learned.
+pub fn calibrate(
+    setup: &SetupFile,
+    blocks: &[BlockRecord],
+    learn: Learn,
+    pulse_name: &str,
+) -> Result<Calibrated, InputError> {
+    let mut core_setup = setup.gauge_setup()?;
+    check_number(core_setup.span, blocks.len(), learn)?;
+    // Blocks are bare, and what an earlier calibration covered says nothing about this one.
+    core_setup.coating = None;
+    core_setup.calibrated = None;
+
+    let longest = blocks.iter().map(|block| block.average.codes.len()).max().unwrap_or(0);
+    let mut scratch = HeapScratch::new(longest);
+    let mut gauge = setup.gauge(scratch.workspace())?;
+    gauge.change_setup(core_setup).map_err(|error| setup.locate(error))?;
+    let mut best: Option<(usize, BlockTimes)> = None;
+    for (number, block) in blocks.iter().enumerate() {
+        let times = block::measure(&mut gauge, block, learn)?;
+        if best
+            .as_ref()
+            .is_none_or(|(_, so_far)| times.back_wall.snr > so_far.back_wall.snr)
+        {
+            best = Some((number, times));
+        }
+    }
+    let Some((pulse_from, times)) = best else {
+        return Err(InputError::in_argument(
+            "there is no block",
+            "give --block 5.000mm=FILE",
+        ));
+    };
+    let pulse = cut::reference_pulse(&blocks[pulse_from], &times, &core_setup)?;
+    gauge.learn_pulse(&pulse).map_err(|error| {
+        InputError::in_file(
+            &blocks[pulse_from].path,
+            format!("its echo is no reference pulse: {error}"),
+            "record the block again",
+        )
+    })?;
+
+    let times: Vec<BlockTimes> = blocks
+        .iter()
+        .map(|block| block::measure(&mut gauge, block, learn))
+        .collect::<Result<_, _>>()?;
+    let (zero, material) = solve(&core_setup, blocks, &times, learn)?;
+    let keys = new_keys(setup, blocks, learn, (&zero, &material), &pulse, pulse_name);
+    Ok(Calibrated {
+        keys,
+        pulse,
+        zero,
+        material,
+        pulse_from,
+        times,
+    })
+}
+
+/// How many blocks what shall be learned takes.
+fn check_number(span: Span, blocks: usize, learn: Learn) -> Result<(), InputError> {
+    let between_back_walls = span == Span::BackWallToBackWall;
+    let fits = match learn {
+        Learn::Zero | Learn::Velocity => blocks == 1,
+        // Period and first back wall of a single block say both.
+        Learn::ZeroAndVelocity => blocks == 2 || (blocks == 1 && between_back_walls),
+    };
+    if fits {
+        return Ok(());
+    }
+    Err(match (learn, blocks) {
+        (Learn::ZeroAndVelocity, 1) => InputError::in_argument(
+            "one block cannot determine both zero and velocity",
+            "give a second --block of another thickness, or --learn zero",
+        ),
+        (Learn::ZeroAndVelocity, _) => InputError::in_argument(
+            format!("zero and velocity are determined by two blocks, not {blocks}"),
+            "give two --block",
+        ),
+        (Learn::Zero | Learn::Velocity, _) => InputError::in_argument(
+            format!("{blocks} blocks where one is asked for"),
+            "give one --block, or --learn zero-and-velocity",
+        ),
+    })
+}
+
+/// The block with one of its times, the uncertainty widened by further half-widths.
+fn as_block(record: &BlockRecord, time: Timed, half_widths: &[Seconds]) -> Block {
+    let mut variance = f64::from(time.standard_uncertainty.get()).powi(2);
+    for half_width in half_widths {
+        variance += f64::from(half_width.get() * RECTANGULAR).powi(2);
+    }
+    Block {
+        thickness: record.thickness,
+        thickness_uncertainty: record.thickness_uncertainty,
+        time: time.time,
+        time_uncertainty: Seconds::new(variance.sqrt() as f32),
+    }
+}
+
+fn refusal(error: CalibrationError) -> InputError {
+    let sentence = error.to_string();
+    let (what, remedy) = sentence.split_once(": ").unwrap_or((&sentence, "give other blocks"));
+    InputError::in_argument(what, remedy)
+}
+
+/// Zero and material from what the blocks' echoes say.
+fn solve(
+    setup: &GaugeSetup,
+    blocks: &[BlockRecord],
+    times: &[BlockTimes],
+    learn: Learn,
+) -> Result<(Zero, Material), InputError> {
+    // A zero takes film and beam of its block with it; the budget of each reading counts how far the
+    // part's differ. A velocity has to count them here.
+    let film = coupling::half_width(&setup.probe, setup.span);
+    let first = |number: usize, half_widths: &[Seconds]| match (blocks.get(number), times.get(number)) {
+        (Some(block), Some(times)) => Ok(as_block(block, times.first(), half_widths)),
+        _ => Err(InputError::in_argument(
+            "a block is missing",
+            "give --block 5.000mm=FILE",
+        )),
+    };
+    let zero_from_first = |material: &Material| {
+        let thinnest = if blocks.len() > 1 && blocks[1].thickness < blocks[0].thickness {
+            1
+        } else {
+            0
+        };
+        calibration::zero_at_known_velocity(&first(thinnest, &[])?, material).map_err(refusal)
+    };
+    match (learn, setup.span) {
+        (Learn::Zero, _) => Ok((zero_from_first(&setup.material)?, setup.material)),
+        (Learn::Velocity, Span::BackWallToBackWall) => Ok((setup.zero, velocity_from_periods(setup, blocks, times)?)),
+        (Learn::Velocity, _) => {
+            let beam = spreading(setup, Metres::ZERO, blocks[0].thickness);
+            calibration::velocity_from_thickness(&first(0, &[film, beam])?, &setup.zero).map_err(refusal)
+        }
+        (Learn::ZeroAndVelocity, Span::BackWallToBackWall) => {
+            let material = velocity_from_periods(setup, blocks, times)?;
+            Ok((zero_from_first(&material)?, material))
+        }
+        (Learn::ZeroAndVelocity, _) => {
+            // What moves one block's echo against the other's is shared between the two.
+            let beam = spreading(setup, blocks[0].thickness, blocks[1].thickness) * std::f32::consts::FRAC_1_SQRT_2;
+            let (one, other) = (first(0, &[film, beam])?, first(1, &[film, beam])?);
+            calibration::zero_and_velocity(&one, &other).map_err(refusal)
+        }
+    }
+}
+
+/// How far the uncorrected spreading of the beam moves the echo of one wall against another's.
+fn spreading(setup: &GaugeSetup, from: Metres, to: Metres) -> Seconds {
+    setup.probe.element_diameter.map_or(Seconds::ZERO, |diameter| {
+        let (velocity, frequency) = (setup.material.velocity, setup.probe.centre_frequency);
+        beam::uncorrected_shift(diameter, velocity, frequency, from * 2.0, to * 2.0).abs()
+    })
+}
+
+/// The velocity from the periods of one or two blocks: the mean weighted by the inverse variances.
+fn velocity_from_periods(
+    setup: &GaugeSetup,
+    blocks: &[BlockRecord],
+    times: &[BlockTimes],
+) -> Result<Material, InputError> {
+    let film = coupling::half_width(&setup.probe, Span::BackWallToBackWall);
+    let mut materials = Vec::new();
+    for (block, times) in blocks.iter().zip(times) {
+        let Some(period) = times.period else {
+            return Err(InputError::in_file(
+                &block.path,
+                "shows one back wall, the velocity between back walls needs two",
+                "record for longer, or raise the gain",
+            ));
+        };
+        let beam = setup.probe.element_diameter.map_or(Seconds::ZERO, |diameter| {
+            let (velocity, frequency) = (setup.material.velocity, setup.probe.centre_frequency);
+            beam::uncorrected_period_shift(diameter, velocity, frequency, block.thickness * 2.0).abs()
+        });
+        let nothing = Zero::new(Seconds::ZERO, Seconds::ZERO);
+        let (_, material) =
+            calibration::velocity_from_thickness(&as_block(block, period, &[film, beam]), &nothing).map_err(refusal)?;
+        materials.push(material);
+    }
+    weighted(&materials)
+}
+
+fn weighted(materials: &[Material]) -> Result<Material, InputError> {
+    if let [one] = materials {
+        return Ok(*one);
+    }
+    let (mut weights, mut sum) = (0.0f64, 0.0f64);
+    for material in materials {
+        // A centimetre per second keeps an uncertainty of zero from deciding alone.
+        let u = f64::from(material.velocity_standard_uncertainty.get()).max(0.01);
+        weights += u.powi(-2);
+        sum += f64::from(material.velocity.get()) * u.powi(-2);
+    }
+    let mean = sum / weights;
+    for material in materials {
+        let off = (f64::from(material.velocity.get()) - mean).abs();
+        let u = f64::from(material.velocity_standard_uncertainty.get()).max(0.01);
+        // Four standard uncertainties: by chance once in ten thousand pairs of blocks.
+        if off > 4.0 * u {
+            return Err(InputError::in_argument(
+                format!(
+                    "the blocks contradict each other: {} against {mean:.0} m/s",
+                    material.velocity
+                ),
+                "check that blocks and records belong together, and the blocks' uncertainties",
+            ));
+        }
+    }
+    Ok(Material::new(
+        halfpulse::MetresPerSecond::new(mean as f32),
+        halfpulse::MetresPerSecond::new(weights.powf(-0.5) as f32),
+    ))
+}
+
+/// The set-up with what was learned.
+fn new_keys(
+    setup: &SetupFile,
+    blocks: &[BlockRecord],
+    learn: Learn,
+    (zero, material): (&Zero, &Material),
+    pulse: &[f32],
+    pulse_name: &str,
+) -> SetupKeys {
+    let mut keys = setup.keys.clone();
+    keys.probe.reference_pulse = Some(pulse_name.to_string());
+    keys.zero.reference_pulse_checksum = Some(checksum(pulse));
+    if learn != Learn::Velocity {
+        keys.zero.offset_ns = rounded(zero.offset.as_ns());
+        keys.zero.standard_uncertainty_ns = Some(rounded(zero.standard_uncertainty.as_ns()));
+    }
+    if learn != Learn::Zero {
+        keys.material.velocity_m_s = rounded(material.velocity.get());
+        keys.material.velocity_standard_uncertainty_m_s = rounded(material.velocity_standard_uncertainty.get());
+    }
+    let mut thicknesses: Vec<f64> = blocks.iter().map(|block| block.thickness_mm).collect();
+    thicknesses.sort_by(f64::total_cmp);
+    let learned_zero = learn != Learn::Velocity || setup.keys.measure.span != Span::BackWallToBackWall;
+    keys.calibration = Some(CalibrationKeys {
+        velocity_zero_correlation: Some(if learned_zero {
+            rounded(zero.velocity_correlation)
+        } else {
+            0.0
+        }),
+        from_mm: thicknesses.first().copied(),
+        to_mm: thicknesses.last().copied(),
+        blocks_mm: thicknesses,
+        temperature_c: None,
+        date: None,
+    });
+    keys
+}
+
+/// The shortest decimal number that is the same `f32`.
+fn rounded(value: f32) -> f64 {
+    value.to_string().parse().unwrap_or(f64::from(value))
+}

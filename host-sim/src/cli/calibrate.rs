@@ -1,0 +1,303 @@
+//! `halfpulse calibrate`: blocks of known thickness to reference pulse, zero and velocity.
+
+use super::Outcome;
+use crate::calibrating::block::BlockRecord;
+use crate::calibrating::{self, Calibrated, Learn};
+use crate::input_error::InputError;
+use crate::measuring;
+use crate::record_file::{self, npy};
+use crate::setup_file::{SetupFile, span_word};
+use halfpulse::Metres;
+use std::io::Write;
+use std::path::{Path, PathBuf};
+use std::time::{SystemTime, UNIX_EPOCH};
+
+/// Standard uncertainty of a block whose own is not stated.
+const BLOCK_UNCERTAINTY_MM: f64 = 0.005;
+/// Thinnest and thickest block in millimetres that is taken for one.
+const BLOCKS_MM: std::ops::RangeInclusive<f64> = 0.05..=10_000.0;
+
+/// Arguments of `calibrate`.
+#[derive(Debug, clap::Args)]
+#[command(after_help = EXAMPLES)]
+pub struct Arguments {
+    /// The set-up to start from (TOML): probe, material, span, window
+    #[arg(long, value_name = "IN.toml")]
+    setup: PathBuf,
+    /// A block and its record; +- is its standard uncertainty (k = 1), 0.005 mm if not stated
+    #[arg(long = "block", value_name = "5.000mm+-0.002mm=FILE", required = true)]
+    blocks: Vec<String>,
+    /// What to learn besides the pulse; one block: zero, two: zero-and-velocity
+    #[arg(long, value_enum)]
+    learn: Option<Learn>,
+    /// The new set-up; its reference pulse is written beside it
+    #[arg(short, long, value_name = "OUT.toml")]
+    output: PathBuf,
+    /// Temperature of the blocks in degrees Celsius, to be noted in the set-up
+    #[arg(long, value_name = "C", allow_negative_numbers = true)]
+    temperature: Option<f64>,
+    /// Day to be noted in the set-up, as 2026-01-31; today (UTC) if not stated
+    #[arg(long, value_name = "DATE")]
+    date: Option<String>,
+}
+
+const EXAMPLES: &str = "\
+Examples:
+  halfpulse calibrate --setup probe.toml --block 5.000mm=thin.npy -o ready.toml
+  halfpulse calibrate --setup probe.toml --block 5.000mm=thin.npy --block 25.000mm+-0.002mm=thick.npy -o ready.toml
+  halfpulse calibrate --setup probe.toml --block 10.00mm=part.npy --learn velocity -o ready.toml
+
+All shots of a file are of one place; they are averaged. What is learned, by span:
+  transmission-pulse-to-back-wall   first back wall = zero + 2 d / velocity
+  interface-to-back-wall            first back wall - interface = zero (normally 0) + 2 d / velocity
+  back-wall-to-back-wall            period = 2 d / velocity; zero from the first back wall
+Two blocks determine zero and velocity together, and how their errors hang together. What the blocks
+cannot determine is refused. A zero belongs to the pulse it was learned with: the new set-up names the
+pulse's file and its checksum.";
+
+/// Runs the command.
+///
+/// # Errors
+/// What is wrong with set-up, blocks, records or output.
+pub fn run(arguments: &Arguments, out: &mut dyn Write) -> Result<Outcome, InputError> {
+    let setup = SetupFile::read(&arguments.setup)?;
+    let blocks: Vec<BlockRecord> = arguments
+        .blocks
+        .iter()
+        .map(|text| read_block(text, &setup))
+        .collect::<Result<_, _>>()?;
+    let learn = arguments.learn.unwrap_or(match blocks.len() {
+        1 => Learn::Zero,
+        _ => Learn::ZeroAndVelocity,
+    });
+    let date = match &arguments.date {
+        Some(date) => checked_date(date)?,
+        None => today(),
+    };
+    if arguments.temperature.is_some_and(|t| !(-273.15..=3000.0).contains(&t)) {
+        return Err(InputError::in_argument(
+            "--temperature is no temperature of a block",
+            "give degrees Celsius",
+        ));
+    }
+    let pulse_path = pulse_path(&arguments.output)?;
+    let pulse_name = pulse_path.file_name().map(|name| name.to_string_lossy().into_owned());
+    let pulse_name = pulse_name.unwrap_or_default();
+    let mut learned = calibrating::calibrate(&setup, &blocks, learn, &pulse_name)?;
+    if let Some(calibration) = &mut learned.keys.calibration {
+        calibration.date = Some(date);
+        calibration.temperature_c = arguments.temperature;
+    }
+    npy::write_pulse(&pulse_path, &learned.pulse)?;
+    learned.keys.write(&arguments.output)?;
+    // What was written must be usable: read it as `read` will.
+    SetupFile::read(&arguments.output)?.reference_pulse()?;
+    // Whoever closed our output has the files.
+    let _ = out.write_all(report(&learned, &blocks, learn, &arguments.output, &pulse_path).as_bytes());
+    Ok(Outcome::Done)
+}
+
+/// Reads `5.000mm+-0.002mm=FILE` and the file.
+fn read_block(text: &str, setup: &SetupFile) -> Result<BlockRecord, InputError> {
+    let (thickness_mm, uncertainty_mm, path) = parse_block(text)?;
+    let file = record_file::read(&path, &setup.coding())?;
+    let clock = measuring::clock(&path, &file, setup)?;
+    let average = measuring::averaged(&path, &file)?;
+    let shots = measuring::shots(&path, file, false)?;
+    Ok(BlockRecord {
+        thickness_mm,
+        thickness: Metres::new((thickness_mm * 1e-3) as f32),
+        thickness_uncertainty: Metres::new((uncertainty_mm * 1e-3) as f32),
+        path,
+        average,
+        shots,
+        clock,
+    })
+}
+
+fn parse_block(text: &str) -> Result<(f64, f64, PathBuf), InputError> {
+    let fault = |what: String| InputError::in_argument(what, "write it like 5.000mm=FILE or 25.000mm+-0.002mm=FILE");
+    let Some((size, path)) = text.split_once('=') else {
+        return Err(fault(format!("--block {text} names no file")));
+    };
+    if path.is_empty() {
+        return Err(fault(format!("--block {text} names no file")));
+    }
+    let millimetres = |part: &str| {
+        let number = part
+            .trim()
+            .strip_suffix("mm")
+            .ok_or_else(|| fault(format!("'{part}' in --block has no mm")))?;
+        number
+            .trim()
+            .parse::<f64>()
+            .ok()
+            .filter(|number| number.is_finite())
+            .ok_or_else(|| fault(format!("'{part}' in --block is no length")))
+    };
+    let (thickness, uncertainty) = match size.split_once("+-").or_else(|| size.split_once('\u{b1}')) {
+        Some((thickness, uncertainty)) => (millimetres(thickness)?, millimetres(uncertainty)?),
+        None => (millimetres(size)?, BLOCK_UNCERTAINTY_MM),
+    };
+    if !BLOCKS_MM.contains(&thickness) {
+        return Err(InputError::in_argument(
+            format!("a block of {thickness} mm is no block"),
+            format!("give a thickness from {} to {} mm", BLOCKS_MM.start(), BLOCKS_MM.end()),
+        ));
+    }
+    if !(0.0..thickness).contains(&uncertainty) {
+        return Err(InputError::in_argument(
+            format!("{uncertainty} mm is no uncertainty of a block of {thickness} mm"),
+            "give its standard uncertainty (k = 1), from 0 to well below the thickness",
+        ));
+    }
+    Ok((thickness, uncertainty, PathBuf::from(path)))
+}
+
+/// `OUT-pulse.npy` beside `OUT.toml`.
+fn pulse_path(output: &Path) -> Result<PathBuf, InputError> {
+    let stem = output
+        .file_stem()
+        .and_then(|stem| stem.to_str())
+        .ok_or_else(|| InputError::in_file(output, "is no name for a set-up", "give a name like ready.toml"))?;
+    Ok(output.with_file_name(format!("{stem}-pulse.npy")))
+}
+
+fn checked_date(date: &str) -> Result<String, InputError> {
+    let shape = date.len() == 10
+        && date
+            .char_indices()
+            .all(|(i, c)| if i == 4 || i == 7 { c == '-' } else { c.is_ascii_digit() });
+    if shape {
+        Ok(date.to_string())
+    } else {
+        Err(InputError::in_argument(
+            format!("--date {date} is no date"),
+            "write it like 2026-01-31",
+        ))
+    }
+}
+
+/// Today in UTC.
+fn today() -> String {
+    let seconds = SystemTime::now()
+        .duration_since(UNIX_EPOCH)
+        .map_or(0, |since| since.as_secs());
+    date_of_day(seconds / 86_400)
+}
+
+/// The Gregorian date of a day counted from 1970-01-01.
+fn date_of_day(day: u64) -> String {
+    let leap = |year: u64| year.is_multiple_of(4) && (!year.is_multiple_of(100) || year.is_multiple_of(400));
+    let (mut year, mut left) = (1970, day);
+    while left >= 365 + u64::from(leap(year)) {
+        left -= 365 + u64::from(leap(year));
+        year += 1;
+    }
+    let february = 28 + u64::from(leap(year));
+    let mut month = 1;
+    for length in [31, february, 31, 30, 31, 30, 31, 31, 30, 31, 30, 31] {
+        if left < length {
+            break;
+        }
+        left -= length;
+        month += 1;
+    }
+    format!("{year:04}-{month:02}-{:02}", left + 1)
+}
+
+fn report(learned: &Calibrated, blocks: &[BlockRecord], learn: Learn, output: &Path, pulse: &Path) -> String {
+    let mut text = String::new();
+    for (block, times) in blocks.iter().zip(&learned.times) {
+        text.push_str(&format!(
+            "{} mm ({}, {} shots): first back wall {}, SNR {}\n",
+            block.thickness_mm,
+            block.path.display(),
+            block.shots.len(),
+            times.back_wall.arrival,
+            times.back_wall.snr,
+        ));
+    }
+    text.push_str(&format!("span: {}\n", span_word(learned.keys.measure.span)));
+    let (zero, material) = (&learned.zero, &learned.material);
+    if learn != Learn::Velocity {
+        text.push_str(&format!(
+            "zero: {:.3} ns, standard uncertainty {:.3} ns\n",
+            zero.offset.as_ns(),
+            zero.standard_uncertainty.as_ns()
+        ));
+    }
+    if learn != Learn::Zero {
+        text.push_str(&format!(
+            "velocity: {:.2} m/s, standard uncertainty {:.2} m/s\n",
+            material.velocity.get(),
+            material.velocity_standard_uncertainty.get()
+        ));
+    }
+    if let Some(correlation) = learned
+        .keys
+        .calibration
+        .as_ref()
+        .and_then(|c| c.velocity_zero_correlation)
+    {
+        text.push_str(&format!("correlation of velocity and zero: {correlation:.3}\n"));
+    }
+    text.push_str(&format!(
+        "reference pulse: {} samples from {} mm, {}\nset-up: {}\n",
+        learned.pulse.len(),
+        blocks.get(learned.pulse_from).map_or(0.0, |block| block.thickness_mm),
+        pulse.display(),
+        output.display()
+    ));
+    text
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn blocks_are_read_with_and_without_uncertainty() {
+        assert_eq!(
+            parse_block("5.000mm=a.npy").unwrap(),
+            (5.0, 0.005, PathBuf::from("a.npy"))
+        );
+        assert_eq!(
+            parse_block("25mm+-0.002mm=b=c.npy").unwrap(),
+            (25.0, 0.002, PathBuf::from("b=c.npy"))
+        );
+        assert_eq!(parse_block("25 mm \u{b1} 0 mm=b.npy").unwrap().1, 0.0);
+        for (text, word) in [
+            ("5mm", "names no file"),
+            ("5mm=", "names no file"),
+            ("5=a", "has no mm"),
+            ("xmm=a", "is no length"),
+            ("nanmm=a", "is no length"),
+            ("-5mm=a", "is no block"),
+            ("0mm=a", "is no block"),
+            ("1e9mm=a", "is no block"),
+            ("5mm+-9mm=a", "is no uncertainty"),
+            ("5mm+--1mm=a", "is no uncertainty"),
+        ] {
+            let error = parse_block(text).unwrap_err().to_string();
+            assert!(error.contains(word) && error.contains("; "), "{text}: {error}");
+        }
+    }
+
+    /// Days from `date -d 2000-02-29 +%s` and the like, over 86400.
+    #[test]
+    fn val_dates() {
+        for (day, date) in [
+            (0, "1970-01-01"),
+            (11_016, "2000-02-29"),
+            (11_017, "2000-03-01"),
+            (20_453, "2025-12-31"),
+            (20_454, "2026-01-01"),
+            (47_541, "2100-03-01"),
+        ] {
+            assert_eq!(date_of_day(day), date);
+        }
+        assert!(checked_date(&today()).is_ok());
+        assert!(checked_date("31.1.2026").is_err());
+    }
+}
