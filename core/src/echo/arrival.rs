@@ -126,8 +126,14 @@ fn by_correlation(
 /// The maximum through the highest lag and its neighbours as if they were samples of a cosine:
 /// w = acos((left + right) / 2 middle), offset = atan2(right - left, 2 middle sin w) / w.
 fn cosine(lags: &[f32], coarse: f32) -> (f32, f32) {
-    let middle_index = usize::try_from(math::round_to_i32(coarse)).unwrap_or(0);
     let get = |i: usize| lags.get(i).copied().unwrap_or(0.0);
+    // The place may lie between two lags: the higher of them, which need not be the nearer.
+    let below = usize::try_from(math::saturating_i32(math::floor(coarse))).unwrap_or(0);
+    let middle_index = if get(below + 1).abs() > get(below).abs() {
+        below + 1
+    } else {
+        below
+    };
     let (left, middle, right) = (
         get(middle_index.wrapping_sub(1)),
         get(middle_index),

@@ -84,26 +84,36 @@ impl Sign {
 
 /// The best lag between `from` and `to` (indices into `lags`), to half a sample.
 ///
-/// Below eight samples a cycle the neighbours of the true maximum can both lie lower than another
-/// cycle's top sample, so the correlation is then looked at between the lags too.
+/// Tops are compared, not samples: a parabola through three lags, a quarter of a sample apart below eight
+/// samples a cycle. Between two samples a correlation can fall by more than what distinguishes it from
+/// the neighbouring half cycle (at 20 % bandwidth 1.8 %), and the wrong one would win without any noise.
 #[must_use]
 pub fn coarse_maximum(lags: &[f32], from: usize, to: usize, sign: Sign, samples_per_cycle: f32) -> Option<f32> {
-    let between = samples_per_cycle < 8.0;
-    let (mut place, mut best) = (None, 0.0);
-    for (i, &value) in lags.iter().enumerate().take(to.saturating_add(1)).skip(from) {
-        let merit = sign.merit(value);
-        if merit > best {
-            (place, best) = (Some(i as f32), merit);
+    let steps = if samples_per_cycle < 8.0 { 4 } else { 1 };
+    let grid = |k: usize| {
+        if k % steps == 0 {
+            lags.get(k / steps).copied().unwrap_or(0.0)
+        } else {
+            interpolate::at(lags, k as f32 / steps as f32)
         }
-        if between {
-            for quarter in [0.25, 0.5, 0.75] {
-                let at = i as f32 + quarter;
-                let merit = sign.merit(interpolate::at(lags, at));
-                if merit > best {
-                    (place, best) = (Some(at), merit);
-                }
+    };
+    let first = from.saturating_mul(steps);
+    let (mut earlier, mut value) = (grid(first.saturating_sub(1)), grid(first));
+    let (mut place, mut best) = (None, 0.0);
+    for k in first..=to.min(lags.len()).saturating_mul(steps) {
+        let later = grid(k + 1);
+        let mut merit = sign.merit(value);
+        if merit > 0.0 {
+            let flip = if value < 0.0 { -1.0 } else { 1.0 };
+            let (left, right) = (flip * earlier, flip * later);
+            if merit >= left && merit >= right && left + right < 2.0 * merit {
+                merit += (left - right) * (left - right) / (8.0 * (2.0 * merit - left - right));
             }
         }
+        if merit > best {
+            (place, best) = (Some(k as f32 / steps as f32), merit);
+        }
+        (earlier, value) = (value, later);
     }
     place
 }

@@ -69,6 +69,19 @@ mod tests {
     }
 
     #[test]
+    fn a_hair_beside_a_sample_is_the_sample() {
+        let mut samples = [0.0; 64];
+        for (i, s) in samples.iter_mut().enumerate() {
+            *s = math::cos(0.3 * i as f32);
+        }
+        for hair in [2e-6, 1e-5, 3e-5, 1e-4] {
+            for place in [30.0 - hair, 30.0 + hair] {
+                assert!((at(&samples, place) - math::cos(0.3 * place)).abs() < 3e-5, "{place}");
+            }
+        }
+    }
+
+    #[test]
     fn samples_themselves_are_exact_and_ends_are_zero() {
         let samples = [1.0, 2.0, -3.0];
         assert_eq!(at(&samples, 2.0), -3.0);
