@@ -5,27 +5,33 @@
 //! the same codes on every machine.
 #![forbid(unsafe_code)]
 #![deny(missing_docs)]
-// Tests compare with tolerances; only what makes signals must be the same to the last bit.
-#![cfg_attr(test, allow(clippy::disallowed_methods))]
+// The system's sine and logarithm are refused only where signals are made (and not in tests, which
+// compare with tolerances).
+#![allow(clippy::disallowed_methods)]
 
-// These look at signals and print; they make none.
-#[allow(clippy::disallowed_methods)]
 pub mod band;
 pub mod calibrating;
-#[allow(clippy::disallowed_methods)]
 pub mod cli;
+#[cfg_attr(not(test), deny(clippy::disallowed_methods))]
 pub mod fourier;
+#[cfg_attr(not(test), deny(clippy::disallowed_methods))]
 pub mod front_end;
 pub mod input_error;
+#[cfg_attr(not(test), deny(clippy::disallowed_methods))]
 pub mod layered;
+#[cfg_attr(not(test), deny(clippy::disallowed_methods))]
 pub mod material;
 pub mod measuring;
+#[cfg_attr(not(test), deny(clippy::disallowed_methods))]
 pub mod propagation;
 pub mod record_file;
+#[cfg_attr(not(test), deny(clippy::disallowed_methods))]
 pub mod scene;
 pub mod setup_file;
 pub mod spelling;
+#[cfg_attr(not(test), deny(clippy::disallowed_methods))]
 pub mod synthesise;
+#[cfg_attr(not(test), deny(clippy::disallowed_methods))]
 pub mod transducer;
 
 pub use scene::Scene;

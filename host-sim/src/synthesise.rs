@@ -16,6 +16,9 @@ use std::f64::consts::TAU;
 /// Echoes weaker than this share of the strongest are left out.
 const SMALLEST: f64 = 1e-6;
 
+/// Echoes below this many steps of the converter are in the record but not listed in its truth.
+const LEAST_STEPS: f64 = 0.05;
+
 /// Most bins of echo spectra that are kept for walls that change from shot to shot (16 bytes each).
 const MOST_KEPT_BINS: usize = 1 << 22;
 
@@ -204,6 +207,7 @@ impl Synthesiser {
             pulse: PulseFigures::of(&data_sheet, rate),
             echoes: echoes
                 .into_iter()
+                .filter(|(_, peak)| peak * gain * full_scale > LEAST_STEPS)
                 .map(|(path, peak)| echo_truth(&path, peak * gain))
                 .collect(),
         };
