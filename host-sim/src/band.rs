@@ -5,6 +5,9 @@
 
 use std::f64::consts::{PI, TAU};
 
+/// -6 dB as a ratio of amplitudes: 10^(-6/20).
+const MINUS_6DB: f64 = 0.501_187_233_627_272_3;
+
 /// What one record tells about the probe's band.
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub struct Band {
@@ -105,19 +108,19 @@ fn limits(burst: &[f64]) -> Option<(f64, f64)> {
         for (i, x) in burst.iter().enumerate() {
             let edge = i.min(burst.len() - 1 - i);
             let weight = if edge < taper {
-                0.5 - 0.5 * (PI * (edge as f64 + 0.5) / taper as f64).cos()
+                0.5 - 0.5 * libm::cos(PI * (edge as f64 + 0.5) / taper as f64)
             } else {
                 1.0
             };
             let phase = TAU * (line * i % (2 * LINES)) as f64 / (2 * LINES) as f64;
-            re += weight * x * phase.cos();
-            im += weight * x * phase.sin();
+            re += weight * x * libm::cos(phase);
+            im += weight * x * libm::sin(phase);
         }
-        re.hypot(im)
+        libm::hypot(re, im)
     };
     let spectrum: Vec<f64> = (0..=LINES).map(level).collect();
     let (top, peak) = spectrum.iter().enumerate().max_by(|a, b| a.1.total_cmp(b.1))?;
-    let half = peak * 10f64.powf(-6.0 / 20.0);
+    let half = peak * MINUS_6DB;
     let crossing = |inner: usize, outer: usize| {
         let (a, b) = (spectrum[inner], spectrum[outer]);
         let part = (a - half) / (a - b);
@@ -142,11 +145,12 @@ mod tests {
     /// sqrt(2 ln(10^(6/20))) / (pi sigma) by the Fourier transform of a Gaussian.
     fn burst(centre: f64, relative: f64, at: f64, samples: usize) -> Vec<i16> {
         let width = centre * relative;
-        let sigma = (2.0 * 10f64.powf(0.3).ln()).sqrt() / (PI * width);
+        let sigma = (-2.0 * libm::log(MINUS_6DB)).sqrt() / (PI * width);
         (0..samples)
             .map(|i| {
                 let t = i as f64 - at;
-                (10_000.0 * (-0.5 * (t / sigma).powi(2)).exp() * (TAU * centre * t).cos()).round() as i16
+                let envelope = libm::exp(-0.5 * (t / sigma) * (t / sigma));
+                (10_000.0 * envelope * libm::cos(TAU * centre * t)).round() as i16
             })
             .collect()
     }

@@ -19,11 +19,12 @@ pub struct HeapScratch {
 }
 
 impl HeapScratch {
-    /// Memory for records of up to `samples`.
+    /// Memory for records of up to `samples`; at least what the longest pulse asks for, so that a record
+    /// that is too short is refused and not the set-up.
     #[must_use]
     pub fn new(samples: usize) -> Self {
         Self {
-            envelope: vec![0; samples],
+            envelope: vec![0; samples.max(8 * PULSE_CAPACITY)],
             pulse: Box::new([0.0; PULSE_CAPACITY]),
             skirt: Box::new([0; PULSE_CAPACITY]),
             correlation: Box::new([0.0; CORRELATION_CAPACITY]),

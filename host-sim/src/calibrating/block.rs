@@ -93,20 +93,18 @@ pub fn measure(gauge: &mut Gauge<'_>, block: &BlockRecord, learn: Learn) -> Resu
             "lower the gain and record the block again",
         ));
     }
-    let period = if setup.span == Span::BackWallToBackWall {
-        match &outcome {
-            Ok(period) => Some(*period),
-            Err(why) if needs_period => {
-                return Err(InputError::in_file(
-                    &block.path,
-                    format!("no period of back walls: {why}"),
-                    "record for longer, or raise the gain",
-                ));
-            }
-            Err(_) => None,
+    // Where more than one back wall is seen, their period says whether the block is the one that was named;
+    // a zero learned on the wrong block would look like any other.
+    let period = match period_of(gauge, block, &setup, outcome) {
+        Ok(period) => Some(period),
+        Err(why) if needs_period => {
+            return Err(InputError::in_file(
+                &block.path,
+                format!("no period of back walls: {why}"),
+                "record for longer, or raise the gain",
+            ));
         }
-    } else {
-        None
+        Err(_) => None,
     };
     let expected = expected_trip(block, &setup);
     if let Some(period) = period
@@ -174,6 +172,26 @@ fn look(gauge: &mut Gauge<'_>, block: &BlockRecord, shot: &Shot) -> (Vec<Echo>, 
     (gauge.findings().echoes.iter().copied().collect(), period)
 }
 
+/// The period of the back walls, whatever the span.
+fn period_of(
+    gauge: &mut Gauge<'_>,
+    block: &BlockRecord,
+    setup: &GaugeSetup,
+    outcome: Result<Timed, String>,
+) -> Result<Timed, String> {
+    if setup.span == Span::BackWallToBackWall {
+        return outcome;
+    }
+    let between = GaugeSetup {
+        span: Span::BackWallToBackWall,
+        ..*setup
+    };
+    gauge.change_setup(between).map_err(|error| error.to_string())?;
+    let (_, period) = look(gauge, block, &block.average);
+    gauge.change_setup(*setup).map_err(|error| error.to_string())?;
+    period
+}
+
 /// The first back wall, and the interface echo where the span needs one.
 ///
 /// The zero is not known yet, so the first back wall is the echo that the gauge calls so if its place
@@ -239,7 +257,7 @@ fn scatter(
         let (echoes, outcome) = look(gauge, block, shot);
         walls.extend(near(&echoes, back_wall));
         interfaces.extend(interface.and_then(|of| near(&echoes, of)));
-        if let (Some(of), Ok(this)) = (period, outcome) {
+        if let (Some(of), Ok(this), Span::BackWallToBackWall) = (period, outcome, setup.span) {
             periods.extend(Some(this.time - of.time).filter(|d| d.abs() < half_cycle));
         }
     }
@@ -257,7 +275,11 @@ fn of_the_mean(differences: &[Seconds]) -> Seconds {
         return Seconds::ZERO;
     }
     let mean = differences.iter().map(|d| f64::from(d.get())).sum::<f64>() / count;
-    let squares: f64 = differences.iter().map(|d| (f64::from(d.get()) - mean).powi(2)).sum();
+    let squares: f64 = differences
+        .iter()
+        .map(|d| f64::from(d.get()) - mean)
+        .map(|off| off * off)
+        .sum();
     Seconds::new((squares / (count - 1.0) / count).sqrt() as f32)
 }
 

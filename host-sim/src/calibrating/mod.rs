@@ -145,9 +145,10 @@ fn check_number(span: Span, blocks: usize, learn: Learn) -> Result<(), InputErro
 
 /// The block with one of its times, the uncertainty widened by further half-widths.
 fn as_block(record: &BlockRecord, time: Timed, half_widths: &[Seconds]) -> Block {
-    let mut variance = f64::from(time.standard_uncertainty.get()).powi(2);
+    let squared = |time: Seconds| f64::from(time.get()) * f64::from(time.get());
+    let mut variance = squared(time.standard_uncertainty);
     for half_width in half_widths {
-        variance += f64::from(half_width.get() * RECTANGULAR).powi(2);
+        variance += squared(*half_width * RECTANGULAR);
     }
     Block {
         thickness: record.thickness,
@@ -252,8 +253,8 @@ fn weighted(materials: &[Material]) -> Result<Material, InputError> {
     for material in materials {
         // A centimetre per second keeps an uncertainty of zero from deciding alone.
         let u = f64::from(material.velocity_standard_uncertainty.get()).max(0.01);
-        weights += u.powi(-2);
-        sum += f64::from(material.velocity.get()) * u.powi(-2);
+        weights += 1.0 / (u * u);
+        sum += f64::from(material.velocity.get()) / (u * u);
     }
     let mean = sum / weights;
     for material in materials {
@@ -272,7 +273,7 @@ fn weighted(materials: &[Material]) -> Result<Material, InputError> {
     }
     Ok(Material::new(
         halfpulse::MetresPerSecond::new(mean as f32),
-        halfpulse::MetresPerSecond::new(weights.powf(-0.5) as f32),
+        halfpulse::MetresPerSecond::new((1.0 / weights.sqrt()) as f32),
     ))
 }
 

@@ -25,7 +25,12 @@ pub struct Arguments {
     #[arg(long, value_name = "IN.toml")]
     setup: PathBuf,
     /// A block and its record; +- is its standard uncertainty (k = 1), 0.005 mm if not stated
-    #[arg(long = "block", value_name = "5.000mm+-0.002mm=FILE", required = true)]
+    #[arg(
+        long = "block",
+        value_name = "5.000mm+-0.002mm=FILE",
+        required = true,
+        allow_hyphen_values = true
+    )]
     blocks: Vec<String>,
     /// What to learn besides the pulse; one block: zero, two: zero-and-velocity
     #[arg(long, value_enum)]

@@ -78,7 +78,7 @@ pub fn run(arguments: &Arguments, out: &mut dyn Write) -> Result<Outcome, InputE
         Some(path) => {
             let setup = SetupFile::read(path)?;
             // A pulse that does not fit is the set-up's fault, not that of every file.
-            setup.gauge(HeapScratch::new(1 << 16).workspace())?;
+            setup.gauge(HeapScratch::new(0).workspace())?;
             Source::Known(Box::new(setup))
         }
         None => Source::Unknown(unknown_record(arguments)?),

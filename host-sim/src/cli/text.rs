@@ -7,7 +7,7 @@ use std::fmt::Write as _;
 
 /// As many decimals of a millimetre as show two digits of an uncertainty: 2 to 5.
 fn decimals(uncertainty_mm: f32) -> usize {
-    let wanted = 1.0 - f64::from(uncertainty_mm).max(1e-9).log10().floor();
+    let wanted = 1.0 - libm::log10(f64::from(uncertainty_mm).max(1e-9)).floor();
     wanted.clamp(2.0, 5.0) as usize
 }
 
@@ -32,11 +32,9 @@ fn reading_block(text: &mut String, reading: &Reading) {
     for doubt in reading.doubts.iter() {
         let _ = writeln!(text, "  doubt {}: {}", doubt.word(), doubt.advice());
     }
-    let _ = writeln!(
-        text,
-        "  another cycle was read: at most {:.0e}",
-        reading.wrong_cycle_probability
-    );
+    // Far below this bound the assumptions behind it no longer carry.
+    let bound = reading.wrong_cycle_probability.max(1e-9);
+    let _ = writeln!(text, "  probability that another cycle was read: at most {bound:.0e}");
 }
 
 fn budget_block(text: &mut String, reading: &Reading) {

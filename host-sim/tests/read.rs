@@ -1,0 +1,321 @@
+//! `halfpulse read` as it is typed: readings, JSON, exit status.
+
+mod support;
+
+use serde_json::Value;
+use support::{Bench, Train, setup};
+
+const KEYS: [&str; 17] = [
+    "file",
+    "shot",
+    "span",
+    "thickness_mm",
+    "standard_uncertainty_mm",
+    "expanded_uncertainty_mm",
+    "coverage_factor",
+    "coating_mm",
+    "coating_standard_uncertainty_mm",
+    "wrong_cycle_probability",
+    "doubts",
+    "no_reading",
+    "echoes",
+    "pulse",
+    "separation",
+    "budget",
+    "dominating_term",
+];
+
+fn keys(value: &Value) -> Vec<&str> {
+    value
+        .as_object()
+        .expect("an object")
+        .keys()
+        .map(String::as_str)
+        .collect()
+}
+
+#[test]
+fn a_clean_train_reads_right_and_json_has_every_key() {
+    let bench = Bench::new();
+    bench.write_shots("a.npy", &Train::CLEAN.shots(3, 1));
+    let run = bench.run(&["read", "a.npy", "--setup", "setup.toml", "--format", "json"]);
+    assert_eq!(run.status, 0, "{}{}", run.out, run.errors);
+    assert_eq!(run.errors, "");
+    let records = run.json();
+    assert_eq!(records.len(), 3);
+    for (number, record) in records.iter().enumerate() {
+        for key in KEYS {
+            assert!(record.get(key).is_some(), "{key} is missing: {record}");
+        }
+        assert_eq!(record["file"], "a.npy");
+        assert_eq!(record["shot"], number);
+        assert_eq!(record["span"], "back-wall-to-back-wall");
+        let (thickness, expanded) = (
+            record["thickness_mm"].as_f64().unwrap(),
+            record["expanded_uncertainty_mm"].as_f64().unwrap(),
+        );
+        // Five sigma of a right uncertainty.
+        assert!((thickness - 10.0).abs() < 2.5 * expanded, "{record}");
+        assert!(expanded < 0.01 && record["no_reading"].is_null());
+        // The set-up names no element, and a tenth of a micrometre is less than any beam's spreading.
+        assert_eq!(record["doubts"], serde_json::json!(["beam-unknown"]), "{record}");
+        let echo = &record["echoes"][0];
+        assert_eq!(
+            keys(echo),
+            [
+                "amplitude_percent",
+                "arrival_ns",
+                "multiple",
+                "polarity",
+                "role",
+                "snr_db",
+                "standard_uncertainty_ns"
+            ]
+        );
+        assert_eq!(
+            (&echo["role"], &echo["multiple"], &echo["polarity"]),
+            (&"back-wall".into(), &1.into(), &"positive".into())
+        );
+        assert!(
+            (echo["arrival_ns"].as_f64().unwrap() - 20e3 / 5.92).abs() < 5.0,
+            "{echo}"
+        );
+        // 1500 of 2048 codes, and 1500 over 5 codes of noise.
+        assert!(
+            (echo["amplitude_percent"].as_f64().unwrap() - 73.2).abs() < 2.0,
+            "{echo}"
+        );
+        assert!((echo["snr_db"].as_f64().unwrap() - 49.5).abs() < 1.5, "{echo}");
+        assert_eq!(keys(&record["pulse"]).len(), 9);
+        assert!((record["pulse"]["centre_frequency_mhz"].as_f64().unwrap() - 5.0).abs() < 0.1);
+        assert_eq!(record["separation"]["verdict"], "resolved-classically");
+        assert_eq!(
+            keys(&record["separation"]),
+            ["log_odds", "spacing_ns", "standard_uncertainty_ns", "verdict"]
+        );
+        assert_eq!(record["budget"][0]["term"], "timing");
+        assert_eq!(record["dominating_term"], "timing");
+    }
+}
+
+#[test]
+fn averaging_narrows_the_reading() {
+    let bench = Bench::new();
+    bench.write_shots("a.npy", &Train::CLEAN.shots(16, 2));
+    let single = bench.run(&["read", "a.npy", "--setup", "setup.toml", "--format", "json"]);
+    let run = bench.run(&[
+        "read",
+        "a.npy",
+        "--setup",
+        "setup.toml",
+        "--format",
+        "json",
+        "--average",
+    ]);
+    assert_eq!(run.status, 0, "{}", run.errors);
+    let records = run.json();
+    assert_eq!(records.len(), 1);
+    assert!(records[0]["shot"].is_null());
+    let u = |record: &Value| record["standard_uncertainty_mm"].as_f64().unwrap();
+    let gain = u(&single.json()[0]) / u(&records[0]);
+    // The square root of 16, within what a noise estimate from one record scatters.
+    assert!((3.2..4.8).contains(&gain), "{gain}");
+    assert!((records[0]["thickness_mm"].as_f64().unwrap() - 10.0).abs() < 5.0 * u(&records[0]));
+}
+
+#[test]
+fn all_kinds_of_file_give_the_same_reading() {
+    let bench = Bench::new();
+    let shot = Train::CLEAN.shot(3);
+    for name in ["a.npy", "a.csv", "a.wav"] {
+        bench.write_shots(name, std::slice::from_ref(&shot));
+    }
+    let codes: Vec<String> = shot.iter().map(|code| (i32::from(*code) + 2048).to_string()).collect();
+    bench.write("offset.csv", codes.join("\n"));
+    bench.write(
+        "offset.toml",
+        setup("back-wall-to-back-wall", 0.0, 1.0).replace("\"signed\"", "\"offset-binary\""),
+    );
+    let mut records = bench
+        .run(&[
+            "read",
+            "a.npy",
+            "a.csv",
+            "a.wav",
+            "--setup",
+            "setup.toml",
+            "--format",
+            "json",
+        ])
+        .json();
+    records.extend(
+        bench
+            .run(&["read", "offset.csv", "--setup", "offset.toml", "--format", "json"])
+            .json(),
+    );
+    assert_eq!(records.len(), 4);
+    for record in &mut records {
+        record["file"] = Value::Null;
+    }
+    assert!(records[0]["thickness_mm"].is_number());
+    for record in &records[1..] {
+        assert_eq!(record, &records[0]);
+    }
+}
+
+#[test]
+fn floats_read_as_codes_do() {
+    let bench = Bench::new();
+    let shot = Train::CLEAN.shot(4);
+    bench.write_shots("codes.npy", std::slice::from_ref(&shot));
+    let floats: Vec<f32> = shot.iter().map(|code| f32::from(*code) / 2048.0).collect();
+    bench.write("floats.npy", support::npy_of_floats(&floats));
+    let volts: Vec<f32> = floats.iter().map(|value| value * 5.0).collect();
+    bench.write("volts.npy", support::npy_of_floats(&volts));
+    bench.write(
+        "volts.toml",
+        setup("back-wall-to-back-wall", 0.0, 1.0).replace("bits = 12", "full_scale = 5.0"),
+    );
+    let codes = bench
+        .run(&["read", "codes.npy", "--setup", "setup.toml", "--format", "json"])
+        .json();
+    let floats = bench
+        .run(&["read", "floats.npy", "--setup", "setup.toml", "--format", "json"])
+        .json();
+    let volts = bench
+        .run(&["read", "volts.npy", "--setup", "volts.toml", "--format", "json"])
+        .json();
+    let read = |records: &[Value]| records[0]["thickness_mm"].as_f64().unwrap();
+    assert!((read(&codes) - read(&floats)).abs() < 1e-5);
+    assert!((read(&codes) - read(&volts)).abs() < 1e-5);
+    let percent = |records: &[Value]| records[0]["echoes"][0]["amplitude_percent"].as_f64().unwrap();
+    assert!((percent(&codes) - percent(&volts)).abs() < 0.01);
+}
+
+#[test]
+fn without_a_setup_there_are_echoes_and_pulse_but_no_thickness() {
+    let bench = Bench::new();
+    bench.write_shots("a.npy", &[Train::CLEAN.shot(5)]);
+    bench.write_shots("a.csv", &[Train::CLEAN.shot(5)]);
+    let run = bench.run(&["read", "a.csv", "--format", "json"]);
+    assert_eq!((run.status, run.errors.as_str()), (2, ""));
+    let record = &run.json()[0];
+    for key in KEYS {
+        assert!(record.get(key).is_some(), "{key}");
+    }
+    assert!(record["thickness_mm"].is_null() && record["span"].is_null());
+    assert_eq!(record["no_reading"]["reason"], "no-set-up");
+    assert!(record["echoes"].as_array().unwrap().len() >= 4, "{record}");
+    assert!((record["echoes"][0]["arrival_ns"].as_f64().unwrap() - 20e3 / 5.92).abs() < 20.0);
+    assert_eq!(record["echoes"][0]["role"], "other");
+    assert!((record["pulse"]["centre_frequency_mhz"].as_f64().unwrap() - 5.0).abs() < 0.2);
+    assert!(record["pulse"]["spatial_pulse_length_mm"].is_null());
+
+    let assumed = bench.run(&["read", "a.npy", "--format", "json"]);
+    assert_eq!(assumed.status, 2);
+    assert!(
+        assumed
+            .errors
+            .starts_with("note: a.npy: states no sample rate, 50 MHz assumed"),
+        "{}",
+        assumed.errors
+    );
+    let doubled = bench.run(&["read", "a.npy", "--format", "json", "--sample-rate", "100"]);
+    assert_eq!(doubled.errors, "");
+    let frequency = |run: &support::Run| run.json()[0]["pulse"]["centre_frequency_mhz"].as_f64().unwrap();
+    assert!((frequency(&doubled) / frequency(&assumed) - 2.0).abs() < 0.01);
+    let text = bench.run(&["read", "a.csv"]);
+    assert!(
+        text.out.contains("no reading: no-set-up") && text.out.contains("pulse: 5.0"),
+        "{}",
+        text.out
+    );
+}
+
+#[test]
+fn the_exit_status_tells_the_worst() {
+    let bench = Bench::new();
+    bench.write_shots("good.npy", &[Train::CLEAN.shot(6)]);
+    bench.write_shots("dead.npy", &[vec![3; 1500]]);
+    let run = bench.run(&[
+        "read",
+        "good.npy",
+        "dead.npy",
+        "--setup",
+        "setup.toml",
+        "--format",
+        "json",
+    ]);
+    assert_eq!(run.status, 2);
+    assert_eq!(run.json()[1]["no_reading"]["reason"], "dead-receiver");
+    assert!(run.json()[0]["no_reading"].is_null());
+    let run = bench.run(&[
+        "read",
+        "dead.npy",
+        "no.npy",
+        "good.npy",
+        "--setup",
+        "setup.toml",
+        "--format",
+        "json",
+    ]);
+    assert!(
+        run.error().starts_with("no.npy: there is no such file"),
+        "{}",
+        run.errors
+    );
+    assert_eq!(run.json().len(), 2, "the other files are still measured");
+    let text = bench.run(&["read", "good.npy", "--setup", "setup.toml"]);
+    assert_eq!(text.status, 0);
+    assert!(text.out.starts_with("good.npy, shot 0: "), "{}", text.out);
+    assert!(
+        text.out.contains("back-wall 1") && text.out.contains("timing"),
+        "{}",
+        text.out
+    );
+}
+
+#[test]
+fn help_teaches() {
+    let bench = Bench::new();
+    for (arguments, words) in [
+        (&["--help"][..], &["simulate", "read", "calibrate", "Exit status"][..]),
+        (
+            &["read", "--help"],
+            &[
+                "halfpulse read",
+                "offset-binary",
+                "sample_rate_mhz",
+                "wrong_cycle_probability",
+                "few-echoes",
+                "no-set-up",
+                "coupling",
+            ],
+        ),
+        (
+            &["calibrate", "--help"],
+            &["5.000mm=thin.npy", "zero-and-velocity", "checksum"],
+        ),
+    ] {
+        let run = bench.run(arguments);
+        assert_eq!(run.status, 0);
+        for word in words {
+            assert!(run.out.contains(word), "{word}: {}", run.out);
+        }
+    }
+    assert!(bench.run(&["--version"]).out.starts_with("halfpulse 0."));
+    for (arguments, word) in [
+        (&["measure"][..], "measure"),
+        (&["read"], "FILE"),
+        (&["read", "a.npy", "--format", "xml"], "xml"),
+        (&["read", "a.npy", "--bits", "99"], "99"),
+        (
+            &["read", "a.npy", "--setup", "setup.toml", "--sample-rate", "50"],
+            "cannot be used with",
+        ),
+        (&["calibrate", "--setup", "setup.toml", "-o", "x.toml"], "--block"),
+    ] {
+        let run = bench.run(arguments);
+        assert!(run.error().contains(word), "{}", run.errors);
+    }
+}
