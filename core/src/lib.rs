@@ -68,6 +68,7 @@ mod test_support;
 
 pub mod units;
 pub mod math;
+pub mod order;
 pub mod setup;
 pub mod outcome;
 pub mod workspace;

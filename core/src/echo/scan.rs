@@ -16,6 +16,7 @@
 
 use crate::echo::pulse::ReferencePulse;
 use crate::math;
+use crate::order;
 use crate::record::{AdcFormat, SampleRange};
 use crate::setup::PULSE_CAPACITY;
 use heapless::Vec;
@@ -249,16 +250,19 @@ fn fill(codes: &[i16], range: SampleRange, detector: &Detector, shift: u32, enve
 fn quiet_level(envelope: &[u16], lobe: usize) -> f32 {
     let block = (16 * lobe).max(envelope.len().div_ceil(BLOCKS)).max(1);
     let mut means: Vec<u32, BLOCKS> = Vec::new();
-    for block in envelope.chunks(block) {
+    let mut rest = envelope;
+    while !rest.is_empty() {
+        let (heights, later) = rest.split_at_checked(block).unwrap_or((rest, &[]));
         let mut sum = 0u32;
-        for &height in block {
+        for &height in heights {
             sum += u32::from(height);
         }
         // In 1/16 counts, since quiet records have few.
-        let length = (block.len() as u32).max(1);
+        let length = (heights.len() as u32).max(1);
         let _ = means.push((sum << 4) / length);
+        rest = later;
     }
-    means.sort_unstable();
+    order::sort(&mut means, |a, b| a < b);
     let quartile = means.get(means.len() / 4).copied().unwrap_or(0) as f32 / 16.0;
     // A Rayleigh variable's mean is 1.2533 standard deviations; the quartile of block means lies
     // about a tenth below the mean (`quiet_level_is_unbiased_on_noise`).
@@ -316,7 +320,7 @@ fn peaks(scanned: &[u16], first: u32, lobe: u32, threshold: f32) -> Vec<Candidat
             return;
         }
         if found.is_full() {
-            let weakest = found.iter_mut().min_by_key(|c| (c.height, c.index));
+            let weakest = found.iter_mut().min_by_key(|c| c.height);
             if let Some(weakest) = weakest.filter(|w| w.height < peak.height) {
                 *weakest = peak;
             }
@@ -393,7 +397,7 @@ fn unmasked(
     detector: &Detector,
     skirt: &[u16; PULSE_CAPACITY],
 ) -> Vec<Candidate, CANDIDATE_CAPACITY> {
-    raw.sort_unstable_by_key(|c| (u16::MAX - c.height, c.index));
+    order::sort(raw, |a, b| a.height > b.height);
     let mut kept: Vec<Candidate, CANDIDATE_CAPACITY> = Vec::new();
     for candidate in raw.iter() {
         let hidden = kept.iter().any(|stronger| {
@@ -409,7 +413,7 @@ fn unmasked(
             break;
         }
     }
-    kept.sort_unstable_by_key(|c| c.index);
+    order::sort(&mut kept, |a, b| a.index < b.index);
     kept
 }
 

@@ -24,6 +24,7 @@ use crate::echo::correlation::{correlate_into, slope};
 use crate::echo::interpolate::{self, REACH};
 use crate::echo::{Echo, EchoList, EchoRole, Polarity, Surroundings, echo_at};
 use crate::math;
+use crate::order;
 use crate::units::SamplePosition;
 use crate::workspace::{ECHO_CAPACITY, TRAIN_LAGS};
 use heapless::Vec;
@@ -249,14 +250,8 @@ fn rank(ranked: &mut Vec<Hypothesis, 8>, hypothesis: Hypothesis, tolerance: f32)
     } else {
         let _ = ranked.push(hypothesis);
     }
-    // One step of insertion is enough: at most one entry is out of place, and it moves up.
-    for i in (1..ranked.len()).rev() {
-        if let Some([upper, lower]) = ranked.get_mut(i - 1..=i)
-            && lower.score > upper.score
-        {
-            core::mem::swap(upper, lower);
-        }
-    }
+    // An improved entry only moves up.
+    order::sort(ranked, |a, b| a.score > b.score);
 }
 
 /// Number of the multiple nearest to a place, and how far the place lies from it.
@@ -563,14 +558,7 @@ fn give_roles(
         ) {
             echo.role = EchoRole::BackWall(multiple);
             if echoes.push(echo).is_ok() {
-                // Back into the order of arrival.
-                for i in (1..echoes.len()).rev() {
-                    if let Some([earlier, later]) = echoes.get_mut(i - 1..=i)
-                        && later.position.samples_after(earlier.position) < 0.0
-                    {
-                        core::mem::swap(earlier, later);
-                    }
-                }
+                order::sink_last(echoes, |a, b| a.position.samples_after(b.position) < 0.0);
             }
         }
     }
