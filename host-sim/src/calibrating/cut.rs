@@ -8,11 +8,13 @@ use halfpulse::{GaugeSetup, Seconds};
 
 /// Where the pulse may end: -46 dB below its envelope's peak.
 const END_LEVEL: f32 = 0.005;
+/// Or where it may not be told from noise: the envelope of noise exceeds 3.5 sigma once in 460 samples
+/// (Rayleigh's distribution, exp(-3.5²/2)).
+const NOISE_LEVEL: f32 = 3.5;
 
 /// The samples round the first back wall, scaled to an envelope peak of 1, with tapered ends.
 ///
-/// The pulse ends on either side where its envelope stays below -46 dB, or below twice the noise, for a
-/// cycle; at the latest half-way to the neighbouring echo. Half a cycle at each end is tapered to zero.
+/// The pulse ends on either side where its envelope stays below -46 dB, or within the noise, for a cycle; at the latest half-way to the neighbouring echo. Half a cycle at each end is tapered to zero.
 ///
 /// # Errors
 /// An echo too close to the record's ends or to its neighbours; a pulse longer than the core holds.
@@ -44,7 +46,7 @@ pub fn reference_pulse(block: &BlockRecord, times: &BlockTimes, setup: &GaugeSet
         return Err(fault("holds no pulse", "record the block again"));
     }
     let noise = times.back_wall.amplitude / times.back_wall.snr.as_amplitude_ratio();
-    let level = (END_LEVEL * peak).max(2.0 * noise);
+    let level = (END_LEVEL * peak).max(NOISE_LEVEL * noise);
     let reach = |values: &mut dyn Iterator<Item = f32>| {
         let mut last_loud = 0;
         for (distance, value) in values.enumerate() {

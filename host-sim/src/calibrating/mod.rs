@@ -7,6 +7,8 @@
 //!    measures between: the first back wall; the first back wall after the interface; or the period for
 //!    the velocity and the first back wall for the zero.
 //!
+//! If only the velocity is learned, the set-up's zero is carried over to the new pulse: see `translated`.
+//!
 //! Uncertainties contain the thickness of the block, the noise of the averaged record or the scatter of
 //! its shots (the larger), and for a velocity also what nobody corrects: couplant films that differ
 //! between blocks, and the beam's spreading from one block to the other.
@@ -75,23 +77,19 @@ pub fn calibrate(
     let mut scratch = HeapScratch::new(longest);
     let mut gauge = setup.gauge(scratch.workspace())?;
     gauge.change_setup(core_setup).map_err(|error| setup.locate(error))?;
-    let mut best: Option<(usize, BlockTimes)> = None;
-    for (number, block) in blocks.iter().enumerate() {
-        let times = block::measure(&mut gauge, block, learn)?;
-        if best
-            .as_ref()
-            .is_none_or(|(_, so_far)| times.back_wall.snr > so_far.back_wall.snr)
-        {
-            best = Some((number, times));
-        }
-    }
-    let Some((pulse_from, times)) = best else {
+    let before: Vec<BlockTimes> = blocks
+        .iter()
+        .map(|block| block::measure(&mut gauge, block, learn))
+        .collect::<Result<_, _>>()?;
+    let snr = |times: &BlockTimes| times.back_wall.snr.get();
+    let clearest = before.iter().enumerate().max_by(|a, b| snr(a.1).total_cmp(&snr(b.1)));
+    let Some((pulse_from, clearest)) = clearest else {
         return Err(InputError::in_argument(
             "there is no block",
             "give --block 5.000mm=FILE",
         ));
     };
-    let pulse = cut::reference_pulse(&blocks[pulse_from], &times, &core_setup)?;
+    let pulse = cut::reference_pulse(&blocks[pulse_from], clearest, &core_setup)?;
     gauge.learn_pulse(&pulse).map_err(|error| {
         InputError::in_file(
             &blocks[pulse_from].path,
@@ -104,6 +102,9 @@ pub fn calibrate(
         .iter()
         .map(|block| block::measure(&mut gauge, block, learn))
         .collect::<Result<_, _>>()?;
+    if let (Learn::Velocity, [before], [after]) = (learn, &before[..], &times[..]) {
+        core_setup.zero = translated(&core_setup, before, after);
+    }
     let (zero, material) = solve(&core_setup, blocks, &times, learn)?;
     let keys = new_keys(setup, blocks, learn, (&zero, &material), &pulse, pulse_name);
     Ok(Calibrated {
@@ -114,6 +115,24 @@ pub fn calibrate(
         pulse_from,
         times,
     })
+}
+
+/// A zero that was learned with another pulse, as the new pulse sees it.
+///
+/// The two pulses' origins lie differently in the same echo: the zero moves by as much as the block's
+/// arrival did. Between interface and back wall the origin cancels. The uncertainty takes up that of the
+/// arrival, although most of the noise is common to both.
+fn translated(setup: &GaugeSetup, before: &BlockTimes, after: &BlockTimes) -> Zero {
+    if setup.span == Span::InterfaceToBackWall {
+        return setup.zero;
+    }
+    let (old, new) = (before.first_back_wall, after.first_back_wall);
+    let (known, noise) = (setup.zero.standard_uncertainty.get(), new.standard_uncertainty.get());
+    Zero {
+        offset: setup.zero.offset + (new.time - old.time),
+        standard_uncertainty: Seconds::new((known * known + noise * noise).sqrt()),
+        ..setup.zero
+    }
 }
 
 /// How many blocks what shall be learned takes.
@@ -289,7 +308,8 @@ fn new_keys(
     let mut keys = setup.keys.clone();
     keys.probe.reference_pulse = Some(pulse_name.to_string());
     keys.zero.reference_pulse_checksum = Some(checksum(pulse));
-    if learn != Learn::Velocity {
+    // An unknown zero (see the set-up file) stays unknown.
+    if learn != Learn::Velocity || keys.zero.standard_uncertainty_ns.is_some() {
         keys.zero.offset_ns = rounded(zero.offset.as_ns());
         keys.zero.standard_uncertainty_ns = Some(rounded(zero.standard_uncertainty.as_ns()));
     }

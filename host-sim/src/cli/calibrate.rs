@@ -225,7 +225,7 @@ fn report(learned: &Calibrated, blocks: &[BlockRecord], learn: Learn, output: &P
     }
     text.push_str(&format!("span: {}\n", span_word(learned.keys.measure.span)));
     let (zero, material) = (&learned.zero, &learned.material);
-    if learn != Learn::Velocity {
+    if learned.keys.zero.standard_uncertainty_ns.is_some() {
         text.push_str(&format!(
             "zero: {:.3} ns, standard uncertainty {:.3} ns\n",
             zero.offset.as_ns(),
