@@ -97,7 +97,7 @@ fn measure(setup: GaugeSetup, codes: &[i16], first_sample: Seconds) -> Outcome {
 }
 
 /// Both read or both refuse for the same reason; thicknesses agree within `share` of a standard
-/// uncertainty, standard uncertainties within 2 %.
+/// uncertainty, standard uncertainties within 5 % (the noise is estimated from whole codes).
 fn same(a: &Outcome, b: &Outcome, share: f32) -> Result<(), TestCaseError> {
     prop_assert_eq!(a.word(), b.word());
     if let (Ok(a), Ok(b)) = (&a.reading, &b.reading) {
@@ -109,7 +109,7 @@ fn same(a: &Outcome, b: &Outcome, share: f32) -> Result<(), TestCaseError> {
             b.thickness.as_mm()
         );
         let ratio = a.standard_uncertainty / b.standard_uncertainty;
-        prop_assert!((ratio - 1.0).abs() < 0.02, "uncertainties {ratio}");
+        prop_assert!((ratio - 1.0).abs() < 0.05, "uncertainties {ratio}");
     }
     Ok(())
 }
@@ -160,9 +160,10 @@ proptest! {
         let plain = measure(scene.setup(), &codes, Seconds::ZERO);
         let loud = measure(scene.setup(), &louder, Seconds::ZERO);
         same(&plain, &loud, 0.02)?;
-        for (a, b) in plain.echoes.iter().zip(&loud.echoes) {
-            prop_assert!((b.amplitude / a.amplitude - 2.0).abs() < 1e-3);
-            prop_assert_eq!(a.polarity, b.polarity);
+        // Echoes near the noise may be found in one record and missed in the other, whose rounding is finer.
+        for a in plain.echoes.iter().filter(|echo| echo.snr.get() > 16.0) {
+            let b = loud.echoes.iter().find(|b| (b.arrival - a.arrival).abs().as_ns() < 0.05);
+            prop_assert!(b.is_some_and(|b| (b.amplitude / a.amplitude - 2.0).abs() < 1e-3 && b.polarity == a.polarity));
         }
     }
 

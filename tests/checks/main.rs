@@ -2,6 +2,7 @@
 
 mod law_gauge;
 mod val_tables;
+mod val_uncertainty;
 mod val_arrival;
 mod val_envelope;
 mod val_gauge;

@@ -175,3 +175,61 @@ pub fn codes(samples: &[f64], bits: u32) -> Vec<i16> {
     let convert = |x: &f64| x.round().clamp(-full_scale, full_scale - 1.0) as i16;
     samples.iter().map(convert).collect()
 }
+
+/// Cramér-Rao bound (standard deviation, in the unit of the times) of the period of a train of echoes in white noise,
+/// with start and all amplitudes free. The Fisher matrix is built from the samples themselves with
+/// numerical derivatives and inverted by elimination: no formula for trains enters.
+///
+/// `pulse(t)` is the known pulse; echo n (from 1) arrives at `start + n period` with `amplitudes[n - 1]`; samples
+/// at `times`.
+#[must_use]
+pub fn period_bound(
+    pulse: impl Fn(f64) -> f64,
+    times: &[f64],
+    start: f64,
+    period: f64,
+    amplitudes: &[f64],
+    noise: f64,
+) -> f64 {
+    let model = |t: f64, start: f64, period: f64, amplitudes: &[f64]| -> f64 {
+        let echo = |(n, a): (usize, &f64)| a * pulse(t - start - (n + 1) as f64 * period);
+        amplitudes.iter().enumerate().map(echo).sum()
+    };
+    // Period first, then start, then the amplitudes.
+    let count = 2 + amplitudes.len();
+    let step = 1e-4 * (times[1] - times[0]);
+    let mut fisher = vec![vec![0.0; count + 1]; count];
+    for &t in times {
+        let mut slopes = vec![
+            (model(t, start, period + step, amplitudes) - model(t, start, period - step, amplitudes)) / (2.0 * step),
+            (model(t, start + step, period, amplitudes) - model(t, start - step, period, amplitudes)) / (2.0 * step),
+        ];
+        slopes.extend((0..amplitudes.len()).map(|n| pulse(t - start - (n + 1) as f64 * period)));
+        for i in 0..count {
+            for j in 0..count {
+                fisher[i][j] += slopes[i] * slopes[j] / (noise * noise);
+            }
+        }
+    }
+    // The first column of the inverse solves F x = (1, 0, 0 ..): its first entry is the period's variance.
+    // Rows and columns differ by many powers of ten, so both are scaled to a diagonal of 1.
+    let scale: Vec<f64> = (0..count).map(|i| fisher[i][i].sqrt()).collect();
+    for i in 0..count {
+        for j in 0..count {
+            fisher[i][j] /= scale[i] * scale[j];
+        }
+    }
+    fisher[0][count] = 1.0;
+    for pivot in 0..count {
+        let lead = fisher[pivot].clone();
+        for (i, row) in fisher.iter_mut().enumerate() {
+            if i != pivot {
+                let factor = row[pivot] / lead[pivot];
+                for (value, above) in row.iter_mut().zip(&lead) {
+                    *value -= factor * above;
+                }
+            }
+        }
+    }
+    (fisher[0][count] / fisher[0][0]).sqrt() / scale[0]
+}

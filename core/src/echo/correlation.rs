@@ -91,7 +91,7 @@ impl Sign {
 pub fn coarse_maximum(lags: &[f32], from: usize, to: usize, sign: Sign, samples_per_cycle: f32) -> Option<f32> {
     let steps = if samples_per_cycle < 8.0 { 4 } else { 1 };
     let grid = |k: usize| {
-        if k % steps == 0 {
+        if k.is_multiple_of(steps) {
             lags.get(k / steps).copied().unwrap_or(0.0)
         } else {
             interpolate::at(lags, k as f32 / steps as f32)
