@@ -72,7 +72,7 @@ const CONTACT: GaugeSetup = GaugeSetup::new(
     Hertz::from_mhz(50.0),
     Probe::contact(Hertz::from_mhz(5.0), 0.6).with_element_diameter(Metres::from_mm(6.0)),
     STEEL,
-    Zero::new(Seconds::ZERO, Seconds::from_ns(1.0)),
+    Zero::new(Seconds::from_ns(200.0), Seconds::from_ns(1.0)),
     Span::BackWallToBackWall,
     Window {
         from: Seconds::from_us(1.0),
@@ -96,11 +96,24 @@ const DELAY_LINE: GaugeSetup = GaugeSetup::new(
     },
 );
 
+const FROM_TRANSMISSION_PULSE: GaugeSetup = GaugeSetup::new(
+    Hertz::from_mhz(50.0),
+    Probe::contact(Hertz::from_mhz(2.25), 0.7).with_element_diameter(Metres::from_mm(13.0)),
+    Material::new(MetresPerSecond::new(6380.0), MetresPerSecond::new(20.0)),
+    Zero::new(Seconds::from_ns(350.0), Seconds::from_ns(2.0)),
+    Span::TransmissionPulseToBackWall,
+    Window {
+        from: Seconds::from_us(5.0),
+        to: Seconds::from_us(80.0),
+    },
+);
+
 /// The records, in the order in which they are measured.
-pub static RECORDS: [Canned; 4] = [
+pub static RECORDS: [Canned; 5] = [
     record!("steel-10-mm", CONTACT, 12, 0.0),
     record!("painted-steel-6-mm", PAINTED, 12, 0.0),
     record!("delay-line-4-mm", DELAY_LINE, 12, 6.0),
+    record!("aluminium-60-mm", FROM_TRANSMISSION_PULSE, 12, 0.0),
     record!("not-coupled", CONTACT, 12, 0.0),
 ];
 

@@ -1,6 +1,6 @@
 //! The same records through the same core, here and there: every bit must agree.
 
-use crate::toolchain::{CORTEX_M4F, Features, Toolchain};
+use crate::toolchain::{CORTEX_M4F, Toolchain};
 use crate::{Checks, Trouble, emulator};
 use halfpulse::{Gauge, Record, Scratch};
 use halfpulse_mps2::canned::{CAPACITY, RECORDS};
@@ -8,7 +8,7 @@ use halfpulse_mps2::transcript::{self, Sink};
 
 pub fn run(checks: &mut Checks) -> Result<(), Trouble> {
     let toolchain = Toolchain::find(CORTEX_M4F)?;
-    let image = toolchain.build_measure(Features::Normal).map_err(Trouble::Failed)?;
+    let image = toolchain.build_measure_anyhow()?;
     let board = emulator::run(&image)?;
     let host = host_transcript().map_err(Trouble::Failed)?;
     println!("the board's transcript:\n{board}");

@@ -1,6 +1,6 @@
 //! What a reading costs on the microcontroller, beside its budgets.
 
-use crate::toolchain::{CORTEX_M4F, Features, Toolchain, root};
+use crate::toolchain::{CORTEX_M4F, Toolchain, root};
 use crate::{Checks, Trouble, emulator, image};
 use halfpulse_mps2::canned::RECORDS;
 use serde::Deserialize;
@@ -28,7 +28,7 @@ struct Cost {
 pub fn run(checks: &mut Checks) -> Result<(), Trouble> {
     let budget = read_budget().map_err(Trouble::Failed)?;
     let toolchain = Toolchain::find(CORTEX_M4F)?;
-    let file = toolchain.build_measure(Features::Normal).map_err(Trouble::Failed)?;
+    let file = toolchain.build_measure_anyhow()?;
     let costs = parse(&emulator::run(&file)?).map_err(Trouble::Failed)?;
     let sizes = image::sizes(&file).map_err(Trouble::Failed)?;
     let records: u64 = RECORDS.iter().map(|record| record.file.len() as u64).sum();

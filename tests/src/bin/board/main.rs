@@ -9,6 +9,7 @@ mod emulator;
 mod figures;
 mod image;
 mod panics;
+mod records;
 mod toolchain;
 
 use std::process::ExitCode;
@@ -21,6 +22,7 @@ usage: cargo board VERB
                   with TARGET (thumbv7em-none-eabihf, thumbv6m-none-eabi) only for that one
   panics          no panic can be reached in the image, and the check that says so can fail
   figures         instructions, flash, static RAM and stack, beside the budgets of tests/board_budget.toml
+  records         make the canned records again from their scenes (firmware-example/mps2/records)
   tools           what is there and what is missing
 
 Every verb builds what it needs. Exit status 0: all is well; 1: something failed; 3: a tool is missing.
@@ -92,6 +94,7 @@ fn main() -> ExitCode {
         ["run"] => compare::run(&mut checks),
         ["panics"] => panics::run(&mut checks),
         ["figures"] => figures::run(&mut checks),
+        ["records"] => return told(records::write()),
         ["tools"] => return told(tools()),
         ["--help" | "-h" | "help"] => {
             print!("{HELP}");

@@ -3,11 +3,8 @@
 //! The image's panic handler calls a function that does not exist: if the optimiser cannot prove
 //! every panic away, the image does not link.
 
-use crate::toolchain::{CORTEX_M4F, Features, Toolchain};
+use crate::toolchain::{CORTEX_M4F, Features, REACHABLE, Toolchain};
 use crate::{Checks, Trouble, image};
-
-/// The words of the missing function's name, in firmware-example/mps2/src/board.rs.
-const REACHABLE: &str = "a panic is reachable";
 
 pub fn run(checks: &mut Checks) -> Result<(), Trouble> {
     let toolchain = Toolchain::find(CORTEX_M4F)?;

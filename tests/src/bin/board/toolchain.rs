@@ -15,6 +15,10 @@ pub const CORTEX_M0_PLUS: &str = "thumbv6m-none-eabi";
 /// Debian's compiler, which is not the one that rustup puts first into the path.
 const SYSTEM_COMPILER: &str = "/usr/bin/rustc";
 
+/// The words in the name of the function that the image's panic handler misses
+/// (firmware-example/mps2/src/board.rs): the linker prints them.
+pub const REACHABLE: &str = "a panic is reachable";
+
 /// The features of the image.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
 pub enum Features {
@@ -125,6 +129,21 @@ impl Toolchain {
         let kept = built.with_file_name(format!("measure-{}", features.list().replace(',', "-")));
         fs::copy(&built, &kept).map_err(|error| format!("{}: {error}", kept.display()))?;
         Ok(kept)
+    }
+
+    /// The image as it is meant; if a panic keeps it from linking, the one that links all the same, so
+    /// that bits and costs can be looked at while `cargo board panics` fails.
+    pub fn build_measure_anyhow(&self) -> Result<PathBuf, Trouble> {
+        self.build_measure(Features::Normal)
+            .or_else(|text| {
+                if text.contains(REACHABLE) {
+                    println!("note: {REACHABLE} (see `cargo board panics`); this image carries a panic handler");
+                    self.build_measure(Features::PanicReport)
+                } else {
+                    Err(text)
+                }
+            })
+            .map_err(Trouble::Failed)
     }
 
     fn cargo(&self) -> Command {
