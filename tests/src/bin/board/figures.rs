@@ -47,6 +47,13 @@ pub fn run(checks: &mut Checks) -> Result<(), Trouble> {
     let instructions = measuring.map(|cost| cost.instructions).max().unwrap_or(u64::MAX);
     let stack = costs.iter().map(|cost| cost.stack).max().unwrap_or(u64::MAX);
     println!("\nCortex-M4F, {toolchain}; instructions as executed, not cycles; records of 4096 samples");
+    let code = image::code_by_crate(&file).map_err(Trouble::Failed)?;
+    let largest: Vec<String> = code
+        .iter()
+        .take(6)
+        .map(|(name, size)| format!("{name} {size}"))
+        .collect();
+    println!("bytes of code by crate: {}", largest.join(", "));
     for (name, what, value, limit) in [
         (
             "instructions",

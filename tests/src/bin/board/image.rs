@@ -36,6 +36,26 @@ pub fn sizes(file: &Path) -> Result<Sizes, String> {
     Ok(sizes)
 }
 
+/// Bytes of code by the crate that a function was written in, the largest first. What the optimiser
+/// has merged into its caller counts as the caller's.
+pub fn code_by_crate(file: &Path) -> Result<Vec<(String, u64)>, String> {
+    let bytes = read(file)?;
+    let elf = parse(file, &bytes)?;
+    let mut crates = BTreeMap::<String, u64>::new();
+    for symbol in elf.symbols().filter(|symbol| symbol.kind() == SymbolKind::Text) {
+        let name = rustc_demangle::demangle(symbol.name().unwrap_or("?")).to_string();
+        let first = name
+            .trim_start_matches(['<', '&'])
+            .split([':', ' ', '['])
+            .next()
+            .unwrap_or_default();
+        *crates.entry(first.to_owned()).or_default() += symbol.size();
+    }
+    let mut crates: Vec<(String, u64)> = crates.into_iter().collect();
+    crates.sort_by_key(|(name, size)| (std::cmp::Reverse(*size), name.clone()));
+    Ok(crates)
+}
+
 /// Every call of a panicking function of the core library from one that is not: `caller -> callee`.
 /// Empty for an image in which no panic can be reached.
 pub fn panic_calls(file: &Path) -> Result<BTreeSet<String>, String> {
