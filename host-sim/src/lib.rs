@@ -12,6 +12,7 @@
 pub mod band;
 pub mod calibrating;
 pub mod cli;
+pub mod demo;
 #[cfg_attr(not(test), deny(clippy::disallowed_methods))]
 pub mod fourier;
 #[cfg_attr(not(test), deny(clippy::disallowed_methods))]

@@ -77,7 +77,7 @@ pub fn main() -> ExitCode {
     };
     let mut out = std::io::stdout().lock();
     let result = match arguments.command {
-        None => Err(InputError::in_argument("no command", "see halfpulse --help")),
+        None => crate::demo::run(&mut out).map(|()| Outcome::Done),
         Some(Command::Simulate(arguments)) => simulate::run(&arguments, &mut out),
         Some(Command::Read(arguments)) => read::run(&arguments, &mut out),
         Some(Command::Calibrate(arguments)) => calibrate::run(&arguments, &mut out),
