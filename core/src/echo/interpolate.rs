@@ -26,7 +26,7 @@ pub fn at(samples: &[f32], place: f32) -> f32 {
     // sin(π(x - k)) alternates in sign from tap to tap: one sine serves all.
     let mut sine = math::sin_pi_unit(fraction) * core::f32::consts::FRAC_1_PI;
     let reach = REACH as i32;
-    if REACH.is_multiple_of(2) {
+    if REACH & 1 == 0 {
         sine = -sine;
     }
     let mut sum = 0.0;
