@@ -94,6 +94,7 @@ impl<'w> Gauge<'w> {
     ///
     /// # Errors
     /// A wrong set-up, a pulse that does not fit, or scratch memory that is too small.
+    #[inline(never)]
     pub fn new(setup: GaugeSetup, workspace: Workspace<'w>) -> Result<Self, SetupError> {
         if let Some(error) = setup.check() {
             return Err(error);
@@ -197,6 +198,7 @@ impl<'w> Gauge<'w> {
     ///
     /// # Errors
     /// A refusal with its evidence: a normal outcome. [`Gauge::findings`] tells what was seen.
+    #[inline(never)]
     pub fn measure(&mut self, record: &Record<'_>) -> Result<Reading, NoReading> {
         self.findings = Findings::default();
         let range = self.usable_range(record)?;
@@ -435,6 +437,7 @@ impl<'w> Gauge<'w> {
     }
 
     /// Pulse metrics of the best echo, and the verdict on the nearest pair.
+    #[inline(never)]
     fn describe(&mut self, record: &Record<'_>) {
         let Workspace { pulse, correlation, .. } = &mut self.workspace;
         let surroundings = Surroundings {

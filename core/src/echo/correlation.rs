@@ -88,6 +88,7 @@ impl Sign {
 /// samples a cycle. Between two samples a correlation can fall by more than what distinguishes it from
 /// the neighbouring half cycle (at 20 % bandwidth 1.8 %), and the wrong one would win without any noise.
 #[must_use]
+#[inline(never)]
 pub fn coarse_maximum(lags: &[f32], from: usize, to: usize, sign: Sign, samples_per_cycle: f32) -> Option<f32> {
     // A power of two, so that nothing has to be divided.
     let shift = if samples_per_cycle < 8.0 { 2 } else { 0 };
@@ -123,6 +124,7 @@ pub fn coarse_maximum(lags: &[f32], from: usize, to: usize, sign: Sign, samples_
 /// Climbs from `place` to the local maximum (or, where the correlation is negative, minimum) of the
 /// interpolated correlation. Gives the place and the correlation there.
 #[must_use]
+#[inline(never)]
 pub fn refine(lags: &[f32], place: f32) -> (f32, f32) {
     let mut place = place;
     let mut value = interpolate::at(lags, place);
@@ -146,6 +148,7 @@ pub fn refine(lags: &[f32], place: f32) -> (f32, f32) {
 
 /// Slope of the interpolated correlation at `place`, per sample.
 #[must_use]
+#[inline(never)]
 pub fn slope(lags: &[f32], place: f32) -> f32 {
     (interpolate::at(lags, place + STEP) - interpolate::at(lags, place - STEP)) / (2.0 * STEP)
 }

@@ -50,6 +50,7 @@ fn quadrature(samples: &[f32], index: usize, stride: usize) -> f32 {
 
 /// Squared envelope at one sample of a window.
 #[must_use]
+#[inline(never)]
 pub fn squared_at(samples: &[f32], index: usize, stride: usize) -> f32 {
     let direct = samples.get(index).copied().unwrap_or(0.0);
     let quadrature = quadrature(samples, index, stride);

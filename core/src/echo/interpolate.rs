@@ -12,6 +12,7 @@ pub const REACH: usize = 10;
 /// The value of `samples` at `place` (in samples from the first). Samples beyond the ends count as
 /// zero.
 #[must_use]
+#[inline(never)]
 pub fn at(samples: &[f32], place: f32) -> f32 {
     let whole = math::floor(place);
     let fraction = place - whole;

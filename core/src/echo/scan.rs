@@ -141,6 +141,7 @@ impl Detector {
 }
 
 /// Envelope of the filters' answer with their middle at `place` of `samples`.
+#[inline(never)]
 fn response(samples: &[f32], place: i32, lobe: usize) -> f32 {
     let width = lobe as i32;
     let filter = |weights: &[i32], first: i32| {
@@ -313,6 +314,7 @@ fn threshold_factor(independent: f32) -> f32 {
 }
 
 /// Local maxima above `threshold`, the strongest if there are too many.
+#[inline(never)]
 fn peaks(scanned: &[u16], first: u32, lobe: u32, threshold: f32) -> Vec<Candidate, RAW_CAPACITY> {
     let mut found: Vec<Candidate, RAW_CAPACITY> = Vec::new();
     let mut keep = |peak: Candidate| {
@@ -392,6 +394,7 @@ fn quiet_spread(
 }
 
 /// The candidates that stand above the skirts of all stronger ones, in the order of their places.
+#[inline(never)]
 fn unmasked(
     raw: &mut Vec<Candidate, RAW_CAPACITY>,
     detector: &Detector,

@@ -236,6 +236,7 @@ fn choose(teeth: &Teeth, rules: &Rules, tolerance: f32, at_threshold: f32) -> Re
 }
 
 /// Keeps the list sorted by score, one entry a period.
+#[inline(never)]
 fn rank(ranked: &mut Vec<Hypothesis, 8>, hypothesis: Hypothesis, tolerance: f32) {
     let same = |h: &&mut Hypothesis| (h.period - hypothesis.period).abs() < tolerance;
     if let Some(known) = ranked.iter_mut().find(same) {
@@ -255,12 +256,14 @@ fn rank(ranked: &mut Vec<Hypothesis, 8>, hypothesis: Hypothesis, tolerance: f32)
 }
 
 /// Number of the multiple nearest to a place, and how far the place lies from it.
+#[inline(never)]
 fn nearest(hypothesis: &Hypothesis, place: f32) -> (i32, f32) {
     let number = math::round_to_i32((place - hypothesis.zero) / hypothesis.period);
     (number, place - hypothesis.zero - number as f32 * hypothesis.period)
 }
 
 /// Weighted least squares of the echoes near the teeth; a lone one leaves the hypothesis as it is.
+#[inline(never)]
 fn polish(hypothesis: &mut Hypothesis, teeth: &Teeth, tolerance: f32) {
     for _ in 0..2 {
         let (mut s0, mut s1, mut s2, mut t0, mut t1) = (0.0, 0.0, 0.0, 0.0, 0.0);
@@ -285,6 +288,7 @@ fn polish(hypothesis: &mut Hypothesis, teeth: &Teeth, tolerance: f32) {
 }
 
 /// Scores a hypothesis against the echoes, and notes which multiples it found.
+#[inline(never)]
 fn score(hypothesis: &mut Hypothesis, teeth: &Teeth, rules: &Rules, tolerance: f32, at_threshold: f32) {
     hypothesis.score = f32::NEG_INFINITY;
     let largest = teeth.iter().fold(0.0, |m, tooth| math::larger(m, tooth.amplitude));
