@@ -43,6 +43,7 @@ fn record(nominal_mm: f64, uncertainty_mm: f64, real_mm: f64, noise: f64, seed: 
     let file = RecordFile {
         shots: shots.iter().map(|shot| shot.codes.clone()).collect(),
         format: AdcFormat::signed(12),
+        holds_codes: true,
         sample_rate: None,
         first_sample_s: None,
     };

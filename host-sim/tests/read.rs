@@ -197,7 +197,7 @@ fn without_a_setup_there_are_echoes_and_pulse_but_no_thickness() {
     let bench = Bench::new();
     bench.write_shots("a.npy", &[Train::CLEAN.shot(5)]);
     bench.write_shots("a.csv", &[Train::CLEAN.shot(5)]);
-    let run = bench.run(&["read", "a.csv", "--format", "json"]);
+    let run = bench.run(&["read", "a.csv", "--format", "json", "--bits", "12"]);
     assert_eq!((run.status, run.errors.as_str()), (2, ""));
     let record = &run.json()[0];
     for key in KEYS {
@@ -220,7 +220,16 @@ fn without_a_setup_there_are_echoes_and_pulse_but_no_thickness() {
         "{}",
         assumed.errors
     );
-    let doubled = bench.run(&["read", "a.npy", "--format", "json", "--sample-rate", "100"]);
+    let doubled = bench.run(&[
+        "read",
+        "a.npy",
+        "--format",
+        "json",
+        "--sample-rate",
+        "100",
+        "--bits",
+        "12",
+    ]);
     assert_eq!(doubled.errors, "");
     let frequency = |run: &support::Run| run.json()[0]["pulse"]["centre_frequency_mhz"].as_f64().unwrap();
     assert!((frequency(&doubled) / frequency(&assumed) - 2.0).abs() < 0.01);

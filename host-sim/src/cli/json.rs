@@ -145,7 +145,7 @@ fn separation(separation: &Separation) -> JsonSeparation {
     JsonSeparation {
         spacing_ns: finite(separation.spacing.as_ns()),
         standard_uncertainty_ns: finite(separation.standard_uncertainty.as_ns()),
-        verdict: words::verdict(separation.verdict),
+        verdict: separation.verdict.word(),
         log_odds: separation.log_odds.and_then(finite),
     }
 }

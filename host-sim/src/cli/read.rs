@@ -15,6 +15,8 @@ use std::path::{Path, PathBuf};
 
 /// The sample rate of records that nobody states one for.
 const ASSUMED_RATE_MHZ: f64 = 50.0;
+/// The bits of codes that nobody states them for: whatever the file can hold.
+const ASSUMED_BITS: u8 = 16;
 
 /// Arguments of `read`.
 #[derive(Debug, clap::Args)]
@@ -115,7 +117,7 @@ enum Source {
 /// What is assumed about records without a set-up.
 struct UnknownRecord {
     rate_mhz: Option<f64>,
-    coding: Coding,
+    bits: Option<u8>,
 }
 
 /// Why a file's records do not come to an end.
@@ -141,11 +143,7 @@ fn unknown_record(arguments: &Arguments) -> Result<UnknownRecord, InputError> {
     }
     Ok(UnknownRecord {
         rate_mhz: arguments.sample_rate,
-        coding: Coding {
-            bits: arguments.bits.or(Some(16)),
-            codes: CodeKind::Signed,
-            full_scale: None,
-        },
+        bits: arguments.bits,
     })
 }
 
@@ -175,8 +173,14 @@ fn read_file(
             }
         }
         Source::Unknown(unknown) => {
-            let file = record_file::read(path, &unknown.coding)?;
+            let coding = Coding {
+                bits: unknown.bits.or(Some(ASSUMED_BITS)),
+                codes: CodeKind::Signed,
+                full_scale: None,
+            };
+            let file = record_file::read(path, &coding)?;
             let clock = unknown_clock(path, &file, unknown.rate_mhz)?;
+            tell_assumptions(path, &file, unknown);
             for shot in measuring::shots(path, file, average)? {
                 let measured = look_at(&name, &shot, clock);
                 sink(&measured).map_err(|_| Stop::Output)?;
@@ -198,19 +202,28 @@ fn unknown_clock(path: &Path, file: &RecordFile, typed_mhz: Option<f64>) -> Resu
         }
         (Some(stated), _) => stated.hertz,
         (None, Some(typed)) => typed * 1e6,
-        (None, None) => {
-            let _ = writeln!(
-                std::io::stderr(),
-                "note: {}: states no sample rate, {ASSUMED_RATE_MHZ} MHz assumed; give --sample-rate",
-                path.display()
-            );
-            ASSUMED_RATE_MHZ * 1e6
-        }
+        (None, None) => ASSUMED_RATE_MHZ * 1e6,
     };
     Ok(SampleClock {
         rate: Hertz::new(hertz as f32),
         first_sample: Seconds::new(file.first_sample_s.unwrap_or(0.0) as f32),
     })
+}
+
+/// What was assumed because nobody said it, on stderr: it is no error, but every time, or every amplitude,
+/// rests on it.
+fn tell_assumptions(path: &Path, file: &RecordFile, unknown: &UnknownRecord) {
+    let note = |what: String| {
+        let _ = writeln!(std::io::stderr(), "note: {}: {what}", path.display());
+    };
+    if file.sample_rate.is_none() && unknown.rate_mhz.is_none() {
+        note(format!(
+            "states no sample rate, {ASSUMED_RATE_MHZ} MHz assumed; give --sample-rate"
+        ));
+    }
+    if file.holds_codes && unknown.bits.is_none() {
+        note(format!("{ASSUMED_BITS} bits assumed for full scale; give --bits"));
+    }
 }
 
 /// Echoes and pulse of a record that nobody has told anything about.

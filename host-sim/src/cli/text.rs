@@ -126,7 +126,7 @@ pub fn block(measured: &Measured) -> String {
             "  nearest pair: {:.2} ns apart (u {:.3} ns), {}",
             pair.spacing.as_ns(),
             pair.standard_uncertainty.as_ns(),
-            words::verdict(pair.verdict)
+            pair.verdict.word()
         );
     }
     if let Ok(reading) = &measured.outcome {

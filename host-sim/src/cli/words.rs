@@ -1,7 +1,6 @@
 //! The words that programs meet: roles, verdicts, doubts, refusals, terms of the budget.
 
 use crate::measuring::NO_SETUP;
-use halfpulse::echo::separation::Verdict;
 use halfpulse::wall::uncertainty::Source;
 use halfpulse::{Doubt, EchoRole, Hertz, Metres, NoReading, Seconds};
 
@@ -15,16 +14,6 @@ pub const fn role(role: EchoRole) -> &'static str {
         EchoRole::BackWall(_) => "back-wall",
         EchoRole::ModeConverted => "mode-converted",
         EchoRole::Other => "other",
-    }
-}
-
-/// The word for a verdict.
-#[must_use]
-pub const fn verdict(verdict: Verdict) -> &'static str {
-    match verdict {
-        Verdict::ResolvedClassically => "resolved-classically",
-        Verdict::ResolvedByModel => "resolved-by-model",
-        Verdict::NotResolved => "not-resolved",
     }
 }
 
@@ -87,7 +76,10 @@ pub fn help() -> String {
     }
     text.push_str(
         "\nRoles of echoes: transmission-pulse, interface, coating, back-wall, mode-converted, other\n\
-         Verdicts on the nearest pair: resolved-classically, resolved-by-model, not-resolved\n",
+         Verdicts on the nearest pair of echoes:\n  \
+         resolved-classically: spacing at least half the spatial pulse length, and a valley of 6 dB\n  \
+         resolved-by-model: closer, but only two pulses explain the record\n  \
+         not-resolved\n",
     );
     text
 }
@@ -95,6 +87,44 @@ pub fn help() -> String {
 #[cfg(test)]
 mod tests {
     use super::*;
+
+    /// The words in the core's source between two marks: the core cannot list its own refusals.
+    fn words_in<'s>(source: &'s str, from: &str, to: &str) -> Vec<&'s str> {
+        let part = source
+            .split_once(from)
+            .and_then(|(_, rest)| rest.split_once(to))
+            .expect("the marks")
+            .0;
+        part.split("=> \"")
+            .skip(1)
+            .filter_map(|rest| rest.split('"').next())
+            .collect()
+    }
+
+    #[test]
+    fn no_word_of_the_core_is_missing() {
+        let help = help();
+        let mut words = words_in(
+            include_str!("../../../core/src/outcome.rs"),
+            "impl NoReading",
+            "pub const fn advice",
+        );
+        assert_eq!(words.len(), REFUSALS.len());
+        words.extend(words_in(
+            include_str!("../../../core/src/wall/uncertainty.rs"),
+            "impl Source",
+            "}\n}",
+        ));
+        assert_eq!(words.len(), REFUSALS.len() + TERMS.len());
+        words.extend(words_in(
+            include_str!("../../../core/src/echo/separation.rs"),
+            "impl Verdict",
+            "}\n}",
+        ));
+        for word in words {
+            assert!(help.contains(&format!("  {word}")), "{word}");
+        }
+    }
 
     #[test]
     fn words_are_kebab_case_and_all_different() {

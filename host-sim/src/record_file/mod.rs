@@ -72,6 +72,8 @@ pub struct RecordFile {
     pub shots: Vec<Vec<i16>>,
     /// What a code stands for.
     pub format: AdcFormat,
+    /// The file holds codes, and not floats that were quantised here.
+    pub holds_codes: bool,
     /// The sample rate, if the file states it.
     pub sample_rate: Option<StatedRate>,
     /// Time of the first sample after the transmission trigger in seconds, if the file states it.
@@ -208,6 +210,7 @@ fn to_codes(path: &Path, raw: &Raw, coding: &Coding) -> Result<RecordFile, Input
     Ok(RecordFile {
         shots: codes.chunks_exact(raw.samples).map(<[i16]>::to_vec).collect(),
         format: AdcFormat::signed(bits),
+        holds_codes: matches!(raw.numbers, Numbers::Integers(_)),
         sample_rate: raw.sample_rate,
         first_sample_s: raw.first_sample_s,
     })
