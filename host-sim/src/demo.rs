@@ -9,7 +9,7 @@ use crate::calibrating::Learn;
 use crate::calibrating::block::{self, BlockRecord};
 use crate::calibrating::cut;
 use crate::input_error::InputError;
-use crate::measuring::{self, HeapScratch};
+use crate::measuring::HeapScratch;
 use crate::record_file::RecordFile;
 use crate::scene::{Back, DelayLine, Layer, Noise, Probe, ProbeKind, Recording, Scene, SceneError};
 use crate::synthesise::{Synthesiser, synthesise};
@@ -19,7 +19,7 @@ use halfpulse::{
     Zero,
 };
 use std::io::Write;
-use std::path::{Path, PathBuf};
+use std::path::Path;
 
 const SEED: u64 = 14;
 const SAMPLES: usize = 2048;
@@ -196,22 +196,8 @@ fn learn(gauge: &mut Gauge<'_>) -> Result<(), InputError> {
     let mut maker = Synthesiser::new(&bare(12.5)).map_err(|error| impossible(&error))?;
     let shots: Vec<_> = (0..64).map(|number| maker.shot(SEED, 1000 + number)).collect();
     let (format, clock) = (shots[0].format, shots[0].clock);
-    let file = RecordFile {
-        shots: shots.into_iter().map(|shot| shot.codes).collect(),
-        format,
-        sample_rate: None,
-        first_sample_s: None,
-    };
-    let name = Path::new("block of the demonstration");
-    let block = BlockRecord {
-        thickness_mm: 12.5,
-        thickness: Metres::from_mm(12.5),
-        thickness_uncertainty: Metres::from_mm(0.002),
-        path: PathBuf::from(name),
-        average: measuring::averaged(name, &file)?,
-        shots: Vec::new(),
-        clock,
-    };
+    let file = RecordFile::from_codes(shots.into_iter().map(|shot| shot.codes).collect(), format);
+    let block = BlockRecord::new(Path::new("block of the demonstration"), (12.5, 0.002), file, clock)?;
     let times = block::measure(gauge, &block, Learn::Zero)?;
     let pulse = cut::reference_pulse(&block, &times, gauge.setup())?;
     gauge

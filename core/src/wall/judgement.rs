@@ -154,7 +154,11 @@ pub fn doubts(evidence: &Evidence<'_>) -> Doubts {
         doubts.raise_if(evidence.shift_by(first.mismatch) > expanded, Doubt::PulseMismatch);
     }
     doubts.raise_if(wrong_cycle_probability(evidence) > WRONG_CYCLE_LIMIT, Doubt::LowSignal);
-    if let Some(range) = setup.calibrated {
+    // A single block covers a point. How far the part lies from it stands in the budget already (velocity,
+    // beam); what only a second block shows, a velocity that changes, its stated uncertainty must cover.
+    if let Some(range) = setup.calibrated
+        && range.from < range.to
+    {
         doubts.raise_if(
             wall + expanded < range.from || wall - expanded > range.to,
             Doubt::OutsideCalibratedRange,

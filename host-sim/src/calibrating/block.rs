@@ -2,10 +2,11 @@
 
 use super::Learn;
 use crate::input_error::InputError;
-use crate::measuring::Shot;
+use crate::measuring::{self, Shot};
+use crate::record_file::RecordFile;
 use halfpulse::wall::thickness::Timed;
 use halfpulse::{Echo, EchoRole, Gauge, GaugeSetup, Metres, Record, SampleClock, Seconds, Span};
-use std::path::PathBuf;
+use std::path::{Path, PathBuf};
 
 /// A block of known thickness with its record.
 pub struct BlockRecord {
@@ -23,6 +24,29 @@ pub struct BlockRecord {
     pub shots: Vec<Shot>,
     /// When the samples were taken.
     pub clock: SampleClock,
+}
+
+impl BlockRecord {
+    /// A block of a thickness and its standard uncertainty (k = 1), with the shots that were taken on it.
+    ///
+    /// # Errors
+    /// More shots than one average takes.
+    pub fn new(
+        path: &Path,
+        (thickness_mm, uncertainty_mm): (f64, f64),
+        file: RecordFile,
+        clock: SampleClock,
+    ) -> Result<Self, InputError> {
+        Ok(Self {
+            thickness_mm,
+            thickness: Metres::new((thickness_mm * 1e-3) as f32),
+            thickness_uncertainty: Metres::new((uncertainty_mm * 1e-3) as f32),
+            path: path.to_path_buf(),
+            average: measuring::averaged(path, &file)?,
+            shots: measuring::shots(path, file, false)?,
+            clock,
+        })
+    }
 }
 
 /// What a block's echoes say.

@@ -7,7 +7,6 @@ use crate::input_error::InputError;
 use crate::measuring;
 use crate::record_file::{self, npy};
 use crate::setup_file::{SetupFile, span_word};
-use halfpulse::Metres;
 use std::io::Write;
 use std::path::{Path, PathBuf};
 use std::time::{SystemTime, UNIX_EPOCH};
@@ -107,17 +106,7 @@ fn read_block(text: &str, setup: &SetupFile) -> Result<BlockRecord, InputError> 
     let (thickness_mm, uncertainty_mm, path) = parse_block(text)?;
     let file = record_file::read(&path, &setup.coding())?;
     let clock = measuring::clock(&path, &file, setup)?;
-    let average = measuring::averaged(&path, &file)?;
-    let shots = measuring::shots(&path, file, false)?;
-    Ok(BlockRecord {
-        thickness_mm,
-        thickness: Metres::new((thickness_mm * 1e-3) as f32),
-        thickness_uncertainty: Metres::new((uncertainty_mm * 1e-3) as f32),
-        path,
-        average,
-        shots,
-        clock,
-    })
+    BlockRecord::new(&path, (thickness_mm, uncertainty_mm), file, clock)
 }
 
 fn parse_block(text: &str) -> Result<(f64, f64, PathBuf), InputError> {

@@ -80,6 +80,20 @@ pub struct RecordFile {
     pub first_sample_s: Option<f64>,
 }
 
+impl RecordFile {
+    /// Shots that come from no file.
+    #[must_use]
+    pub const fn from_codes(shots: Vec<Vec<i16>>, format: AdcFormat) -> Self {
+        Self {
+            shots,
+            format,
+            holds_codes: true,
+            sample_rate: None,
+            first_sample_s: None,
+        }
+    }
+}
+
 /// Numbers as they stand in a file, shot after shot.
 enum Numbers {
     Integers(Vec<i32>),
