@@ -30,15 +30,39 @@ pub fn at(samples: &[f32], place: f32) -> f32 {
     if REACH & 1 == 0 {
         sine = -sine;
     }
-    let mut sum = 0.0;
-    for k in (1 - reach)..=reach {
-        let distance = fraction - k as f32;
-        let u = distance / REACH as f32;
+    let start = base + 1 - reach;
+    let inside = usize::try_from(start)
+        .ok()
+        .and_then(|i| samples.get(i..)?.first_chunk::<{ 2 * REACH }>());
+    if let Some(taps) = inside {
+        return weighted(taps.iter().copied(), fraction, sine);
+    }
+    let tap = |k: i32| {
+        usize::try_from(start + k)
+            .ok()
+            .and_then(|i| samples.get(i))
+            .copied()
+            .unwrap_or(0.0)
+    };
+    weighted((0..2 * reach).map(tap), fraction, sine)
+}
+
+/// One over the window's half length.
+const STEP: f32 = 1.0 / REACH as f32;
+
+/// Sum of the taps, each with its weight; `sine` is sin(π x) / π with the first tap's sign.
+#[inline(always)]
+fn weighted(taps: impl Iterator<Item = f32>, fraction: f32, sine: f32) -> f32 {
+    let (mut sum, mut number, mut sign) = (0.0, 1.0 - REACH as f32, sine);
+    for tap in taps {
+        // From whole numbers each time: summed up, the distance would lose the digits that matter
+        // beside a sample.
+        let distance = fraction - number;
+        let u = distance * STEP;
         let v = 1.0 - u * u;
-        if let Some(sample) = usize::try_from(base + k).ok().and_then(|i| samples.get(i)) {
-            sum += sample * (sine / distance) * (v * v * v);
-        }
-        sine = -sine;
+        sum += tap * (sign / distance) * (v * v * v);
+        sign = -sign;
+        number += 1.0;
     }
     sum
 }

@@ -79,6 +79,10 @@ impl Detector {
         let mut length = 0u16;
         for (distance, entry) in skirt.iter_mut().enumerate() {
             let distance = distance as i32;
+            if distance > reach {
+                *entry = 0;
+                continue;
+            }
             let side = math::larger(
                 response(pulse.samples, top + distance, lobe),
                 response(pulse.samples, top - distance, lobe),

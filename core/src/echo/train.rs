@@ -3,7 +3,7 @@
 //! **In**: the echoes of a record and what is known of the start (zero or interface). **Out**: a
 //! [`Train`], or the refusal to choose between two walls.
 //!
-//! *Choosing.* Every distance between two echoes, and every echo's distance from the start divided by 1
+//! *Choosing.* Every distance between two near echoes, and every echo's distance from the start divided by 1
 //! to 4, is a hypothesis for the period. Its teeth are scored against the echoes: a tooth gains what its
 //! echo's height says against noise, ln(1 + A²/3σ²) less the same at the detection threshold, at most
 //! 4.5; a tooth without echo loses; a tooth hidden in the dead zone loses a little; an unexplained echo
@@ -42,6 +42,8 @@ const HIDDEN: f32 = 1.1;
 const WEAK_FIRST: f32 = 6.0;
 /// Loss for a train whose start contradicts the zero or the interface.
 const START_CONTRADICTED: f32 = 1.0;
+/// Echoes of other origin that may stand between two multiples.
+const STRANGERS: usize = 3;
 /// Multiples above this many standard deviations of their amplitude take part in the fit.
 const FIT_MINIMUM: f32 = 3.0;
 
@@ -178,6 +180,11 @@ fn choose(teeth: &Teeth, rules: &Rules, tolerance: f32, at_threshold: f32) -> Re
             return;
         }
         let zero = anchor - number as f32 * period;
+        // The pairs of one train all propose the same: once is enough.
+        let known = |h: &Hypothesis| (h.period - period).abs() < 0.5 * tolerance && (h.zero - zero).abs() < tolerance;
+        if ranked.iter().any(known) {
+            return;
+        }
         let mut hypothesis = Hypothesis {
             zero,
             period,
@@ -201,7 +208,8 @@ fn choose(teeth: &Teeth, rules: &Rules, tolerance: f32, at_threshold: f32) -> Re
                 (tooth.place - rules.start) / f32::from(divisor),
             );
         }
-        for later in teeth.iter().skip(i + 1) {
+        // Neighbouring multiples have at most a few strangers between them.
+        for later in teeth.iter().skip(i + 1).take(STRANGERS + 1) {
             let period = later.place - tooth.place;
             let number = math::round_to_i32((tooth.place - rules.start) / math::larger(period, 1.0)).max(1);
             consider(tooth.place, number.unsigned_abs(), period);
@@ -401,7 +409,7 @@ fn fit(
     let origin = surroundings.pulse.facts.origin;
     let mut members = collect(surroundings, rules, best, &line, sign, lags);
     let (mut s0, mut s1, mut s2) = (0.0, 0.0, 0.0);
-    for _ in 0..5 {
+    for _ in 0..3 {
         (s0, s1, s2) = (0.0, 0.0, 0.0);
         let (mut t0, mut t1) = (0.0, 0.0);
         for (member, window) in members.iter_mut().zip(lags.chunks_exact(TRAIN_LAGS)) {

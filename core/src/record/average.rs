@@ -360,7 +360,9 @@ pub fn next_gain(health: &RecordHealth, format: AdcFormat, now: Decibels, steps:
     } else {
         let peak = i32::from(health.highest).abs().max(i32::from(health.lowest).abs());
         let share = peak as f32 / format.full_scale();
-        if GOOD_PEAK.contains(&share) {
+        // A step that was chosen to end at the limit may pass it by the rounding of a code: without some
+        // slack the gain would swing between two steps for ever.
+        if share >= *GOOD_PEAK.start() && share <= GOOD_PEAK.end() + 0.005 {
             return now;
         }
         let change = Decibels::from_amplitude_ratio(GOOD_PEAK.end() / math::larger(share, 1e-6)).get();
