@@ -303,3 +303,70 @@ fn velocity_and_back_wall_spans() {
     let (thickness, expanded, _) = read(&bench, "k.toml", Train { wall_mm: 15.0, ..slow });
     assert!((thickness - 15.0).abs() < expanded, "{thickness} +- {expanded}");
 }
+
+#[test]
+fn interface_span_and_clipped_blocks() {
+    let bench = Bench::new();
+    let text = setup("interface-to-back-wall", 60.0, 1.0)
+        .replace("\"contact\"", "\"delay-line\"")
+        .replace("= 5920", "= 5980");
+    bench.write("in.toml", text);
+    let behind_delay_line = |wall_mm| Train {
+        zero_us: 7.0,
+        interface: 1900.0,
+        first: 1000.0,
+        ..block(wall_mm)
+    };
+    bench.write_shots("thin.npy", &behind_delay_line(5.0).shots(16, 5));
+    bench.write_shots("thick.npy", &behind_delay_line(20.0).shots(16, 6));
+    let run = bench.run(&[
+        "calibrate",
+        "--setup",
+        "in.toml",
+        "--block",
+        "5.000mm+-0.001mm=thin.npy",
+        "--block",
+        "20.000mm+-0.001mm=thick.npy",
+        "-o",
+        "ready.toml",
+    ]);
+    assert_eq!(run.status, 0, "{}", run.errors);
+    let keys = SetupFile::read(&bench.path("ready.toml")).unwrap().keys;
+    let u = keys.material.velocity_standard_uncertainty_m_s;
+    assert!(
+        (keys.material.velocity_m_s - 5920.0).abs() < 2.0 * u && u < 1.0,
+        "{:?}",
+        keys.material
+    );
+    let u = keys.zero.standard_uncertainty_ns.unwrap();
+    assert!(keys.zero.offset_ns.abs() < 3.0 * u && u < 1.0, "{:?}", keys.zero);
+    let (thickness, expanded, doubts) = read(&bench, "ready.toml", behind_delay_line(12.0));
+    assert!(
+        (thickness - 12.0).abs() < expanded && expanded < 0.01,
+        "{thickness} +- {expanded} {doubts}"
+    );
+
+    let clipped = Train {
+        interface: 3000.0,
+        ..behind_delay_line(5.0)
+    };
+    bench.write_shots("interface.npy", &clipped.shots(4, 7));
+    let loud = Train {
+        first: 3000.0,
+        ..behind_delay_line(5.0)
+    };
+    bench.write_shots("loud.npy", &loud.shots(4, 8));
+    for (file, expected) in [
+        ("interface.npy", "the interface echo is clipped"),
+        ("loud.npy", "the back wall is clipped"),
+    ] {
+        let block = format!("5mm={file}");
+        let run = bench.run(&["calibrate", "--setup", "in.toml", "--block", &block, "-o", "no.toml"]);
+        assert!(
+            run.error().starts_with(&format!("{file}: {expected}")),
+            "{}",
+            run.errors
+        );
+        assert!(!bench.path("no.toml").exists());
+    }
+}

@@ -110,12 +110,14 @@ pub fn measure(gauge: &mut Gauge<'_>, block: &BlockRecord, learn: Learn) -> Resu
             "check the block's thickness, the velocity and the window",
         ));
     };
-    if back_wall.clipped {
-        return Err(InputError::in_file(
-            &block.path,
-            "the back wall is clipped",
-            "lower the gain and record the block again",
-        ));
+    for (echo, name) in [(Some(back_wall), "back wall"), (interface, "interface echo")] {
+        if echo.is_some_and(|echo| echo.clipped) {
+            return Err(InputError::in_file(
+                &block.path,
+                format!("the {name} is clipped"),
+                "lower the gain and record the block again",
+            ));
+        }
     }
     // Where more than one back wall is seen, their period says whether the block is the one that was named;
     // a zero learned on the wrong block would look like any other.

@@ -132,6 +132,8 @@ pub struct Train {
     pub skew: f64,
     /// Phase of the carrier at the envelope's maximum.
     pub phase: f64,
+    /// Amplitude of an upside-down echo at the zero: the end of a delay line; 0 for none.
+    pub interface: f64,
 }
 
 impl Train {
@@ -146,6 +148,7 @@ impl Train {
         samples: 1500,
         skew: 1.0,
         phase: 0.0,
+        interface: 0.0,
     };
 
     /// One shot as 12-bit codes.
@@ -160,7 +163,8 @@ impl Train {
                     let amplitude = self.first * self.decay.powi(n as i32 - 1);
                     amplitude * self.pulse(t - self.zero_us - n as f64 * trip)
                 });
-                let value = echoes.sum::<f64>() + self.noise * random.normal();
+                let interface = -self.interface * self.pulse(t - self.zero_us);
+                let value = interface + echoes.sum::<f64>() + self.noise * random.normal();
                 value.round().clamp(-2048.0, 2047.0) as i16
             })
             .collect()
