@@ -6,6 +6,7 @@ use halfpulse::{
     Seconds, Span, Window, Zero,
 };
 use halfpulse_tests::oracle;
+use halfpulse_tests::published::{Table, code_rows};
 
 const RATE: f64 = 50e6;
 const VELOCITY: f64 = 5920.0;
@@ -91,5 +92,32 @@ fn val_stated_uncertainty_is_the_bound_and_holds() {
         );
         assert!(bias.abs() < 0.15, "bias {bias}");
         assert!((0.93..0.975).contains(&within), "within k = 2: {within}");
+    }
+}
+
+/// The noise estimate on records of noise alone against NumPy's standard deviation of the same codes
+/// (`numpy.std`, which contains the rounding).
+#[test]
+fn val_noise_of_numpy() {
+    let expected = Table::read("vectors/noise.csv");
+    for (row, codes) in expected.rows().zip(code_rows("vectors/noise_codes.csv")) {
+        let setup = setup(1e-6);
+        let mut scratch = Scratch::<4096>::ZERO;
+        let mut gauge = Gauge::new(setup, scratch.workspace()).expect("the gauge is made");
+        let record = Record::new(&codes, AdcFormat::signed(12), SampleClock::new(setup.sample_rate));
+        let outcome = gauge.measure(&record);
+        let ratio = f64::from(gauge.findings().noise) / row.number("standard_deviation");
+        println!(
+            "{} codes: {ratio:.3} of numpy.std, {outcome:?}",
+            row.text("true_sigma_codes")
+        );
+        assert!(outcome.is_err(), "noise was read as a wall");
+        // Below one code the converter's output is hardly noise any more: on the safe side is enough.
+        let allowed = if row.number("true_sigma_codes") < 1.0 {
+            0.25
+        } else {
+            0.1
+        };
+        assert!((ratio - 1.0).abs() < allowed, "noise estimate {ratio}");
     }
 }
