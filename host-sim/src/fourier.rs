@@ -180,6 +180,34 @@ impl RealTransform {
     }
 }
 
+impl RealTransform {
+    /// The spectrum of a real signal of the transform's length (shorter ones are filled with zeros):
+    /// sum of `signal[i] exp(-j 2 pi k i / length)` for k = 0 up to half the length.
+    pub fn to_spectrum(&mut self, signal: &[f64]) -> Vec<Complex> {
+        let half = self.length / 2;
+        let sample = |i: usize| signal.get(i).copied().unwrap_or(0.0);
+        // Conjugated on the way in and out, the transform with +j becomes the one with -j.
+        for (n, slot) in self.scratch.iter_mut().enumerate() {
+            *slot = Complex::new(sample(2 * n), -sample(2 * n + 1));
+        }
+        transform(&mut self.scratch, &self.factors);
+        let packed = |k: usize| {
+            self.scratch
+                .get(k % half)
+                .map_or(Complex::ZERO, |value| value.conjugate())
+        };
+        (0..=half)
+            .map(|k| {
+                let (here, mirrored) = (packed(k), packed(half - k).conjugate());
+                let (even, odd) = ((here + mirrored).scaled(0.5), (here - mirrored).scaled(0.5));
+                // exp(-j 2 pi k / length) times odd / j.
+                let turn = self.factors.get(k).map_or(Complex::new(-1.0, 0.0), |f| f.conjugate());
+                even + turn * Complex::new(odd.im, -odd.re)
+            })
+            .collect()
+    }
+}
+
 /// In place, sign +j, radix 2; `factors` are for twice the length.
 fn transform(values: &mut [Complex], factors: &[Complex]) {
     let length = values.len();
@@ -236,6 +264,27 @@ mod tests {
                     })
                     .sum();
                 assert!((value - expected).abs() < 1e-11, "{length} {i}: {value} {expected}");
+            }
+        }
+    }
+
+    #[test]
+    fn there_and_back() {
+        for length in [4, 32, 512] {
+            let signal: Vec<f64> = (0..length).map(|i| ((i * i * 7 + 3) % 11) as f64 - 4.0).collect();
+            let mut transform = RealTransform::new(length);
+            let spectrum = transform.to_spectrum(&signal);
+            for (k, &bin) in spectrum.iter().enumerate() {
+                let mut expected = Complex::ZERO;
+                for (i, &value) in signal.iter().enumerate() {
+                    expected += Complex::polar(value, -TAU * (k * i) as f64 / length as f64);
+                }
+                assert!((bin - expected).magnitude() < 1e-9, "{length} {k}");
+            }
+            let mut back = vec![0.0; length];
+            transform.to_time(&spectrum, &mut back);
+            for (a, b) in back.iter().zip(&signal) {
+                assert!((a / length as f64 - b).abs() < 1e-12);
             }
         }
     }

@@ -156,38 +156,34 @@ impl Synthesiser {
         let start = scene.record.first_sample_us * 1e-6;
         let margin = (margin as f64 / rate).max(0.5 * length);
         let paths = echo_paths(scene, &stack, start + length + before + 0.5 * margin)?;
-        let first = first_back_wall(&paths);
-        let (mut echoes, mut first_peak) = (Vec::with_capacity(paths.len()), 0.0);
-        let mut kept = Vec::with_capacity(paths.len());
         let beam = beam_area(scene);
         let changed = beam.is_some() || has_losses(&stack);
-        for (index, path) in paths.iter().enumerate() {
-            let audible = path.arrival > start - after - 0.5 * margin;
-            let within = (start..start + length).contains(&path.arrival);
-            if !audible && first != Some(index) {
-                continue;
+        let cycle = 1.0 / data_sheet.centre_frequency();
+        let (mut echoes, mut first_peak) = (Vec::with_capacity(paths.len()), 0.0);
+        for_each_shape(&pulse, &stack, &paths, beam, |path, shape| {
+            let listed = (start..start + length).contains(&path.arrival);
+            if !listed && path.multiple != Some(1) {
+                return;
             }
-            let peak = if changed {
-                let mut echo = vec![Complex::ZERO; pulse.values().len()];
-                add_echoes(&mut [&mut echo], &pulse, &stack, &[*path], beam, path.arrival);
-                let centre = data_sheet.centre_frequency();
+            let height = if changed {
                 pulse
-                    .with_values(echo)
-                    .envelope_maximum(0.0, 1.5 / centre, 1.0 / (16.0 * centre))
+                    .with_values(shape.to_vec())
+                    .envelope_maximum(0.0, 1.5 * cycle, cycle / 6.0)
                     .1
             } else {
-                path.amplitude.abs()
+                1.0
             };
-            if first == Some(index) {
+            let peak = path.amplitude.abs() * height;
+            if path.multiple == Some(1) {
                 first_peak = peak;
             }
-            if audible {
-                kept.push(*path);
-            }
-            if within && audible {
+            if listed {
                 echoes.push((*path, peak));
             }
-        }
+        });
+        echoes.sort_by(|a, b| a.0.arrival.total_cmp(&b.0.arrival));
+        let mut kept = paths;
+        kept.retain(|path| path.arrival > start - after - 0.5 * margin);
         let gain = gain(scene, first_peak)?;
         let converter = Converter::new(scene.record.bits);
         let full_scale = converter.full_scale();
@@ -518,6 +514,26 @@ fn add_echoes(
     beam: Option<f64>,
     start: f64,
 ) {
+    for_each_shape(pulse, stack, paths, beam, |path, shape| {
+        let slot = if slots.len() == 1 { 0 } else { path.wall_trips as usize };
+        let Some(sums) = slots.get_mut(slot) else { return };
+        let step = -TAU * pulse.spacing() * (path.arrival - start);
+        let turns = Rotation::new(step, pulse.first_bin() as u32);
+        for ((sum, &value), turn) in sums.iter_mut().zip(shape).zip(turns) {
+            *sum += (value * turn).scaled(path.amplitude);
+        }
+    });
+}
+
+/// Visits each path with the spectrum that losses and beam make of the pulse on its way, before
+/// reflection factors and delay.
+fn for_each_shape(
+    pulse: &BandPulse,
+    stack: &Stack,
+    paths: &[Path],
+    beam: Option<f64>,
+    mut visit: impl FnMut(&Path, &[Complex]),
+) {
     let over = |layer: Option<propagation::Layer>| -> Vec<Complex> {
         match layer.filter(|layer| !layer.attenuation.is_none()) {
             Some(layer) => pulse
@@ -535,6 +551,7 @@ fn add_echoes(
     // The pulse after the round trips of the path before: the next path needs only the difference.
     let mut travelled = once.clone();
     let mut trips = (0, 0);
+    let mut heard = Vec::new();
     for path in order {
         if path.coating_trips != trips.0 {
             multiply(&mut once, &coating, path.coating_trips - trips.0);
@@ -543,25 +560,22 @@ fn add_echoes(
         }
         multiply(&mut travelled, &wall, path.wall_trips - trips.1);
         trips.1 = path.wall_trips;
-        let slot = if slots.len() == 1 { 0 } else { path.wall_trips as usize };
-        let Some(sums) = slots.get_mut(slot) else { continue };
-        let step = -TAU * pulse.spacing() * (path.arrival - start);
-        let turns = Rotation::new(step, pulse.first_bin() as u32);
-        let echo = sums.iter_mut().zip(&travelled).zip(turns);
-        match beam {
-            None => echo.for_each(|((sum, &value), turn)| *sum += (value * turn).scaled(path.amplitude)),
-            Some(area) => {
-                let spreading = stack.spreading(path) / area;
-                for (((sum, &value), turn), frequency) in echo.zip(pulse.frequencies()) {
-                    let heard = if frequency > 0.0 {
-                        propagation::diffraction(spreading / frequency)
-                    } else {
-                        Complex::ZERO
-                    };
-                    *sum += (value * turn * heard).scaled(path.amplitude);
-                }
-            }
-        }
+        let Some(area) = beam else {
+            visit(path, &travelled);
+            continue;
+        };
+        let spreading = stack.spreading(path) / area;
+        heard.clear();
+        heard.extend(travelled.iter().zip(pulse.frequencies()).map(|(&value, frequency)| {
+            // Frequency 0 spreads out without end.
+            let share = if frequency > 0.0 {
+                propagation::diffraction(spreading / frequency)
+            } else {
+                Complex::ZERO
+            };
+            value * share
+        }));
+        visit(path, &heard);
     }
 }
 

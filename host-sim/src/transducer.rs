@@ -92,34 +92,47 @@ impl Pulse {
     }
 
     /// The continuous spectrum (integral of s(t) exp(-j 2 pi f t) dt, in seconds) at `count`
-    /// frequencies from 0 on, `spacing` hertz apart.
+    /// frequencies from 0 on, `spacing` hertz apart. The pulse must be shorter than 1 / `spacing`.
     fn spectrum(&self, spacing: f64, count: usize) -> Vec<Complex> {
         if self.attack == self.decay {
             return self.gaussian_spectrum(spacing, count);
         }
         // The envelope's bend at its maximum leaves a tail that falls with the cube of frequency:
-        // sample so fast that what is folded back is below 1e-6.
+        // sample 16 times faster than the highest frequency, and what is folded back is below 1e-6.
+        let mut transform = RealTransform::new(16 * count);
+        let length = transform.length();
+        let step = 1.0 / (spacing * length as f64);
+        let mut signal = vec![0.0; length];
         let (before, after) = self.reach();
-        let rate = 16.0 * (spacing * count as f64).max(4.0 * self.centre);
-        let step = 1.0 / rate;
-        let (first, last) = (-(before * rate) as i64, (after * rate) as i64);
-        let mut sums = vec![Complex::ZERO; count];
-        for index in first..=last {
-            let time = index as f64 * step;
-            let value = self.value(time) * step;
-            for (sum, turned) in sums.iter_mut().zip(Rotation::new(-TAU * spacing * time, 0)) {
-                *sum += turned.scaled(value);
-            }
+        let (before, after) = ((before / step) as usize, (after / step) as usize);
+        // Times before the maximum stand at the end: the transform sees a period.
+        for (index, slot) in signal.iter_mut().enumerate().take(after + 1) {
+            *slot = self.value(index as f64 * step) * step;
         }
-        sums
+        for index in 1..=before.min(length - 1) {
+            signal[length - index] += self.value(-(index as f64) * step) * step;
+        }
+        let mut bins = transform.to_spectrum(&signal);
+        bins.truncate(count);
+        bins
     }
 
     /// Magnitude of the continuous spectrum at one frequency.
     fn magnitude(&self, frequency: f64) -> f64 {
-        // One bin beyond frequency 0 of a grid with that spacing.
-        self.spectrum(frequency.max(0.0), 2)
-            .last()
-            .map_or(0.0, |value| value.magnitude())
+        if self.attack == self.decay {
+            // The second of two bins.
+            let bins = self.gaussian_spectrum(frequency, 2);
+            return bins.last().map_or(0.0, |value| value.magnitude());
+        }
+        let step = 1.0 / (32.0 * self.centre.max(frequency));
+        let (before, after) = self.reach();
+        let (first, last) = (-(before / step) as i64, (after / step) as i64);
+        let mut sum = Complex::ZERO;
+        for index in first..=last {
+            let time = index as f64 * step;
+            sum += Complex::polar(self.value(time) * step, -TAU * frequency * time);
+        }
+        sum.magnitude()
     }
 
     fn gaussian_spectrum(&self, spacing: f64, count: usize) -> Vec<Complex> {

@@ -6,6 +6,9 @@ use crate::material::{self, Material};
 /// Longest record that is made: 2^20 samples.
 const MOST_SAMPLES: usize = 1 << 20;
 
+/// Longest pulse, down to one part in a thousand million.
+const MOST_PULSE_SAMPLES: f64 = 16384.0;
+
 fn error(field: impl Into<String>, what: impl Into<String>, remedy: impl Into<String>) -> SceneError {
     SceneError {
         field: field.into(),
@@ -175,10 +178,10 @@ impl Scene {
             ));
         }
         let (before, after) = pulse.reach();
-        if (before + after) * self.record.sample_rate_mhz * 1e6 > MOST_SAMPLES as f64 {
+        if (before + after) * self.record.sample_rate_mhz * 1e6 > MOST_PULSE_SAMPLES {
             return Err(error(
                 "probe",
-                "has a pulse longer than the longest record",
+                format!("has a pulse of more than {MOST_PULSE_SAMPLES} samples"),
                 "widen the band or lower the sample rate",
             ));
         }

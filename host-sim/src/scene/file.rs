@@ -228,3 +228,21 @@ thickness_mm = 10
         refused(&"[".repeat(100_000), Some(1), &[]);
     }
 }
+
+#[cfg(test)]
+mod properties {
+    use super::*;
+    use proptest::prelude::*;
+
+    proptest! {
+        #![proptest_config(ProptestConfig::with_cases(400))]
+
+        /// Whatever stands in a file, there is a scene or one line.
+        #[test]
+        fn any_text_is_a_scene_or_one_line(text in "[a-z\\[\\]=\\.\"0-9\n_ -]{0,200}") {
+            if let Err(error) = Scene::from_toml(&text) {
+                prop_assert!(!error.to_string().contains('\n'));
+            }
+        }
+    }
+}
