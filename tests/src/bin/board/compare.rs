@@ -11,7 +11,7 @@ pub fn run(checks: &mut Checks) -> Result<(), Trouble> {
     let image = toolchain.build_measure_anyhow()?;
     let board = emulator::run(&image)?;
     let host = host_transcript().map_err(Trouble::Failed)?;
-    println!("the board's transcript:\n{board}");
+    say!("the board's transcript:\n{board}");
     checks.check("same_bits_as_the_host", compare(&host, &board));
     checks.check(
         "one_flipped_bit_is_noticed",

@@ -33,27 +33,33 @@ pub fn run(checks: &mut Checks) -> Result<(), Trouble> {
     let sizes = image::sizes(&file).map_err(Trouble::Failed)?;
     let records: u64 = RECORDS.iter().map(|record| record.file.len() as u64).sum();
 
-    println!(
+    say!(
         "{:<20} {:<10} {:>13} {:>12}",
-        "record", "step", "instructions", "stack bytes"
+        "record",
+        "step",
+        "instructions",
+        "stack bytes"
     );
     for cost in &costs {
-        println!(
+        say!(
             "{:<20} {:<10} {:>13} {:>12}",
-            cost.record, cost.what, cost.instructions, cost.stack
+            cost.record,
+            cost.what,
+            cost.instructions,
+            cost.stack
         );
     }
     let measuring = costs.iter().filter(|cost| cost.what == "measure");
     let instructions = measuring.map(|cost| cost.instructions).max().unwrap_or(u64::MAX);
     let stack = costs.iter().map(|cost| cost.stack).max().unwrap_or(u64::MAX);
-    println!("\nCortex-M4F, {toolchain}; instructions as executed, not cycles; records of 4096 samples");
+    say!("\nCortex-M4F, {toolchain}; instructions as executed, not cycles; records of 4096 samples");
     let code = image::code_by_crate(&file).map_err(Trouble::Failed)?;
     let largest: Vec<String> = code
         .iter()
         .take(6)
         .map(|(name, size)| format!("{name} {size}"))
         .collect();
-    println!("bytes of code by crate: {}", largest.join(", "));
+    say!("bytes of code by crate: {}", largest.join(", "));
     for (name, what, value, limit) in [
         (
             "instructions",

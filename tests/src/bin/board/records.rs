@@ -30,7 +30,7 @@ pub fn write() -> Result<(), Trouble> {
         let (rate, first) = (scene.record.sample_rate_mhz * 1e6, scene.record.first_sample_us * 1e-6);
         let path = file(record.name, "npy");
         record_file::write(&path, &[codes], rate, first).map_err(|error| Trouble::Failed(error.to_string()))?;
-        println!("{}", path.display());
+        say!("{}", path.display());
     }
     Ok(())
 }

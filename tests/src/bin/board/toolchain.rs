@@ -137,7 +137,7 @@ impl Toolchain {
         self.build_measure(Features::Normal)
             .or_else(|text| {
                 if text.contains(REACHABLE) {
-                    println!("note: {REACHABLE} (see `cargo board panics`); this image carries a panic handler");
+                    say!("note: {REACHABLE} (see `cargo board panics`); this image carries a panic handler");
                     self.build_measure(Features::PanicReport)
                 } else {
                     Err(text)
