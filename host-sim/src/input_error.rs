@@ -64,6 +64,28 @@ impl InputError {
         Self::in_file(file, what, remedy)
     }
 
+    /// What is known about a file before it is opened: there, an ordinary file, not larger than `most_bytes`.
+    ///
+    /// # Errors
+    /// It is not so. (Devices and pipes may never end.)
+    pub fn check_file(file: &Path, most_bytes: u64) -> Result<(), Self> {
+        let about = std::fs::metadata(file).map_err(|error| Self::unreadable(file, &error))?;
+        if about.is_dir() {
+            return Err(Self::in_file(file, "is a folder", "name a file in it"));
+        }
+        if !about.is_file() {
+            return Err(Self::in_file(file, "is no ordinary file", "copy its content to a file"));
+        }
+        if about.len() > most_bytes {
+            return Err(Self::in_file(
+                file,
+                format!("is larger than {most_bytes} bytes"),
+                "check that it is the right file, or split it",
+            ));
+        }
+        Ok(())
+    }
+
     /// A file that cannot be written.
     pub fn unwritable(file: &Path, error: &std::io::Error) -> Self {
         let remedy = match error.kind() {

@@ -280,3 +280,20 @@ fn wrong_calibrations_are_errors() {
     ]);
     assert!(run.error().contains("cannot be written"), "{}", run.errors);
 }
+
+/// What only Unix has: a full disk, a device that never ends.
+#[cfg(target_os = "linux")]
+#[test]
+fn full_disks_and_endless_files_are_errors() {
+    let bench = Bench::new();
+    bench.write_shots("good.npy", &[Train::CLEAN.shot(1)]);
+    std::os::unix::fs::symlink("/dev/zero", bench.path("zero.npy")).unwrap();
+    std::os::unix::fs::symlink("/dev/zero", bench.path("zero.toml")).unwrap();
+    let run = bench.run(&["read", "zero.npy", "--setup", "setup.toml"]);
+    assert!(run.error().contains("is no ordinary file"), "{}", run.errors);
+    let run = bench.run(&["read", "good.npy", "--setup", "zero.toml"]);
+    assert!(run.error().contains("is no ordinary file"), "{}", run.errors);
+    let full = std::fs::File::options().write(true).open("/dev/full").unwrap();
+    let run = bench.run_into(&["read", "good.npy", "--setup", "setup.toml"], full.into());
+    assert!(run.error().contains("the output cannot be written"), "{}", run.errors);
+}

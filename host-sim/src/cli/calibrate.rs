@@ -1,6 +1,6 @@
 //! `halfpulse calibrate`: blocks of known thickness to reference pulse, zero and velocity.
 
-use super::Outcome;
+use super::{Outcome, written};
 use crate::calibrating::block::BlockRecord;
 use crate::calibrating::{self, Calibrated, Learn};
 use crate::input_error::InputError;
@@ -96,8 +96,8 @@ pub fn run(arguments: &Arguments, out: &mut dyn Write) -> Result<Outcome, InputE
     learned.keys.write(&arguments.output)?;
     // What was written must be usable: read it as `read` will.
     SetupFile::read(&arguments.output)?.reference_pulse()?;
-    // Whoever closed our output has the files.
-    let _ = out.write_all(report(&learned, &blocks, learn, &arguments.output, &pulse_path).as_bytes());
+    let report = report(&learned, &blocks, learn, &arguments.output, &pulse_path);
+    written(out.write_all(report.as_bytes()).and_then(|()| out.flush()))?;
     Ok(Outcome::Done)
 }
 

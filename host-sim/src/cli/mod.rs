@@ -62,6 +62,20 @@ enum Command {
     Calibrate(calibrate::Arguments),
 }
 
+/// An output that cannot be written; one that its reader has closed had enough, which is no fault.
+///
+/// # Errors
+/// Everything but a closed pipe.
+pub fn written(result: std::io::Result<()>) -> Result<(), InputError> {
+    match result {
+        Err(error) if error.kind() != std::io::ErrorKind::BrokenPipe => Err(InputError::in_argument(
+            format!("the output cannot be written ({error})"),
+            "check where it goes and the space there",
+        )),
+        _ => Ok(()),
+    }
+}
+
 /// Prints one error in one line on stderr.
 pub fn print_error(error: &InputError) {
     // Nothing is left to do if stderr is closed.
@@ -102,7 +116,7 @@ fn usage(error: &clap::Error) -> ExitCode {
     // clap's first paragraph holds the fault; tips and usage follow.
     let what: Vec<&str> = text
         .lines()
-        .take_while(|line| !line.starts_with("Usage:"))
+        .take_while(|line| !line.starts_with("Usage:") && !line.starts_with("For more information"))
         .map(str::trim)
         .collect();
     let what = what.join(" ");

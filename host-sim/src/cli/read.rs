@@ -1,6 +1,6 @@
 //! `halfpulse read`: recorded shots to readings.
 
-use super::{Outcome, json, print_error, text, words};
+use super::{Outcome, json, print_error, text, words, written};
 use crate::band;
 use crate::input_error::InputError;
 use crate::measuring::{self, HeapScratch, Measured, Refusal, Shot};
@@ -97,10 +97,13 @@ pub fn run(arguments: &Arguments, out: &mut dyn Write) -> Result<Outcome, InputE
                 failed = true;
                 print_error(&error);
             }
-            // Whoever read our output has had enough: no fault of ours.
-            Err(Stop::Output) => break,
+            Err(Stop::Output(error)) => {
+                written(Err(error))?;
+                break;
+            }
         }
     }
+    written(out.flush())?;
     Ok(match (failed, refused) {
         (true, _) => Outcome::Failed,
         (false, true) => Outcome::Refused,
@@ -123,7 +126,7 @@ struct UnknownRecord {
 /// Why a file's records do not come to an end.
 enum Stop {
     File(InputError),
-    Output,
+    Output(std::io::Error),
 }
 
 impl From<InputError> for Stop {
@@ -169,7 +172,7 @@ fn read_file(
             let mut gauge = setup.gauge(scratch.workspace())?;
             for shot in measuring::shots(path, file, average)? {
                 let measured = measuring::measure(&mut gauge, &name, &shot, clock);
-                sink(&measured).map_err(|_| Stop::Output)?;
+                sink(&measured).map_err(Stop::Output)?;
             }
         }
         Source::Unknown(unknown) => {
@@ -183,7 +186,7 @@ fn read_file(
             tell_assumptions(path, &file, unknown);
             for shot in measuring::shots(path, file, average)? {
                 let measured = look_at(&name, &shot, clock);
-                sink(&measured).map_err(|_| Stop::Output)?;
+                sink(&measured).map_err(Stop::Output)?;
             }
         }
     }

@@ -192,18 +192,7 @@ fn check_size(path: &Path, shots: usize, samples: usize) -> Result<(), InputErro
 /// Refuses files that no table of allowed samples can fill.
 fn check_bytes(path: &Path) -> Result<(), InputError> {
     const MOST_BYTES: u64 = 1 << 30;
-    let about = std::fs::metadata(path).map_err(|error| InputError::unreadable(path, &error))?;
-    if about.is_dir() {
-        return Err(InputError::in_file(path, "is a folder", "name a file in it"));
-    }
-    if about.len() > MOST_BYTES {
-        return Err(InputError::in_file(
-            path,
-            format!("is larger than {MOST_BYTES} bytes"),
-            "split it into several files",
-        ));
-    }
-    Ok(())
+    InputError::check_file(path, MOST_BYTES)
 }
 
 /// The place of one number, for an error about it.

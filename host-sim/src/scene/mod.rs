@@ -1,7 +1,7 @@
 //! A scene: probe, part, receiver and converter, as a file or built in code.
 //!
 //! One set of structures serves both: their fields are the keys of the scene file (TOML), units in the
-//! names. [`Scene::check`] judges every value; [`file`] adds the line in which a wrong one stands.
+//! names. [`Scene::check`] judges every value; [`mod@file`] adds the line in which a wrong one stands.
 //! Times are after the transmission trigger.
 
 pub mod file;

@@ -170,14 +170,7 @@ impl SetupFile {
     /// Anything that is wrong with it, with file, line, key and remedy.
     pub fn read(path: &Path) -> Result<Self, InputError> {
         const MOST_BYTES: u64 = 1 << 20;
-        let about = std::fs::metadata(path).map_err(|error| InputError::unreadable(path, &error))?;
-        if about.len() > MOST_BYTES {
-            return Err(InputError::in_file(
-                path,
-                "is too large for a set-up file",
-                "give the set-up (TOML), not a record",
-            ));
-        }
+        InputError::check_file(path, MOST_BYTES)?;
         let text = std::fs::read_to_string(path).map_err(|error| InputError::unreadable(path, &error))?;
         Self::parse(path, &text)
     }

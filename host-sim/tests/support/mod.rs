@@ -6,7 +6,7 @@
 
 use std::f64::consts::{PI, TAU};
 use std::path::{Path, PathBuf};
-use std::process::{Command, Output};
+use std::process::{Child, Command, Output, Stdio};
 use tempfile::TempDir;
 
 pub const RATE_MHZ: f64 = 50.0;
@@ -40,10 +40,18 @@ impl Bench {
     }
 
     pub fn run(&self, arguments: &[&str]) -> Run {
+        self.run_into(arguments, Stdio::piped())
+    }
+
+    /// The same with stdout going elsewhere.
+    pub fn run_into(&self, arguments: &[&str], out: Stdio) -> Run {
         let output = Command::new(env!("CARGO_BIN_EXE_halfpulse"))
             .args(arguments)
             .current_dir(self.folder.path())
-            .output()
+            .stdout(out)
+            .stderr(Stdio::piped())
+            .spawn()
+            .and_then(Child::wait_with_output)
             .expect("the command starts");
         Run::new(&output)
     }
