@@ -93,6 +93,10 @@ pub struct Measured {
     pub full_scale: f32,
 }
 
+/// How far, in samples, the set-up's time of the first sample may lie from the file's: the rounding of times
+/// to whole nanoseconds at up to 200 MS/s.
+const FIRST_SAMPLE_TOLERANCE: f64 = 0.1;
+
 /// The clock of a file's records under a set-up.
 ///
 /// # Errors
@@ -115,7 +119,7 @@ pub fn clock(path: &Path, file: &RecordFile, setup: &SetupFile) -> Result<Sample
         ));
     }
     let first = match (keys.first_sample_us, file.first_sample_s) {
-        (Some(us), Some(stated)) if (us * 1e-6 - stated).abs() * rate > 0.05 => {
+        (Some(us), Some(stated)) if (us * 1e-6 - stated).abs() * rate > FIRST_SAMPLE_TOLERANCE => {
             return Err(InputError::in_file(
                 path,
                 format!(

@@ -267,7 +267,7 @@ fn wrong_calibrations_are_errors() {
         .concat();
         let run = bench.run(&all);
         assert!(run.error().contains(expected), "{arguments:?}: {}", run.errors);
-        assert!(!support::exists(&bench.path("out.toml")), "{arguments:?}");
+        assert!(!bench.path("out.toml").exists(), "{arguments:?}");
     }
     let run = bench.run(&[
         "calibrate",

@@ -56,7 +56,8 @@ All shots of a file are of one place; they are averaged. What is learned, by spa
   interface-to-back-wall            first back wall - interface = zero (normally 0) + 2 d / velocity
   back-wall-to-back-wall            period = 2 d / velocity; zero from the first back wall
 Two blocks determine zero and velocity together, and how their errors hang together. What the blocks
-cannot determine is refused. A zero belongs to the pulse it was learned with: the new set-up names the
+cannot determine is refused. A velocity is that of the blocks: a part of another steel has its own, and
+its uncertainty in the set-up is for you to widen. A zero belongs to the pulse it was learned with: the new set-up names the
 pulse's file and its checksum.";
 
 /// Runs the command.

@@ -5,7 +5,7 @@
 #![allow(clippy::disallowed_methods)] // No bits are compared between machines here.
 
 use std::f64::consts::{PI, TAU};
-use std::path::{Path, PathBuf};
+use std::path::PathBuf;
 use std::process::{Child, Command, Output, Stdio};
 use tempfile::TempDir;
 
@@ -94,7 +94,7 @@ impl Run {
     }
 }
 
-/// The set-up of the contract, 12 bits, without couplant film and element, so that the budget holds
+/// A set-up of a contact probe, 12 bits, without couplant film and element, so that the budget holds
 /// nothing that these records do not contain.
 pub fn setup(span: &str, velocity_uncertainty: f64, zero_uncertainty_ns: f64) -> String {
     format!(
@@ -221,8 +221,4 @@ pub fn npy_of_floats(values: &[f32]) -> Vec<u8> {
     bytes.extend(header.as_bytes());
     bytes.extend(values.iter().flat_map(|value| value.to_le_bytes()));
     bytes
-}
-
-pub fn exists(path: &Path) -> bool {
-    path.exists()
 }
