@@ -27,6 +27,7 @@ const INTERFACE_SHARE: f32 = 0.35;
 
 /// A thickness that can be signed for.
 #[derive(Clone, Debug, PartialEq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Reading {
     /// The wall, without any coating.
     pub thickness: Metres,
@@ -54,6 +55,7 @@ impl Reading {
 
 /// A coating's thickness.
 #[derive(Clone, Copy, Debug, PartialEq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct CoatingReading {
     /// Its thickness.
     pub thickness: Metres,
@@ -63,6 +65,7 @@ pub struct CoatingReading {
 
 /// What the last record held, whether or not it gave a reading.
 #[derive(Clone, Debug, PartialEq, Default)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Findings {
     /// Extremes and clipped samples inside the window.
     pub health: RecordHealth,

@@ -10,6 +10,7 @@ use core::fmt;
 /// Why there is no reading.
 #[derive(Clone, Copy, Debug, PartialEq)]
 #[non_exhaustive]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub enum NoReading {
     /// The record does not come from the sample clock that the set-up names.
     SampleRateMismatch {
@@ -175,6 +176,7 @@ macro_rules! doubts {
         #[derive(Clone, Copy, Debug, PartialEq, Eq)]
         #[non_exhaustive]
         #[repr(u32)]
+        #[cfg_attr(feature = "defmt", derive(defmt::Format))]
         pub enum Doubt {
             $($(#[$meta])* $name = 1 << $bit,)*
         }
@@ -268,6 +270,20 @@ impl Doubts {
     /// The doubts that are raised, in the order in which they are shown.
     pub fn iter(self) -> impl Iterator<Item = Doubt> {
         Doubt::ALL.iter().copied().filter(move |doubt| self.contains(*doubt))
+    }
+}
+
+#[cfg(feature = "defmt")]
+impl defmt::Format for Doubts {
+    /// As [`fmt::Display`] does.
+    fn format(&self, f: defmt::Formatter<'_>) {
+        if self.is_empty() {
+            defmt::write!(f, "none");
+        }
+        for (number, doubt) in self.iter().enumerate() {
+            let before = if number > 0 { ", " } else { "" };
+            defmt::write!(f, "{=str}{=str}", before, doubt.word());
+        }
     }
 }
 

@@ -378,6 +378,7 @@ impl GaugeSetup {
 /// What is wrong with a set-up: the caller's fault, found at build or at start.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
 #[non_exhaustive]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub enum SetupError {
     /// The sample rate is not a positive number.
     SampleRate,

@@ -16,6 +16,7 @@ macro_rules! quantity {
         $(#[$meta])*
         #[derive(Clone, Copy, Debug, PartialEq, PartialOrd, Default)]
         #[repr(transparent)]
+        #[cfg_attr(feature = "defmt", derive(defmt::Format))]
         pub struct $name(f32);
 
         impl $name {
@@ -274,6 +275,7 @@ impl fmt::Display for Decibels {
 /// Kept apart because the difference of two nearby places is then exact to the fraction's last
 /// bit, however far into the record they lie.
 #[derive(Clone, Copy, Debug, PartialEq, Default)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct SamplePosition {
     /// The sample at or before the place.
     pub index: u32,

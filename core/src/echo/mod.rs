@@ -24,6 +24,7 @@ use heapless::Vec;
 
 /// Sign of an echo relative to the reference pulse.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub enum Polarity {
     /// As the reference pulse.
     Positive,
@@ -33,6 +34,7 @@ pub enum Polarity {
 
 /// What an echo was found to be.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub enum EchoRole {
     /// The transmission pulse.
     TransmissionPulse,
@@ -50,6 +52,7 @@ pub enum EchoRole {
 
 /// One echo.
 #[derive(Clone, Copy, Debug, PartialEq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Echo {
     /// Place of the reference pulse's origin (its envelope's maximum) in the record.
     pub position: SamplePosition,

@@ -239,6 +239,7 @@ fn durations(
 
 /// The pulse as one echo shows it. Frequencies are those of the two-way spectrum at -6 dB.
 #[derive(Clone, Copy, Debug, PartialEq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct PulseMetrics {
     /// Lower -6 dB frequency.
     pub lower_frequency: Hertz,

@@ -17,6 +17,7 @@ const SQUARED_6DB: f32 = 0.251_188_64;
 
 /// Whether the nearest pair of echoes can be told apart.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub enum Verdict {
     /// Spacing of at least half the spatial pulse length and a valley of at least 6 dB.
     ResolvedClassically,
@@ -41,6 +42,7 @@ impl Verdict {
 
 /// The verdict on the nearest pair of echoes in the window.
 #[derive(Clone, Copy, Debug, PartialEq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Separation {
     /// Time between the two.
     pub spacing: Seconds,

@@ -66,6 +66,7 @@ pub struct Rules {
 
 /// The multiples of one wall.
 #[derive(Clone, Copy, Debug, PartialEq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Train {
     /// Number of the first multiple that was seen.
     pub first_multiple: u8,

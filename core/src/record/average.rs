@@ -386,6 +386,7 @@ pub fn next_gain(health: &RecordHealth, format: AdcFormat, now: Decibels, steps:
 /// Why records do not become one.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
 #[non_exhaustive]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub enum AverageError {
     /// There is no shot, or it is empty.
     Nothing,

@@ -200,6 +200,7 @@ impl SampleRange {
 
 /// What one look at the codes tells about the hardware.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Default)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct RecordHealth {
     /// Samples looked at.
     pub samples: u32,

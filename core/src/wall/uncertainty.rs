@@ -10,6 +10,7 @@ use heapless::Vec;
 /// Where a share of the uncertainty comes from.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
 #[non_exhaustive]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub enum Source {
     /// Noise moves the echoes' arrivals.
     Timing,
@@ -42,6 +43,7 @@ impl Source {
 
 /// One line of the budget.
 #[derive(Clone, Copy, Debug, PartialEq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Term {
     /// Where it comes from.
     pub source: Source,
@@ -51,6 +53,7 @@ pub struct Term {
 
 /// The uncertainty budget of one reading. Terms are independent of each other.
 #[derive(Clone, Debug, PartialEq, Default)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Budget {
     terms: Vec<Term, 8>,
 }

@@ -1,0 +1,188 @@
+//! The application: does what the link asks for, one message at a time.
+
+use crate::acquire::{FrontEnd, Request};
+use crate::link::{
+    Hello, LinkError, Message, PROTOCOL, SetUp, SharedPort, Status, Take, UNKNOWN_CHOICE, setup_error_code,
+};
+use crate::report::{Fault, Report, ReportSink, Shortfall};
+use embedded_hal::delay::DelayNs;
+use embedded_io::{Read, ReadReady, Write};
+use halfpulse::record::receiver::PulseReceiver;
+use halfpulse::{Decibels, Gauge};
+
+/// What one call of [`App::step`] did.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum Step {
+    /// There was no message.
+    Idle,
+    /// A message was answered.
+    Served,
+    /// A message was dropped: nobody had introduced itself, or it is not for a gauge.
+    Dropped,
+    /// The other end says good-bye.
+    Finished,
+    /// The line does not work; the next step may find it working again.
+    LineFault,
+}
+
+/// Memory for one record.
+#[derive(Debug)]
+pub struct RecordMemory<'m> {
+    /// The record's codes: 2 bytes a sample.
+    pub codes: &'m mut [i16],
+    /// Averaging's sums: 4 bytes a sample.
+    pub sums: &'m mut [i32],
+}
+
+/// The gauge as an application.
+#[derive(Debug)]
+pub struct App<'p, 'm, 's, R, D, L, S> {
+    port: SharedPort<'p, L>,
+    front_end: FrontEnd<'s, R, D>,
+    gauge: Gauge<'m>,
+    memory: RecordMemory<'m>,
+    sink: S,
+    introduced: bool,
+    reports: u32,
+    stack_used: fn() -> u32,
+}
+
+impl<'p, 'm, 's, R, D, L, S> App<'p, 'm, 's, R, D, L, S>
+where
+    R: PulseReceiver,
+    R::Error: Into<Fault>,
+    D: DelayNs,
+    L: Read + ReadReady + Write,
+    S: ReportSink,
+{
+    /// An application that waits for the other end's introduction. `stack_used` tells the most bytes of
+    /// stack that were in use (0 where nobody knows).
+    pub const fn new(
+        port: SharedPort<'p, L>,
+        front_end: FrontEnd<'s, R, D>,
+        gauge: Gauge<'m>,
+        memory: RecordMemory<'m>,
+        sink: S,
+        stack_used: fn() -> u32,
+    ) -> Self {
+        Self {
+            port,
+            front_end,
+            gauge,
+            memory,
+            sink,
+            introduced: false,
+            reports: 0,
+            stack_used,
+        }
+    }
+
+    /// Answers one message, if there is one. Ends in bounded time whatever the other end does.
+    pub fn step(&mut self) -> Step {
+        match self.port.poll() {
+            Ok(None) => Step::Idle,
+            Ok(Some(message)) => self.serve(&message).unwrap_or(Step::LineFault),
+            Err(_) => Step::LineFault,
+        }
+    }
+
+    fn serve(&mut self, message: &Message) -> Result<Step, LinkError> {
+        match message {
+            Message::Hello(hello) => {
+                // Whoever speaks another version learns ours, and is not listened to.
+                self.introduced = hello.protocol == PROTOCOL;
+                let samples = u16::try_from(self.memory.codes.len()).unwrap_or(u16::MAX);
+                let answer = Hello {
+                    protocol: PROTOCOL,
+                    samples,
+                };
+                self.port.send(&Message::Hello(answer))?;
+            }
+            Message::SetUp(setup) if self.introduced => {
+                let answer = self.change_setup(setup);
+                self.port.send(&Message::SetUpTaken(answer))?;
+            }
+            Message::Take(take) if self.introduced => {
+                let report = self.take(take).to_link();
+                self.port.send(&Message::Report(report))?;
+                self.reports = self.reports.saturating_add(1);
+            }
+            Message::Query if self.introduced => {
+                let status = self.status();
+                self.port.send(&Message::Status(status))?;
+            }
+            Message::Bye if self.introduced => return Ok(Step::Finished),
+            _ => {
+                self.port.count_unexpected();
+                return Ok(Step::Dropped);
+            }
+        }
+        Ok(Step::Served)
+    }
+
+    fn change_setup(&mut self, setup: &SetUp) -> u8 {
+        match setup.setup().map(|setup| self.gauge.change_setup(setup)) {
+            Some(Ok(())) => 0,
+            Some(Err(error)) => setup_error_code(&error),
+            None => UNKNOWN_CHOICE,
+        }
+    }
+
+    /// Acquires, measures, and tells the sink.
+    pub fn take(&mut self, take: &Take) -> Report<'_> {
+        let request = Request {
+            shots: take.shots,
+            samples: usize::from(take.samples),
+            gain: take.gain,
+            window: self.gauge.setup().window,
+        };
+        let acquired = self.front_end.acquire(&request, self.memory.codes, self.memory.sums);
+        let report = match acquired {
+            Ok(acquired) => {
+                let outcome = self.gauge.measure(&acquired.record).map_err(Shortfall::NoReading);
+                Report {
+                    number: take.number,
+                    shots: take.shots,
+                    gain: acquired.gain,
+                    outcome,
+                    findings: Some(self.gauge.findings()),
+                }
+            }
+            Err(fault) => Report {
+                number: take.number,
+                shots: 0,
+                gain: Decibels::new(0.0),
+                outcome: Err(Shortfall::Fault(fault)),
+                findings: None,
+            },
+        };
+        self.sink.report(&report);
+        report
+    }
+
+    /// The counters since the start.
+    pub fn status(&self) -> Status {
+        let counts = self.port.counts();
+        Status {
+            received: counts.received,
+            broken: counts.broken,
+            oversized: counts.oversized,
+            unknown: counts.unknown,
+            unexpected: counts.unexpected,
+            shots: self.front_end.counts.fired,
+            failed_shots: self.front_end.counts.failed,
+            reports: self.reports,
+            stack: (self.stack_used)(),
+        }
+    }
+
+    /// The pulser and receiver in use.
+    pub const fn front_end(&mut self) -> &mut FrontEnd<'s, R, D> {
+        &mut self.front_end
+    }
+
+    /// Where reports go.
+    pub const fn sink(&mut self) -> &mut S {
+        &mut self.sink
+    }
+}
