@@ -7,5 +7,7 @@ fn main() {
         let folder = std::env::var("CARGO_MANIFEST_DIR").expect("cargo sets CARGO_MANIFEST_DIR");
         println!("cargo::rustc-link-search={folder}");
         println!("cargo::rustc-link-arg-bins=-Tlink.x");
+        // `measure` writes no log.
+        println!("cargo::rustc-link-arg-bin=gauge=-Tdefmt.x");
     }
 }

@@ -12,6 +12,8 @@
 pub mod band;
 pub mod calibrating;
 pub mod cli;
+pub mod device;
+pub mod faults;
 pub mod demo;
 #[cfg_attr(not(test), deny(clippy::disallowed_methods))]
 pub mod fourier;
@@ -21,6 +23,7 @@ pub mod input_error;
 #[cfg_attr(not(test), deny(clippy::disallowed_methods))]
 pub mod layered;
 #[cfg_attr(not(test), deny(clippy::disallowed_methods))]
+pub mod link;
 pub mod material;
 pub mod measuring;
 #[cfg_attr(not(test), deny(clippy::disallowed_methods))]

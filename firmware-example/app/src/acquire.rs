@@ -95,7 +95,9 @@ where
             GainChoice::Fixed(gain) => self.shot(Decibels::new(gain), codes)?,
             GainChoice::Automatic => self.step_gain(request.window, codes)?,
         };
-        if averaging {
+        // Sums hide a bit that never changes: one such shot is all that the gauge needs to refuse it.
+        let hides = stuck_or_dead(&record(codes, &fired), request.window);
+        if averaging && !hides {
             // The shot that settled the gain is the first of the average.
             let mut average = Averager::new(sums);
             let gain = fired.gain;
@@ -161,6 +163,13 @@ where
             attempt += 1;
         }
     }
+}
+
+fn stuck_or_dead(record: &Record<'_>, window: Window) -> bool {
+    record.window(window).is_ok_and(|range| {
+        let health = record.health(range);
+        health.is_dead() || health.stuck_bits() != 0
+    })
 }
 
 fn record<'c>(codes: &'c [i16], fired: &Fired) -> Record<'c> {

@@ -29,7 +29,7 @@ impl PulseReceiver for Echo {
             *code = if i == 60 {
                 height.clamp(-2048.0, 2047.0) as i16
             } else {
-                i as i16 % 2
+                i as i16 % 7 - 3
             };
         }
         let drift = self.drifts_after.is_some_and(|after| call >= after);

@@ -142,7 +142,7 @@ where
                 let outcome = self.gauge.measure(&acquired.record).map_err(Shortfall::NoReading);
                 Report {
                     number: take.number,
-                    shots: take.shots,
+                    shots: acquired.record.format().shots,
                     gain: acquired.gain,
                     outcome,
                     findings: Some(self.gauge.findings()),

@@ -6,9 +6,12 @@
 
 use crate::transcript::Sink;
 use core::arch::asm;
+use core::cell::UnsafeCell;
 use core::ptr;
+use core::sync::atomic::{AtomicUsize, Ordering, fence};
 use cortex_m_rt::{ExceptionFrame, exception};
 use cortex_m_semihosting::{debug, hio};
+use halfpulse_app::remote::SampleMemory;
 
 /// First of the board's CMSDK timers (Arm AN386, section 3.7, from memory): control, value (counts down), reload.
 const TIMER_CONTROL: *mut u32 = ptr::without_provenance_mut(0x4000_0000);
@@ -26,12 +29,7 @@ impl Console {
     /// Opens the console and starts the timer.
     #[must_use]
     pub fn start() -> Self {
-        // SAFETY: the timer's registers, used by nobody else; 32-bit accesses as the manual asks for.
-        unsafe {
-            TIMER_RELOAD.write_volatile(u32::MAX);
-            TIMER_VALUE.write_volatile(u32::MAX);
-            TIMER_CONTROL.write_volatile(1);
-        }
+        start_timer();
         Self(hio::hstdout().ok())
     }
 }
@@ -43,6 +41,151 @@ impl Sink for Console {
         {
             exit(false);
         }
+    }
+}
+
+/// Second of the board's CMSDK serial ports (Arm AN386, section 3.8, from memory): data, state (bit 0: no
+/// room to write, bit 1: a byte to read), control, and the divider that the speed follows from.
+const SERIAL_DATA: *mut u32 = ptr::without_provenance_mut(0x4000_5000);
+const SERIAL_STATE: *mut u32 = ptr::without_provenance_mut(0x4000_5004);
+const SERIAL_CONTROL: *mut u32 = ptr::without_provenance_mut(0x4000_5008);
+const SERIAL_DIVIDER: *mut u32 = ptr::without_provenance_mut(0x4000_5010);
+
+/// The board's PSRAM, in the emulator a file: where the front end's samples arrive.
+const SAMPLES: *const i16 = ptr::without_provenance(0x2100_0000);
+/// How many fit.
+const MOST_SAMPLES: usize = 8 * 1024 * 1024;
+
+/// Ticks of the timer in a microsecond.
+const TICKS_PER_US: u32 = 25;
+/// Longest wait for room in the serial port: 200 ms.
+const LONGEST_WRITE: u32 = 200_000 * TICKS_PER_US;
+
+/// What the gauge needs of the board.
+#[derive(Debug)]
+pub struct Board {
+    /// The link.
+    pub serial: Serial,
+    /// Where the samples arrive.
+    pub samples: SampleBlock,
+    /// The clock.
+    pub delay: Delay,
+}
+
+impl Board {
+    /// Starts timer and serial port, and paints the stack. To be called once, first of all.
+    #[must_use]
+    pub fn start() -> Self {
+        start_timer();
+        // SAFETY: the port's registers, used by nobody else; 32-bit accesses as the manual asks for.
+        unsafe {
+            // The smallest divider that is allowed; the emulator knows no speed.
+            SERIAL_DIVIDER.write_volatile(16);
+            SERIAL_CONTROL.write_volatile(0b11);
+        }
+        let top = stack_pointer();
+        paint_below(top);
+        PAINTED_FROM.store(top, Ordering::Relaxed);
+        Self {
+            serial: Serial(()),
+            samples: SampleBlock(()),
+            delay: Delay(()),
+        }
+    }
+}
+
+/// Where the painted stack begins.
+static PAINTED_FROM: AtomicUsize = AtomicUsize::new(0);
+
+/// Most bytes of stack that were in use since [`Board::start`].
+#[must_use]
+pub fn stack_used() -> u32 {
+    let top = PAINTED_FROM.load(Ordering::Relaxed);
+    (stack_start().wrapping_sub(top) as u32) + used_below(top)
+}
+
+/// The second serial port.
+#[derive(Debug)]
+pub struct Serial(());
+
+impl Serial {
+    fn state() -> u32 {
+        // SAFETY: reading the state changes nothing.
+        unsafe { SERIAL_STATE.read_volatile() }
+    }
+}
+
+impl embedded_io::ErrorType for Serial {
+    type Error = embedded_io::ErrorKind;
+}
+
+impl embedded_io::ReadReady for Serial {
+    fn read_ready(&mut self) -> Result<bool, Self::Error> {
+        Ok(Self::state() & 2 != 0)
+    }
+}
+
+impl embedded_io::Read for Serial {
+    /// Gives what is there and never waits: no byte, if there is none.
+    fn read(&mut self, bytes: &mut [u8]) -> Result<usize, Self::Error> {
+        let mut read = 0;
+        for place in bytes {
+            if Self::state() & 2 == 0 {
+                break;
+            }
+            // SAFETY: there is a byte, and reading takes it.
+            *place = unsafe { SERIAL_DATA.read_volatile() } as u8;
+            read += 1;
+        }
+        Ok(read)
+    }
+}
+
+impl embedded_io::Write for Serial {
+    fn write(&mut self, bytes: &[u8]) -> Result<usize, Self::Error> {
+        for &byte in bytes {
+            let start = ticks();
+            while Self::state() & 1 != 0 {
+                if start.wrapping_sub(ticks()) > LONGEST_WRITE {
+                    return Err(embedded_io::ErrorKind::TimedOut);
+                }
+            }
+            // SAFETY: there is room for a byte.
+            unsafe { SERIAL_DATA.write_volatile(u32::from(byte)) };
+        }
+        Ok(bytes.len())
+    }
+
+    fn flush(&mut self) -> Result<(), Self::Error> {
+        Ok(())
+    }
+}
+
+/// The memory into which the front end writes its samples, as a converter's DMA would.
+#[derive(Debug)]
+pub struct SampleBlock(());
+
+impl SampleMemory for SampleBlock {
+    fn copy(&mut self, codes: &mut [i16]) {
+        fence(Ordering::SeqCst);
+        for (place, code) in codes.iter_mut().enumerate().take(MOST_SAMPLES) {
+            // SAFETY: inside the PSRAM, which only the front end writes to; volatile, because the
+            // compiler does not know of it. Halves of two shots are found out by the check sum.
+            *code = unsafe { SAMPLES.wrapping_add(place).read_volatile() };
+        }
+    }
+}
+
+/// Waits by the board's timer.
+#[derive(Clone, Copy, Debug)]
+pub struct Delay(());
+
+impl embedded_hal::delay::DelayNs for Delay {
+    fn delay_ns(&mut self, ns: u32) {
+        // Rounded up: 40 ns a tick.
+        let wanted = ns / 40 + 1;
+        let start = ticks();
+        while start.wrapping_sub(ticks()) < wanted {}
     }
 }
 
@@ -119,9 +262,61 @@ fn used_below(top: usize) -> u32 {
     (PAINTED - untouched) as u32
 }
 
+fn start_timer() {
+    // SAFETY: the timer's registers, used by nobody else; 32-bit accesses as the manual asks for.
+    unsafe {
+        TIMER_RELOAD.write_volatile(u32::MAX);
+        TIMER_VALUE.write_volatile(u32::MAX);
+        TIMER_CONTROL.write_volatile(1);
+    }
+}
+
 fn ticks() -> u32 {
     // SAFETY: reading the timer changes nothing.
     unsafe { TIMER_VALUE.read_volatile() }
+}
+
+/// Where the log goes: the developer's console, through the emulator, as raw frames.
+#[defmt::global_logger]
+struct Log;
+
+/// Console and encoder of the log.
+struct LogState(UnsafeCell<(Option<hio::HostStream>, defmt::Encoder)>);
+
+// SAFETY: the board has one core, and no interrupt is enabled: nobody else is there to share it with.
+unsafe impl Sync for LogState {}
+
+static LOG: LogState = LogState(UnsafeCell::new((None, defmt::Encoder::new())));
+
+fn with_log(work: impl FnOnce(&mut defmt::Encoder, &mut dyn FnMut(&[u8]))) {
+    // SAFETY: nobody else uses it (see above), and what `work` calls does not log.
+    let (console, encoder) = unsafe { &mut *LOG.0.get() };
+    if console.is_none() {
+        *console = hio::hstdout().ok();
+    }
+    // A console that is closed loses lines and nothing else.
+    work(encoder, &mut |bytes| {
+        if let Some(console) = console {
+            let _ = console.write_all(bytes);
+        }
+    });
+}
+
+// SAFETY: frames are begun and ended in turn, since there is one thread and no interrupt.
+unsafe impl defmt::Logger for Log {
+    fn acquire() {
+        with_log(|encoder, out| encoder.start_frame(out));
+    }
+
+    unsafe fn flush() {}
+
+    unsafe fn release() {
+        with_log(|encoder, out| encoder.end_frame(out));
+    }
+
+    unsafe fn write(bytes: &[u8]) {
+        with_log(|encoder, out| encoder.write(bytes, out));
+    }
 }
 
 /// Leaves the emulator.

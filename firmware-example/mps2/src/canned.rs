@@ -68,7 +68,7 @@ macro_rules! record {
 
 const STEEL: Material = Material::new(MetresPerSecond::new(5920.0), MetresPerSecond::new(17.0));
 
-const CONTACT: GaugeSetup = GaugeSetup::new(
+pub(crate) const CONTACT: GaugeSetup = GaugeSetup::new(
     Hertz::from_mhz(50.0),
     Probe::contact(Hertz::from_mhz(5.0), 0.6).with_element_diameter(Metres::from_mm(6.0)),
     STEEL,

@@ -5,6 +5,7 @@
 #![deny(missing_docs)]
 
 pub mod canned;
+pub mod plan;
 pub mod transcript;
 #[cfg(target_os = "none")]
 #[allow(unsafe_code)]
