@@ -353,13 +353,6 @@ impl<'w> Gauge<'w> {
         }
         let budget = uncertainty::budget(&self.setup, &times, wall);
         let standard_uncertainty = budget.combined();
-        let coating = thickness::coating(&self.setup, &times).and_then(|thickness| {
-            let standard_uncertainty = uncertainty::coating_uncertainty(&self.setup, &times, wall)?;
-            Some(CoatingReading {
-                thickness,
-                standard_uncertainty,
-            })
-        });
         let evidence = Evidence {
             setup: &self.setup,
             surroundings: &surroundings,
@@ -370,6 +363,15 @@ impl<'w> Gauge<'w> {
             expanded: standard_uncertainty * self.setup.coverage_factor,
             learned_pulse: self.learned,
         };
+        let coating = thickness::coating(&self.setup, &times).and_then(|thickness| {
+            let from_times = uncertainty::coating_uncertainty(&self.setup, &times, wall)?;
+            let from_overlap = judgement::coating_overlap(&evidence)?;
+            let (a, b) = (from_times.get(), from_overlap.get());
+            Some(CoatingReading {
+                thickness,
+                standard_uncertainty: Metres::new(math::sqrt(a * a + b * b)),
+            })
+        });
         Ok(Reading {
             thickness: wall,
             standard_uncertainty,

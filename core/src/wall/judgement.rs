@@ -98,6 +98,28 @@ impl Evidence<'_> {
     }
 }
 
+/// An echo of which more than this share of its amplitude is unexplained may have been read on another cycle.
+const CYCLE_MISMATCH_LIMIT: f32 = 0.5;
+
+/// What overlapping echoes add to a coating's standard uncertainty; `None` if they may have moved an
+/// arrival by a cycle, or if the coating's front gives no echo of its own behind a delay line: then
+/// nothing is said of the coating.
+#[must_use]
+pub fn coating_overlap(evidence: &Evidence<'_>) -> Option<Metres> {
+    let coating = evidence.setup.coating?;
+    let mut worst = evidence.back_wall(1)?.mismatch;
+    if evidence.setup.probe.kind == ProbeKind::DelayLine {
+        evidence.echoes.iter().find(|echo| echo.role == EchoRole::Coating)?;
+        worst = math::larger(worst, evidence.interface()?.mismatch);
+    }
+    if worst > CYCLE_MISMATCH_LIMIT {
+        return None;
+    }
+    // A rectangular half width, in the coating's own velocity.
+    let half_width = evidence.shift_by(worst) * (coating.velocity / evidence.setup.material.velocity);
+    Some(half_width * 0.577_350_3)
+}
+
 /// Upper bound of the probability that the reading is wrong by a cycle.
 ///
 /// A neighbouring cycle wins where noise lifts it above the true one:
