@@ -287,6 +287,9 @@ impl<'w> Gauge<'w> {
             let Some(echo) = measure_echo(&surroundings, candidate.index, Sign::Either, &mut correlation[..]) else {
                 continue;
             };
+            if echo.position.index < range.start || echo.position.index >= range.end {
+                continue;
+            }
             // Two candidates can climb to one top.
             let echoes = &mut self.findings.echoes;
             let twin = echoes
@@ -503,7 +506,13 @@ fn rules(
     let shortest = thickness::SMALLEST_SPACING * facts.envelope_duration;
     // The pulse has to lie inside the window's record as a whole to be measured.
     let edge = range.start as f32 + if range.start == 0 { facts.origin } else { 0.0 };
+    let mut visible_to = range.end as f32;
     let (visible_from, start_tolerance) = if setup.probe.kind == ProbeKind::DelayLine {
+        // From the delay line's own second echo on, at twice the time of its first, two trains would mix.
+        // Its zero is not known better than to a few per cent: stay clear of it.
+        let trigger = surroundings.record.clock().samples_at(Seconds::ZERO);
+        let second = trigger + 1.97 * (start - trigger);
+        visible_to = math::smaller(visible_to, second - facts.envelope_duration);
         (
             math::larger(edge, start + shortest),
             0.6 * surroundings.samples_per_cycle,
@@ -519,7 +528,7 @@ fn rules(
         start_tolerance,
         shortest,
         visible_from,
-        visible_to: range.end as f32,
+        visible_to,
         threshold: scan.threshold / detector.counts_per_code(format) / surroundings.amplitude_noise(),
     }
 }

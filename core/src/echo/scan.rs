@@ -299,7 +299,7 @@ pub fn scan(
     let threshold = factor * level;
     raw.retain(|peak| f32::from(peak.height) >= threshold);
 
-    let mut candidates = unmasked(&mut raw, detector, skirt);
+    let mut candidates = unmasked(&mut raw, detector, skirt, 0.5 * threshold);
     for candidate in &mut candidates {
         candidate.index = candidate.index.saturating_add_signed(-i32::from(detector.lag));
     }
@@ -363,6 +363,10 @@ fn peaks(scanned: &[u16], first: u32, lobe: u32, threshold: f32) -> Vec<Candidat
 
 /// Standard deviation of one filter's output from all samples that no peak's skirt reaches; `None` if
 /// fewer than 40 lobes are left.
+///
+/// Echoes too weak to be candidates (the tail of a train) must not count as noise: the samples are
+/// taken in blocks, and a block far louder than the quiet level is left out. The limit, 2.5 times the
+/// quiet mean square, costs 1 % of bias in pure noise.
 fn quiet_spread(
     scanned: &[u16],
     first: u32,
@@ -371,14 +375,24 @@ fn quiet_spread(
     skirt: &[u16; PULSE_CAPACITY],
     level: f32,
 ) -> Option<f32> {
+    let lobe = usize::from(detector.lobe);
     let (mut sum, mut count) = (0u64, 0u32);
-    let mut position = 0usize;
     let mut add = |from: usize, to: usize| {
-        for &height in scanned.get(from..to).unwrap_or(&[]) {
-            sum += u64::from(u32::from(height) * u32::from(height));
-            count += 1;
+        let mut rest = scanned.get(from..to).unwrap_or(&[]);
+        while !rest.is_empty() {
+            let (block, later) = rest.split_at_checked(16 * lobe).unwrap_or((rest, &[]));
+            let mut squares = 0u64;
+            for &height in block {
+                squares += u64::from(u32::from(height) * u32::from(height));
+            }
+            if squares as f32 <= 5.0 * level * level * block.len() as f32 {
+                sum += squares;
+                count += block.len() as u32;
+            }
+            rest = later;
         }
     };
+    let mut position = 0usize;
     // Peaks stand in the order of their places unless the list ran full; skipping backwards is harmless.
     for peak in peaks {
         let reach = detector.skirt_reach(skirt, peak.height, 0.3 * level) as usize;
@@ -390,7 +404,7 @@ fn quiet_spread(
         position = position.max(at + reach);
     }
     add(position, scanned.len());
-    if count < 40 * u32::from(detector.lobe) {
+    if (count as usize) < 40 * lobe {
         return None;
     }
     // Two filters in quadrature: the envelope's mean square is twice one filter's variance.
@@ -398,11 +412,13 @@ fn quiet_spread(
 }
 
 /// The candidates that stand above the skirts of all stronger ones, in the order of their places.
+/// `noise` is what noise may lift a skirt by.
 #[inline(never)]
 fn unmasked(
     raw: &mut Vec<Candidate, RAW_CAPACITY>,
     detector: &Detector,
     skirt: &[u16; PULSE_CAPACITY],
+    noise: f32,
 ) -> Vec<Candidate, CANDIDATE_CAPACITY> {
     order::sort(raw, |a, b| a.height > b.height);
     let mut kept: Vec<Candidate, CANDIDATE_CAPACITY> = Vec::new();
@@ -414,7 +430,7 @@ fn unmasked(
             if distance < u32::from(detector.shadow) {
                 mask = mask.max(u32::from(stronger.height) / 20);
             }
-            u32::from(candidate.height) <= mask
+            mask > 0 && f32::from(candidate.height) <= mask as f32 + noise
         });
         if !hidden && kept.push(*candidate).is_err() {
             break;

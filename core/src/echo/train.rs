@@ -159,7 +159,8 @@ pub fn find_train(
     let sigma = surroundings.amplitude_noise();
     let at_threshold = math::ln(1.0 + rules.threshold * rules.threshold / 3.0);
     let mut teeth: Teeth = Vec::new();
-    for echo in echoes.iter().filter(|echo| echo.role == EchoRole::Other) {
+    let inside = |echo: &&Echo| echo.role == EchoRole::Other && echo.position.as_samples() <= rules.visible_to;
+    for echo in echoes.iter().filter(inside) {
         let height = echo.amplitude / sigma;
         let gain = math::smaller(math::ln(1.0 + height * height / 3.0) - at_threshold, GAIN_LIMIT);
         let _ = teeth.push(Tooth {
