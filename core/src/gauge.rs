@@ -363,6 +363,7 @@ impl<'w> Gauge<'w> {
             train: &train,
             times: &times,
             wall,
+            budget: &budget,
             expanded: standard_uncertainty * self.setup.coverage_factor,
             learned_pulse: self.learned,
         };

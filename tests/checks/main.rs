@@ -7,3 +7,4 @@ mod val_arrival;
 mod val_envelope;
 mod val_gauge;
 mod val_pulse;
+mod val_population;

@@ -13,7 +13,7 @@ pub mod scan;
 pub mod separation;
 pub mod train;
 
-use crate::echo::arrival::{Arrival, Estimator, Search, estimate};
+use crate::echo::arrival::{Arrival, Estimator, Search, estimate, group_lag_noise};
 use crate::echo::correlation::{Sign, energy};
 use crate::echo::pulse::ReferencePulse;
 use crate::math;
@@ -69,6 +69,10 @@ pub struct Echo {
     /// Root of the energy that the fitted pulse leaves unexplained (beyond what noise explains with
     /// five standard deviations to spare) over the root of the fitted energy: 0 for a perfect match.
     pub mismatch: f32,
+    /// How far the correlation's envelope peaks behind its carrier ([`Arrival::group_lag`]), less what
+    /// four standard deviations of noise explain. It is what a turned phase or an overlapping echo moves;
+    /// even attenuation leaves it alone.
+    pub group_lag: Seconds,
     /// Some sample under the pulse is clipped.
     pub clipped: bool,
     /// What it was found to be.
@@ -156,6 +160,12 @@ pub fn echo_at(surroundings: &Surroundings<'_>, arrival: Arrival) -> Option<Echo
     let from_noise = noise * noise * (freedom + 5.0 * math::sqrt(2.0 * freedom));
     let excess = (energy(under) - explained - from_noise) / explained;
     let clock = record.clock();
+    let by_noise = 4.0 * group_lag_noise(surroundings.samples_per_cycle, amplitude / noise, pulse);
+    let group_lag = if arrival.group_lag > 0.0 {
+        math::larger(arrival.group_lag - by_noise, 0.0)
+    } else {
+        math::smaller(arrival.group_lag + by_noise, 0.0)
+    };
     Some(Echo {
         position: arrival.position,
         arrival: clock.time_of(arrival.position),
@@ -168,6 +178,7 @@ pub fn echo_at(surroundings: &Surroundings<'_>, arrival: Arrival) -> Option<Echo
         },
         snr: Decibels::from_amplitude_ratio(amplitude / noise),
         mismatch: math::sqrt(excess),
+        group_lag: clock.rate.period() * group_lag,
         clipped,
         role: EchoRole::Other,
     })

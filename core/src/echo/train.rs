@@ -568,6 +568,8 @@ fn give_roles(
             Arrival {
                 position: SamplePosition::new(place.index, place.fraction + member.off),
                 amplitude: member.amplitude,
+                // The fit has not looked: the strong multiples speak for the train.
+                group_lag: 0.0,
             },
         ) {
             echo.role = EchoRole::BackWall(multiple);

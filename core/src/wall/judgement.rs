@@ -11,12 +11,15 @@ use crate::outcome::{Doubt, Doubts};
 use crate::setup::{GaugeSetup, ProbeKind, Span};
 use crate::units::{Metres, Seconds};
 use crate::wall::thickness::{self, TrainTimes};
-use crate::wall::uncertainty;
+use crate::wall::uncertainty::{self, Budget, Source};
 
 /// Wrong-cycle probability above which the signal counts as low.
 const WRONG_CYCLE_LIMIT: f32 = 1e-3;
 /// Below this many samples a cycle the sampling counts as coarse.
 const SAMPLES_PER_CYCLE_LIMIT: f32 = 4.0;
+
+/// An echo of which this share of the amplitude is unexplained is hardly recognised.
+const UNRECOGNISED: f32 = 0.5;
 
 /// What a reading rests on.
 #[derive(Clone, Copy, Debug)]
@@ -33,6 +36,8 @@ pub struct Evidence<'a> {
     pub times: &'a TrainTimes,
     /// The thickness.
     pub wall: Metres,
+    /// Where its uncertainty comes from.
+    pub budget: &'a Budget,
     /// Its expanded uncertainty.
     pub expanded: Metres,
     /// The pulse was learned, not modelled.
@@ -53,16 +58,40 @@ impl Evidence<'_> {
         self.setup.material.velocity * time * 0.5
     }
 
-    /// How far an echo could have been moved by what the pulse does not explain of it: a disturbance
-    /// of relative size e in quadrature moves the best fit by e / ω.
+    /// How far a difference between the pulse and what came back could have moved an arrival.
+    ///
+    /// Two things tell. A disturbance of relative size e, in quadrature, moves the best fit by e / ω: an
+    /// upper bound, but even attenuation, which moves nothing, counts too. The group lag is the shift
+    /// itself, for a turned phase, and of the shift's size for an overlapping echo. So the smaller of
+    /// the two; but of a pulse that is hardly recognised, only the bound.
+    fn shift(&self, mismatch: f32, group_lag: Seconds) -> Metres {
+        let bound = self.shift_by(mismatch);
+        let told = self.thickness_of(group_lag.abs());
+        if mismatch < UNRECOGNISED && told < bound {
+            told
+        } else {
+            bound
+        }
+    }
+
+    /// The bound alone.
     fn shift_by(&self, mismatch: f32) -> Metres {
         let samples = mismatch / self.surroundings.pulse.facts.angular_frequency;
         self.thickness_of(self.surroundings.record.clock().rate.period() * samples)
     }
 
-    /// Largest part of the reading that unexplained differences between its echoes could stand for.
+    /// What the budget already allows for the beam, which turns phases by nature: its share of the
+    /// group lag is about twice its shift, since the envelope moves the other way.
+    fn known_phase(&self) -> Metres {
+        let beam = self.budget.terms().iter().find(|term| term.source == Source::Beam);
+        // The term is a rectangular half width over sqrt(3).
+        beam.map_or(Metres::ZERO, |term| term.standard_uncertainty * (2.2 * 1.732_051))
+    }
+
+    /// Largest part of the reading that differences between its echoes could stand for.
     fn differing_shift(&self) -> Metres {
-        let reference = match thickness::wall_span(self.setup) {
+        let span = thickness::wall_span(self.setup);
+        let reference = match span {
             Span::InterfaceToBackWall => self.interface(),
             Span::TransmissionPulseToBackWall | Span::BackWallToBackWall => self.back_wall(self.train.first_multiple),
         };
@@ -71,14 +100,15 @@ impl Evidence<'_> {
         };
         let mut largest = Metres::ZERO;
         for echo in self.echoes {
-            let steps = match (thickness::wall_span(self.setup), echo.role) {
+            let steps = match (span, echo.role) {
                 (Span::InterfaceToBackWall, EchoRole::BackWall(1)) => 1.0,
                 (Span::BackWallToBackWall, EchoRole::BackWall(number)) if number > self.train.first_multiple => {
                     f32::from(number - self.train.first_multiple)
                 }
                 _ => continue,
             };
-            let shift = self.shift_by((echo.mismatch - reference.mismatch).abs()) / steps;
+            let mismatch = math::larger(echo.mismatch, reference.mismatch);
+            let shift = self.shift(mismatch, echo.group_lag - reference.group_lag) / steps;
             if shift > largest {
                 largest = shift;
             }
@@ -98,9 +128,6 @@ impl Evidence<'_> {
     }
 }
 
-/// An echo of which more than this share of its amplitude is unexplained may have been read on another cycle.
-const CYCLE_MISMATCH_LIMIT: f32 = 0.5;
-
 /// What overlapping echoes add to a coating's standard uncertainty; `None` if they may have moved an
 /// arrival by a cycle, or if the coating's front gives no echo of its own behind a delay line: then
 /// nothing is said of the coating.
@@ -112,7 +139,7 @@ pub fn coating_overlap(evidence: &Evidence<'_>) -> Option<Metres> {
         evidence.echoes.iter().find(|echo| echo.role == EchoRole::Coating)?;
         worst = math::larger(worst, evidence.interface()?.mismatch);
     }
-    if worst > CYCLE_MISMATCH_LIMIT {
+    if worst > UNRECOGNISED {
         return None;
     }
     // A rectangular half width, in the coating's own velocity.
@@ -169,11 +196,17 @@ pub fn doubts(evidence: &Evidence<'_>) -> Doubts {
     doubts.raise_if(train.period < facts.envelope_duration, Doubt::NearMinimum);
     doubts.raise_if(train.may_be_double, Doubt::PossibleDouble);
 
-    doubts.raise_if(evidence.differing_shift() > expanded, Doubt::OverlappingEcho);
+    doubts.raise_if(
+        evidence.differing_shift() > expanded + evidence.known_phase(),
+        Doubt::OverlappingEcho,
+    );
     if span == Span::TransmissionPulseToBackWall
         && let Some(first) = evidence.back_wall(1)
     {
-        doubts.raise_if(evidence.shift_by(first.mismatch) > expanded, Doubt::PulseMismatch);
+        doubts.raise_if(
+            evidence.shift(first.mismatch, first.group_lag) > expanded + evidence.known_phase(),
+            Doubt::PulseMismatch,
+        );
     }
     doubts.raise_if(wrong_cycle_probability(evidence) > WRONG_CYCLE_LIMIT, Doubt::LowSignal);
     // A single block covers a point. How far the part lies from it stands in the budget already (velocity,
