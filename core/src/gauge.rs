@@ -9,7 +9,7 @@ use crate::echo::pulse::{PulseContext, PulseFacts, PulseMetrics, ReferencePulse,
 use crate::echo::scan::{Detector, Scan, scan};
 use crate::echo::separation::{Separation, judge, nearest_pair};
 use crate::echo::train::{Rules, Train, Undecided, find_train};
-use crate::echo::{Echo, EchoList, EchoRole, Surroundings, measure_echo};
+use crate::echo::{Echo, EchoList, EchoRole, Surroundings, measure_echo, unexplained_per_sample};
 use crate::math;
 use crate::outcome::{Doubts, NoReading};
 use crate::record::{Record, RecordHealth, SampleRange};
@@ -205,13 +205,39 @@ impl<'w> Gauge<'w> {
     pub fn measure(&mut self, record: &Record<'_>) -> Result<Reading, NoReading> {
         self.findings = Findings::default();
         let range = self.usable_range(record)?;
-        let scan = self.scan(record, range);
-        self.findings.noise = scan.noise;
-        self.measure_echoes(record, range, &scan);
-        let outcome = self.read(record, range, &scan);
+        let mut scan = self.scan(record, range);
+        let mut outcome = self.read(record, range, &scan);
+        // Where echoes fill the record, the scan has taken them for noise; what the fits leave over knows better.
+        if let Some(noise) = self.noise_beside_fits(record) {
+            scan.noise = noise;
+            self.findings.echoes.clear();
+            outcome = self.read(record, range, &scan);
+        }
         // What is known of the pulse helps most where there was no reading.
         self.describe(record);
         outcome
+    }
+
+    /// Noise from what the fitted pulses leave of the back walls: the mean of the two quietest, if that
+    /// is far below the scan's estimate (less could be chance).
+    fn noise_beside_fits(&self, record: &Record<'_>) -> Option<f32> {
+        let (mut quietest, mut second) = (f32::INFINITY, f32::INFINITY);
+        for echo in self
+            .findings
+            .echoes
+            .iter()
+            .filter(|echo| matches!(echo.role, EchoRole::BackWall(_)))
+        {
+            let left = unexplained_per_sample(record, &self.pulse(), echo)?;
+            if left < quietest {
+                (quietest, second) = (left, quietest);
+            } else if left < second {
+                second = left;
+            }
+        }
+        let noise = math::sqrt(0.5 * (quietest + second));
+        let noise = math::larger(noise, record.format().rounding_noise());
+        (noise < 0.7 * self.findings.noise).then_some(noise)
     }
 
     /// Checks what can be checked before looking at the codes' course.
@@ -306,8 +332,10 @@ impl<'w> Gauge<'w> {
         }
     }
 
-    /// From echoes to a reading.
+    /// From candidates to a reading.
     fn read(&mut self, record: &Record<'_>, range: SampleRange, scan: &Scan) -> Result<Reading, NoReading> {
+        self.findings.noise = scan.noise;
+        self.measure_echoes(record, range, scan);
         if self.findings.echoes.is_empty() {
             return Err(self.nothing_found(record, range));
         }

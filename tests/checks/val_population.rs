@@ -124,6 +124,21 @@ fn population(kind: ProbeKind, span: Span, shots: u32, seed: u64) -> Tally {
                     tally.doubted += 1;
                     tally.doubted_gross += u32::from(gross);
                 }
+                if verbose {
+                    let z = (f64::from(reading.thickness.get()) - scene.wall.thickness_mm * 1e-3)
+                        / f64::from(reading.standard_uncertainty.get());
+                    let f = gauge.findings();
+                    println!(
+                        "Z {kind:?} {span:?} {z:.3} {:.1} {} {} {:.0} {:.2} {} {:.2}",
+                        scene.noise.snr_db.unwrap_or(0.0),
+                        scene.probe.centre_frequency_mhz,
+                        scene.probe.relative_bandwidth_percent.unwrap_or(0.0),
+                        scene.wall.thickness_mm,
+                        f64::from(f.noise) / shot.truth.noise_rms_codes.max(0.2887),
+                        f.train.map_or(0, |t| t.echoes),
+                        f.train.map_or(0.0, |t| t.unevenness)
+                    );
+                }
                 if verbose && (gross || !reading.doubts.is_empty()) {
                     println!(
                         "{kind:?} {number}: {:.4} mm {} MHz {} % snr {:.1}: read {} +- {} {} gross {gross}",

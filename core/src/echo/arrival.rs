@@ -13,7 +13,7 @@
 //! What all of them share: an echo whose *phase* differs from the reference pulse is read early or
 //! late by that phase (1 degree is 0.53 ns at 5 MHz). Zero-phase changes of shape do nothing.
 
-use crate::echo::correlation::{Sign, coarse_maximum, correlate_into, refine};
+use crate::echo::correlation::{Sign, coarse_maximum, correlate_into, curvature, refine};
 use crate::echo::envelope::{interpolated_maximum, squared_at, stride};
 use crate::echo::interpolate::{REACH, at};
 use crate::echo::pulse::ReferencePulse;
@@ -51,6 +51,10 @@ pub struct Arrival {
     /// looks like the pulse or like an evenly attenuated one, and just the shift for an echo whose phase is
     /// turned or that something overlaps. Only least squares tells; the others say 0.
     pub group_lag: f32,
+    /// How sharp the correlation's top is over that of the pulse with itself: 1 for an echo of the pulse's
+    /// shape, less for one that has lost its higher frequencies, whose arrival scatters by that much
+    /// more. Between 0.5 and 1.1; 1 from the estimators that do not look.
+    pub sharpness: f32,
 }
 
 /// Where an arrival is looked for.
@@ -131,11 +135,25 @@ fn by_correlation(
     } else {
         0.0
     };
+    let amplitude = value / pulse.facts.energy;
+    let sharpness = if least_squares {
+        sharpness(curvature(lags, place, value), amplitude, pulse)
+    } else {
+        1.0
+    };
     Some(Arrival {
         position,
-        amplitude: value / pulse.facts.energy,
+        amplitude,
         group_lag,
+        sharpness,
     })
+}
+
+/// Curvature of a correlation's top over what the pulse itself would give at this amplitude, kept within what
+/// noise leaves believable.
+#[must_use]
+pub fn sharpness(curvature: f32, amplitude: f32, pulse: &ReferencePulse<'_>) -> f32 {
+    math::clamp(curvature / (amplitude.abs() * pulse.facts.derivative_energy), 0.5, 1.1)
 }
 
 /// How far the envelope of the correlation peaks behind the carrier's top at `place`.
@@ -235,6 +253,7 @@ fn by_window(
         position: SamplePosition::new(base, place - own + pulse.facts.origin),
         amplitude,
         group_lag: 0.0,
+        sharpness: 1.0,
     })
 }
 

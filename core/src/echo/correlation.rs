@@ -146,6 +146,15 @@ pub fn refine(lags: &[f32], place: f32) -> (f32, f32) {
     (place, value)
 }
 
+/// Downward curvature of the interpolated correlation at `place`, per sample², as the sign of `value` (the
+/// correlation there) sees it: positive at a maximum, and at a minimum of a negative correlation.
+#[must_use]
+pub fn curvature(lags: &[f32], place: f32, value: f32) -> f32 {
+    let beside = interpolate::at(lags, place - STEP) + interpolate::at(lags, place + STEP);
+    let down = (2.0 * value - beside) / (STEP * STEP);
+    if value < 0.0 { -down } else { down }
+}
+
 /// Slope of the interpolated correlation at `place`, per sample.
 #[must_use]
 #[inline(never)]

@@ -121,7 +121,8 @@ impl Surroundings<'_> {
 /// Fits the reference pulse near `index`, within three quarters of a cycle. `None` if the pulse would stand out of
 /// the record.
 ///
-/// The standard uncertainty is the Cramér-Rao bound, which the fit reaches in white noise. It knows
+/// The standard uncertainty is noise · sqrt(Σ s'²) over the curvature of the correlation's top: for an echo
+/// of the pulse's shape the Cramér-Rao bound, which the fit reaches in white noise. It knows
 /// nothing of a wrong pulse, of overlapping echoes and of coherent noise: see [`Echo::mismatch`].
 #[must_use]
 pub fn measure_echo(surroundings: &Surroundings<'_>, index: u32, sign: Sign, scratch: &mut [f32]) -> Option<Echo> {
@@ -147,16 +148,13 @@ pub fn echo_at(surroundings: &Surroundings<'_>, arrival: Arrival) -> Option<Echo
     if !(amplitude > 0.0) {
         return None;
     }
-    let length = pulse.samples.len();
-    let start = SamplePosition::new(arrival.position.index, arrival.position.fraction - pulse.facts.origin);
-    let start = start.index as usize;
-    let under = record.codes().get(start..start.checked_add(length)?)?;
+    let under = under(record, pulse, arrival.position)?;
     let (upper, lower) = (record.format().upper_rail(), record.format().lower_rail());
     let clipped = under.iter().any(|&code| code >= upper || code <= lower);
 
     let explained = amplitude * amplitude * pulse.facts.energy;
     // Three numbers were fitted: delay, amplitude, mean. Chance adds up to five standard deviations.
-    let freedom = length as f32 - 3.0;
+    let freedom = under.len() as f32 - 3.0;
     let from_noise = noise * noise * (freedom + 5.0 * math::sqrt(2.0 * freedom));
     let excess = (energy(under) - explained - from_noise) / explained;
     let clock = record.clock();
@@ -169,7 +167,7 @@ pub fn echo_at(surroundings: &Surroundings<'_>, arrival: Arrival) -> Option<Echo
     Some(Echo {
         position: arrival.position,
         arrival: clock.time_of(arrival.position),
-        standard_uncertainty: clock.rate.period() * surroundings.arrival_noise(amplitude),
+        standard_uncertainty: clock.rate.period() * surroundings.arrival_noise(amplitude * arrival.sharpness),
         amplitude,
         polarity: if arrival.amplitude < 0.0 {
             Polarity::Negative
@@ -182,6 +180,22 @@ pub fn echo_at(surroundings: &Surroundings<'_>, arrival: Arrival) -> Option<Echo
         clipped,
         role: EchoRole::Other,
     })
+}
+
+/// The samples under an echo's pulse.
+fn under<'r>(record: &Record<'r>, pulse: &ReferencePulse<'_>, position: SamplePosition) -> Option<&'r [i16]> {
+    let start = SamplePosition::new(position.index, position.fraction - pulse.facts.origin);
+    let start = start.index as usize;
+    record.codes().get(start..start.checked_add(pulse.samples.len())?)
+}
+
+/// Mean square of what a fitted pulse leaves of an echo, in squared codes: the noise's variance if nothing else is
+/// there, more if the shapes differ. Delay, amplitude and mean were fitted.
+#[must_use]
+pub fn unexplained_per_sample(record: &Record<'_>, pulse: &ReferencePulse<'_>, echo: &Echo) -> Option<f32> {
+    let codes = under(record, pulse, echo.position)?;
+    let left = energy(codes) - echo.amplitude * echo.amplitude * pulse.facts.energy;
+    Some(math::larger(left, 0.0) / math::larger(codes.len() as f32 - 3.0, 1.0))
 }
 
 /// The echoes of one record in the order of their arrival.

@@ -19,8 +19,8 @@
 //! Fails, and says so only by [`Train::may_be_double`]: first echo inside the dead zone and fewer than
 //! two visible ones.
 
-use crate::echo::arrival::Arrival;
-use crate::echo::correlation::{correlate_into, slope};
+use crate::echo::arrival::{Arrival, sharpness};
+use crate::echo::correlation::{correlate_into, curvature, slope};
 use crate::echo::interpolate::{self, REACH};
 use crate::echo::{Echo, EchoList, EchoRole, Polarity, Surroundings, echo_at};
 use crate::math;
@@ -377,6 +377,8 @@ struct Member {
     first_lag: i32,
     /// Fitted amplitude in codes, with sign.
     amplitude: f32,
+    /// Root of its weight: the amplitude, less what its correlation's top is blunter than the pulse's.
+    weight: f32,
     /// Distance of its own arrival from the line, in samples.
     off: f32,
 }
@@ -418,11 +420,13 @@ fn fit(
             let place = line.place(usize::from(member.step)) - origin - member.first_lag as f32;
             let value = interpolate::at(window, place);
             member.amplitude = value / surroundings.pulse.facts.energy;
-            member.off = slope(window, place) / (member.amplitude * surroundings.pulse.facts.derivative_energy);
+            let sharp = sharpness(curvature(window, place, value), member.amplitude, &surroundings.pulse);
+            member.weight = member.amplitude.abs() * sharp;
+            member.off = slope(window, place) / (member.amplitude * sharp * surroundings.pulse.facts.derivative_energy);
             // A step beyond a tenth of a cycle is noise or another cycle: the line decides, not the echo.
             let limit = 0.1 * surroundings.samples_per_cycle;
             let off = math::clamp(member.off, -limit, limit);
-            let (n, weight) = (f32::from(member.step), member.amplitude * member.amplitude);
+            let (n, weight) = (f32::from(member.step), member.weight * member.weight);
             s0 += weight;
             s1 += weight * n;
             s2 += weight * n * n;
@@ -447,8 +451,8 @@ fn fit(
     let determinant = s0 * s2 - s1 * s1;
     let (mut scatter, mut strongest) = (0.0, 0.0);
     for member in &members {
-        strongest = math::larger(strongest, member.amplitude * member.amplitude);
-        scatter += member.off * member.off * member.amplitude * member.amplitude / variance;
+        strongest = math::larger(strongest, member.weight * member.weight);
+        scatter += member.off * member.off * member.weight * member.weight / variance;
     }
     let freedom = members.len().saturating_sub(2) as u8;
     let unevenness = if freedom > 0 { scatter / f32::from(freedom) } else { 0.0 };
@@ -534,6 +538,7 @@ fn collect(
                 step,
                 first_lag,
                 amplitude: sign * amplitude,
+                weight: amplitude,
                 off: 0.0,
             });
         } else {
@@ -570,6 +575,7 @@ fn give_roles(
                 amplitude: member.amplitude,
                 // The fit has not looked: the strong multiples speak for the train.
                 group_lag: 0.0,
+                sharpness: member.weight / member.amplitude.abs(),
             },
         ) {
             echo.role = EchoRole::BackWall(multiple);
