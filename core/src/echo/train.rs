@@ -143,6 +143,7 @@ struct Hypothesis {
 }
 
 type Teeth = Vec<Tooth, ECHO_CAPACITY>;
+type Members = Vec<Member, ECHO_CAPACITY>;
 
 /// Finds the train among `echoes`, gives them their roles, adds weak multiples that only the fit could find, and fits.
 ///
@@ -150,12 +151,26 @@ type Teeth = Vec<Tooth, ECHO_CAPACITY>;
 ///
 /// # Errors
 /// [`Undecided`].
+#[inline(never)]
 pub fn find_train(
     surroundings: &Surroundings<'_>,
     echoes: &mut EchoList,
     rules: &Rules,
     lags: &mut [f32; ECHO_CAPACITY * TRAIN_LAGS],
 ) -> Result<Train, Undecided> {
+    let tolerance = 0.2 * surroundings.samples_per_cycle;
+    let best = choose(surroundings, echoes, rules, tolerance)?;
+    Ok(fit(surroundings, echoes, rules, &best, tolerance, lags))
+}
+
+/// The best hypothesis, if it leads.
+#[inline(never)]
+fn choose(
+    surroundings: &Surroundings<'_>,
+    echoes: &EchoList,
+    rules: &Rules,
+    tolerance: f32,
+) -> Result<Hypothesis, Undecided> {
     let sigma = surroundings.amplitude_noise();
     let at_threshold = math::ln(1.0 + rules.threshold * rules.threshold / 3.0);
     let mut teeth: Teeth = Vec::new();
@@ -169,13 +184,6 @@ pub fn find_train(
             gain,
         });
     }
-    let tolerance = 0.2 * surroundings.samples_per_cycle;
-    let best = choose(&teeth, rules, tolerance, at_threshold)?;
-    Ok(fit(surroundings, echoes, rules, &best, tolerance, lags))
-}
-
-/// The best hypothesis, if it leads.
-fn choose(teeth: &Teeth, rules: &Rules, tolerance: f32, at_threshold: f32) -> Result<Hypothesis, Undecided> {
     let mut ranked: Vec<Hypothesis, 8> = Vec::new();
     let mut consider = |anchor: f32, number: u32, period: f32| {
         if !(period >= rules.shortest) {
@@ -195,11 +203,11 @@ fn choose(teeth: &Teeth, rules: &Rules, tolerance: f32, at_threshold: f32) -> Re
             first: 0,
             last: 0,
         };
-        polish(&mut hypothesis, teeth, tolerance);
+        polish(&mut hypothesis, &teeth, tolerance);
         if !(hypothesis.period >= rules.shortest) {
             return;
         }
-        score(&mut hypothesis, teeth, rules, tolerance, at_threshold);
+        score(&mut hypothesis, &teeth, rules, tolerance, at_threshold);
         rank(&mut ranked, hypothesis, tolerance);
     };
     for (i, tooth) in teeth.iter().enumerate() {
@@ -384,6 +392,7 @@ struct Member {
 }
 
 /// Joint least squares of start and period over all multiples.
+#[inline(never)]
 fn fit(
     surroundings: &Surroundings<'_>,
     echoes: &mut EchoList,
@@ -411,7 +420,8 @@ fn fit(
         period: best.period,
     };
     let origin = surroundings.pulse.facts.origin;
-    let mut members = collect(surroundings, rules, best, &line, sign, lags);
+    let mut members = Members::new();
+    collect(surroundings, rules, best, &line, sign, lags, &mut members);
     let (mut s0, mut s1, mut s2) = (0.0, 0.0, 0.0);
     for _ in 0..3 {
         (s0, s1, s2) = (0.0, 0.0, 0.0);
@@ -500,8 +510,8 @@ fn collect(
     line: &Line,
     sign: f32,
     lags: &mut [f32; ECHO_CAPACITY * TRAIN_LAGS],
-) -> Vec<Member, ECHO_CAPACITY> {
-    let mut members: Vec<Member, ECHO_CAPACITY> = Vec::new();
+    members: &mut Members,
+) {
     let codes = surroundings.record.codes();
     let minimum = FIT_MINIMUM * surroundings.amplitude_noise();
     let pulse = &surroundings.pulse;
@@ -548,7 +558,6 @@ fn collect(
             }
         }
     }
-    members
 }
 
 /// Roles for the echoes of the train, and entries for weak multiples that only the fit found.
