@@ -1,0 +1,160 @@
+//! What a set-up means for one record: where the wall begins, what its train may look like, which times
+//! the thickness is made from, which echo shows the pulse best.
+
+use crate::echo::scan::{Detector, Scan};
+use crate::echo::train::{Rules, Train};
+use crate::echo::{Echo, EchoList, EchoRole, Surroundings};
+use crate::math;
+use crate::outcome::NoReading;
+use crate::record::{Record, SampleRange};
+use crate::setup::{GaugeSetup, ProbeKind, Span};
+use crate::units::Seconds;
+use crate::wall::thickness::{self, Timed, TrainTimes};
+
+/// An interface echo is the first one that reaches this share of the strongest.
+const INTERFACE_SHARE: f32 = 0.35;
+
+/// Where the wall begins, in samples from the record's first; marks the interface echo and the
+/// coating's far side on the way.
+///
+/// # Errors
+/// [`NoReading::NoInterfaceEcho`] where the span needs one.
+pub fn start_of_wall(setup: &GaugeSetup, record: &Record<'_>, echoes: &mut EchoList) -> Result<f32, NoReading> {
+    let clock = record.clock();
+    if setup.probe.kind != ProbeKind::DelayLine {
+        return if thickness::wall_span(setup) == Span::InterfaceToBackWall {
+            Err(NoReading::NoInterfaceEcho)
+        } else {
+            Ok(clock.samples_at(setup.zero.offset))
+        };
+    }
+    let strongest = echoes.iter().fold(0.0, |m, echo| math::larger(m, echo.amplitude));
+    let main = echoes
+        .iter()
+        .position(|echo| echo.amplitude >= INTERFACE_SHARE * strongest);
+    let Some(main) = main else {
+        return Err(NoReading::NoInterfaceEcho);
+    };
+    let coated = setup.coating.is_some();
+    let mut place = 0.0;
+    for (number, echo) in echoes.iter_mut().enumerate().take(main + 1) {
+        if number == main {
+            // Behind a coating the strong echo is the coating's far side, if its front shows too.
+            echo.role = if coated && main > 0 {
+                EchoRole::Coating
+            } else {
+                EchoRole::Interface
+            };
+            place = echo.position.as_samples();
+        } else if coated && number + 1 == main {
+            echo.role = EchoRole::Interface;
+        }
+    }
+    let offset = if thickness::wall_span(setup) == Span::InterfaceToBackWall {
+        setup.zero.offset
+    } else {
+        Seconds::ZERO
+    };
+    Ok(place + offset.get() * clock.rate.get())
+}
+
+/// What the train may look like.
+#[must_use]
+pub fn rules(
+    setup: &GaugeSetup,
+    surroundings: &Surroundings<'_>,
+    range: SampleRange,
+    scan: &Scan,
+    detector: &Detector,
+    start: f32,
+) -> Rules {
+    let facts = &surroundings.pulse.facts;
+    let format = surroundings.record.format();
+    let shortest = thickness::SMALLEST_SPACING * facts.envelope_duration;
+    // The pulse has to lie inside the window's record as a whole to be measured.
+    let edge = range.start as f32 + if range.start == 0 { facts.origin } else { 0.0 };
+    let mut visible_to = range.end as f32;
+    let (visible_from, start_tolerance) = if setup.probe.kind == ProbeKind::DelayLine {
+        // From the delay line's own second echo on, at twice the time of its first, two trains would mix.
+        // Its zero is not known better than to a few per cent: stay clear of it.
+        let trigger = surroundings.record.clock().samples_at(Seconds::ZERO);
+        let second = trigger + 1.97 * (start - trigger);
+        visible_to = math::smaller(visible_to, second - facts.envelope_duration);
+        (
+            math::larger(edge, start + shortest),
+            0.6 * surroundings.samples_per_cycle,
+        )
+    } else {
+        let zero = 3.0 * setup.zero.standard_uncertainty.get() * setup.sample_rate.get();
+        // Through a coating of unknown thickness the train may begin anywhere.
+        let tolerance = if setup.coating.is_some() { f32::INFINITY } else { zero };
+        (edge, 0.6 * surroundings.samples_per_cycle + tolerance)
+    };
+    Rules {
+        start,
+        start_tolerance,
+        shortest,
+        visible_from,
+        visible_to,
+        threshold: scan.threshold / detector.counts_per_code(format) / surroundings.amplitude_noise(),
+    }
+}
+
+/// The times that thickness and budget are made from.
+#[must_use]
+pub fn times(record: &Record<'_>, train: &Train, echoes: &[Echo]) -> TrainTimes {
+    let clock = record.clock();
+    let seconds = |samples: f32| clock.rate.period() * samples;
+    let role = |role: EchoRole| echoes.iter().find(|echo| echo.role == role);
+    let timed = |echo: &Echo| Timed::new(echo.arrival, echo.standard_uncertainty);
+    let period = train.period_uncertainty.map(|u| {
+        // Arrivals that scatter more than noise explains widen the period's uncertainty (Birge's
+        // ratio), once they do so beyond chance.
+        let limit = 1.0 + 3.0 * math::sqrt(2.0 / f32::from(train.freedom).max(1.0));
+        let ratio = if train.unevenness > limit {
+            math::sqrt(train.unevenness)
+        } else {
+            1.0
+        };
+        Timed::new(seconds(train.period), seconds(u * ratio))
+    });
+    let first = role(EchoRole::BackWall(1)).map(timed).unwrap_or_else(|| {
+        // The first back wall lies in the dead zone: it follows from the others.
+        let steps = f32::from(train.first_multiple) - 1.0;
+        let u = period.map_or(Seconds::ZERO, |p| {
+            p.standard_uncertainty * f32::from(train.first_multiple)
+        });
+        Timed::new(clock.time_of(train.first) - seconds(train.period) * steps, u)
+    });
+    let mut times = TrainTimes::single(first);
+    if let Some(period) = period {
+        times = times.with_period(period, train.correlation);
+    }
+    if let Some(interface) = role(EchoRole::Interface) {
+        times = times.with_interface(timed(interface));
+    }
+    times
+}
+
+/// The strongest echo that is not clipped, a back wall if there is one, and its distance in samples
+/// to the nearest other.
+#[must_use]
+pub fn clearest(echoes: &[Echo]) -> Option<(Echo, f32)> {
+    let is_wall = |echo: &Echo| matches!(echo.role, EchoRole::BackWall(_));
+    let mut best: Option<Echo> = None;
+    for echo in echoes.iter().filter(|echo| !echo.clipped) {
+        let better = best.is_none_or(|b| (is_wall(echo), echo.amplitude) > (is_wall(&b), b.amplitude));
+        if better {
+            best = Some(*echo);
+        }
+    }
+    let best = best?;
+    let mut room = f32::INFINITY;
+    for echo in echoes {
+        let distance = echo.position.samples_after(best.position).abs();
+        if distance > 0.0 && distance < room {
+            room = distance;
+        }
+    }
+    Some((best, room))
+}

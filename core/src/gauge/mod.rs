@@ -1,0 +1,214 @@
+//! The facade: one record in, a reading or a refusal out.
+//!
+//! [`Gauge::measure`] runs the steps in their order ([`steps`]): health of the record, scan, echoes,
+//! interface, train, times, thickness, budget, doubts. Every step stays public, for who wants to build
+//! another gauge from them; [`interpretation`] holds what a set-up means for one record.
+
+pub mod interpretation;
+mod steps;
+
+use crate::echo::EchoList;
+use crate::echo::pulse::{PulseFacts, PulseMetrics, ReferencePulse, learn, model};
+use crate::echo::scan::Detector;
+use crate::echo::separation::Separation;
+use crate::echo::train::Train;
+use crate::outcome::{Doubts, NoReading};
+use crate::record::{Record, RecordHealth};
+use crate::setup::{GaugeSetup, SetupError};
+use crate::units::Metres;
+use crate::wall::uncertainty::Budget;
+use crate::workspace::Workspace;
+
+/// A thickness that can be signed for.
+#[derive(Clone, Debug, PartialEq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
+pub struct Reading {
+    /// The wall, without any coating.
+    pub thickness: Metres,
+    /// Its standard uncertainty (k = 1): the budget's combined value.
+    pub standard_uncertainty: Metres,
+    /// k of the expanded uncertainty.
+    pub coverage_factor: f32,
+    /// The coating, where the set-up names one and the echoes show it.
+    pub coating: Option<CoatingReading>,
+    /// Upper bound of the probability that another cycle was read.
+    pub wrong_cycle_probability: f32,
+    /// Reasons to look twice.
+    pub doubts: Doubts,
+    /// Where the uncertainty comes from.
+    pub budget: Budget,
+}
+
+impl Reading {
+    /// Expanded uncertainty: coverage factor times standard uncertainty.
+    #[must_use]
+    pub fn expanded(&self) -> Metres {
+        self.standard_uncertainty * self.coverage_factor
+    }
+}
+
+/// A coating's thickness.
+#[derive(Clone, Copy, Debug, PartialEq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
+pub struct CoatingReading {
+    /// Its thickness.
+    pub thickness: Metres,
+    /// Standard uncertainty (k = 1).
+    pub standard_uncertainty: Metres,
+}
+
+/// What the last record held, whether or not it gave a reading.
+#[derive(Clone, Debug, PartialEq, Default)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
+pub struct Findings {
+    /// Extremes and clipped samples inside the window.
+    pub health: RecordHealth,
+    /// Root mean square of the noise per sample, in codes.
+    pub noise: f32,
+    /// The echoes in the order of their arrival.
+    pub echoes: EchoList,
+    /// The multiples of the wall, if they could be told.
+    pub train: Option<Train>,
+    /// The pulse as the best echo shows it; `None` if no echo stands high enough above the noise.
+    pub pulse: Option<PulseMetrics>,
+    /// The nearest pair of echoes; `None` with fewer than two.
+    pub separation: Option<Separation>,
+}
+
+/// A gauge: set-up, scratch memory and the reference pulse.
+#[derive(Debug)]
+pub struct Gauge<'w> {
+    setup: GaugeSetup,
+    workspace: Workspace<'w>,
+    facts: PulseFacts,
+    detector: Detector,
+    learned: bool,
+    findings: Findings,
+}
+
+impl<'w> Gauge<'w> {
+    /// Makes a gauge with the pulse that the probe's data sheet promises.
+    ///
+    /// # Errors
+    /// A wrong set-up, a pulse that does not fit, or scratch memory that is too small.
+    #[inline(never)]
+    pub fn new(setup: GaugeSetup, workspace: Workspace<'w>) -> Result<Self, SetupError> {
+        if let Some(error) = setup.check() {
+            return Err(error);
+        }
+        let facts = model(&setup, workspace.pulse)?;
+        let needed = 2 * u32::from(facts.length);
+        let got = u32::try_from(workspace.envelope.len()).unwrap_or(u32::MAX);
+        if got < needed {
+            return Err(SetupError::WorkspaceTooSmall { needed, got });
+        }
+        let detector = Detector::default();
+        let mut gauge = Self {
+            setup,
+            workspace,
+            facts,
+            detector,
+            learned: false,
+            findings: Findings::default(),
+        };
+        gauge.fit_detector();
+        Ok(gauge)
+    }
+
+    /// Replaces the reference pulse by one learned from an echo.
+    ///
+    /// `samples` are at the set-up's sample rate. The pulse is scaled to an envelope peak of 1, and
+    /// its origin is the interpolated maximum of its envelope.
+    ///
+    /// # Errors
+    /// [`SetupError::PulseTooLong`] or [`SetupError::PulseEmpty`]; the modelled pulse is in force then.
+    pub fn learn_pulse(&mut self, samples: &[f32]) -> Result<(), SetupError> {
+        let learned = learn(samples, self.setup.samples_per_cycle(), self.workspace.pulse);
+        self.learned = learned.is_ok();
+        let result = match learned {
+            Ok(facts) => {
+                self.facts = facts;
+                Ok(())
+            }
+            Err(error) => {
+                self.facts = model(&self.setup, self.workspace.pulse)?;
+                Err(error)
+            }
+        };
+        self.fit_detector();
+        result
+    }
+
+    /// Takes another set-up, after a calibration or from a menu. The reference pulse is kept if the
+    /// sample rate and the probe's frequency and bandwidth are the same, and modelled again if not.
+    ///
+    /// # Errors
+    /// A wrong set-up; the old one stays in force.
+    pub fn change_setup(&mut self, setup: GaugeSetup) -> Result<(), SetupError> {
+        if let Some(error) = setup.check() {
+            return Err(error);
+        }
+        let (old, new) = (&self.setup.probe, &setup.probe);
+        let same_pulse = self.setup.sample_rate == setup.sample_rate
+            && old.centre_frequency == new.centre_frequency
+            && old.relative_bandwidth == new.relative_bandwidth;
+        if !same_pulse {
+            // Only a pulse that is too long can fail, and then the old one is written back.
+            let modelled = model(&setup, self.workspace.pulse);
+            self.learned = false;
+            if let Err(error) = modelled {
+                self.facts = model(&self.setup, self.workspace.pulse)?;
+                self.fit_detector();
+                return Err(error);
+            }
+            self.facts = modelled?;
+        }
+        self.setup = setup;
+        self.fit_detector();
+        Ok(())
+    }
+
+    /// The set-up in force.
+    #[must_use]
+    pub const fn setup(&self) -> &GaugeSetup {
+        &self.setup
+    }
+
+    /// The reference pulse in force.
+    #[must_use]
+    pub fn pulse(&self) -> ReferencePulse<'_> {
+        ReferencePulse::new(self.workspace.pulse, self.facts)
+    }
+
+    /// What the last record held: echoes, pulse, separation.
+    #[must_use]
+    pub const fn findings(&self) -> &Findings {
+        &self.findings
+    }
+
+    fn fit_detector(&mut self) {
+        let pulse = ReferencePulse::new(self.workspace.pulse, self.facts);
+        self.detector = Detector::new(self.setup.samples_per_cycle(), &pulse, self.workspace.skirt);
+    }
+
+    /// Measures one record.
+    ///
+    /// # Errors
+    /// A refusal with its evidence: a normal outcome. [`Gauge::findings`] tells what was seen.
+    #[inline(never)]
+    pub fn measure(&mut self, record: &Record<'_>) -> Result<Reading, NoReading> {
+        self.findings = Findings::default();
+        let range = self.usable_range(record)?;
+        let mut scan = self.scan(record, range);
+        let mut outcome = self.read(record, range, &scan);
+        // Where echoes fill the record, the scan has taken them for noise; what the fits leave over knows better.
+        if let Some(noise) = self.noise_beside_fits(record) {
+            scan.noise = noise;
+            self.findings.echoes.clear();
+            outcome = self.read(record, range, &scan);
+        }
+        // What is known of the pulse helps most where there was no reading.
+        self.describe(record);
+        outcome
+    }
+}
