@@ -1,6 +1,6 @@
 //! The application: does what the link asks for, one message at a time.
 
-use crate::acquire::{FrontEnd, Request};
+use crate::acquire::{self, FrontEnd};
 use crate::link::{
     Hello, LinkError, Message, PROTOCOL, SetUp, SharedPort, Status, Take, UNKNOWN_CHOICE, setup_error_code,
 };
@@ -23,6 +23,33 @@ pub enum Step {
     Finished,
     /// The line does not work; the next step may find it working again.
     LineFault,
+}
+
+/// What a message asks for.
+#[derive(Clone, Copy, Debug)]
+enum Request {
+    Hello(u8),
+    /// A set-up was tried; this is the answer.
+    SetUp(u8),
+    Take(Take),
+    Query,
+    Bye,
+    Nothing,
+}
+
+/// Makes and sends a message in a frame of its own.
+#[inline(never)]
+fn send<L: Read + ReadReady + Write>(
+    port: &SharedPort<'_, L>,
+    make: impl FnOnce() -> Message,
+) -> Result<(), LinkError> {
+    port.send(&make())
+}
+
+/// Sends a report; its copy for the link lives no longer than that.
+#[inline(never)]
+fn send_report<L: Read + ReadReady + Write>(port: &SharedPort<'_, L>, report: &Report<'_>) -> Result<(), LinkError> {
+    port.send(&Message::Report(report.to_link()))
 }
 
 /// Memory for one record.
@@ -79,40 +106,47 @@ where
 
     /// Answers one message, if there is one. Ends in bounded time whatever the other end does.
     pub fn step(&mut self) -> Step {
-        match self.port.poll() {
+        // Messages are large, and a measurement needs the stack: each is gone before the next thing begins.
+        match self.next_request() {
+            Ok(Some(request)) => self.serve(&request).unwrap_or(Step::LineFault),
             Ok(None) => Step::Idle,
-            Ok(Some(message)) => self.serve(&message).unwrap_or(Step::LineFault),
             Err(_) => Step::LineFault,
         }
     }
 
-    fn serve(&mut self, message: &Message) -> Result<Step, LinkError> {
-        match message {
-            Message::Hello(hello) => {
+    #[inline(never)]
+    fn next_request(&mut self) -> Result<Option<Request>, LinkError> {
+        Ok(self.port.poll()?.map(|message| match message {
+            Message::Hello(hello) => Request::Hello(hello.protocol),
+            Message::SetUp(setup) if self.introduced => Request::SetUp(self.change_setup(&setup)),
+            Message::Take(take) if self.introduced => Request::Take(take),
+            Message::Query if self.introduced => Request::Query,
+            Message::Bye if self.introduced => Request::Bye,
+            _ => Request::Nothing,
+        }))
+    }
+
+    fn serve(&mut self, request: &Request) -> Result<Step, LinkError> {
+        match request {
+            Request::Hello(protocol) => {
                 // Whoever speaks another version learns ours, and is not listened to.
-                self.introduced = hello.protocol == PROTOCOL;
+                self.introduced = *protocol == PROTOCOL;
                 let samples = u16::try_from(self.memory.codes.len()).unwrap_or(u16::MAX);
                 let answer = Hello {
                     protocol: PROTOCOL,
                     samples,
                 };
-                self.port.send(&Message::Hello(answer))?;
+                send(&self.port, || Message::Hello(answer))?;
             }
-            Message::SetUp(setup) if self.introduced => {
-                let answer = self.change_setup(setup);
-                self.port.send(&Message::SetUpTaken(answer))?;
-            }
-            Message::Take(take) if self.introduced => {
-                let report = self.take(take).to_link();
-                self.port.send(&Message::Report(report))?;
+            Request::SetUp(answer) => send(&self.port, || Message::SetUpTaken(*answer))?,
+            Request::Take(take) => {
+                let port = self.port;
+                send_report(&port, &self.take(take))?;
                 self.reports = self.reports.saturating_add(1);
             }
-            Message::Query if self.introduced => {
-                let status = self.status();
-                self.port.send(&Message::Status(status))?;
-            }
-            Message::Bye if self.introduced => return Ok(Step::Finished),
-            _ => {
+            Request::Query => send(&self.port, || Message::Status(self.status()))?,
+            Request::Bye => return Ok(Step::Finished),
+            Request::Nothing => {
                 self.port.count_unexpected();
                 return Ok(Step::Dropped);
             }
@@ -129,8 +163,9 @@ where
     }
 
     /// Acquires, measures, and tells the sink.
+    #[inline(never)]
     pub fn take(&mut self, take: &Take) -> Report<'_> {
-        let request = Request {
+        let request = acquire::Request {
             shots: take.shots,
             samples: usize::from(take.samples),
             gain: take.gain,

@@ -8,7 +8,8 @@ use std::process::{Child, Command, Stdio};
 use std::thread;
 use std::time::{Duration, Instant};
 
-const EMULATOR: &str = "qemu-system-arm";
+/// The program.
+pub const EMULATOR: &str = "qemu-system-arm";
 
 /// Far beyond what the records need, even on a busy machine.
 const PATIENCE: Duration = Duration::from_secs(60);

@@ -13,6 +13,7 @@ macro_rules! say {
 }
 
 mod compare;
+mod device;
 mod emulator;
 mod figures;
 mod image;
@@ -28,6 +29,9 @@ usage: cargo board VERB
 
   build [TARGET]  cross build: the core for Cortex-M4F and Cortex-M0+, and the image `measure`;
                   with TARGET (thumbv7em-none-eabihf, thumbv6m-none-eabi) only for that one
+  device          the gauge in the emulator fires at the simulator here: 200 readings of different walls,
+                  gains and averages on a Cortex-M4F, 20 without floating point unit, each the same as this
+                  machine's to the last bit; then faults on purpose, and the decoded log
   panics          no panic can be reached in the image, and the check that says so can fail
   figures         instructions, flash, static RAM and stack, beside the budgets of tests/board_budget.toml
   records         make the canned records again from their scenes (firmware-example/mps2/records)
@@ -101,6 +105,7 @@ fn main() -> ExitCode {
         ["build"] => build(&mut checks, &[CORTEX_M4F, CORTEX_M0_PLUS]),
         ["build", target] if [CORTEX_M4F, CORTEX_M0_PLUS].contains(target) => build(&mut checks, &[target]),
         ["run"] => compare::run(&mut checks),
+        ["device"] => device::run(&mut checks),
         ["panics"] => panics::run(&mut checks),
         ["figures"] => figures::run(&mut checks),
         ["records"] => return told(records::write()),

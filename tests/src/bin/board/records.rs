@@ -16,9 +16,14 @@ fn file(name: &str, ending: &str) -> PathBuf {
         .join(format!("{name}.{ending}"))
 }
 
+/// The scene of a record.
+pub fn scene_of(name: &str) -> Result<Scene, String> {
+    read_scene(&file(name, "toml")).map_err(|error| error.to_string())
+}
+
 /// The scene of a record, and its codes.
 fn make(name: &str) -> Result<(Scene, Vec<i16>), String> {
-    let scene = read_scene(&file(name, "toml")).map_err(|error| error.to_string())?;
+    let scene = scene_of(name)?;
     let shot = synthesise(&scene, SEED).map_err(|error| format!("{name}: {error}"))?;
     Ok((scene, shot.codes))
 }

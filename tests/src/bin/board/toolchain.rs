@@ -86,7 +86,7 @@ impl Toolchain {
         for compiler in &compilers {
             if let Some(sources) = core_sources(compiler) {
                 let toolchain = found(compiler, Some(sources));
-                if toolchain.linker.is_none() && own_linker(compiler).is_none() && target == CORTEX_M4F {
+                if toolchain.linker.is_none() && own_linker(compiler).is_none() {
                     return Err(Trouble::Missing(
                         "no linker for the microcontroller. On Debian:\n  apt-get install -y --no-install-recommends lld"
                             .to_owned(),
@@ -146,6 +146,27 @@ impl Toolchain {
             .map_err(Trouble::Failed)
     }
 
+    /// Builds the image `gauge`, or, while a panic can be reached, one that says so when it happens.
+    pub fn build_gauge_anyhow(&self) -> Result<PathBuf, Trouble> {
+        let build = |features: Features| {
+            let mut cargo = self.cargo();
+            cargo.args(["--package", "halfpulse-mps2", "--bin", "gauge"]);
+            cargo.args(["--features", features.list()]);
+            run_cargo(cargo)?;
+            Ok(target_folder().join(&self.target).join("firmware/gauge"))
+        };
+        build(Features::Normal)
+            .or_else(|text: String| {
+                if text.contains(REACHABLE) {
+                    say!("note: {REACHABLE} (see `cargo board panics`); this image carries a panic handler");
+                    build(Features::PanicReport)
+                } else {
+                    Err(text)
+                }
+            })
+            .map_err(Trouble::Failed)
+    }
+
     fn cargo(&self) -> Command {
         let mut cargo = Command::new(env::var_os("CARGO").unwrap_or_else(|| "cargo".into()));
         cargo.current_dir(root()).stdin(Stdio::null());
@@ -166,6 +187,8 @@ impl Toolchain {
         ]);
         cargo.arg(target_folder());
         cargo.env("RUSTC", &self.compiler);
+        // Which log lines are compiled in: without it only errors.
+        cargo.env("DEFMT_LOG", "info");
         if self.sources.is_some() {
             // Only on this command line: in a configuration file both would reach host builds too.
             cargo.arg("-Zbuild-std=core").env("RUSTC_BOOTSTRAP", "1");

@@ -1,0 +1,111 @@
+//! Where readings are taken: the scenes of the canned records, each with another wall, noise, gain and
+//! number of shots. A place depends on its number alone.
+
+use crate::records::scene_of;
+use halfpulse::GaugeSetup;
+use halfpulse_app::link::frame::write_frame;
+use halfpulse_app::link::{GainChoice, LinkReport, Message, Take};
+use halfpulse_mps2::canned::RECORDS;
+use halfpulse_sim::Scene;
+use halfpulse_sim::device::SimulatedReceiver;
+use halfpulse_sim::front_end::{Purpose, Random};
+
+/// Of the random numbers that make the places.
+const SEED: u64 = 2026;
+
+/// A scene with the set-up that belongs to it.
+#[derive(Clone, Debug)]
+pub struct Base {
+    name: &'static str,
+    scene: Scene,
+    setup: GaugeSetup,
+}
+
+/// The scenes of the canned records.
+pub fn bases() -> Result<Vec<Base>, String> {
+    let base = |record: &halfpulse_mps2::canned::Canned| {
+        Ok(Base {
+            name: record.name,
+            scene: scene_of(record.name)?,
+            setup: record.setup,
+        })
+    };
+    RECORDS.iter().map(base).collect()
+}
+
+/// One place with the request for its reading.
+#[derive(Clone, Debug)]
+pub struct Place {
+    /// What it is, for people.
+    pub name: String,
+    /// The set-up of the gauge.
+    pub setup: GaugeSetup,
+    /// The request.
+    pub take: Take,
+    scene: Scene,
+    seed: u64,
+}
+
+impl Place {
+    /// The place of this number.
+    pub fn new(bases: &[Base], number: u32) -> Self {
+        let mut random = Random::new(SEED, Purpose::Variation, u64::from(number));
+        let mut between = |low: f64, high: f64| low + (high - low) * random.uniform();
+        // Set-ups change now and then, not for every reading.
+        let base = &bases[(number as usize / 4) % bases.len()];
+        let mut scene = base.scene.clone();
+        scene.wall.thickness_mm *= between(0.5, 2.0);
+        if let Some(coating) = &mut scene.coating {
+            coating.thickness_mm *= between(0.6, 1.6);
+        }
+        // From clean to hopeless.
+        let has_echoes = scene.record.gain_db.is_none_or(|gain| gain > -100.0);
+        if has_echoes {
+            scene.noise.rms_steps = None;
+            scene.noise.snr_db = Some(between(8.0, 50.0));
+        }
+        let gain = if !has_echoes {
+            // The probe in the air: what reaches the receiver stays below its noise at any gain.
+            scene.wall.thickness_mm = 5_000.0;
+            GainChoice::Fixed(0.0)
+        } else if between(0.0, 1.0) < 0.6 {
+            GainChoice::Automatic
+        } else {
+            // Some of these clip, some are too low.
+            GainChoice::Fixed((between(-10.0, 30.0) * 2.0).round() as f32 / 2.0)
+        };
+        let shots = [1, 1, 2, 3, 4, 8, 16, 64][(between(0.0, 8.0) as usize).min(7)];
+        let samples = if between(0.0, 1.0) < 0.7 { 4096 } else { 2048 };
+        Self {
+            name: format!("{} {:.3} mm, {shots} shots", base.name, scene.wall.thickness_mm),
+            setup: base.setup,
+            take: Take {
+                number,
+                shots,
+                samples,
+                gain,
+            },
+            scene,
+            seed: u64::from(number) + 1,
+        }
+    }
+
+    /// A simulator in front of this place, at its first shot.
+    pub fn receiver(&self) -> SimulatedReceiver {
+        SimulatedReceiver::new(self.scene.clone(), self.seed)
+    }
+}
+
+/// A report as it goes over the link.
+pub fn bytes_of(report: &LinkReport) -> Vec<u8> {
+    let mut room = [0u8; 300];
+    let mut rest = &mut room[..];
+    let message = Message::Report(report.clone());
+    let written = matches!(write_frame(&message, &mut rest), Ok(Ok(())));
+    let left = rest.len();
+    if written {
+        room[..300 - left].to_vec()
+    } else {
+        Vec::new()
+    }
+}
