@@ -61,6 +61,11 @@
 // `!(x > 0.0)` is meant: it also catches "not a number", which `x <= 0.0` lets through.
 #![allow(clippy::neg_cmp_op_on_partial_ord)]
 
+/// README's example compiles and runs, or the tests fail.
+#[cfg(doctest)]
+#[doc = include_str!("../../README.md")]
+pub struct Readme;
+
 #[cfg(test)]
 extern crate std;
 #[cfg(test)]

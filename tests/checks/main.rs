@@ -8,3 +8,4 @@ mod val_envelope;
 mod val_gauge;
 mod val_pulse;
 mod val_population;
+mod val_train_fit;

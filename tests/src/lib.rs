@@ -2,3 +2,4 @@
 
 pub mod oracle;
 pub mod published;
+pub mod readme;

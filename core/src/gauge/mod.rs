@@ -1,6 +1,6 @@
 //! The facade: one record in, a reading or a refusal out.
 //!
-//! [`Gauge::measure`] runs the steps in their order ([`steps`]): health of the record, scan, echoes,
+//! [`Gauge::measure`] runs the steps in their order: health of the record, scan, echoes,
 //! interface, train, times, thickness, budget, doubts. Every step stays public, for who wants to build
 //! another gauge from them; [`interpretation`] holds what a set-up means for one record.
 

@@ -3,6 +3,7 @@
 use crate::toolchain::{CORTEX_M4F, Toolchain, root};
 use crate::{Checks, Trouble, emulator, image};
 use halfpulse_mps2::canned::RECORDS;
+use halfpulse_tests::readme;
 use serde::Deserialize;
 use std::fs;
 
@@ -60,33 +61,39 @@ pub fn run(checks: &mut Checks) -> Result<(), Trouble> {
         .map(|(name, size)| format!("{name} {size}"))
         .collect();
     say!("bytes of code by crate: {}", largest.join(", "));
-    for (name, what, value, limit) in [
+    for (name, row, what, value, limit) in [
         (
             "instructions",
+            "instructions of the costliest canned reading, 4096 samples, Cortex-M4F",
             "instructions of the costliest reading",
             instructions,
             budget.instructions,
         ),
         (
             "flash",
+            "flash of the whole measuring image without its records",
             "bytes of flash without the canned records",
             sizes.flash.saturating_sub(records),
             budget.flash_bytes,
         ),
         (
             "static_ram",
+            "static RAM, codes and scratch included",
             "bytes of static RAM, codes and scratch memory included",
             sizes.static_ram,
             budget.static_ram_bytes,
         ),
         (
             "stack",
+            "stack from reset to the deepest call",
             "bytes of stack from reset to the deepest call",
             stack,
             budget.stack_bytes,
         ),
     ] {
         let text = format!("{value} {what}; budget {limit}");
+        let unit = if name == "instructions" { "" } else { " bytes" };
+        readme::figure_of_this_compiler(row, &format!("{value}{unit} (limit {limit})"), "cargo board figures");
         checks.check(
             &format!("{name}_within_budget"),
             if value <= limit { Ok(text) } else { Err(text) },
