@@ -56,6 +56,11 @@ pub struct Fired {
 ///   succeed without anything being reset from outside; whatever a late shot still delivers must not
 ///   reach it.
 ///
+/// Three implementations come with the project: the simulator (`SimulatedReceiver` of host-sim), a front end
+/// at the other end of a serial line (`RemoteReceiver` of firmware-example/app, which the emulated board
+/// uses), and a wrapper that fails on purpose (`FaultyReceiver` of host-sim). The application's
+/// `FrontEnd::acquire` is their user.
+///
 /// Pauses between shots (reverberation has to die away) are the caller's affair.
 ///
 /// # Example

@@ -1,13 +1,15 @@
 //! A pulser and receiver at the other end of the link: requests go over the line, samples arrive in a
 //! memory that both ends see, as behind a converter's DMA.
 
-use crate::link::port::LOOK_EVERY_US;
 use crate::link::{Done, Fire, FrontEndFault, LinkError, Message, SharedPort, crc_of_codes};
 use crate::report::Fault;
 use embedded_hal::delay::DelayNs;
 use embedded_io::{Read, ReadReady, Write};
 use halfpulse::record::receiver::{Fired, PulseReceiver, Shot};
 use halfpulse::{AdcFormat, Decibels, Hertz, SampleClock, Seconds};
+
+/// How often a wait looks for an answer, in microseconds.
+const LOOK_EVERY_US: u32 = 20;
 
 /// Where the other end puts the samples.
 pub trait SampleMemory {

@@ -3,11 +3,7 @@
 use crate::link::frame::{FRAME_CAPACITY, FrameError, read_frame, write_frame};
 use crate::link::message::Message;
 use core::cell::RefCell;
-use embedded_hal::delay::DelayNs;
 use embedded_io::{Read, ReadReady, Write};
-
-/// How often a wait looks for new bytes, in microseconds.
-pub const LOOK_EVERY_US: u32 = 20;
 
 /// The link does not work at all.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
@@ -117,20 +113,6 @@ impl<L: Read + ReadReady + Write> Port<L> {
         Ok(None)
     }
 
-    /// Waits for a message, for `patience_us` at most.
-    ///
-    /// # Errors
-    /// [`LinkError::Line`].
-    pub fn wait<D: DelayNs>(&mut self, delay: &mut D, patience_us: u32) -> Result<Option<Message>, LinkError> {
-        for _ in 0..=patience_us / LOOK_EVERY_US {
-            if let Some(message) = self.poll()? {
-                return Ok(Some(message));
-            }
-            delay.delay_us(LOOK_EVERY_US);
-        }
-        Ok(None)
-    }
-
     fn end_of_frame(&mut self) -> Option<Message> {
         let filled = core::mem::replace(&mut self.filled, 0);
         let counts = &mut self.counts;
@@ -201,5 +183,94 @@ impl<'p, L: Read + ReadReady + Write> SharedPort<'p, L> {
         self.0
             .try_borrow()
             .map_or_else(|_| Counts::default(), |port| port.counts())
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::link::Take;
+    use proptest::prelude::*;
+    use std::collections::VecDeque;
+
+    /// A line that gives what was put into it, and keeps what is written.
+    #[derive(Default)]
+    struct Line(VecDeque<u8>);
+
+    impl embedded_io::ErrorType for Line {
+        type Error = core::convert::Infallible;
+    }
+    impl ReadReady for Line {
+        fn read_ready(&mut self) -> Result<bool, Self::Error> {
+            Ok(!self.0.is_empty())
+        }
+    }
+    impl Read for Line {
+        fn read(&mut self, bytes: &mut [u8]) -> Result<usize, Self::Error> {
+            match (bytes.first_mut(), self.0.pop_front()) {
+                (Some(place), Some(byte)) => {
+                    *place = byte;
+                    Ok(1)
+                }
+                _ => Ok(0),
+            }
+        }
+    }
+    impl Write for Line {
+        fn write(&mut self, bytes: &[u8]) -> Result<usize, Self::Error> {
+            self.0.extend(bytes);
+            Ok(bytes.len())
+        }
+        fn flush(&mut self) -> Result<(), Self::Error> {
+            Ok(())
+        }
+    }
+
+    fn take(number: u32) -> Message {
+        Message::Take(Take {
+            number,
+            shots: 3,
+            samples: 4096,
+            gain: crate::link::GainChoice::Fixed(-2.5),
+        })
+    }
+
+    proptest! {
+        /// Whatever came before, whole frames behind it are read, each of them and once.
+        #[test]
+        fn no_rubbish_costs_a_frame_behind_it(
+            pieces in proptest::collection::vec(proptest::collection::vec(any::<u8>(), 0..400), 1..6)
+        ) {
+            let mut port = Port::new(Line::default());
+            for (number, rubbish) in pieces.iter().enumerate() {
+                port.line().0.extend(rubbish);
+                port.send(&take(number as u32)).unwrap();
+            }
+            let mut read = std::vec::Vec::new();
+            while let Some(message) = port.poll().unwrap() {
+                read.push(message);
+            }
+            let sent: std::vec::Vec<_> = (0..pieces.len() as u32).map(take).collect();
+            prop_assert_eq!(read, sent);
+        }
+    }
+
+    #[test]
+    fn frames_that_are_none_are_counted_by_kind() {
+        let mut port = Port::new(Line::default());
+        // Broken, then too long, then a right sum over a message that does not exist, then nothing at all.
+        port.line().0.extend([0, 3, 1, 2, 0]);
+        port.line().0.extend([7; FRAME_CAPACITY + 1]);
+        port.line().0.push_back(0);
+        let sum = crate::link::crc_of_bytes(&[200]).to_le_bytes();
+        port.line().0.extend([6, 200]);
+        port.line().0.extend(sum);
+        port.line().0.extend([0, 0, 0]);
+        assert_eq!(port.poll(), Ok(None));
+        let counts = port.counts();
+        assert_eq!(
+            (counts.broken, counts.oversized, counts.unknown, counts.received),
+            (1, 1, 1, 0)
+        );
     }
 }

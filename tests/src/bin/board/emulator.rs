@@ -28,6 +28,11 @@ pub fn find() -> Result<String, Trouble> {
 
 /// Runs an image on the emulated Cortex-M4F board until it leaves, and returns what it wrote.
 pub fn run(image: &Path) -> Result<String, Trouble> {
+    run_with(image, &[])
+}
+
+/// The same with more arguments for the emulator.
+pub fn run_with(image: &Path, more: &[&str]) -> Result<String, Trouble> {
     find()?;
     let mut command = Command::new(EMULATOR);
     command
@@ -45,6 +50,7 @@ pub fn run(image: &Path) -> Result<String, Trouble> {
         ])
         // 128 ns of emulated time for each instruction: the board's timer counts instructions.
         .args(["-icount", "shift=7"])
+        .args(more)
         .args(["-semihosting-config", "enable=on,target=native", "-kernel"])
         .arg(image)
         .stdin(Stdio::null())

@@ -10,11 +10,15 @@ use std::fs;
 /// The committed budgets.
 #[derive(Debug, Deserialize)]
 #[serde(deny_unknown_fields)]
-struct Budget {
-    instructions: u64,
-    flash_bytes: u64,
-    static_ram_bytes: u64,
-    stack_bytes: u64,
+pub struct Budget {
+    /// Executed instructions of one reading.
+    pub instructions: u64,
+    /// Code and constants.
+    pub flash_bytes: u64,
+    /// Variables.
+    pub static_ram_bytes: u64,
+    /// The deepest call.
+    pub stack_bytes: u64,
 }
 
 /// One line of costs that the board wrote.
@@ -102,7 +106,8 @@ pub fn run(checks: &mut Checks) -> Result<(), Trouble> {
     Ok(())
 }
 
-fn read_budget() -> Result<Budget, String> {
+/// Reads tests/board_budget.toml.
+pub fn read_budget() -> Result<Budget, String> {
     let file = root().join("tests/board_budget.toml");
     let text = fs::read_to_string(&file).map_err(|error| format!("{}: {error}", file.display()))?;
     toml::from_str(&text).map_err(|error| format!("{}: {error}", file.display()))

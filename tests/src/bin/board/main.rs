@@ -13,6 +13,7 @@ macro_rules! say {
 }
 
 mod compare;
+mod cost;
 mod device;
 mod emulator;
 mod figures;
@@ -29,6 +30,8 @@ usage: cargo board VERB
 
   build [TARGET]  cross build: the core for Cortex-M4F and Cortex-M0+, and the image `measure`;
                   with TARGET (thumbv7em-none-eabihf, thumbv6m-none-eabi) only for that one
+  cost [--write]  instructions of a reading by stage, estimated cycles beside them, against the committed
+                  tests/board_costs.txt; with --write that table is written anew
   device          the gauge in the emulator fires at the simulator here: 200 readings of different walls,
                   gains and averages on a Cortex-M4F, 20 without floating point unit, each the same as this
                   machine's to the last bit; then faults on purpose, and the decoded log
@@ -105,6 +108,8 @@ fn main() -> ExitCode {
         ["build"] => build(&mut checks, &[CORTEX_M4F, CORTEX_M0_PLUS]),
         ["build", target] if [CORTEX_M4F, CORTEX_M0_PLUS].contains(target) => build(&mut checks, &[target]),
         ["run"] => compare::run(&mut checks),
+        ["cost"] => cost::run(&mut checks, false),
+        ["cost", "--write"] => cost::run(&mut checks, true),
         ["device"] => device::run(&mut checks),
         ["panics"] => panics::run(&mut checks),
         ["figures"] => figures::run(&mut checks),

@@ -9,6 +9,7 @@ use crate::{Checks, Trouble, image};
 pub fn run(checks: &mut Checks) -> Result<(), Trouble> {
     let toolchain = Toolchain::find(CORTEX_M4F)?;
     checks.check("no_panic_can_be_reached", no_panic(&toolchain));
+    checks.check("no_panic_in_the_whole_gauge", no_panic_in_the_gauge(&toolchain));
     checks.check("a_planted_panic_does_not_link", planted_panic_does_not_link(&toolchain));
     checks.check("a_planted_panic_is_traced", planted_panic_is_traced(&toolchain));
     Ok(())
@@ -29,6 +30,19 @@ fn no_panic(toolchain: &Toolchain) -> Result<String, String> {
             Err(format!("panics can be reached:\n{}", list(image::panic_calls(&file)?)))
         }
         Err(text) => Err(text),
+    }
+}
+
+/// The application with its link and its log: it takes bytes from outside, and must not fall over them.
+fn no_panic_in_the_gauge(toolchain: &Toolchain) -> Result<String, String> {
+    let file = toolchain
+        .build_anyhow("gauge")
+        .map_err(|trouble| format!("{trouble:?}"))?;
+    let calls = image::panic_calls(&file)?;
+    if calls.is_empty() {
+        Ok("it links, and no function calls a panicking one".to_owned())
+    } else {
+        Err(list(calls))
     }
 }
 

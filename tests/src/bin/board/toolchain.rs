@@ -146,14 +146,14 @@ impl Toolchain {
             .map_err(Trouble::Failed)
     }
 
-    /// Builds the image `gauge`, or, while a panic can be reached, one that says so when it happens.
-    pub fn build_gauge_anyhow(&self) -> Result<PathBuf, Trouble> {
+    /// Builds an image, or, while a panic can be reached, one that says so when it happens.
+    pub fn build_anyhow(&self, binary: &str) -> Result<PathBuf, Trouble> {
         let build = |features: Features| {
             let mut cargo = self.cargo();
-            cargo.args(["--package", "halfpulse-mps2", "--bin", "gauge"]);
+            cargo.args(["--package", "halfpulse-mps2", "--bin", binary]);
             cargo.args(["--features", features.list()]);
             run_cargo(cargo)?;
-            Ok(target_folder().join(&self.target).join("firmware/gauge"))
+            Ok(target_folder().join(&self.target).join("firmware").join(binary))
         };
         build(Features::Normal)
             .or_else(|text: String| {
@@ -221,7 +221,7 @@ pub fn root() -> PathBuf {
 }
 
 /// Cross builds have a folder of their own, so that they and host builds do not undo each other.
-fn target_folder() -> PathBuf {
+pub fn target_folder() -> PathBuf {
     match env::var_os("CARGO_TARGET_DIR") {
         Some(folder) => root().join(folder).join("board"),
         None => root().join("target/board"),

@@ -7,7 +7,7 @@ mod log;
 mod places;
 
 use crate::toolchain::{CORTEX_M0_PLUS, CORTEX_M4F, Toolchain};
-use crate::{Checks, Trouble, image};
+use crate::{Checks, Trouble, figures, image};
 use emulated::{Core, EmulatedGauge};
 use halfpulse::{Averager, Gauge, Record, Scratch};
 use halfpulse_app::acquire::{FrontEnd, Request, ShotCounts};
@@ -37,12 +37,13 @@ struct Tally {
 }
 
 pub fn run(checks: &mut Checks) -> Result<(), Trouble> {
+    let budget = figures::read_budget().map_err(Trouble::Failed)?;
     for (core, target, readings) in [
         (Core::M4F, CORTEX_M4F, READINGS),
         (Core::WithoutUnit, CORTEX_M0_PLUS, READINGS_WITHOUT_UNIT),
     ] {
         let toolchain = Toolchain::find(target)?;
-        let file = toolchain.build_gauge_anyhow()?;
+        let file = toolchain.build_anyhow("gauge")?;
         let sizes = image::sizes(&file).map_err(Trouble::Failed)?;
         let mut gauge = EmulatedGauge::start(&file, core).map_err(Trouble::from)?;
         say!(
@@ -66,14 +67,14 @@ pub fn run(checks: &mut Checks) -> Result<(), Trouble> {
                 within(
                     "bytes of static RAM with codes, sums and scratch memory",
                     sizes.static_ram,
-                    40 * 1024,
+                    budget.static_ram_bytes,
                 ),
             );
             checks.check(
                 "stack_of_the_whole_gauge",
-                status
-                    .map_err(|error| error.to_string())
-                    .and_then(|status: Status| within("bytes of stack at most", status.stack.into(), 4 * 1024)),
+                status.map_err(|error| error.to_string()).and_then(|status: Status| {
+                    within("bytes of stack at most", status.stack.into(), budget.stack_bytes)
+                }),
             );
         }
         let log = gauge.finish();
