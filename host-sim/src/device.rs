@@ -1,6 +1,9 @@
 //! The simulator as a device: a pulser and receiver that fires at a scene, and the memory in which its
 //! samples arrive.
 
+#[cfg(unix)]
+mod mapped;
+
 use crate::link::SampleStore;
 use crate::scene::{Scene, SceneError};
 use crate::synthesise::{Synthesiser, Variation};
@@ -11,10 +14,10 @@ use halfpulse_app::remote::SampleMemory;
 use halfpulse_app::report::Fault;
 use std::cell::RefCell;
 use std::collections::VecDeque;
-use std::fs::File;
-use std::os::unix::fs::FileExt;
-use std::path::Path;
 use std::rc::Rc;
+
+#[cfg(unix)]
+pub use mapped::MappedFile;
 
 /// Longest delay of the pulser: what the simulator can shift a record by.
 const LONGEST_DELAY: f64 = 1e-6;
@@ -167,29 +170,6 @@ impl SampleMemory for SharedSamples {
         for (code, &value) in codes.iter_mut().zip(self.0.borrow().iter()) {
             *code = value;
         }
-    }
-}
-
-/// A file that the emulator maps into the board's memory.
-#[derive(Debug)]
-pub struct MappedFile(File);
-
-impl MappedFile {
-    /// Makes the file, full of zeros.
-    ///
-    /// # Errors
-    /// The operating system's; also if there is such a file already: two runs must not share one.
-    pub fn create(path: &Path, bytes: u64) -> std::io::Result<Self> {
-        let file = File::options().read(true).write(true).create_new(true).open(path)?;
-        file.set_len(bytes)?;
-        Ok(Self(file))
-    }
-}
-
-impl SampleStore for MappedFile {
-    fn store(&mut self, codes: &[i16]) -> std::io::Result<()> {
-        let bytes: Vec<u8> = codes.iter().flat_map(|code| code.to_le_bytes()).collect();
-        self.0.write_all_at(&bytes, 0)
     }
 }
 

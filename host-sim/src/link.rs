@@ -2,8 +2,11 @@
 //!
 //! Frames and messages are [`halfpulse_app::link`]'s, the same code as on the board.
 
+#[cfg(unix)]
+mod socket;
+
 use crate::faults::Behaviour;
-use embedded_io::{ErrorKind, ErrorType, Read, ReadReady, Write};
+use embedded_io::{ErrorType, Read, ReadReady, Write};
 use halfpulse::record::receiver::{Fired, PulseReceiver, Shot};
 use halfpulse::{Decibels, Seconds};
 use halfpulse_app::link::{
@@ -13,10 +16,11 @@ use halfpulse_app::link::{
 use std::cell::RefCell;
 use std::collections::VecDeque;
 use std::fmt;
-use std::io::{Read as _, Write as _};
-use std::os::unix::net::UnixStream;
 use std::rc::Rc;
 use std::time::{Duration, Instant};
+
+#[cfg(unix)]
+pub use socket::SocketLine;
 
 /// Bytes under way in one direction.
 type Bytes = Rc<RefCell<VecDeque<u8>>>;
@@ -79,84 +83,6 @@ fn take_front(from: &mut VecDeque<u8>, bytes: &mut [u8]) -> usize {
         taken += 1;
     }
     taken
-}
-
-/// A line over a socket, such as the emulator's serial port.
-#[derive(Debug)]
-pub struct SocketLine {
-    socket: UnixStream,
-    read: VecDeque<u8>,
-    closed: bool,
-}
-
-impl SocketLine {
-    /// Takes a connected socket.
-    ///
-    /// # Errors
-    /// The operating system's, when it is told not to wait.
-    pub fn new(socket: UnixStream) -> std::io::Result<Self> {
-        socket.set_nonblocking(true)?;
-        Ok(Self {
-            socket,
-            read: VecDeque::new(),
-            closed: false,
-        })
-    }
-}
-
-impl ErrorType for SocketLine {
-    type Error = ErrorKind;
-}
-
-impl ReadReady for SocketLine {
-    fn read_ready(&mut self) -> Result<bool, ErrorKind> {
-        if self.read.is_empty() && !self.closed {
-            let mut bytes = [0; 4096];
-            match self.socket.read(&mut bytes) {
-                Ok(0) => self.closed = true,
-                Ok(count) => self.read.extend(&bytes[..count]),
-                Err(error) if would_wait(&error) => {}
-                Err(_) => return Err(ErrorKind::BrokenPipe),
-            }
-        }
-        if self.read.is_empty() && self.closed {
-            return Err(ErrorKind::BrokenPipe);
-        }
-        Ok(!self.read.is_empty())
-    }
-}
-
-impl Read for SocketLine {
-    fn read(&mut self, bytes: &mut [u8]) -> Result<usize, ErrorKind> {
-        Ok(take_front(&mut self.read, bytes))
-    }
-}
-
-impl Write for SocketLine {
-    fn write(&mut self, bytes: &[u8]) -> Result<usize, ErrorKind> {
-        // The other end takes its time; a second is far beyond it.
-        let start = Instant::now();
-        loop {
-            match self.socket.write(bytes) {
-                Ok(count) => return Ok(count),
-                Err(error) if would_wait(&error) && start.elapsed() < Duration::from_secs(1) => {
-                    std::thread::sleep(Duration::from_micros(50));
-                }
-                Err(_) => return Err(ErrorKind::BrokenPipe),
-            }
-        }
-    }
-
-    fn flush(&mut self) -> Result<(), ErrorKind> {
-        Ok(())
-    }
-}
-
-fn would_wait(error: &std::io::Error) -> bool {
-    matches!(
-        error.kind(),
-        std::io::ErrorKind::WouldBlock | std::io::ErrorKind::Interrupted
-    )
 }
 
 /// Where the host puts samples for the gauge to find.

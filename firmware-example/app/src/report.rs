@@ -120,7 +120,7 @@ pub struct Report<'r> {
     pub number: u32,
     /// Shots in the record; 0 if there is none.
     pub shots: u16,
-    /// The gain that was in force at the last shot, or was asked for if there was none.
+    /// The gain of the record's shots; 0 dB if there is none.
     pub gain: Decibels,
     /// The reading, or why there is none.
     pub outcome: Result<Reading, Shortfall>,

@@ -14,6 +14,7 @@ macro_rules! say {
 
 mod compare;
 mod cost;
+#[cfg(unix)]
 mod device;
 mod emulator;
 mod figures;
@@ -110,6 +111,8 @@ fn main() -> ExitCode {
         ["run"] => compare::run(&mut checks),
         ["cost"] => cost::run(&mut checks, false),
         ["cost", "--write"] => cost::run(&mut checks, true),
+        // The emulator's serial port is a Unix socket.
+        #[cfg(unix)]
         ["device"] => device::run(&mut checks),
         ["panics"] => panics::run(&mut checks),
         ["figures"] => figures::run(&mut checks),
