@@ -152,8 +152,8 @@ fn with_rig(seed: u64, work: impl FnOnce(Rig<'_, '_>)) {
         codes: &mut codes,
         sums: &mut sums,
     };
-    let gauge = Gauge::new(SETUP, scratch.workspace()).unwrap();
-    let app = App::new(shared, front_end, gauge, memory, Words::default(), || 0);
+    let mut gauge = Gauge::new(SETUP, scratch.workspace()).unwrap();
+    let app = App::new(shared, front_end, &mut gauge, memory, Words::default(), || 0);
     let mut rig = Rig {
         host: host.clone(),
         port: &port,
@@ -475,8 +475,8 @@ fn a_receiver_that_fails_gives_faults_or_refusals_and_never_a_wrong_reading() {
             codes: &mut codes,
             sums: &mut sums,
         };
-        let gauge = Gauge::new(SETUP, scratch.workspace()).unwrap();
-        let mut app = App::new(SharedPort::new(&port), front_end, gauge, memory, (), || 0);
+        let mut gauge = Gauge::new(SETUP, scratch.workspace()).unwrap();
+        let mut app = App::new(SharedPort::new(&port), front_end, &mut gauge, memory, (), || 0);
         let take = Take {
             number: 1,
             shots: 4,

@@ -66,7 +66,7 @@ pub struct RecordMemory<'m> {
 pub struct App<'p, 'm, 's, R, D, L, S> {
     port: SharedPort<'p, L>,
     front_end: FrontEnd<'s, R, D>,
-    gauge: Gauge<'m>,
+    gauge: &'m mut Gauge<'m>,
     memory: RecordMemory<'m>,
     sink: S,
     introduced: bool,
@@ -83,11 +83,12 @@ where
     S: ReportSink,
 {
     /// An application that waits for the other end's introduction. `stack_used` tells the most bytes of
-    /// stack that were in use (0 where nobody knows).
+    /// stack that were in use (0 where nobody knows). The gauge is borrowed, because a copy of it on the
+    /// way into the application would cost its size in stack.
     pub const fn new(
         port: SharedPort<'p, L>,
         front_end: FrontEnd<'s, R, D>,
-        gauge: Gauge<'m>,
+        gauge: &'m mut Gauge<'m>,
         memory: RecordMemory<'m>,
         sink: S,
         stack_used: fn() -> u32,

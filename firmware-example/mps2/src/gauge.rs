@@ -25,9 +25,9 @@ mod app {
         let board = Board::start();
         let port = RefCell::new(Port::new(board.serial));
         let link = SharedPort::new(&port);
-        let Ok(gauge) = Gauge::new(FIRST_SETUP, SCRATCH.workspace()) else {
-            board::exit(false)
-        };
+        // Not taken out of its result: that would be a second copy on the stack.
+        let mut made = Gauge::new(FIRST_SETUP, SCRATCH.workspace());
+        let Ok(gauge) = &mut made else { board::exit(false) };
         let front_end = FrontEnd {
             receiver: RemoteReceiver::new(link, board.samples, board.delay, PATIENCE_US),
             delay: board.delay,
