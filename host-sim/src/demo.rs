@@ -11,7 +11,7 @@ use crate::calibrating::cut;
 use crate::input_error::InputError;
 use crate::measuring::HeapScratch;
 use crate::record_file::RecordFile;
-use crate::scene::{Back, DelayLine, Layer, Noise, Probe, ProbeKind, Recording, Scene, SceneError};
+use crate::scene::{DelayLine, Layer, Noise, Probe, ProbeKind, Recording, Scene, SceneError};
 use crate::synthesise::{Synthesiser, synthesise};
 use comfy_table::{CellAlignment, Table, presets};
 use halfpulse::{
@@ -117,7 +117,6 @@ fn bare(wall_mm: f64) -> Scene {
             attenuation_exponent: 1.0,
             ..DelayLine::default()
         }),
-        coating: None,
         wall: Layer {
             material: Some("carbon steel".into()),
             velocity_m_s: Some(PIPE_VELOCITY),
@@ -125,13 +124,11 @@ fn bare(wall_mm: f64) -> Scene {
             attenuation_exponent: 2.0,
             ..Layer::default()
         },
-        back: Back::default(),
-        echoes: crate::scene::Echoes::default(),
-        transmission_pulse: None,
         noise: Noise {
             snr_db: None,
             rms_steps: Some(2.0),
         },
+        ..Scene::contact(10.0, 60.0, "carbon steel", wall_mm)
     }
 }
 

@@ -4,8 +4,41 @@
 //! sine: both differ in the last digit between machines. Records made here must not, so the transform
 //! is a plain one of radix 2 with factors from `libm`.
 
+use std::cell::RefCell;
 use std::f64::consts::TAU;
 use std::ops::{Add, AddAssign, Mul, Sub};
+use std::rc::Rc;
+use std::sync::Arc;
+
+/// The last few results of a costly function, by what they depend on.
+pub(crate) struct Kept<K, V>(RefCell<Vec<(K, Rc<V>)>>);
+
+impl<K: PartialEq, V: Clone> Kept<K, V> {
+    /// How many are kept.
+    const MOST: usize = 4;
+
+    pub(crate) const fn new() -> Self {
+        Self(RefCell::new(Vec::new()))
+    }
+
+    /// The result for `key`, made if it is not there.
+    pub(crate) fn get(&self, key: K, make: impl FnOnce() -> V) -> V {
+        let found = self
+            .0
+            .borrow()
+            .iter()
+            .find(|(known, _)| *known == key)
+            .map(|(_, value)| value.clone());
+        let value = found.unwrap_or_else(|| {
+            let value = Rc::new(make());
+            let mut kept = self.0.borrow_mut();
+            kept.truncate(Self::MOST - 1);
+            kept.insert(0, (key, value.clone()));
+            value
+        });
+        (*value).clone()
+    }
+}
 
 /// A complex number.
 #[derive(Clone, Copy, Debug, PartialEq, Default)]
@@ -124,7 +157,7 @@ impl Iterator for Rotation {
 pub struct RealTransform {
     length: usize,
     /// `exp(j 2 pi k / length)` for k below half the length.
-    factors: Vec<Complex>,
+    factors: Arc<[Complex]>,
     scratch: Vec<Complex>,
 }
 
@@ -133,9 +166,16 @@ impl RealTransform {
     #[must_use]
     pub fn new(length: usize) -> Self {
         let length = length.max(4).next_power_of_two();
-        let factors = (0..length / 2)
-            .map(|k| Complex::polar(1.0, TAU * k as f64 / length as f64))
-            .collect();
+        thread_local! {
+            static KEPT: Kept<usize, Arc<[Complex]>> = const { Kept::new() };
+        }
+        let factors = KEPT.with(|kept| {
+            kept.get(length, || {
+                (0..length / 2)
+                    .map(|k| Complex::polar(1.0, TAU * k as f64 / length as f64))
+                    .collect()
+            })
+        });
         Self {
             length,
             factors,

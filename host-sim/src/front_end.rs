@@ -14,6 +14,8 @@ pub enum Purpose {
     Noise = 0,
     /// What differs from shot to shot: thickness, delay, gain.
     Variation = 1,
+    /// Where the grains of a wall are.
+    Grain = 16,
 }
 
 /// Random numbers that depend on seed, purpose and shot alone, whatever was drawn before: ChaCha with

@@ -5,7 +5,7 @@
 //! phase. What a record shows is that pulse behind the anti-alias filter; [`BandPulse`] holds it with
 //! its origin at the maximum of its envelope and a peak of 1.
 
-use crate::fourier::{Complex, RealTransform, Rotation};
+use crate::fourier::{Complex, Kept, RealTransform, Rotation};
 use serde::Serialize;
 use std::f64::consts::{LN_10, PI, TAU};
 
@@ -77,6 +77,12 @@ impl Pulse {
     #[must_use]
     pub fn value(&self, time: f64) -> f64 {
         self.envelope(time) * libm::cos(TAU * self.centre * time + self.phase)
+    }
+
+    /// Standard deviation of the Gaussian envelope in seconds; of another envelope the mean of its halves.
+    #[must_use]
+    pub fn deviation(&self) -> f64 {
+        0.5 * (self.attack + self.decay)
     }
 
     /// How long before and after its maximum the pulse is above one part in a thousand million.
@@ -174,8 +180,17 @@ pub struct BandPulse {
 impl BandPulse {
     /// Behind the anti-alias filter of a record of `sample_rate`, on a grid of frequencies that are
     /// `sample_rate / length` apart. The pulse must be shorter than `length` samples.
+    ///
+    /// The last few are kept in each thread: scene after scene has the same pulse.
     #[must_use]
     pub fn new(pulse: &Pulse, sample_rate: f64, length: usize) -> Self {
+        thread_local! {
+            static KEPT: Kept<(Pulse, f64, usize), BandPulse> = const { Kept::new() };
+        }
+        KEPT.with(|kept| kept.get((*pulse, sample_rate, length), || Self::make(pulse, sample_rate, length)))
+    }
+
+    fn make(pulse: &Pulse, sample_rate: f64, length: usize) -> Self {
         let spacing = sample_rate / length as f64;
         let mut values = pulse.spectrum(spacing, length / 2);
         for (k, value) in values.iter_mut().enumerate() {
@@ -225,6 +240,33 @@ impl BandPulse {
     #[must_use]
     pub fn with_values(&self, values: Vec<Complex>) -> Self {
         Self { values, ..*self }
+    }
+
+    /// A signal that is shorter than the period of every `step`-th bin, from those bins.
+    #[must_use]
+    pub(crate) fn thinned(&self, step: usize, values: Vec<Complex>) -> Self {
+        Self {
+            spacing: self.spacing * step as f64,
+            first: self.first.div_ceil(step),
+            values,
+        }
+    }
+
+    /// Time of the highest value near 0, within half a `cycle` (in seconds) or so: the phase at 0 says
+    /// where to look, parabolas through three points close the search.
+    #[must_use]
+    pub(crate) fn real_maximum(&self, cycle: f64) -> f64 {
+        let here = self.analytic(0.0);
+        let mut time = -libm::atan2(here.im, here.re) / TAU * cycle;
+        for span in [cycle / 8.0, cycle / 16.0, cycle / 32.0, cycle / 32.0] {
+            let [left, middle, right] = [-span, 0.0, span].map(|offset| self.analytic(time + offset).re);
+            let bend = left - 2.0 * middle + right;
+            if bend >= 0.0 {
+                break;
+            }
+            time += (0.5 * span * (left - right) / bend).clamp(-cycle / 4.0, cycle / 4.0);
+        }
+        time
     }
 
     /// Delayed by `delay` seconds and multiplied by `factor`.
@@ -301,6 +343,13 @@ impl PulseFigures {
     /// Of a pulse behind the anti-alias filter at `sample_rate`.
     #[must_use]
     pub fn of(pulse: &Pulse, sample_rate: f64) -> Self {
+        thread_local! {
+            static KEPT: Kept<(Pulse, f64), PulseFigures> = const { Kept::new() };
+        }
+        KEPT.with(|kept| kept.get((*pulse, sample_rate), || Self::measure(pulse, sample_rate)))
+    }
+
+    fn measure(pulse: &Pulse, sample_rate: f64) -> Self {
         let (before, after) = pulse.reach();
         // Figures do not depend on the record's length, so the grid is the pulse's own.
         let length = ((4.0 * (before + after) * sample_rate) as usize).next_power_of_two();

@@ -6,6 +6,7 @@
 
 pub mod calibrate;
 pub mod json;
+pub mod materials;
 pub mod read;
 pub mod simulate;
 pub mod text;
@@ -60,6 +61,8 @@ enum Command {
     Read(read::Arguments),
     /// Learns reference pulse, zero and velocity from blocks of known thickness
     Calibrate(calibrate::Arguments),
+    /// Lists the materials that scenes know: velocities, how well they are known, and where from
+    Materials(materials::Arguments),
 }
 
 /// An output that cannot be written; one that its reader has closed had enough, which is no fault.
@@ -95,6 +98,7 @@ pub fn main() -> ExitCode {
         Some(Command::Simulate(arguments)) => simulate::run(&arguments, &mut out),
         Some(Command::Read(arguments)) => read::run(&arguments, &mut out),
         Some(Command::Calibrate(arguments)) => calibrate::run(&arguments, &mut out),
+        Some(Command::Materials(arguments)) => materials::run(&arguments, &mut out),
     };
     match result {
         Ok(outcome) => outcome.exit_code(),

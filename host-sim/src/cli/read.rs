@@ -42,9 +42,12 @@ pub struct Arguments {
     bits: Option<u8>,
 }
 
+/// How results are printed.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, clap::ValueEnum)]
-enum Format {
+pub enum Format {
+    /// For people.
     Text,
+    /// For programs.
     Json,
 }
 

@@ -9,7 +9,7 @@ const MOST_SAMPLES: usize = 1 << 20;
 /// Longest pulse, down to one part in a thousand million.
 const MOST_PULSE_SAMPLES: f64 = 16384.0;
 
-fn error(field: impl Into<String>, what: impl Into<String>, remedy: impl Into<String>) -> SceneError {
+pub(super) fn error(field: impl Into<String>, what: impl Into<String>, remedy: impl Into<String>) -> SceneError {
     SceneError {
         field: field.into(),
         what: what.into(),
@@ -18,7 +18,7 @@ fn error(field: impl Into<String>, what: impl Into<String>, remedy: impl Into<St
 }
 
 /// Refuses a value outside `low..=high`, and one that is not a number.
-fn within(field: &str, value: f64, low: f64, high: f64, unit: &str) -> Result<(), SceneError> {
+pub(super) fn within(field: &str, value: f64, low: f64, high: f64, unit: &str) -> Result<(), SceneError> {
     if (low..=high).contains(&value) {
         return Ok(());
     }
@@ -29,11 +29,11 @@ fn within(field: &str, value: f64, low: f64, high: f64, unit: &str) -> Result<()
     ))
 }
 
-fn optional(field: &str, value: Option<f64>, low: f64, high: f64, unit: &str) -> Result<(), SceneError> {
+pub(super) fn optional(field: &str, value: Option<f64>, low: f64, high: f64, unit: &str) -> Result<(), SceneError> {
     value.map_or(Ok(()), |value| within(field, value, low, high, unit))
 }
 
-fn only_one(table: &str, first: (&str, bool), second: (&str, bool)) -> Result<(), SceneError> {
+pub(super) fn only_one(table: &str, first: (&str, bool), second: (&str, bool)) -> Result<(), SceneError> {
     if first.1 && second.1 {
         return Err(error(
             format!("{table}.{}", second.0),
@@ -196,11 +196,13 @@ impl Scene {
                 "is \"delay-line\" but there is no delay line",
                 "add a [delay_line] table",
             )),
-            (ProbeKind::DelayLine, Some(_)) if probe.face_impedance_mrayl.is_some() => Err(error(
-                "probe.face_impedance_mrayl",
-                "contradicts the delay line, whose own impedance counts",
-                "remove it",
-            )),
+            (ProbeKind::DelayLine | ProbeKind::DualElement, Some(_)) if probe.face_impedance_mrayl.is_some() => {
+                Err(error(
+                    "probe.face_impedance_mrayl",
+                    "contradicts the delay line, whose own impedance counts",
+                    "remove it",
+                ))
+            }
             _ => Ok(()),
         }
     }
@@ -214,6 +216,7 @@ impl Scene {
         }
         self.wall.check("wall")?;
         self.back.impedance()?;
+        self.check_part()?;
         let echoes = &self.echoes;
         if let Some(count) = echoes.back_walls {
             within("echoes.back_walls", f64::from(count), 1.0, 1e4, "")?;
@@ -231,7 +234,7 @@ impl Scene {
 }
 
 impl Layer {
-    fn check(&self, table: &str) -> Result<(), SceneError> {
+    pub(super) fn check(&self, table: &str) -> Result<(), SceneError> {
         let field = |key: &str| format!("{table}.{key}");
         within(&field("thickness_mm"), self.thickness_mm, 0.001, 1e4, "mm")?;
         within(
@@ -241,6 +244,21 @@ impl Layer {
             1e5,
             "dB/m",
         )?;
+        optional(
+            &field("velocity_slope_m_s_k"),
+            self.velocity_slope_m_s_k,
+            -50.0,
+            50.0,
+            "m/s per kelvin",
+        )?;
+        optional(
+            &field("expansion_ppm_k"),
+            self.expansion_ppm_k,
+            0.0,
+            1000.0,
+            "millionths per kelvin",
+        )?;
+        optional(&field("shear_velocity_m_s"), self.shear_velocity_m_s, 50.0, 2e4, "m/s")?;
         if !(self.attenuation_exponent > 0.0 && self.attenuation_exponent < 3.0) {
             return Err(error(
                 field("attenuation_exponent"),
@@ -311,6 +329,9 @@ impl DelayLine {
             thickness_mm: 1.0,
             attenuation_db_per_m: self.attenuation_db_per_m,
             attenuation_exponent: self.attenuation_exponent,
+            shear_velocity_m_s: None,
+            velocity_slope_m_s_k: self.velocity_slope_m_s_k,
+            expansion_ppm_k: self.expansion_ppm_k,
         };
         layer.thickness_mm = match (self.length_mm, self.delay_us) {
             (Some(length), _) => length,
@@ -342,7 +363,7 @@ impl Back {
     }
 }
 
-fn named(field: &str, name: &str) -> Result<&'static Material, SceneError> {
+pub(super) fn named(field: &str, name: &str) -> Result<&'static Material, SceneError> {
     material::find(name).ok_or_else(|| {
         let near = material::suggestions(name);
         let remedy = if near.is_empty() {

@@ -5,10 +5,13 @@
 //! Times are after the transmission trigger.
 
 pub mod file;
+pub mod part;
 mod check;
+mod check_part;
+mod stack;
 
-use crate::propagation::{self, Attenuation, Stack};
 use crate::transducer::Pulse;
+pub use part::{Couplant, DualElement, Grain, Lamination, Pit, Surface, Temperature};
 use serde::{Deserialize, Serialize};
 use std::fmt;
 
@@ -25,6 +28,15 @@ pub struct Scene {
     /// Delay line or water path: needed by, and only for, a probe of the kind `delay-line`.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub delay_line: Option<DelayLine>,
+    /// Distance of the elements: needed by, and only for, a probe of the kind `dual-element`.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub dual_element: Option<DualElement>,
+    /// Couplant film between probe and part; a plain border if left out.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub couplant: Option<Couplant>,
+    /// The part's front: rough, curved; smooth and flat if left out. Needs a `couplant` to fill it.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub surface: Option<Surface>,
     /// A coating on the part's front, in contact with the probe.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub coating: Option<Layer>,
@@ -33,6 +45,18 @@ pub struct Scene {
     /// What lies behind the wall: air if left out.
     #[serde(default)]
     pub back: Back,
+    /// A pit in the back wall under a part of the beam; none if left out.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub pit: Option<Pit>,
+    /// A lamination in the wall under a part of the beam; none if left out.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub lamination: Option<Lamination>,
+    /// Echoes of the wall's grains; none if left out.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub grain: Option<Grain>,
+    /// How warm all is; 20 degrees Celsius if left out.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub temperature: Option<Temperature>,
     /// Which echoes there are.
     #[serde(default)]
     pub echoes: Echoes,
@@ -79,13 +103,16 @@ pub enum ProbeKind {
     Contact,
     /// A delay line or a water path stands between; its end gives an interface echo.
     DelayLine,
+    /// A transmitting and a receiving element side by side: the sound path is a V, bent under delay
+    /// blocks if there is a `delay_line`. Their ends give no echo, but cross-talk may.
+    DualElement,
 }
 
 /// Table `[probe]`.
 #[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
 #[serde(deny_unknown_fields)]
 pub struct Probe {
-    /// `contact` or `delay-line`.
+    /// `contact`, `delay-line` or `dual-element`.
     pub kind: ProbeKind,
     /// Frequency of the carrier, 0.05 to 200 MHz: the middle of the band.
     pub centre_frequency_mhz: f64,
@@ -113,7 +140,8 @@ pub struct Probe {
     #[serde(default)]
     pub zero_offset_ns: f64,
     /// Impedance of a contact probe's face as the part meets it, with its couplant film, 0.0001 to 200
-    /// MRayl. 6 if left out: a steel wall then loses 23 % of its echo at each return.
+    /// MRayl. 6 if left out: a steel wall then loses 23 % of its echo at each return. Beside a table
+    /// `couplant` it is the face's own (38.5 of a ceramic wear plate) and must be given.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub face_impedance_mrayl: Option<f64>,
 }
@@ -146,6 +174,16 @@ pub struct DelayLine {
     /// Power of frequency with which it grows, above 0 and below 3.
     #[serde(default = "linear")]
     pub attenuation_exponent: f64,
+    /// Pressure that its near end turns back, -100 to 100 %: multiples of its echo, each with all that
+    /// follows it. 0, none, if left out.
+    #[serde(default)]
+    pub near_end_percent: f64,
+    /// Change of the velocity near 20 degrees Celsius, -50 to 50 m/s per kelvin; the material's if left out.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub velocity_slope_m_s_k: Option<f64>,
+    /// Linear thermal expansion, 0 to 1000 millionths per kelvin; the material's if left out.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub expansion_ppm_k: Option<f64>,
 }
 
 /// Tables `[coating]` and `[wall]`: material, or velocity with density or impedance.
@@ -164,7 +202,11 @@ pub struct Layer {
     /// Impedance, 0.0001 to 200 MRayl, instead of the density.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub impedance_mrayl: Option<f64>,
-    /// Thickness, 0.001 to 10000 mm.
+    /// Velocity of shear waves, 50 to 20000 m/s, below that of longitudinal ones; the material's if left
+    /// out. Needed for mode-converted echoes only.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub shear_velocity_m_s: Option<f64>,
+    /// Thickness at 20 degrees Celsius, 0.001 to 10000 mm.
     pub thickness_mm: f64,
     /// Amplitude attenuation at the centre frequency, 0 to 100000 dB/m.
     #[serde(default)]
@@ -173,14 +215,20 @@ pub struct Layer {
     /// up to 3) for grain.
     #[serde(default = "linear")]
     pub attenuation_exponent: f64,
+    /// Change of the velocity near 20 degrees Celsius, -50 to 50 m/s per kelvin; the material's if left out.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub velocity_slope_m_s_k: Option<f64>,
+    /// Linear thermal expansion, 0 to 1000 millionths per kelvin; the material's if left out.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub expansion_ppm_k: Option<f64>,
 }
 
 const fn linear() -> f64 {
     1.0
 }
 
-/// Table `[back]`: a material or an impedance.
-#[derive(Clone, Debug, PartialEq, Default, Serialize, Deserialize)]
+/// Table `[back]`: a material or an impedance; its shape.
+#[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
 #[serde(deny_unknown_fields)]
 pub struct Back {
     /// A material of the table; `air` if nothing is given.
@@ -189,6 +237,32 @@ pub struct Back {
     /// Impedance, 0.0001 to 200 MRayl.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub impedance_mrayl: Option<f64>,
+    /// Roughness of the back wall (and of a pit's floor), rms, 0 to 1000 um.
+    #[serde(default)]
+    pub roughness_um: f64,
+    /// Distance over which its heights are alike, 0.01 to 100 mm. 1 if left out. Only the truth's least
+    /// wall depends on it.
+    #[serde(default = "one_millimetre")]
+    pub roughness_length_mm: f64,
+    /// Angle of the back wall against the front, 0 to 10 degrees.
+    #[serde(default)]
+    pub tilt_degrees: f64,
+}
+
+impl Default for Back {
+    fn default() -> Self {
+        Self {
+            material: None,
+            impedance_mrayl: None,
+            roughness_um: 0.0,
+            roughness_length_mm: one_millimetre(),
+            tilt_degrees: 0.0,
+        }
+    }
+}
+
+const fn one_millimetre() -> f64 {
+    1.0
 }
 
 /// Table `[echoes]`: for trains that are cleaner than nature.
@@ -202,6 +276,10 @@ pub struct Echoes {
     /// give. Not together with attenuation of the wall.
     #[serde(default, skip_serializing_if = "Option::is_none")]
     pub decay: Option<f64>,
+    /// Amplitude of an echo that returns one way as a shear wave, over that of the first back wall, 0 to
+    /// 100 %. It arrives (1 + cL / cS) / 2 times as long after the surface as the back wall.
+    #[serde(default)]
+    pub mode_converted_percent: f64,
 }
 
 /// Table `[transmission_pulse]`: a ringing at the centre frequency and a slow recovery of the baseline,
@@ -293,6 +371,9 @@ impl Scene {
                 face_impedance_mrayl: None,
             },
             delay_line: None,
+            dual_element: None,
+            couplant: None,
+            surface: None,
             coating: None,
             wall: Layer {
                 material: Some(material.into()),
@@ -301,6 +382,10 @@ impl Scene {
                 ..Layer::default()
             },
             back: Back::default(),
+            pit: None,
+            lamination: None,
+            grain: None,
+            temperature: None,
             echoes: Echoes::default(),
             transmission_pulse: None,
             noise: Noise::default(),
@@ -316,40 +401,5 @@ impl Scene {
             (Some(attack), Some(decay)) => Pulse::attack_decay(centre, attack * 1e-9, decay * 1e-9, phase),
             _ => Pulse::gaussian(centre, probe.relative_bandwidth_percent.unwrap_or(60.0) / 100.0, phase),
         }
-    }
-
-    /// What lies in front of the probe, in SI units.
-    ///
-    /// # Errors
-    /// The first value that [`Scene::check`] objects to.
-    pub fn stack(&self) -> Result<Stack, SceneError> {
-        self.check()?;
-        let reference = self.probe.centre_frequency_mhz * 1e6;
-        let layer = |table: &str, layer: &Layer| -> Result<propagation::Layer, SceneError> {
-            let medium = layer.medium(table)?;
-            Ok(propagation::Layer {
-                thickness: layer.thickness_mm * 1e-3,
-                velocity: medium.velocity,
-                impedance: medium.impedance,
-                attenuation: Attenuation::new(layer.attenuation_db_per_m, layer.attenuation_exponent, reference),
-            })
-        };
-        let delay_line = match &self.delay_line {
-            Some(line) => Some(layer("delay_line", &line.as_layer()?)?),
-            None => None,
-        };
-        let coating = match &self.coating {
-            Some(coating) => Some(layer("coating", coating)?),
-            None => None,
-        };
-        let contact_face = self.probe.face_impedance_mrayl.unwrap_or(6.0) * 1e6;
-        Ok(Stack {
-            zero: self.probe.zero_offset_ns * 1e-9,
-            delay_line,
-            face_impedance: delay_line.map_or(contact_face, |line| line.impedance),
-            coating,
-            wall: layer("wall", &self.wall)?,
-            back_impedance: self.back.impedance()?,
-        })
     }
 }

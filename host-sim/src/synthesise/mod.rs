@@ -4,14 +4,21 @@
 //! between two samples is as exact as one on a sample. The same seed and shot give the same codes on
 //! every machine.
 
+mod grain;
+mod shapes;
+pub mod truth;
+
 use crate::fourier::{Complex, RealTransform, Rotation};
 use crate::front_end::{Converter, Purpose, Random};
-use crate::propagation::{self, Limits, MOST_PATHS, Path, Role, Stack};
+use crate::propagation::{Limits, MOST_PATHS, Path, Role, Stack};
 use crate::scene::{Scene, SceneError};
 use crate::transducer::{self, BandPulse, PulseFigures};
+use grain::GrainNoise;
 use halfpulse::{AdcFormat, Hertz, Record, SampleClock, Seconds};
-use serde::Serialize;
+use shapes::{Element, add_echoes, are_changed, for_each_shape};
 use std::f64::consts::TAU;
+pub use truth::{EchoTruth, Truth};
+use truth::{echo_truth, least_wall};
 
 /// Echoes weaker than this share of the strongest are left out.
 const SMALLEST: f64 = 1e-6;
@@ -53,61 +60,6 @@ pub struct Variation {
     pub wall_change: f64,
 }
 
-/// What is in a record. Times are after the transmission trigger.
-#[derive(Clone, Debug, PartialEq, Serialize)]
-pub struct Truth {
-    /// Seed of the random numbers.
-    pub seed: u64,
-    /// Number of the shot, from 0.
-    pub shot: u64,
-    /// The wall, without coating.
-    pub wall_thickness_mm: f64,
-    /// The wall's velocity at the centre frequency.
-    pub wall_velocity_m_s: f64,
-    /// The coating, if there is one.
-    pub coating_thickness_mm: Option<f64>,
-    /// The coating's velocity at the centre frequency.
-    pub coating_velocity_m_s: Option<f64>,
-    /// When the part's surface (the coating's, if there is one) echoes: the zero offset of a reading
-    /// from the transmission pulse.
-    pub face_ns: f64,
-    /// Noise rms per sample in codes, before rounding.
-    pub noise_rms_codes: f64,
-    /// Peak of the first back-wall echo's envelope over the noise rms; `None` without noise.
-    pub first_back_wall_snr_db: Option<f64>,
-    /// The pulse's figures.
-    pub pulse: PulseFigures,
-    /// The echoes in the order of their arrival.
-    pub echoes: Vec<EchoTruth>,
-}
-
-impl Truth {
-    /// The plain back-wall echoes.
-    pub fn back_walls(&self) -> impl Iterator<Item = &EchoTruth> {
-        self.echoes.iter().filter(|echo| echo.role == Role::BackWall)
-    }
-}
-
-/// One echo of a record.
-#[derive(Clone, Copy, Debug, PartialEq, Serialize)]
-pub struct EchoTruth {
-    /// Shift of the reference pulse, whose origin is the maximum of its envelope: path over velocity at
-    /// the centre frequency. What dispersion and the beam do to the echo's shape is not in it.
-    pub arrival_ns: f64,
-    /// Peak of the echo's envelope over full scale.
-    pub amplitude_percent: f64,
-    /// Relative to the pulse.
-    pub polarity: &'static str,
-    /// What it is.
-    pub role: Role,
-    /// Which multiple of the back-wall echo, from 1.
-    pub multiple: Option<u32>,
-    /// Round trips through the coating.
-    pub coating_round_trips: u32,
-    /// Round trips through the wall.
-    pub wall_round_trips: u32,
-}
-
 /// Makes one record of a scene.
 ///
 /// # Errors
@@ -125,8 +77,14 @@ pub struct Synthesiser {
     pulse: BandPulse,
     /// Factor from pressure at the probe's face to share of full scale.
     gain: f64,
-    /// Echo spectra by round trips through the wall, from 0 on; empty if too large to keep.
+    element: Element,
+    /// Echoes of the wall's grains.
+    grain: Option<GrainNoise>,
+    /// Echo spectra by round trips through the wall, from 0 on; empty if too large to keep, or if a
+    /// change of the wall is more than a factor per trip.
     by_trips: Vec<Vec<Complex>>,
+    /// The spectrum of all echoes of the unchanged scene.
+    whole: Vec<Complex>,
     /// The noise-free signal of the unchanged scene in steps of the converter.
     still: Vec<f64>,
     noise_steps: f64,
@@ -156,29 +114,39 @@ impl Synthesiser {
         let start = scene.record.first_sample_us * 1e-6;
         let margin = (margin as f64 / rate).max(0.5 * length);
         let paths = echo_paths(scene, &stack, start + length + before + 0.5 * margin)?;
-        let beam = beam_area(scene);
-        let changed = beam.is_some() || has_losses(&stack);
+        let element = Element::of(scene);
+        let changed = are_changed(&stack, element);
         let cycle = 1.0 / data_sheet.centre_frequency();
+        let thinner = Thinner::new(&pulse, before + after);
         let (mut echoes, mut first_peak) = (Vec::with_capacity(paths.len()), 0.0);
-        for_each_shape(&pulse, &stack, &paths, beam, |path, shape| {
+        for_each_shape(&pulse, &stack, &paths, element, |path, shape| {
             let listed = (start..start + length).contains(&path.arrival);
             if !listed && path.multiple != Some(1) {
                 return;
             }
-            let height = if changed {
-                pulse
-                    .with_values(shape.to_vec())
-                    .envelope_maximum(0.0, 1.5 * cycle, cycle / 6.0)
-                    .1
-            } else {
-                1.0
-            };
-            let peak = path.amplitude.abs() * height;
+            let (mut height, mut shift) = (1.0, 0.0);
+            if changed {
+                // Gain and noise hang on the first back wall: all its bins count.
+                height = if path.multiple == Some(1) {
+                    pulse
+                        .with_values(shape.to_vec())
+                        .envelope_maximum(0.0, 1.5 * cycle, cycle / 6.0)
+                        .1
+                } else {
+                    thinner
+                        .of(&pulse, shape)
+                        .envelope_maximum(0.0, 1.5 * cycle, cycle / 6.0)
+                        .1
+                };
+                let turned = (path.amplitude < 0.0) != (path.weight < 0.0);
+                shift = thinner.correlation_shift(&pulse, shape, turned, cycle);
+            }
+            let peak = path.weight.abs() * height;
             if path.multiple == Some(1) {
                 first_peak = peak;
             }
             if listed {
-                echoes.push((*path, peak));
+                echoes.push((*path, peak, shift));
             }
         });
         echoes.sort_by(|a, b| a.0.arrival.total_cmp(&b.0.arrival));
@@ -192,9 +160,10 @@ impl Synthesiser {
         let truth = Truth {
             seed: 0,
             shot: 0,
-            wall_thickness_mm: scene.wall.thickness_mm,
+            wall_thickness_mm: scene.wall.thickness_mm * scene.wall_expansion()?,
+            least_wall_mm: least_wall(scene, &stack) * 1e3,
             wall_velocity_m_s: stack.wall.velocity,
-            coating_thickness_mm: scene.coating.as_ref().map(|coating| coating.thickness_mm),
+            coating_thickness_mm: stack.coating.map(|coating| coating.thickness * 1e3),
             coating_velocity_m_s: stack.coating.map(|coating| coating.velocity),
             face_ns: stack.face_time() * 1e9,
             noise_rms_codes: noise_steps,
@@ -203,18 +172,22 @@ impl Synthesiser {
             pulse: PulseFigures::of(&data_sheet, rate),
             echoes: echoes
                 .into_iter()
-                .filter(|(_, peak)| peak * gain * full_scale > LEAST_STEPS)
-                .map(|(path, peak)| echo_truth(&path, peak * gain))
+                .filter(|(_, peak, _)| peak * gain * full_scale > LEAST_STEPS)
+                .map(|(path, peak, shift)| echo_truth(&path, peak * gain, shift))
                 .collect(),
         };
         let signal = vec![0.0; transform.length()];
+        let grain = GrainNoise::new(scene, &stack, &pulse, first_peak);
         let mut made = Self {
             scene: scene.clone(),
             stack,
             paths: kept,
             pulse,
             gain,
+            element,
+            grain,
             by_trips: Vec::new(),
+            whole: Vec::new(),
             still: Vec::new(),
             noise_steps,
             converter,
@@ -224,6 +197,7 @@ impl Synthesiser {
             signal,
         };
         made.keep_spectra();
+        made.whole = made.spectrum(0.0);
         made.make_signal(&Variation::default());
         made.still = made.signal[..samples].to_vec();
         Ok(made)
@@ -255,6 +229,15 @@ impl Synthesiser {
 
     /// A record of the scene as it is; only its noise depends on seed and shot.
     pub fn shot(&mut self, seed: u64, shot: u64) -> Shot {
+        if self
+            .grain
+            .as_mut()
+            .is_some_and(|grain| grain.move_to(seed, &mut self.transform))
+        {
+            self.make_signal(&Variation::default());
+            let samples = self.still.len();
+            self.still.copy_from_slice(&self.signal[..samples]);
+        }
         let mut codes = Vec::with_capacity(self.still.len());
         let mut random = Random::new(seed, Purpose::Noise, shot);
         for &steps in &self.still {
@@ -281,6 +264,14 @@ impl Synthesiser {
             time_shift: finite(variation.time_shift).clamp(-longest, longest),
             wall_change: finite(variation.wall_change).clamp(-thickest, thickest),
         };
+        if self
+            .grain
+            .as_mut()
+            .is_some_and(|grain| grain.move_to(seed, &mut self.transform))
+        {
+            self.make_signal(&Variation::default());
+            self.still.copy_from_slice(&self.signal[..samples]);
+        }
         self.make_signal(&variation);
         let mut random = Random::new(seed, Purpose::Noise, shot);
         let mut codes = Vec::with_capacity(samples);
@@ -293,11 +284,17 @@ impl Synthesiser {
             ..self.truth.clone()
         };
         truth.wall_thickness_mm += variation.wall_change * 1e3;
+        truth.least_wall_mm = self.least_wall(variation.wall_change) * 1e3;
         truth.face_ns += variation.time_shift * 1e9;
         let longer = 2.0 * variation.wall_change / self.stack.wall.velocity;
+        let changed =
+            (!self.is_linear() && variation.wall_change != 0.0).then(|| self.changed_stack(variation.wall_change));
         for echo in &mut truth.echoes {
-            let later = variation.time_shift + f64::from(echo.wall_round_trips) * longer;
-            echo.arrival_ns += later * 1e9;
+            let later = match &changed {
+                None => f64::from(echo.wall_round_trips) * longer,
+                Some(stack) => self.later_in(stack, echo),
+            };
+            echo.arrival_ns += (variation.time_shift + later) * 1e9;
         }
         self.hand_over(codes, truth)
     }
@@ -320,18 +317,52 @@ impl Synthesiser {
         let most = self.paths.iter().map(|path| path.wall_trips).max().unwrap_or(0) as usize;
         let bins = self.pulse.values().len();
         // The beam spreads differently in another wall: not a factor per trip.
-        if beam_area(&self.scene).is_some() || (most + 1).saturating_mul(bins) > MOST_KEPT_BINS {
+        if self.element.spreads || !self.is_linear() || (most + 1).saturating_mul(bins) > MOST_KEPT_BINS {
             return;
         }
         self.by_trips = vec![vec![Complex::ZERO; bins]; most + 1];
         let mut slots: Vec<&mut [Complex]> = self.by_trips.iter_mut().map(Vec::as_mut_slice).collect();
         let start = self.scene.record.first_sample_us * 1e-6;
-        add_echoes(&mut slots, &self.pulse, &self.stack, &self.paths, None, start);
+        add_echoes(&mut slots, &self.pulse, &self.stack, &self.paths, self.element, start);
+    }
+
+    fn changed_stack(&self, wall_change: f64) -> Stack {
+        let mut stack = self.stack.clone();
+        stack.wall.thickness += wall_change;
+        stack
+    }
+
+    /// How much later an echo arrives in another stack.
+    fn later_in(&self, stack: &Stack, echo: &EchoTruth) -> f64 {
+        let same = |path: &&Path| {
+            path.role == echo.role
+                && path.coating_trips == echo.coating_round_trips
+                && path.wall_trips == echo.wall_round_trips
+                && (path.arrival * 1e9 - echo.arrival_ns).abs() < 1e-6
+        };
+        let path = self.paths.iter().find(same);
+        path.map_or(0.0, |path| stack.arrival_of(path) - path.arrival)
+    }
+
+    fn least_wall(&self, wall_change: f64) -> f64 {
+        least_wall(&self.scene, &self.changed_stack(wall_change))
+    }
+
+    /// Whether a thicker wall delays each path by the same time for every round trip through it.
+    fn is_linear(&self) -> bool {
+        self.stack.dual.is_none() && self.stack.mode_conversion.is_none() && self.stack.columns.is_empty()
     }
 
     /// Noise-free signal in steps of the converter.
     fn make_signal(&mut self, variation: &Variation) {
-        let spectrum = self.spectrum(variation.wall_change);
+        let mut spectrum = if variation.wall_change == 0.0 {
+            self.whole.clone()
+        } else {
+            self.spectrum(variation.wall_change)
+        };
+        if let Some(grain) = &self.grain {
+            grain.add_to(&mut spectrum);
+        }
         let shift = variation.time_shift;
         let factor = self.gain * self.converter.full_scale();
         let band = self.pulse.with_values(spectrum).shifted(shift, factor);
@@ -354,16 +385,15 @@ impl Synthesiser {
         let mut sum = vec![Complex::ZERO; self.pulse.values().len()];
         let wall = &self.stack.wall;
         if self.by_trips.is_empty() {
-            let mut stack = self.stack;
-            stack.wall.thickness += wall_change;
-            let longer = 2.0 * wall_change / wall.velocity;
+            let stack = self.changed_stack(wall_change);
             let mut paths = self.paths.clone();
-            for path in &mut paths {
-                path.arrival += f64::from(path.wall_trips) * longer;
+            if wall_change != 0.0 {
+                for path in &mut paths {
+                    path.arrival = stack.arrival_of(path);
+                }
             }
             let start = self.scene.record.first_sample_us * 1e-6;
-            let area = beam_area(&self.scene);
-            add_echoes(&mut [&mut sum], &self.pulse, &stack, &paths, area, start);
+            add_echoes(&mut [&mut sum], &self.pulse, &stack, &paths, self.element, start);
             return sum;
         }
         if wall_change == 0.0 {
@@ -407,20 +437,6 @@ fn noisy(steps: f64, noise: f64, random: &mut Random) -> f64 {
     }
 }
 
-fn has_losses(stack: &Stack) -> bool {
-    let lossy = |layer: Option<propagation::Layer>| layer.is_some_and(|layer| !layer.attenuation.is_none());
-    lossy(stack.delay_line) || lossy(stack.coating) || lossy(Some(stack.wall))
-}
-
-/// Square of the element's radius, if the beam is part of the scene.
-fn beam_area(scene: &Scene) -> Option<f64> {
-    let diameter = scene
-        .probe
-        .element_diameter_mm
-        .filter(|_| scene.probe.beam_diffraction)?;
-    Some(0.25e-6 * diameter * diameter)
-}
-
 /// The paths with what the table `[echoes]` asks for.
 fn echo_paths(scene: &Scene, stack: &Stack, until: f64) -> Result<Vec<Path>, SceneError> {
     let wanted = &scene.echoes;
@@ -445,6 +461,7 @@ fn echo_paths(scene: &Scene, stack: &Stack, until: f64) -> Result<Vec<Path>, Sce
         for path in paths.iter_mut().filter(|path| path.wall_trips > 0) {
             let trips = path.wall_trips;
             let ordered = first * libm::pow(decay, f64::from(trips - 1));
+            let before = path.amplitude;
             path.amplitude = if path.role == Role::BackWall {
                 ordered
             } else {
@@ -452,6 +469,11 @@ fn echo_paths(scene: &Scene, stack: &Stack, until: f64) -> Result<Vec<Path>, Sce
                     Some(&plain) if plain != 0.0 => path.amplitude * ordered / plain,
                     _ => 0.0,
                 }
+            };
+            path.weight = if path.weight == before {
+                path.amplitude
+            } else {
+                path.weight * path.amplitude / before
             };
         }
         let strongest = paths.iter().map(|path| path.amplitude.abs()).fold(0.0, f64::max);
@@ -492,98 +514,39 @@ fn noise_steps(scene: &Scene, first_steps: f64) -> Result<f64, SceneError> {
     })
 }
 
-fn echo_truth(path: &Path, share: f64) -> EchoTruth {
-    EchoTruth {
-        arrival_ns: path.arrival * 1e9,
-        amplitude_percent: share * 100.0,
-        polarity: if path.amplitude < 0.0 { "negative" } else { "positive" },
-        role: path.role,
-        multiple: path.multiple,
-        coating_round_trips: path.coating_trips,
-        wall_round_trips: path.wall_trips,
+/// Fewer bins of a spectrum whose signal is short: the figures of single echoes need no more.
+struct Thinner {
+    first: usize,
+    step: usize,
+}
+
+impl Thinner {
+    /// For echoes of a pulse of `length` seconds: a period of at least eight times that.
+    fn new(pulse: &BandPulse, length: f64) -> Self {
+        let most = 1.0 / (8.0 * length * pulse.spacing());
+        let mut step = 1;
+        while f64::from(2 * step as u32) <= most && step < 1024 {
+            step *= 2;
+        }
+        let first = pulse.first_bin().next_multiple_of(step) - pulse.first_bin();
+        Self { first, step }
     }
-}
 
-/// Adds the echoes' spectra, with time zero at `start`, to the slot of their round trips through the
-/// wall (to the only one if there is but one).
-fn add_echoes(
-    slots: &mut [&mut [Complex]],
-    pulse: &BandPulse,
-    stack: &Stack,
-    paths: &[Path],
-    beam: Option<f64>,
-    start: f64,
-) {
-    for_each_shape(pulse, stack, paths, beam, |path, shape| {
-        let slot = if slots.len() == 1 { 0 } else { path.wall_trips as usize };
-        let Some(sums) = slots.get_mut(slot) else { return };
-        let step = -TAU * pulse.spacing() * (path.arrival - start);
-        let turns = Rotation::new(step, pulse.first_bin() as u32);
-        for ((sum, &value), turn) in sums.iter_mut().zip(shape).zip(turns) {
-            *sum += (value * turn).scaled(path.amplitude);
-        }
-    });
-}
-
-/// Visits each path with the spectrum that losses and beam make of the pulse on its way, before
-/// reflection factors and delay.
-fn for_each_shape(
-    pulse: &BandPulse,
-    stack: &Stack,
-    paths: &[Path],
-    beam: Option<f64>,
-    mut visit: impl FnMut(&Path, &[Complex]),
-) {
-    let over = |layer: Option<propagation::Layer>| -> Vec<Complex> {
-        match layer.filter(|layer| !layer.attenuation.is_none()) {
-            Some(layer) => pulse
-                .frequencies()
-                .map(|frequency| layer.attenuation.over(2.0 * layer.thickness, frequency))
-                .collect(),
-            None => Vec::new(),
-        }
-    };
-    let (coating, wall) = (over(stack.coating), over(Some(stack.wall)));
-    let mut once = pulse.values().to_vec();
-    multiply(&mut once, &over(stack.delay_line), 1);
-    let mut order: Vec<&Path> = paths.iter().collect();
-    order.sort_by_key(|path| (path.coating_trips, path.wall_trips));
-    // The pulse after the round trips of the path before: the next path needs only the difference.
-    let mut travelled = once.clone();
-    let mut trips = (0, 0);
-    let mut heard = Vec::new();
-    for path in order {
-        if path.coating_trips != trips.0 {
-            multiply(&mut once, &coating, path.coating_trips - trips.0);
-            travelled.clone_from(&once);
-            trips = (path.coating_trips, 0);
-        }
-        multiply(&mut travelled, &wall, path.wall_trips - trips.1);
-        trips.1 = path.wall_trips;
-        let Some(area) = beam else {
-            visit(path, &travelled);
-            continue;
-        };
-        let spreading = stack.spreading(path) / area;
-        heard.clear();
-        heard.extend(travelled.iter().zip(pulse.frequencies()).map(|(&value, frequency)| {
-            // Frequency 0 spreads out without end.
-            let share = if frequency > 0.0 {
-                propagation::diffraction(spreading / frequency)
-            } else {
-                Complex::ZERO
-            };
-            value * share
-        }));
-        visit(path, &heard);
+    fn of(&self, pulse: &BandPulse, values: &[Complex]) -> BandPulse {
+        let thinned = values.iter().skip(self.first).step_by(self.step);
+        let scale = self.step as f64;
+        pulse.thinned(self.step, thinned.map(|value| value.scaled(scale)).collect())
     }
-}
 
-fn multiply(values: &mut [Complex], factors: &[Complex], times: u32) {
-    for _ in 0..times {
-        for (value, &factor) in values.iter_mut().zip(factors) {
-            *value = *value * factor;
-        }
+    /// Where the correlation of a shape (turned over, or not) with the pulse has its maximum, in seconds.
+    fn correlation_shift(&self, pulse: &BandPulse, shape: &[Complex], turned: bool, cycle: f64) -> f64 {
+        let sign = if turned { -1.0 } else { 1.0 };
+        let cross: Vec<Complex> = shape
+            .iter()
+            .zip(pulse.values())
+            .map(|(&value, pulse)| (value * pulse.conjugate()).scaled(sign))
+            .collect();
+        self.of(pulse, &cross).real_maximum(cycle)
     }
 }
 
