@@ -227,6 +227,8 @@ doubts! {
     ZeroContradicted = 11, "zero-contradicted", "set the zero again on a block, or state the coating";
     /// The echoes are not spaced evenly enough for the multiples of one wall.
     UnevenTrain = 12, "uneven-train", "look at the A-scan: a pit or a tilted back wall under the probe?";
+    /// Much of what came back belongs to no multiple of this wall.
+    UnexplainedEchoes = 13, "unexplained-echoes", "look at the A-scan: grain, a lamination or interference?";
 }
 
 /// A set of doubts.

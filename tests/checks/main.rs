@@ -9,3 +9,4 @@ mod val_gauge;
 mod val_pulse;
 mod val_population;
 mod val_train_fit;
+mod val_no_echo;

@@ -90,6 +90,8 @@ pub struct Train {
     pub unevenness: f32,
     /// Degrees of freedom of that scatter.
     pub freedom: u8,
+    /// Energy of the echoes inside the window, behind the start, that no multiple explains, over that of the multiples.
+    pub unexplained: f32,
     /// A wall of half or a third of this thickness would have its first echo in the dead zone and is not excluded by
     /// the others.
     pub may_be_double: bool,
@@ -126,6 +128,7 @@ struct Tooth {
     place: f32,
     amplitude: f32,
     gain: f32,
+    polarity: Polarity,
 }
 
 /// A period with its place.
@@ -160,7 +163,7 @@ pub fn find_train(
 ) -> Result<Train, Undecided> {
     let tolerance = 0.2 * surroundings.samples_per_cycle;
     let best = choose(surroundings, echoes, rules, tolerance)?;
-    Ok(fit(surroundings, echoes, rules, &best, tolerance, lags))
+    fit(surroundings, echoes, rules, &best, tolerance, lags).ok_or(Undecided::NoTrain)
 }
 
 /// The best hypothesis, if it leads.
@@ -182,6 +185,7 @@ fn choose(
             place: echo.position.as_samples(),
             amplitude: echo.amplitude,
             gain,
+            polarity: echo.polarity,
         });
     }
     let mut ranked: Vec<Hypothesis, 8> = Vec::new();
@@ -314,6 +318,7 @@ fn score(hypothesis: &mut Hypothesis, teeth: &Teeth, rules: &Rules, tolerance: f
     // What a tooth without echo says: an amplitude of one standard deviation.
     let missing = math::ln(1.0 + 1.0 / 3.0) - at_threshold - HOLE;
     let (mut sum, mut first, mut index) = (0.0, None, 0usize);
+    let mut polarity = None;
     let mut penalty = 0.0;
     if (hypothesis.zero - rules.start).abs() > rules.start_tolerance {
         penalty += START_CONTRADICTED;
@@ -333,7 +338,8 @@ fn score(hypothesis: &mut Hypothesis, teeth: &Teeth, rules: &Rules, tolerance: f
         // Echoes passed on the way that no tooth explains.
         let mut hit: Option<Tooth> = None;
         while let Some(tooth) = teeth.get(index).filter(|tooth| tooth.place < place + tolerance) {
-            if tooth.place > place - tolerance {
+            // All back walls of one wall are upright, or all upside down.
+            if tooth.place > place - tolerance && polarity.is_none_or(|p| p == tooth.polarity) {
                 hit = Some(hit.filter(|h| h.amplitude > tooth.amplitude).unwrap_or(*tooth));
             } else if tooth.amplitude > 0.35 * largest {
                 sum -= math::larger(tooth.gain, 0.0);
@@ -345,6 +351,7 @@ fn score(hypothesis: &mut Hypothesis, teeth: &Teeth, rules: &Rules, tolerance: f
                 sum += tooth.gain;
                 if first.is_none() {
                     first = Some(number);
+                    polarity = Some(tooth.polarity);
                     if tooth.amplitude < 0.22 * largest {
                         penalty += WEAK_FIRST;
                     }
@@ -391,7 +398,8 @@ struct Member {
     off: f32,
 }
 
-/// Joint least squares of start and period over all multiples.
+/// Joint least squares of start and period over all multiples; `None` if the first one, whose place everything
+/// counts from, is lost in it.
 #[inline(never)]
 fn fit(
     surroundings: &Surroundings<'_>,
@@ -400,7 +408,7 @@ fn fit(
     best: &Hypothesis,
     tolerance: f32,
     lags: &mut [f32; ECHO_CAPACITY * TRAIN_LAGS],
-) -> Train {
+) -> Option<Train> {
     let sign = sign_of_train(echoes, best, tolerance);
     // Re-anchor at the first multiple's own echo: its position is exact where the hypothesis is rounded.
     let anchor = echoes
@@ -422,6 +430,9 @@ fn fit(
     let origin = surroundings.pulse.facts.origin;
     let mut members = Members::new();
     collect(surroundings, rules, best, &line, sign, lags, &mut members);
+    if members.first().is_none_or(|first| first.step > 0) {
+        return None;
+    }
     let (mut s0, mut s1, mut s2) = (0.0, 0.0, 0.0);
     for _ in 0..3 {
         (s0, s1, s2) = (0.0, 0.0, 0.0);
@@ -472,7 +483,7 @@ fn fit(
         Some(math::sqrt(variance * s0 / determinant))
     };
     give_roles(surroundings, echoes, best, &line, &members, tolerance);
-    Train {
+    Some(Train {
         first_multiple: u8::try_from(best.first).unwrap_or(u8::MAX),
         echoes: members.len() as u8,
         period: line.period,
@@ -483,8 +494,24 @@ fn fit(
         start_difference: first.as_samples() - best.first as f32 * line.period - rules.start,
         unevenness,
         freedom,
+        unexplained: unexplained(echoes, rules),
         may_be_double: best.hidden,
+    })
+}
+
+/// Energy of what stands between the multiples over theirs.
+fn unexplained(echoes: &EchoList, rules: &Rules) -> f32 {
+    let (mut explained, mut left) = (0.0, 0.0);
+    for echo in echoes {
+        let place = echo.position.as_samples();
+        let energy = echo.amplitude * echo.amplitude;
+        match echo.role {
+            EchoRole::BackWall(_) => explained += energy,
+            EchoRole::Other if place > rules.start && place <= rules.visible_to => left += energy,
+            _ => {}
+        }
     }
+    if explained > 0.0 { left / explained } else { 0.0 }
 }
 
 /// Sign of the strongest multiple: all back walls of one wall share it.

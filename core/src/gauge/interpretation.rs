@@ -121,9 +121,13 @@ pub fn times(record: &Record<'_>, train: &Train, echoes: &[Echo]) -> TrainTimes 
     let first = role(EchoRole::BackWall(1)).map(timed).unwrap_or_else(|| {
         // The first back wall lies in the dead zone: it follows from the others.
         let steps = f32::from(train.first_multiple) - 1.0;
-        let u = period.map_or(Seconds::ZERO, |p| {
-            p.standard_uncertainty * f32::from(train.first_multiple)
-        });
+        let number = f32::from(train.first_multiple);
+        let u = match (period, role(EchoRole::BackWall(train.first_multiple))) {
+            (Some(period), _) => period.standard_uncertainty * number,
+            // A lone echo: its time after the start is divided, and its error with it.
+            (None, Some(lone)) => lone.standard_uncertainty / number,
+            (None, None) => seconds(train.period),
+        };
         Timed::new(clock.time_of(train.first) - seconds(train.period) * steps, u)
     });
     let mut times = TrainTimes::single(first);

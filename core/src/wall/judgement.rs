@@ -21,6 +21,10 @@ const SAMPLES_PER_CYCLE_LIMIT: f32 = 4.0;
 /// An echo of which this share of the amplitude is unexplained is hardly recognised.
 const UNRECOGNISED: f32 = 0.5;
 
+/// More energy than this share of the train's in echoes that the train does not explain: among so many, a train can be
+/// found by chance.
+const UNEXPLAINED_LIMIT: f32 = 0.5;
+
 /// What a reading rests on.
 #[derive(Clone, Copy, Debug)]
 pub struct Evidence<'a> {
@@ -116,6 +120,15 @@ impl Evidence<'_> {
         largest
     }
 
+    /// Does the reading rest on something that does not look like the pulse at all: a spike, a step? Between back walls
+    /// the strongest decides, elsewhere each.
+    fn is_strange(&self) -> bool {
+        let train = thickness::wall_span(self.setup) == Span::BackWallToBackWall;
+        let strongest = self.used().fold(0.0, |m, echo| math::larger(m, echo.amplitude));
+        self.used()
+            .any(|echo| echo.mismatch > UNRECOGNISED && !(train && echo.amplitude < strongest))
+    }
+
     /// Echoes that the reading is made from.
     fn used(&self) -> impl Iterator<Item = &Echo> {
         let span = thickness::wall_span(self.setup);
@@ -195,11 +208,13 @@ pub fn doubts(evidence: &Evidence<'_>) -> Doubts {
     );
     doubts.raise_if(train.period < facts.envelope_duration, Doubt::NearMinimum);
     doubts.raise_if(train.may_be_double, Doubt::PossibleDouble);
+    doubts.raise_if(train.unexplained > UNEXPLAINED_LIMIT, Doubt::UnexplainedEchoes);
 
     doubts.raise_if(
         evidence.differing_shift() > expanded + evidence.known_phase(),
         Doubt::OverlappingEcho,
     );
+    doubts.raise_if(evidence.is_strange(), Doubt::PulseMismatch);
     if span == Span::TransmissionPulseToBackWall
         && let Some(first) = evidence.back_wall(1)
     {
