@@ -16,6 +16,7 @@ const SAMPLES: usize = 4096;
 const FULL_SCALE: f64 = 2048.0;
 /// Records of every kind for each of the set-ups.
 const RECORDS: u64 = 48;
+fn how_many() -> u64 { std::env::var("NE").ok().and_then(|v| v.parse().ok()).unwrap_or(RECORDS) }
 
 /// What disturbs a record.
 #[derive(Clone, Copy, Debug)]
@@ -46,11 +47,15 @@ enum Disturbance {
     Red,
     /// Second-order autoregressive noise: a resonance inside the probe's band.
     Resonant,
+    /// A tone inside the band that swells and ebbs, as a transmitter or a switching supply does.
+    BeatingTone,
+    /// Hundreds of grains that scatter the pulse back, weaker with depth, and no back wall.
+    Grain,
     /// The end of the delay line and nothing behind it; on a contact probe just noise.
     InterfaceOnly,
 }
 
-const ALL: [Disturbance; 14] = [
+const ALL: [Disturbance; 16] = [
     Disturbance::White,
     Disturbance::Hum,
     Disturbance::ToneInBand,
@@ -64,6 +69,8 @@ const ALL: [Disturbance; 14] = [
     Disturbance::TransmissionPulse,
     Disturbance::Red,
     Disturbance::Resonant,
+    Disturbance::BeatingTone,
+    Disturbance::Grain,
     Disturbance::InterfaceOnly,
 ];
 
@@ -216,6 +223,29 @@ impl Bench {
                     x
                 });
             }
+            Disturbance::BeatingTone => {
+                let tone = self.frequency * (0.8 + 0.4 * random.uniform());
+                let beat = draw(random, 10e3, 1e6);
+                let order = draw(random, 1.0, 8.0);
+                add(&mut |t| {
+                    let swell = (0.5 + 0.5 * (TAU * beat * t).sin()).powf(order);
+                    size * swell * (TAU * tone * t + phase).sin()
+                });
+            }
+            Disturbance::Grain => {
+                let depth = draw(random, 3e-6, 100e-6);
+                let grains: Vec<(f64, f64)> = (0..400)
+                    .map(|_| (self.first + random.uniform() * SAMPLES as f64 / self.rate, random.normal()))
+                    .collect();
+                add(&mut |t| {
+                    let t = t + self.first;
+                    let near = grains.iter().filter(|(place, _)| (t - place).abs() < 3.0 / self.frequency);
+                    near.map(|(place, height)| {
+                        0.2 * size * height * (-place / depth).exp() * oracle::gaussian_pulse(t - place, self.frequency, 0.6)
+                    })
+                    .sum()
+                });
+            }
             Disturbance::InterfaceOnly => {
                 if self.delay_line {
                     let arrival = 10e-6 + 6e-6 * random.uniform();
@@ -251,8 +281,8 @@ fn val_nothing_to_read_is_never_read_without_a_doubt() {
         let mut tally = Tally::default();
         for (number, bench) in benches.iter().enumerate() {
             let mut gauge = Gauge::new(bench.setup, scratch.workspace()).expect("a sound set-up");
-            for seed in 0..RECORDS {
-                let mut random = Random::new(1 + seed + 1000 * (number as u64 + 10 * kind as u64));
+            for seed in 0..how_many() {
+                let mut random = Random::new(1 + seed + 1_000_000 * (number as u64 + 10 * kind as u64));
                 let codes = bench.record(what, &mut random);
                 let clock = SampleClock {
                     rate: bench.setup.sample_rate,
