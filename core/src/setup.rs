@@ -11,6 +11,12 @@ use core::fmt;
 /// [`SetupError::PulseTooLong`]: lower the sample rate or average neighbouring samples.
 pub const PULSE_CAPACITY: usize = 512;
 
+/// Is `value` a number from `low` to `high`? Limits far beyond anything real keep every result within what an
+/// `f32` holds: the square of a wall's uncertainty must not overflow.
+const fn within(value: f32, low: f32, high: f32) -> bool {
+    value >= low && value <= high
+}
+
 /// Which two events the thickness is read between.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
 pub enum Span {
@@ -316,11 +322,11 @@ impl GaugeSetup {
     pub const fn check(&self) -> Option<SetupError> {
         let rate = self.sample_rate.get();
         let probe = &self.probe;
-        // `is_finite` first: every comparison below then means what it says.
-        if !(rate.is_finite() && rate > 0.0) {
+        // Each comparison is false for "not a number".
+        if !within(rate, 1.0, 1e12) {
             return Some(SetupError::SampleRate);
         }
-        if !(probe.centre_frequency.is_finite() && probe.centre_frequency.get() > 0.0) {
+        if !within(probe.centre_frequency.get(), 1.0, 1e12) {
             return Some(SetupError::CentreFrequency);
         }
         if !(probe.relative_bandwidth > 0.0 && probe.relative_bandwidth <= 2.0) {
@@ -330,43 +336,46 @@ impl GaugeSetup {
             return Some(SetupError::SampleRateBelowBand);
         }
         if let Some(diameter) = probe.element_diameter
-            && !(diameter.is_finite() && diameter.get() > 0.0)
+            && !within(diameter.get(), 1e-6, 1e3)
         {
             return Some(SetupError::ElementDiameter);
         }
-        if !(probe.couplant_film.is_finite() && probe.couplant_film.get() >= 0.0) {
+        if !within(probe.couplant_film.get(), 0.0, 1.0) {
             return Some(SetupError::CouplantFilm);
         }
-        if !(self.material.velocity.is_finite() && self.material.velocity.get() > 0.0) {
+        if !within(self.material.velocity.get(), 1.0, 1e6) {
             return Some(SetupError::Velocity);
         }
         let velocity_uncertainty = self.material.velocity_standard_uncertainty;
-        if !(velocity_uncertainty.is_finite() && velocity_uncertainty.get() >= 0.0) {
+        if !within(velocity_uncertainty.get(), 0.0, 1e6) {
             return Some(SetupError::VelocityUncertainty);
         }
-        if !self.zero.offset.is_finite() {
+        if !within(self.zero.offset.get(), -1.0, 1.0) {
             return Some(SetupError::ZeroOffset);
         }
-        if !(self.zero.standard_uncertainty.is_finite() && self.zero.standard_uncertainty.get() >= 0.0) {
+        if !within(self.zero.standard_uncertainty.get(), 0.0, 1.0) {
             return Some(SetupError::ZeroUncertainty);
         }
         if !(self.zero.velocity_correlation >= -1.0 && self.zero.velocity_correlation <= 1.0) {
             return Some(SetupError::ZeroCorrelation);
         }
         let window = &self.window;
-        if !(window.from.is_finite() && window.to.is_finite() && window.from.get() < window.to.get()) {
+        if !(within(window.from.get(), -1e3, 1e3)
+            && within(window.to.get(), -1e3, 1e3)
+            && window.from.get() < window.to.get())
+        {
             return Some(SetupError::Window);
         }
-        if !(self.coverage_factor.is_finite() && self.coverage_factor > 0.0) {
+        if !within(self.coverage_factor, 1e-3, 1e3) {
             return Some(SetupError::CoverageFactor);
         }
         if let Some(coating) = self.coating
-            && !(coating.velocity.is_finite() && coating.velocity.get() > 0.0)
+            && !within(coating.velocity.get(), 1.0, 1e6)
         {
             return Some(SetupError::CoatingVelocity);
         }
         if let Some(range) = self.calibrated {
-            let ordered = range.from.is_finite() && range.to.is_finite() && range.from.get() <= range.to.get();
+            let ordered = range.from.is_finite() && range.to.get() <= 1e3 && range.from.get() <= range.to.get();
             if !(ordered && range.from.get() > 0.0) {
                 return Some(SetupError::CalibratedRange);
             }
@@ -428,22 +437,22 @@ impl SetupError {
     #[must_use]
     pub const fn sentence(&self) -> &'static str {
         match self {
-            Self::SampleRate => "sample rate must be a positive number of hertz",
+            Self::SampleRate => "sample rate must be a positive number of hertz, up to 1e12",
             Self::SampleRateBelowBand => {
                 "sample rate must be at least twice the probe's upper -6 dB frequency: sample faster or use a lower probe"
             }
-            Self::CentreFrequency => "centre frequency must be a positive number of hertz",
+            Self::CentreFrequency => "centre frequency must be a positive number of hertz, up to 1e12",
             Self::RelativeBandwidth => "relative bandwidth must be above 0 and at most 200 %",
-            Self::ElementDiameter => "element diameter must be a positive length, or left out if unknown",
-            Self::CouplantFilm => "couplant film must be zero or a positive length",
-            Self::Velocity => "velocity must be a positive number of metres per second",
-            Self::VelocityUncertainty => "velocity standard uncertainty must be zero or positive",
-            Self::ZeroOffset => "zero offset must be a number of seconds",
-            Self::ZeroUncertainty => "zero standard uncertainty must be zero or positive",
+            Self::ElementDiameter => "element diameter must be a positive length up to 1 km, or left out if unknown",
+            Self::CouplantFilm => "couplant film must be zero or a positive length up to 1 m",
+            Self::Velocity => "velocity must be a positive number of metres per second, from 1 to 1e6",
+            Self::VelocityUncertainty => "velocity standard uncertainty must be zero or positive, up to 1e6 m/s",
+            Self::ZeroOffset => "zero offset must be a number of seconds, less than 1",
+            Self::ZeroUncertainty => "zero standard uncertainty must be zero or positive, less than 1 s",
             Self::ZeroCorrelation => "correlation of velocity and zero must lie between -1 and 1",
             Self::Window => "the window must start before it ends",
-            Self::CoverageFactor => "coverage factor must be a positive number, normally 2",
-            Self::CoatingVelocity => "coating velocity must be a positive number of metres per second",
+            Self::CoverageFactor => "coverage factor must be a positive number up to 1000, normally 2",
+            Self::CoatingVelocity => "coating velocity must be a positive number of metres per second, from 1 to 1e6",
             Self::CalibratedRange => "calibrated range must go from a positive thickness to one not below it",
             Self::PulseTooLong => {
                 "the reference pulse is longer than the gauge can hold: lower the sample rate or use a wider band"

@@ -10,3 +10,4 @@ mod val_pulse;
 mod val_population;
 mod val_train_fit;
 mod val_no_echo;
+mod law_hostile;

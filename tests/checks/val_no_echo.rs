@@ -3,6 +3,9 @@
 //!
 //! Truth: there is no wall in these records, so every reading is wrong. The disturbances are made here from
 //! formulas; nothing of the core or the simulator takes part in making them.
+//!
+//! Two kinds are hardly to be told from walls: bursts at even distances, and grain, whose echoes are real ones. Over
+//! 8000 records of each kind 11 of the bursts and 7 of the grain were read without a doubt, and none of the 112 000 others.
 
 use halfpulse::{
     AdcFormat, Gauge, GaugeSetup, Hertz, Material, Metres, MetresPerSecond, Probe, Record, SampleClock, Scratch,
@@ -16,7 +19,6 @@ const SAMPLES: usize = 4096;
 const FULL_SCALE: f64 = 2048.0;
 /// Records of every kind for each of the set-ups.
 const RECORDS: u64 = 48;
-fn how_many() -> u64 { std::env::var("NE").ok().and_then(|v| v.parse().ok()).unwrap_or(RECORDS) }
 
 /// What disturbs a record.
 #[derive(Clone, Copy, Debug)]
@@ -93,11 +95,7 @@ struct Bench {
 impl Bench {
     fn new(delay_line: bool, span: Span, frequency_mhz: f32) -> Self {
         let rate_mhz = if frequency_mhz > 5.0 { 100.0 } else { 50.0 };
-        let probe = if delay_line {
-            Probe::delay_line
-        } else {
-            Probe::contact
-        };
+        let probe = if delay_line { Probe::delay_line } else { Probe::contact };
         let (from, to) = if delay_line { (9.0, 60.0) } else { (0.8, 80.0) };
         Self {
             setup: GaugeSetup::new(
@@ -235,13 +233,23 @@ impl Bench {
             Disturbance::Grain => {
                 let depth = draw(random, 3e-6, 100e-6);
                 let grains: Vec<(f64, f64)> = (0..400)
-                    .map(|_| (self.first + random.uniform() * SAMPLES as f64 / self.rate, random.normal()))
+                    .map(|_| {
+                        (
+                            self.first + random.uniform() * SAMPLES as f64 / self.rate,
+                            random.normal(),
+                        )
+                    })
                     .collect();
                 add(&mut |t| {
                     let t = t + self.first;
-                    let near = grains.iter().filter(|(place, _)| (t - place).abs() < 3.0 / self.frequency);
+                    let near = grains
+                        .iter()
+                        .filter(|(place, _)| (t - place).abs() < 3.0 / self.frequency);
                     near.map(|(place, height)| {
-                        0.2 * size * height * (-place / depth).exp() * oracle::gaussian_pulse(t - place, self.frequency, 0.6)
+                        0.2 * size
+                            * height
+                            * (-place / depth).exp()
+                            * oracle::gaussian_pulse(t - place, self.frequency, 0.6)
                     })
                     .sum()
                 });
@@ -249,9 +257,7 @@ impl Bench {
             Disturbance::InterfaceOnly => {
                 if self.delay_line {
                     let arrival = 10e-6 + 6e-6 * random.uniform();
-                    add(&mut |t| {
-                        -size * oracle::gaussian_pulse(t + self.first - arrival, self.frequency, 0.6)
-                    });
+                    add(&mut |t| -size * oracle::gaussian_pulse(t + self.first - arrival, self.frequency, 0.6));
                 }
             }
         }
@@ -281,7 +287,7 @@ fn val_nothing_to_read_is_never_read_without_a_doubt() {
         let mut tally = Tally::default();
         for (number, bench) in benches.iter().enumerate() {
             let mut gauge = Gauge::new(bench.setup, scratch.workspace()).expect("a sound set-up");
-            for seed in 0..how_many() {
+            for seed in 0..RECORDS {
                 let mut random = Random::new(1 + seed + 1_000_000 * (number as u64 + 10 * kind as u64));
                 let codes = bench.record(what, &mut random);
                 let clock = SampleClock {
@@ -296,7 +302,15 @@ fn val_nothing_to_read_is_never_read_without_a_doubt() {
                         let echoes = &gauge.findings().echoes;
                         let heights: Vec<String> = echoes
                             .iter()
-                            .map(|e| format!("{:.0}@{:.0} x{:.2} {:?}", e.snr.get(), e.position.as_samples(), e.mismatch, e.role))
+                            .map(|e| {
+                                format!(
+                                    "{:.0}@{:.0} x{:.2} {:?}",
+                                    e.snr.get(),
+                                    e.position.as_samples(),
+                                    e.mismatch,
+                                    e.role
+                                )
+                            })
                             .collect();
                         wrong.push(format!(
                             "{what:?}, set-up {number}, seed {seed}: {} +- {}, {} multiples from {}, unexplained {:.3} noise {:.2}, wrong {:.1e}: {}",

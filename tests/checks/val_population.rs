@@ -119,7 +119,6 @@ fn population(kind: ProbeKind, span: Span, shots: u32, seed: u64) -> Tally {
                 let error = (f64::from(reading.thickness.get()) - scene.wall.thickness_mm * 1e-3).abs();
                 let expanded = f64::from(reading.expanded().get());
                 let gross = error > expanded + quarter;
-                println!("M {kind:?} {span:?} {} {:.4}", reading.doubts.is_empty(), gauge.findings().train.unwrap().unexplained);
                 if reading.doubts.is_empty() {
                     tally.undoubted_gross += u32::from(gross);
                     tally.undoubted_outside += u32::from(error > expanded);

@@ -42,6 +42,8 @@ const HIDDEN: f32 = 1.1;
 const WEAK_FIRST: f32 = 6.0;
 /// Loss for a train whose start contradicts the zero or the interface.
 const START_CONTRADICTED: f32 = 1.0;
+/// Highest number of a multiple. A start so far off that more would fit before the first echo is a wrong one.
+const LAST_MULTIPLE: u32 = 200;
 /// Echoes of other origin that may stand between two multiples.
 const STRANGERS: usize = 3;
 /// Multiples above this many standard deviations of their amplitude take part in the fit.
@@ -326,7 +328,8 @@ fn score(hypothesis: &mut Hypothesis, teeth: &Teeth, rules: &Rules, tolerance: f
     let mut number = 1u32;
     loop {
         let place = hypothesis.zero + number as f32 * hypothesis.period;
-        if place > last_place + tolerance || place > rules.visible_to {
+        // Written so that "not a number" ends it too.
+        if !(place <= last_place + tolerance && place <= rules.visible_to) || number > LAST_MULTIPLE {
             break;
         }
         if place < rules.visible_from {
@@ -468,6 +471,10 @@ fn fit(
     if lone {
         line.period = (first.as_samples() - rules.start) / best.first as f32;
     }
+    // A lone echo before the start is no wall's; nor is a fit that has run away.
+    if !(line.period > 0.0) {
+        return None;
+    }
     let variance = surroundings.noise * surroundings.noise / surroundings.pulse.facts.derivative_energy;
     let determinant = s0 * s2 - s1 * s1;
     let (mut scatter, mut strongest) = (0.0, 0.0);
@@ -499,7 +506,8 @@ fn fit(
     })
 }
 
-/// Energy of what stands between the multiples over theirs.
+/// Energy of what stands between the multiples over theirs. What does not look like the pulse (the tail of a strong
+/// interface echo) counts by the share of it that does.
 fn unexplained(echoes: &EchoList, rules: &Rules) -> f32 {
     let (mut explained, mut left) = (0.0, 0.0);
     for echo in echoes {
@@ -507,7 +515,9 @@ fn unexplained(echoes: &EchoList, rules: &Rules) -> f32 {
         let energy = echo.amplitude * echo.amplitude;
         match echo.role {
             EchoRole::BackWall(_) => explained += energy,
-            EchoRole::Other if place > rules.start && place <= rules.visible_to => left += energy,
+            EchoRole::Other if place > rules.start && place <= rules.visible_to => {
+                left += energy / (1.0 + echo.mismatch * echo.mismatch);
+            }
             _ => {}
         }
     }

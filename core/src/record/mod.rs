@@ -14,7 +14,7 @@ pub struct AdcFormat {
     /// The converter's bits, 2 to 16.
     pub bits: u8,
     /// Codes of the record per step of the converter (1 for a single shot; more after averaging,
-    /// whose sums are shifted to fill 16 bits).
+    /// whose sums are shifted to fill 16 bits). What is not a positive number up to 32768 counts as 1.
     pub codes_per_step: f32,
     /// Shots that were averaged into the record.
     pub shots: u16,
@@ -39,13 +39,22 @@ impl AdcFormat {
         } else {
             15
         };
-        (1u32 << shift) as f32 * self.codes_per_step
+        (1u32 << shift) as f32 * self.step()
+    }
+
+    /// Codes per step, or 1 if that is impossible.
+    fn step(&self) -> f32 {
+        if self.codes_per_step > 0.0 && self.codes_per_step <= 32_768.0 {
+            self.codes_per_step
+        } else {
+            1.0
+        }
     }
 
     /// The highest code that is not clipped lies below this one.
     #[must_use]
     pub fn upper_rail(&self) -> i16 {
-        let rail = math::round_to_i32(self.full_scale() - self.codes_per_step);
+        let rail = math::round_to_i32(self.full_scale() - self.step());
         i16::try_from(rail).unwrap_or(i16::MAX)
     }
 
@@ -60,7 +69,7 @@ impl AdcFormat {
     /// is never taken to be below it.
     #[must_use]
     pub fn rounding_noise(&self) -> f32 {
-        self.codes_per_step * 0.288_675_13
+        self.step() * 0.288_675_13
     }
 }
 

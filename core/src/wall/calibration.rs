@@ -78,7 +78,7 @@ pub fn zero_at_known_velocity(block: &Block, material: &Material) -> Result<Zero
     let trip = block.thickness * 2.0 / velocity;
     let from_velocity = trip.get() * doubt;
     let uncertainty = math::sqrt(block.variance(velocity) + from_velocity * from_velocity);
-    Ok(Zero {
+    finite_zero(Zero {
         offset: block.time - trip,
         standard_uncertainty: Seconds::new(uncertainty),
         velocity_correlation: share(from_velocity, uncertainty),
@@ -136,11 +136,11 @@ pub fn zero_and_velocity(one: &Block, other: &Block) -> Result<(Zero, Material),
     let zero_uncertainty = of_two(near, far);
     let covariance = (near * e1 + far * e2) / time;
     Ok((
-        Zero {
+        finite_zero(Zero {
             offset: thin.time - Seconds::new(trip),
             standard_uncertainty: Seconds::new(zero_uncertainty),
             velocity_correlation: share(covariance, relative * zero_uncertainty),
-        },
+        })?,
         Material::new(velocity, velocity * relative),
     ))
 }
@@ -180,7 +180,16 @@ pub fn velocity_from_thickness(block: &Block, zero: &Zero) -> Result<(Zero, Mate
         velocity_correlation: share(of_zero, relative),
         ..*zero
     };
-    Ok((zero, Material::new(velocity, velocity * relative)))
+    Ok((finite_zero(zero)?, Material::new(velocity, velocity * relative)))
+}
+
+/// Refuses what has left the range of numbers on the way: microseconds squared fit, years do not.
+fn finite_zero(zero: Zero) -> Result<Zero, CalibrationError> {
+    if zero.offset.is_finite() && zero.standard_uncertainty.is_finite() && zero.velocity_correlation.is_finite() {
+        Ok(zero)
+    } else {
+        Err(CalibrationError::NotANumber)
+    }
 }
 
 /// Refuses a velocity that no wall has.
