@@ -16,8 +16,9 @@ pub mod train;
 use crate::echo::arrival::{Arrival, Estimator, Search, estimate, group_lag_noise};
 use crate::echo::correlation::{Sign, energy};
 use crate::echo::pulse::ReferencePulse;
+use crate::echo::scan::Candidate;
 use crate::math;
-use crate::record::Record;
+use crate::record::{Record, SampleRange};
 use crate::units::{Decibels, SamplePosition, Seconds};
 use crate::workspace::ECHO_CAPACITY;
 use heapless::Vec;
@@ -126,6 +127,11 @@ impl Surroundings<'_> {
 /// nothing of a wrong pulse, of overlapping echoes and of coherent noise: see [`Echo::mismatch`].
 #[must_use]
 pub fn measure_echo(surroundings: &Surroundings<'_>, index: u32, sign: Sign, scratch: &mut [f32]) -> Option<Echo> {
+    echo_at(surroundings, find_arrival(surroundings, index, sign, scratch)?)
+}
+
+/// The least-squares arrival near `index`.
+fn find_arrival(surroundings: &Surroundings<'_>, index: u32, sign: Sign, scratch: &mut [f32]) -> Option<Arrival> {
     let samples_per_cycle = surroundings.samples_per_cycle;
     let search = Search {
         around: index,
@@ -134,8 +140,7 @@ pub fn measure_echo(surroundings: &Surroundings<'_>, index: u32, sign: Sign, scr
         samples_per_cycle,
     };
     let codes = surroundings.record.codes();
-    let arrival = estimate(Estimator::LeastSquares, codes, &search, &surroundings.pulse, scratch)?;
-    echo_at(surroundings, arrival)
+    estimate(Estimator::LeastSquares, codes, &search, &surroundings.pulse, scratch)
 }
 
 /// Everything about an echo whose arrival is known.
@@ -191,11 +196,90 @@ fn under<'r>(record: &Record<'r>, pulse: &ReferencePulse<'_>, position: SamplePo
 
 /// Mean square of what a fitted pulse leaves of an echo, in squared codes: the noise's variance if nothing else is
 /// there, more if the shapes differ. Delay, amplitude and mean were fitted.
-#[must_use]
-pub fn unexplained_per_sample(record: &Record<'_>, pulse: &ReferencePulse<'_>, echo: &Echo) -> Option<f32> {
-    let codes = under(record, pulse, echo.position)?;
-    let left = energy(codes) - echo.amplitude * echo.amplitude * pulse.facts.energy;
+fn unexplained_per_sample(record: &Record<'_>, pulse: &ReferencePulse<'_>, arrival: &Arrival) -> Option<f32> {
+    let codes = under(record, pulse, arrival.position)?;
+    let left = energy(codes) - arrival.amplitude * arrival.amplitude * pulse.facts.energy;
     Some(math::larger(left, 0.0) / math::larger(codes.len() as f32 - 3.0, 1.0))
+}
+
+/// Fits the pulse at every candidate inside `range` and lists the echoes. Gives the noise, in codes: the
+/// scan's (`surroundings.noise`), or less where the fits show that echoes have been taken for noise.
+///
+/// Where echoes fill the record, the scan finds no quiet stretch. What the two best fits leave over is
+/// then a better estimate; it is believed where it lies below the scan's by more than chance (three
+/// standard deviations of what so few samples tell, at least 30 %).
+pub fn measure_echoes(
+    surroundings: &Surroundings<'_>,
+    candidates: &[Candidate],
+    range: SampleRange,
+    echoes: &mut EchoList,
+    scratch: &mut [f32],
+) -> f32 {
+    let (record, pulse) = (&surroundings.record, &surroundings.pulse);
+    let cycle = surroundings.samples_per_cycle;
+    let inside = |index: u32| index >= range.start && index < range.end;
+    // A pulse that stands out of the record would be taken for its neighbouring half cycle that does
+    // not: a cycle of margin at either end.
+    let whole = |offset: f32| usize::try_from(math::saturating_i32(offset + cycle)).unwrap_or(0);
+    let before = whole(pulse.facts.origin);
+    let after = whole(f32::from(pulse.facts.length) - pulse.facts.origin);
+    let usable = |index: u32| {
+        let place = index as usize;
+        inside(index) && place >= before && place + after < record.codes().len()
+    };
+
+    let mut arrivals: Vec<Arrival, ECHO_CAPACITY> = Vec::new();
+    for candidate in candidates.iter().filter(|candidate| usable(candidate.index)) {
+        let arrival = find_arrival(surroundings, candidate.index, Sign::Either, scratch);
+        let Some(arrival) = arrival.filter(|arrival| inside(arrival.position.index)) else {
+            continue;
+        };
+        // Two candidates can climb to one top.
+        let twin = arrivals
+            .last_mut()
+            .filter(|last| arrival.position.samples_after(last.position).abs() < cycle);
+        match twin {
+            Some(last) if arrival.amplitude.abs() > last.amplitude.abs() => *last = arrival,
+            Some(_) => {}
+            None => {
+                // As many places as candidates: it cannot be full.
+                let _ = arrivals.push(arrival);
+            }
+        }
+    }
+
+    let (mut quietest, mut second) = (f32::INFINITY, f32::INFINITY);
+    for left in arrivals
+        .iter()
+        .filter_map(|arrival| unexplained_per_sample(record, pulse, arrival))
+    {
+        if left < quietest {
+            (quietest, second) = (left, quietest);
+        } else if left < second {
+            second = left;
+        }
+    }
+    // Relative standard deviation of one estimate; picking the two smallest biases by about as much.
+    let spread = 1.0 / math::sqrt(2.0 * math::larger(f32::from(pulse.facts.length) - 3.0, 1.0));
+    let fitted = math::larger(
+        math::sqrt(0.5 * (quietest + second)) * (1.0 + spread),
+        record.format().rounding_noise(),
+    );
+    let limit = math::smaller(0.7, 1.0 - 3.0 * spread);
+    let noise = if fitted < limit * surroundings.noise {
+        fitted
+    } else {
+        surroundings.noise
+    };
+
+    let surroundings = Surroundings { noise, ..*surroundings };
+    echoes.clear();
+    for arrival in arrivals {
+        if let Some(echo) = echo_at(&surroundings, arrival) {
+            let _ = echoes.push(echo);
+        }
+    }
+    noise
 }
 
 /// The echoes of one record in the order of their arrival.

@@ -200,13 +200,8 @@ impl<'w> Gauge<'w> {
         self.findings = Findings::default();
         let range = self.usable_range(record)?;
         let mut scan = self.scan(record, range);
-        let mut outcome = self.read(record, range, &scan);
-        // Where echoes fill the record, the scan has taken them for noise; what the fits leave over knows better.
-        if let Some(noise) = self.noise_beside_fits(record) {
-            scan.noise = noise;
-            self.findings.echoes.clear();
-            outcome = self.read(record, range, &scan);
-        }
+        self.measure_echoes(record, range, &mut scan);
+        let outcome = self.read(record, range, &scan);
         // What is known of the pulse helps most where there was no reading.
         self.describe(record);
         outcome

@@ -2,12 +2,11 @@
 
 use super::interpretation::{clearest, rules, start_of_wall, times};
 use super::{CoatingReading, Gauge, Reading};
-use crate::echo::correlation::Sign;
 use crate::echo::pulse::{PulseContext, ReferencePulse, measure_pulse};
 use crate::echo::scan::{Scan, scan};
 use crate::echo::separation::{judge, nearest_pair};
 use crate::echo::train::{Undecided, find_train};
-use crate::echo::{EchoRole, Surroundings, measure_echo, unexplained_per_sample};
+use crate::echo::{Surroundings, measure_echoes};
 use crate::math;
 use crate::outcome::NoReading;
 use crate::record::{Record, SampleRange};
@@ -21,28 +20,6 @@ use crate::workspace::Workspace;
 const CLIPPED_LIMIT: u16 = 30;
 
 impl Gauge<'_> {
-    /// Noise from what the fitted pulses leave of the back walls: the mean of the two quietest, if that
-    /// is far below the scan's estimate (less could be chance).
-    pub(super) fn noise_beside_fits(&self, record: &Record<'_>) -> Option<f32> {
-        let (mut quietest, mut second) = (f32::INFINITY, f32::INFINITY);
-        for echo in self
-            .findings
-            .echoes
-            .iter()
-            .filter(|echo| matches!(echo.role, EchoRole::BackWall(_)))
-        {
-            let left = unexplained_per_sample(record, &self.pulse(), echo)?;
-            if left < quietest {
-                (quietest, second) = (left, quietest);
-            } else if left < second {
-                second = left;
-            }
-        }
-        let noise = math::sqrt(0.5 * (quietest + second));
-        let noise = math::larger(noise, record.format().rounding_noise());
-        (noise < 0.7 * self.findings.noise).then_some(noise)
-    }
-
     /// Checks what can be checked before looking at the codes' course.
     pub(super) fn usable_range(&mut self, record: &Record<'_>) -> Result<SampleRange, NoReading> {
         let (expected, got) = (self.setup.sample_rate, record.clock().rate);
@@ -98,8 +75,8 @@ impl Gauge<'_> {
         )
     }
 
-    /// Fits the pulse at every candidate.
-    pub(super) fn measure_echoes(&mut self, record: &Record<'_>, range: SampleRange, scan: &Scan) {
+    /// Fits the pulse at every candidate; the noise may turn out lower than the scan thought.
+    pub(super) fn measure_echoes(&mut self, record: &Record<'_>, range: SampleRange, scan: &mut Scan) {
         let Workspace { pulse, correlation, .. } = &mut self.workspace;
         let surroundings = Surroundings {
             record: *record,
@@ -107,38 +84,18 @@ impl Gauge<'_> {
             noise: scan.noise,
             samples_per_cycle: self.setup.samples_per_cycle(),
         };
-        let cycle = surroundings.samples_per_cycle;
-        for candidate in scan
-            .candidates
-            .iter()
-            .filter(|c| c.index >= range.start && c.index < range.end)
-        {
-            let Some(echo) = measure_echo(&surroundings, candidate.index, Sign::Either, &mut correlation[..]) else {
-                continue;
-            };
-            if echo.position.index < range.start || echo.position.index >= range.end {
-                continue;
-            }
-            // Two candidates can climb to one top.
-            let echoes = &mut self.findings.echoes;
-            let twin = echoes
-                .last_mut()
-                .filter(|last| echo.position.samples_after(last.position).abs() < cycle);
-            match twin {
-                Some(last) if echo.amplitude > last.amplitude => *last = echo,
-                Some(_) => {}
-                None => {
-                    // As many places as candidates: it cannot be full.
-                    let _ = echoes.push(echo);
-                }
-            }
-        }
+        scan.noise = measure_echoes(
+            &surroundings,
+            &scan.candidates,
+            range,
+            &mut self.findings.echoes,
+            &mut correlation[..],
+        );
+        self.findings.noise = scan.noise;
     }
 
-    /// From candidates to a reading.
+    /// From echoes to a reading.
     pub(super) fn read(&mut self, record: &Record<'_>, range: SampleRange, scan: &Scan) -> Result<Reading, NoReading> {
-        self.findings.noise = scan.noise;
-        self.measure_echoes(record, range, scan);
         if self.findings.echoes.is_empty() {
             return Err(self.nothing_found(record, range));
         }

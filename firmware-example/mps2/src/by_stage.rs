@@ -4,21 +4,18 @@
 //! It must give the reading that the gauge gives, which a test holds it to, and its sum must be what the
 //! gauge takes, which `cargo board cost` holds it to.
 
-use halfpulse::echo::correlation::Sign;
 use halfpulse::echo::pulse::{PulseContext, PulseFacts, ReferencePulse, measure_pulse, model};
 use halfpulse::echo::scan::{Detector, Scan, scan};
 use halfpulse::echo::separation::{judge, nearest_pair};
 use halfpulse::echo::train::{Train, Undecided, find_train};
-use halfpulse::echo::{Surroundings, measure_echo, unexplained_per_sample};
+use halfpulse::echo::{Surroundings, measure_echoes};
 use halfpulse::gauge::interpretation::{clearest, rules, start_of_wall, times};
 use halfpulse::math;
 use halfpulse::record::SampleRange;
 use halfpulse::setup::PULSE_CAPACITY;
 use halfpulse::wall::judgement::{self, Evidence};
 use halfpulse::wall::{thickness, uncertainty};
-use halfpulse::{
-    CoatingReading, EchoList, EchoRole, GaugeSetup, Metres, NoReading, Reading, Record, SetupError, Workspace,
-};
+use halfpulse::{CoatingReading, EchoList, GaugeSetup, Metres, NoReading, Reading, Record, SetupError, Workspace};
 
 /// The stages, in the order in which a record goes through them.
 pub const STAGES: [&str; 6] = ["health", "scan", "echoes", "train", "wall", "pulse"];
@@ -100,12 +97,8 @@ impl<'w> Prepared<'w> {
             )
         });
         let mut echoes = EchoList::new();
-        let mut outcome = self.read(record, range, &found, &mut echoes, meter);
-        let better = meter.count(3, || self.noise_beside_fits(record, &found, &echoes));
-        if let Some(noise) = better {
-            found.noise = noise;
-            outcome = self.read(record, range, &found, &mut echoes, meter);
-        }
+        meter.count(2, || self.measure_echoes(record, range, &mut found, &mut echoes));
+        let outcome = self.read(record, range, &found, &mut echoes, meter);
         meter.count(5, || self.describe(record, found.noise, &echoes));
         outcome
     }
@@ -118,7 +111,6 @@ impl<'w> Prepared<'w> {
         echoes: &mut EchoList,
         meter: &mut impl Meter,
     ) -> Result<Reading, NoReading> {
-        meter.count(2, || self.measure_echoes(record, range, found, echoes));
         if echoes.is_empty() {
             return Err(meter.count(2, || self.nothing_found(record, range, found.noise)));
         }
@@ -126,8 +118,7 @@ impl<'w> Prepared<'w> {
         meter.count(4, || self.wall(record, found.noise, echoes, &train))
     }
 
-    fn measure_echoes(&mut self, record: &Record<'_>, range: SampleRange, found: &Scan, echoes: &mut EchoList) {
-        echoes.clear();
+    fn measure_echoes(&mut self, record: &Record<'_>, range: SampleRange, found: &mut Scan, echoes: &mut EchoList) {
         let Workspace { pulse, correlation, .. } = &mut self.workspace;
         let surroundings = Surroundings {
             record: *record,
@@ -135,24 +126,7 @@ impl<'w> Prepared<'w> {
             noise: found.noise,
             samples_per_cycle: self.setup.samples_per_cycle(),
         };
-        let inside = |index: u32| index >= range.start && index < range.end;
-        for candidate in found.candidates.iter().filter(|candidate| inside(candidate.index)) {
-            let echo = measure_echo(&surroundings, candidate.index, Sign::Either, &mut correlation[..]);
-            let Some(echo) = echo.filter(|echo| inside(echo.position.index)) else {
-                continue;
-            };
-            let cycle = surroundings.samples_per_cycle;
-            let twin = echoes
-                .last_mut()
-                .filter(|last| echo.position.samples_after(last.position).abs() < cycle);
-            match twin {
-                Some(last) if echo.amplitude > last.amplitude => *last = echo,
-                Some(_) => {}
-                None => {
-                    let _ = echoes.push(echo);
-                }
-            }
-        }
+        found.noise = measure_echoes(&surroundings, &found.candidates, range, echoes, &mut correlation[..]);
     }
 
     fn nothing_found(&self, record: &Record<'_>, range: SampleRange, noise: f32) -> NoReading {
@@ -192,22 +166,6 @@ impl<'w> Prepared<'w> {
                 next: Metres::ZERO,
             },
         })
-    }
-
-    fn noise_beside_fits(&self, record: &Record<'_>, found: &Scan, echoes: &EchoList) -> Option<f32> {
-        let pulse = ReferencePulse::new(self.workspace.pulse, self.facts);
-        let (mut quietest, mut second) = (f32::INFINITY, f32::INFINITY);
-        for echo in echoes.iter().filter(|echo| matches!(echo.role, EchoRole::BackWall(_))) {
-            let left = unexplained_per_sample(record, &pulse, echo)?;
-            if left < quietest {
-                (quietest, second) = (left, quietest);
-            } else if left < second {
-                second = left;
-            }
-        }
-        let noise = math::sqrt(0.5 * (quietest + second));
-        let noise = math::larger(noise, record.format().rounding_noise());
-        (noise < 0.7 * found.noise).then_some(noise)
     }
 
     fn wall(&self, record: &Record<'_>, noise: f32, echoes: &EchoList, train: &Train) -> Result<Reading, NoReading> {
