@@ -54,10 +54,24 @@ impl Table {
 }
 
 /// One row of a [`Table`].
-#[derive(Clone, Copy, Debug)]
+#[derive(Clone, Copy)]
 pub struct Row<'t> {
     table: &'t Table,
     index: usize,
+}
+
+impl std::fmt::Debug for Row<'_> {
+    /// The row alone, for the messages of checks.
+    fn fmt(&self, f: &mut std::fmt::Formatter<'_>) -> std::fmt::Result {
+        let cells = self.table.rows.get(self.index).map(|row| row.join(","));
+        write!(
+            f,
+            "{}, line {}: {}",
+            self.table.name,
+            self.index + 2,
+            cells.unwrap_or_default()
+        )
+    }
 }
 
 impl<'t> Row<'t> {

@@ -12,6 +12,8 @@ pub struct Attenuation {
     exponent: f64,
     /// Reference frequency in hertz, at which the velocity is the layer's.
     reference: f64,
+    /// tan(pi y / 2).
+    tangent: f64,
 }
 
 impl Attenuation {
@@ -22,6 +24,7 @@ impl Attenuation {
             at_reference: decibels * (LN_10 / 20.0),
             exponent,
             reference,
+            tangent: libm::tan(FRAC_PI_2 * exponent),
         }
     }
 
@@ -50,7 +53,7 @@ impl Attenuation {
         if (self.exponent - 1.0).abs() < 1e-6 {
             -scale * libm::log(ratio) / FRAC_PI_2
         } else {
-            scale * libm::tan(FRAC_PI_2 * self.exponent) * (libm::pow(ratio, self.exponent - 1.0) - 1.0)
+            scale * self.tangent * (libm::pow(ratio, self.exponent - 1.0) - 1.0)
         }
     }
 

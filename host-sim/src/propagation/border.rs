@@ -5,7 +5,7 @@
 use crate::fourier::Complex;
 use crate::layered::{ExactLayer, two_port};
 use serde::Serialize;
-use std::f64::consts::{FRAC_PI_2, FRAC_PI_4, PI, TAU};
+use std::f64::consts::{FRAC_PI_2, FRAC_PI_4, TAU};
 
 /// Places on the element at which the gap under it is evaluated.
 const STRIPS: u32 = 128;
@@ -88,6 +88,18 @@ impl Factors {
             front: Complex::new(reflection, 0.0),
             through: Complex::new(1.0 - reflection * reflection, 0.0),
             below: Complex::new(-reflection, 0.0),
+        }
+    }
+
+    /// The sign by which an echo of these meetings is called positive or negative: a passage delays and
+    /// does not turn over, however far its phase lags; a reflection has the sign of its real part.
+    #[must_use]
+    pub fn sign(&self, meetings: Meetings) -> f64 {
+        let turned = |factor: Complex, count: u32| factor.re < 0.0 && count % 2 == 1;
+        if turned(self.front, meetings.front) == turned(self.below, meetings.below) {
+            1.0
+        } else {
+            -1.0
         }
     }
 
@@ -218,12 +230,4 @@ impl BorderBand {
         }
         &self.product
     }
-}
-
-/// Phase of a factor against that of `plain`, as a delay in seconds at `frequency`.
-#[must_use]
-pub fn phase_delay(factor: Complex, plain: f64, frequency: f64) -> f64 {
-    let sign = if plain < 0.0 { -1.0 } else { 1.0 };
-    let angle = libm::atan2(sign * factor.im, sign * factor.re);
-    -angle / (2.0 * PI * frequency)
 }

@@ -68,9 +68,7 @@ impl Search<'_> {
         let amplitude = if meetings == Meetings::default() {
             weight
         } else {
-            let factor = self.border.product(meetings);
-            let sign = if factor.re < 0.0 { -1.0 } else { 1.0 };
-            weight * sign * factor.magnitude()
+            weight * self.border.sign(meetings) * self.border.product(meetings).magnitude()
         };
         self.found.push(Path {
             column,

@@ -89,8 +89,20 @@ fn explain(text: &str, error: &toml::de::Error) -> SceneFileError {
             remedy,
         };
     }
+    let at = line
+        .and_then(|line| text.lines().nth(line as usize - 1))
+        .unwrap_or_default();
+    if at.trim_start().starts_with("[[") && message.starts_with("invalid type") {
+        return SceneFileError {
+            line,
+            what: "is a list of tables where one table is expected".to_string(),
+            remedy: "give one of it in single brackets: a scene has one coating, one wall, one pit".to_string(),
+        };
+    }
     let remedy = if message.starts_with("missing field") {
         "add it"
+    } else if message.starts_with("invalid type: string") && !message.contains("expected a string") {
+        "give the number alone, without quotes; its unit stands in the key's name"
     } else if message.starts_with("invalid type") || message.starts_with("invalid value") {
         "give the kind of value that is expected"
     } else {

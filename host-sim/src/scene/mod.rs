@@ -403,3 +403,6 @@ impl Scene {
         }
     }
 }
+
+#[cfg(test)]
+mod part_tests;

@@ -15,7 +15,7 @@ use crate::scene::{Scene, SceneError};
 use crate::transducer::{self, BandPulse, PulseFigures};
 use grain::GrainNoise;
 use halfpulse::{AdcFormat, Hertz, Record, SampleClock, Seconds};
-use shapes::{Element, add_echoes, are_changed, for_each_shape};
+use shapes::{Element, add_echo, add_echoes, are_changed, for_each_shape};
 use std::f64::consts::TAU;
 pub use truth::{EchoTruth, Truth};
 use truth::{echo_truth, least_wall};
@@ -80,8 +80,8 @@ pub struct Synthesiser {
     element: Element,
     /// Echoes of the wall's grains.
     grain: Option<GrainNoise>,
-    /// Echo spectra by round trips through the wall, from 0 on; empty if too large to keep, or if a
-    /// change of the wall is more than a factor per trip.
+    /// Echo spectra by round trips through the wall, from 0 on; empty until another wall is asked for,
+    /// and if they are too large to keep or a change of the wall is more than a factor per trip.
     by_trips: Vec<Vec<Complex>>,
     /// The spectrum of all echoes of the unchanged scene.
     whole: Vec<Complex>,
@@ -113,13 +113,20 @@ impl Synthesiser {
         let length = samples as f64 / rate;
         let start = scene.record.first_sample_us * 1e-6;
         let margin = (margin as f64 / rate).max(0.5 * length);
-        let paths = echo_paths(scene, &stack, start + length + before + 0.5 * margin)?;
+        let until = start + length + before + 0.5 * margin;
+        let paths = echo_paths(scene, &stack, until)?;
         let element = Element::of(scene);
         let changed = are_changed(&stack, element);
         let cycle = 1.0 / data_sheet.centre_frequency();
         let thinner = Thinner::new(&pulse, before + after);
         let (mut echoes, mut first_peak) = (Vec::with_capacity(paths.len()), 0.0);
+        let mut whole = vec![Complex::ZERO; pulse.values().len()];
+        // Beyond this an echo would be folded into the record. The first back wall is known even there.
+        let audible = |path: &Path| path.arrival > start - after - 0.5 * margin && path.arrival <= until;
         for_each_shape(&pulse, &stack, &paths, element, |path, shape| {
+            if audible(path) {
+                add_echo(&mut whole, &pulse, path, shape, start);
+            }
             let listed = (start..start + length).contains(&path.arrival);
             if !listed && path.multiple != Some(1) {
                 return;
@@ -151,7 +158,7 @@ impl Synthesiser {
         });
         echoes.sort_by(|a, b| a.0.arrival.total_cmp(&b.0.arrival));
         let mut kept = paths;
-        kept.retain(|path| path.arrival > start - after - 0.5 * margin);
+        kept.retain(audible);
         let gain = gain(scene, first_peak)?;
         let converter = Converter::new(scene.record.bits);
         let full_scale = converter.full_scale();
@@ -187,7 +194,7 @@ impl Synthesiser {
             element,
             grain,
             by_trips: Vec::new(),
-            whole: Vec::new(),
+            whole,
             still: Vec::new(),
             noise_steps,
             converter,
@@ -196,8 +203,6 @@ impl Synthesiser {
             bins: Vec::new(),
             signal,
         };
-        made.keep_spectra();
-        made.whole = made.spectrum(0.0);
         made.make_signal(&Variation::default());
         made.still = made.signal[..samples].to_vec();
         Ok(made)
@@ -314,6 +319,9 @@ impl Synthesiser {
 
     /// Echo spectra by round trips through the wall: a change of the wall is then one factor per trip.
     fn keep_spectra(&mut self) {
+        if !self.by_trips.is_empty() {
+            return;
+        }
         let most = self.paths.iter().map(|path| path.wall_trips).max().unwrap_or(0) as usize;
         let bins = self.pulse.values().len();
         // The beam spreads differently in another wall: not a factor per trip.
@@ -358,6 +366,7 @@ impl Synthesiser {
         let mut spectrum = if variation.wall_change == 0.0 {
             self.whole.clone()
         } else {
+            self.keep_spectra();
             self.spectrum(variation.wall_change)
         };
         if let Some(grain) = &self.grain {
@@ -381,27 +390,18 @@ impl Synthesiser {
         }
     }
 
+    /// The echoes of another wall.
     fn spectrum(&self, wall_change: f64) -> Vec<Complex> {
         let mut sum = vec![Complex::ZERO; self.pulse.values().len()];
         let wall = &self.stack.wall;
         if self.by_trips.is_empty() {
             let stack = self.changed_stack(wall_change);
             let mut paths = self.paths.clone();
-            if wall_change != 0.0 {
-                for path in &mut paths {
-                    path.arrival = stack.arrival_of(path);
-                }
+            for path in &mut paths {
+                path.arrival = stack.arrival_of(path);
             }
             let start = self.scene.record.first_sample_us * 1e-6;
             add_echoes(&mut [&mut sum], &self.pulse, &stack, &paths, self.element, start);
-            return sum;
-        }
-        if wall_change == 0.0 {
-            for echoes in &self.by_trips {
-                for (sum, &value) in sum.iter_mut().zip(echoes) {
-                    *sum += value;
-                }
-            }
             return sum;
         }
         // Horner's rule in the factor of one more round trip.
@@ -446,7 +446,7 @@ fn echo_paths(scene: &Scene, stack: &Stack, until: f64) -> Result<Vec<Path>, Sce
         remedy: "record for less time, take a thicker wall or limit echoes.back_walls".into(),
     };
     // The first back wall sets gain and noise even where the record ends before it.
-    let first = stack.face_time() + stack.coating.map_or(0.0, |coating| coating.round_trip()) + stack.wall.round_trip();
+    let first = stack.arrival(0, (1, u32::from(stack.coating.is_some()), 1), Role::BackWall);
     let limits = Limits {
         until: until.max(first * (1.0 + 1e-12)),
         // With a decay of its own a train may last longer than the borders would let it.

@@ -63,12 +63,17 @@ pub(super) fn add_echoes(
             path.wall_trips as usize
         };
         let Some(sums) = slots.get_mut(slot) else { return };
-        let step = -TAU * pulse.spacing() * (path.arrival - start);
-        let turns = Rotation::new(step, pulse.first_bin() as u32);
-        for ((sum, &value), turn) in sums.iter_mut().zip(shape).zip(turns) {
-            *sum += (value * turn).scaled(path.weight);
-        }
+        add_echo(sums, pulse, path, shape, start);
     });
+}
+
+/// Adds one echo's spectrum, with time zero at `start`.
+pub(super) fn add_echo(sums: &mut [Complex], pulse: &BandPulse, path: &Path, shape: &[Complex], start: f64) {
+    let step = -TAU * pulse.spacing() * (path.arrival - start);
+    let turns = Rotation::new(step, pulse.first_bin() as u32);
+    for ((sum, &value), turn) in sums.iter_mut().zip(shape).zip(turns) {
+        *sum += (value * turn).scaled(path.weight);
+    }
 }
 
 /// Visits each path with the spectrum that its way makes of the pulse, before weight and delay.
