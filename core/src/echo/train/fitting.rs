@@ -1,0 +1,283 @@
+//! Start and period, fitted to all multiples at once.
+
+use super::choosing::{Hypothesis, nearest};
+use super::{Rules, Train};
+use crate::echo::arrival::{Arrival, sharpness};
+use crate::echo::correlation::{correlate_into, curvature, slope};
+use crate::echo::interpolate::{self, REACH};
+use crate::echo::{Echo, EchoList, EchoRole, Polarity, Surroundings, echo_at};
+use crate::math;
+use crate::order;
+use crate::units::SamplePosition;
+use crate::workspace::{ECHO_CAPACITY, TRAIN_LAGS};
+use heapless::Vec;
+
+/// Multiples above this many standard deviations of their amplitude take part in the fit.
+const FIT_MINIMUM: f32 = 3.0;
+
+type Members = Vec<Member, ECHO_CAPACITY>;
+
+/// Places of the multiples during the fit, relative to `base` so that `f32` keeps its digits.
+struct Line {
+    base: u32,
+    first: f32,
+    period: f32,
+}
+
+impl Line {
+    /// Place of the `step`-th multiple after the first, relative to the base.
+    fn place(&self, step: usize) -> f32 {
+        self.first + step as f32 * self.period
+    }
+}
+
+/// One multiple in the fit.
+#[derive(Clone, Copy, Debug)]
+struct Member {
+    /// Steps after the first multiple.
+    step: u8,
+    /// Lag (relative to the base, of the pulse's first sample) of its window's first entry.
+    first_lag: i32,
+    /// Fitted amplitude in codes, with sign.
+    amplitude: f32,
+    /// Root of its weight: the amplitude, less what its correlation's top is blunter than the pulse's.
+    weight: f32,
+    /// Distance of its own arrival from the line, in samples.
+    off: f32,
+}
+
+/// Joint least squares of start and period over all multiples; `None` if the first one, whose place everything
+/// counts from, is lost in it.
+#[inline(never)]
+pub(super) fn fit(
+    surroundings: &Surroundings<'_>,
+    echoes: &mut EchoList,
+    rules: &Rules,
+    best: &Hypothesis,
+    tolerance: f32,
+    lags: &mut [f32; ECHO_CAPACITY * TRAIN_LAGS],
+) -> Option<Train> {
+    let sign = sign_of_train(echoes, best, tolerance);
+    // Re-anchor at the first multiple's own echo: its position is exact where the hypothesis is rounded.
+    let anchor = echoes
+        .iter()
+        .filter(|echo| echo.role == EchoRole::Other)
+        .find(|echo| {
+            let (number, off) = nearest(best, echo.position.as_samples());
+            number == i32::try_from(best.first).unwrap_or(1) && off.abs() < tolerance
+        })
+        .map_or(
+            SamplePosition::new(0, best.zero + best.first as f32 * best.period),
+            |echo| echo.position,
+        );
+    let mut line = Line {
+        base: anchor.index,
+        first: anchor.fraction,
+        period: best.period,
+    };
+    let origin = surroundings.pulse.facts.origin;
+    let mut members = Members::new();
+    collect(surroundings, rules, best, &line, sign, lags, &mut members);
+    if members.first().is_none_or(|first| first.step > 0) {
+        return None;
+    }
+    let (mut s0, mut s1, mut s2) = (0.0, 0.0, 0.0);
+    for _ in 0..3 {
+        (s0, s1, s2) = (0.0, 0.0, 0.0);
+        let (mut t0, mut t1) = (0.0, 0.0);
+        for (member, window) in members.iter_mut().zip(lags.chunks_exact(TRAIN_LAGS)) {
+            let place = line.place(usize::from(member.step)) - origin - member.first_lag as f32;
+            let value = interpolate::at(window, place);
+            member.amplitude = value / surroundings.pulse.facts.energy;
+            let sharp = sharpness(curvature(window, place, value), member.amplitude, &surroundings.pulse);
+            member.weight = member.amplitude.abs() * sharp;
+            member.off = slope(window, place) / (member.amplitude * sharp * surroundings.pulse.facts.derivative_energy);
+            // A step beyond a tenth of a cycle is noise or another cycle: the line decides, not the echo.
+            let limit = 0.1 * surroundings.samples_per_cycle;
+            let off = math::clamp(member.off, -limit, limit);
+            let (n, weight) = (f32::from(member.step), member.weight * member.weight);
+            s0 += weight;
+            s1 += weight * n;
+            s2 += weight * n * n;
+            t0 += weight * off;
+            t1 += weight * n * off;
+        }
+        let determinant = s0 * s2 - s1 * s1;
+        if members.len() < 2 || !(determinant > 0.0) {
+            line.first += if s0 > 0.0 { t0 / s0 } else { 0.0 };
+            continue;
+        }
+        line.first += (s2 * t0 - s1 * t1) / determinant;
+        line.period += (s0 * t1 - s1 * t0) / determinant;
+    }
+
+    let first = SamplePosition::new(line.base, line.first);
+    let lone = members.len() < 2;
+    if lone {
+        line.period = (first.as_samples() - rules.start) / best.first as f32;
+    }
+    // A lone echo before the start is no wall's; nor is a fit that has run away.
+    if !(line.period > 0.0) {
+        return None;
+    }
+    let variance = surroundings.noise * surroundings.noise / surroundings.pulse.facts.derivative_energy;
+    let determinant = s0 * s2 - s1 * s1;
+    let (mut scatter, mut strongest) = (0.0, 0.0);
+    for member in &members {
+        strongest = math::larger(strongest, member.weight * member.weight);
+        scatter += member.off * member.off * member.weight * member.weight / variance;
+    }
+    let freedom = members.len().saturating_sub(2) as u8;
+    let unevenness = if freedom > 0 { scatter / f32::from(freedom) } else { 0.0 };
+    let period_uncertainty = if lone || !(determinant > 0.0) {
+        None
+    } else {
+        Some(math::sqrt(variance * s0 / determinant))
+    };
+    give_roles(surroundings, echoes, best, &line, &members, tolerance);
+    Some(Train {
+        first_multiple: u8::try_from(best.first).unwrap_or(u8::MAX),
+        echoes: members.len() as u8,
+        period: line.period,
+        period_uncertainty,
+        correlation: if lone { 0.0 } else { -s1 / math::sqrt(s0 * s2) },
+        support: math::sqrt(s0 - strongest),
+        first,
+        start_difference: first.as_samples() - best.first as f32 * line.period - rules.start,
+        unevenness,
+        freedom,
+        unexplained: unexplained(echoes, rules),
+        may_be_double: best.hidden,
+    })
+}
+
+/// Energy of what stands between the multiples over theirs. What does not look like the pulse (the tail of a strong
+/// interface echo) counts by the share of it that does.
+fn unexplained(echoes: &EchoList, rules: &Rules) -> f32 {
+    let (mut explained, mut left) = (0.0, 0.0);
+    for echo in echoes {
+        let place = echo.position.as_samples();
+        let energy = echo.amplitude * echo.amplitude;
+        match echo.role {
+            EchoRole::BackWall(_) => explained += energy,
+            EchoRole::Other if place > rules.start && place <= rules.visible_to => {
+                left += energy / (1.0 + echo.mismatch * echo.mismatch);
+            }
+            _ => {}
+        }
+    }
+    if explained > 0.0 { left / explained } else { 0.0 }
+}
+
+/// Sign of the strongest multiple: all back walls of one wall share it.
+fn sign_of_train(echoes: &EchoList, best: &Hypothesis, tolerance: f32) -> f32 {
+    let mut strongest: Option<&Echo> = None;
+    for echo in echoes.iter().filter(|echo| echo.role == EchoRole::Other) {
+        let (number, off) = nearest(best, echo.position.as_samples());
+        if number >= 1 && off.abs() < tolerance && strongest.is_none_or(|s| echo.amplitude > s.amplitude) {
+            strongest = Some(echo);
+        }
+    }
+    match strongest.map(|echo| echo.polarity) {
+        Some(Polarity::Negative) => -1.0,
+        _ => 1.0,
+    }
+}
+
+/// Correlation windows of the multiples, from the first on until two in a row are lost in the noise.
+fn collect(
+    surroundings: &Surroundings<'_>,
+    rules: &Rules,
+    best: &Hypothesis,
+    line: &Line,
+    sign: f32,
+    lags: &mut [f32; ECHO_CAPACITY * TRAIN_LAGS],
+    members: &mut Members,
+) {
+    let codes = surroundings.record.codes();
+    let minimum = FIT_MINIMUM * surroundings.amplitude_noise();
+    let pulse = &surroundings.pulse;
+    let middle = (TRAIN_LAGS / 2) as i32 - 1;
+    let known = (best.last - best.first) as usize;
+    let mut lost = 0;
+    for step in 0..=u8::MAX {
+        let place = line.place(usize::from(step));
+        if line.base as f32 + place > rules.visible_to || members.is_full() {
+            break;
+        }
+        let start = math::saturating_i32(math::floor(place - pulse.facts.origin));
+        let first_lag = start - middle;
+        let absolute = i32::try_from(line.base).unwrap_or(i32::MAX).saturating_add(start);
+        // The pulse has to lie inside the record as a whole.
+        let inside = usize::try_from(absolute)
+            .ok()
+            .and_then(|s| codes.get(s..s.checked_add(pulse.samples.len())?));
+        if inside.is_none() {
+            if step == 0 {
+                continue;
+            }
+            break;
+        }
+        let Some(window) = lags.chunks_exact_mut(TRAIN_LAGS).nth(members.len()) else {
+            break;
+        };
+        correlate_into(codes, absolute - middle, pulse, window);
+        let amplitude =
+            sign * interpolate::at(window, place - pulse.facts.origin - first_lag as f32) / pulse.facts.energy;
+        if amplitude > minimum {
+            lost = 0;
+            let _ = members.push(Member {
+                step,
+                first_lag,
+                amplitude: sign * amplitude,
+                weight: amplitude,
+                off: 0.0,
+            });
+        } else {
+            lost += 1;
+            if lost == 2 && usize::from(step) > known {
+                break;
+            }
+        }
+    }
+}
+
+/// Roles for the echoes of the train, and entries for weak multiples that only the fit found.
+fn give_roles(
+    surroundings: &Surroundings<'_>,
+    echoes: &mut EchoList,
+    best: &Hypothesis,
+    line: &Line,
+    members: &[Member],
+    tolerance: f32,
+) {
+    for member in members {
+        let place = SamplePosition::new(line.base, line.place(usize::from(member.step)));
+        let multiple = u8::try_from(best.first + u32::from(member.step)).unwrap_or(u8::MAX);
+        let known = echoes
+            .iter_mut()
+            .find(|echo| echo.role == EchoRole::Other && echo.position.samples_after(place).abs() < tolerance);
+        if let Some(echo) = known {
+            echo.role = EchoRole::BackWall(multiple);
+        } else if let Some(mut echo) = echo_at(
+            surroundings,
+            Arrival {
+                position: SamplePosition::new(place.index, place.fraction + member.off),
+                amplitude: member.amplitude,
+                // The fit has not looked: the strong multiples speak for the train.
+                group_lag: 0.0,
+                sharpness: member.weight / member.amplitude.abs(),
+            },
+        ) {
+            echo.role = EchoRole::BackWall(multiple);
+            if echoes.push(echo).is_ok() {
+                order::sink_last(echoes, |a, b| a.position.samples_after(b.position) < 0.0);
+            }
+        }
+    }
+}
+
+const _: () = assert!(
+    TRAIN_LAGS >= 2 * REACH + 4,
+    "a window must leave room for the interpolation and a shift"
+);

@@ -1,0 +1,123 @@
+//! Which echoes are the multiples of one wall, and their common period.
+//!
+//! **In**: the echoes of a record and what is known of the start (zero or interface). **Out**: a
+//! [`Train`], or the refusal to choose between two walls.
+//!
+//! *Choosing.* Every distance between two near echoes, and every echo's distance from the start divided by 1
+//! to 4, is a hypothesis for the period. Its teeth are scored against the echoes: a tooth gains what its
+//! echo's height says against noise, ln(1 + A²/3σ²) less the same at the detection threshold, at most
+//! 4.5; a tooth without echo loses; a tooth hidden in the dead zone loses a little; an unexplained echo
+//! above 35 % of the largest loses its own gain; a first tooth below 22 % of the largest makes it
+//! unlikely. The best score wins, if it leads the best *different* period by [`MARGIN`].
+//!
+//! *Fitting.* Start and period are fitted to the correlations of all multiples at once (all amplitudes
+//! free): the joint least squares that two arrivals alone fall short of by 1.6 to 4 times. Weak
+//! multiples are read only where the strong ones predict them. For white noise the standard uncertainty is the
+//! Cramér-Rao bound: with weights A², moments S0, S1, S2 of the multiple's number,
+//! u²(period) = noise² / Σs'² · S0 / (S0 S2 - S1²).
+//!
+//! Fails, and says so only by [`Train::may_be_double`]: first echo inside the dead zone and fewer than
+//! two visible ones.
+
+mod choosing;
+mod fitting;
+
+use crate::echo::{EchoList, Surroundings};
+use crate::math;
+use crate::units::SamplePosition;
+use crate::workspace::{ECHO_CAPACITY, TRAIN_LAGS};
+
+pub use choosing::MARGIN;
+
+/// What is known before the echoes are looked at. Places are in samples from the record's first.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct Rules {
+    /// Where the wall begins: zero offset or interface echo.
+    pub start: f32,
+    /// How far from a whole number of periods after the start the train may lie without objection.
+    pub start_tolerance: f32,
+    /// Shortest period that can be read.
+    pub shortest: f32,
+    /// First sample at which an echo could have been seen.
+    pub visible_from: f32,
+    /// Last such sample.
+    pub visible_to: f32,
+    /// Detection threshold in standard deviations of a fitted amplitude.
+    pub threshold: f32,
+}
+
+/// The multiples of one wall.
+#[derive(Clone, Copy, Debug, PartialEq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
+pub struct Train {
+    /// Number of the first multiple that was seen.
+    pub first_multiple: u8,
+    /// Echoes that took part.
+    pub echoes: u8,
+    /// The period in samples: fitted from two echoes on, else the lone echo's distance from the start.
+    pub period: f32,
+    /// Its standard uncertainty in samples from noise; `None` for a lone echo.
+    pub period_uncertainty: Option<f32>,
+    /// Correlation of the errors of period and first place: -S1 / sqrt(S0 S2). 0 for a lone echo.
+    pub correlation: f32,
+    /// Root of the sum of squared amplitudes (codes) of all multiples but the strongest: what a wrong
+    /// cycle of the period would have to overcome.
+    pub support: f32,
+    /// Fitted place of the first multiple that was seen.
+    pub first: SamplePosition,
+    /// How far the start lies from where the train begins, in samples: first - first_multiple · period - start.
+    pub start_difference: f32,
+    /// Scatter of the arrivals about the fit over what noise explains (chi-square per degree of
+    /// freedom); 0 without a degree of freedom.
+    pub unevenness: f32,
+    /// Degrees of freedom of that scatter.
+    pub freedom: u8,
+    /// Energy of the echoes inside the window, behind the start, that no multiple explains, over that of the multiples.
+    pub unexplained: f32,
+    /// A wall of half or a third of this thickness would have its first echo in the dead zone and is not excluded by
+    /// the others.
+    pub may_be_double: bool,
+}
+
+impl Train {
+    /// Do the arrivals scatter about the fit by more than noise and chance (five standard deviations
+    /// of chi-square) explain?
+    #[must_use]
+    pub fn is_uneven(&self) -> bool {
+        self.freedom > 0 && self.unevenness > 1.0 + 5.0 * math::sqrt(2.0 / f32::from(self.freedom))
+    }
+}
+
+/// No period stands out.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub enum Undecided {
+    /// No hypothesis scores above noise.
+    NoTrain,
+    /// Two different periods explain the echoes about as well.
+    Ambiguous {
+        /// How many are within the margin, the best included.
+        candidates: u8,
+        /// The best period in samples.
+        best: f32,
+        /// The best different one.
+        next: f32,
+    },
+}
+
+/// Finds the train among `echoes`, gives them their roles, adds weak multiples that only the fit could find, and fits.
+///
+/// Echoes that already have a role other than [`EchoRole::Other`] (an interface echo) take no part.
+///
+/// # Errors
+/// [`Undecided`].
+#[inline(never)]
+pub fn find_train(
+    surroundings: &Surroundings<'_>,
+    echoes: &mut EchoList,
+    rules: &Rules,
+    lags: &mut [f32; ECHO_CAPACITY * TRAIN_LAGS],
+) -> Result<Train, Undecided> {
+    let tolerance = 0.2 * surroundings.samples_per_cycle;
+    let best = choosing::choose(surroundings, echoes, rules, tolerance)?;
+    fitting::fit(surroundings, echoes, rules, &best, tolerance, lags).ok_or(Undecided::NoTrain)
+}
