@@ -27,7 +27,7 @@ fn hostile_codes(kind: u8, length: usize, frequency: f64, random: &mut Random) -
         1 => vec![i16::MIN; length],
         2 => vec![i16::MAX; length],
         3 => each(&mut |i, _| if i % 2 == 0 { -32_768.0 } else { 32_767.0 }),
-        4 => each(&mut |i, _| f64::from(if i / period % 2 == 0 { low } else { high })),
+        4 => each(&mut |i, _| f64::from(if (i / period).is_multiple_of(2) { low } else { high })),
         5 => each(&mut |i, _| if i == at { 32_767.0 } else { 0.0 }),
         6 => each(&mut |i, _| if i == at { -32_768.0 } else { f64::from(high) }),
         7 => each(&mut |i, _| (i as f64 * step) % 65_536.0 - 32_768.0),
@@ -56,9 +56,11 @@ fn hostile_codes(kind: u8, length: usize, frequency: f64, random: &mut Random) -
             for multiple in 0..40 {
                 let place = start + f64::from(multiple) * spacing;
                 let reach = 2.0 / frequency;
-                for i in (place - reach).max(0.0) as usize..((place + reach) as usize + 1).min(length) {
-                    let height = peak * decay.powi(multiple) * if multiple == 0 { flip } else { 1.0 };
-                    samples[i] += height * oracle::gaussian_pulse(i as f64 - place, frequency, 0.6);
+                let from = (place - reach).max(0.0) as usize;
+                let count = (2.0 * reach) as usize + 2;
+                let height = peak * decay.powi(multiple) * if multiple == 0 { flip } else { 1.0 };
+                for (i, x) in samples.iter_mut().enumerate().skip(from).take(count) {
+                    *x += height * oracle::gaussian_pulse(i as f64 - place, frequency, 0.6);
                 }
             }
             samples.iter().map(|x| x.round() as i16).collect()
