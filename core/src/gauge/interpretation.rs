@@ -106,7 +106,13 @@ pub fn times(record: &Record<'_>, train: &Train, echoes: &[Echo]) -> TrainTimes 
     let clock = record.clock();
     let seconds = |samples: f32| clock.rate.period() * samples;
     let role = |role: EchoRole| echoes.iter().find(|echo| echo.role == role);
-    let timed = |echo: &Echo| Timed::new(echo.arrival, echo.standard_uncertainty);
+    // A time far from the trigger has fewer digits behind the point: half a step of an `f32` belongs to
+    // it (1 ps at 20 us, 0.1 ns at 1 ms).
+    let timed = |echo: &Echo| {
+        let digits = echo.arrival.abs() * f32::EPSILON * 0.5;
+        let (a, b) = (echo.standard_uncertainty.get(), digits.get());
+        Timed::new(echo.arrival, Seconds::new(math::sqrt(a * a + b * b)))
+    };
     let period = train.period_uncertainty.map(|u| {
         // Arrivals that scatter more than noise explains widen the period's uncertainty (Birge's
         // ratio), once they do so beyond chance.
