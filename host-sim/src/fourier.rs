@@ -158,6 +158,9 @@ pub struct RealTransform {
     length: usize,
     /// `exp(j 2 pi k / length)` for k below half the length.
     factors: Arc<[Complex]>,
+    /// The same for each step of the transform in a row: `exp(j pi k / half)` for k below half, for
+    /// half = 1, 2, 4 ...
+    steps: Arc<[Complex]>,
     scratch: Vec<Complex>,
 }
 
@@ -167,20 +170,27 @@ impl RealTransform {
     pub fn new(length: usize) -> Self {
         let length = length.max(4).next_power_of_two();
         thread_local! {
-            static KEPT: Kept<usize, Arc<[Complex]>> = const { Kept::new() };
+            static KEPT: Kept<usize, (Arc<[Complex]>, Arc<[Complex]>)> = const { Kept::new() };
         }
-        let factors = KEPT.with(|kept| {
-            kept.get(length, || {
-                (0..length / 2)
-                    .map(|k| Complex::polar(1.0, TAU * k as f64 / length as f64))
-                    .collect()
-            })
-        });
+        let (factors, steps) = KEPT.with(|kept| kept.get(length, || Self::factors(length)));
         Self {
             length,
             factors,
+            steps,
             scratch: vec![Complex::ZERO; length / 2],
         }
+    }
+
+    fn factors(length: usize) -> (Arc<[Complex]>, Arc<[Complex]>) {
+        let factors: Arc<[Complex]> = (0..length / 2)
+            .map(|k| Complex::polar(1.0, TAU * k as f64 / length as f64))
+            .collect();
+        let (mut steps, mut half) = (Vec::with_capacity(length / 2), 1);
+        while half < length / 2 {
+            steps.extend(factors.iter().step_by(length / 2 / half).take(half));
+            half *= 2;
+        }
+        (factors, steps.into())
     }
 
     /// Samples of a record.
@@ -210,7 +220,7 @@ impl RealTransform {
             let even = here + mirrored;
             *slot = Complex::new(even.re - odd.im, even.im + odd.re);
         }
-        transform(&mut self.scratch, &self.factors);
+        transform(&mut self.scratch, &self.steps);
         for (pair, value) in signal.chunks_mut(2).zip(&self.scratch) {
             pair[0] = value.re;
             if let Some(second) = pair.get_mut(1) {
@@ -230,7 +240,7 @@ impl RealTransform {
         for (n, slot) in self.scratch.iter_mut().enumerate() {
             *slot = Complex::new(sample(2 * n), -sample(2 * n + 1));
         }
-        transform(&mut self.scratch, &self.factors);
+        transform(&mut self.scratch, &self.steps);
         let packed = |k: usize| {
             self.scratch
                 .get(k % half)
@@ -248,8 +258,8 @@ impl RealTransform {
     }
 }
 
-/// In place, sign +j, radix 2; `factors` are for twice the length.
-fn transform(values: &mut [Complex], factors: &[Complex]) {
+/// In place, sign +j, radix 2; `steps` are the factors of each step, one after the other.
+fn transform(values: &mut [Complex], steps: &[Complex]) {
     let length = values.len();
     if length < 2 {
         return;
@@ -261,16 +271,19 @@ fn transform(values: &mut [Complex], factors: &[Complex]) {
             values.swap(index, mirrored);
         }
     }
-    let mut half = 1;
+    let (mut half, mut left) = (1, steps);
     while half < length {
-        let stride = length / half;
+        let Some((factors, rest)) = left.split_at_checked(half) else {
+            return;
+        };
         for block in values.chunks_exact_mut(2 * half) {
             let (low, high) = block.split_at_mut(half);
-            for ((low, high), &factor) in low.iter_mut().zip(high).zip(factors.iter().step_by(stride)) {
+            for ((low, high), &factor) in low.iter_mut().zip(high).zip(factors) {
                 let turned = *high * factor;
                 (*low, *high) = (*low + turned, *low - turned);
             }
         }
+        left = rest;
         half *= 2;
     }
 }

@@ -253,10 +253,21 @@ fn val_mode_converted_echo_reads_too_thick() {
 /// code of each; least wall and roles say so.
 #[test]
 fn law_pit_and_lamination_are_two_plates() {
+    two_plates(None);
+    two_plates(Some(Layer {
+        material: Some("epoxy".into()),
+        thickness_mm: 0.7,
+        attenuation_exponent: 1.0,
+        ..Layer::default()
+    }));
+}
+
+fn two_plates(coating: Option<Layer>) {
     let plain = |mm: f64| {
         let mut scene = Scene::contact(5.0, 60.0, "carbon steel", mm);
         scene.record.gain_db = Some(0.0);
         scene.record.bits = 16;
+        scene.coating = coating.clone();
         scene
     };
     let (whole, left) = (synthesise(&plain(10.0), 0), synthesise(&plain(4.0), 0));
@@ -284,6 +295,7 @@ fn law_pit_and_lamination_are_two_plates() {
             .iter()
             .find(|echo| echo.role == role)
             .expect("its echo");
-        assert!((floor.arrival_ns - 8e6 / 5920.0).abs() < 1e-6);
+        let paint = if coating.is_some() { 1.4e6 / 2600.0 } else { 0.0 };
+        assert!((floor.arrival_ns - paint - 8e6 / 5920.0).abs() < 1e-6);
     }
 }

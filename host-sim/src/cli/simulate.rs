@@ -33,7 +33,8 @@ A scene says what is under the probe and what the receiver adds. The least one:
   [noise]
   snr_db = 30.0                        # of the first back-wall echo
 
-More tables: [delay_line], [coating], [back], [echoes], [transmission_pulse].
+More tables: [delay_line], [dual_element], [couplant], [surface], [coating], [back], [pit],
+[lamination], [grain], [temperature], [echoes], [transmission_pulse].
 Commented examples are in host-sim/scenes/.
 
 Examples:
@@ -42,7 +43,7 @@ Examples:
 
 The truth (every echo's arrival, amplitude and role, the pulse's figures, the noise) is written beside
 the shots under the same name, ending in .json. The same scene, seed and shot give the same codes on
-every machine. Noise is all that differs between the shots of one scene.")]
+every machine. Names of materials: halfpulse materials. Noise is all that differs between the shots of one scene.")]
 pub struct Arguments {
     /// The scene: probe, part, receiver (TOML)
     pub scene: PathBuf,

@@ -101,3 +101,20 @@ pub fn tilt(angle: f64, radius: f64, velocity: f64, frequency: f64) -> f64 {
 pub fn width(way: f64, diameter: f64) -> f64 {
     (1.027_34 * way / diameter).max(diameter)
 }
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    /// The table against the formula, from the near field to the far field and across the table's end.
+    #[test]
+    fn table_and_formula_agree() {
+        let table = Diffraction::new();
+        for step in 0..4000 {
+            let s = libm::pow(10.0, -1.5 + f64::from(step) * 1e-3 * 2.0);
+            let apart = (table.at(s) - diffraction(s)).magnitude();
+            assert!(apart < 1e-10, "{s}: {apart}");
+        }
+        assert_eq!(table.at(0.0), Complex::new(1.0, 0.0));
+    }
+}

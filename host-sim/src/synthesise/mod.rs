@@ -4,24 +4,25 @@
 //! between two samples is as exact as one on a sample. The same seed and shot give the same codes on
 //! every machine.
 
+mod echo_paths;
 mod grain;
 mod shapes;
+mod single_echo;
 pub mod truth;
 
 use crate::fourier::{Complex, RealTransform, Rotation};
 use crate::front_end::{Converter, Purpose, Random};
-use crate::propagation::{Limits, MOST_PATHS, Path, Role, Stack};
+use crate::propagation::{Path, Stack};
 use crate::scene::{Scene, SceneError};
 use crate::transducer::{self, BandPulse, PulseFigures};
+use echo_paths::echo_paths;
 use grain::GrainNoise;
 use halfpulse::{AdcFormat, Hertz, Record, SampleClock, Seconds};
 use shapes::{Element, add_echo, add_echoes, are_changed, for_each_shape};
+use single_echo::Thinner;
 use std::f64::consts::TAU;
 pub use truth::{EchoTruth, Truth};
 use truth::{echo_truth, least_wall};
-
-/// Echoes weaker than this share of the strongest are left out.
-const SMALLEST: f64 = 1e-6;
 
 /// Echoes below this many steps of the converter are in the record but not listed in its truth.
 const LEAST_STEPS: f64 = 0.05;
@@ -437,55 +438,6 @@ fn noisy(steps: f64, noise: f64, random: &mut Random) -> f64 {
     }
 }
 
-/// The paths with what the table `[echoes]` asks for.
-fn echo_paths(scene: &Scene, stack: &Stack, until: f64) -> Result<Vec<Path>, SceneError> {
-    let wanted = &scene.echoes;
-    let too_many = || SceneError {
-        field: "wall.thickness_mm".into(),
-        what: format!("the record holds more than {MOST_PATHS} echoes"),
-        remedy: "record for less time, take a thicker wall or limit echoes.back_walls".into(),
-    };
-    // The first back wall sets gain and noise even where the record ends before it.
-    let first = stack.arrival(0, (1, u32::from(stack.coating.is_some()), 1), Role::BackWall);
-    let limits = Limits {
-        until: until.max(first * (1.0 + 1e-12)),
-        // With a decay of its own a train may last longer than the borders would let it.
-        smallest: if wanted.decay.is_some() { 0.0 } else { SMALLEST },
-        wall_trips: wanted.back_walls.unwrap_or(u32::MAX),
-    };
-    let mut paths = stack.paths(&limits).ok_or_else(too_many)?;
-    if let (Some(decay), Some(first)) = (wanted.decay, first_back_wall(&paths)) {
-        let first = paths[first].amplitude;
-        let mut natural = vec![0.0];
-        natural.extend(paths.iter().filter(|p| p.role == Role::BackWall).map(|p| p.amplitude));
-        for path in paths.iter_mut().filter(|path| path.wall_trips > 0) {
-            let trips = path.wall_trips;
-            let ordered = first * libm::pow(decay, f64::from(trips - 1));
-            let before = path.amplitude;
-            path.amplitude = if path.role == Role::BackWall {
-                ordered
-            } else {
-                match natural.get(trips as usize) {
-                    Some(&plain) if plain != 0.0 => path.amplitude * ordered / plain,
-                    _ => 0.0,
-                }
-            };
-            path.weight = if path.weight == before {
-                path.amplitude
-            } else {
-                path.weight * path.amplitude / before
-            };
-        }
-        let strongest = paths.iter().map(|path| path.amplitude.abs()).fold(0.0, f64::max);
-        paths.retain(|path| path.amplitude.abs() > SMALLEST * strongest);
-    }
-    Ok(paths)
-}
-
-fn first_back_wall(paths: &[Path]) -> Option<usize> {
-    paths.iter().position(|path| path.multiple == Some(1))
-}
-
 fn gain(scene: &Scene, first_peak: f64) -> Result<f64, SceneError> {
     if let Some(decibels) = scene.record.gain_db {
         return Ok(libm::pow(10.0, decibels / 20.0));
@@ -512,42 +464,6 @@ fn noise_steps(scene: &Scene, first_steps: f64) -> Result<f64, SceneError> {
         what: "there is no back-wall echo to set the noise by".into(),
         remedy: "give noise.rms_steps".into(),
     })
-}
-
-/// Fewer bins of a spectrum whose signal is short: the figures of single echoes need no more.
-struct Thinner {
-    first: usize,
-    step: usize,
-}
-
-impl Thinner {
-    /// For echoes of a pulse of `length` seconds: a period of at least eight times that.
-    fn new(pulse: &BandPulse, length: f64) -> Self {
-        let most = 1.0 / (8.0 * length * pulse.spacing());
-        let mut step = 1;
-        while f64::from(2 * step as u32) <= most && step < 1024 {
-            step *= 2;
-        }
-        let first = pulse.first_bin().next_multiple_of(step) - pulse.first_bin();
-        Self { first, step }
-    }
-
-    fn of(&self, pulse: &BandPulse, values: &[Complex]) -> BandPulse {
-        let thinned = values.iter().skip(self.first).step_by(self.step);
-        let scale = self.step as f64;
-        pulse.thinned(self.step, thinned.map(|value| value.scaled(scale)).collect())
-    }
-
-    /// Where the correlation of a shape (turned over, or not) with the pulse has its maximum, in seconds.
-    fn correlation_shift(&self, pulse: &BandPulse, shape: &[Complex], turned: bool, cycle: f64) -> f64 {
-        let sign = if turned { -1.0 } else { 1.0 };
-        let cross: Vec<Complex> = shape
-            .iter()
-            .zip(pulse.values())
-            .map(|(&value, pulse)| (value * pulse.conjugate()).scaled(sign))
-            .collect();
-        self.of(pulse, &cross).real_maximum(cycle)
-    }
 }
 
 #[cfg(test)]

@@ -1,6 +1,7 @@
 //! Records against what the scene says.
 
 use super::*;
+use crate::propagation::Role;
 use crate::scene::{self, DelayLine, ProbeKind};
 
 fn clean() -> Scene {
@@ -130,6 +131,120 @@ fn variation_equals_another_scene() {
             assert!((a.arrival_ns - b.arrival_ns).abs() < 1e-6);
         }
         assert!((varied.truth.wall_thickness_mm - 9.877).abs() < 1e-12);
+    }
+}
+
+/// The same with all that a wall can have: film, pit, lamination, roughness, tilt, grain; with an echo by
+/// way of a shear wave; with two elements; behind a delay line that rings.
+#[test]
+fn variation_of_a_spoilt_wall_equals_another_scene() {
+    let mut spoilt = clean();
+    spoilt.echoes.decay = None;
+    spoilt.record.bits = 16;
+    spoilt.record.gain_db = Some(0.0);
+    spoilt.probe.zero_offset_ns = 500.0;
+    spoilt.probe.element_diameter_mm = Some(6.0);
+    spoilt.probe.face_impedance_mrayl = Some(38.5);
+    spoilt.couplant = Some(scene::Couplant {
+        material: Some("glycerine".into()),
+        film_um: 4.0,
+        ..scene::Couplant::default()
+    });
+    spoilt.back.roughness_um = 30.0;
+    spoilt.back.tilt_degrees = 0.4;
+    let mut pitted = spoilt.clone();
+    pitted.pit = Some(scene::Pit {
+        remaining_mm: 6.0,
+        area_percent: 20.0,
+    });
+    pitted.lamination = Some(scene::Lamination {
+        depth_mm: 3.0,
+        area_percent: 10.0,
+    });
+    let mut converted = spoilt.clone();
+    converted.echoes.mode_converted_percent = 10.0;
+    let mut dual = spoilt.clone();
+    dual.probe.kind = ProbeKind::DualElement;
+    dual.dual_element = Some(scene::DualElement {
+        separation_mm: 5.0,
+        crosstalk_percent: 3.0,
+        crosstalk_delay_ns: 0.0,
+    });
+    let mut ringing = spoilt.clone();
+    ringing.probe.kind = ProbeKind::DelayLine;
+    ringing.probe.face_impedance_mrayl = None;
+    ringing.delay_line = Some(DelayLine {
+        material: Some("polystyrene".into()),
+        length_mm: Some(9.0),
+        near_end_percent: -40.0,
+        attenuation_exponent: 1.0,
+        ..DelayLine::default()
+    });
+    for scene in [spoilt, pitted, converted, dual, ringing] {
+        let change = Variation {
+            time_shift: -3.1e-9,
+            wall_change: 0.217e-3,
+        };
+        let varied = Synthesiser::new(&scene).unwrap().varied_shot(0, 0, change);
+        let mut other = scene.clone();
+        other.wall.thickness_mm += 0.217;
+        other.probe.zero_offset_ns -= 3.1;
+        let direct = synthesise(&other, 0).unwrap();
+        assert!(direct.codes.iter().any(|code| code.abs() > 200));
+        for (a, b) in varied.codes.iter().zip(&direct.codes) {
+            assert!((a - b).abs() <= 1, "{a} {b}");
+        }
+        assert!((varied.truth.least_wall_mm - direct.truth.least_wall_mm).abs() < 1e-9);
+        for echo in &varied.truth.echoes {
+            let same =
+                |other: &&EchoTruth| (other.arrival_ns - echo.arrival_ns).abs() < 1e-6 && other.role == echo.role;
+            assert!(direct.truth.echoes.iter().any(|other| same(&other)), "{echo:?}");
+        }
+    }
+}
+
+/// A delay line's second interface echo comes after as long as the first, and weaker by both ends:
+/// r^2 times what the near end turns back.
+#[test]
+fn a_delay_line_rings() {
+    let mut scene = Scene::contact(5.0, 60.0, "carbon steel", 10.0);
+    scene.record.gain_db = Some(0.0);
+    scene.probe.kind = ProbeKind::DelayLine;
+    scene.delay_line = Some(DelayLine {
+        material: Some("polystyrene".into()),
+        length_mm: Some(9.0),
+        near_end_percent: -40.0,
+        attenuation_exponent: 1.0,
+        ..DelayLine::default()
+    });
+    let truth = synthesise(&scene, 0).unwrap().truth;
+    let first = truth.echoes.iter().find(|echo| echo.role == Role::Interface).unwrap();
+    let second = truth
+        .echoes
+        .iter()
+        .find(|echo| echo.role == Role::DelayLineMultiple && echo.wall_round_trips == 0)
+        .unwrap();
+    assert!((second.arrival_ns - 2.0 * first.arrival_ns).abs() < 1e-9);
+    let reflected = first.amplitude_percent / 100.0;
+    assert!((second.amplitude_percent / 100.0 - 0.4 * reflected * reflected).abs() < 1e-9);
+    assert_ne!(first.polarity, second.polarity);
+    scene.delay_line.as_mut().unwrap().near_end_percent = 0.0;
+    let truth = synthesise(&scene, 0).unwrap().truth;
+    assert!(truth.echoes.iter().all(|echo| echo.role != Role::DelayLineMultiple));
+}
+
+/// An echo that comes after the record has ended is not folded into it.
+#[test]
+fn what_comes_later_is_not_in_the_record() {
+    let mut scene = Scene::contact(5.0, 60.0, "carbon steel", 125.0);
+    scene.record.samples = 2048;
+    // 42.2 us of wall, and a record of 41 us: its transform repeats after 82 us.
+    for mm in [125.0, 200.0, 243.0, 500.0] {
+        scene.wall.thickness_mm = mm;
+        let shot = synthesise(&scene, 0).unwrap();
+        let loudest = shot.codes[..2000].iter().map(|code| code.abs()).max();
+        assert!(loudest <= Some(1), "{mm}: {loudest:?}");
+        assert!(shot.truth.echoes.is_empty());
     }
 }
 
