@@ -10,6 +10,9 @@ use std::ops::{Add, AddAssign, Mul, Sub};
 use std::rc::Rc;
 use std::sync::Arc;
 
+/// Factors of a transform, shared by all of the same length in a thread.
+type Factors = Arc<[Complex]>;
+
 /// The last few results of a costly function, by what they depend on.
 pub(crate) struct Kept<K, V>(RefCell<Vec<(K, Rc<V>)>>);
 
@@ -157,10 +160,10 @@ impl Iterator for Rotation {
 pub struct RealTransform {
     length: usize,
     /// `exp(j 2 pi k / length)` for k below half the length.
-    factors: Arc<[Complex]>,
+    factors: Factors,
     /// The same for each step of the transform in a row: `exp(j pi k / half)` for k below half, for
     /// half = 1, 2, 4 ...
-    steps: Arc<[Complex]>,
+    steps: Factors,
     scratch: Vec<Complex>,
 }
 
@@ -170,7 +173,7 @@ impl RealTransform {
     pub fn new(length: usize) -> Self {
         let length = length.max(4).next_power_of_two();
         thread_local! {
-            static KEPT: Kept<usize, (Arc<[Complex]>, Arc<[Complex]>)> = const { Kept::new() };
+            static KEPT: Kept<usize, (Factors, Factors)> = const { Kept::new() };
         }
         let (factors, steps) = KEPT.with(|kept| kept.get(length, || Self::factors(length)));
         Self {
@@ -181,8 +184,8 @@ impl RealTransform {
         }
     }
 
-    fn factors(length: usize) -> (Arc<[Complex]>, Arc<[Complex]>) {
-        let factors: Arc<[Complex]> = (0..length / 2)
+    fn factors(length: usize) -> (Factors, Factors) {
+        let factors: Factors = (0..length / 2)
             .map(|k| Complex::polar(1.0, TAU * k as f64 / length as f64))
             .collect();
         let (mut steps, mut half) = (Vec::with_capacity(length / 2), 1);
