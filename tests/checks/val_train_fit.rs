@@ -98,6 +98,7 @@ fn val_train_fit() {
             let variation = Variation {
                 time_shift: random.uniform() / RATE,
                 wall_change,
+                ..Variation::default()
             };
             let simulated = maker.varied_shot(7, shot, variation);
             match gauge.measure(&simulated.record()) {

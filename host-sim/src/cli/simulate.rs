@@ -34,7 +34,8 @@ A scene says what is under the probe and what the receiver adds. The least one:
   snr_db = 30.0                        # of the first back-wall echo
 
 More tables: [delay_line], [dual_element], [couplant], [surface], [coating], [back], [pit],
-[lamination], [grain], [temperature], [echoes], [transmission_pulse].
+[lamination], [grain], [temperature], [echoes], [transmission_pulse]; and for a receiver that is not
+ideal: [receiver], [interference], [timing], [converter], [equivalent_time], [drop_outs].
 Commented examples are in host-sim/scenes/.
 
 Examples:
@@ -43,7 +44,9 @@ Examples:
 
 The truth (every echo's arrival, amplitude and role, the pulse's figures, the noise) is written beside
 the shots under the same name, ending in .json. The same scene, seed and shot give the same codes on
-every machine. Names of materials: halfpulse materials. Noise is all that differs between the shots of one scene.")]
+every machine. Names of materials: halfpulse materials. Noise, and what the receiver does wrong, is all
+that differs between the shots of one scene. With [equivalent_time] each shot is one phase: shot n fires
+(n mod phases) steps later.")]
 pub struct Arguments {
     /// The scene: probe, part, receiver (TOML)
     pub scene: PathBuf,
@@ -97,7 +100,7 @@ pub fn run(arguments: &Arguments, out: &mut dyn Write) -> Result<Outcome, InputE
     })?;
     let (mut codes, mut truths) = (Vec::with_capacity(shots), Vec::with_capacity(shots));
     for number in 0..u64::from(arguments.shots) {
-        let shot = maker.shot(arguments.seed, number);
+        let shot = maker.phased_shot(arguments.seed, number);
         codes.push(shot.codes);
         truths.push(shot.truth);
     }

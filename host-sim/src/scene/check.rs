@@ -57,6 +57,10 @@ impl Scene {
                 "give version = 1",
             ));
         }
+        if let Some(table) = &self.equivalent_time {
+            // What a record's length and rate mean depends on it.
+            table.check(self.record.sample_rate_mhz)?;
+        }
         self.check_record()?;
         self.check_probe()?;
         self.check_layers()?;
@@ -74,17 +78,19 @@ impl Scene {
             ("rms_steps", noise.rms_steps.is_some()),
         )?;
         optional("noise.snr_db", noise.snr_db, -60.0, 200.0, "dB")?;
-        optional("noise.rms_steps", noise.rms_steps, 0.0, 1e5, "steps")
+        optional("noise.rms_steps", noise.rms_steps, 0.0, 1e5, "steps")?;
+        self.check_receiver()
     }
 
     fn check_record(&self) -> Result<(), SceneError> {
         let record = &self.record;
         within("record.sample_rate_mhz", record.sample_rate_mhz, 0.1, 1e4, "MHz")?;
-        if !(16..=MOST_SAMPLES).contains(&record.samples) {
+        let most = MOST_SAMPLES / usize::from(self.phases().max(1));
+        if !(16..=most).contains(&record.samples) {
             return Err(error(
                 "record.samples",
                 format!("{} is out of range", record.samples),
-                format!("give 16 to {MOST_SAMPLES}"),
+                format!("give 16 to {most}"),
             ));
         }
         within("record.first_sample_us", record.first_sample_us, -1e3, 1e5, "us")?;
@@ -167,18 +173,16 @@ impl Scene {
         }
         let pulse = self.pulse();
         let upper = pulse.upper_frequency() / 1e6;
-        if self.record.sample_rate_mhz < 2.0 * upper {
+        let dense_rate = self.record.sample_rate_mhz * f64::from(self.phases());
+        if dense_rate < 2.0 * upper {
             return Err(error(
                 "record.sample_rate_mhz",
-                format!(
-                    "{} is below twice the pulse's upper -6 dB frequency of {upper:.3} MHz",
-                    self.record.sample_rate_mhz
-                ),
+                format!("{dense_rate} is below twice the pulse's upper -6 dB frequency of {upper:.3} MHz",),
                 "sample faster or take a lower probe",
             ));
         }
         let (before, after) = pulse.reach();
-        if (before + after) * self.record.sample_rate_mhz * 1e6 > MOST_PULSE_SAMPLES {
+        if (before + after) * dense_rate * 1e6 > MOST_PULSE_SAMPLES {
             return Err(error(
                 "probe",
                 format!("has a pulse of more than {MOST_PULSE_SAMPLES} samples"),

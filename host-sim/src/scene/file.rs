@@ -53,12 +53,24 @@ fn line_of_field(text: &str, field: &str) -> Option<u64> {
     let document = toml::de::DeTable::parse(text).ok()?;
     let mut parts = field.split('.');
     let first = parts.next()?;
-    let (table, value) = document.get_ref().iter().find(|(key, _)| key.get_ref() == first)?;
-    let inner = parts.next().and_then(|name| {
-        let inside = value.get_ref().as_table()?;
-        inside.keys().find(|key| key.get_ref() == name)
-    });
-    Some(line_of(text, inner.unwrap_or(table).span().start))
+    let (key, value) = document.get_ref().iter().find(|(key, _)| key.get_ref() == first)?;
+    let (mut place, mut value) = (key.span().start, value);
+    // As deep as the file goes: what is left out there is a matter of what holds it.
+    for part in parts {
+        let inner = match value.get_ref() {
+            toml::de::DeValue::Table(table) => table.iter().find(|(key, _)| key.get_ref() == part),
+            toml::de::DeValue::Array(items) => {
+                let item = part.parse::<usize>().ok().and_then(|number| items.get(number));
+                let Some(item) = item else { break };
+                (place, value) = (item.span().start, item);
+                continue;
+            }
+            _ => None,
+        };
+        let Some((key, inner)) = inner else { break };
+        (place, value) = (key.span().start, inner);
+    }
+    Some(line_of(text, place))
 }
 
 fn line_of(text: &str, byte: usize) -> u64 {
@@ -216,6 +228,55 @@ thickness_mm = 10
         ] {
             refused(&GOOD.replace(from, to), Some(line), &[word]);
         }
+    }
+
+    #[test]
+    fn absurd_receivers_are_refused_with_line_and_range() {
+        for (table, line, word) in [
+            ("[receiver]\ngain_step_db = -1", 13, "give 0 to 20 dB"),
+            ("[receiver]\ngain_error_db = 1", 13, "gain_step_db too"),
+            ("[receiver]\nhigh_pass_mhz = 5\nlow_pass_mhz = 2", 14, "widen the band"),
+            ("[receiver]\nlow_pass_order = 9", 13, "give 1 to 8"),
+            ("[receiver]\nthermal_noise_uv = nan", 13, "give 0 to"),
+            ("[receiver]\nthermal_noise_mv = 1", 13, "thermal_noise_uv?"),
+            (
+                "[[interference.tones]]\nfrequency_mhz = 1\namplitude_percent = 1\n[[interference.tones]]\nfrequency_mhz = 0\namplitude_percent = 1",
+                16,
+                "give 0.001 to 1000 MHz",
+            ),
+            (
+                "[interference.bursts]\nperiod_us = 2\nlength_us = 3\nfrequency_mhz = 1\namplitude_percent = 1",
+                14,
+                "give 0.01 to 2 us",
+            ),
+            (
+                "[interference.spikes]\nrate_per_ms = 1e6\namplitude_percent = 5\ndecay_ns = 20",
+                13,
+                "spikes in a record",
+            ),
+            ("[interference.hum]\namplitude_percent = -1", 13, "give 0 to 10000 %"),
+            ("[timing]\naperture_jitter_ns = 100", 13, "give 0 to 3."),
+            ("[timing]\ntrigger_jitter_ns = inf", 13, "give 0 to 100 ns"),
+            ("[converter]\nbits_stuck_high = [12]", 13, "give 0 to 11"),
+            (
+                "[converter]\nbits_stuck_high = [3]\nbits_stuck_low = [3]",
+                14,
+                "keep one",
+            ),
+            (
+                "[converter]\nintegral_nonlinearity_steps = 600",
+                13,
+                "give 0 to 256 steps",
+            ),
+            ("[equivalent_time]\nphases = 0", 13, "give 1 to 64"),
+            ("[equivalent_time]\nphases = 65", 13, "give 1 to 64"),
+            ("[drop_outs]\nblock_samples = 0", 13, "give 1 to 65536"),
+            ("[drop_outs]\nlost_shots_percent = 101", 13, "give 0 to 100 %"),
+        ] {
+            refused(&format!("{GOOD}{table}\n"), Some(line), &[word]);
+        }
+        let long = GOOD.replace("samples = 2048", "samples = 1000000") + "[equivalent_time]\nphases = 10\n";
+        refused(&long, Some(4), &["give 16 to 104857"]);
     }
 
     #[test]

@@ -9,11 +9,16 @@ pub mod part;
 mod check;
 mod check_part;
 mod stack;
+mod receiver;
 
 use crate::transducer::Pulse;
 pub use part::{Couplant, DualElement, Grain, Lamination, Pit, Surface, Temperature};
 use serde::{Deserialize, Serialize};
 use std::fmt;
+
+pub use receiver::{
+    Bursts, ConverterErrors, DropOuts, EquivalentTime, Hum, Interference, Receiver, Spikes, Timing, Tone,
+};
 
 /// A scene. `version` is 1; keys that are added later have defaults and keep it.
 #[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
@@ -66,6 +71,24 @@ pub struct Scene {
     /// White noise of the receiver; none if left out.
     #[serde(default)]
     pub noise: Noise,
+    /// Gain steps, band limits and thermal noise of the receiver; ideal if left out, as in all that follows.
+    #[serde(default, skip_serializing_if = "receiver::is_default")]
+    pub receiver: Receiver,
+    /// What reaches the converter from elsewhere.
+    #[serde(default, skip_serializing_if = "receiver::is_default")]
+    pub interference: Interference,
+    /// Errors of clock and trigger.
+    #[serde(default, skip_serializing_if = "receiver::is_default")]
+    pub timing: Timing,
+    /// Errors of the converter.
+    #[serde(default, skip_serializing_if = "receiver::is_default")]
+    pub converter: ConverterErrors,
+    /// Many slow shots for one dense record.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub equivalent_time: Option<EquivalentTime>,
+    /// Samples, blocks and shots that get lost.
+    #[serde(default, skip_serializing_if = "receiver::is_default")]
+    pub drop_outs: DropOuts,
 }
 
 /// Table `[record]`.
@@ -389,6 +412,12 @@ impl Scene {
             echoes: Echoes::default(),
             transmission_pulse: None,
             noise: Noise::default(),
+            receiver: Receiver::default(),
+            interference: Interference::default(),
+            timing: Timing::default(),
+            converter: ConverterErrors::default(),
+            equivalent_time: None,
+            drop_outs: DropOuts::default(),
         }
     }
 

@@ -6,11 +6,13 @@
 
 mod echo_paths;
 mod grain;
+mod receive;
 mod shapes;
 mod single_echo;
 pub mod truth;
 
 use crate::fourier::{Complex, RealTransform, Rotation};
+use crate::front_end::band_limits::BandLimits;
 use crate::front_end::{Converter, Purpose, Random};
 use crate::propagation::{Path, Stack};
 use crate::scene::{Scene, SceneError};
@@ -18,6 +20,8 @@ use crate::transducer::{self, BandPulse, PulseFigures};
 use echo_paths::echo_paths;
 use grain::GrainNoise;
 use halfpulse::{AdcFormat, Hertz, Record, SampleClock, Seconds};
+pub use receive::ReceiverTruth;
+use receive::Receiving;
 use shapes::{Element, add_echo, add_echoes, are_changed, for_each_shape};
 use single_echo::Thinner;
 use std::f64::consts::TAU;
@@ -59,6 +63,9 @@ pub struct Variation {
     pub time_shift: f64,
     /// The wall is this many metres thicker; may be negative, up to half the wall.
     pub wall_change: f64,
+    /// The gain in force is this many decibels higher than the scene's; at most 200 either way. The
+    /// transmission pulse, given over full scale, does not change.
+    pub gain_change: f64,
 }
 
 /// Makes one record of a scene.
@@ -73,6 +80,11 @@ pub fn synthesise(scene: &Scene, seed: u64) -> Result<Shot, SceneError> {
 #[derive(Clone, Debug)]
 pub struct Synthesiser {
     scene: Scene,
+    /// The scene with the rate and the number of samples that really are taken.
+    actual: Scene,
+    /// Whether anything beyond white noise and an ideal converter is in the scene.
+    ideal: bool,
+    receiver: Receiving,
     stack: Stack,
     paths: Vec<Path>,
     pulse: BandPulse,
@@ -101,8 +113,9 @@ impl Synthesiser {
     ///
     /// # Errors
     /// The first value of the scene that cannot be used.
-    pub fn new(scene: &Scene) -> Result<Self, SceneError> {
-        let stack = scene.stack()?;
+    pub fn new(asked: &Scene) -> Result<Self, SceneError> {
+        let stack = asked.stack()?;
+        let scene = &receive::actual(asked);
         let rate = scene.record.sample_rate_mhz * 1e6;
         let samples = scene.record.samples;
         let data_sheet = scene.pulse();
@@ -110,14 +123,19 @@ impl Synthesiser {
         // Twice the record, so that nothing before its start or after its end is folded into it.
         let margin = ((before + after) * rate) as usize + 64;
         let transform = RealTransform::new((2 * samples).max(samples + 4 * margin));
-        let pulse = BandPulse::new(&data_sheet, rate, transform.length());
+        let limits = BandLimits::of(&scene.receiver);
+        let pulse = receive::limited(
+            BandPulse::new(&data_sheet, rate, transform.length()),
+            limits.as_ref(),
+            data_sheet.centre_frequency(),
+        );
         let length = samples as f64 / rate;
         let start = scene.record.first_sample_us * 1e-6;
         let margin = (margin as f64 / rate).max(0.5 * length);
         let until = start + length + before + 0.5 * margin;
         let paths = echo_paths(scene, &stack, until)?;
         let element = Element::of(scene);
-        let changed = are_changed(&stack, element);
+        let changed = are_changed(&stack, element) || limits.is_some();
         let cycle = 1.0 / data_sheet.centre_frequency();
         let thinner = Thinner::new(&pulse, before + after);
         let (mut echoes, mut first_peak) = (Vec::with_capacity(paths.len()), 0.0);
@@ -161,10 +179,12 @@ impl Synthesiser {
         let mut kept = paths;
         kept.retain(audible);
         let gain = gain(scene, first_peak)?;
-        let converter = Converter::new(scene.record.bits);
+        let converter = Converter::with_errors(scene.record.bits, &scene.converter, scene.receiver.specimen);
         let full_scale = converter.full_scale();
         let first_steps = first_peak * gain * full_scale;
         let noise_steps = noise_steps(scene, first_steps)?;
+        let receiver = Receiving::new(scene, limits, gain * full_scale);
+        let all_noise = receiver.with_thermal(noise_steps);
         let truth = Truth {
             seed: 0,
             shot: 0,
@@ -174,20 +194,24 @@ impl Synthesiser {
             coating_thickness_mm: stack.coating.map(|coating| coating.thickness * 1e3),
             coating_velocity_m_s: stack.coating.map(|coating| coating.velocity),
             face_ns: stack.face_time() * 1e9,
-            noise_rms_codes: noise_steps,
-            first_back_wall_snr_db: (noise_steps > 0.0 && first_steps > 0.0)
-                .then(|| 20.0 * libm::log10(first_steps / noise_steps)),
+            noise_rms_codes: all_noise,
+            first_back_wall_snr_db: (all_noise > 0.0 && first_steps > 0.0)
+                .then(|| 20.0 * libm::log10(first_steps / all_noise)),
             pulse: PulseFigures::of(&data_sheet, rate),
             echoes: echoes
                 .into_iter()
                 .filter(|(_, peak, _)| peak * gain * full_scale > LEAST_STEPS)
                 .map(|(path, peak, shift)| echo_truth(&path, peak * gain, shift))
                 .collect(),
+            receiver: None,
         };
         let signal = vec![0.0; transform.length()];
         let grain = GrainNoise::new(scene, &stack, &pulse, first_peak);
         let mut made = Self {
-            scene: scene.clone(),
+            scene: asked.clone(),
+            actual: scene.clone(),
+            ideal: receive::is_ideal(asked),
+            receiver,
             stack,
             paths: kept,
             pulse,
@@ -225,74 +249,38 @@ impl Synthesiser {
     /// in samples from the first one.
     #[must_use]
     pub fn reference_pulse(&self) -> (Vec<f64>, f64) {
-        let rate = self.scene.record.sample_rate_mhz * 1e6;
-        let (before, after) = self.scene.pulse().reach();
+        let rate = self.actual.record.sample_rate_mhz * 1e6;
+        let (before, after) = self.actual.pulse().reach();
         // What the anti-alias filter adds beyond, in ringing, is below a part in a million there.
         let (before, after) = ((before * rate).ceil(), (after * rate).ceil());
         let samples = self.pulse.sampled(-before / rate, rate, (before + after) as usize + 1);
         (samples, before)
     }
 
-    /// A record of the scene as it is; only its noise depends on seed and shot.
+    /// A record of the scene as it is; only its noise and what the receiver adds depend on seed and shot.
     pub fn shot(&mut self, seed: u64, shot: u64) -> Shot {
-        if self
-            .grain
-            .as_mut()
-            .is_some_and(|grain| grain.move_to(seed, &mut self.transform))
-        {
-            self.make_signal(&Variation::default());
-            let samples = self.still.len();
-            self.still.copy_from_slice(&self.signal[..samples]);
-        }
-        let mut codes = Vec::with_capacity(self.still.len());
-        let mut random = Random::new(seed, Purpose::Noise, shot);
-        for &steps in &self.still {
-            codes.push(self.converter.code(noisy(steps, self.noise_steps, &mut random)));
-        }
-        self.hand_over(
-            codes,
-            Truth {
-                seed,
-                shot,
-                ..self.truth.clone()
-            },
-        )
+        self.take(seed, shot, Variation::default())
     }
 
-    /// A record of the scene with a wall or a delay of its own.
+    /// A record of the scene with a wall, a delay or a gain of its own.
     ///
     /// A variation beyond its limits is cut to them.
     pub fn varied_shot(&mut self, seed: u64, shot: u64, variation: Variation) -> Shot {
         let samples = self.still.len();
-        let longest = (0.25 * samples as f64 / (self.scene.record.sample_rate_mhz * 1e6)).min(1e-6);
+        let longest = (0.25 * samples as f64 / (self.actual.record.sample_rate_mhz * 1e6)).min(1e-6);
         let thickest = 0.5 * self.stack.wall.thickness;
         let variation = Variation {
             time_shift: finite(variation.time_shift).clamp(-longest, longest),
             wall_change: finite(variation.wall_change).clamp(-thickest, thickest),
+            gain_change: finite(variation.gain_change).clamp(-200.0, 200.0),
         };
-        if self
-            .grain
-            .as_mut()
-            .is_some_and(|grain| grain.move_to(seed, &mut self.transform))
-        {
-            self.make_signal(&Variation::default());
-            self.still.copy_from_slice(&self.signal[..samples]);
-        }
-        self.make_signal(&variation);
-        let mut random = Random::new(seed, Purpose::Noise, shot);
-        let mut codes = Vec::with_capacity(samples);
-        for &steps in &self.signal[..samples] {
-            codes.push(self.converter.code(noisy(steps, self.noise_steps, &mut random)));
-        }
-        let mut truth = Truth {
-            seed,
-            shot,
-            ..self.truth.clone()
-        };
+        let mut made = self.take(seed, shot, variation);
+        let truth = &mut made.truth;
         truth.wall_thickness_mm += variation.wall_change * 1e3;
         truth.least_wall_mm = self.least_wall(variation.wall_change) * 1e3;
         truth.face_ns += variation.time_shift * 1e9;
         let longer = 2.0 * variation.wall_change / self.stack.wall.velocity;
+        let louder = libm::pow(10.0, variation.gain_change / 20.0);
         let changed =
             (!self.is_linear() && variation.wall_change != 0.0).then(|| self.changed_stack(variation.wall_change));
         for echo in &mut truth.echoes {
@@ -301,7 +289,40 @@ impl Synthesiser {
                 Some(stack) => self.later_in(stack, echo),
             };
             echo.arrival_ns += (variation.time_shift + later) * 1e9;
+            echo.amplitude_percent *= louder;
         }
+        made
+    }
+
+    fn take(&mut self, seed: u64, shot: u64, variation: Variation) -> Shot {
+        let samples = self.still.len();
+        if self
+            .grain
+            .as_mut()
+            .is_some_and(|grain| grain.move_to(seed, &mut self.transform))
+        {
+            self.make_signal(&Variation::default());
+            self.still.copy_from_slice(&self.signal[..samples]);
+        }
+        if !self.ideal {
+            return self.received(seed, shot, &variation);
+        }
+        let mut random = Random::new(seed, Purpose::Noise, shot);
+        let mut codes = Vec::with_capacity(samples);
+        let signal = if variation == Variation::default() {
+            &self.still
+        } else {
+            self.make_signal(&variation);
+            &self.signal[..samples]
+        };
+        for &steps in signal {
+            codes.push(self.converter.code(noisy(steps, self.noise_steps, &mut random)));
+        }
+        let truth = Truth {
+            seed,
+            shot,
+            ..self.truth.clone()
+        };
         self.hand_over(codes, truth)
     }
 
@@ -331,7 +352,7 @@ impl Synthesiser {
         }
         self.by_trips = vec![vec![Complex::ZERO; bins]; most + 1];
         let mut slots: Vec<&mut [Complex]> = self.by_trips.iter_mut().map(Vec::as_mut_slice).collect();
-        let start = self.scene.record.first_sample_us * 1e-6;
+        let start = self.actual.record.first_sample_us * 1e-6;
         add_echoes(&mut slots, &self.pulse, &self.stack, &self.paths, self.element, start);
     }
 
@@ -374,14 +395,22 @@ impl Synthesiser {
             grain.add_to(&mut spectrum);
         }
         let shift = variation.time_shift;
-        let factor = self.gain * self.converter.full_scale();
+        let mut factor = self.gain * self.converter.full_scale();
+        if variation.gain_change != 0.0 {
+            factor *= libm::pow(10.0, variation.gain_change / 20.0);
+        }
         let band = self.pulse.with_values(spectrum).shifted(shift, factor);
         transducer::to_time(&mut self.transform, &band, &mut self.bins, &mut self.signal);
-        if let Some(transmission) = &self.scene.transmission_pulse {
-            let record = &self.scene.record;
+        if !self.ideal {
+            // What the time of a sample decides is added where that time is known.
+            self.receiver.make_slopes(&mut self.transform, &band, &mut self.bins);
+            return;
+        }
+        if let Some(transmission) = &self.actual.transmission_pulse {
+            let record = &self.actual.record;
             let (rate, frequency) = (
                 record.sample_rate_mhz * 1e6,
-                self.scene.probe.centre_frequency_mhz * 1e6,
+                self.actual.probe.centre_frequency_mhz * 1e6,
             );
             let full_scale = self.converter.full_scale();
             for (i, value) in self.signal[..record.samples].iter_mut().enumerate() {
@@ -401,7 +430,7 @@ impl Synthesiser {
             for path in &mut paths {
                 path.arrival = stack.arrival_of(path);
             }
-            let start = self.scene.record.first_sample_us * 1e-6;
+            let start = self.actual.record.first_sample_us * 1e-6;
             add_echoes(&mut [&mut sum], &self.pulse, &stack, &paths, self.element, start);
             return sum;
         }
@@ -440,7 +469,9 @@ fn noisy(steps: f64, noise: f64, random: &mut Random) -> f64 {
 
 fn gain(scene: &Scene, first_peak: f64) -> Result<f64, SceneError> {
     if let Some(decibels) = scene.record.gain_db {
-        return Ok(libm::pow(10.0, decibels / 20.0));
+        let receiver = &scene.receiver;
+        let in_force = receiver.nominal_gain(decibels) + receiver.gain_error(decibels);
+        return Ok(libm::pow(10.0, in_force / 20.0));
     }
     if first_peak > 1e-12 {
         return Ok(scene.record.first_back_wall_percent.unwrap_or(50.0) / 100.0 / first_peak);

@@ -118,6 +118,7 @@ fn variation_equals_another_scene() {
             Variation {
                 time_shift: 7.3e-9,
                 wall_change: -0.123e-3,
+                ..Variation::default()
             },
         );
         let mut other = scene.clone();
@@ -358,6 +359,7 @@ fn prints_throughput() {
             let variation = Variation {
                 time_shift: f64::from(shot) * 1e-10,
                 wall_change: f64::from(shot) * 1e-7,
+                ..Variation::default()
             };
             let made = if changing {
                 maker.varied_shot(1, shot.into(), variation)

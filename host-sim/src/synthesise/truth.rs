@@ -1,5 +1,6 @@
 //! What is in a record: the part, the noise, every echo.
 
+use super::ReceiverTruth;
 use crate::propagation::{Path, Role, Stack, beam};
 use crate::scene::Scene;
 use crate::transducer::PulseFigures;
@@ -33,6 +34,9 @@ pub struct Truth {
     pub pulse: PulseFigures,
     /// The echoes in the order of their arrival.
     pub echoes: Vec<EchoTruth>,
+    /// What the receiver did to this record, if it is not ideal.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    pub receiver: Option<ReceiverTruth>,
 }
 
 impl Truth {

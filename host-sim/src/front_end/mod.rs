@@ -1,9 +1,21 @@
-//! Receiver and converter: the transmission pulse's remains, white noise, rounding and clipping.
+//! Receiver and converter: what happens between the probe and the memory, one module for each effect.
+//!
+//! Random numbers are drawn per purpose and shot, so that an effect that is switched on leaves all others
+//! as they were.
+
+pub mod band_limits;
+pub mod converter;
+pub mod drop_outs;
+pub mod gain;
+pub mod interference;
+pub mod timing;
 
 use crate::scene::TransmissionPulse;
 use rand_chacha::ChaCha8Rng;
 use rand_chacha::rand_core::{Rng, SeedableRng};
 use std::f64::consts::{PI, TAU};
+
+pub use converter::Converter;
 
 /// What random numbers are drawn for: each purpose has a sequence of its own, so that one more draw
 /// for one of them leaves the others as they were.
@@ -16,6 +28,22 @@ pub enum Purpose {
     Variation = 1,
     /// Where the grains of a wall are.
     Grain = 16,
+    /// Thermal noise at the receiver's input.
+    Thermal = 32,
+    /// Jitter of the trigger, and shots that do not fire.
+    Trigger = 33,
+    /// Jitter of each sample.
+    Aperture = 34,
+    /// Tones, bursts and hum.
+    Interference = 35,
+    /// Spikes.
+    Spikes = 36,
+    /// Samples and blocks that get lost.
+    DropOuts = 37,
+    /// What is fixed on one board: seed and shot are its specimen and what is drawn.
+    Specimen = 38,
+    /// Faults that a wrapped receiver makes on purpose.
+    Faults = 39,
 }
 
 /// Random numbers that depend on seed, purpose and shot alone, whatever was drawn before: ChaCha with
@@ -73,51 +101,9 @@ impl TransmissionPulse {
     }
 }
 
-/// A converter with signed codes, full scale 2^(bits-1), its zero in the middle of a step.
-#[derive(Clone, Copy, Debug, PartialEq, Eq)]
-pub struct Converter {
-    bits: u8,
-}
-
-impl Converter {
-    /// Of 2 to 16 bits.
-    #[must_use]
-    pub fn new(bits: u8) -> Self {
-        Self {
-            bits: bits.clamp(2, 16),
-        }
-    }
-
-    /// Codes from zero to full scale.
-    #[must_use]
-    pub fn full_scale(&self) -> f64 {
-        f64::from(1u32 << (self.bits - 1))
-    }
-
-    /// The code of a value given in steps: rounded to the nearest, clipped to -full scale to full
-    /// scale - 1.
-    #[must_use]
-    pub fn code(&self, steps: f64) -> i16 {
-        let full_scale = self.full_scale();
-        (steps + 0.5).floor().clamp(-full_scale, full_scale - 1.0) as i16
-    }
-}
-
 #[cfg(test)]
 mod tests {
     use super::*;
-
-    #[test]
-    fn converter_rounds_and_clips() {
-        let converter = Converter::new(12);
-        assert_eq!(converter.full_scale(), 2048.0);
-        let codes = [-0.5, -0.51, 0.49, 0.5, 2046.6, 1e9, -1e9, f64::INFINITY];
-        assert_eq!(
-            codes.map(|value| converter.code(value)),
-            [0, -1, 0, 1, 2047, 2047, -2048, 2047]
-        );
-        assert_eq!(Converter::new(16).code(-1e9), i16::MIN);
-    }
 
     /// Mean, deviation, kurtosis and tail of a normal distribution.
     #[test]
