@@ -4,6 +4,7 @@
 #[cfg(unix)]
 mod mapped;
 
+use crate::front_end::gain::GainLag;
 use crate::link::SampleStore;
 use crate::scene::{Scene, SceneError};
 use crate::synthesise::{Synthesiser, Variation};
@@ -31,6 +32,7 @@ pub struct SimulatedReceiver {
     scene: Scene,
     seed: u64,
     shot: u64,
+    lag: GainLag,
     made: VecDeque<Made>,
 }
 
@@ -50,6 +52,7 @@ impl SimulatedReceiver {
             scene,
             seed,
             shot: 0,
+            lag: GainLag::new(),
             made: VecDeque::new(),
         }
     }
@@ -123,15 +126,19 @@ impl PulseReceiver for SimulatedReceiver {
         if !((-60.0..=120.0).contains(&gain) && (0.0..=LONGEST_DELAY).contains(&delay)) {
             return Err(SimulatorFault::CannotSet);
         }
-        let half_decibels = (gain * 2.0).round() as i32;
+        let receiver = &self.scene.receiver;
+        let half_decibels = (receiver.nominal_gain(gain) * 2.0).round() as i32;
+        let nominal = f64::from(half_decibels) / 2.0;
+        let behind = self.lag.next(nominal, receiver.gain_lag_shots) - nominal;
         let (seed, number) = (self.seed, self.shot);
         let signal = self.signal(half_decibels, codes.len()).map_err(SimulatorFault::Scene)?;
-        let made = if delay > 0.0 {
-            let later = Variation {
+        let made = if delay > 0.0 || behind != 0.0 {
+            let varied = Variation {
                 time_shift: delay,
+                gain_change: behind,
                 ..Variation::default()
             };
-            signal.varied_shot(seed, number, later)
+            signal.varied_shot(seed, number, varied)
         } else {
             signal.shot(seed, number)
         };
@@ -225,6 +232,37 @@ mod tests {
         let (one, two) = (series(), series());
         assert_eq!(one, two);
         assert_ne!(one[0], one[2]);
+    }
+
+    /// The receiver believes its nominal step; the signal has the step's error, and follows a change late.
+    #[test]
+    fn gain_lags_and_errs_without_the_receiver_knowing() {
+        let mut scene = Scene::contact(5.0, 60.0, "carbon steel", 10.0);
+        scene.record.bits = 16;
+        scene.receiver.gain_lag_shots = 2.0;
+        scene.receiver.gain_step_db = 2.0;
+        scene.receiver.gain_error_db = 0.5;
+        let error = |gain| scene.receiver.gain_error(gain);
+        assert!(error(-12.0) != error(-6.0) && error(-6.0) != 0.0);
+        let mut receiver = SimulatedReceiver::new(scene.clone(), 1);
+        let mut peak_after = |gain: f32| {
+            let mut codes = [0i16; 1024];
+            let fired = receiver.fire(&shot(gain, 0.0), &mut codes).unwrap();
+            let peak = codes.iter().map(|code| code.unsigned_abs()).max().unwrap();
+            (fired.gain.get(), 20.0 * f64::from(peak).log10())
+        };
+        let (nominal, settled) = peak_after(-11.4);
+        assert_eq!(nominal, -12.0);
+        for n in 1..5 {
+            let (nominal, level) = peak_after(-6.0);
+            assert_eq!(nominal, -6.0);
+            let expected = 6.0 + error(-6.0) - error(-12.0) - 6.0 * (-0.5 * f64::from(n)).exp();
+            assert!(
+                (level - settled - expected).abs() < 0.02,
+                "{n}: {} {expected}",
+                level - settled
+            );
+        }
     }
 
     #[test]

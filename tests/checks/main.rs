@@ -7,6 +7,7 @@ mod val_arrival;
 mod val_envelope;
 mod val_gauge;
 mod val_pulse;
+mod val_receiver;
 mod val_population;
 mod val_train_fit;
 mod val_no_echo;

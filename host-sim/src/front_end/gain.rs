@@ -42,6 +42,12 @@ pub struct GainLag {
 }
 
 impl GainLag {
+    /// No shot yet.
+    #[must_use]
+    pub const fn new() -> Self {
+        Self { in_force: None }
+    }
+
     /// The gain in force in the next shot: after n shots with the same demand the distance has fallen to
     /// exp(-n / shots). The first shot of all finds the gain settled.
     pub fn next(&mut self, demanded: f64, shots: f64) -> f64 {
