@@ -319,6 +319,9 @@ mod tests {
     use crate::scene::Scene;
     use halfpulse::Seconds;
 
+    /// Judges how many codes differ from the sound ones, the codes, and the sound ones.
+    type Expected = fn(usize, &[i16], &[i16]) -> bool;
+
     const SHOT: Shot = Shot {
         gain: Decibels::new(-6.0),
         delay: Seconds::ZERO,
@@ -340,7 +343,7 @@ mod tests {
         let mut faulty = receiver(1);
         let (sound, plain) = take(&mut faulty);
         let apart = |codes: &[i16]| codes.iter().zip(&plain).filter(|(a, b)| a != b).count();
-        let cases: [(ReceiverFault, fn(usize, &[i16], &[i16]) -> bool); 5] = [
+        let cases: [(ReceiverFault, Expected); 5] = [
             (ReceiverFault::GainUnknown(40.0), |_, codes, _| {
                 codes.contains(&2047) && codes.contains(&-2048)
             }),
