@@ -185,6 +185,7 @@ fn variation_of_a_spoilt_wall_equals_another_scene() {
         let change = Variation {
             time_shift: -3.1e-9,
             wall_change: 0.217e-3,
+            ..Variation::default()
         };
         let varied = Synthesiser::new(&scene).unwrap().varied_shot(0, 0, change);
         let mut other = scene.clone();
