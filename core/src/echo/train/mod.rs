@@ -106,7 +106,7 @@ pub enum Undecided {
 
 /// Finds the train among `echoes`, gives them their roles, adds weak multiples that only the fit could find, and fits.
 ///
-/// Echoes that already have a role other than [`EchoRole::Other`] (an interface echo) take no part.
+/// Echoes that already have a role other than [`EchoRole::Other`](crate::echo::EchoRole::Other) (an interface echo) take no part.
 ///
 /// # Errors
 /// [`Undecided`].
