@@ -274,7 +274,13 @@ fn transform(values: &mut [Complex], steps: &[Complex]) {
             values.swap(index, mirrored);
         }
     }
-    let (mut half, mut left) = (1, steps);
+    // The first step's only factor is 1.
+    for pair in values.chunks_exact_mut(2) {
+        if let [low, high] = pair {
+            (*low, *high) = (*low + *high, *low - *high);
+        }
+    }
+    let (mut half, mut left) = (2, steps.get(1..).unwrap_or_default());
     while half < length {
         let Some((factors, rest)) = left.split_at_checked(half) else {
             return;

@@ -93,7 +93,10 @@ impl Converter {
         let full_scale = self.full_scale();
         let steps = steps + self.offset;
         let code = if self.levels.is_empty() {
-            (steps + 0.5).floor().clamp(-full_scale, full_scale - 1.0) as i32
+            // The floor of it, without the call that a processor without such an instruction makes.
+            let value = (steps + 0.5).clamp(-full_scale, full_scale - 1.0);
+            let cut = value as i32;
+            cut - i32::from(f64::from(cut) > value)
         } else {
             self.levels.partition_point(|&level| level <= steps) as i32 - full_scale as i32
         };
