@@ -102,6 +102,18 @@ impl InputError {
         self.file.as_deref()
     }
 
+    /// What is wrong.
+    #[must_use]
+    pub fn what(&self) -> &str {
+        &self.what
+    }
+
+    /// What to do about it.
+    #[must_use]
+    pub fn remedy(&self) -> &str {
+        &self.remedy
+    }
+
     /// The line, from 1, if it is known.
     #[must_use]
     pub const fn line(&self) -> Option<u64> {

@@ -11,7 +11,11 @@
 
 pub mod band;
 pub mod calibrating;
+pub mod campaign;
 pub mod cli;
+pub mod export;
+pub mod plot;
+pub mod statistics;
 pub mod device;
 pub mod faults;
 pub mod demo;

@@ -1,6 +1,8 @@
 //! Every check; the file names tell where the truth comes from: val_ outside, law_ symmetry, regress_ our own past.
 
 mod law_gauge;
+mod regress_campaigns;
+mod val_bound;
 mod val_tables;
 mod val_uncertainty;
 mod val_arrival;

@@ -5,11 +5,13 @@
 //! `error: FILE:LINE: what; remedy`.
 
 pub mod calibrate;
+pub mod campaign;
 pub mod json;
 pub mod materials;
 pub mod read;
 pub mod simulate;
 pub mod text;
+pub mod throughput;
 pub mod words;
 
 use crate::input_error::InputError;
@@ -63,6 +65,10 @@ enum Command {
     Calibrate(calibrate::Arguments),
     /// Lists the materials that scenes know: velocities, how well they are known, and where from
     Materials(materials::Arguments),
+    /// Simulates and measures many runs over a grid of scenes: how often right, doubted, refused, wrong
+    Campaign(campaign::Arguments),
+    /// Merges the shards of a campaign
+    Merge(campaign::MergeArguments),
 }
 
 /// An output that cannot be written; one that its reader has closed had enough, which is no fault.
@@ -99,6 +105,8 @@ pub fn main() -> ExitCode {
         Some(Command::Read(arguments)) => read::run(&arguments, &mut out),
         Some(Command::Calibrate(arguments)) => calibrate::run(&arguments, &mut out),
         Some(Command::Materials(arguments)) => materials::run(&arguments, &mut out),
+        Some(Command::Campaign(arguments)) => campaign::run(&arguments, &mut out),
+        Some(Command::Merge(arguments)) => campaign::run_merge(&arguments, &mut out),
     };
     match result {
         Ok(outcome) => outcome.exit_code(),

@@ -34,6 +34,10 @@ impl Bench {
         std::fs::write(self.path(name), content).expect("a file for the test");
     }
 
+    pub fn read(&self, name: &str) -> String {
+        std::fs::read_to_string(self.path(name)).expect("a text that the test has made")
+    }
+
     pub fn write_shots(&self, name: &str, shots: &[Vec<i16>]) {
         let path = self.path(name);
         halfpulse_sim::record_file::write(&path, shots, RATE_MHZ * 1e6, 0.0).expect("a record for the test");

@@ -1,0 +1,163 @@
+//! Simulates and measures one run.
+
+use super::bound;
+use super::file::Campaign;
+use super::learned::Pulses;
+use super::resolve::Resolved;
+use super::row::{Row, RowReading};
+use crate::input_error::InputError;
+use crate::measuring::{HeapScratch, Measured, Refusal};
+use crate::setup_file::SetupFile;
+use crate::synthesise::{Shot, Synthesiser, Truth, Variation};
+use halfpulse::Span;
+use toml::Value;
+
+/// What one thread keeps from run to run; no result depends on it.
+pub struct Measurer<'c> {
+    campaign: &'c Campaign,
+    /// The scene that was made last.
+    maker: Option<(Value, Synthesiser, Option<f64>)>,
+    setup: Option<(Value, SetupFile)>,
+    pulses: Pulses,
+    scratch: HeapScratch,
+    samples: usize,
+}
+
+/// One run with all that came of it.
+pub struct Run<'c> {
+    /// What was to be measured.
+    pub resolved: Resolved<'c>,
+    /// The record and its truth.
+    pub shot: Shot,
+    /// The set-up.
+    pub setup: SetupFile,
+    /// The learned pulse, if one was.
+    pub pulse: Option<Vec<f32>>,
+    /// Reading or refusal.
+    pub measured: Measured,
+    /// The line of the results.
+    pub row: Row,
+}
+
+/// The wall that a reading is held against, in millimetres; `None` if the record holds no echo of it.
+#[must_use]
+pub fn true_wall_mm(truth: &Truth) -> Option<f64> {
+    truth.back_walls().next().map(|_| truth.wall_thickness_mm)
+}
+
+impl<'c> Measurer<'c> {
+    /// Of a campaign.
+    #[must_use]
+    pub fn new(campaign: &'c Campaign) -> Self {
+        Self {
+            campaign,
+            maker: None,
+            setup: None,
+            pulses: Pulses::default(),
+            scratch: HeapScratch::new(0),
+            samples: 0,
+        }
+    }
+
+    /// One run.
+    ///
+    /// # Errors
+    /// A run that cannot be simulated; the fault names it.
+    pub fn run(&mut self, run: u64) -> Result<Run<'c>, InputError> {
+        let campaign = self.campaign;
+        let resolved = campaign.resolve(run)?;
+        self.prepare(&resolved).map_err(|error| {
+            let what = format!("run {run}: {}", error.what());
+            match (error.file(), error.line()) {
+                (Some(file), Some(line)) => InputError::in_line(file, line, what, error.remedy()),
+                (Some(file), None) => InputError::in_file(file, what, error.remedy()),
+                _ => InputError::in_argument(what, error.remedy()),
+            }
+        })?;
+        let variation = campaign.variation_of(&resolved.root)?;
+        let pulse = match (&campaign.pulse, &resolved.block) {
+            (Some(learned), Some(block)) => Some(self.pulses.of(campaign, block, learned.shots)?),
+            _ => None,
+        };
+        let (Some((_, maker, bound)), Some((_, setup))) = (&mut self.maker, &self.setup) else {
+            return Err(InputError::in_argument(
+                format!("run {run} was not prepared"),
+                "report this",
+            ));
+        };
+        let shot = if variation == Variation::default() {
+            maker.shot(campaign.seed, run)
+        } else {
+            maker.varied_shot(campaign.seed, run, variation)
+        };
+        if shot.codes.len() > self.samples {
+            self.samples = shot.codes.len();
+            self.scratch = HeapScratch::new(self.samples);
+        }
+        let mut gauge = setup.gauge(self.scratch.workspace())?;
+        if let Some(pulse) = &pulse {
+            gauge.learn_pulse(pulse).map_err(|error| setup.locate(error))?;
+        }
+        let outcome = gauge.measure(&shot.record()).map_err(Refusal::from);
+        let measured = Measured {
+            file: format!("run {run}"),
+            shot: Some(0),
+            span: Some(gauge.setup().span),
+            outcome,
+            findings: gauge.findings().clone(),
+            full_scale: shot.format.full_scale(),
+        };
+        let quarter_mm = 250.0 * shot.truth.wall_velocity_m_s / (maker.scene().probe.centre_frequency_mhz * 1e6);
+        let bound = bound.filter(|_| gauge.setup().span == Span::BackWallToBackWall);
+        let row = Row {
+            run,
+            cell: resolved.cell,
+            truth_mm: true_wall_mm(&shot.truth),
+            quarter_mm,
+            bound_mm: bound.map(|bound| bound * 1e3),
+            outcome: match &measured.outcome {
+                Ok(reading) => Ok(RowReading {
+                    thickness_mm: reading.thickness.get() * 1e3,
+                    standard_uncertainty_mm: reading.standard_uncertainty.get() * 1e3,
+                    coverage_factor: reading.coverage_factor,
+                    doubts: reading.doubts.iter().map(|doubt| doubt.word().to_string()).collect(),
+                    dominating: reading
+                        .budget
+                        .dominating()
+                        .map_or("", |source| source.word())
+                        .to_string(),
+                }),
+                Err(refusal) => Err(refusal.reason.to_string()),
+            },
+            shown: resolved.shown.clone(),
+        };
+        Ok(Run {
+            setup: setup.clone(),
+            resolved,
+            shot,
+            pulse,
+            measured,
+            row,
+        })
+    }
+
+    /// Makes scene and set-up anew where they differ from the last run's.
+    fn prepare(&mut self, resolved: &Resolved<'_>) -> Result<(), InputError> {
+        let document = |name: &str| resolved.root.get(name).cloned().unwrap_or(Value::Boolean(false));
+        let scene = document("scene");
+        if self.maker.as_ref().is_none_or(|(made, ..)| *made != scene) {
+            let maker = Synthesiser::new(&resolved.scene()?).map_err(|error| {
+                let path = format!("scene.{}", error.field);
+                let what = format!("{path}: {}", error.what);
+                self.campaign.places.fault(&path, what, error.remedy)
+            })?;
+            let bound = bound::thickness(&maker);
+            self.maker = Some((scene, maker, bound));
+        }
+        let setup = document("setup");
+        if self.setup.as_ref().is_none_or(|(read, _)| *read != setup) {
+            self.setup = Some((setup, resolved.setup()?));
+        }
+        Ok(())
+    }
+}

@@ -1,0 +1,542 @@
+//! Campaigns: neither threads nor shards nor a kill change a digit, and no part of a file is taken for a whole
+//! one; whatever is wrong with a campaign gets one line.
+
+mod support;
+
+use halfpulse_sim::campaign::results::{Reader, Writer};
+use halfpulse_sim::campaign::runner::{self, Shard};
+use halfpulse_sim::campaign::{Campaign, Summary};
+use halfpulse_sim::export;
+use halfpulse_sim::input_error::InputError;
+use std::path::Path;
+use support::Bench;
+
+/// Three cells of small records: fixed scenes, drawn scenes, a bundle with a draw of its own.
+const SMALL: &str = r#"version = 1
+name = "small"
+seed = 5
+runs = 4
+[scene]
+record = { sample_rate_mhz = 50.0, samples = 1024 }
+probe = { kind = "contact", centre_frequency_mhz = 5.0, relative_bandwidth_percent = 60.0 }
+wall = { material = "carbon steel", velocity_m_s = 5920.0, thickness_mm = 8.0 }
+noise = { snr_db = 30.0 }
+[setup]
+record = { sample_rate_mhz = 50.0, bits = 12 }
+probe = { kind = "contact", centre_frequency_mhz = 5.0, relative_bandwidth_percent = 60.0, element_diameter_mm = 6.0 }
+material = { velocity_m_s = 5920.0, velocity_standard_uncertainty_m_s = 6.0 }
+zero = { offset_ns = 0.0, standard_uncertainty_ns = 1.0 }
+measure = { span = "back-wall-to-back-wall", from_us = 0.5 }
+[grid]
+walls = [
+  { label = "fixed", "scene.wall.thickness_mm" = 8.0 },
+  { label = "drawn, \"thin\"", "scene.wall.thickness_mm" = { log_uniform = [4.0, 12.0] } },
+  { label = "moving", "shot.wall_change_um" = { uniform = [-50.0, 50.0] }, "shot.time_shift_ns" = { uniform = [0.0, 20.0] } },
+]
+[draw]
+"setup.zero.offset_ns" = { normal = [0.0, 1.0], within = [-3.0, 3.0] }
+"#;
+
+fn bench() -> Bench {
+    let bench = Bench::new();
+    bench.write("small.toml", SMALL);
+    bench
+}
+
+fn done(bench: &Bench, arguments: &[&str]) -> String {
+    let run = bench.run(arguments);
+    assert_eq!(run.status, 0, "{arguments:?}: {}", run.errors);
+    run.out
+}
+
+/// The one line of the error.
+fn failed(bench: &Bench, arguments: &[&str]) -> String {
+    bench.run(arguments).error().to_string()
+}
+
+#[test]
+fn threads_and_shards_change_no_digit() {
+    let bench = bench();
+    let mut tables = Vec::new();
+    for threads in ["1", "2", "8"] {
+        let name = format!("{threads}.csv");
+        tables.push(done(
+            &bench,
+            &["campaign", "small.toml", "--threads", threads, "-o", &name],
+        ));
+        assert_eq!(bench.read(&name), bench.read("1.csv"), "{threads} threads");
+    }
+    assert!(tables.iter().all(|table| *table == tables[0]), "{tables:?}");
+    assert_eq!(done(&bench, &["campaign", "1.csv"]), tables[0], "summed up again");
+    for shard in 1..=5 {
+        let (shard, name) = (format!("{shard}/5"), format!("part{shard}.csv"));
+        done(&bench, &["campaign", "small.toml", "--shard", &shard, "-o", &name]);
+    }
+    let orders = [
+        ["part1.csv", "part2.csv", "part3.csv", "part4.csv", "part5.csv"],
+        ["part4.csv", "part1.csv", "part5.csv", "part3.csv", "part2.csv"],
+    ];
+    for (number, order) in orders.iter().enumerate() {
+        let name = format!("all{number}.csv");
+        let mut arguments = vec!["merge"];
+        arguments.extend(order);
+        arguments.extend(["-o", &name]);
+        assert_eq!(done(&bench, &arguments), tables[0]);
+        assert_eq!(bench.read(&name), bench.read("1.csv"), "shards in any order");
+    }
+}
+
+/// A process may be killed at any byte: the same command makes the same file, without losing or repeating a run.
+#[test]
+fn a_killed_campaign_goes_on_from_any_byte() {
+    let bench = bench();
+    done(&bench, &["campaign", "small.toml", "-o", "whole.csv"]);
+    let whole = bench.read("whole.csv");
+    let campaign = Campaign::read(&bench.path("small.toml")).unwrap();
+    let path = bench.path("cut.csv");
+    let header = whole.len() - whole.split_inclusive('\n').rev().take(13).map(str::len).sum::<usize>();
+    let last_lines = whole.len() - whole.split_inclusive('\n').rev().take(4).map(str::len).sum::<usize>();
+    let cuts = (0..header)
+        .step_by(97)
+        .chain([header - 1, header])
+        .chain(last_lines..=whole.len());
+    for cut in cuts {
+        std::fs::write(&path, &whole[..cut]).unwrap();
+        // Nothing takes it for a whole file.
+        let mut count = 0;
+        if let Ok(mut reader) = Reader::open(&path) {
+            while let Ok(Some(_)) = reader.next_row() {
+                count += 1;
+            }
+            let complete = reader.extent().is_some_and(|extent| extent.complete);
+            assert_eq!(complete, cut == whole.len(), "cut at {cut}");
+        }
+        let (mut summary, mut kept) = (Summary::new(&campaign), 0);
+        let mut writer = Writer::open(&path, &campaign, Shard::WHOLE, &mut |row| {
+            summary.add(&row);
+            kept += 1;
+            Ok(())
+        })
+        .unwrap();
+        assert_eq!((kept, writer.rows()), (count, count), "cut at {cut}");
+        runner::run(&campaign, Shard::WHOLE, writer.rows(), 2, &mut |row| {
+            summary.add(&row);
+            writer.append(&row)
+        })
+        .unwrap();
+        writer.complete().unwrap();
+        drop(writer);
+        assert_eq!(std::fs::read_to_string(&path).unwrap(), whole, "cut at {cut}");
+        assert_eq!(summary.all.runs, 12);
+    }
+    // A finished campaign is only summed up.
+    assert_eq!(
+        done(&bench, &["campaign", "small.toml", "-o", "whole.csv"]),
+        done(&bench, &["campaign", "whole.csv"])
+    );
+}
+
+/// Damage that no kill can do is not mended in silence.
+#[test]
+fn damaged_results_are_refused() {
+    let bench = bench();
+    done(&bench, &["campaign", "small.toml", "-o", "whole.csv"]);
+    let whole = bench.read("whole.csv");
+    let lines: Vec<&str> = whole.split_inclusive('\n').collect();
+    let first_row = lines.len() - 13;
+    let without = |number: usize| {
+        let mut lines = lines.clone();
+        lines.remove(number);
+        lines.concat()
+    };
+    for (what, text, word) in [
+        ("a row is missing", without(first_row + 3), "is not the row of run 3"),
+        (
+            "rows follow",
+            format!("{whole}{}", lines[first_row]),
+            "follows the closing line",
+        ),
+        (
+            "a row is no row",
+            whole.replace("\n5,", "\n5;"),
+            "is not the row of run 5",
+        ),
+        (
+            "closed too early",
+            [&lines[..first_row + 2], &lines[lines.len() - 1..]].concat().concat(),
+            "closing line",
+        ),
+        (
+            "another file",
+            "a,b\n1,2\n".to_string(),
+            "is no file of campaign results",
+        ),
+    ] {
+        bench.write("damaged.csv", &text);
+        for arguments in [
+            &["campaign", "small.toml", "-o", "damaged.csv"][..],
+            &["campaign", "damaged.csv"],
+            &["merge", "damaged.csv", "-o", "all.csv"],
+        ] {
+            let error = failed(&bench, arguments);
+            assert!(error.contains("damaged.csv") && error.contains(word), "{what}: {error}");
+            assert_eq!(bench.read("damaged.csv"), text, "{what}: the file was changed");
+        }
+    }
+    bench.write("cut.csv", &whole[..whole.len() - 30]);
+    for arguments in [&["campaign", "cut.csv"][..], &["merge", "cut.csv", "-o", "all.csv"]] {
+        let error = failed(&bench, arguments);
+        assert!(
+            error.contains("cut.csv") && error.contains("is not complete"),
+            "{error}"
+        );
+    }
+    assert!(!bench.path("all.csv").exists() && !bench.path("all.csv.part").exists());
+}
+
+#[test]
+fn only_what_belongs_together_is_merged() {
+    let bench = bench();
+    bench.write(
+        "other.toml",
+        SMALL.replace("thickness_mm = 8.0 }\nnoise", "thickness_mm = 8.5 }\nnoise"),
+    );
+    for (name, campaign, extra) in [
+        ("a1.csv", "small.toml", ["--shard", "1/2"]),
+        ("a2.csv", "small.toml", ["--shard", "2/2"]),
+        ("a3.csv", "small.toml", ["--shard", "1/3"]),
+        ("seed.csv", "small.toml", ["--seed", "6"]),
+        ("other.csv", "other.toml", ["--shard", "2/2"]),
+    ] {
+        done(&bench, &["campaign", campaign, extra[0], extra[1], "-o", name]);
+    }
+    bench.write("there.csv", "precious");
+    for (inputs, output, words) in [
+        (&["a1.csv", "other.csv"][..], "x.csv", ["other.csv", "another campaign"]),
+        (&["a1.csv", "seed.csv"], "x.csv", ["seed.csv", "seed 6"]),
+        (&["a1.csv"], "x.csv", ["missing 2/2", "run these too"]),
+        (&["a1.csv", "a1.csv"], "x.csv", ["a1.csv", "there twice"]),
+        (&["a1.csv", "a3.csv"], "x.csv", ["a3.csv", "shard 1/3"]),
+        (&["a1.csv", "a2.csv"], "there.csv", ["there.csv", "is there already"]),
+        (
+            &["a1.csv", "small.toml"],
+            "x.csv",
+            ["small.toml", "no file of campaign results"],
+        ),
+        (&["a1.csv", "a2.csv"], "no/such/x.csv", ["x.csv", "folder"]),
+    ] {
+        let mut arguments = vec!["merge"];
+        arguments.extend(inputs);
+        arguments.extend(["-o", output]);
+        let error = failed(&bench, &arguments);
+        assert!(words.iter().all(|word| error.contains(word)), "{inputs:?}: {error}");
+        assert!(!bench.path("x.csv").exists());
+    }
+    // Results of another campaign are not gone on with.
+    let error = failed(&bench, &["campaign", "other.toml", "-o", "a1.csv"]);
+    assert!(
+        error.contains("a1.csv") && error.contains("another campaign"),
+        "{error}"
+    );
+    assert_eq!(bench.read("there.csv"), "precious");
+}
+
+#[test]
+fn any_run_replays_alone() {
+    let bench = bench();
+    done(&bench, &["campaign", "small.toml", "-o", "all.csv"]);
+    let rows: Vec<String> = bench
+        .read("all.csv")
+        .lines()
+        .filter(|line| !line.starts_with('#'))
+        .map(String::from)
+        .collect();
+    for run in [11usize, 4, 0] {
+        let number = run.to_string();
+        done(
+            &bench,
+            &["campaign", "small.toml", "--replay", &number, "-o", "run.npy"],
+        );
+        let json: serde_json::Value = serde_json::from_str(&bench.read("run.json")).unwrap();
+        assert_eq!(json["row"], rows[run + 1]);
+        let record = std::fs::read(bench.path("run.npy")).unwrap();
+        done(
+            &bench,
+            &["campaign", "small.toml", "--replay", &number, "-o", "again.npy"],
+        );
+        assert_eq!(std::fs::read(bench.path("again.npy")).unwrap(), record);
+        // What was written is all that `read` needs to come to the same thickness.
+        let read = done(
+            &bench,
+            &["read", "run.npy", "--setup", "run.setup.toml", "--format", "json"],
+        );
+        let read: serde_json::Value = serde_json::from_str(&read).unwrap();
+        assert_eq!(read["thickness_mm"], json["reading"]["thickness_mm"]);
+        assert!(
+            rows[run + 1].contains(&format!(",reading,{},", json["reading"]["thickness_mm"])),
+            "{}",
+            rows[run + 1]
+        );
+        if run < 8 {
+            // Without a shift of its own a shot is the scene's: noise of run i is shot i of the seed.
+            done(
+                &bench,
+                &[
+                    "simulate",
+                    "run.scene.toml",
+                    "--seed",
+                    "5",
+                    "--shots",
+                    "8",
+                    "-o",
+                    "same.npy",
+                ],
+            );
+            let shots = std::fs::read(bench.path("same.npy")).unwrap();
+            let (own, all) = (&record[record.len() - 2048..], &shots[shots.len() - 8 * 2048..]);
+            assert_eq!(own, &all[run * 2048..(run + 1) * 2048]);
+        }
+    }
+    let error = failed(&bench, &["campaign", "small.toml", "--replay", "12"]);
+    assert!(error.contains("give 0 to 11"), "{error}");
+}
+
+/// One more draw leaves those that are there as they were.
+#[test]
+fn draws_do_not_disturb_each_other() {
+    let bench = bench();
+    bench.write(
+        "more.toml",
+        format!("{SMALL}\"scene.noise.snr_db\" = {{ uniform = [29.0, 31.0] }}\n"),
+    );
+    let shown = |name: &str| {
+        let campaign = Campaign::read(&bench.path(name)).unwrap();
+        let column = campaign
+            .columns()
+            .iter()
+            .position(|name| name == "setup.zero.offset_ns")
+            .unwrap();
+        (0..12)
+            .map(|run| campaign.resolve(run).unwrap().shown[column].clone())
+            .collect::<Vec<_>>()
+    };
+    assert_eq!(shown("small.toml"), shown("more.toml"));
+}
+
+#[test]
+fn what_is_wrong_with_a_campaign_is_one_line_with_its_place() {
+    let bench = bench();
+    let at = |words: &str| 1 + SMALL.lines().position(|line| line.contains(words)).unwrap();
+    let (draw, grid) = (at("setup.zero.offset_ns"), at("\"fixed\""));
+    for (from, to, line, words) in [
+        (
+            "\"setup.zero.offset_ns\"",
+            "\"setup.zero.ofset_ns\"",
+            draw,
+            ["offset_ns?", "ofset_ns"],
+        ),
+        (
+            "\"setup.zero.offset_ns\"",
+            "\"scene.wall.thicknes_mm\"",
+            draw,
+            ["thickness_mm?", "unknown"],
+        ),
+        (
+            "\"setup.zero.offset_ns\"",
+            "\"scene.wal.thickness_mm\"",
+            draw,
+            ["wall?", "unknown"],
+        ),
+        (
+            "\"setup.zero.offset_ns\"",
+            "\"shot.time_shft_ns\"",
+            draw,
+            ["time_shift_ns?", "unknown"],
+        ),
+        (
+            "\"setup.zero.offset_ns\"",
+            "\"scene.wall.material.x\"",
+            draw,
+            ["no table", "scene.wall.material.x"],
+        ),
+        (
+            "\"setup.zero.offset_ns\"",
+            "\"wall.thickness_mm\"",
+            draw,
+            ["is no field", "scene."],
+        ),
+        (
+            "normal = [0.0, 1.0]",
+            "normal = [0.0, -1.0]",
+            draw,
+            ["standard deviation", "-1"],
+        ),
+        (
+            "normal = [0.0, 1.0], within = [-3.0, 3.0]",
+            "log_uniform = [0.0, 1.0]",
+            draw,
+            ["log_uniform", "above 0"],
+        ),
+        ("runs = 4", "runs = 0", 4, ["runs = 0", "at least 1"]),
+        (
+            "runs = 4",
+            "runs = 1000000000000",
+            4,
+            ["1000000000000", "at most 333333333"],
+        ),
+        ("runs = 4", "runs = -3", 4, ["runs", "whole number"]),
+        ("runs = 4", "runs = 4.5", 4, ["runs", "whole number"]),
+        ("runs = 4", "rnus = 4", 4, ["unknown key rnus", "runs?"]),
+        ("version = 1", "version = 2", 1, ["version", "write version = 1"]),
+        ("seed = 5", "seed = ", 3, ["small.toml", "TOML"]),
+        (
+            "\"scene.wall.thickness_mm\" = 8.0 }",
+            "\"scene.wall.thickness_mm\" = -8.0 }",
+            grid,
+            ["-8", "give 0.001"],
+        ),
+        ("samples = 1024", "samples = 1e9", 6, ["samples", "invalid type"]),
+        ("samples = 1024", "samples = 1000000000", 6, ["samples", "give 16 to"]),
+        (
+            "carbon steel",
+            "carbonsteel",
+            8,
+            ["did you mean carbon steel", "material"],
+        ),
+        ("span = \"back-wall", "span = \"bakc-wall", 15, ["span", "write one of"]),
+    ] {
+        let text = SMALL.replacen(from, to, 1);
+        assert_ne!(text, SMALL, "{from}");
+        bench.write("wrong.toml", &text);
+        let error = failed(&bench, &["campaign", "wrong.toml", "-o", "wrong.csv"]);
+        assert!(error.contains(&format!("wrong.toml:{line}: ")), "{to}: {error}");
+        assert!(words.iter().all(|word| error.contains(word)), "{to}: {error}");
+        assert!(!bench.path("wrong.csv").exists(), "{to}: an output was begun");
+    }
+    let twice = format!("{SMALL}\"shot.time_shift_ns\" = 3.0\n");
+    bench.write("twice.toml", twice);
+    let error = failed(&bench, &["campaign", "twice.toml"]);
+    assert!(error.contains("set twice"), "{error}");
+    for (arguments, word) in [
+        (&["campaign", "none.toml"][..], "no such file"),
+        (&["campaign", "."], "folder"),
+        (&["campaign", "small.toml", "--shard", "3/2"], "no shard"),
+        (&["campaign", "small.toml", "--threads", "0"], "threads"),
+        (&["campaign", "small.toml", "--runs", "0"], "at least 1"),
+        (&["campaign", "small.toml", "-o", "no/such/folder.csv"], "folder"),
+        (&["campaign", "small.toml", "-o", "."], "no ordinary file"),
+        (&["campaign"], "required"),
+    ] {
+        let error = failed(&bench, arguments);
+        assert!(error.contains(word), "{arguments:?}: {error}");
+    }
+}
+
+/// What lies beyond a range is only met by a run that draws it: the error names the run.
+#[test]
+fn a_run_that_cannot_be_made_is_named() {
+    let bench = bench();
+    let text = SMALL.replace("log_uniform = [4.0, 12.0]", "uniform = [-30.0, 30.0]");
+    bench.write("wrong.toml", &text);
+    // The first run of the cell is sound, about half of the others are not.
+    let error = failed(&bench, &["campaign", "wrong.toml", "--runs", "40"]);
+    let line = 1 + text.lines().position(|line| line.contains("thin")).unwrap();
+    let place = format!("wrong.toml:{line}: run ");
+    assert!(error.contains("thickness_mm") && error.contains(&place), "{error}");
+}
+
+/// A limit on the size of files stands in for a full disk: what is written up to there is kept, and the same command
+/// goes on once there is room.
+#[cfg(unix)]
+#[test]
+fn a_full_disk_is_an_error_and_the_campaign_goes_on() {
+    let bench = bench();
+    let larger = SMALL.replace("runs = 4", "runs = 12");
+    bench.write("small.toml", &larger);
+    done(&bench, &["campaign", "small.toml", "-o", "whole.csv"]);
+    let command = env!("CARGO_BIN_EXE_halfpulse");
+    // Blocks of 512 bytes: room for the header and some rows. Without the trap a signal would end the process.
+    let blocks = 1 + bench.read("whole.csv").len() / 512 - 3;
+    let script = format!("trap '' XFSZ; ulimit -f {blocks}; exec {command} campaign small.toml -o cut.csv");
+    let shell = std::process::Command::new("sh")
+        .args(["-c", &script])
+        .current_dir(bench.path(""))
+        .output()
+        .unwrap();
+    let error = String::from_utf8(shell.stderr).unwrap();
+    assert_eq!(shell.status.code(), Some(1), "{error}");
+    assert!(
+        error.contains("cut.csv: cannot be written") && error.contains("goes on where it stopped"),
+        "{error}"
+    );
+    assert_eq!(error.lines().count(), 1, "{error}");
+    done(&bench, &["campaign", "small.toml", "-o", "cut.csv"]);
+    assert_eq!(bench.read("cut.csv"), bench.read("whole.csv"));
+}
+
+/// Memory: a row that has been handed over is gone. What remains are the threads' channels.
+#[test]
+fn a_sink_that_stops_ends_all_threads() {
+    let bench = bench();
+    let campaign = Campaign::read_changed(&bench.path("small.toml"), Some(100_000_000), None).unwrap();
+    let mut rows = 0;
+    let result = runner::run(&campaign, Shard::WHOLE, 0, 4, &mut |_| {
+        rows += 1;
+        if rows == 20 {
+            return Err(InputError::in_argument("enough", "stop"));
+        }
+        Ok(())
+    });
+    assert_eq!((rows, result.unwrap_err().to_string().as_str()), (20, "enough; stop"));
+}
+
+#[test]
+fn summaries_and_figures_are_written() {
+    let bench = bench();
+    let text = SMALL.replace(
+        "[draw]",
+        "\"scene.noise.snr_db\" = { from = 20.0, to = 40.0, steps = 3 }\n[draw]",
+    );
+    bench.write("grid.toml", text);
+    let table = done(
+        &bench,
+        &["campaign", "grid.toml", "--summary", "sum.csv", "--figures", "figures"],
+    );
+    assert!(
+        table.contains("9 cells of 4 runs") && table.contains("moving"),
+        "{table}"
+    );
+    let summary = bench.read("sum.csv");
+    let lines: Vec<&str> = summary.lines().collect();
+    assert_eq!(lines.len(), 11);
+    assert!(
+        lines[1].starts_with("cell,walls,scene.noise.snr_db,runs,"),
+        "{}",
+        lines[1]
+    );
+    assert!(lines[2].starts_with("0,fixed,20.0,4,"), "{}", lines[2]);
+    assert!(lines[5].contains("\"drawn, \"\"thin\"\"\""), "{}", lines[5]);
+    for name in ["errors.svg", "rates.svg"] {
+        let figure = std::fs::read_to_string(bench.path("figures").join(name)).unwrap();
+        assert!(
+            figure.starts_with("<svg") && figure.trim_end().ends_with("</svg>"),
+            "{name}"
+        );
+        assert!(figure.contains("moving"), "{name} has no legend");
+    }
+    let campaign = Campaign::read(&bench.path("grid.toml")).unwrap();
+    let empty = export::table(&Summary::new(&campaign));
+    assert!(empty.contains("snr_db"), "{empty}");
+}
+
+/// The example of the help is a campaign.
+#[test]
+fn the_example_can_be_run() {
+    let bench = Bench::new();
+    let scenes = Path::new(env!("CARGO_MANIFEST_DIR")).join("scenes");
+    std::fs::copy(scenes.join("clean_train.toml"), bench.path("scene.toml")).unwrap();
+    bench.write("setup.toml", halfpulse_sim::setup_file::keys::EXAMPLE);
+    bench.write("walls.toml", halfpulse_sim::campaign::file::EXAMPLE);
+    let table = done(&bench, &["campaign", "walls.toml", "--runs", "1"]);
+    assert!(table.contains("30 cells of 1 runs"), "{table}");
+}
