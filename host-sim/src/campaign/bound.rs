@@ -8,35 +8,29 @@
 //! memory). The converter's rounding counts as noise of 1/12 step².
 //!
 //! Compared with the numerical Fisher matrix of the same train by `val_bound_of_a_train` in the checks.
-//! Not defined, and `None`, where echoes overlap, change their shape on the way (attenuation, beam), or are
-//! fewer than two.
+//! Not defined, and `None`, where echoes overlap, change their shape on the way (attenuation, beam, film,
+//! roughness), stand in grain noise or are not alone, or are fewer than two.
 
 use crate::propagation::Role;
-use crate::synthesise::Synthesiser;
+use crate::synthesise::{EchoTruth, Synthesiser};
 
 /// Variance of rounding to whole steps.
 const ROUNDING: f64 = 1.0 / 12.0;
+/// An echo that a correlation finds further from its place than this has another shape than the pulse.
+const MOST_SHIFT_NS: f64 = 1e-3;
 
 /// Standard deviation at the bound, in metres, of a thickness read from back wall to back wall.
 #[must_use]
 pub fn thickness(maker: &Synthesiser) -> Option<f64> {
     let scene = maker.scene();
-    let lossy = |layer: Option<f64>| layer.is_some_and(|loss| loss > 0.0);
-    if scene.probe.beam_diffraction
-        || lossy(Some(scene.wall.attenuation_db_per_m))
-        || scene.coating.is_some()
-        || scene.transmission_pulse.is_some()
-    {
+    if scene.grain.is_some() || scene.dual_element.is_some() || scene.transmission_pulse.is_some() {
         return None;
     }
     let truth = maker.truth();
     let noise = truth.noise_rms_codes;
-    if noise <= 0.0
-        || truth
-            .echoes
-            .iter()
-            .any(|echo| echo.role != Role::BackWall && scene.delay_line.is_none())
-    {
+    let stranger = |echo: &EchoTruth| echo.role != Role::BackWall && scene.delay_line.is_none();
+    let reshaped = |echo: &EchoTruth| echo.correlation_shift_ns.abs() > MOST_SHIFT_NS;
+    if noise <= 0.0 || truth.echoes.iter().any(|echo| stranger(echo) || reshaped(echo)) {
         return None;
     }
     let rate = scene.record.sample_rate_mhz * 1e6;
@@ -91,7 +85,7 @@ fn slope_energy(pulse: &[f64]) -> f64 {
             .filter(|(m, _)| *m != k)
             .map(|(m, value)| {
                 let distance = k as f64 - m as f64;
-                let sign = if (k + m) % 2 == 0 { 1.0 } else { -1.0 };
+                let sign = if (k + m).is_multiple_of(2) { 1.0 } else { -1.0 };
                 value * sign / distance
             })
             .sum()

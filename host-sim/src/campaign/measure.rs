@@ -39,10 +39,23 @@ pub struct Run<'c> {
     pub row: Row,
 }
 
-/// The wall that a reading is held against, in millimetres; `None` if the record holds no echo of it.
+/// The wall that a reading is held against, in millimetres: the least under the beam. `None` if the record holds no
+/// echo of it.
 #[must_use]
 pub fn true_wall_mm(truth: &Truth) -> Option<f64> {
-    truth.back_walls().next().map(|_| truth.wall_thickness_mm)
+    truth.back_walls().next().map(|_| truth.least_wall_mm)
+}
+
+/// The seed of a run's shot, of which it is shot 0: noise and grains differ from run to run.
+///
+/// The mixing function of SplitMix64 (Steele, Lea and Flood 2014, Fast splittable pseudorandom number generators;
+/// constants from memory).
+#[must_use]
+pub const fn shot_seed(seed: u64, run: u64) -> u64 {
+    let mut z = seed.wrapping_add(run.wrapping_add(1).wrapping_mul(0x9e37_79b9_7f4a_7c15));
+    z = (z ^ (z >> 30)).wrapping_mul(0xbf58_476d_1ce4_e5b9);
+    z = (z ^ (z >> 27)).wrapping_mul(0x94d0_49bb_1331_11eb);
+    z ^ (z >> 31)
 }
 
 impl<'c> Measurer<'c> {
@@ -85,10 +98,11 @@ impl<'c> Measurer<'c> {
                 "report this",
             ));
         };
+        let seed = shot_seed(campaign.seed, run);
         let shot = if variation == Variation::default() {
-            maker.shot(campaign.seed, run)
+            maker.shot(seed, 0)
         } else {
-            maker.varied_shot(campaign.seed, run, variation)
+            maker.varied_shot(seed, 0, variation)
         };
         if shot.codes.len() > self.samples {
             self.samples = shot.codes.len();

@@ -112,9 +112,10 @@ impl Tally {
     fn judge(&mut self, row: &Row, reading: &RowReading, truth: f64, signed: bool) {
         let error = f64::from(reading.thickness_mm) - truth;
         let expanded = f64::from(reading.standard_uncertainty_mm) * f64::from(reading.coverage_factor);
-        // Not "error > ..": what is no number is not right.
-        let inside = error.abs() <= expanded;
-        let gross = !(error.abs() <= expanded + row.quarter_mm);
+        // What is no number is not right.
+        let size = if error.is_finite() { error.abs() } else { f64::INFINITY };
+        let inside = size <= expanded;
+        let gross = size > expanded + row.quarter_mm;
         if !gross {
             self.errors.add(1e3 * error);
             if let Some(bound) = row.bound_mm {
@@ -127,11 +128,11 @@ impl Tally {
             return;
         }
         self.inside += u64::from(inside);
-        self.worst = self.worst.max(error.abs() / expanded.max(f64::MIN_POSITIVE));
+        self.worst = self.worst.max(size / expanded.max(f64::MIN_POSITIVE));
         if !inside {
             self.outside.add(error);
         }
-        if !(error.abs() <= 2.0 * expanded) {
+        if size > 2.0 * expanded {
             self.beyond_twice.add(error);
         }
         if gross {
