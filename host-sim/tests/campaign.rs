@@ -426,7 +426,9 @@ fn what_is_wrong_with_a_campaign_is_one_line_with_its_place() {
 #[test]
 fn a_run_that_cannot_be_made_is_named() {
     let bench = bench();
-    let text = SMALL.replace("log_uniform = [4.0, 12.0]", "uniform = [-30.0, 30.0]");
+    let text = SMALL
+        .replace("log_uniform = [4.0, 12.0]", "uniform = [-30.0, 30.0]")
+        .replace("\"scene.wall.thickness_mm\" = 8.0", "\"scene.noise.snr_db\" = 30.0");
     bench.write("wrong.toml", &text);
     // The first run of the cell is sound, about half of the others are not.
     let error = failed(&bench, &["campaign", "wrong.toml", "--runs", "40"]);

@@ -9,7 +9,8 @@
 //!
 //! Compared with the numerical Fisher matrix of the same train by `val_bound_of_a_train` in the checks.
 //! Not defined, and `None`, where echoes overlap, change their shape on the way (attenuation, beam, film,
-//! roughness), stand in grain noise or are not alone, or are fewer than two.
+//! roughness), stand in grain noise or are not alone (a delay line has
+//! echoes of its own), or are fewer than two.
 
 use crate::propagation::Role;
 use crate::synthesise::{EchoTruth, Synthesiser};
@@ -23,12 +24,16 @@ const MOST_SHIFT_NS: f64 = 1e-3;
 #[must_use]
 pub fn thickness(maker: &Synthesiser) -> Option<f64> {
     let scene = maker.scene();
-    if scene.grain.is_some() || scene.dual_element.is_some() || scene.transmission_pulse.is_some() {
+    if scene.grain.is_some()
+        || scene.delay_line.is_some()
+        || scene.dual_element.is_some()
+        || scene.transmission_pulse.is_some()
+    {
         return None;
     }
     let truth = maker.truth();
     let noise = truth.noise_rms_codes;
-    let stranger = |echo: &EchoTruth| echo.role != Role::BackWall && scene.delay_line.is_none();
+    let stranger = |echo: &EchoTruth| echo.role != Role::BackWall;
     let reshaped = |echo: &EchoTruth| echo.correlation_shift_ns.abs() > MOST_SHIFT_NS;
     if noise <= 0.0 || truth.echoes.iter().any(|echo| stranger(echo) || reshaped(echo)) {
         return None;

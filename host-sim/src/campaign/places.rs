@@ -8,7 +8,8 @@ use toml::de::{DeTable, DeValue};
 /// Keys with their lines.
 #[derive(Clone, Debug, Default)]
 pub struct Lines {
-    /// Dotted path and line, in the order of the file; the fields of grid, draw and pulse first.
+    /// Dotted path and line, in the order of the file; those that are written as a path (in grid, draw and pulse)
+    /// first, because they win.
     keys: Vec<(String, u64)>,
 }
 
@@ -24,9 +25,11 @@ impl Lines {
         let mut keys = Vec::new();
         if let Ok(table) = DeTable::parse(text) {
             nested(text, prefix, table.get_ref(), &mut keys);
-            keys.sort_by_key(|(name, _)| !path::is_field(name));
+            keys.sort_by_key(|(_, _, as_path)| !as_path);
         }
-        Self { keys }
+        Self {
+            keys: keys.into_iter().map(|(name, line, _)| (name, line)).collect(),
+        }
     }
 
     /// The line of a path, or of the nearest table round it.
@@ -62,21 +65,25 @@ impl Lines {
     }
 }
 
+/// Dotted path, line, and whether it is written as a path.
+type Keys = Vec<(String, u64, bool)>;
+
 /// A quoted key that is the path of a field counts by itself, wherever it stands.
-fn nested(text: &str, prefix: &str, table: &DeTable<'_>, keys: &mut Vec<(String, u64)>) {
+fn nested(text: &str, prefix: &str, table: &DeTable<'_>, keys: &mut Keys) {
     for (key, value) in table {
         let name: &str = key.get_ref();
-        let own = if path::is_field(name) {
+        let as_path = path::is_field(name);
+        let own = if as_path {
             name.to_string()
         } else {
             format!("{prefix}{name}")
         };
-        keys.push((own.clone(), line_of(text, key.span().start)));
+        keys.push((own.clone(), line_of(text, key.span().start), as_path));
         inside(text, &format!("{own}."), value.get_ref(), keys);
     }
 }
 
-fn inside(text: &str, prefix: &str, value: &DeValue<'_>, keys: &mut Vec<(String, u64)>) {
+fn inside(text: &str, prefix: &str, value: &DeValue<'_>, keys: &mut Keys) {
     match value {
         DeValue::Table(table) => nested(text, prefix, table, keys),
         DeValue::Array(list) => {
@@ -84,7 +91,7 @@ fn inside(text: &str, prefix: &str, value: &DeValue<'_>, keys: &mut Vec<(String,
                 let line = line_of(text, entry.span().start);
                 match entry.get_ref() {
                     // The fields of `also`.
-                    DeValue::String(path) if path::is_field(path) => keys.push((path.to_string(), line)),
+                    DeValue::String(path) if path::is_field(path) => keys.push((path.to_string(), line, true)),
                     other => inside(text, &format!("{prefix}{number}."), other, keys),
                 }
             }

@@ -5,7 +5,7 @@ use crate::campaign::resolve::document;
 use crate::campaign::results::{Reader, Writer};
 use crate::campaign::row::Row;
 use crate::campaign::{Campaign, Shard, Summary, file, merge, runner};
-use crate::cli::{Outcome, json, text, throughput, written};
+use crate::cli::{Outcome, json, text, written};
 use crate::input_error::InputError;
 use crate::record_file::{self, npy};
 use crate::{export, plot};
@@ -22,8 +22,8 @@ const FLUSH: Duration = Duration::from_secs(2);
 #[command(after_help = EXAMPLES, after_long_help = long_help())]
 pub struct Arguments {
     /// The campaign (TOML), or a file of its results (.csv) to be summed up again
-    #[arg(value_name = "CAMPAIGN.toml", required_unless_present = "throughput")]
-    campaign: Option<PathBuf>,
+    #[arg(value_name = "CAMPAIGN.toml")]
+    campaign: PathBuf,
     /// Where every run's result goes (.csv); a file that is not complete is gone on with
     #[arg(short, long, value_name = "RESULTS.csv")]
     output: Option<PathBuf>,
@@ -51,9 +51,6 @@ pub struct Arguments {
     /// No progress bar
     #[arg(long)]
     quiet: bool,
-    /// How many records a second one core simulates and measures; nothing else
-    #[arg(long, conflicts_with_all = ["campaign", "output", "shard", "replay", "summary", "figures"])]
-    throughput: bool,
 }
 
 /// Arguments of `merge`.
@@ -98,10 +95,7 @@ fn long_help() -> String {
 /// # Errors
 /// What is wrong with the campaign, or with an output.
 pub fn run(arguments: &Arguments, out: &mut dyn Write) -> Result<Outcome, InputError> {
-    let Some(path) = &arguments.campaign else {
-        throughput::run(out)?;
-        return Ok(Outcome::Done);
-    };
+    let path = &arguments.campaign;
     let summary = if path.extension().is_some_and(|extension| extension == "csv") {
         sum_up(path, arguments)?
     } else {

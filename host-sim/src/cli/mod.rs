@@ -11,7 +11,6 @@ pub mod materials;
 pub mod read;
 pub mod simulate;
 pub mod text;
-pub mod throughput;
 pub mod words;
 
 use crate::input_error::InputError;
