@@ -376,7 +376,7 @@ fn what_is_wrong_with_a_campaign_is_one_line_with_its_place() {
         ),
         ("runs = 4", "runs = -3", 4, ["runs", "whole number"]),
         ("runs = 4", "runs = 4.5", 4, ["runs", "whole number"]),
-        ("runs = 4", "rnus = 4", 4, ["unknown key rnus", "runs?"]),
+        ("runs = 4", "run = 4", 4, ["unknown key run", "runs?"]),
         ("version = 1", "version = 2", 1, ["version", "write version = 1"]),
         ("seed = 5", "seed = ", 3, ["small.toml", "TOML"]),
         (

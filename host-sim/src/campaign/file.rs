@@ -175,7 +175,10 @@ impl Campaign {
             if !KEYS.iter().any(|(name, _)| name == key) {
                 let remedy = match spelling::nearest(key, KEYS.iter().map(|(name, _)| *name), 1).first() {
                     Some(near) => format!("did you mean {near}?"),
-                    None => "see halfpulse campaign --help".to_string(),
+                    None => {
+                        let known: Vec<&str> = KEYS.iter().map(|(name, _)| *name).collect();
+                        format!("known here: {}", known.join(", "))
+                    }
                 };
                 let shown: String = key.chars().take(60).collect();
                 return Err(places.fault(key, format!("unknown key {shown}"), remedy));
@@ -335,9 +338,24 @@ impl Campaign {
 
     fn check_cells(&self) -> Result<(), InputError> {
         for cell in 0..self.cells() {
-            self.resolve(cell * self.runs)?.check()?;
+            let run = cell * self.runs;
+            self.resolve(run)?.check().map_err(|error| of_run(run, &error))?;
         }
         Ok(())
+    }
+}
+
+/// A fault that one run has met, with its number; what the first run meets, all do.
+#[must_use]
+pub fn of_run(run: u64, error: &InputError) -> InputError {
+    let what = match run {
+        0 => error.what().to_string(),
+        _ => format!("run {run}: {}", error.what()),
+    };
+    match (error.file(), error.line()) {
+        (Some(file), Some(line)) => InputError::in_line(file, line, what, error.remedy()),
+        (Some(file), None) => InputError::in_file(file, what, error.remedy()),
+        _ => InputError::in_argument(what, error.remedy()),
     }
 }
 

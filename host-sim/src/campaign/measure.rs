@@ -1,7 +1,7 @@
 //! Simulates and measures one run.
 
 use super::bound;
-use super::file::Campaign;
+use super::file::{Campaign, of_run};
 use super::learned::Pulses;
 use super::resolve::Resolved;
 use super::row::{Row, RowReading};
@@ -79,14 +79,7 @@ impl<'c> Measurer<'c> {
     pub fn run(&mut self, run: u64) -> Result<Run<'c>, InputError> {
         let campaign = self.campaign;
         let resolved = campaign.resolve(run)?;
-        self.prepare(&resolved).map_err(|error| {
-            let what = format!("run {run}: {}", error.what());
-            match (error.file(), error.line()) {
-                (Some(file), Some(line)) => InputError::in_line(file, line, what, error.remedy()),
-                (Some(file), None) => InputError::in_file(file, what, error.remedy()),
-                _ => InputError::in_argument(what, error.remedy()),
-            }
-        })?;
+        self.prepare(&resolved).map_err(|error| of_run(run, &error))?;
         let variation = campaign.variation_of(&resolved.root)?;
         let pulse = match (&campaign.pulse, &resolved.block) {
             (Some(learned), Some(block)) => Some(self.pulses.of(campaign, block, learned.shots)?),
