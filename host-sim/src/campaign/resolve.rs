@@ -188,11 +188,9 @@ impl Campaign {
         let lines = Lines::of(text, prefix);
         let root = prefix.trim_end_matches('.');
         let path = line.and_then(|line| lines.path_at(line)).unwrap_or(root);
-        let what = if what.contains('.') {
-            format!("{root}: {what}")
-        } else {
-            format!("{path}: {what}")
-        };
+        // Most sentences name their key.
+        let named = path.rsplit('.').next().is_some_and(|key| what.contains(key));
+        let what = format!("{}: {what}", if named { root } else { path });
         self.places.fault(path, what, remedy)
     }
 
