@@ -1,4 +1,4 @@
-//! The host's end of the link: lines for the shared code to run on, and a session with a gauge.
+//! The host's end of the link: lines for the shared code to run on, and a conversation with a gauge.
 //!
 //! Frames and messages are [`halfpulse_app::link`]'s, the same code as on the board.
 
@@ -94,7 +94,7 @@ pub trait SampleStore {
     fn store(&mut self, codes: &[i16]) -> std::io::Result<()>;
 }
 
-/// One shot that the session's front end fired.
+/// One shot that the conversation's front end fired.
 #[derive(Clone, Debug)]
 pub struct FiredShot {
     /// What was done.
@@ -103,9 +103,9 @@ pub struct FiredShot {
     pub codes: Vec<i16>,
 }
 
-/// Why a session's request came to nothing.
+/// Why a conversation's request came to nothing.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
-pub enum SessionError {
+pub enum ConversationError {
     /// The link does not work.
     Link(LinkError),
     /// The gauge did not answer in time.
@@ -116,7 +116,7 @@ pub enum SessionError {
     SetUpRefused(u8),
 }
 
-impl fmt::Display for SessionError {
+impl fmt::Display for ConversationError {
     fn fmt(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
         match self {
             Self::Link(LinkError::Line) => f.write_str("the line to the gauge is closed; is it running?"),
@@ -140,17 +140,17 @@ impl fmt::Display for SessionError {
     }
 }
 
-impl std::error::Error for SessionError {}
+impl std::error::Error for ConversationError {}
 
-impl From<LinkError> for SessionError {
+impl From<LinkError> for ConversationError {
     fn from(error: LinkError) -> Self {
         Self::Link(error)
     }
 }
 
-/// A session with a gauge: asks for readings, and is the gauge's front end meanwhile.
+/// A conversation with a gauge: asks for readings, and is the gauge's front end meanwhile.
 #[derive(Debug)]
-pub struct Session<L, R, M> {
+pub struct Conversation<L, R, M> {
     port: Port<L>,
     front_end: R,
     memory: M,
@@ -161,14 +161,14 @@ pub struct Session<L, R, M> {
     shots: Vec<FiredShot>,
 }
 
-impl<L, R, M> Session<L, R, M>
+impl<L, R, M> Conversation<L, R, M>
 where
     L: Read + ReadReady + Write,
     R: PulseReceiver,
     R::Error: Into<FrontEndFault>,
     M: SampleStore,
 {
-    /// A session over a line, with a front end that behaves.
+    /// A conversation over a line, with a front end that behaves.
     pub fn new(line: L, front_end: R, memory: M) -> Self {
         Self {
             port: Port::new(line),
@@ -296,12 +296,12 @@ where
     /// Waits for an answer that `wanted` recognises; drops others.
     ///
     /// # Errors
-    /// [`SessionError::Silent`] after `patience`, or the link's.
+    /// [`ConversationError::Silent`] after `patience`, or the link's.
     pub fn await_answer<T>(
         &mut self,
         patience: Duration,
         mut wanted: impl FnMut(Message) -> Option<T>,
-    ) -> Result<T, SessionError> {
+    ) -> Result<T, ConversationError> {
         let start = Instant::now();
         loop {
             match self.next_answer()? {
@@ -310,7 +310,7 @@ where
                         return Ok(answer);
                     }
                 }
-                None if start.elapsed() > patience => return Err(SessionError::Silent),
+                None if start.elapsed() > patience => return Err(ConversationError::Silent),
                 None => std::thread::sleep(Duration::from_micros(20)),
             }
         }
@@ -320,7 +320,7 @@ where
     ///
     /// # Errors
     /// No answer within `patience`, or another version.
-    pub fn introduce(&mut self, patience: Duration) -> Result<Hello, SessionError> {
+    pub fn introduce(&mut self, patience: Duration) -> Result<Hello, ConversationError> {
         let start = Instant::now();
         let hello = Message::Hello(Hello {
             protocol: PROTOCOL,
@@ -334,8 +334,8 @@ where
             });
             match answer {
                 Ok(hello) if hello.protocol == PROTOCOL => return Ok(hello),
-                Ok(hello) => return Err(SessionError::OtherProtocol(hello.protocol)),
-                Err(SessionError::Silent) if start.elapsed() < patience => {}
+                Ok(hello) => return Err(ConversationError::OtherProtocol(hello.protocol)),
+                Err(ConversationError::Silent) if start.elapsed() < patience => {}
                 Err(error) => return Err(error),
             }
         }
@@ -345,7 +345,7 @@ where
     ///
     /// # Errors
     /// The gauge refuses it, or does not answer.
-    pub fn set_up(&mut self, setup: &halfpulse::GaugeSetup, patience: Duration) -> Result<(), SessionError> {
+    pub fn set_up(&mut self, setup: &halfpulse::GaugeSetup, patience: Duration) -> Result<(), ConversationError> {
         self.port.send(&Message::SetUp(halfpulse_app::link::SetUp::of(setup)))?;
         let answer = self.await_answer(patience, |message| match message {
             Message::SetUpTaken(answer) => Some(answer),
@@ -354,7 +354,7 @@ where
         if answer == 0 {
             Ok(())
         } else {
-            Err(SessionError::SetUpRefused(answer))
+            Err(ConversationError::SetUpRefused(answer))
         }
     }
 
@@ -362,7 +362,7 @@ where
     ///
     /// # Errors
     /// The gauge does not answer.
-    pub fn take(&mut self, take: &Take, patience: Duration) -> Result<LinkReport, SessionError> {
+    pub fn take(&mut self, take: &Take, patience: Duration) -> Result<LinkReport, ConversationError> {
         self.port.send(&Message::Take(*take))?;
         self.await_answer(patience, |message| match message {
             Message::Report(report) if report.number == take.number => Some(report),
@@ -374,7 +374,7 @@ where
     ///
     /// # Errors
     /// The gauge does not answer.
-    pub fn query(&mut self, patience: Duration) -> Result<Status, SessionError> {
+    pub fn query(&mut self, patience: Duration) -> Result<Status, ConversationError> {
         self.port.send(&Message::Query)?;
         self.await_answer(patience, |message| match message {
             Message::Status(status) => Some(status),

@@ -14,7 +14,7 @@ use halfpulse_app::report::{Fault, Report, ReportSink, Shortfall};
 use halfpulse_sim::Scene;
 use halfpulse_sim::device::{SharedSamples, SimulatedReceiver};
 use halfpulse_sim::faults::{Behaviour, Damage, FaultyLine, FaultyReceiver, ReceiverFault};
-use halfpulse_sim::link::{MemoryLine, NoDelay, PromptingLine, Session};
+use halfpulse_sim::link::{Conversation, MemoryLine, NoDelay, PromptingLine};
 use std::cell::RefCell;
 use std::rc::Rc;
 use std::time::Duration;
@@ -42,7 +42,7 @@ const STEPS: [Decibels; 5] = [
 const PATIENCE_US: u32 = 2_000;
 const A_MOMENT: Duration = Duration::from_millis(50);
 
-type Host = Session<FaultyLine<MemoryLine>, SimulatedReceiver, SharedSamples>;
+type Host = Conversation<FaultyLine<MemoryLine>, SimulatedReceiver, SharedSamples>;
 type GaugeLine = PromptingLine<FaultyLine<MemoryLine>, Box<dyn FnMut()>>;
 type Remote<'p> = RemoteReceiver<'p, GaugeLine, SharedSamples, NoDelay>;
 
@@ -57,7 +57,7 @@ fn ends(seed: u64) -> (Rc<RefCell<Host>>, RefCell<Port<GaugeLine>>, SharedSample
     let (host_line, gauge_line) = MemoryLine::pair();
     let memory = SharedSamples::default();
     let receiver = SimulatedReceiver::new(scene(), seed);
-    let host = Session::new(FaultyLine::new(host_line, 2 * seed), receiver, memory.clone());
+    let host = Conversation::new(FaultyLine::new(host_line, 2 * seed), receiver, memory.clone());
     let host = Rc::new(RefCell::new(host));
     let prompted = host.clone();
     let prompt: Box<dyn FnMut()> = Box::new(move || {

@@ -4,7 +4,7 @@
 //! takes 128 ns of the emulator's time, so that 3.2 ticks pass in one instruction, on every machine
 //! and under any load.
 
-use crate::transcript::Sink;
+use crate::printout::Sink;
 use core::arch::asm;
 use core::cell::UnsafeCell;
 use core::ptr;
@@ -368,6 +368,6 @@ fn panic(_: &core::panic::PanicInfo<'_>) -> ! {
 #[panic_handler]
 fn panic(info: &core::panic::PanicInfo<'_>) -> ! {
     let mut console = Console(hio::hstdout().ok());
-    crate::transcript::Line::new(&mut console, "panic").sentence(info).end();
+    crate::printout::Line::new(&mut console, "panic").sentence(info).end();
     exit(false)
 }

@@ -7,7 +7,7 @@
 pub mod by_stage;
 pub mod canned;
 pub mod plan;
-pub mod transcript;
+pub mod printout;
 #[cfg(target_os = "none")]
 #[allow(unsafe_code)]
 pub mod board;

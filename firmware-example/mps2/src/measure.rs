@@ -9,7 +9,7 @@ mod app {
     use halfpulse::{Gauge, Record, Scratch};
     use halfpulse_mps2::board::{self, Console};
     use halfpulse_mps2::canned::{CAPACITY, Canned, RECORDS};
-    use halfpulse_mps2::transcript::{self, Line};
+    use halfpulse_mps2::printout::{self, Line};
 
     #[entry]
     fn main() -> ! {
@@ -21,7 +21,7 @@ mod app {
         for canned in &RECORDS {
             measure(canned, SCRATCH, CODES, &mut console);
         }
-        transcript::end(&mut console, RECORDS.len() as u32);
+        printout::end(&mut console, RECORDS.len() as u32);
         board::exit(true)
     }
 
@@ -40,7 +40,7 @@ mod app {
             planted_panic(record.codes());
             gauge.measure(&record)
         });
-        transcript::outcome(console, canned.name, &outcome, gauge.findings());
+        printout::outcome(console, canned.name, &outcome, gauge.findings());
         for (what, cost) in [("gauge-new", making), ("measure", measuring)] {
             Line::new(console, "cost")
                 .words(what)

@@ -10,7 +10,7 @@ mod app {
     use halfpulse_mps2::board::{self, Console};
     use halfpulse_mps2::by_stage::{Meter, Prepared, STAGES};
     use halfpulse_mps2::canned::{CAPACITY, Canned, RECORDS};
-    use halfpulse_mps2::transcript::{self, Line, Sink};
+    use halfpulse_mps2::printout::{self, Line, Sink};
 
     #[entry]
     fn main() -> ! {
@@ -22,7 +22,7 @@ mod app {
         for canned in &RECORDS {
             measure(canned, SCRATCH, CODES, &mut console);
         }
-        transcript::end(&mut console, RECORDS.len() as u32);
+        printout::end(&mut console, RECORDS.len() as u32);
         board::exit(true)
     }
 

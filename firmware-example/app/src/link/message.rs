@@ -18,7 +18,7 @@ pub const PROTOCOL: u8 = 1;
 #[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
 #[allow(clippy::large_enum_variant)] // one exists at a time, and there is no heap to put it on
 pub enum Message {
-    /// Either way: who speaks which version. First message of a session; keeps its place and its
+    /// Either way: who speaks which version. First message of a conversation; keeps its place and its
     /// first field in all versions.
     Hello(Hello),
     /// To the gauge: measure with this set-up from now on.
@@ -39,7 +39,7 @@ pub enum Message {
     Query,
     /// From the gauge: its counters.
     Status(Status),
-    /// To the gauge: the session is over.
+    /// To the gauge: the conversation is over.
     Bye,
 }
 

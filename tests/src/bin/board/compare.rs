@@ -4,15 +4,15 @@ use crate::toolchain::{CORTEX_M4F, Toolchain};
 use crate::{Checks, Trouble, emulator};
 use halfpulse::{Gauge, Record, Scratch};
 use halfpulse_mps2::canned::{CAPACITY, RECORDS};
-use halfpulse_mps2::transcript::{self, Sink};
+use halfpulse_mps2::printout::{self, Sink};
 use halfpulse_tests::readme;
 
 pub fn run(checks: &mut Checks) -> Result<(), Trouble> {
     let toolchain = Toolchain::find(CORTEX_M4F)?;
     let image = toolchain.build_measure_anyhow()?;
     let board = emulator::run(&image)?;
-    let host = host_transcript().map_err(Trouble::Failed)?;
-    say!("the board's transcript:\n{board}");
+    let host = host_printout().map_err(Trouble::Failed)?;
+    say!("the board's printout:\n{board}");
     checks.check("same_bits_as_the_host", compare(&host, &board));
     checks.check(
         "one_flipped_bit_is_noticed",
@@ -30,7 +30,7 @@ impl Sink for Text {
 }
 
 /// Measures the canned records here, and writes what the board writes.
-fn host_transcript() -> Result<String, String> {
+fn host_printout() -> Result<String, String> {
     let mut text = Text(String::new());
     let mut scratch = Box::new(Scratch::<CAPACITY>::ZERO);
     let mut codes = [0; CAPACITY];
@@ -38,9 +38,9 @@ fn host_transcript() -> Result<String, String> {
         let record = Record::new(canned.copy_codes(&mut codes), canned.format, canned.clock);
         let mut gauge = Gauge::new(canned.setup, scratch.workspace()).map_err(|error| error.to_string())?;
         let outcome = gauge.measure(&record);
-        transcript::outcome(&mut text, canned.name, &outcome, gauge.findings());
+        printout::outcome(&mut text, canned.name, &outcome, gauge.findings());
     }
-    transcript::end(&mut text, u32::try_from(RECORDS.len()).unwrap_or(u32::MAX));
+    printout::end(&mut text, u32::try_from(RECORDS.len()).unwrap_or(u32::MAX));
     Ok(text.0)
 }
 
@@ -74,7 +74,7 @@ fn compare(host: &str, board: &str) -> Result<String, String> {
         }
     }
     if lines == 0 || !host.lines().last().is_some_and(|line| line.starts_with("end ")) {
-        return Err("the transcript has no end".to_owned());
+        return Err("the printout has no end".to_owned());
     }
     readme::figure_of_this_compiler(
         "readings on the emulated board that differ from the host's in any bit",
@@ -147,14 +147,14 @@ mod tests {
 
     #[test]
     fn the_host_agrees_with_itself_and_costs_are_left_out() {
-        let host = host_transcript().unwrap();
+        let host = host_printout().unwrap();
         let with_costs = host.replace("record ", "cost measure instructions=00000001 stack=00000002\nrecord ");
         assert!(compare(&host, &with_costs).is_ok());
     }
 
     #[test]
     fn one_flipped_bit_is_noticed() {
-        let host = host_transcript().unwrap();
+        let host = host_printout().unwrap();
         every_flipped_bit_is_noticed(&host, &host).unwrap();
         assert_eq!(
             flip("health samples=0000000f noise=3f800000", 2),
@@ -166,7 +166,7 @@ mod tests {
 
     #[test]
     fn a_missing_and_an_extra_line_are_noticed() {
-        let host = host_transcript().unwrap();
+        let host = host_printout().unwrap();
         let lines: Vec<&str> = host.lines().collect();
         for at in 0..lines.len() {
             let mut shorter = lines.clone();

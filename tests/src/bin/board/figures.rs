@@ -114,10 +114,10 @@ pub fn read_budget() -> Result<Budget, String> {
 }
 
 /// Reads the board's `cost` lines; each belongs to the record named before it.
-fn parse(transcript: &str) -> Result<Vec<Cost>, String> {
+fn parse(printout: &str) -> Result<Vec<Cost>, String> {
     let mut record = "";
     let mut costs = Vec::new();
-    for line in transcript.lines() {
+    for line in printout.lines() {
         record = line.strip_prefix("record ").unwrap_or(record);
         let Some(rest) = line.strip_prefix("cost ") else {
             continue;
@@ -139,7 +139,7 @@ fn parse(transcript: &str) -> Result<Vec<Cost>, String> {
         Ok(costs)
     } else {
         Err(format!(
-            "the board did not write the costs of {} records:\n{transcript}",
+            "the board did not write the costs of {} records:\n{printout}",
             RECORDS.len()
         ))
     }

@@ -58,8 +58,8 @@ impl Row {
 pub fn run(checks: &mut Checks, write: bool) -> Result<(), Trouble> {
     let toolchain = Toolchain::find(CORTEX_M4F)?;
     let image = toolchain.build_anyhow("stages")?;
-    let (transcript, counts) = execute(&image)?;
-    let regions = parse(&transcript).map_err(Trouble::Failed)?;
+    let (printout, counts) = execute(&image)?;
+    let regions = parse(&printout).map_err(Trouble::Failed)?;
     if let Some(counts) = &counts {
         checks.check("timer_and_plugin_count_the_same", agree(&regions, counts));
     } else {
@@ -90,7 +90,7 @@ fn execute(image: &Path) -> Result<(String, Option<Counts>), Trouble> {
     let counted = fs::read_to_string(&out);
     let _ = fs::remove_file(&out);
     match (with_plugin, counted) {
-        (Ok(transcript), Ok(text)) => Ok((transcript, Some(Counts::parse(&text).map_err(Trouble::Failed)?))),
+        (Ok(printout), Ok(text)) => Ok((printout, Some(Counts::parse(&text).map_err(Trouble::Failed)?))),
         _ => Ok((emulator::run(image)?, None)),
     }
 }
@@ -124,10 +124,10 @@ fn plugin() -> Result<PathBuf, String> {
 }
 
 /// Reads the board's `stage` lines; each belongs to the record named before it.
-fn parse(transcript: &str) -> Result<Vec<Region>, String> {
+fn parse(printout: &str) -> Result<Vec<Region>, String> {
     let mut record = "";
     let mut regions = Vec::new();
-    for line in transcript.lines() {
+    for line in printout.lines() {
         record = line.strip_prefix("record ").unwrap_or(record);
         let Some(rest) = line.strip_prefix("stage ") else {
             continue;
@@ -143,10 +143,10 @@ fn parse(transcript: &str) -> Result<Vec<Region>, String> {
             instructions,
         });
     }
-    if transcript.lines().any(|line| line.starts_with("end ")) {
+    if printout.lines().any(|line| line.starts_with("end ")) {
         Ok(regions)
     } else {
-        Err(format!("the board's transcript has no end:\n{transcript}"))
+        Err(format!("the board's printout has no end:\n{printout}"))
     }
 }
 

@@ -5,7 +5,7 @@ use crate::emulator::{self, EMULATOR};
 use halfpulse_sim::Scene;
 use halfpulse_sim::device::{MappedFile, SimulatedReceiver};
 use halfpulse_sim::faults::FaultyLine;
-use halfpulse_sim::link::{Session, SocketLine};
+use halfpulse_sim::link::{Conversation, SocketLine};
 use std::fs;
 use std::io::Read;
 use std::os::unix::net::UnixListener;
@@ -76,8 +76,8 @@ pub type Line = FaultyLine<SocketLine>;
 
 /// A gauge that runs.
 pub struct EmulatedGauge {
-    /// The session with it.
-    pub session: Session<Line, SimulatedReceiver, MappedFile>,
+    /// The conversation with it.
+    pub conversation: Conversation<Line, SimulatedReceiver, MappedFile>,
     emulator: Running,
     log: Option<JoinHandle<Vec<u8>>>,
 }
@@ -147,10 +147,10 @@ impl EmulatedGauge {
         let log = collect(emulator.child.stdout.take());
         let line = SocketLine::new(accept(&listener, &mut emulator.child)?).map_err(|error| error.to_string())?;
         let idle = SimulatedReceiver::new(Scene::contact(5.0, 60.0, "carbon steel", 10.0), 0);
-        let mut session = Session::new(FaultyLine::new(line, 1), idle, memory);
-        session.introduce(STARTING).map_err(|error| error.to_string())?;
+        let mut conversation = Conversation::new(FaultyLine::new(line, 1), idle, memory);
+        conversation.introduce(STARTING).map_err(|error| error.to_string())?;
         Ok(Self {
-            session,
+            conversation,
             emulator,
             log: Some(log),
         })
@@ -158,12 +158,12 @@ impl EmulatedGauge {
 
     /// The simulator that the gauge fires at.
     pub fn front_end(&mut self) -> &mut SimulatedReceiver {
-        self.session.front_end()
+        self.conversation.front_end()
     }
 
     /// Says good-bye, and returns what the gauge logged.
     pub fn finish(mut self) -> Result<Vec<u8>, String> {
-        self.session
+        self.conversation
             .send(&halfpulse_app::link::Message::Bye)
             .map_err(|_| "the line to the gauge is closed".to_owned())?;
         let start = Instant::now();

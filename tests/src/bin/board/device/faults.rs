@@ -10,7 +10,7 @@ use halfpulse_mps2::plan::FIRST_SETUP;
 use halfpulse_sim::Scene;
 use halfpulse_sim::device::SimulatedReceiver;
 use halfpulse_sim::faults::{Behaviour, Damage};
-use halfpulse_sim::link::SessionError;
+use halfpulse_sim::link::ConversationError;
 use std::time::{Duration, Instant};
 
 /// Longer than the gauge waits for two shots.
@@ -24,7 +24,7 @@ pub fn run(checks: &mut Checks, gauge: &mut EmulatedGauge) {
     let mut scene = Scene::contact(5.0, 60.0, "carbon steel", 10.0);
     scene.noise.snr_db = Some(40.0);
     *gauge.front_end() = SimulatedReceiver::new(scene, 1);
-    let ready = gauge.session.set_up(&FIRST_SETUP, PATIENCE);
+    let ready = gauge.conversation.set_up(&FIRST_SETUP, PATIENCE);
     checks.check(
         "faults_begin_well",
         ready.map_err(|e| e.to_string()).and_then(|()| is_well(gauge)),
@@ -49,7 +49,7 @@ pub fn run(checks: &mut Checks, gauge: &mut EmulatedGauge) {
     checks.check("one_byte_in_a_hundred", bad_line(gauge));
 }
 
-fn take(gauge: &mut EmulatedGauge, patience: Duration) -> Result<LinkReport, SessionError> {
+fn take(gauge: &mut EmulatedGauge, patience: Duration) -> Result<LinkReport, ConversationError> {
     static NUMBER: std::sync::atomic::AtomicU32 = std::sync::atomic::AtomicU32::new(10_000);
     let take = Take {
         number: NUMBER.fetch_add(1, std::sync::atomic::Ordering::Relaxed),
@@ -57,18 +57,18 @@ fn take(gauge: &mut EmulatedGauge, patience: Duration) -> Result<LinkReport, Ses
         samples: 2048,
         gain: GainChoice::Fixed(-6.0),
     };
-    gauge.session.take(&take, patience)
+    gauge.conversation.take(&take, patience)
 }
 
 /// The same through a line on which the request itself may be lost: then no shot is asked for, and nothing
 /// need be waited for. (Only what this end writes is damaged.)
-fn take_or_lose(gauge: &mut EmulatedGauge) -> Result<LinkReport, SessionError> {
-    gauge.session.take_shots();
+fn take_or_lose(gauge: &mut EmulatedGauge) -> Result<LinkReport, ConversationError> {
+    gauge.conversation.take_shots();
     let report = take(gauge, Duration::from_millis(700));
-    if report != Err(SessionError::Silent) || gauge.session.take_shots().is_empty() {
+    if report != Err(ConversationError::Silent) || gauge.conversation.take_shots().is_empty() {
         return report;
     }
-    gauge.session.await_answer(LOST, |message| match message {
+    gauge.conversation.await_answer(LOST, |message| match message {
         Message::Report(report) => Some(report),
         _ => None,
     })
@@ -83,11 +83,11 @@ fn is_well(gauge: &mut EmulatedGauge) -> Result<String, String> {
 
 fn misbehaves(gauge: &mut EmulatedGauge, behaviour: Behaviour, expected: Fault) -> Result<String, String> {
     let before = status(gauge)?;
-    gauge.session.behaviour = behaviour;
+    gauge.conversation.behaviour = behaviour;
     let start = Instant::now();
     let outcome = take(gauge, PATIENCE).map(|report| report.outcome);
     let took = start.elapsed();
-    gauge.session.behaviour = Behaviour::Sound;
+    gauge.conversation.behaviour = Behaviour::Sound;
     if outcome != Ok(Outcome::Fault(expected.code())) {
         return Err(format!("{outcome:?}"));
     }
@@ -108,7 +108,7 @@ fn refuses(gauge: &mut EmulatedGauge) -> Result<String, String> {
         gain: GainChoice::Fixed(500.0),
     };
     let report = gauge
-        .session
+        .conversation
         .take(&asked, PATIENCE)
         .map_err(|error| error.to_string())?;
     let expected = Fault::NotFired(FrontEndFault::CannotSet);
@@ -120,14 +120,14 @@ fn refuses(gauge: &mut EmulatedGauge) -> Result<String, String> {
 }
 
 fn status(gauge: &mut EmulatedGauge) -> Result<Status, String> {
-    gauge.session.query(PATIENCE).map_err(|error| error.to_string())
+    gauge.conversation.query(PATIENCE).map_err(|error| error.to_string())
 }
 
 fn damaged(gauge: &mut EmulatedGauge, damage: Damage) -> Result<String, String> {
     let before = status(gauge)?;
-    gauge.session.line().damage = damage;
+    gauge.conversation.line().damage = damage;
     let outcome = take(gauge, Duration::from_millis(500)).map(|report| report.outcome);
-    gauge.session.line().damage = Damage::None;
+    gauge.conversation.line().damage = Damage::None;
     if let Ok(Outcome::Reading(reading)) = outcome {
         return Err(format!("a reading came through: {reading:?}"));
     }
@@ -151,21 +151,21 @@ fn damaged(gauge: &mut EmulatedGauge, damage: Damage) -> Result<String, String> 
 
 fn bad_line(gauge: &mut EmulatedGauge) -> Result<String, String> {
     let before = status(gauge)?;
-    gauge.session.line().damage = Damage::Bytes(0.01);
+    gauge.conversation.line().damage = Damage::Bytes(0.01);
     let (mut right, mut faults, mut lost) = (0, 0, 0);
     let mut wrong = None;
     for _ in 0..BAD_ROUNDS {
         match take_or_lose(gauge).map(|report| report.outcome) {
             Ok(Outcome::Reading(reading)) if (reading.thickness - WALL).abs() < 2e-5 => right += 1,
             Ok(Outcome::Fault(_)) => faults += 1,
-            Err(SessionError::Silent) => lost += 1,
+            Err(ConversationError::Silent) => lost += 1,
             other => wrong = Some(format!("{other:?}")),
         }
         if wrong.is_some() {
             break;
         }
     }
-    gauge.session.line().damage = Damage::None;
+    gauge.conversation.line().damage = Damage::None;
     if let Some(wrong) = wrong {
         return Err(wrong);
     }

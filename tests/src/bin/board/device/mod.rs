@@ -55,7 +55,7 @@ pub fn run(checks: &mut Checks) -> Result<(), Trouble> {
         let began = Instant::now();
         let same = same_bits(&mut gauge, readings);
         let word = core.word();
-        let status = gauge.session.query(PATIENCE);
+        let status = gauge.conversation.query(PATIENCE);
         checks.check(
             &format!("{readings}_readings_to_the_last_bit_{word}"),
             same.map(|tally| summary(&tally, began.elapsed(), core)),
@@ -117,15 +117,15 @@ fn same_bits(gauge: &mut EmulatedGauge, count: u32) -> Result<Tally, String> {
         let place = Place::new(&bases, number);
         progress(number, count, &place.name);
         if in_force != Some(place.setup) {
-            let answer = gauge.session.set_up(&place.setup, PATIENCE);
+            let answer = gauge.conversation.set_up(&place.setup, PATIENCE);
             answer.map_err(|error| format!("{}: {error}", place.name))?;
             in_force = Some(place.setup);
         }
         *gauge.front_end() = place.receiver();
-        gauge.session.take_shots();
-        let report = gauge.session.take(&place.take, PATIENCE);
+        gauge.conversation.take_shots();
+        let report = gauge.conversation.take(&place.take, PATIENCE);
         let report = report.map_err(|error| format!("{}: {error}", place.name))?;
-        let shots = gauge.session.take_shots();
+        let shots = gauge.conversation.take_shots();
         compare(&place, &report, &shots).map_err(|why| format!("reading {number}, {}: {why}", place.name))?;
         tally.shots += u32::try_from(shots.len()).unwrap_or(u32::MAX);
         // Gain, noise, index and fraction of each echo, and what the outcome holds.

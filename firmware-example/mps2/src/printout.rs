@@ -174,7 +174,7 @@ fn write_echo(sink: &mut impl Sink, echo: &Echo) {
         .end();
 }
 
-/// Writes the last line, without which a transcript is not complete.
+/// Writes the last line, without which a printout is not complete.
 pub fn end(sink: &mut impl Sink, records: u32) {
     Line::new(sink, "end").word("records", records).end();
 }
