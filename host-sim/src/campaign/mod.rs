@@ -2,11 +2,11 @@
 //! without a doubt.
 //!
 //! A campaign file (TOML, version 1) names a scene and a set-up, a grid of cells over any of their
-//! fields, and distributions from which each run draws; [`file`] describes its keys. Run *i* depends on
+//! fields, and distributions from which each run draws; [`mod@file`] describes its keys. Run *i* depends on
 //! the campaign and on *i* alone: any run replays alone, and neither the number of threads nor the way
 //! the runs are shared out among machines changes a digit.
 //!
-//! 1. [`file`]: the campaign file; [`draw`]: values and distributions; [`path`]: fields by their names.
+//! 1. [`mod@file`]: the campaign file; [`draw`]: values and distributions; [`path`]: fields by their names.
 //! 2. [`resolve`]: cell and run to a scene and a set-up.
 //! 3. [`measure`]: simulates and measures one run; [`learned`]: the reference pulse as calibration
 //!    learns it; [`bound`]: the Cramér-Rao bound where there is one.
