@@ -1,7 +1,7 @@
 //! What came back, and when.
 //!
 //! The steps in the order of the signal: [`scan`] finds candidates in the whole record with integers;
-//! [`measure_echo`] fits the reference pulse at one candidate, in a short `f32` window;
+//! [`measure_echoes`] fits the reference pulse at each candidate, in a short `f32` window;
 //! [`separation`] says whether neighbours can be told apart; [`train`] finds the multiples of one wall.
 
 pub mod envelope;
@@ -119,18 +119,8 @@ impl Surroundings<'_> {
     }
 }
 
-/// Fits the reference pulse near `index`, within three quarters of a cycle. `None` if the pulse would stand out of
+/// The least-squares arrival near `index`, within three quarters of a cycle. `None` if the pulse would stand out of
 /// the record.
-///
-/// The standard uncertainty is noise · sqrt(Σ s'²) over the curvature of the correlation's top: for an echo
-/// of the pulse's shape the Cramér-Rao bound, which the fit reaches in white noise. It knows
-/// nothing of a wrong pulse, of overlapping echoes and of coherent noise: see [`Echo::mismatch`].
-#[must_use]
-pub fn measure_echo(surroundings: &Surroundings<'_>, index: u32, sign: Sign, scratch: &mut [f32]) -> Option<Echo> {
-    echo_at(surroundings, find_arrival(surroundings, index, sign, scratch)?)
-}
-
-/// The least-squares arrival near `index`.
 fn find_arrival(surroundings: &Surroundings<'_>, index: u32, sign: Sign, scratch: &mut [f32]) -> Option<Arrival> {
     let samples_per_cycle = surroundings.samples_per_cycle;
     let search = Search {
@@ -144,6 +134,10 @@ fn find_arrival(surroundings: &Surroundings<'_>, index: u32, sign: Sign, scratch
 }
 
 /// Everything about an echo whose arrival is known.
+///
+/// The standard uncertainty is noise · sqrt(Σ s'²) over the curvature of the correlation's top: for an echo
+/// of the pulse's shape the Cramér-Rao bound, which the fit reaches in white noise. It knows
+/// nothing of a wrong pulse, of overlapping echoes and of coherent noise: see [`Echo::mismatch`].
 #[must_use]
 pub fn echo_at(surroundings: &Surroundings<'_>, arrival: Arrival) -> Option<Echo> {
     let Surroundings {

@@ -82,7 +82,6 @@ pub struct Gauge<'w> {
     workspace: Workspace<'w>,
     facts: PulseFacts,
     detector: Detector,
-    learned: bool,
     findings: Findings,
 }
 
@@ -108,7 +107,6 @@ impl<'w> Gauge<'w> {
             workspace,
             facts,
             detector,
-            learned: false,
             findings: Findings::default(),
         };
         gauge.fit_detector();
@@ -124,7 +122,6 @@ impl<'w> Gauge<'w> {
     /// [`SetupError::PulseTooLong`] or [`SetupError::PulseEmpty`]; the modelled pulse is in force then.
     pub fn learn_pulse(&mut self, samples: &[f32]) -> Result<(), SetupError> {
         let learned = learn(samples, self.setup.samples_per_cycle(), self.workspace.pulse);
-        self.learned = learned.is_ok();
         let result = match learned {
             Ok(facts) => {
                 self.facts = facts;
@@ -155,7 +152,6 @@ impl<'w> Gauge<'w> {
         if !same_pulse {
             // Only a pulse that is too long can fail, and then the old one is written back.
             let modelled = model(&setup, self.workspace.pulse);
-            self.learned = false;
             if let Err(error) = modelled {
                 self.facts = model(&self.setup, self.workspace.pulse)?;
                 self.fit_detector();

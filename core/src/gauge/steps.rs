@@ -153,7 +153,6 @@ impl Gauge<'_> {
             wall,
             budget: &budget,
             expanded: standard_uncertainty * self.setup.coverage_factor,
-            learned_pulse: self.learned,
         };
         let coating = thickness::coating(&self.setup, &times).and_then(|thickness| {
             let from_times = uncertainty::coating_uncertainty(&self.setup, &times, wall)?;

@@ -46,8 +46,6 @@ pub struct Evidence<'a> {
     pub budget: &'a Budget,
     /// Its expanded uncertainty.
     pub expanded: Metres,
-    /// The pulse was learned, not modelled.
-    pub learned_pulse: bool,
 }
 
 impl Evidence<'_> {

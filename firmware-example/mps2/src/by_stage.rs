@@ -184,7 +184,6 @@ impl<'w> Prepared<'w> {
             wall,
             budget: &budget,
             expanded: standard_uncertainty * setup.coverage_factor,
-            learned_pulse: false,
         };
         let coating = thickness::coating(setup, &times).and_then(|thickness| {
             let from_times = uncertainty::coating_uncertainty(setup, &times, wall)?;
