@@ -30,6 +30,7 @@ pub mod layered;
 pub mod link;
 pub mod material;
 pub mod measuring;
+pub mod output;
 #[cfg_attr(not(test), deny(clippy::disallowed_methods))]
 pub mod propagation;
 pub mod record_file;

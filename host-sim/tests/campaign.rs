@@ -3,11 +3,13 @@
 
 mod support;
 
-use halfpulse_sim::campaign::results::{Reader, Writer};
+use halfpulse_sim::campaign::results::Reader;
 use halfpulse_sim::campaign::runner::{self, Shard};
+use halfpulse_sim::campaign::writer::Writer;
 use halfpulse_sim::campaign::{Campaign, Summary};
 use halfpulse_sim::export;
 use halfpulse_sim::input_error::InputError;
+use halfpulse_sim::output::Lock;
 use std::path::Path;
 use support::Bench;
 
@@ -468,6 +470,90 @@ fn a_full_disk_is_an_error_and_the_campaign_goes_on() {
     assert_eq!(error.lines().count(), 1, "{error}");
     done(&bench, &["campaign", "small.toml", "-o", "cut.csv"]);
     assert_eq!(bench.read("cut.csv"), bench.read("whole.csv"));
+}
+
+/// Two processes never mix their rows; a process that was killed leaves nothing locked.
+#[cfg(unix)]
+#[test]
+fn only_one_process_writes_a_file_of_results() {
+    let bench = bench();
+    let mut first = std::process::Command::new(env!("CARGO_BIN_EXE_halfpulse"))
+        .args(["campaign", "small.toml", "--runs", "100000000", "-o", "all.csv"])
+        .args(["--quiet", "--threads", "1"])
+        .current_dir(bench.path(""))
+        .spawn()
+        .unwrap();
+    // The header is there once the file is locked.
+    let begun = || std::fs::metadata(bench.path("all.csv")).is_ok_and(|about| about.len() > 0);
+    let begin = std::time::Instant::now();
+    while !begun() && begin.elapsed().as_secs() < 60 {
+        std::thread::sleep(std::time::Duration::from_millis(5));
+    }
+    for arguments in [
+        &["campaign", "small.toml", "--runs", "100000000", "-o", "all.csv"][..],
+        // Not even what is not its own is touched, or called damaged.
+        &["campaign", "small.toml", "-o", "all.csv"],
+        &["campaign", "small.toml", "--shard", "1/2", "-o", "all.csv"],
+    ] {
+        let error = failed(&bench, arguments);
+        assert!(
+            error.contains("all.csv: is being written by another process; wait until that ends"),
+            "{error}"
+        );
+    }
+    first.kill().unwrap();
+    first.wait().unwrap();
+    let campaign = Campaign::read_changed(&bench.path("small.toml"), Some(100_000_000), None).unwrap();
+    let mut rows = 0;
+    let writer = Writer::open(&bench.path("all.csv"), &campaign, Shard::WHOLE, &mut |_| {
+        rows += 1;
+        Ok(())
+    });
+    let writer = writer.unwrap_or_else(|error| panic!("{error}"));
+    assert_eq!((writer.rows(), writer.is_complete()), (rows, false));
+    assert_eq!(writer.lock(), Lock::Held);
+}
+
+/// Where a disk knows no locks, or a process does not ask for one, rows of two processes are noticed.
+#[test]
+fn a_stranger_in_the_file_is_noticed() {
+    let bench = bench();
+    let path = bench.path("all.csv");
+    let campaign = Campaign::read(&bench.path("small.toml")).unwrap();
+    let mut writer = Writer::open(&path, &campaign, Shard::WHOLE, &mut |_| Ok(())).unwrap();
+    std::fs::write(&path, format!("{}0,0,8,\n", bench.read("all.csv"))).unwrap();
+    let error = writer.flush().unwrap_err().to_string();
+    assert!(
+        error.contains("all.csv: another process has written to it") && error.contains("delete it"),
+        "{error}"
+    );
+}
+
+/// Summaries and merged results on a full disk: an error, and nothing that looks whole.
+#[cfg(unix)]
+#[test]
+fn a_full_disk_leaves_no_half_of_a_merge_or_summary() {
+    let bench = bench();
+    done(&bench, &["campaign", "small.toml", "-o", "whole.csv"]);
+    bench.write("sum.csv", "the last one");
+    let command = env!("CARGO_BIN_EXE_halfpulse");
+    for (arguments, output) in [
+        ("merge whole.csv -o all.csv", "all.csv"),
+        ("campaign whole.csv --summary sum.csv", "sum.csv"),
+    ] {
+        let script = format!("trap '' XFSZ; ulimit -f 1; exec {command} {arguments}");
+        let shell = std::process::Command::new("sh")
+            .args(["-c", &script])
+            .current_dir(bench.path(""))
+            .output()
+            .unwrap();
+        let error = String::from_utf8(shell.stderr).unwrap();
+        assert_eq!(shell.status.code(), Some(1), "{arguments}: {error}");
+        assert!(error.contains(&format!("{output}: cannot be written (")), "{error}");
+        assert!(!bench.path(&format!("{output}.part")).exists());
+    }
+    assert!(!bench.path("all.csv").exists());
+    assert_eq!(bench.read("sum.csv"), "the last one");
 }
 
 /// Memory: a row that has been handed over is gone. What remains are the threads' channels.

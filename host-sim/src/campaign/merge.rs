@@ -5,7 +5,7 @@ use super::results::{self, Reader, difference, without_shard};
 use super::row::Row;
 use super::runner::Shard;
 use crate::input_error::InputError;
-use std::io::{BufWriter, Write};
+use crate::output::Unfinished;
 use std::path::{Path, PathBuf};
 
 /// Merges whole shards, named in any order, into a file; every row goes to `sink` in the order of the runs.
@@ -84,49 +84,40 @@ fn write(
     output: &Path,
     sink: &mut dyn FnMut(&Row),
 ) -> Result<(), InputError> {
-    if output.exists() {
-        return Err(InputError::in_file(
-            output,
-            "is there already",
-            "choose another name, or delete it",
-        ));
-    }
-    let mut name = output.file_name().unwrap_or_default().to_os_string();
-    name.push(".part");
-    let part = output.with_file_name(name);
-    let unwritable = |error: std::io::Error| InputError::unwritable(output, &error);
-    let result = (|| {
-        let mut file = BufWriter::new(std::fs::File::create(&part).map_err(unwritable)?);
-        file.write_all(header.as_bytes()).map_err(unwritable)?;
-        let total = campaign.total();
-        let count = readers.len() as u64;
-        for run in 0..total {
-            let Some((path, reader)) = readers.get_mut((run % count) as usize) else {
-                break;
-            };
-            match reader.next_row()? {
-                Some((line, row)) => {
-                    sink(&row);
-                    writeln!(file, "{line}").map_err(unwritable)?;
-                }
-                None => return Err(incomplete(path, reader)),
-            }
+    let there = || {
+        if output.exists() {
+            let remedy = "choose another name, or delete it";
+            return Err(InputError::in_file(output, "is there already", remedy));
         }
-        for (path, reader) in &mut readers {
-            if reader.next_row()?.is_some() || !reader.extent().is_some_and(|extent| extent.complete) {
-                return Err(incomplete(path, reader));
+        Ok(())
+    };
+    there()?;
+    let mut file = Unfinished::begin(output)?;
+    // Another merge may have ended since.
+    there()?;
+    file.put(header.as_bytes())?;
+    let total = campaign.total();
+    let count = readers.len() as u64;
+    for run in 0..total {
+        let Some((path, reader)) = readers.get_mut((run % count) as usize) else {
+            break;
+        };
+        match reader.next_row()? {
+            Some((mut line, row)) => {
+                sink(&row);
+                line.push('\n');
+                file.put(line.as_bytes())?;
             }
+            None => return Err(incomplete(path, reader)),
         }
-        file.write_all(results::closing(total).as_bytes()).map_err(unwritable)?;
-        file.flush().map_err(unwritable)?;
-        file.get_ref().sync_all().map_err(unwritable)?;
-        std::fs::rename(&part, output).map_err(unwritable)
-    })();
-    if result.is_err() {
-        // Half a file is of no use; if even this fails, its name tells what it is.
-        let _ = std::fs::remove_file(&part);
     }
-    result
+    for (path, reader) in &mut readers {
+        if reader.next_row()?.is_some() || !reader.extent().is_some_and(|extent| extent.complete) {
+            return Err(incomplete(path, reader));
+        }
+    }
+    file.put(results::closing(total).as_bytes())?;
+    file.finish()
 }
 
 fn incomplete(path: &Path, reader: &Reader) -> InputError {

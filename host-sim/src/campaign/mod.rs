@@ -10,8 +10,8 @@
 //! 2. [`resolve`]: cell and run to a scene and a set-up.
 //! 3. [`measure`]: simulates and measures one run; [`learned`]: the reference pulse as calibration
 //!    learns it; [`bound`]: the Cramér-Rao bound where there is one.
-//! 4. [`row`]: one run as a line of the results; [`results`]: the file of results, which can be resumed;
-//!    [`merge`]: the shards of a campaign as one file.
+//! 4. [`row`]: one run as a line of the results; [`results`]: the file of results; [`writer`]: writes it, or goes
+//!    on with it; [`merge`]: the shards of a campaign as one file.
 //! 5. [`runner`]: all cores; [`summary`]: the cells' statistics, with constant memory.
 
 pub mod bound;
@@ -27,6 +27,7 @@ pub mod results;
 pub mod row;
 pub mod runner;
 pub mod summary;
+pub mod writer;
 
 pub use file::Campaign;
 pub use runner::Shard;

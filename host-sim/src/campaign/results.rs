@@ -15,14 +15,15 @@
 //! ```
 //!
 //! Rows are only ever appended, in the order of their runs. A process that is killed leaves a file without its
-//! closing line, which nothing here takes for a whole one: the same command goes on after the last whole row.
+//! closing line, which nothing here takes for a whole one: the same command goes on after the last whole row
+//! ([`super::writer`]).
 
 use super::file::Campaign;
 use super::row::{COLUMNS, Row, quoted};
 use super::runner::Shard;
 use crate::input_error::InputError;
-use std::fs::{File, OpenOptions};
-use std::io::{BufRead, BufReader, BufWriter, Read, Seek, SeekFrom, Write};
+use std::fs::File;
+use std::io::{BufRead, BufReader, Read};
 use std::path::{Path, PathBuf};
 
 /// First line of every file of results.
@@ -72,7 +73,16 @@ pub struct Extent {
     /// Is the closing line there?
     pub complete: bool,
     /// Bytes up to the last whole line.
-    bytes: u64,
+    pub(super) bytes: u64,
+}
+
+impl Extent {
+    /// An empty file.
+    pub const NOTHING: Self = Self {
+        rows: 0,
+        complete: false,
+        bytes: 0,
+    };
 }
 
 /// Lines of a file, of which the last may lack its end.
@@ -88,12 +98,16 @@ impl Lines {
     fn open(path: &Path) -> Result<Self, InputError> {
         InputError::check_file(path, u64::MAX)?;
         let file = File::open(path).map_err(|error| InputError::unreadable(path, &error))?;
-        Ok(Self {
+        Ok(Self::of(path, file))
+    }
+
+    fn of(path: &Path, file: File) -> Self {
+        Self {
             path: path.to_path_buf(),
             file: BufReader::new(file),
             number: 0,
             bytes: 0,
-        })
+        }
     }
 
     /// The next line without its end; `None` at the end of the file, or where a line has no end.
@@ -132,7 +146,18 @@ impl Reader {
     /// # Errors
     /// Not a file of results, or only the beginning of one's header.
     pub fn open(path: &Path) -> Result<Self, InputError> {
-        let mut lines = Lines::open(path)?;
+        Self::of(path, Lines::open(path)?)
+    }
+
+    /// The same of a file that is open, from where it stands.
+    ///
+    /// # Errors
+    /// As [`Reader::open`].
+    pub fn of_file(path: &Path, file: File) -> Result<Self, InputError> {
+        Self::of(path, Lines::of(path, file))
+    }
+
+    fn of(path: &Path, mut lines: Lines) -> Result<Self, InputError> {
         let mut header = String::new();
         let mut shard = None;
         loop {
@@ -256,160 +281,6 @@ impl Reader {
     pub const fn extent(&self) -> Option<Extent> {
         self.done
     }
-}
-
-/// A file of results that grows.
-#[derive(Debug)]
-pub struct Writer {
-    path: PathBuf,
-    file: BufWriter<File>,
-    /// Rows that are in the file.
-    rows: u64,
-    complete: bool,
-}
-
-impl Writer {
-    /// Starts a file, or goes on with one of the same campaign and shard; `sink` gets the rows that are
-    /// there.
-    ///
-    /// # Errors
-    /// Results of another campaign, a damaged file, or one that cannot be written.
-    pub fn open(
-        path: &Path,
-        campaign: &Campaign,
-        shard: Shard,
-        sink: &mut dyn FnMut(Row) -> Result<(), InputError>,
-    ) -> Result<Self, InputError> {
-        let header = header(campaign, shard);
-        let length = match std::fs::metadata(path) {
-            Ok(about) if about.is_file() => about.len(),
-            Ok(_) => {
-                return Err(InputError::in_file(
-                    path,
-                    "is no ordinary file",
-                    "choose another name for the results",
-                ));
-            }
-            Err(_) => 0,
-        };
-        let unwritable = |error: std::io::Error| InputError::unwritable(path, &error);
-        let mut kept = Extent {
-            rows: 0,
-            complete: false,
-            bytes: 0,
-        };
-        if length > 0 && !begins(path, &header)? {
-            let mut reader = Reader::open(path)?;
-            if let Some(what) = difference(reader.header(), &header) {
-                return Err(InputError::in_file(
-                    path,
-                    what,
-                    "choose another output, or delete this file",
-                ));
-            }
-            while let Some((_, row)) = reader.next_row()? {
-                sink(row)?;
-            }
-            kept = reader.extent().unwrap_or(kept);
-            let wanted = shard.rows(campaign.total());
-            if kept.rows > wanted || (kept.complete && kept.rows != wanted) {
-                let what = format!("holds {} rows, the campaign has {wanted}", kept.rows);
-                return Err(InputError::in_file(
-                    path,
-                    what,
-                    "choose another output, or delete this file",
-                ));
-            }
-        }
-        let mut file = OpenOptions::new()
-            .write(true)
-            .create(true)
-            .truncate(false)
-            .open(path)
-            .map_err(unwritable)?;
-        file.set_len(kept.bytes).map_err(unwritable)?;
-        file.seek(SeekFrom::End(0)).map_err(unwritable)?;
-        let mut writer = Self {
-            path: path.to_path_buf(),
-            file: BufWriter::with_capacity(1 << 16, file),
-            rows: kept.rows,
-            complete: kept.complete,
-        };
-        if kept.bytes == 0 {
-            writer.put(&header)?;
-            writer.flush()?;
-        }
-        Ok(writer)
-    }
-
-    /// Rows that are in the file.
-    #[must_use]
-    pub const fn rows(&self) -> u64 {
-        self.rows
-    }
-
-    /// Is there nothing left to do?
-    #[must_use]
-    pub const fn is_complete(&self) -> bool {
-        self.complete
-    }
-
-    /// Appends a row.
-    ///
-    /// # Errors
-    /// It cannot be written.
-    pub fn append(&mut self, row: &Row) -> Result<(), InputError> {
-        self.put(&row.line())?;
-        self.put("\n")?;
-        self.rows += 1;
-        Ok(())
-    }
-
-    /// Hands over to the system what has been appended.
-    ///
-    /// # Errors
-    /// It cannot be written.
-    pub fn flush(&mut self) -> Result<(), InputError> {
-        let result = self.file.flush();
-        result.map_err(|error| self.unwritable(&error))
-    }
-
-    /// Appends the closing line and waits until all is on the disk.
-    ///
-    /// # Errors
-    /// It cannot be written.
-    pub fn complete(&mut self) -> Result<(), InputError> {
-        if !self.complete {
-            self.put(&closing(self.rows))?;
-            self.flush()?;
-            self.complete = true;
-        }
-        let result = self.file.get_ref().sync_all();
-        result.map_err(|error| self.unwritable(&error))
-    }
-
-    fn put(&mut self, text: &str) -> Result<(), InputError> {
-        let result = self.file.write_all(text.as_bytes());
-        result.map_err(|error| self.unwritable(&error))
-    }
-
-    fn unwritable(&self, error: &std::io::Error) -> InputError {
-        InputError::in_file(
-            &self.path,
-            format!("cannot be written ({error})"),
-            "make room on its disk, then run the same command again: it goes on where it stopped",
-        )
-    }
-}
-
-/// Is a file the beginning of this header, and no more? A process was killed very early then.
-fn begins(path: &Path, header: &str) -> Result<bool, InputError> {
-    let file = File::open(path).map_err(|error| InputError::unreadable(path, &error))?;
-    let mut start = Vec::new();
-    file.take(header.len() as u64)
-        .read_to_end(&mut start)
-        .map_err(|error| InputError::unreadable(path, &error))?;
-    Ok(start.len() < header.len() && header.as_bytes().starts_with(&start))
 }
 
 /// In what two headers differ, shard included; `None` if in nothing.

@@ -2,11 +2,13 @@
 
 use crate::campaign::measure::Measurer;
 use crate::campaign::resolve::document;
-use crate::campaign::results::{Reader, Writer};
+use crate::campaign::results::Reader;
 use crate::campaign::row::Row;
+use crate::campaign::writer::Writer;
 use crate::campaign::{Campaign, Shard, Summary, file, merge, runner};
 use crate::cli::{Outcome, json, text, written};
 use crate::input_error::InputError;
+use crate::output::{self, Lock};
 use crate::record_file::{self, npy};
 use crate::{export, plot};
 use indicatif::{ProgressBar, ProgressDrawTarget, ProgressStyle};
@@ -108,13 +110,13 @@ pub fn run(arguments: &Arguments, out: &mut dyn Write) -> Result<Outcome, InputE
     };
     written(out.write_all(export::table(&summary).as_bytes()))?;
     if let Some(path) = &arguments.summary {
-        std::fs::write(path, export::csv(&summary)).map_err(|error| InputError::unwritable(path, &error))?;
+        output::write(path, export::csv(&summary).as_bytes())?;
     }
     if let Some(folder) = &arguments.figures {
         std::fs::create_dir_all(folder).map_err(|error| InputError::unwritable(folder, &error))?;
         for (name, figure) in plot::of_campaign(&summary) {
             let path = folder.join(name);
-            std::fs::write(&path, figure).map_err(|error| InputError::unwritable(&path, &error))?;
+            output::write(&path, figure.as_bytes())?;
         }
     }
     Ok(Outcome::Done)
@@ -181,6 +183,14 @@ fn measure(campaign: &Campaign, arguments: &Arguments) -> Result<Summary, InputE
             Ok(())
         })?),
     };
+    if let (Some(path), Some(Lock::Unknown)) = (&arguments.output, writer.as_ref().map(Writer::lock)) {
+        // Nothing is left to do if stderr is closed.
+        let _ = writeln!(
+            std::io::stderr(),
+            "note: the disk of {} knows no locks: let only one process write to it",
+            path.display()
+        );
+    }
     let from = writer.as_ref().map_or(0, Writer::rows);
     let bar = progress(rows, from, arguments.quiet);
     let cores = std::thread::available_parallelism().map_or(1, std::num::NonZero::get);
@@ -201,8 +211,9 @@ fn measure(campaign: &Campaign, arguments: &Arguments) -> Result<Summary, InputE
     bar.finish_and_clear();
     if let Some(writer) = &mut writer {
         // Whatever ended the runs, those that are done are kept.
-        writer.flush()?;
+        let kept = writer.flush();
         result?;
+        kept?;
         writer.complete()?;
     } else {
         result?;
