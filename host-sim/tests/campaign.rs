@@ -293,6 +293,136 @@ fn any_run_replays_alone() {
     assert!(error.contains("give 0 to 11"), "{error}");
 }
 
+const CALIBRATE: &str = r#"[calibrate]
+blocks = [
+  { thickness_mm = 4.0, standard_uncertainty_mm = 0.003 },
+  { thickness_mm = 12.0, standard_uncertainty_mm = 0.003, "scene.noise.snr_db" = { uniform = [35.0, 40.0] } },
+]
+shots = 4
+"#;
+
+/// Each run calibrates in its own world: without it the drawn velocity and zero make the readings wrong, with it
+/// they are right.
+#[test]
+fn a_run_calibrates_on_blocks_of_its_own_world() {
+    let bench = bench();
+    let world = SMALL.replace(
+        "[draw]",
+        "[draw]\n\"scene.wall.velocity_m_s\" = { uniform = [5600.0, 6200.0] }\n\"scene.probe.zero_offset_ns\" = { uniform = [-90.0, 90.0] }",
+    );
+    let world = world.replace(
+        "zero = { offset_ns = 0.0, standard_uncertainty_ns = 1.0 }",
+        "zero = { offset_ns = 0.0, standard_uncertainty_ns = 100.0 }",
+    );
+    bench.write("plain.toml", &world);
+    bench.write("calibrated.toml", format!("{world}{CALIBRATE}"));
+    let summary = |name: &str| {
+        let campaign = Campaign::read(&bench.path(name)).unwrap();
+        let mut summary = Summary::new(&campaign);
+        runner::run(&campaign, Shard::WHOLE, 0, 2, &mut |row| {
+            summary.add(&row);
+            Ok(())
+        })
+        .unwrap();
+        summary.all
+    };
+    let (plain, calibrated) = (summary("plain.toml"), summary("calibrated.toml"));
+    assert!(plain.inside <= 3, "{plain:?}");
+    let right = calibrated.inside + calibrated.doubted_inside;
+    assert!(right >= 11 && calibrated.all_gross() == 0, "{calibrated:?}");
+    // What a replay writes is the calibrated set-up with its pulse: `read` comes to the same.
+    for name in ["1.csv", "2.csv"] {
+        done(
+            &bench,
+            &["campaign", "calibrated.toml", "--threads", &name[..1], "-o", name],
+        );
+    }
+    assert_eq!(bench.read("1.csv"), bench.read("2.csv"));
+    done(
+        &bench,
+        &["campaign", "calibrated.toml", "--replay", "7", "-o", "run.npy"],
+    );
+    let json: serde_json::Value = serde_json::from_str(&bench.read("run.json")).unwrap();
+    let read = done(
+        &bench,
+        &["read", "run.npy", "--setup", "run.setup.toml", "--format", "json"],
+    );
+    let read: serde_json::Value = serde_json::from_str(&read).unwrap();
+    assert!(read["thickness_mm"].is_number());
+    assert_eq!(read["thickness_mm"], json["reading"]["thickness_mm"]);
+    let setup = bench.read("run.setup.toml");
+    assert!(
+        setup.contains("blocks_mm") && !setup.contains("velocity_m_s = 5920\n"),
+        "{setup}"
+    );
+}
+
+/// A calibration that fails is a result of its run; a campaign that cannot calibrate is an error.
+#[test]
+fn calibrations_that_fail_are_counted() {
+    let bench = bench();
+    let noisy = CALIBRATE.replace("uniform = [35.0, 40.0]", "uniform = [-30.0, -20.0]");
+    bench.write("noisy.toml", format!("{SMALL}{noisy}"));
+    let table = done(&bench, &["campaign", "noisy.toml"]);
+    assert!(table.contains("refused: not-calibrated 12"), "{table}");
+    let said = done(&bench, &["campaign", "noisy.toml", "--replay", "3"]);
+    assert!(said.contains("block 2: no back wall near the time of 12 mm"), "{said}");
+    let first = 1 + SMALL.lines().count();
+    for (from, to, line, words) in [
+        ("shots = 4", "shots = 0", first + 5, ["shots", "write shots = 16"]),
+        (
+            "shots = 4",
+            "learn = \"all\"",
+            first + 5,
+            ["learn", "zero-and-velocity"],
+        ),
+        (
+            "shots = 4",
+            "learn = \"zero\"",
+            first,
+            ["2 blocks where one", "another learn"],
+        ),
+        (
+            "thickness_mm = 4.0",
+            "thickness_mm = -4.0",
+            first + 1,
+            ["block 1: -4 mm", "from 0.05"],
+        ),
+        (
+            "thickness_mm = 12.0, ",
+            "",
+            first + 1,
+            ["block 2", "thickness_mm = 5.0"],
+        ),
+        (
+            "scene.noise.snr_db",
+            "setup.record.bits",
+            first + 3,
+            ["no field of a block", "scene."],
+        ),
+        (
+            "scene.noise.snr_db",
+            "scene.noise.snr",
+            first + 3,
+            ["unknown", "snr_db?"],
+        ),
+        (
+            "shots = 4",
+            "shots = 4\n[pulse]\nlearned = 8",
+            first + 6,
+            ["pulse", "remove one"],
+        ),
+    ] {
+        let text = format!("{SMALL}{}", CALIBRATE.replacen(from, to, 1));
+        bench.write("wrong.toml", &text);
+        let error = failed(&bench, &["campaign", "wrong.toml"]);
+        assert!(
+            error.contains(&format!("wrong.toml:{line}: ")) && words.iter().all(|word| error.contains(word)),
+            "{to}: {error}"
+        );
+    }
+}
+
 /// One more draw leaves those that are there as they were.
 #[test]
 fn draws_do_not_disturb_each_other() {

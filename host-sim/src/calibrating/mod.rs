@@ -136,7 +136,10 @@ fn translated(setup: &GaugeSetup, before: &BlockTimes, after: &BlockTimes) -> Ze
 }
 
 /// How many blocks what shall be learned takes.
-fn check_number(span: Span, blocks: usize, learn: Learn) -> Result<(), InputError> {
+///
+/// # Errors
+/// Other blocks are needed.
+pub fn check_number(span: Span, blocks: usize, learn: Learn) -> Result<(), InputError> {
     let between_back_walls = span == Span::BackWallToBackWall;
     let fits = match learn {
         Learn::Zero | Learn::Velocity => blocks == 1,

@@ -3,7 +3,9 @@
 //! An example that can be copied stands in [`EXAMPLE`]; [`KEYS`] describes every key, and
 //! `halfpulse campaign --help` prints both. Unknown keys are refused.
 
+use super::calibration::Calibration;
 use super::draw::{self, Bundle, Draw, DrawError};
+use super::learned::LearnedPulse;
 use super::path;
 use super::places::{Lines, Places};
 use crate::input_error::InputError;
@@ -65,6 +67,10 @@ pub const KEYS: &[(&str, &str)] = &[
         "pulse",
         "learned: shots from which the reference pulse is learned; further keys: fields of the block's scene and set-up",
     ),
+    (
+        "calibrate",
+        "each run first calibrates on blocks in its own world, as halfpulse calibrate does, and is refused as not-calibrated if that fails: blocks = [{ thickness_mm = 5.0, standard_uncertainty_mm = 0.005, FIELD = .. }, ..], each block's true thickness drawn from its uncertainty; shots of each block (16 if left out); learn = \"zero\", \"velocity\" or \"zero-and-velocity\"; further keys: fields of every block's scene, drawn for each. Blocks are of the wall's material, bare, smooth, parallel and without grain unless their fields say otherwise; shot. does not apply to them",
+    ),
 ];
 
 /// Most cells of a campaign.
@@ -104,15 +110,6 @@ impl Level {
     }
 }
 
-/// How the reference pulse is learned.
-#[derive(Clone, Debug, PartialEq)]
-pub struct LearnedPulse {
-    /// Shots on the block.
-    pub shots: u32,
-    /// What differs on the block from the scene of the cell.
-    pub fields: Vec<Draw>,
-}
-
 /// A campaign that has been read.
 #[derive(Clone, Debug)]
 pub struct Campaign {
@@ -130,6 +127,8 @@ pub struct Campaign {
     pub draws: Vec<Draw>,
     /// The reference pulse; `None`: modelled, or the set-up's own.
     pub pulse: Option<LearnedPulse>,
+    /// On which blocks each run calibrates first; `None`: the set-up stands as it is.
+    pub calibration: Option<Calibration>,
     /// What the reference pulse's file of a set-up is relative to.
     pub setup_path: PathBuf,
     /// Lines for faults.
@@ -233,7 +232,8 @@ impl Campaign {
             runs: whole_number(&written, &places, "runs", None)?,
             axes: axes(&written, &places)?,
             draws: draws(&written, &places, "draw", &[])?,
-            pulse: pulse(&written, &places)?,
+            pulse: LearnedPulse::parse(&written, &places)?,
+            calibration: Calibration::parse(&written, &places)?,
             base,
             setup_path,
             places,
@@ -382,7 +382,8 @@ fn text_of(table: &Table, places: &Places, key: &str) -> Result<Option<String>, 
     }
 }
 
-fn table_of(table: &Table, places: &Places, key: &str) -> Result<Table, InputError> {
+/// A table of the file; empty if it is not there.
+pub(super) fn table_of(table: &Table, places: &Places, key: &str) -> Result<Table, InputError> {
     match table.get(key) {
         None => Ok(Table::new()),
         Some(Value::Table(inner)) => Ok(inner.clone()),
@@ -406,7 +407,8 @@ fn whole_number(table: &Table, places: &Places, key: &str, default: Option<u64>)
     }
 }
 
-fn at(places: &Places, table: &str, name: &str, error: DrawError) -> InputError {
+/// A fault of a distribution, where it stands.
+pub(super) fn at(places: &Places, table: &str, name: &str, error: DrawError) -> InputError {
     let key = if path::is_field(name) {
         name.to_string()
     } else {
@@ -518,31 +520,14 @@ fn rounded(value: f64) -> f64 {
     format!("{value:.8e}").parse().unwrap_or(value)
 }
 
-fn draws(written: &Table, places: &Places, key: &str, reserved: &[&str]) -> Result<Vec<Draw>, InputError> {
+/// The fields that a table of the file sets, but for keys of its own.
+pub(super) fn draws(written: &Table, places: &Places, key: &str, reserved: &[&str]) -> Result<Vec<Draw>, InputError> {
     let table = table_of(written, places, key)?;
     table
         .iter()
         .filter(|(name, _)| !reserved.contains(&name.as_str()))
         .map(|(name, value)| Draw::parse(name, value).map_err(|error| at(places, key, name, error)))
         .collect()
-}
-
-fn pulse(written: &Table, places: &Places) -> Result<Option<LearnedPulse>, InputError> {
-    if !written.contains_key("pulse") {
-        return Ok(None);
-    }
-    let table = table_of(written, places, "pulse")?;
-    let shots = table.get("learned").and_then(Value::as_integer).unwrap_or(0);
-    let Some(shots) = u32::try_from(shots).ok().filter(|shots| (1..=256).contains(shots)) else {
-        let what = "learned is no whole number from 1 to 256";
-        return Err(places.fault("pulse.learned", what, "write learned = 128, or remove [pulse]"));
-    };
-    let fields = draws(written, places, "pulse", &["learned"])?;
-    if let Some(random) = fields.iter().find(|field| field.is_random()) {
-        let what = format!("{} of the block is drawn", random.name);
-        return Err(places.fault(&random.name, what, "give one value"));
-    }
-    Ok(Some(LearnedPulse { shots, fields }))
 }
 
 /// All keys with what they say, for help.

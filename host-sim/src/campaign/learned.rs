@@ -1,7 +1,8 @@
 //! The reference pulse, learned on a simulated block just as `halfpulse calibrate` learns it.
 
-use super::draw::hash;
-use super::file::Campaign;
+use super::draw::{Draw, hash};
+use super::file::{Campaign, draws, table_of};
+use super::places::Places;
 use crate::calibrating::block::{self, BlockRecord};
 use crate::calibrating::{Learn, cut};
 use crate::input_error::InputError;
@@ -12,6 +13,39 @@ use toml::Table;
 
 /// Pulses that are kept: draws may change the probe from run to run.
 const MOST_KEPT: usize = 16;
+
+/// How the reference pulse is learned.
+#[derive(Clone, Debug, PartialEq)]
+pub struct LearnedPulse {
+    /// Shots on the block.
+    pub shots: u32,
+    /// What differs on the block from the scene of the cell.
+    pub fields: Vec<Draw>,
+}
+
+impl LearnedPulse {
+    /// Reads the table `[pulse]`, if there is one.
+    ///
+    /// # Errors
+    /// What is wrong with it, with its line.
+    pub fn parse(written: &Table, places: &Places) -> Result<Option<Self>, InputError> {
+        if !written.contains_key("pulse") {
+            return Ok(None);
+        }
+        let table = table_of(written, places, "pulse")?;
+        let shots = table.get("learned").and_then(toml::Value::as_integer).unwrap_or(0);
+        let Some(shots) = u32::try_from(shots).ok().filter(|shots| (1..=256).contains(shots)) else {
+            let what = "learned is no whole number from 1 to 256";
+            return Err(places.fault("pulse.learned", what, "write learned = 128, or remove [pulse]"));
+        };
+        let fields = draws(written, places, "pulse", &["learned"])?;
+        if let Some(random) = fields.iter().find(|field| field.is_random()) {
+            let what = format!("{} of the block is drawn", random.name);
+            return Err(places.fault(&random.name, what, "give one value"));
+        }
+        Ok(Some(Self { shots, fields }))
+    }
+}
 
 /// The pulses of the blocks that were met last.
 #[derive(Debug, Default)]

@@ -1,6 +1,7 @@
 //! Simulates and measures one run.
 
 use super::bound;
+use super::calibration;
 use super::file::{Campaign, of_run};
 use super::learned::Pulses;
 use super::resolve::Resolved;
@@ -101,11 +102,28 @@ impl<'c> Measurer<'c> {
             self.samples = shot.codes.len();
             self.scratch = HeapScratch::new(self.samples);
         }
-        let mut gauge = setup.gauge(self.scratch.workspace())?;
-        if let Some(pulse) = &pulse {
-            gauge.learn_pulse(pulse).map_err(|error| setup.locate(error))?;
-        }
-        let outcome = gauge.measure(&shot.record()).map_err(Refusal::from);
+        let calibrated = match &campaign.calibration {
+            None => None,
+            Some(calibration) => Some(calibration.run(campaign, run, &resolved.blocks, setup)?),
+        };
+        let (setup, pulse) = match &calibrated {
+            Some(Ok(calibrated)) => (
+                SetupFile::from_keys(calibrated.keys.clone(), setup.path()),
+                Some(calibrated.pulse.clone()),
+            ),
+            _ => (setup.clone(), pulse),
+        };
+        let mut gauge = match &pulse {
+            Some(pulse) => setup.gauge_with_pulse(self.scratch.workspace(), Some(pulse))?,
+            None => setup.gauge(self.scratch.workspace())?,
+        };
+        let outcome = match &calibrated {
+            Some(Err(error)) => Err(Refusal {
+                reason: calibration::REFUSED,
+                detail: error.to_string(),
+            }),
+            _ => gauge.measure(&shot.record()).map_err(Refusal::from),
+        };
         let measured = Measured {
             file: format!("run {run}"),
             shot: Some(0),
@@ -115,7 +133,9 @@ impl<'c> Measurer<'c> {
             full_scale: shot.format.full_scale(),
         };
         let quarter_mm = 250.0 * shot.truth.wall_velocity_m_s / (maker.scene().probe.centre_frequency_mhz * 1e6);
-        let bound = bound.filter(|_| gauge.setup().span == Span::BackWallToBackWall);
+        // The bound is that of the timing alone: a velocity that was learned has its own error.
+        let between_back_walls = gauge.setup().span == Span::BackWallToBackWall;
+        let bound = bound.filter(|_| between_back_walls && calibrated.is_none());
         let row = Row {
             run,
             cell: resolved.cell,
@@ -139,7 +159,7 @@ impl<'c> Measurer<'c> {
             shown: resolved.shown.clone(),
         };
         Ok(Run {
-            setup: setup.clone(),
+            setup,
             resolved,
             shot,
             pulse,

@@ -9,12 +9,14 @@
 //! 1. [`mod@file`]: the campaign file; [`draw`]: values and distributions; [`path`]: fields by their names.
 //! 2. [`resolve`]: cell and run to a scene and a set-up.
 //! 3. [`measure`]: simulates and measures one run; [`learned`]: the reference pulse as calibration
-//!    learns it; [`bound`]: the Cramér-Rao bound where there is one.
+//!    learns it; [`calibration`]: blocks on which a run calibrates first; [`bound`]: the Cramér-Rao bound
+//!    where there is one.
 //! 4. [`row`]: one run as a line of the results; [`results`]: the file of results; [`writer`]: writes it, or goes
 //!    on with it; [`merge`]: the shards of a campaign as one file.
 //! 5. [`runner`]: all cores; [`summary`]: the cells' statistics, with constant memory.
 
 pub mod bound;
+pub mod calibration;
 pub mod draw;
 pub mod file;
 pub mod learned;

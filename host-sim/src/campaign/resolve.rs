@@ -43,6 +43,8 @@ pub struct Resolved<'c> {
     pub root: Table,
     /// The same of the block on which the pulse is learned, if one is.
     pub block: Option<Table>,
+    /// The same of each block on which the run calibrates first.
+    pub blocks: Vec<Table>,
     /// What stands in the columns of [`Campaign::columns`]; empty if the run has no such thing.
     pub shown: Vec<String>,
 }
@@ -131,6 +133,18 @@ impl Campaign {
             }
         };
         self.assign(&mut root, &drawn_fields)?;
+        let blocks = match &self.calibration {
+            None => Vec::new(),
+            Some(calibration) => calibration
+                .fields(self.seed, run)
+                .iter()
+                .map(|fields| {
+                    let mut block = root.clone();
+                    self.assign(&mut block, fields)?;
+                    Ok(block)
+                })
+                .collect::<Result<_, InputError>>()?,
+        };
         let of_column = |column: String| {
             let found = shown.iter().find(|(name, _)| *name == column);
             found.map_or_else(String::new, |(_, value)| value.clone())
@@ -141,6 +155,7 @@ impl Campaign {
             cell,
             root,
             block,
+            blocks,
             shown: self.columns().into_iter().map(of_column).collect(),
         })
     }
@@ -267,6 +282,12 @@ impl Resolved<'_> {
             self.campaign.scene_of(block)?;
             self.campaign.setup_of(block)?;
         }
-        Ok(())
+        for block in &self.blocks {
+            self.campaign.scene_of(block)?;
+        }
+        match &self.campaign.calibration {
+            None => Ok(()),
+            Some(calibration) => calibration.check(self.campaign, &self.setup()?),
+        }
     }
 }

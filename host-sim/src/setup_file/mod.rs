@@ -375,9 +375,22 @@ impl SetupFile {
     /// # Errors
     /// As [`SetupFile::gauge_setup`] and [`SetupFile::reference_pulse`]; a pulse that the core refuses.
     pub fn gauge<'w>(&self, workspace: Workspace<'w>) -> Result<Gauge<'w>, InputError> {
+        let pulse = self.reference_pulse()?;
+        self.gauge_with_pulse(workspace, pulse.as_deref())
+    }
+
+    /// A gauge with this set-up and a pulse that is at hand; the file that the set-up names is not read.
+    ///
+    /// # Errors
+    /// As [`SetupFile::gauge_setup`]; a pulse that the core refuses.
+    pub fn gauge_with_pulse<'w>(
+        &self,
+        workspace: Workspace<'w>,
+        pulse: Option<&[f32]>,
+    ) -> Result<Gauge<'w>, InputError> {
         let mut gauge = Gauge::new(self.gauge_setup()?, workspace).map_err(|error| self.locate(error))?;
-        if let Some(pulse) = self.reference_pulse()? {
-            gauge.learn_pulse(&pulse).map_err(|error| self.locate(error))?;
+        if let Some(pulse) = pulse {
+            gauge.learn_pulse(pulse).map_err(|error| self.locate(error))?;
         }
         Ok(gauge)
     }
