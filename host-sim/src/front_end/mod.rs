@@ -8,9 +8,11 @@ pub mod converter;
 pub mod drop_outs;
 pub mod gain;
 pub mod interference;
+mod normal;
 pub mod timing;
 
 use crate::scene::TransmissionPulse;
+use normal::{Words, Ziggurat};
 use rand_chacha::ChaCha8Rng;
 use rand_chacha::rand_core::{Rng, SeedableRng};
 use std::f64::consts::{PI, TAU};
@@ -51,7 +53,7 @@ pub enum Purpose {
 #[derive(Clone, Debug)]
 pub struct Random {
     generator: ChaCha8Rng,
-    spare: Option<f64>,
+    ziggurat: &'static Ziggurat,
 }
 
 impl Random {
@@ -63,23 +65,28 @@ impl Random {
         key[8] = purpose as u8;
         let mut generator = ChaCha8Rng::from_seed(key);
         generator.set_stream(shot);
-        Self { generator, spare: None }
+        Self {
+            generator,
+            ziggurat: Ziggurat::shared(),
+        }
     }
 
     /// Uniform, at least 0 and below 1.
     pub fn uniform(&mut self) -> f64 {
-        (self.generator.next_u64() >> 11) as f64 * (1.0 / (1u64 << 53) as f64)
+        Words::uniform(self)
     }
 
-    /// Normal, mean 0 and standard deviation 1 (Box and Muller 1958).
+    /// Normal, mean 0 and standard deviation 1.
+    #[inline]
     pub fn normal(&mut self) -> f64 {
-        if let Some(value) = self.spare.take() {
-            return value;
-        }
-        let radius = (-2.0 * libm::log(1.0 - self.uniform())).sqrt();
-        let (sine, cosine) = libm::sincos(TAU * self.uniform());
-        self.spare = Some(radius * sine);
-        radius * cosine
+        self.ziggurat.draw(self)
+    }
+}
+
+impl Words for Random {
+    #[inline]
+    fn word(&mut self) -> u64 {
+        self.generator.next_u64()
     }
 }
 
@@ -104,18 +111,6 @@ impl TransmissionPulse {
 #[cfg(test)]
 mod tests {
     use super::*;
-
-    /// Mean, deviation, kurtosis and tail of a normal distribution.
-    #[test]
-    fn normals_are_normal() {
-        let mut random = Random::new(1, Purpose::Noise, 0);
-        let values: Vec<f64> = (0..200_000).map(|_| random.normal()).collect();
-        let moment = |power: i32| values.iter().map(|v| v.powi(power)).sum::<f64>() / values.len() as f64;
-        assert!(moment(1).abs() < 0.01 && moment(3).abs() < 0.03);
-        assert!((moment(2) - 1.0).abs() < 0.015 && (moment(4) - 3.0).abs() < 0.08);
-        let beyond = values.iter().filter(|v| v.abs() > 1.959_964).count() as f64 / values.len() as f64;
-        assert!((beyond - 0.05).abs() < 0.002, "{beyond}");
-    }
 
     #[test]
     fn sequences_depend_on_seed_purpose_and_shot() {
