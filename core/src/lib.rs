@@ -47,7 +47,7 @@
 //! 5. [`echo::train`]: which echoes are the multiples of one wall, and their joint period.
 //! 6. [`wall::thickness`]: times to thickness, by the three spans, with or without a coating.
 //! 7. [`wall::uncertainty`]: the budget of named terms; [`wall::calibration`] learns what it needs.
-//! 8. [`wall::judgement`]: the doubts.
+//! 8. [`wall::judgement`]: the doubts; [`wall::limits`]: is the wall thick enough?
 //! 9. [`gauge`]: the facade that runs them.
 //!
 //! Failures are of three kinds and never mixed: [`SetupError`] (the caller's fault, at build or at
@@ -88,9 +88,11 @@ pub use outcome::{Doubt, Doubts, NoReading};
 pub use record::average::{AverageError, Averager, Interleaver};
 pub use record::{AdcFormat, Record, SampleClock};
 pub use setup::{
-    CalibratedRange, Coating, GaugeSetup, Material, Probe, ProbeFace, ProbeKind, SetupError, Span, Window, Zero,
+    CalibratedRange, Coating, GaugeSetup, Material, PartTemperature, Probe, ProbeFace, ProbeKind, SetupError, Span,
+    VelocityTemperature, Window, Zero,
 };
 pub use units::{Celsius, Decibels, Hertz, Metres, MetresPerSecond, SamplePosition, Seconds};
 pub use wall::calibration::{Block, CalibrationError};
+pub use wall::limits::{Guard, LimitState, Limits, LimitsError, LimitsVerdict};
 pub use wall::uncertainty::{Budget, Source, Term};
 pub use workspace::{Scratch, Workspace};

@@ -229,6 +229,8 @@ doubts! {
     UnevenTrain = 12, "uneven-train", "look at the A-scan: a pit or a tilted back wall under the probe?";
     /// Much of what came back belongs to no multiple of this wall.
     UnexplainedEchoes = 13, "unexplained-echoes", "look at the A-scan: grain, a lamination or interference?";
+    /// The part's temperature is not stated, and most of the uncertainty is a guess of it.
+    TemperatureUnknown = 14, "temperature-unknown", "measure the part's temperature and state it in the set-up";
 }
 
 /// A set of doubts.

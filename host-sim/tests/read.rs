@@ -5,7 +5,7 @@ mod support;
 use serde_json::Value;
 use support::{Bench, Train, setup};
 
-const KEYS: [&str; 17] = [
+const KEYS: [&str; 18] = [
     "file",
     "shot",
     "span",
@@ -23,6 +23,7 @@ const KEYS: [&str; 17] = [
     "separation",
     "budget",
     "dominating_term",
+    "limits",
 ];
 
 fn keys(value: &Value) -> Vec<&str> {

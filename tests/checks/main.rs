@@ -3,6 +3,7 @@
 mod law_gauge;
 mod regress_campaigns;
 mod val_bound;
+mod val_calibration;
 mod val_tables;
 mod val_uncertainty;
 mod val_arrival;

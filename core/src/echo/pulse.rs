@@ -44,6 +44,46 @@ pub struct PulseFacts {
     pub envelope_duration: f32,
     /// Root mean square angular frequency in radians a sample: sqrt(derivative energy / energy).
     pub angular_frequency: f32,
+    /// Root mean square of the pulse's own noise per sample, over its envelope's peak; 0 for a modelled pulse, or if nobody
+    /// measured it. See [`PulseQuality`].
+    pub noise: f32,
+    /// How far echoes of other shots differ from the pulse, likewise. See [`PulseQuality`].
+    pub mismatch: f32,
+}
+
+/// How good a learned pulse is: found while it is learned, kept with it in the set-up.
+#[derive(Clone, Copy, Debug, PartialEq, Default)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
+pub struct PulseQuality {
+    /// Root mean square of its noise per sample over its envelope's peak: that of one shot over the root of the shots.
+    pub noise: f32,
+    /// Root of the energy of an isolated echo of another shot that the fitted pulse leaves unexplained, less the noise's,
+    /// over the root of the fitted energy. 0.03 is -30 dB.
+    pub mismatch: f32,
+}
+
+impl PulseQuality {
+    /// Nothing is known: a modelled pulse, or one of unknown origin.
+    pub const UNKNOWN: Self = Self {
+        noise: 0.0,
+        mismatch: 0.0,
+    };
+
+    /// Are both what shares of a pulse can be, 0 to 1?
+    #[must_use]
+    pub const fn is_possible(&self) -> bool {
+        self.noise >= 0.0 && self.noise <= 1.0 && self.mismatch >= 0.0 && self.mismatch <= 1.0
+    }
+}
+
+impl PulseFacts {
+    /// The same pulse with its measured quality.
+    #[must_use]
+    pub const fn with_quality(mut self, quality: PulseQuality) -> Self {
+        self.noise = quality.noise;
+        self.mismatch = quality.mismatch;
+        self
+    }
 }
 
 /// A reference pulse: samples at the record's rate, envelope peak 1, mean 0.
@@ -168,6 +208,8 @@ fn facts_of(samples: &mut [f32], samples_per_cycle: f32) -> Result<PulseFacts, S
         cycle_likeness: likeness / energy,
         envelope_duration: last - first,
         angular_frequency: math::sqrt(derivative_energy / energy),
+        noise: 0.0,
+        mismatch: 0.0,
     })
 }
 

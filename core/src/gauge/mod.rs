@@ -8,7 +8,7 @@ pub mod interpretation;
 mod steps;
 
 use crate::echo::EchoList;
-use crate::echo::pulse::{PulseFacts, PulseMetrics, ReferencePulse, learn, model};
+use crate::echo::pulse::{PulseFacts, PulseMetrics, PulseQuality, ReferencePulse, learn, model};
 use crate::echo::scan::Detector;
 use crate::echo::separation::Separation;
 use crate::echo::train::Train;
@@ -16,6 +16,7 @@ use crate::outcome::{Doubts, NoReading};
 use crate::record::{Record, RecordHealth};
 use crate::setup::{GaugeSetup, SetupError};
 use crate::units::Metres;
+use crate::wall::limits::{Limits, LimitsVerdict};
 use crate::wall::uncertainty::Budget;
 use crate::workspace::Workspace;
 
@@ -44,6 +45,18 @@ impl Reading {
     #[must_use]
     pub fn expanded(&self) -> Metres {
         self.standard_uncertainty * self.coverage_factor
+    }
+
+    /// Where this reading stands to the limits of its place: below, above, or undecided within the uncertainty. A reading
+    /// with a doubt decides nothing. Read [`crate::wall::limits`] before relying on it.
+    #[must_use]
+    pub fn against(&self, limits: &Limits) -> LimitsVerdict {
+        limits.judge(
+            self.thickness,
+            self.standard_uncertainty,
+            self.coverage_factor,
+            self.doubts,
+        )
     }
 }
 
@@ -121,10 +134,21 @@ impl<'w> Gauge<'w> {
     /// # Errors
     /// [`SetupError::PulseTooLong`] or [`SetupError::PulseEmpty`]; the modelled pulse is in force then.
     pub fn learn_pulse(&mut self, samples: &[f32]) -> Result<(), SetupError> {
+        self.learn_pulse_of_quality(samples, PulseQuality::UNKNOWN)
+    }
+
+    /// The same for a pulse whose own noise and mismatch were measured when it was learned.
+    ///
+    /// # Errors
+    /// As [`Gauge::learn_pulse`]; [`SetupError::PulseQuality`] for shares that are none.
+    pub fn learn_pulse_of_quality(&mut self, samples: &[f32], quality: PulseQuality) -> Result<(), SetupError> {
+        if !quality.is_possible() {
+            return Err(SetupError::PulseQuality);
+        }
         let learned = learn(samples, self.setup.samples_per_cycle(), self.workspace.pulse);
         let result = match learned {
             Ok(facts) => {
-                self.facts = facts;
+                self.facts = facts.with_quality(quality);
                 Ok(())
             }
             Err(error) => {

@@ -13,6 +13,7 @@ use crate::record::{Record, SampleRange};
 use crate::setup::{PULSE_CAPACITY, ProbeKind, Span};
 use crate::units::Metres;
 use crate::wall::judgement::{self, Evidence};
+use crate::wall::uncertainty::Source;
 use crate::wall::{thickness, uncertainty};
 use crate::workspace::Workspace;
 
@@ -108,7 +109,7 @@ impl Gauge<'_> {
             samples_per_cycle: self.setup.samples_per_cycle(),
         };
         let rules = rules(&self.setup, &surroundings, range, scan, &self.detector, start);
-        let period_of = |samples: f32| self.setup.material.velocity * (record.clock().rate.period() * samples) * 0.5;
+        let period_of = |samples: f32| self.setup.velocity() * (record.clock().rate.period() * samples) * 0.5;
         let train = match find_train(&surroundings, &mut self.findings.echoes, &rules, lags) {
             Ok(train) => train,
             Err(Undecided::Ambiguous { candidates, best, next }) => {
@@ -142,7 +143,11 @@ impl Gauge<'_> {
         if !(wall >= minimum * 0.999) {
             return Err(NoReading::BelowMinimum { minimum });
         }
-        let budget = uncertainty::budget(&self.setup, &times, wall);
+        let mut budget = uncertainty::budget(&self.setup, &times, wall);
+        budget.add(
+            Source::ReferencePulse,
+            uncertainty::reference_pulse(&self.setup, &self.facts),
+        );
         let standard_uncertainty = budget.combined();
         let evidence = Evidence {
             setup: &self.setup,
@@ -210,7 +215,7 @@ impl Gauge<'_> {
             sample_rate: record.clock().rate,
             centre_frequency: self.setup.probe.centre_frequency,
             bandwidth: self.setup.probe.bandwidth(),
-            velocity: self.setup.material.velocity,
+            velocity: self.setup.velocity(),
             noise: self.findings.noise,
         };
         // Two durations to either side hold the -40 dB support; a neighbour's half of the way is its own.

@@ -59,7 +59,7 @@ impl Evidence<'_> {
 
     /// Thickness that a time stands for.
     fn thickness_of(&self, time: Seconds) -> Metres {
-        self.setup.material.velocity * time * 0.5
+        self.setup.velocity() * time * 0.5
     }
 
     /// How far a difference between the pulse and what came back could have moved an arrival.
@@ -156,7 +156,7 @@ pub fn coating_overlap(evidence: &Evidence<'_>) -> Option<Metres> {
         return None;
     }
     // A rectangular half width, in the coating's own velocity.
-    let half_width = evidence.shift_by(worst) * (coating.velocity / evidence.setup.material.velocity);
+    let half_width = evidence.shift_by(worst) * (coating.velocity / evidence.setup.velocity());
     Some(half_width * 0.577_350_3)
 }
 
@@ -242,6 +242,10 @@ pub fn doubts(evidence: &Evidence<'_>) -> Doubts {
     doubts.raise_if(
         uncertainty::unknown_beam_matters(setup, wall, expanded),
         Doubt::BeamUnknown,
+    );
+    doubts.raise_if(
+        uncertainty::unknown_temperature_matters(setup, wall, evidence.budget),
+        Doubt::TemperatureUnknown,
     );
     doubts.raise_if(setup.probe.kind == ProbeKind::DualElement, Doubt::VPathUncorrected);
     doubts.raise_if(

@@ -4,5 +4,6 @@ pub mod beam;
 pub mod judgement;
 pub mod calibration;
 pub mod coupling;
+pub mod limits;
 pub mod thickness;
 pub mod uncertainty;

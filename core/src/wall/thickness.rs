@@ -107,7 +107,7 @@ pub fn round_trip(setup: &GaugeSetup, times: &TrainTimes) -> Option<Timed> {
 #[must_use]
 pub fn wall(setup: &GaugeSetup, times: &TrainTimes) -> Option<Metres> {
     let trip = round_trip(setup, times)?;
-    Some(half_path(setup.material.velocity, trip.time))
+    Some(half_path(setup.velocity(), trip.time))
 }
 
 /// What is left of the first back wall's arrival when start and wall are taken off: the round trip through the
@@ -155,7 +155,7 @@ pub fn thinnest_wall(setup: &GaugeSetup, envelope_duration: Seconds) -> Metres {
             spacing = dead;
         }
     }
-    half_path(setup.material.velocity, spacing)
+    half_path(setup.velocity(), spacing)
 }
 
 /// Smallest spacing of echoes that a train is read with, over the -20 dB duration of the envelope.

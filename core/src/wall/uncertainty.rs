@@ -1,8 +1,9 @@
 //! The uncertainty budget: named terms, combined as JCGM 100:2008 (5.1.2) says.
 
+use crate::echo::pulse::PulseFacts;
 use crate::math;
-use crate::setup::{CalibratedRange, GaugeSetup, ProbeKind, Span};
-use crate::units::{Metres, Seconds};
+use crate::setup::{CalibratedRange, GaugeSetup, ProbeKind, Span, UNKNOWN_TEMPERATURE};
+use crate::units::{Metres, MetresPerSecond, Seconds};
 use crate::wall::thickness::{TrainTimes, excess, round_trip, wall_span};
 use crate::wall::{beam, coupling};
 use heapless::Vec;
@@ -24,6 +25,10 @@ pub enum Source {
     Beam,
     /// The couplant film differs from the one at calibration.
     Coupling,
+    /// The part is warmer or colder than its velocity holds for.
+    Temperature,
+    /// The noise that the reference pulse itself was learned with.
+    ReferencePulse,
 }
 
 impl Source {
@@ -37,6 +42,8 @@ impl Source {
             Self::Calibration => "calibration",
             Self::Beam => "beam",
             Self::Coupling => "coupling",
+            Self::Temperature => "temperature",
+            Self::ReferencePulse => "reference-pulse",
         }
     }
 }
@@ -68,7 +75,7 @@ impl Budget {
     /// Adds a term; one that is zero, negative or not a number is left out.
     pub fn add(&mut self, source: Source, standard_uncertainty: Metres) {
         if standard_uncertainty.get() > 0.0 {
-            // Eight places for six sources: a full list cannot happen, and would lose nothing but a line.
+            // Eight places for eight sources: a full list cannot happen, and would lose nothing but a line.
             let _ = self.terms.push(Term {
                 source,
                 standard_uncertainty,
@@ -114,18 +121,21 @@ const RECTANGULAR: f32 = 0.577_350_26;
 /// | term | value |
 /// |---|---|
 /// | timing | c / 2 times the uncertainty of the round trip from noise |
-/// | velocity | d / c times the velocity's uncertainty |
+/// | velocity | d / c times the velocity's uncertainty: that of the blocks, and what the part may differ from them |
 /// | zero | c / 2 times the zero's uncertainty; not between back walls |
-/// | calibration | instead of the two before, where the set-up says that their errors are correlated |
+/// | calibration | instead of the two before, where the set-up says that their errors are correlated; only what the part may differ from the blocks stays apart, as velocity |
 /// | beam | c / 2 times the whole uncorrected diffraction shift, as the half-width of a rectangle; only if the element is known |
 /// | coupling | c / 2 times the shift by the couplant film, likewise |
+/// | temperature | d / c times what temperature does to the velocity, [`crate::setup::Material::temperature_uncertainty`] |
+///
+/// The noise of the reference pulse stands apart, because it is a matter of the pulse: [`reference_pulse`].
 ///
 /// Nothing but timing depends on the noise, so a budget that timing does not dominate is not made smaller by averaging.
 /// A span without its times (see [`round_trip`]) has no timing term: there is no reading then.
 #[must_use]
 pub fn budget(setup: &GaugeSetup, times: &TrainTimes, wall: Metres) -> Budget {
     let mut budget = Budget::new();
-    let half_velocity = setup.material.velocity * 0.5;
+    let half_velocity = setup.velocity() * 0.5;
     if let Some(trip) = round_trip(setup, times) {
         budget.add(Source::Timing, half_velocity * trip.standard_uncertainty);
     }
@@ -134,7 +144,55 @@ pub fn budget(setup: &GaugeSetup, times: &TrainTimes, wall: Metres) -> Budget {
     budget.add(Source::Beam, beam * RECTANGULAR);
     let coupling = half_velocity * coupling::half_width(&setup.probe, wall_span(setup));
     budget.add(Source::Coupling, coupling * RECTANGULAR);
+    let temperature = setup.material.temperature_uncertainty() / setup.velocity();
+    budget.add(Source::Temperature, (wall * temperature).abs());
     budget
+}
+
+/// What the noise in the reference pulse adds to a reading, as a standard uncertainty (k = 1).
+///
+/// A pulse with noise of σ a sample is found σ / sqrt(Σ s'²) away from where the true one would be, and its own
+/// origin, the envelope's maximum through three samples, lies off by σ σt² / sqrt(2), with σt = T20 / 4.292 samples
+/// as a Gaussian envelope has it. Both move every echo of the pulse's shape by the same amount. So they cancel between two
+/// echoes of one record, and in a zero that was learned with this very pulse (where the noise of the block's arrival,
+/// which stands in the zero's uncertainty, is the pulse's own). What is left:
+///
+/// * from the transmission pulse with a zero that no calibration in the set-up vouches for
+///   ([`GaugeSetup::calibrated`]): all of it;
+/// * else, of the first part, the share by which echoes differ in shape from the pulse, for which the pulse's
+///   measured mismatch stands.
+///
+/// 0 for a modelled pulse and for one whose noise nobody stated.
+#[must_use]
+pub fn reference_pulse(setup: &GaugeSetup, facts: &PulseFacts) -> Metres {
+    let found = facts.noise / math::sqrt(facts.derivative_energy);
+    let zero_by_itself = matches!(wall_span(setup), Span::TransmissionPulseToBackWall) && setup.calibrated.is_none();
+    let samples = if zero_by_itself {
+        let spread = facts.envelope_duration / 4.292;
+        let origin = facts.noise * spread * spread * core::f32::consts::FRAC_1_SQRT_2;
+        math::sqrt(found * found + origin * origin)
+    } else {
+        found * facts.mismatch
+    };
+    setup.velocity() * 0.5 * (setup.sample_rate.period() * samples)
+}
+
+/// Does the reading's uncertainty rest on the guess that a part of unknown temperature is no further than
+/// [`crate::setup::UNKNOWN_TEMPERATURE`] off? Yes if those kelvins move it by more than `k` times everything else in the
+/// budget: then a part that is further off leaves the stated interval. Never if the temperature is stated or left out.
+#[must_use]
+pub fn unknown_temperature_matters(setup: &GaugeSetup, wall: Metres, budget: &Budget) -> bool {
+    let Some(follows) = setup.material.temperature else {
+        return false;
+    };
+    let mut others = 0.0;
+    for term in budget.terms() {
+        if term.source != Source::Temperature {
+            others += term.standard_uncertainty.get() * term.standard_uncertainty.get();
+        }
+    }
+    let half_width = wall * (follows.coefficient * UNKNOWN_TEMPERATURE.get() / setup.material.velocity.get());
+    follows.part.is_none() && half_width.abs().get() > setup.coverage_factor * math::sqrt(others)
 }
 
 /// Velocity and zero: apart, or as one term if their errors hang together.
@@ -144,20 +202,26 @@ pub fn budget(setup: &GaugeSetup, times: &TrainTimes, wall: Metres) -> Budget {
 /// by rounding where both cancel, which is at the thickness of the block.
 fn add_calibration(budget: &mut Budget, setup: &GaugeSetup, wall: Metres) {
     let material = &setup.material;
-    let velocity = (wall * (material.velocity_standard_uncertainty / material.velocity)).abs();
+    let of_velocity = |uncertainty: MetresPerSecond| (wall * (uncertainty / setup.velocity())).abs();
+    let velocity = of_velocity(material.velocity_standard_uncertainty);
+    // What the part differs from the blocks by knows nothing of the blocks' zero.
+    let part = of_velocity(material.part_velocity_standard_uncertainty);
+    let (a, p) = (velocity.get(), part.get());
+    let both = Metres::new(math::sqrt(a * a + p * p));
     if matches!(wall_span(setup), Span::BackWallToBackWall) {
-        budget.add(Source::Velocity, velocity);
+        budget.add(Source::Velocity, both);
         return;
     }
-    let zero = material.velocity * 0.5 * setup.zero.standard_uncertainty;
+    let zero = setup.velocity() * 0.5 * setup.zero.standard_uncertainty;
     let correlation = setup.zero.velocity_correlation;
     if correlation == 0.0 {
-        budget.add(Source::Velocity, velocity);
+        budget.add(Source::Velocity, both);
         budget.add(Source::Zero, zero);
     } else {
-        let (a, b) = (velocity.get(), zero.get());
+        let b = zero.get();
         let variance = (a - b) * (a - b) + 2.0 * (1.0 - correlation) * a * b;
         budget.add(Source::Calibration, Metres::new(math::sqrt(variance)));
+        budget.add(Source::Velocity, part);
     }
 }
 
@@ -174,7 +238,7 @@ fn beam_half_width(setup: &GaugeSetup, wall: Metres) -> Seconds {
     let Some(diameter) = setup.probe.element_diameter else {
         return Seconds::ZERO;
     };
-    let (velocity, frequency) = (setup.material.velocity, setup.probe.centre_frequency);
+    let (velocity, frequency) = (setup.velocity(), setup.probe.centre_frequency);
     let shift = |from: Metres, to: Metres| beam::uncorrected_shift(diameter, velocity, frequency, from * 2.0, to * 2.0);
     let behind_delay_line = matches!(setup.probe.kind, ProbeKind::DelayLine);
     match (wall_span(setup), setup.calibrated) {
@@ -220,8 +284,8 @@ pub fn unknown_beam_matters(setup: &GaugeSetup, wall: Metres, limit: Metres) -> 
         return false;
     }
     let mut smallest = *setup;
-    smallest.probe.element_diameter = Some(setup.material.velocity / setup.probe.centre_frequency * 2.0);
-    setup.material.velocity * 0.5 * beam_half_width(&smallest, wall) > limit
+    smallest.probe.element_diameter = Some(setup.velocity() / setup.probe.centre_frequency * 2.0);
+    setup.velocity() * 0.5 * beam_half_width(&smallest, wall) > limit
 }
 
 /// Standard uncertainty (k = 1) of [`excess`] as a whole: timing of first back wall, start and period; the zero; beam and

@@ -14,6 +14,7 @@ use halfpulse::math;
 use halfpulse::record::SampleRange;
 use halfpulse::setup::PULSE_CAPACITY;
 use halfpulse::wall::judgement::{self, Evidence};
+use halfpulse::wall::uncertainty::Source;
 use halfpulse::wall::{thickness, uncertainty};
 use halfpulse::{CoatingReading, EchoList, GaugeSetup, Metres, NoReading, Reading, Record, SetupError, Workspace};
 
@@ -173,7 +174,8 @@ impl<'w> Prepared<'w> {
         let setup = &self.setup;
         let times = times(record, train, echoes);
         let wall = thickness::wall(setup, &times).ok_or(NoReading::NoInterfaceEcho)?;
-        let budget = uncertainty::budget(setup, &times, wall);
+        let mut budget = uncertainty::budget(setup, &times, wall);
+        budget.add(Source::ReferencePulse, uncertainty::reference_pulse(setup, &self.facts));
         let standard_uncertainty = budget.combined();
         let evidence = Evidence {
             setup,
@@ -224,7 +226,7 @@ impl<'w> Prepared<'w> {
             sample_rate: record.clock().rate,
             centre_frequency: self.setup.probe.centre_frequency,
             bandwidth: self.setup.probe.bandwidth(),
-            velocity: self.setup.material.velocity,
+            velocity: self.setup.velocity(),
             noise,
         };
         let reach = math::smaller(2.0 * self.facts.envelope_duration, 0.5 * room);

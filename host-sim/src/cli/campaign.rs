@@ -267,7 +267,7 @@ fn replay(
         Some(truth) => said.push_str(&format!("  true wall {truth} mm\n")),
         None => said.push_str("  no echo of a wall in the record\n"),
     }
-    said.push_str(&text::block(&run.measured));
+    said.push_str(&text::block(&run.measured, None));
     written(out.write_all(said.as_bytes()))?;
     let Some(output) = output else { return Ok(()) };
     let scene = run.resolved.scene()?;
@@ -291,7 +291,7 @@ fn replay(
         "run": number,
         "scene": scene,
         "truth": run.shot.truth,
-        "reading": serde_json::from_str::<serde_json::Value>(&json::line(&run.measured)).unwrap_or_default(),
+        "reading": serde_json::from_str::<serde_json::Value>(&json::line(&run.measured, None)).unwrap_or_default(),
         "row": run.row.line(),
     });
     put("json", format!("{truth:#}\n"))

@@ -4,7 +4,7 @@ use crate::measuring::Measured;
 use crate::setup_file::span_word;
 use halfpulse::echo::pulse::PulseMetrics;
 use halfpulse::echo::separation::Separation;
-use halfpulse::{Echo, EchoRole, Polarity};
+use halfpulse::{Echo, EchoRole, LimitState, Limits, LimitsVerdict, Polarity};
 use serde::Serialize;
 
 use super::words;
@@ -36,6 +36,11 @@ JSON, one object a record and line; numbers or null, never NaN; more keys may fo
                                  the nearest pair of echoes
   budget                         [{term, standard_uncertainty_mm}]
   dominating_term                the largest of them
+  limits                         null without a reading or without [limits] in the set-up, or
+                                 {minimum, warning, maximum, guard_band_mm, conformance_probability}:
+                                 the three are below, above or undecided, null if not asked for; always
+                                 undecided for a reading with doubts; the probability that the wall
+                                 keeps to minimum and maximum rests on reading and uncertainty alone
 ";
 
 #[derive(Serialize)]
@@ -57,6 +62,16 @@ struct JsonRecord<'m> {
     separation: Option<JsonSeparation>,
     budget: Vec<JsonTerm>,
     dominating_term: Option<&'static str>,
+    limits: Option<JsonLimits>,
+}
+
+#[derive(Serialize)]
+struct JsonLimits {
+    minimum: &'static str,
+    warning: Option<&'static str>,
+    maximum: Option<&'static str>,
+    guard_band_mm: Option<f32>,
+    conformance_probability: Option<f32>,
 }
 
 #[derive(Serialize)]
@@ -150,9 +165,19 @@ fn separation(separation: &Separation) -> JsonSeparation {
     }
 }
 
+fn verdict(verdict: &LimitsVerdict) -> JsonLimits {
+    JsonLimits {
+        minimum: verdict.minimum.word(),
+        warning: verdict.warning.map(LimitState::word),
+        maximum: verdict.maximum.map(LimitState::word),
+        guard_band_mm: finite(verdict.guard_band.as_mm()),
+        conformance_probability: finite(verdict.conformance_probability),
+    }
+}
+
 /// One record as one line of JSON, without the line's end.
 #[must_use]
-pub fn line(measured: &Measured) -> String {
+pub fn line(measured: &Measured, limits: Option<&Limits>) -> String {
     let reading = measured.outcome.as_ref().ok();
     let coating = reading.and_then(|reading| reading.coating);
     let record = JsonRecord {
@@ -193,6 +218,7 @@ pub fn line(measured: &Measured) -> String {
                 .collect()
         }),
         dominating_term: reading.and_then(|r| r.budget.dominating()).map(|source| source.word()),
+        limits: reading.and_then(|r| Some(verdict(&r.against(limits?)))),
     };
     // Strings and finite numbers always serialise.
     serde_json::to_string(&record).unwrap_or_default()

@@ -7,8 +7,8 @@ use crate::measuring::{self, HeapScratch, Measured, Refusal, Shot};
 use crate::record_file::{self, CodeKind, Coding, RecordFile};
 use crate::setup_file::{SetupFile, keys};
 use halfpulse::{
-    EchoRole, Findings, Gauge, GaugeSetup, Hertz, Material, MetresPerSecond, Probe, SampleClock, Seconds, Span, Window,
-    Zero,
+    EchoRole, Findings, Gauge, GaugeSetup, Hertz, Limits, Material, MetresPerSecond, Probe, SampleClock, Seconds, Span,
+    Window, Zero,
 };
 use std::io::Write;
 use std::path::{Path, PathBuf};
@@ -88,11 +88,15 @@ pub fn run(arguments: &Arguments, out: &mut dyn Write) -> Result<Outcome, InputE
         }
         None => Source::Unknown(unknown_record(arguments)?),
     };
+    let limits = match &source {
+        Source::Known(setup) => setup.limits()?,
+        Source::Unknown(_) => None,
+    };
     let (mut refused, mut failed) = (false, false);
     for path in &arguments.files {
         let result = read_file(path, &source, arguments.average, &mut |measured| {
             refused |= measured.outcome.is_err();
-            print(out, arguments.format, measured)
+            print(out, arguments.format, measured, limits.as_ref())
         });
         match result {
             Ok(()) => {}
@@ -153,10 +157,10 @@ fn unknown_record(arguments: &Arguments) -> Result<UnknownRecord, InputError> {
     })
 }
 
-fn print(out: &mut dyn Write, format: Format, measured: &Measured) -> std::io::Result<()> {
+fn print(out: &mut dyn Write, format: Format, measured: &Measured, limits: Option<&Limits>) -> std::io::Result<()> {
     match format {
-        Format::Text => writeln!(out, "{}", text::block(measured)),
-        Format::Json => writeln!(out, "{}", json::line(measured)),
+        Format::Text => writeln!(out, "{}", text::block(measured, limits)),
+        Format::Json => writeln!(out, "{}", json::line(measured, limits)),
     }
 }
 

@@ -2,7 +2,7 @@
 
 use super::words;
 use crate::measuring::Measured;
-use halfpulse::{EchoRole, Polarity, Reading};
+use halfpulse::{EchoRole, Limits, Polarity, Reading};
 use std::fmt::Write as _;
 
 /// As many decimals of a millimetre as show two digits of an uncertainty: 2 to 5.
@@ -57,9 +57,35 @@ fn budget_block(text: &mut String, reading: &Reading) {
     text.push('\n');
 }
 
+/// Where the reading stands to the limits of its place.
+fn limits_block(text: &mut String, reading: &Reading, limits: &Limits) {
+    let verdict = reading.against(limits);
+    let lines = [
+        ("minimum", Some(limits.minimum), Some(verdict.minimum)),
+        ("warning", limits.warning, verdict.warning),
+        ("maximum", limits.maximum, verdict.maximum),
+    ];
+    for (name, limit, state) in lines {
+        if let (Some(limit), Some(state)) = (limit, state) {
+            let _ = writeln!(text, "  {name} {:.3} mm: {}", limit.as_mm(), state.word());
+        }
+    }
+    let digits = decimals(verdict.guard_band.as_mm());
+    let _ = write!(text, "  guard band {:.digits$} mm", verdict.guard_band.as_mm());
+    if reading.doubts.is_empty() {
+        let _ = writeln!(
+            text,
+            "; by reading and uncertainty alone the wall keeps to minimum and maximum with probability {:.4}",
+            verdict.conformance_probability
+        );
+    } else {
+        text.push_str("; a reading with a doubt decides nothing\n");
+    }
+}
+
 /// The block of one record.
 #[must_use]
-pub fn block(measured: &Measured) -> String {
+pub fn block(measured: &Measured, limits: Option<&Limits>) -> String {
     let mut text = measured.file.clone();
     match measured.shot {
         Some(shot) => {
@@ -68,7 +94,12 @@ pub fn block(measured: &Measured) -> String {
         None => text.push_str(", average: "),
     }
     match &measured.outcome {
-        Ok(reading) => reading_block(&mut text, reading),
+        Ok(reading) => {
+            reading_block(&mut text, reading);
+            if let Some(limits) = limits {
+                limits_block(&mut text, reading, limits);
+            }
+        }
         Err(refusal) => {
             let _ = writeln!(text, "no reading: {}: {}", refusal.reason, refusal.detail);
         }

@@ -56,6 +56,14 @@ const TERMS: &[(Source, &str)] = &[
         Source::Coupling,
         "the couplant film differs from the one at calibration",
     ),
+    (
+        Source::Temperature,
+        "the part is warmer or colder than its velocity holds for",
+    ),
+    (
+        Source::ReferencePulse,
+        "the noise that the reference pulse itself was learned with",
+    ),
 ];
 
 /// All words with what they mean or what to do about them.

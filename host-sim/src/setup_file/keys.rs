@@ -104,12 +104,56 @@ pub const KEYS: &[Key] = &[
         "reference_pulse",
         ".npy file of the learned pulse, relative to this file; without it a modelled pulse is used",
     ),
+    key(
+        "probe",
+        "reference_pulse_noise_percent",
+        "the learned pulse's own noise over its peak, root mean square; written by calibrate, default 0",
+    ),
+    key(
+        "probe",
+        "reference_pulse_mismatch_percent",
+        "root of the energy by which other shots' echoes differ from the learned pulse; written by calibrate, default 0",
+    ),
     key("material", "name", "what the part is made of; only shown"),
     key("material", "velocity_m_s", "velocity of longitudinal waves in the part"),
     key(
         "material",
         "velocity_standard_uncertainty_m_s",
-        "its standard uncertainty (k = 1), for the part",
+        "its standard uncertainty (k = 1): of the table it stands in, or of the blocks it was learned on",
+    ),
+    key(
+        "material",
+        "part_velocity_standard_uncertainty_m_s",
+        "how far the part's velocity may differ from the blocks' (k = 1), added as the root of squares; default 0. \
+         The block is not the part: another heat or rolling direction of one steel differs by some 0.1 to 0.5 %; \
+         0 only if the velocity was learned on the part, or if its own uncertainty says this already",
+    ),
+    key(
+        "material",
+        "velocity_temperature_coefficient_m_s_k",
+        "how the velocity changes, in m/s per kelvin: steel about -0.8; without it temperature is left out, and the \
+         velocity's uncertainty has to cover it",
+    ),
+    key(
+        "material",
+        "velocity_temperature_coefficient_standard_uncertainty_m_s_k",
+        "its standard uncertainty (k = 1); default a fifth of it",
+    ),
+    key(
+        "material",
+        "velocity_temperature_c",
+        "temperature in degrees Celsius that velocity_m_s holds at; default 20; calibrate writes that of the blocks",
+    ),
+    key(
+        "part",
+        "temperature_c",
+        "temperature of the part in degrees Celsius, for materials with a coefficient; without it +-10 K \
+         (rectangular) round velocity_temperature_c stand in the budget",
+    ),
+    key(
+        "part",
+        "temperature_standard_uncertainty_k",
+        "its standard uncertainty (k = 1) in kelvin; default 1",
     ),
     key(
         "coating",
@@ -144,6 +188,28 @@ pub const KEYS: &[Key] = &[
     key("measure", "to_us", "where to stop looking; default: the record's end"),
     key("measure", "coverage_factor", "k of the expanded uncertainty; default 2"),
     key(
+        "limits",
+        "minimum_mm",
+        "the wall must not be thinner; the table asks for below, above or undecided. Limits come from the codes that \
+         apply and from licensed people, and so does what follows from them",
+    ),
+    key(
+        "limits",
+        "warning_mm",
+        "thickness above the minimum below which somebody wants to know",
+    ),
+    key("limits", "maximum_mm", "the wall must not be thicker"),
+    key(
+        "limits",
+        "guard_band_factor",
+        "guard band on either side of a limit in expanded uncertainties, 0 to 10; default 1: wrong in 2.3 % at its edge",
+    ),
+    key(
+        "limits",
+        "wrong_decision_probability",
+        "instead of the factor: so wide that a decision at its edge is wrong with this probability, 0.0001 to 0.5",
+    ),
+    key(
         "calibration",
         "velocity_zero_correlation",
         "correlation of the errors of velocity and zero, -1 to 1; default 0",
@@ -155,7 +221,11 @@ pub const KEYS: &[Key] = &[
     ),
     key("calibration", "to_mm", "thickest thickness that the calibration covers"),
     key("calibration", "blocks_mm", "thicknesses of the blocks; only shown"),
-    key("calibration", "temperature_c", "temperature of the blocks; only shown"),
+    key(
+        "calibration",
+        "temperature_c",
+        "temperature of the blocks in degrees Celsius; only shown",
+    ),
     key(
         "calibration",
         "date",

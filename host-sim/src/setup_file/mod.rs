@@ -14,17 +14,19 @@
 //! * Unknown keys are refused; every key is described in [`keys::KEYS`] and by `halfpulse read --help`.
 //!   Keys that later versions add keep version 1 and have defaults.
 
+mod contents;
 mod document;
 pub mod keys;
 mod write;
 
+pub use contents::{
+    CalibrationKeys, LimitsKeys, MaterialKeys, MeasureKeys, PartKeys, ProbeKeys, RecordKeys, SetupKeys, ZeroKeys,
+};
+
 use crate::input_error::InputError;
 use crate::record_file::{CodeKind, Coding, npy};
 use document::{Document, Place};
-use halfpulse::{
-    CalibratedRange, Coating, Gauge, GaugeSetup, Hertz, Material, Metres, MetresPerSecond, Probe, ProbeFace, ProbeKind,
-    Seconds, SetupError, Span, Window, Workspace, Zero,
-};
+use halfpulse::{Gauge, GaugeSetup, Limits, LimitsError, ProbeFace, ProbeKind, SetupError, Span, Workspace};
 use std::path::{Path, PathBuf};
 
 const CODES: &[(&str, CodeKind)] = &[("signed", CodeKind::Signed), ("offset-binary", CodeKind::OffsetBinary)];
@@ -48,111 +50,6 @@ pub fn span_word(span: Span) -> &'static str {
 
 fn word_of<T: PartialEq>(words: &[(&'static str, T)], value: T) -> &'static str {
     words.iter().find(|(_, v)| *v == value).map_or("", |(word, _)| word)
-}
-
-/// `[record]`: what the converter's numbers mean.
-#[derive(Clone, Debug, PartialEq)]
-pub struct RecordKeys {
-    /// Samples per microsecond.
-    pub sample_rate_mhz: f64,
-    /// Time of the first sample after the trigger; `None`: what the record's file says, else 0.
-    pub first_sample_us: Option<f64>,
-    /// The converter's bits.
-    pub bits: Option<u8>,
-    /// How codes stand for voltages.
-    pub codes: CodeKind,
-    /// Full scale of floats.
-    pub full_scale: Option<f64>,
-}
-
-/// `[probe]`.
-#[derive(Clone, Debug, PartialEq)]
-pub struct ProbeKeys {
-    /// How it meets the part.
-    pub kind: ProbeKind,
-    /// Middle of the -6 dB limits.
-    pub centre_frequency_mhz: f64,
-    /// -6 dB width over the centre frequency.
-    pub relative_bandwidth_percent: f64,
-    /// Diameter of the element, if known.
-    pub element_diameter_mm: Option<f64>,
-    /// What touches the couplant; `None`: by kind.
-    pub face: Option<ProbeFace>,
-    /// Uncertain couplant film.
-    pub couplant_film_um: f64,
-    /// File of the learned pulse, relative to the set-up file.
-    pub reference_pulse: Option<String>,
-}
-
-/// `[material]`.
-#[derive(Clone, Debug, PartialEq)]
-pub struct MaterialKeys {
-    /// Its name, only shown.
-    pub name: Option<String>,
-    /// Velocity of longitudinal waves.
-    pub velocity_m_s: f64,
-    /// Its standard uncertainty.
-    pub velocity_standard_uncertainty_m_s: f64,
-}
-
-/// `[zero]`.
-#[derive(Clone, Debug, PartialEq, Default)]
-pub struct ZeroKeys {
-    /// Where the part's front surface lies.
-    pub offset_ns: f64,
-    /// Its standard uncertainty, if stated.
-    pub standard_uncertainty_ns: Option<f64>,
-    /// Checksum of the pulse that it was learned with.
-    pub reference_pulse_checksum: Option<String>,
-}
-
-/// `[measure]`.
-#[derive(Clone, Debug, PartialEq)]
-pub struct MeasureKeys {
-    /// Between which events the thickness is read.
-    pub span: Span,
-    /// Start of the window.
-    pub from_us: f64,
-    /// End of the window; `None`: the record's end.
-    pub to_us: Option<f64>,
-    /// k.
-    pub coverage_factor: f64,
-}
-
-/// `[calibration]`: what calibrate has found out.
-#[derive(Clone, Debug, PartialEq, Default)]
-pub struct CalibrationKeys {
-    /// Correlation of the errors of velocity and zero.
-    pub velocity_zero_correlation: Option<f64>,
-    /// Thinnest thickness covered, with the next.
-    pub from_mm: Option<f64>,
-    /// Thickest thickness covered.
-    pub to_mm: Option<f64>,
-    /// The blocks, only shown.
-    pub blocks_mm: Vec<f64>,
-    /// Their temperature, only shown.
-    pub temperature_c: Option<f64>,
-    /// The day, only shown.
-    pub date: Option<String>,
-}
-
-/// Everything that a set-up file says.
-#[derive(Clone, Debug, PartialEq)]
-pub struct SetupKeys {
-    /// `[record]`
-    pub record: RecordKeys,
-    /// `[probe]`
-    pub probe: ProbeKeys,
-    /// `[material]`
-    pub material: MaterialKeys,
-    /// `[coating] velocity_m_s`, if the table is there.
-    pub coating_velocity_m_s: Option<f64>,
-    /// `[zero]`
-    pub zero: ZeroKeys,
-    /// `[measure]`
-    pub measure: MeasureKeys,
-    /// `[calibration]`
-    pub calibration: Option<CalibrationKeys>,
 }
 
 /// A set-up file that has been read: its keys, and where they stand.
@@ -200,6 +97,7 @@ impl SetupFile {
         };
         file.check_host_keys()?;
         file.gauge_setup()?;
+        file.limits()?;
         Ok(file)
     }
 
@@ -268,6 +166,54 @@ impl SetupFile {
                 "calibrate on a block, or state the offset with its standard uncertainty",
             ));
         }
+        let coefficient = "velocity_temperature_coefficient_m_s_k";
+        let stated = [
+            ("part", "temperature_c", self.keys.part.temperature_c),
+            (
+                "material",
+                "velocity_temperature_coefficient_standard_uncertainty_m_s_k",
+                self.keys
+                    .material
+                    .velocity_temperature_coefficient_standard_uncertainty_m_s_k,
+            ),
+        ];
+        for (table, name, value) in stated {
+            if value.is_some() && self.keys.material.velocity_temperature_coefficient_m_s_k.is_none() {
+                return Err(self.place.fault(
+                    table,
+                    name,
+                    "changes nothing without the material's coefficient",
+                    &format!("add [material] {coefficient}, or leave this out"),
+                ));
+            }
+        }
+        if self.keys.part.temperature_standard_uncertainty_k.is_some() && self.keys.part.temperature_c.is_none() {
+            return Err(self.place.fault(
+                "part",
+                "temperature_standard_uncertainty_k",
+                "belongs to a temperature that is not stated",
+                "add temperature_c, or leave this out",
+            ));
+        }
+        if !self.keys.pulse_quality().is_possible() {
+            return Err(self.place.fault(
+                "probe",
+                "reference_pulse_noise_percent",
+                "and mismatch must be from 0 to 100",
+                "calibrate again",
+            ));
+        }
+        if let Some(limits) = &self.keys.limits
+            && limits.guard_band_factor.is_some()
+            && limits.wrong_decision_probability.is_some()
+        {
+            return Err(self.place.fault(
+                "limits",
+                "wrong_decision_probability",
+                "stands beside guard_band_factor, and both say how wide the guard band is",
+                "state one of them",
+            ));
+        }
         if let Some(calibration) = &self.keys.calibration
             && calibration.from_mm.is_some() != calibration.to_mm.is_some()
         {
@@ -297,6 +243,27 @@ impl SetupFile {
         }
     }
 
+    /// The limits of the place, if the file has the table.
+    ///
+    /// # Errors
+    /// The first key whose value cannot be used.
+    pub fn limits(&self) -> Result<Option<Limits>, InputError> {
+        let Some(limits) = self.keys.to_limits() else {
+            return Ok(None);
+        };
+        let Some(error) = limits.check() else {
+            return Ok(Some(limits));
+        };
+        let name = match error {
+            LimitsError::Minimum => "minimum_mm",
+            LimitsError::Warning => "warning_mm",
+            LimitsError::Maximum => "maximum_mm",
+            _ if self.keys.limits.as_ref().is_some_and(|l| l.guard_band_factor.is_some()) => "guard_band_factor",
+            _ => "wrong_decision_probability",
+        };
+        Err(self.place.fault("limits", name, error.sentence(), "correct this value"))
+    }
+
     /// Where a set-up error of the core stands in the file.
     #[must_use]
     pub fn locate(&self, error: SetupError) -> InputError {
@@ -308,6 +275,11 @@ impl SetupFile {
             SetupError::CouplantFilm => ("probe", "couplant_film_um"),
             SetupError::Velocity => ("material", "velocity_m_s"),
             SetupError::VelocityUncertainty => ("material", "velocity_standard_uncertainty_m_s"),
+            SetupError::PartVelocityUncertainty => ("material", "part_velocity_standard_uncertainty_m_s"),
+            SetupError::TemperatureCoefficient => ("material", "velocity_temperature_coefficient_m_s_k"),
+            SetupError::ReferenceTemperature => ("material", "velocity_temperature_c"),
+            SetupError::PartTemperature => ("part", "temperature_c"),
+            SetupError::PulseQuality => ("probe", "reference_pulse_noise_percent"),
             SetupError::ZeroOffset => ("zero", "offset_ns"),
             SetupError::ZeroUncertainty => ("zero", "standard_uncertainty_ns"),
             SetupError::ZeroCorrelation => ("calibration", "velocity_zero_correlation"),
@@ -390,121 +362,11 @@ impl SetupFile {
     ) -> Result<Gauge<'w>, InputError> {
         let mut gauge = Gauge::new(self.gauge_setup()?, workspace).map_err(|error| self.locate(error))?;
         if let Some(pulse) = pulse {
-            gauge.learn_pulse(pulse).map_err(|error| self.locate(error))?;
+            gauge
+                .learn_pulse_of_quality(pulse, self.keys.pulse_quality())
+                .map_err(|error| self.locate(error))?;
         }
         Ok(gauge)
-    }
-}
-
-impl SetupKeys {
-    fn from_document(document: &Document<'_>) -> Result<Self, InputError> {
-        let needed_word = |table, name| document.missing(table, name);
-        Ok(Self {
-            record: RecordKeys {
-                sample_rate_mhz: document.needed_number("record", "sample_rate_mhz")?,
-                first_sample_us: document.number("record", "first_sample_us")?,
-                bits: document.small_integer("record", "bits")?,
-                codes: document.word("record", "codes", CODES)?.unwrap_or_default(),
-                full_scale: document.number("record", "full_scale")?,
-            },
-            probe: ProbeKeys {
-                kind: document
-                    .word("probe", "kind", KINDS)?
-                    .ok_or_else(|| needed_word("probe", "kind"))?,
-                centre_frequency_mhz: document.needed_number("probe", "centre_frequency_mhz")?,
-                relative_bandwidth_percent: document.needed_number("probe", "relative_bandwidth_percent")?,
-                element_diameter_mm: document.number("probe", "element_diameter_mm")?,
-                face: document.word("probe", "face", FACES)?,
-                couplant_film_um: document.number("probe", "couplant_film_um")?.unwrap_or(2.0),
-                reference_pulse: document.text("probe", "reference_pulse")?,
-            },
-            material: MaterialKeys {
-                name: document.text("material", "name")?,
-                velocity_m_s: document.needed_number("material", "velocity_m_s")?,
-                velocity_standard_uncertainty_m_s: document
-                    .needed_number("material", "velocity_standard_uncertainty_m_s")?,
-            },
-            coating_velocity_m_s: if document.has_table("coating") {
-                Some(document.needed_number("coating", "velocity_m_s")?)
-            } else {
-                None
-            },
-            zero: ZeroKeys {
-                offset_ns: document.number("zero", "offset_ns")?.unwrap_or(0.0),
-                standard_uncertainty_ns: document.number("zero", "standard_uncertainty_ns")?,
-                reference_pulse_checksum: document.text("zero", "reference_pulse_checksum")?,
-            },
-            measure: MeasureKeys {
-                span: document
-                    .word("measure", "span", SPANS)?
-                    .ok_or_else(|| needed_word("measure", "span"))?,
-                from_us: document.needed_number("measure", "from_us")?,
-                to_us: document.number("measure", "to_us")?,
-                coverage_factor: document.number("measure", "coverage_factor")?.unwrap_or(2.0),
-            },
-            calibration: if document.has_table("calibration") {
-                Some(CalibrationKeys {
-                    velocity_zero_correlation: document.number("calibration", "velocity_zero_correlation")?,
-                    from_mm: document.number("calibration", "from_mm")?,
-                    to_mm: document.number("calibration", "to_mm")?,
-                    blocks_mm: document.numbers("calibration", "blocks_mm")?,
-                    temperature_c: document.number("calibration", "temperature_c")?,
-                    date: document.text("calibration", "date")?,
-                })
-            } else {
-                None
-            },
-        })
-    }
-
-    /// The core's set-up, unchecked.
-    fn to_gauge_setup(&self) -> GaugeSetup {
-        let centre = Hertz::from_mhz(self.probe.centre_frequency_mhz as f32);
-        let bandwidth = (self.probe.relative_bandwidth_percent / 100.0) as f32;
-        let mut probe = match self.probe.kind {
-            ProbeKind::Contact => Probe::contact(centre, bandwidth),
-            ProbeKind::DelayLine => Probe::delay_line(centre, bandwidth),
-            ProbeKind::DualElement => Probe::dual_element(centre, bandwidth),
-        };
-        probe.element_diameter = self.probe.element_diameter_mm.map(|mm| Metres::from_mm(mm as f32));
-        probe.face = self.probe.face.unwrap_or(probe.face);
-        probe.couplant_film = Metres::new((self.probe.couplant_film_um * 1e-6) as f32);
-        let calibration = self.calibration.as_ref();
-        // An offset without a stated uncertainty: an unknown one where it only serves to check (a second
-        // of uncertainty contradicts nothing), an exact one between two echoes of the same record.
-        let unstated = match self.measure.span {
-            Span::InterfaceToBackWall => 0.0,
-            _ => 1e9,
-        };
-        GaugeSetup {
-            sample_rate: Hertz::from_mhz(self.record.sample_rate_mhz as f32),
-            probe,
-            material: Material::new(
-                MetresPerSecond::new(self.material.velocity_m_s as f32),
-                MetresPerSecond::new(self.material.velocity_standard_uncertainty_m_s as f32),
-            ),
-            zero: Zero {
-                offset: Seconds::from_ns(self.zero.offset_ns as f32),
-                standard_uncertainty: Seconds::from_ns(self.zero.standard_uncertainty_ns.unwrap_or(unstated) as f32),
-                velocity_correlation: calibration.and_then(|c| c.velocity_zero_correlation).unwrap_or(0.0) as f32,
-            },
-            span: self.measure.span,
-            window: Window {
-                from: Seconds::from_us(self.measure.from_us as f32),
-                // A second: longer than any record.
-                to: Seconds::from_us(self.measure.to_us.unwrap_or(1e6) as f32),
-            },
-            coverage_factor: self.measure.coverage_factor as f32,
-            coating: self.coating_velocity_m_s.map(|velocity| Coating {
-                velocity: MetresPerSecond::new(velocity as f32),
-            }),
-            calibrated: calibration.and_then(|c| {
-                Some(CalibratedRange {
-                    from: Metres::from_mm(c.from_mm? as f32),
-                    to: Metres::from_mm(c.to_mm? as f32),
-                })
-            }),
-        }
     }
 }
 

@@ -1,4 +1,5 @@
 use super::*;
+use halfpulse::{Coating, Hertz, Material, Metres, MetresPerSecond, Probe, Seconds, Window, Zero};
 use proptest::prelude::*;
 use tempfile::TempDir;
 
@@ -185,6 +186,61 @@ fn every_fault_names_line_and_remedy() {
             "s.toml:26: [calibration] blocks_mm: is not a list",
         ),
         ("[coating]", "[material]", "s.toml:16: "),
+        (
+            "[coating]",
+            "part_velocity_standard_uncertainty_m_s = -1\n[coating]",
+            "s.toml:16: [material] part_velocity_standard_uncertainty_m_s: ",
+        ),
+        (
+            "[coating]",
+            "velocity_temperature_coefficient_m_s_k = nan\n[coating]",
+            "s.toml:16: [material] velocity_temperature_coefficient_m_s_k: ",
+        ),
+        (
+            "[coating]",
+            "[part]\ntemperature_c = 60\n[coating]",
+            "s.toml:17: [part] temperature_c: changes nothing without",
+        ),
+        (
+            "[coating]",
+            "velocity_temperature_coefficient_m_s_k = -0.8\n[part]\ntemperature_c = 6e4\n[coating]",
+            "s.toml:18: [part] temperature_c: ",
+        ),
+        (
+            "[coating]",
+            "[part]\ntemperature_standard_uncertainty_k = 1\n[coating]",
+            "s.toml:17: [part] temperature_standard_uncertainty_k: belongs to",
+        ),
+        (
+            "[coating]",
+            "[limits]\nwarning_mm = 6\n[coating]",
+            "s.toml:16: [limits] minimum_mm: is missing",
+        ),
+        (
+            "[coating]",
+            "[limits]\nminimum_mm = 5\nwarning_mm = 4\n[coating]",
+            "s.toml:18: [limits] warning_mm: the warning limit must not",
+        ),
+        (
+            "[coating]",
+            "[limits]\nminimum_mm = 5\nmaximum_mm = 4\n[coating]",
+            "s.toml:18: [limits] maximum_mm: ",
+        ),
+        (
+            "[coating]",
+            "[limits]\nminimum_mm = 5\nguard_band_factor = 11\n[coating]",
+            "s.toml:18: [limits] guard_band_factor: ",
+        ),
+        (
+            "[coating]",
+            "[limits]\nminimum_mm = 5\nguard_band_factor = 1\nwrong_decision_probability = 0.05\n[coating]",
+            "s.toml:19: [limits] wrong_decision_probability: stands beside",
+        ),
+        (
+            "[material]",
+            "reference_pulse_noise_percent = 101\n[material]",
+            "s.toml:12: [probe] reference_pulse_noise_percent: ",
+        ),
     ] {
         let text = parse(&EXAMPLE.replacen(from, to, 1)).expect_err(to).to_string();
         assert!(text.contains(expected), "{to}: {text}");
@@ -193,6 +249,27 @@ fn every_fault_names_line_and_remedy() {
     assert!(parse("").unwrap_err().to_string().contains("version: is missing"));
     let missing = SetupFile::read(Path::new("no/such.toml")).unwrap_err().to_string();
     assert!(missing.contains("no such file"), "{missing}");
+}
+
+#[test]
+fn temperature_and_limits_reach_the_core() {
+    let text = EXAMPLE.replace(
+        "[coating]",
+        "part_velocity_standard_uncertainty_m_s = 9\nvelocity_temperature_coefficient_m_s_k = -0.8\n[part]\n\
+         temperature_c = 70\n[limits]\nminimum_mm = 5\nwarning_mm = 6\n[coating]",
+    );
+    let file = parse(&text).unwrap();
+    let material = file.gauge_setup().unwrap().material;
+    assert_eq!(material.part_velocity_standard_uncertainty, MetresPerSecond::new(9.0));
+    // 5920 - 0.8 x 50, and a fifth of 0.8 times 50 with 0.8 times 1 K: by hand.
+    assert_eq!(material.velocity_in_part(), MetresPerSecond::new(5880.0));
+    assert!((material.temperature_uncertainty().get() - 8.039_9).abs() < 1e-4);
+    let limits = Limits::minimum(Metres::from_mm(5.0)).with_warning(Metres::from_mm(6.0));
+    assert_eq!(file.limits().unwrap(), Some(limits));
+    assert_eq!(parse(&EXAMPLE).unwrap().limits().unwrap(), None);
+    let unknown = parse(&text.replace("temperature_c = 70", "")).unwrap();
+    let material = unknown.gauge_setup().unwrap().material;
+    assert!(material.temperature.is_some_and(|follows| follows.part.is_none()));
 }
 
 #[test]
@@ -255,12 +332,29 @@ fn every_key_is_described_and_written() {
             face: Some(ProbeFace::Hard),
             couplant_film_um: 3.0,
             reference_pulse: Some("a \"b\" \\ c\u{7}.npy".to_string()),
+            reference_pulse_noise_percent: Some(0.25),
+            reference_pulse_mismatch_percent: Some(1.5),
         },
         material: MaterialKeys {
             name: Some("Stahl, größer".to_string()),
             velocity_m_s: 5920.0,
             velocity_standard_uncertainty_m_s: 17.0,
+            part_velocity_standard_uncertainty_m_s: Some(9.0),
+            velocity_temperature_coefficient_m_s_k: Some(-0.8),
+            velocity_temperature_coefficient_standard_uncertainty_m_s_k: Some(0.1),
+            velocity_temperature_c: Some(21.0),
         },
+        part: PartKeys {
+            temperature_c: Some(60.0),
+            temperature_standard_uncertainty_k: Some(2.0),
+        },
+        limits: Some(LimitsKeys {
+            minimum_mm: 5.0,
+            warning_mm: Some(6.0),
+            maximum_mm: Some(12.0),
+            guard_band_factor: None,
+            wrong_decision_probability: Some(0.05),
+        }),
         coating_velocity_m_s: Some(2300.0),
         zero: ZeroKeys {
             offset_ns: 12.345,
@@ -284,6 +378,13 @@ fn every_key_is_described_and_written() {
     };
     let text = full.to_toml();
     assert_eq!(parse(&text).unwrap().keys, full, "{text}");
+    let mut other = full.clone();
+    if let Some(limits) = &mut other.limits {
+        limits.guard_band_factor = Some(1.5);
+        limits.wrong_decision_probability = None;
+    }
+    assert_eq!(parse(&other.to_toml()).unwrap().keys, other);
+    let text = text + &other.to_toml();
     for key in keys::KEYS {
         assert!(
             text.contains(&format!("# {}\n{} = ", key.about, key.name)),

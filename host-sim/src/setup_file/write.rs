@@ -29,7 +29,7 @@ fn quoted(text: &str) -> String {
 impl SetupKeys {
     /// The value of one key as it stands in a file; `None` leaves it out.
     fn value_of(&self, table: &str, name: &str) -> Option<String> {
-        let calibration = self.calibration.as_ref();
+        let (calibration, limits) = (self.calibration.as_ref(), self.limits.as_ref());
         let word = |text: &str| Some(quoted(text));
         match (table, name) {
             ("", "version") => Some("1".to_string()),
@@ -45,10 +45,32 @@ impl SetupKeys {
             ("probe", "face") => self.probe.face.and_then(|face| word(word_of(FACES, face))),
             ("probe", "couplant_film_um") => Some(number(self.probe.couplant_film_um)),
             ("probe", "reference_pulse") => self.probe.reference_pulse.as_deref().and_then(word),
+            ("probe", "reference_pulse_noise_percent") => self.probe.reference_pulse_noise_percent.map(number),
+            ("probe", "reference_pulse_mismatch_percent") => self.probe.reference_pulse_mismatch_percent.map(number),
             ("material", "name") => self.material.name.as_deref().and_then(word),
             ("material", "velocity_m_s") => Some(number(self.material.velocity_m_s)),
             ("material", "velocity_standard_uncertainty_m_s") => {
                 Some(number(self.material.velocity_standard_uncertainty_m_s))
+            }
+            ("material", "part_velocity_standard_uncertainty_m_s") => {
+                self.material.part_velocity_standard_uncertainty_m_s.map(number)
+            }
+            ("material", "velocity_temperature_coefficient_m_s_k") => {
+                self.material.velocity_temperature_coefficient_m_s_k.map(number)
+            }
+            ("material", "velocity_temperature_coefficient_standard_uncertainty_m_s_k") => self
+                .material
+                .velocity_temperature_coefficient_standard_uncertainty_m_s_k
+                .map(number),
+            ("material", "velocity_temperature_c") => self.material.velocity_temperature_c.map(number),
+            ("part", "temperature_c") => self.part.temperature_c.map(number),
+            ("part", "temperature_standard_uncertainty_k") => self.part.temperature_standard_uncertainty_k.map(number),
+            ("limits", "minimum_mm") => limits.map(|limits| number(limits.minimum_mm)),
+            ("limits", "warning_mm") => limits.and_then(|limits| limits.warning_mm).map(number),
+            ("limits", "maximum_mm") => limits.and_then(|limits| limits.maximum_mm).map(number),
+            ("limits", "guard_band_factor") => limits.and_then(|limits| limits.guard_band_factor).map(number),
+            ("limits", "wrong_decision_probability") => {
+                limits.and_then(|limits| limits.wrong_decision_probability).map(number)
             }
             ("coating", "velocity_m_s") => self.coating_velocity_m_s.map(number),
             ("zero", "offset_ns") => Some(number(self.zero.offset_ns)),

@@ -4,8 +4,15 @@
 //! [`GaugeSetup::new`] in a `const` stops the build with the sentence that names the field, while
 //! [`GaugeSetup::try_new`] returns a [`SetupError`] for a set-up that comes from a file or a menu.
 
-use crate::units::{Hertz, Metres, MetresPerSecond, Seconds};
-use core::fmt;
+mod error;
+mod material;
+mod probe;
+
+pub use error::SetupError;
+pub use material::{Material, PartTemperature, UNKNOWN_TEMPERATURE, VelocityTemperature};
+pub use probe::{Probe, ProbeFace, ProbeKind};
+
+use crate::units::{Celsius, Hertz, Metres, MetresPerSecond, Seconds};
 
 /// Longest reference pulse, in samples. A pulse that needs more is refused with
 /// [`SetupError::PulseTooLong`]: lower the sample rate or average neighbouring samples.
@@ -17,6 +24,11 @@ const fn within(value: f32, low: f32, high: f32) -> bool {
     value >= low && value <= high
 }
 
+/// From absolute zero to where no probe lives.
+const fn is_temperature(temperature: Celsius) -> bool {
+    within(temperature.get(), -273.15, 3000.0)
+}
+
 /// Which two events the thickness is read between.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
 pub enum Span {
@@ -26,144 +38,6 @@ pub enum Span {
     InterfaceToBackWall,
     /// 2 d / c = the period of the back-wall train; the zero offset is only used to check.
     BackWallToBackWall,
-}
-
-/// How the probe meets the part.
-#[derive(Clone, Copy, Debug, PartialEq, Eq)]
-pub enum ProbeKind {
-    /// The element sits on the part, with a wear plate and a couplant film between.
-    Contact,
-    /// A delay line or a water path stands between; its end gives an interface echo.
-    DelayLine,
-    /// A transmitter and a receiver under an angle: the sound path is a V.
-    DualElement,
-}
-
-/// What touches the couplant: decides how much a film of it shifts the echo.
-#[derive(Clone, Copy, Debug, PartialEq, Eq)]
-pub enum ProbeFace {
-    /// Ceramic wear plate, about 38.5 MRayl.
-    Hard,
-    /// Plastic (polystyrene or alike), about 2.5 MRayl.
-    Plastic,
-}
-
-/// The probe as its data sheet describes it.
-#[derive(Clone, Copy, Debug, PartialEq)]
-pub struct Probe {
-    /// How it meets the part.
-    pub kind: ProbeKind,
-    /// Arithmetic middle of the -6 dB limits of the two-way spectrum.
-    pub centre_frequency: Hertz,
-    /// -6 dB width of the two-way spectrum over the centre frequency: 0.6 is 60 %. Above 0, up to 2.
-    pub relative_bandwidth: f32,
-    /// Diameter of the active element, if known: without it the budget has no term for the beam.
-    pub element_diameter: Option<Metres>,
-    /// What touches the couplant.
-    pub face: ProbeFace,
-    /// How far the couplant film may differ from the film that the zero was learned with. The
-    /// uncertainty's coupling term follows from it; 0 leaves it out.
-    pub couplant_film: Metres,
-}
-
-impl Probe {
-    const fn of_kind(kind: ProbeKind, face: ProbeFace, centre_frequency: Hertz, relative_bandwidth: f32) -> Self {
-        Self {
-            kind,
-            centre_frequency,
-            relative_bandwidth,
-            element_diameter: None,
-            face,
-            couplant_film: Metres::new(2e-6),
-        }
-    }
-
-    /// A contact probe with a hard face and 2 µm of uncertain couplant film.
-    #[must_use]
-    pub const fn contact(centre_frequency: Hertz, relative_bandwidth: f32) -> Self {
-        Self::of_kind(
-            ProbeKind::Contact,
-            ProbeFace::Hard,
-            centre_frequency,
-            relative_bandwidth,
-        )
-    }
-
-    /// A probe with a plastic delay line (or a water path) and 2 µm of uncertain couplant film.
-    #[must_use]
-    pub const fn delay_line(centre_frequency: Hertz, relative_bandwidth: f32) -> Self {
-        Self::of_kind(
-            ProbeKind::DelayLine,
-            ProbeFace::Plastic,
-            centre_frequency,
-            relative_bandwidth,
-        )
-    }
-
-    /// A dual-element probe. Its V-shaped path is not corrected yet: every reading carries
-    /// [`crate::outcome::Doubt::VPathUncorrected`].
-    #[must_use]
-    pub const fn dual_element(centre_frequency: Hertz, relative_bandwidth: f32) -> Self {
-        Self::of_kind(
-            ProbeKind::DualElement,
-            ProbeFace::Plastic,
-            centre_frequency,
-            relative_bandwidth,
-        )
-    }
-
-    /// The same probe with a known element diameter.
-    #[must_use]
-    pub const fn with_element_diameter(mut self, diameter: Metres) -> Self {
-        self.element_diameter = Some(diameter);
-        self
-    }
-
-    /// The same probe with another bound on the couplant film's change.
-    #[must_use]
-    pub const fn with_couplant_film(mut self, film: Metres) -> Self {
-        self.couplant_film = film;
-        self
-    }
-
-    /// The same probe with another face.
-    #[must_use]
-    pub const fn with_face(mut self, face: ProbeFace) -> Self {
-        self.face = face;
-        self
-    }
-
-    /// -6 dB width of the spectrum.
-    #[must_use]
-    pub const fn bandwidth(&self) -> Hertz {
-        Hertz::new(self.centre_frequency.get() * self.relative_bandwidth)
-    }
-
-    /// Upper -6 dB limit of the spectrum.
-    #[must_use]
-    pub const fn upper_frequency(&self) -> Hertz {
-        Hertz::new(self.centre_frequency.get() * (1.0 + 0.5 * self.relative_bandwidth))
-    }
-}
-
-/// The part's material.
-#[derive(Clone, Copy, Debug, PartialEq)]
-pub struct Material {
-    /// Velocity of longitudinal waves in the part.
-    pub velocity: MetresPerSecond,
-    /// Its standard uncertainty (k = 1), for the part and not only for a block.
-    pub velocity_standard_uncertainty: MetresPerSecond,
-}
-
-impl Material {
-    /// A material with its velocity and the velocity's standard uncertainty.
-    #[must_use]
-    pub const fn new(velocity: MetresPerSecond, velocity_standard_uncertainty: MetresPerSecond) -> Self {
-        Self {
-            velocity,
-            velocity_standard_uncertainty,
-        }
-    }
 }
 
 /// A coating between probe and part.
@@ -310,6 +184,12 @@ impl GaugeSetup {
         self
     }
 
+    /// The velocity that a thickness is made with: the material's, at the part's temperature where both are known.
+    #[must_use]
+    pub const fn velocity(&self) -> MetresPerSecond {
+        self.material.velocity_in_part()
+    }
+
     /// Samples per cycle of the centre frequency.
     #[must_use]
     pub const fn samples_per_cycle(&self) -> f32 {
@@ -350,6 +230,26 @@ impl GaugeSetup {
         if !within(velocity_uncertainty.get(), 0.0, 1e6) {
             return Some(SetupError::VelocityUncertainty);
         }
+        if !within(self.material.part_velocity_standard_uncertainty.get(), 0.0, 1e6) {
+            return Some(SetupError::PartVelocityUncertainty);
+        }
+        if let Some(follows) = &self.material.temperature {
+            if !(within(follows.coefficient, -1e3, 1e3) && within(follows.coefficient_standard_uncertainty, 0.0, 1e3)) {
+                return Some(SetupError::TemperatureCoefficient);
+            }
+            if !is_temperature(follows.reference) {
+                return Some(SetupError::ReferenceTemperature);
+            }
+            if let Some(part) = &follows.part {
+                if !(is_temperature(part.temperature) && within(part.standard_uncertainty.get(), 0.0, 1e3)) {
+                    return Some(SetupError::PartTemperature);
+                }
+                // A straight line that was drawn out too far.
+                if !within(self.velocity().get(), 1.0, 1e6) {
+                    return Some(SetupError::TemperatureCoefficient);
+                }
+            }
+        }
         if !within(self.zero.offset.get(), -1.0, 1.0) {
             return Some(SetupError::ZeroOffset);
         }
@@ -383,97 +283,6 @@ impl GaugeSetup {
         None
     }
 }
-
-/// What is wrong with a set-up: the caller's fault, found at build or at start.
-#[derive(Clone, Copy, Debug, PartialEq, Eq)]
-#[non_exhaustive]
-#[cfg_attr(feature = "defmt", derive(defmt::Format))]
-pub enum SetupError {
-    /// The sample rate is not a positive number.
-    SampleRate,
-    /// The sample rate is below twice the upper band limit.
-    SampleRateBelowBand,
-    /// The centre frequency is not a positive number.
-    CentreFrequency,
-    /// The relative bandwidth is not above 0 and up to 200 %.
-    RelativeBandwidth,
-    /// The element diameter is not a positive number.
-    ElementDiameter,
-    /// The couplant film is negative or not a number.
-    CouplantFilm,
-    /// The velocity is not a positive number.
-    Velocity,
-    /// The velocity's uncertainty is negative or not a number.
-    VelocityUncertainty,
-    /// The zero offset is not a number.
-    ZeroOffset,
-    /// The zero's uncertainty is negative or not a number.
-    ZeroUncertainty,
-    /// The correlation of velocity and zero is not between -1 and 1.
-    ZeroCorrelation,
-    /// The window's start does not lie before its end.
-    Window,
-    /// The coverage factor is not a positive number.
-    CoverageFactor,
-    /// The coating's velocity is not a positive number.
-    CoatingVelocity,
-    /// The calibrated range is empty, reversed or not positive.
-    CalibratedRange,
-    /// The reference pulse needs more than [`PULSE_CAPACITY`] samples.
-    PulseTooLong,
-    /// The reference pulse has no echo in it: too short, all zero, or not numbers.
-    PulseEmpty,
-    /// The caller's scratch memory is too small; the numbers are samples of a record.
-    WorkspaceTooSmall {
-        /// What is needed.
-        needed: u32,
-        /// What was given.
-        got: u32,
-    },
-}
-
-impl SetupError {
-    /// The field and the remedy, in one sentence.
-    #[must_use]
-    pub const fn sentence(&self) -> &'static str {
-        match self {
-            Self::SampleRate => "sample rate must be a positive number of hertz, up to 1e12",
-            Self::SampleRateBelowBand => {
-                "sample rate must be at least twice the probe's upper -6 dB frequency: sample faster or use a lower probe"
-            }
-            Self::CentreFrequency => "centre frequency must be a positive number of hertz, up to 1e12",
-            Self::RelativeBandwidth => "relative bandwidth must be above 0 and at most 200 %",
-            Self::ElementDiameter => "element diameter must be a positive length up to 1 km, or left out if unknown",
-            Self::CouplantFilm => "couplant film must be zero or a positive length up to 1 m",
-            Self::Velocity => "velocity must be a positive number of metres per second, from 1 to 1e6",
-            Self::VelocityUncertainty => "velocity standard uncertainty must be zero or positive, up to 1e6 m/s",
-            Self::ZeroOffset => "zero offset must be a number of seconds, less than 1",
-            Self::ZeroUncertainty => "zero standard uncertainty must be zero or positive, less than 1 s",
-            Self::ZeroCorrelation => "correlation of velocity and zero must lie between -1 and 1",
-            Self::Window => "the window must start before it ends",
-            Self::CoverageFactor => "coverage factor must be a positive number up to 1000, normally 2",
-            Self::CoatingVelocity => "coating velocity must be a positive number of metres per second, from 1 to 1e6",
-            Self::CalibratedRange => "calibrated range must go from a positive thickness to one not below it",
-            Self::PulseTooLong => {
-                "the reference pulse is longer than the gauge can hold: lower the sample rate or use a wider band"
-            }
-            Self::PulseEmpty => "the reference pulse holds no echo: learn it again on a block",
-            Self::WorkspaceTooSmall { .. } => "the scratch memory is smaller than the record",
-        }
-    }
-}
-
-impl fmt::Display for SetupError {
-    fn fmt(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
-        f.write_str(self.sentence())?;
-        if let Self::WorkspaceTooSmall { needed, got } = self {
-            write!(f, " (needed {needed} samples, got {got})")?;
-        }
-        Ok(())
-    }
-}
-
-impl core::error::Error for SetupError {}
 
 #[cfg(test)]
 mod tests {
@@ -530,6 +339,24 @@ mod tests {
             spoilt(|s| s.material.velocity_standard_uncertainty = MetresPerSecond::new(f32::NAN)),
             Some(SetupError::VelocityUncertainty)
         );
+        assert_eq!(
+            spoilt(|s| s.material.part_velocity_standard_uncertainty = MetresPerSecond::new(-1.0)),
+            Some(SetupError::PartVelocityUncertainty)
+        );
+        let warm = |coefficient, reference, part, uncertainty| {
+            let follows = VelocityTemperature::new(coefficient, Celsius::new(reference));
+            let follows = follows.with_part(Celsius::new(part), Celsius::new(uncertainty));
+            spoilt(|s| s.material.temperature = Some(follows))
+        };
+        assert_eq!(warm(-0.8, 20.0, 60.0, 1.0), None);
+        assert_eq!(
+            warm(f32::NAN, 20.0, 60.0, 1.0),
+            Some(SetupError::TemperatureCoefficient)
+        );
+        assert_eq!(warm(-500.0, 20.0, 60.0, 1.0), Some(SetupError::TemperatureCoefficient));
+        assert_eq!(warm(-0.8, -300.0, 60.0, 1.0), Some(SetupError::ReferenceTemperature));
+        assert_eq!(warm(-0.8, 20.0, 1e5, 1.0), Some(SetupError::PartTemperature));
+        assert_eq!(warm(-0.8, 20.0, 60.0, -1.0), Some(SetupError::PartTemperature));
         assert_eq!(
             spoilt(|s| s.zero.offset = Seconds::new(f32::INFINITY)),
             Some(SetupError::ZeroOffset)

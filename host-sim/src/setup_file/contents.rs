@@ -1,0 +1,340 @@
+//! What a set-up file says, table by table: from the document, and to what the core takes.
+
+use super::document::Document;
+use super::{CODES, FACES, KINDS, SPANS};
+use crate::input_error::InputError;
+use crate::record_file::CodeKind;
+use halfpulse::echo::pulse::PulseQuality;
+use halfpulse::{
+    CalibratedRange, Celsius, Coating, GaugeSetup, Guard, Hertz, Limits, Material, Metres, MetresPerSecond, Probe,
+    ProbeFace, ProbeKind, Seconds, Span, VelocityTemperature, Window, Zero,
+};
+
+/// `[record]`: what the converter's numbers mean.
+#[derive(Clone, Debug, PartialEq)]
+pub struct RecordKeys {
+    /// Samples per microsecond.
+    pub sample_rate_mhz: f64,
+    /// Time of the first sample after the trigger; `None`: what the record's file says, else 0.
+    pub first_sample_us: Option<f64>,
+    /// The converter's bits.
+    pub bits: Option<u8>,
+    /// How codes stand for voltages.
+    pub codes: CodeKind,
+    /// Full scale of floats.
+    pub full_scale: Option<f64>,
+}
+
+/// `[probe]`.
+#[derive(Clone, Debug, PartialEq)]
+pub struct ProbeKeys {
+    /// How it meets the part.
+    pub kind: ProbeKind,
+    /// Middle of the -6 dB limits.
+    pub centre_frequency_mhz: f64,
+    /// -6 dB width over the centre frequency.
+    pub relative_bandwidth_percent: f64,
+    /// Diameter of the element, if known.
+    pub element_diameter_mm: Option<f64>,
+    /// What touches the couplant; `None`: by kind.
+    pub face: Option<ProbeFace>,
+    /// Uncertain couplant film.
+    pub couplant_film_um: f64,
+    /// File of the learned pulse, relative to the set-up file.
+    pub reference_pulse: Option<String>,
+    /// The learned pulse's own noise.
+    pub reference_pulse_noise_percent: Option<f64>,
+    /// How far other shots' echoes differ from it.
+    pub reference_pulse_mismatch_percent: Option<f64>,
+}
+
+/// `[material]`.
+#[derive(Clone, Debug, PartialEq)]
+pub struct MaterialKeys {
+    /// Its name, only shown.
+    pub name: Option<String>,
+    /// Velocity of longitudinal waves.
+    pub velocity_m_s: f64,
+    /// Its standard uncertainty.
+    pub velocity_standard_uncertainty_m_s: f64,
+    /// How far the part's may differ from the blocks'.
+    pub part_velocity_standard_uncertainty_m_s: Option<f64>,
+    /// How it changes with temperature; `None` leaves temperature out.
+    pub velocity_temperature_coefficient_m_s_k: Option<f64>,
+    /// The coefficient's standard uncertainty.
+    pub velocity_temperature_coefficient_standard_uncertainty_m_s_k: Option<f64>,
+    /// The temperature that it holds at.
+    pub velocity_temperature_c: Option<f64>,
+}
+
+/// `[part]`: what is known of the part, besides its material.
+#[derive(Clone, Debug, PartialEq, Default)]
+pub struct PartKeys {
+    /// Its temperature.
+    pub temperature_c: Option<f64>,
+    /// The temperature's standard uncertainty.
+    pub temperature_standard_uncertainty_k: Option<f64>,
+}
+
+/// `[limits]`: between which thicknesses the wall shall be.
+#[derive(Clone, Debug, PartialEq, Default)]
+pub struct LimitsKeys {
+    /// Not thinner.
+    pub minimum_mm: f64,
+    /// Below this somebody wants to know.
+    pub warning_mm: Option<f64>,
+    /// Not thicker.
+    pub maximum_mm: Option<f64>,
+    /// Guard band in expanded uncertainties.
+    pub guard_band_factor: Option<f64>,
+    /// Or by the probability of a wrong decision.
+    pub wrong_decision_probability: Option<f64>,
+}
+
+/// `[zero]`.
+#[derive(Clone, Debug, PartialEq, Default)]
+pub struct ZeroKeys {
+    /// Where the part's front surface lies.
+    pub offset_ns: f64,
+    /// Its standard uncertainty, if stated.
+    pub standard_uncertainty_ns: Option<f64>,
+    /// Checksum of the pulse that it was learned with.
+    pub reference_pulse_checksum: Option<String>,
+}
+
+/// `[measure]`.
+#[derive(Clone, Debug, PartialEq)]
+pub struct MeasureKeys {
+    /// Between which events the thickness is read.
+    pub span: Span,
+    /// Start of the window.
+    pub from_us: f64,
+    /// End of the window; `None`: the record's end.
+    pub to_us: Option<f64>,
+    /// k.
+    pub coverage_factor: f64,
+}
+
+/// `[calibration]`: what calibrate has found out.
+#[derive(Clone, Debug, PartialEq, Default)]
+pub struct CalibrationKeys {
+    /// Correlation of the errors of velocity and zero.
+    pub velocity_zero_correlation: Option<f64>,
+    /// Thinnest thickness covered, with the next.
+    pub from_mm: Option<f64>,
+    /// Thickest thickness covered.
+    pub to_mm: Option<f64>,
+    /// The blocks, only shown.
+    pub blocks_mm: Vec<f64>,
+    /// Their temperature, only shown.
+    pub temperature_c: Option<f64>,
+    /// The day, only shown.
+    pub date: Option<String>,
+}
+
+/// Everything that a set-up file says.
+#[derive(Clone, Debug, PartialEq)]
+pub struct SetupKeys {
+    /// `[record]`
+    pub record: RecordKeys,
+    /// `[probe]`
+    pub probe: ProbeKeys,
+    /// `[material]`
+    pub material: MaterialKeys,
+    /// `[coating] velocity_m_s`, if the table is there.
+    pub coating_velocity_m_s: Option<f64>,
+    /// `[zero]`
+    pub zero: ZeroKeys,
+    /// `[part]`
+    pub part: PartKeys,
+    /// `[measure]`
+    pub measure: MeasureKeys,
+    /// `[limits]`
+    pub limits: Option<LimitsKeys>,
+    /// `[calibration]`
+    pub calibration: Option<CalibrationKeys>,
+}
+
+impl SetupKeys {
+    pub(super) fn from_document(document: &Document<'_>) -> Result<Self, InputError> {
+        let needed_word = |table, name| document.missing(table, name);
+        Ok(Self {
+            record: RecordKeys {
+                sample_rate_mhz: document.needed_number("record", "sample_rate_mhz")?,
+                first_sample_us: document.number("record", "first_sample_us")?,
+                bits: document.small_integer("record", "bits")?,
+                codes: document.word("record", "codes", CODES)?.unwrap_or_default(),
+                full_scale: document.number("record", "full_scale")?,
+            },
+            probe: ProbeKeys {
+                kind: document
+                    .word("probe", "kind", KINDS)?
+                    .ok_or_else(|| needed_word("probe", "kind"))?,
+                centre_frequency_mhz: document.needed_number("probe", "centre_frequency_mhz")?,
+                relative_bandwidth_percent: document.needed_number("probe", "relative_bandwidth_percent")?,
+                element_diameter_mm: document.number("probe", "element_diameter_mm")?,
+                face: document.word("probe", "face", FACES)?,
+                couplant_film_um: document.number("probe", "couplant_film_um")?.unwrap_or(2.0),
+                reference_pulse: document.text("probe", "reference_pulse")?,
+                reference_pulse_noise_percent: document.number("probe", "reference_pulse_noise_percent")?,
+                reference_pulse_mismatch_percent: document.number("probe", "reference_pulse_mismatch_percent")?,
+            },
+            material: MaterialKeys {
+                name: document.text("material", "name")?,
+                velocity_m_s: document.needed_number("material", "velocity_m_s")?,
+                velocity_standard_uncertainty_m_s: document
+                    .needed_number("material", "velocity_standard_uncertainty_m_s")?,
+                part_velocity_standard_uncertainty_m_s: document
+                    .number("material", "part_velocity_standard_uncertainty_m_s")?,
+                velocity_temperature_coefficient_m_s_k: document
+                    .number("material", "velocity_temperature_coefficient_m_s_k")?,
+                velocity_temperature_coefficient_standard_uncertainty_m_s_k: document.number(
+                    "material",
+                    "velocity_temperature_coefficient_standard_uncertainty_m_s_k",
+                )?,
+                velocity_temperature_c: document.number("material", "velocity_temperature_c")?,
+            },
+            part: PartKeys {
+                temperature_c: document.number("part", "temperature_c")?,
+                temperature_standard_uncertainty_k: document.number("part", "temperature_standard_uncertainty_k")?,
+            },
+            coating_velocity_m_s: if document.has_table("coating") {
+                Some(document.needed_number("coating", "velocity_m_s")?)
+            } else {
+                None
+            },
+            zero: ZeroKeys {
+                offset_ns: document.number("zero", "offset_ns")?.unwrap_or(0.0),
+                standard_uncertainty_ns: document.number("zero", "standard_uncertainty_ns")?,
+                reference_pulse_checksum: document.text("zero", "reference_pulse_checksum")?,
+            },
+            measure: MeasureKeys {
+                span: document
+                    .word("measure", "span", SPANS)?
+                    .ok_or_else(|| needed_word("measure", "span"))?,
+                from_us: document.needed_number("measure", "from_us")?,
+                to_us: document.number("measure", "to_us")?,
+                coverage_factor: document.number("measure", "coverage_factor")?.unwrap_or(2.0),
+            },
+            limits: if document.has_table("limits") {
+                Some(LimitsKeys {
+                    minimum_mm: document.needed_number("limits", "minimum_mm")?,
+                    warning_mm: document.number("limits", "warning_mm")?,
+                    maximum_mm: document.number("limits", "maximum_mm")?,
+                    guard_band_factor: document.number("limits", "guard_band_factor")?,
+                    wrong_decision_probability: document.number("limits", "wrong_decision_probability")?,
+                })
+            } else {
+                None
+            },
+            calibration: if document.has_table("calibration") {
+                Some(CalibrationKeys {
+                    velocity_zero_correlation: document.number("calibration", "velocity_zero_correlation")?,
+                    from_mm: document.number("calibration", "from_mm")?,
+                    to_mm: document.number("calibration", "to_mm")?,
+                    blocks_mm: document.numbers("calibration", "blocks_mm")?,
+                    temperature_c: document.number("calibration", "temperature_c")?,
+                    date: document.text("calibration", "date")?,
+                })
+            } else {
+                None
+            },
+        })
+    }
+
+    /// The part's material, unchecked.
+    fn to_material(&self) -> Material {
+        let keys = &self.material;
+        let velocity = |m_s: f64| MetresPerSecond::new(m_s as f32);
+        let mut material = Material::new(
+            velocity(keys.velocity_m_s),
+            velocity(keys.velocity_standard_uncertainty_m_s),
+        );
+        material.part_velocity_standard_uncertainty =
+            velocity(keys.part_velocity_standard_uncertainty_m_s.unwrap_or(0.0));
+        if let Some(coefficient) = keys.velocity_temperature_coefficient_m_s_k {
+            let reference = keys.velocity_temperature_c.unwrap_or(20.0);
+            let mut follows = VelocityTemperature::new(coefficient as f32, Celsius::new(reference as f32));
+            if let Some(uncertainty) = keys.velocity_temperature_coefficient_standard_uncertainty_m_s_k {
+                follows.coefficient_standard_uncertainty = uncertainty as f32;
+            }
+            if let Some(temperature) = self.part.temperature_c {
+                let uncertainty = self.part.temperature_standard_uncertainty_k.unwrap_or(1.0);
+                follows = follows.with_part(Celsius::new(temperature as f32), Celsius::new(uncertainty as f32));
+            }
+            material.temperature = Some(follows);
+        }
+        material
+    }
+
+    /// The learned pulse's quality, unchecked.
+    pub(super) fn pulse_quality(&self) -> PulseQuality {
+        let share = |percent: Option<f64>| percent.map_or(0.0, |percent| (percent / 100.0) as f32);
+        PulseQuality {
+            noise: share(self.probe.reference_pulse_noise_percent),
+            mismatch: share(self.probe.reference_pulse_mismatch_percent),
+        }
+    }
+
+    /// The limits, unchecked; `None` without the table.
+    pub(super) fn to_limits(&self) -> Option<Limits> {
+        let keys = self.limits.as_ref()?;
+        let thickness = |mm: f64| Metres::from_mm(mm as f32);
+        Some(Limits {
+            minimum: thickness(keys.minimum_mm),
+            warning: keys.warning_mm.map(thickness),
+            maximum: keys.maximum_mm.map(thickness),
+            guard: match keys.wrong_decision_probability {
+                Some(probability) => Guard::WrongDecision(probability as f32),
+                None => Guard::Expanded(keys.guard_band_factor.unwrap_or(1.0) as f32),
+            },
+        })
+    }
+
+    /// The core's set-up, unchecked.
+    pub(super) fn to_gauge_setup(&self) -> GaugeSetup {
+        let centre = Hertz::from_mhz(self.probe.centre_frequency_mhz as f32);
+        let bandwidth = (self.probe.relative_bandwidth_percent / 100.0) as f32;
+        let mut probe = match self.probe.kind {
+            ProbeKind::Contact => Probe::contact(centre, bandwidth),
+            ProbeKind::DelayLine => Probe::delay_line(centre, bandwidth),
+            ProbeKind::DualElement => Probe::dual_element(centre, bandwidth),
+        };
+        probe.element_diameter = self.probe.element_diameter_mm.map(|mm| Metres::from_mm(mm as f32));
+        probe.face = self.probe.face.unwrap_or(probe.face);
+        probe.couplant_film = Metres::new((self.probe.couplant_film_um * 1e-6) as f32);
+        let calibration = self.calibration.as_ref();
+        // An offset without a stated uncertainty: an unknown one where it only serves to check (a second
+        // of uncertainty contradicts nothing), an exact one between two echoes of the same record.
+        let unstated = match self.measure.span {
+            Span::InterfaceToBackWall => 0.0,
+            _ => 1e9,
+        };
+        GaugeSetup {
+            sample_rate: Hertz::from_mhz(self.record.sample_rate_mhz as f32),
+            probe,
+            material: self.to_material(),
+            zero: Zero {
+                offset: Seconds::from_ns(self.zero.offset_ns as f32),
+                standard_uncertainty: Seconds::from_ns(self.zero.standard_uncertainty_ns.unwrap_or(unstated) as f32),
+                velocity_correlation: calibration.and_then(|c| c.velocity_zero_correlation).unwrap_or(0.0) as f32,
+            },
+            span: self.measure.span,
+            window: Window {
+                from: Seconds::from_us(self.measure.from_us as f32),
+                // A second: longer than any record.
+                to: Seconds::from_us(self.measure.to_us.unwrap_or(1e6) as f32),
+            },
+            coverage_factor: self.measure.coverage_factor as f32,
+            coating: self.coating_velocity_m_s.map(|velocity| Coating {
+                velocity: MetresPerSecond::new(velocity as f32),
+            }),
+            calibrated: calibration.and_then(|c| {
+                Some(CalibratedRange {
+                    from: Metres::from_mm(c.from_mm? as f32),
+                    to: Metres::from_mm(c.to_mm? as f32),
+                })
+            }),
+        }
+    }
+}
