@@ -6,6 +6,10 @@
 //! Mathematical Functions (26.7.5 and 26.4.17); limits are within 2 % from 6 values on and within half a per cent from 11 on, compared with
 //! SciPy in the tests.
 
+pub mod quantiles;
+
+pub use quantiles::Quantiles;
+
 /// 97.5 % quantile of the normal distribution.
 const Z: f64 = 1.959_963_984_540_054;
 

@@ -720,14 +720,37 @@ fn summaries_and_figures_are_written() {
     );
     let summary = bench.read("sum.csv");
     let lines: Vec<&str> = summary.lines().collect();
-    assert_eq!(lines.len(), 11);
-    assert!(
-        lines[1].starts_with("cell,walls,scene.noise.snr_db,runs,"),
-        "{}",
-        lines[1]
-    );
-    assert!(lines[2].starts_with("0,fixed,20.0,4,"), "{}", lines[2]);
-    assert!(lines[5].contains("\"drawn, \"\"thin\"\"\""), "{}", lines[5]);
+    assert_eq!(lines.len(), 12);
+    assert!(lines[1].contains("made by halfpulse") && lines[1].contains("fnv1a64:"));
+    let columns: Vec<&str> = lines[2].split(',').collect();
+    assert!(lines[2].starts_with("cell,walls,scene.noise.snr_db,runs,"));
+    assert!(lines[3].starts_with("0,fixed,20.0,4,"), "{}", lines[3]);
+    assert!(lines[6].contains("\"drawn, \"\"thin\"\"\""), "{}", lines[6]);
+    // The same as JSON, and the quantiles in order.
+    done(&bench, &["campaign", "grid.toml", "--summary", "sum.json"]);
+    let json: serde_json::Value = serde_json::from_str(&bench.read("sum.json")).unwrap();
+    assert_eq!(json["all"]["runs"], 36);
+    for (line, cell) in lines[3..].iter().zip(json["cells"].as_array().unwrap()) {
+        if line.contains('"') {
+            continue; // a label with commas
+        }
+        let fields: Vec<&str> = line.split(',').collect();
+        let field = |name: &str| fields[columns.iter().position(|column| *column == name).unwrap()];
+        assert_eq!(fields.len(), columns.len());
+        assert_eq!(cell["axes"]["walls"], field("walls"));
+        assert_eq!(cell["inside"]["count"].to_string(), field("inside"));
+        let errors: Vec<f64> = ["error_low_um", "error_median_um", "error_high_um"]
+            .iter()
+            .map(|name| field(name).parse().unwrap())
+            .collect();
+        assert!(errors.is_sorted(), "{errors:?}");
+        for (error, name) in errors.iter().zip(["2.5 %", "median", "97.5 %"]) {
+            let same = cell["error_um"][name].as_f64().unwrap();
+            assert!((same - error).abs() < 1e-5, "{name}");
+        }
+        let worst: f64 = field("error_worst_um").parse().unwrap();
+        assert!(worst.abs() >= errors[0].abs().max(errors[2].abs()));
+    }
     for name in ["errors.svg", "rates.svg"] {
         let figure = std::fs::read_to_string(bench.path("figures").join(name)).unwrap();
         assert!(
@@ -736,7 +759,11 @@ fn summaries_and_figures_are_written() {
         );
         assert!(figure.contains("moving"), "{name} has no legend");
     }
+    // A narrow terminal has no room for the quantiles.
     let campaign = Campaign::read(&bench.path("grid.toml")).unwrap();
+    let summary = Summary::new(&campaign);
+    assert!(export::table_within(&summary, 1000).contains("97.5 %"));
+    assert!(!export::table_within(&summary, 80).contains("97.5 %"));
     let empty = export::table(&Summary::new(&campaign));
     assert!(empty.contains("snr_db"), "{empty}");
 }

@@ -1,8 +1,8 @@
-//! What came of each cell: counts and sums, so that memory does not grow with the runs.
+//! What came of each cell: counts, sums and buckets, so that memory does not grow with the runs.
 
 use super::file::Campaign;
 use super::row::{Row, RowReading};
-use crate::statistics::{Interval, Moments, share_interval};
+use crate::statistics::{Interval, Moments, Quantiles, share_interval};
 use std::collections::BTreeMap;
 
 /// Too thick and too thin apart: reading too thick is the dangerous one.
@@ -65,6 +65,8 @@ pub struct Tally {
     pub errors: Moments,
     /// Errors over their Cramér-Rao bounds, of those that have one.
     over_bound: Moments,
+    /// Errors in micrometres of all readings without a doubt, gross ones included.
+    pub signed_errors: Quantiles,
     /// Largest undoubted error over U.
     pub worst: f64,
 }
@@ -128,6 +130,7 @@ impl Tally {
             return;
         }
         self.inside += u64::from(inside);
+        self.signed_errors.add(1e3 * error);
         self.worst = self.worst.max(size / expanded.max(f64::MIN_POSITIVE));
         if !inside {
             self.outside.add(error);
@@ -170,6 +173,8 @@ impl Tally {
 pub struct Summary {
     /// The campaign's name, seed and size.
     pub title: String,
+    /// The campaign's checksum.
+    pub checksum: String,
     /// Names of the axes.
     pub axes: Vec<String>,
     /// Values of the axes in each cell.
@@ -199,6 +204,7 @@ impl Summary {
                 campaign.runs,
                 campaign.seed
             ),
+            checksum: campaign.checksum(),
             axes: campaign.axes.iter().map(|axis| axis.name.clone()).collect(),
             labels: levels()
                 .map(|levels| levels.iter().map(|(_, level)| level.label()).collect())
@@ -315,6 +321,12 @@ mod tests {
         assert_eq!((tally.phantom, tally.confidently_wrong(), tally.all_gross()), (1, 4, 5));
         assert_eq!((tally.doubted_inside, tally.doubted_gross), (1, 1));
         assert_eq!(tally.errors.count(), 5);
+        assert_eq!(tally.signed_errors.count(), 7);
+        assert_eq!(
+            tally.signed_errors.worst(),
+            Some(f64::INFINITY),
+            "one of them is no number"
+        );
         let (ratio, _) = tally.over_bound().unwrap();
         assert!((ratio - tally.errors.deviation().unwrap()).abs() < 1e-9);
         assert_eq!(tally.doubts["low-signal"], 1);

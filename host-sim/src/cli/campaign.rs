@@ -11,6 +11,7 @@ use crate::input_error::InputError;
 use crate::output::{self, Lock};
 use crate::record_file::{self, npy};
 use crate::{export, plot};
+use console::Term;
 use indicatif::{ProgressBar, ProgressDrawTarget, ProgressStyle};
 use std::io::Write;
 use std::path::{Path, PathBuf};
@@ -44,8 +45,8 @@ pub struct Arguments {
     /// Only this run: what it measures and what came of it; with -o RUN.npy its files
     #[arg(long, value_name = "RUN", conflicts_with_all = ["shard", "summary", "figures"])]
     replay: Option<u64>,
-    /// Where the cells' figures go (.csv)
-    #[arg(long, value_name = "SUMMARY.csv")]
+    /// Where the cells' figures go (.csv or .json)
+    #[arg(long, value_name = "SUMMARY")]
     summary: Option<PathBuf>,
     /// Folder for the figures (.svg)
     #[arg(long, value_name = "FOLDER")]
@@ -108,9 +109,13 @@ pub fn run(arguments: &Arguments, out: &mut dyn Write) -> Result<Outcome, InputE
         }
         measure(&campaign, arguments)?
     };
-    written(out.write_all(export::table(&summary).as_bytes()))?;
+    written(out.write_all(table(&summary).as_bytes()))?;
     if let Some(path) = &arguments.summary {
-        output::write(path, export::csv(&summary).as_bytes())?;
+        let text = match path.extension() {
+            Some(extension) if extension == "json" => export::json(&summary),
+            _ => export::csv(&summary),
+        };
+        output::write(path, text.as_bytes())?;
     }
     if let Some(folder) = &arguments.figures {
         std::fs::create_dir_all(folder).map_err(|error| InputError::unwritable(folder, &error))?;
@@ -136,9 +141,18 @@ pub fn run_merge(arguments: &MergeArguments, out: &mut dyn Write) -> Result<Outc
         }
     })?;
     if let Some(summary) = &summary {
-        written(out.write_all(export::table(summary).as_bytes()))?;
+        written(out.write_all(table(summary).as_bytes()))?;
     }
     Ok(Outcome::Done)
+}
+
+/// The table; without its widest columns where a terminal has no room for them.
+fn table(summary: &Summary) -> String {
+    let terminal = Term::stdout();
+    match terminal.size_checked() {
+        Some((_, columns)) if terminal.is_term() => export::table_within(summary, usize::from(columns)),
+        _ => export::table(summary),
+    }
 }
 
 /// A summary of results that are there.
