@@ -2,9 +2,13 @@
 //!
 //!     cargo run --release -p halfpulse-sim --example throughput
 //!
-//! With a word behind `--`, only the lines that contain it. Six back-wall echoes of 10 mm of steel, 5 MHz, 60 %, 50 MS/s, 12 bits, 30 dB. First one scene with
-//! new noise and a shift by a part of a sample in every shot; then another scene in every shot, plain
-//! and with everything that a wall can have.
+//! With a word behind `--`, only the lines that contain it. Six back-wall echoes of 10 mm of steel, 5 MHz, 60 %,
+//! 50 MS/s, 12 bits, 30 dB. First one scene with new noise and a shift by a part of a sample in every shot; then
+//! another scene in every shot, plain and with everything that a wall can have.
+//!
+//! Refusals there are no fault of this program. With a lasting pulse (attack and decay) the modelled pulse of the set-up
+//! does not fit; film, roughness and beam turn the echoes' phase, so that a wall half a cycle thicker explains
+//! them about as well as the right one.
 
 use halfpulse::{
     Gauge, GaugeSetup, Hertz, Material, Metres, MetresPerSecond, Probe, Scratch, Seconds, Span, Window, Zero,
@@ -106,7 +110,7 @@ fn main() {
         scene.wall.attenuation_exponent = 2.0;
         scene.probe.element_diameter_mm = Some(6.0);
         scene.probe.beam_diffraction = true;
-        scene.probe.face_impedance_mrayl = Some(38.5);
+        scene.probe.face_impedance_mrayl = Some(8.0);
         scene.couplant = Some(Couplant {
             material: Some("glycerine".into()),
             film_um: 5.0,

@@ -82,6 +82,7 @@ impl Converter {
 
     /// Codes from zero to full scale.
     #[must_use]
+    #[inline]
     pub fn full_scale(&self) -> f64 {
         f64::from(1u32 << (self.bits - 1))
     }
@@ -89,6 +90,7 @@ impl Converter {
     /// The code of a value given in steps: rounded to the nearest, clipped to -full scale to full
     /// scale - 1.
     #[must_use]
+    #[inline]
     pub fn code(&self, steps: f64) -> i16 {
         let full_scale = self.full_scale();
         let steps = steps + self.offset;
