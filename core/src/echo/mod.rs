@@ -10,13 +10,14 @@ pub mod pulse;
 pub mod correlation;
 pub mod arrival;
 pub mod scan;
+pub mod noise;
 pub mod separation;
 pub mod train;
 
 use crate::echo::arrival::{Arrival, Estimator, Search, estimate, group_lag_noise};
 use crate::echo::correlation::{Sign, energy};
 use crate::echo::pulse::ReferencePulse;
-use crate::echo::scan::Candidate;
+use crate::echo::scan::Scan;
 use crate::math;
 use crate::record::{Record, SampleRange};
 use crate::units::{Decibels, SamplePosition, Seconds};
@@ -100,6 +101,8 @@ pub struct Surroundings<'a> {
     pub pulse: ReferencePulse<'a>,
     /// Root mean square of the noise per sample, in codes.
     pub noise: f32,
+    /// What of the noise moves arrivals, as the white noise (codes per sample) that would do the same: see [`noise`].
+    pub timing_noise: f32,
     /// Samples a cycle of the centre frequency.
     pub samples_per_cycle: f32,
 }
@@ -111,11 +114,11 @@ impl Surroundings<'_> {
         self.noise / math::sqrt(self.pulse.facts.energy)
     }
 
-    /// Cramér-Rao bound of an arrival in samples, for a known pulse of this amplitude in white noise:
-    /// noise / (amplitude · sqrt(Σ s'²)).
+    /// Standard deviation of a least-squares arrival in samples, for a known pulse of this amplitude:
+    /// timing noise / (amplitude · sqrt(Σ s'²)). In white noise that is the Cramér-Rao bound.
     #[must_use]
     pub fn arrival_noise(&self, amplitude: f32) -> f32 {
-        self.noise / (amplitude.abs() * math::sqrt(self.pulse.facts.derivative_energy))
+        self.timing_noise / (amplitude.abs() * math::sqrt(self.pulse.facts.derivative_energy))
     }
 }
 
@@ -135,9 +138,9 @@ fn find_arrival(surroundings: &Surroundings<'_>, index: u32, sign: Sign, scratch
 
 /// Everything about an echo whose arrival is known.
 ///
-/// The standard uncertainty is noise · sqrt(Σ s'²) over the curvature of the correlation's top: for an echo
-/// of the pulse's shape the Cramér-Rao bound, which the fit reaches in white noise. It knows
-/// nothing of a wrong pulse, of overlapping echoes and of coherent noise: see [`Echo::mismatch`].
+/// The standard uncertainty is timing noise · sqrt(Σ s'²) over the curvature of the correlation's top: for an echo
+/// of the pulse's shape in white noise the Cramér-Rao bound, which the fit reaches. It knows
+/// nothing of a wrong pulse and of overlapping echoes: see [`Echo::mismatch`].
 #[must_use]
 pub fn echo_at(surroundings: &Surroundings<'_>, arrival: Arrival) -> Option<Echo> {
     let Surroundings {
@@ -196,19 +199,19 @@ fn unexplained_per_sample(record: &Record<'_>, pulse: &ReferencePulse<'_>, arriv
     Some(math::larger(left, 0.0) / math::larger(codes.len() as f32 - 3.0, 1.0))
 }
 
-/// Fits the pulse at every candidate inside `range` and lists the echoes. Gives the noise, in codes: the
-/// scan's (`surroundings.noise`), or less where the fits show that echoes have been taken for noise.
+/// Fits the pulse at every candidate inside `range` and lists the echoes. The scan's noise may turn out lower: where
+/// the fits show that echoes have been taken for noise.
 ///
 /// Where echoes fill the record, the scan finds no quiet stretch. What the two best fits leave over is
-/// then a better estimate; it is believed where it lies below the scan's by more than chance (three
+/// then a better estimate (of white noise); it is believed where it lies below the scan's by more than chance (three
 /// standard deviations of what so few samples tell, at least 30 %).
 pub fn measure_echoes(
     surroundings: &Surroundings<'_>,
-    candidates: &[Candidate],
+    scan: &mut Scan,
     range: SampleRange,
     echoes: &mut EchoList,
     scratch: &mut [f32],
-) -> f32 {
+) {
     let (record, pulse) = (&surroundings.record, &surroundings.pulse);
     let cycle = surroundings.samples_per_cycle;
     let inside = |index: u32| index >= range.start && index < range.end;
@@ -223,7 +226,7 @@ pub fn measure_echoes(
     };
 
     let mut arrivals: Vec<Arrival, ECHO_CAPACITY> = Vec::new();
-    for candidate in candidates.iter().filter(|candidate| usable(candidate.index)) {
+    for candidate in scan.candidates.iter().filter(|candidate| usable(candidate.index)) {
         let arrival = find_arrival(surroundings, candidate.index, Sign::Either, scratch);
         let Some(arrival) = arrival.filter(|arrival| inside(arrival.position.index)) else {
             continue;
@@ -242,6 +245,27 @@ pub fn measure_echoes(
         }
     }
 
+    if !scan.quiet
+        && let Some(fitted) = noise_beside_fits(surroundings, &arrivals)
+    {
+        (scan.noise, scan.timing_noise) = (fitted, fitted);
+    }
+    let surroundings = Surroundings {
+        noise: scan.noise,
+        timing_noise: scan.timing_noise,
+        ..*surroundings
+    };
+    echoes.clear();
+    for arrival in arrivals {
+        if let Some(echo) = echo_at(&surroundings, arrival) {
+            let _ = echoes.push(echo);
+        }
+    }
+}
+
+/// The noise that the two best fits leave over, if it lies below the scan's by more than chance.
+fn noise_beside_fits(surroundings: &Surroundings<'_>, arrivals: &[Arrival]) -> Option<f32> {
+    let (record, pulse) = (&surroundings.record, &surroundings.pulse);
     let (mut quietest, mut second) = (f32::INFINITY, f32::INFINITY);
     for left in arrivals
         .iter()
@@ -255,25 +279,10 @@ pub fn measure_echoes(
     }
     // Relative standard deviation of one estimate; picking the two smallest biases by about as much.
     let spread = 1.0 / math::sqrt(2.0 * math::larger(f32::from(pulse.facts.length) - 3.0, 1.0));
-    let fitted = math::larger(
-        math::sqrt(0.5 * (quietest + second)) * (1.0 + spread),
-        record.format().rounding_noise(),
-    );
+    let left = math::sqrt(0.5 * (quietest + second)) * (1.0 + spread);
+    let fitted = math::larger(left, record.format().rounding_noise(left));
     let limit = math::smaller(0.7, 1.0 - 3.0 * spread);
-    let noise = if fitted < limit * surroundings.noise {
-        fitted
-    } else {
-        surroundings.noise
-    };
-
-    let surroundings = Surroundings { noise, ..*surroundings };
-    echoes.clear();
-    for arrival in arrivals {
-        if let Some(echo) = echo_at(&surroundings, arrival) {
-            let _ = echoes.push(echo);
-        }
-    }
-    noise
+    (fitted < limit * surroundings.noise).then_some(fitted)
 }
 
 /// The echoes of one record in the order of their arrival.

@@ -135,7 +135,7 @@ impl Detector {
     }
 
     /// Samples from an echo to where its skirt has fallen below `floor` counts.
-    fn skirt_reach(&self, skirt: &[u16; PULSE_CAPACITY], height: u16, floor: f32) -> u32 {
+    pub(crate) fn skirt_reach(&self, skirt: &[u16; PULSE_CAPACITY], height: u16, floor: f32) -> u32 {
         let mut reach = u32::from(self.skirt_length);
         while reach > 0 && (self.skirt_height(skirt, height, reach - 1) as f32) < floor {
             reach -= 1;
@@ -174,8 +174,17 @@ fn response(samples: &[f32], place: i32, lobe: usize) -> f32 {
 pub struct Scan {
     /// Root mean square of the noise per sample, in codes; never below rounding noise.
     pub noise: f32,
+    /// What of it moves arrivals, as the white noise that would do the same ([`crate::echo::noise`]); the scan itself
+    /// says the same as `noise`.
+    pub timing_noise: f32,
+    /// Did the record leave enough stretches without echoes to learn the noise from? If not, `noise` may be an echo's.
+    pub quiet: bool,
+    /// Standard deviation of one filter's output from noise, in envelope counts.
+    pub level: f32,
     /// Height from which a candidate counts, in envelope counts.
     pub threshold: f32,
+    /// The samples that the envelope covers.
+    pub filled: SampleRange,
     /// The candidates in the order of their places.
     pub candidates: Vec<Candidate, CANDIDATE_CAPACITY>,
 }
@@ -289,13 +298,15 @@ pub fn scan(
     let filled = fill(codes, range, detector, shift, envelope);
     let scanned = envelope.get(filled.start as usize..filled.end as usize).unwrap_or(&[]);
     let noise_gain = detector.noise_gain(shift);
-    let least = noise_gain * format.rounding_noise();
     let factor = threshold_factor(filled.length() as f32 / f32::from(detector.lobe).max(1.0));
 
-    let first_level = math::larger(quiet_level(scanned, usize::from(detector.lobe)), least);
+    // Rounding that noise has dithered averages as noise does; before that is known, the lower limit.
+    let dithered = noise_gain * format.rounding_noise(f32::INFINITY);
+    let first_level = math::larger(quiet_level(scanned, usize::from(detector.lobe)), dithered);
     let mut raw = peaks(scanned, filled.start, u32::from(detector.lobe), factor * first_level);
-    let level = quiet_spread(scanned, filled.start, &raw, detector, skirt, first_level);
-    let level = math::larger(level.unwrap_or(first_level), least);
+    let spread = quiet_spread(scanned, filled.start, &raw, detector, skirt, first_level);
+    let level = spread.unwrap_or(first_level);
+    let level = math::larger(level, noise_gain * format.rounding_noise(level / noise_gain));
     let threshold = factor * level;
     raw.retain(|peak| f32::from(peak.height) >= threshold);
 
@@ -305,7 +316,11 @@ pub fn scan(
     }
     Scan {
         noise: level / noise_gain,
+        timing_noise: level / noise_gain,
+        quiet: spread.is_some(),
+        level,
         threshold,
+        filled,
         candidates,
     }
 }

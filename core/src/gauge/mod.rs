@@ -5,8 +5,10 @@
 //! another gauge from them; [`interpretation`] holds what a set-up means for one record.
 
 pub mod interpretation;
+pub mod stage;
 mod steps;
 
+use self::stage::{Stage, StageMeter};
 use crate::echo::EchoList;
 use crate::echo::pulse::{PulseFacts, PulseMetrics, PulseQuality, ReferencePulse, learn, model};
 use crate::echo::scan::Detector;
@@ -217,13 +219,22 @@ impl<'w> Gauge<'w> {
     /// A refusal with its evidence: a normal outcome. [`Gauge::findings`] tells what was seen.
     #[inline(never)]
     pub fn measure(&mut self, record: &Record<'_>) -> Result<Reading, NoReading> {
+        self.measure_metered(record, &mut ())
+    }
+
+    /// The same, with each stage's work handed to a meter.
+    ///
+    /// # Errors
+    /// As [`Gauge::measure`].
+    pub fn measure_metered(&mut self, record: &Record<'_>, meter: &mut impl StageMeter) -> Result<Reading, NoReading> {
         self.findings = Findings::default();
-        let range = self.usable_range(record)?;
-        let mut scan = self.scan(record, range);
-        self.measure_echoes(record, range, &mut scan);
-        let outcome = self.read(record, range, &scan);
+        let range = meter.meter(Stage::Health, || self.usable_range(record))?;
+        let mut scan = meter.meter(Stage::Scan, || self.scan(record, range));
+        meter.meter(Stage::Echoes, || self.measure_echoes(record, range, &mut scan));
+        let train = meter.meter(Stage::Train, || self.find_train(record, range, &scan));
+        let outcome = train.and_then(|train| meter.meter(Stage::Wall, || self.wall(record, &scan, &train)));
         // What is known of the pulse helps most where there was no reading.
-        self.describe(record);
+        meter.meter(Stage::Pulse, || self.describe(record, &scan));
         outcome
     }
 }

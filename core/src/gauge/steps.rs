@@ -1,16 +1,17 @@
-//! The steps of [`Gauge::measure`](super::Gauge::measure).
+//! The steps of [`Gauge::measure`](super::Gauge::measure), a method for each [`Stage`](super::stage::Stage).
 
 use super::interpretation::{clearest, rules, start_of_wall, times};
 use super::{CoatingReading, Gauge, Reading};
-use crate::echo::pulse::{PulseContext, ReferencePulse, measure_pulse};
+use crate::echo::noise::listen;
+use crate::echo::pulse::{PulseContext, PulseFacts, ReferencePulse, measure_pulse};
 use crate::echo::scan::{Scan, scan};
 use crate::echo::separation::{judge, nearest_pair};
-use crate::echo::train::{Undecided, find_train};
+use crate::echo::train::{Train, Undecided, find_train};
 use crate::echo::{Surroundings, measure_echoes};
 use crate::math;
 use crate::outcome::NoReading;
 use crate::record::{Record, SampleRange};
-use crate::setup::{PULSE_CAPACITY, ProbeKind, Span};
+use crate::setup::{GaugeSetup, PULSE_CAPACITY, ProbeKind, Span};
 use crate::units::Metres;
 use crate::wall::judgement::{self, Evidence};
 use crate::wall::uncertainty::Source;
@@ -19,6 +20,23 @@ use crate::workspace::Workspace;
 
 /// Share of clipped samples in the window, in thousandths, from which nothing is read any more.
 const CLIPPED_LIMIT: u16 = 30;
+
+/// What echoes of this record are measured against.
+fn surroundings<'a>(
+    setup: &GaugeSetup,
+    pulse: &'a [f32; PULSE_CAPACITY],
+    facts: PulseFacts,
+    record: &Record<'a>,
+    scan: &Scan,
+) -> Surroundings<'a> {
+    Surroundings {
+        record: *record,
+        pulse: ReferencePulse::new(pulse, facts),
+        noise: scan.noise,
+        timing_noise: scan.timing_noise,
+        samples_per_cycle: setup.samples_per_cycle(),
+    }
+}
 
 impl Gauge<'_> {
     /// Checks what can be checked before looking at the codes' course.
@@ -66,28 +84,34 @@ impl Gauge<'_> {
             .envelope
             .get_mut(..record.codes().len())
             .unwrap_or(&mut []);
-        scan(
+        let mut found = scan(
             record.codes(),
             record.format(),
             range,
             &self.detector,
             self.workspace.skirt,
             envelope,
-        )
+        );
+        let pulse = ReferencePulse::new(self.workspace.pulse, self.facts);
+        listen(
+            record.codes(),
+            &pulse,
+            &mut found,
+            &self.detector,
+            self.workspace.skirt,
+            envelope,
+            &mut self.workspace.correlation[..],
+        );
+        found
     }
 
     /// Fits the pulse at every candidate; the noise may turn out lower than the scan thought.
     pub(super) fn measure_echoes(&mut self, record: &Record<'_>, range: SampleRange, scan: &mut Scan) {
         let Workspace { pulse, correlation, .. } = &mut self.workspace;
-        let surroundings = Surroundings {
-            record: *record,
-            pulse: ReferencePulse::new(pulse, self.facts),
-            noise: scan.noise,
-            samples_per_cycle: self.setup.samples_per_cycle(),
-        };
-        scan.noise = measure_echoes(
+        let surroundings = surroundings(&self.setup, pulse, self.facts, record, scan);
+        measure_echoes(
             &surroundings,
-            &scan.candidates,
+            scan,
             range,
             &mut self.findings.echoes,
             &mut correlation[..],
@@ -95,19 +119,19 @@ impl Gauge<'_> {
         self.findings.noise = scan.noise;
     }
 
-    /// From echoes to a reading.
-    pub(super) fn read(&mut self, record: &Record<'_>, range: SampleRange, scan: &Scan) -> Result<Reading, NoReading> {
+    /// Which echoes are one wall's multiples.
+    pub(super) fn find_train(
+        &mut self,
+        record: &Record<'_>,
+        range: SampleRange,
+        scan: &Scan,
+    ) -> Result<Train, NoReading> {
         if self.findings.echoes.is_empty() {
             return Err(self.nothing_found(record, range));
         }
         let start = start_of_wall(&self.setup, record, &mut self.findings.echoes)?;
         let Workspace { pulse, train: lags, .. } = &mut self.workspace;
-        let surroundings = Surroundings {
-            record: *record,
-            pulse: ReferencePulse::new(pulse, self.facts),
-            noise: scan.noise,
-            samples_per_cycle: self.setup.samples_per_cycle(),
-        };
+        let surroundings = surroundings(&self.setup, pulse, self.facts, record, scan);
         let rules = rules(&self.setup, &surroundings, range, scan, &self.detector, start);
         let period_of = |samples: f32| self.setup.velocity() * (record.clock().rate.period() * samples) * 0.5;
         let train = match find_train(&surroundings, &mut self.findings.echoes, &rules, lags) {
@@ -125,8 +149,13 @@ impl Gauge<'_> {
             Err(Undecided::NoTrain) => return Err(NoReading::NoEcho { noise: scan.noise }),
         };
         self.findings.train = Some(train);
+        Ok(train)
+    }
 
-        let times = times(record, &train, &self.findings.echoes);
+    /// Thickness, budget and doubts.
+    pub(super) fn wall(&mut self, record: &Record<'_>, scan: &Scan, train: &Train) -> Result<Reading, NoReading> {
+        let surroundings = surroundings(&self.setup, self.workspace.pulse, self.facts, record, scan);
+        let times = times(record, train, &self.findings.echoes);
         let needs_two = thickness::wall_span(&self.setup) == Span::BackWallToBackWall;
         if needs_two && times.period.is_none() {
             return Err(NoReading::OneEchoWhereTwoAreNeeded {
@@ -153,7 +182,7 @@ impl Gauge<'_> {
             setup: &self.setup,
             surroundings: &surroundings,
             echoes: &self.findings.echoes,
-            train: &train,
+            train,
             times: &times,
             wall,
             budget: &budget,
@@ -196,14 +225,9 @@ impl Gauge<'_> {
     }
     /// Pulse metrics of the best echo, and the verdict on the nearest pair.
     #[inline(never)]
-    pub(super) fn describe(&mut self, record: &Record<'_>) {
+    pub(super) fn describe(&mut self, record: &Record<'_>, scan: &Scan) {
         let Workspace { pulse, correlation, .. } = &mut self.workspace;
-        let surroundings = Surroundings {
-            record: *record,
-            pulse: ReferencePulse::new(pulse, self.facts),
-            noise: self.findings.noise,
-            samples_per_cycle: self.setup.samples_per_cycle(),
-        };
+        let surroundings = surroundings(&self.setup, pulse, self.facts, record, scan);
         let scratch = &mut correlation[..];
         if let Some((first, second)) = nearest_pair(&self.findings.echoes) {
             self.findings.separation = Some(judge(&surroundings, &first, &second, scratch));

@@ -67,9 +67,19 @@ impl AdcFormat {
 
     /// Standard uncertainty of rounding to one step, in codes: step / sqrt(12). The noise of a record
     /// is never taken to be below it.
+    ///
+    /// `noise` is the noise found in the record, in codes. In an average of n shots the rounding errors average too, if each
+    /// shot's noise is at least 0.4 steps, which dithers them: what is left in the average is then
+    /// sqrt(0.4² + 1/12) steps / sqrt(n) or more. Below that, rounding is the same in every shot and nothing is gained.
     #[must_use]
-    pub fn rounding_noise(&self) -> f32 {
-        self.step() * 0.288_675_13
+    pub fn rounding_noise(&self, noise: f32) -> f32 {
+        let whole = self.step() * 0.288_675_13;
+        let root = math::sqrt(f32::from(self.shots.max(1)));
+        if noise * root >= 0.493_3 * self.step() {
+            whole / root
+        } else {
+            whole
+        }
     }
 }
 
@@ -191,7 +201,7 @@ impl<'r> Record<'r> {
 }
 
 /// A half-open range of a record's samples.
-#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+#[derive(Clone, Copy, Debug, PartialEq, Eq, Default)]
 pub struct SampleRange {
     /// The first sample.
     pub start: u32,

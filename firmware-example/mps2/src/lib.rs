@@ -4,7 +4,6 @@
 #![deny(unsafe_code)]
 #![deny(missing_docs)]
 
-pub mod by_stage;
 pub mod canned;
 pub mod plan;
 pub mod printout;

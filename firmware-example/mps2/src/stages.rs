@@ -6,9 +6,9 @@
 #[cfg(target_os = "none")]
 mod app {
     use cortex_m_rt::entry;
+    use halfpulse::gauge::stage::{Stage, StageMeter};
     use halfpulse::{Gauge, Record, Scratch};
     use halfpulse_mps2::board::{self, Console};
-    use halfpulse_mps2::by_stage::{Meter, Prepared, STAGES};
     use halfpulse_mps2::canned::{CAPACITY, Canned, RECORDS};
     use halfpulse_mps2::printout::{self, Line, Sink};
 
@@ -33,17 +33,17 @@ mod app {
             let (outcome, cost) = board::counted(|| gauge.measure(&record));
             write(console, "measure", cost.instructions, outcome.is_ok());
         }
-        if let Ok(mut stages) = Prepared::new(canned.setup, scratch.workspace()) {
-            let _ = stages.measure(&record, &mut Counter(console));
+        if let Ok(mut gauge) = Gauge::new(canned.setup, scratch.workspace()) {
+            let _ = gauge.measure_metered(&record, &mut Counter(console));
         }
     }
 
     struct Counter<'c>(&'c mut Console);
 
-    impl Meter for Counter<'_> {
-        fn count<R>(&mut self, stage: usize, work: impl FnOnce() -> R) -> R {
+    impl StageMeter for Counter<'_> {
+        fn meter<R>(&mut self, stage: Stage, work: impl FnOnce() -> R) -> R {
             let (result, cost) = board::counted(work);
-            write(self.0, STAGES.get(stage).unwrap_or(&"?"), cost.instructions, true);
+            write(self.0, stage.word(), cost.instructions, true);
             result
         }
     }

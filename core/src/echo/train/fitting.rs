@@ -120,7 +120,7 @@ pub(super) fn fit(
     if !(line.period > 0.0) {
         return None;
     }
-    let variance = surroundings.noise * surroundings.noise / surroundings.pulse.facts.derivative_energy;
+    let variance = surroundings.timing_noise * surroundings.timing_noise / surroundings.pulse.facts.derivative_energy;
     let determinant = s0 * s2 - s1 * s1;
     let (mut scatter, mut strongest) = (0.0, 0.0);
     for member in &members {

@@ -9,7 +9,7 @@ mod cycles;
 use crate::toolchain::{CORTEX_M4F, Toolchain, root, target_folder};
 use crate::{Checks, Trouble, emulator};
 use cycles::Counts;
-use halfpulse_mps2::by_stage::STAGES;
+use halfpulse::gauge::stage::Stage;
 use halfpulse_mps2::canned::RECORDS;
 use std::fmt::Write as _;
 use std::fs;
@@ -42,7 +42,7 @@ struct Cost {
 #[derive(Clone, Debug, PartialEq)]
 struct Row {
     record: String,
-    stages: [Cost; STAGES.len()],
+    stages: [Cost; Stage::ALL.len()],
     whole: Cost,
 }
 
@@ -182,12 +182,12 @@ fn rows(regions: &[Region], counts: Option<&Counts>) -> Result<Vec<Row>, String>
         if rows.last().is_none_or(|row| row.record != region.record) {
             rows.push(Row {
                 record: region.record.clone(),
-                stages: [Cost::default(); STAGES.len()],
+                stages: [Cost::default(); Stage::ALL.len()],
                 whole: Cost::default(),
             });
         }
         let row = rows.last_mut().ok_or("no record")?;
-        let place = STAGES.iter().position(|stage| *stage == region.what);
+        let place = Stage::ALL.iter().position(|stage| stage.word() == region.what);
         let cost = match place.and_then(|place| row.stages.get_mut(place)) {
             Some(stage) => stage,
             None if region.what == "measure" => &mut row.whole,
@@ -215,7 +215,7 @@ fn table(rows: &[Row], toolchain: &str) -> String {
         ("cycles", |cost| cost.cycles),
     ] {
         let _ = write!(text, "{what:<20}");
-        for stage in STAGES.iter().chain(&["sum", "measure"]) {
+        for stage in Stage::ALL.map(Stage::word).iter().chain(&["sum", "measure"]) {
             let _ = write!(text, "{stage:>10}");
         }
         let _ = writeln!(text);
@@ -298,7 +298,7 @@ mod tests {
             stages: [Cost {
                 instructions: 100,
                 cycles: 150,
-            }; STAGES.len()],
+            }; Stage::ALL.len()],
             whole: Cost {
                 instructions: whole,
                 cycles: 900,
