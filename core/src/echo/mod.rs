@@ -16,8 +16,9 @@ pub mod train;
 
 use crate::echo::arrival::{Arrival, Estimator, Search, estimate, group_lag_noise};
 use crate::echo::correlation::{Sign, energy};
+use crate::echo::noise::{Noise, TimingNoise};
 use crate::echo::pulse::ReferencePulse;
-use crate::echo::scan::Scan;
+use crate::echo::scan::Candidate;
 use crate::math;
 use crate::record::{Record, SampleRange};
 use crate::units::{Decibels, SamplePosition, Seconds};
@@ -92,6 +93,32 @@ impl Echo {
     }
 }
 
+impl Echo {
+    /// The same echo in a noise that is known better now.
+    pub(crate) fn reassess(&mut self, before: &TimingNoise, now: &Surroundings<'_>) {
+        if *before == now.timing_noise {
+            return;
+        }
+        let place = self.position.as_samples();
+        let (old, new) = (before.at(place), now.timing_noise.at(place));
+        self.standard_uncertainty = self.standard_uncertainty * (new / old);
+        let more = group_lag_noise(now.samples_per_cycle, self.amplitude / (new - old), &now.pulse);
+        if more > 0.0 {
+            let allowance = now.record.clock().rate.period() * (GROUP_LAG_CHANCE * more);
+            self.group_lag = toward_zero(self.group_lag, allowance);
+        }
+    }
+}
+
+/// Standard deviations of a group lag that chance is allowed.
+const GROUP_LAG_CHANCE: f32 = 4.0;
+
+/// A time without what noise explains of it.
+fn toward_zero(time: Seconds, allowance: Seconds) -> Seconds {
+    let left = math::larger(time.abs().get() - allowance.get(), 0.0);
+    Seconds::new(if time.get() < 0.0 { -left } else { left })
+}
+
 /// What one echo is measured against.
 #[derive(Clone, Copy, Debug)]
 pub struct Surroundings<'a> {
@@ -101,8 +128,8 @@ pub struct Surroundings<'a> {
     pub pulse: ReferencePulse<'a>,
     /// Root mean square of the noise per sample, in codes.
     pub noise: f32,
-    /// What of the noise moves arrivals, as the white noise (codes per sample) that would do the same: see [`noise`].
-    pub timing_noise: f32,
+    /// What of the noise moves arrivals: see [`noise`].
+    pub timing_noise: TimingNoise,
     /// Samples a cycle of the centre frequency.
     pub samples_per_cycle: f32,
 }
@@ -114,11 +141,12 @@ impl Surroundings<'_> {
         self.noise / math::sqrt(self.pulse.facts.energy)
     }
 
-    /// Standard deviation of a least-squares arrival in samples, for a known pulse of this amplitude:
-    /// timing noise / (amplitude · sqrt(Σ s'²)). In white noise that is the Cramér-Rao bound.
+    /// Standard deviation of a least-squares arrival in samples, for a known pulse of this amplitude at this place (in
+    /// samples from the record's first): timing noise / (amplitude · sqrt(Σ s'²)). In white noise that is the
+    /// Cramér-Rao bound.
     #[must_use]
-    pub fn arrival_noise(&self, amplitude: f32) -> f32 {
-        self.timing_noise / (amplitude.abs() * math::sqrt(self.pulse.facts.derivative_energy))
+    pub fn arrival_noise(&self, amplitude: f32, place: f32) -> f32 {
+        self.timing_noise.at(place) / (amplitude.abs() * math::sqrt(self.pulse.facts.derivative_energy))
     }
 }
 
@@ -160,16 +188,14 @@ pub fn echo_at(surroundings: &Surroundings<'_>, arrival: Arrival) -> Option<Echo
     let from_noise = noise * noise * (freedom + 5.0 * math::sqrt(2.0 * freedom));
     let excess = (energy(under) - explained - from_noise) / explained;
     let clock = record.clock();
-    let by_noise = 4.0 * group_lag_noise(surroundings.samples_per_cycle, amplitude / noise, pulse);
-    let group_lag = if arrival.group_lag > 0.0 {
-        math::larger(arrival.group_lag - by_noise, 0.0)
-    } else {
-        math::smaller(arrival.group_lag + by_noise, 0.0)
-    };
+    let place = arrival.position.as_samples();
+    let timing_noise = surroundings.timing_noise.at(place);
+    let by_noise = GROUP_LAG_CHANCE * group_lag_noise(surroundings.samples_per_cycle, amplitude / timing_noise, pulse);
+    let period = clock.rate.period();
     Some(Echo {
         position: arrival.position,
         arrival: clock.time_of(arrival.position),
-        standard_uncertainty: clock.rate.period() * surroundings.arrival_noise(amplitude * arrival.sharpness),
+        standard_uncertainty: period * surroundings.arrival_noise(amplitude * arrival.sharpness, place),
         amplitude,
         polarity: if arrival.amplitude < 0.0 {
             Polarity::Negative
@@ -178,7 +204,7 @@ pub fn echo_at(surroundings: &Surroundings<'_>, arrival: Arrival) -> Option<Echo
         },
         snr: Decibels::from_amplitude_ratio(amplitude / noise),
         mismatch: math::sqrt(excess),
-        group_lag: clock.rate.period() * group_lag,
+        group_lag: toward_zero(period * arrival.group_lag, period * by_noise),
         clipped,
         role: EchoRole::Other,
     })
@@ -199,7 +225,7 @@ fn unexplained_per_sample(record: &Record<'_>, pulse: &ReferencePulse<'_>, arriv
     Some(math::larger(left, 0.0) / math::larger(codes.len() as f32 - 3.0, 1.0))
 }
 
-/// Fits the pulse at every candidate inside `range` and lists the echoes. The scan's noise may turn out lower: where
+/// Fits the pulse at every candidate inside `range` and lists the echoes. A noise that is not sure may turn out lower: where
 /// the fits show that echoes have been taken for noise.
 ///
 /// Where echoes fill the record, the scan finds no quiet stretch. What the two best fits leave over is
@@ -207,7 +233,8 @@ fn unexplained_per_sample(record: &Record<'_>, pulse: &ReferencePulse<'_>, arriv
 /// standard deviations of what so few samples tell, at least 30 %).
 pub fn measure_echoes(
     surroundings: &Surroundings<'_>,
-    scan: &mut Scan,
+    candidates: &[Candidate],
+    noise: &mut Noise,
     range: SampleRange,
     echoes: &mut EchoList,
     scratch: &mut [f32],
@@ -226,7 +253,7 @@ pub fn measure_echoes(
     };
 
     let mut arrivals: Vec<Arrival, ECHO_CAPACITY> = Vec::new();
-    for candidate in scan.candidates.iter().filter(|candidate| usable(candidate.index)) {
+    for candidate in candidates.iter().filter(|candidate| usable(candidate.index)) {
         let arrival = find_arrival(surroundings, candidate.index, Sign::Either, scratch);
         let Some(arrival) = arrival.filter(|arrival| inside(arrival.position.index)) else {
             continue;
@@ -245,14 +272,14 @@ pub fn measure_echoes(
         }
     }
 
-    if !scan.quiet
+    if !noise.sure
         && let Some(fitted) = noise_beside_fits(surroundings, &arrivals)
     {
-        (scan.noise, scan.timing_noise) = (fitted, fitted);
+        (noise.per_sample, noise.timing) = (fitted, TimingNoise::steady(fitted));
     }
     let surroundings = Surroundings {
-        noise: scan.noise,
-        timing_noise: scan.timing_noise,
+        noise: noise.per_sample,
+        timing_noise: noise.timing,
         ..*surroundings
     };
     echoes.clear();

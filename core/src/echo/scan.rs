@@ -174,9 +174,6 @@ fn response(samples: &[f32], place: i32, lobe: usize) -> f32 {
 pub struct Scan {
     /// Root mean square of the noise per sample, in codes; never below rounding noise.
     pub noise: f32,
-    /// What of it moves arrivals, as the white noise that would do the same ([`crate::echo::noise`]); the scan itself
-    /// says the same as `noise`.
-    pub timing_noise: f32,
     /// Did the record leave enough stretches without echoes to learn the noise from? If not, `noise` may be an echo's.
     pub quiet: bool,
     /// Standard deviation of one filter's output from noise, in envelope counts.
@@ -316,7 +313,6 @@ pub fn scan(
     }
     Scan {
         noise: level / noise_gain,
-        timing_noise: level / noise_gain,
         quiet: spread.is_some(),
         level,
         threshold,

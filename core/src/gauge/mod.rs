@@ -229,12 +229,12 @@ impl<'w> Gauge<'w> {
     pub fn measure_metered(&mut self, record: &Record<'_>, meter: &mut impl StageMeter) -> Result<Reading, NoReading> {
         self.findings = Findings::default();
         let range = meter.meter(Stage::Health, || self.usable_range(record))?;
-        let mut scan = meter.meter(Stage::Scan, || self.scan(record, range));
-        meter.meter(Stage::Echoes, || self.measure_echoes(record, range, &mut scan));
-        let train = meter.meter(Stage::Train, || self.find_train(record, range, &scan));
-        let outcome = train.and_then(|train| meter.meter(Stage::Wall, || self.wall(record, &scan, &train)));
+        let (scan, mut noise) = meter.meter(Stage::Scan, || self.scan(record, range));
+        meter.meter(Stage::Echoes, || self.measure_echoes(record, range, &scan, &mut noise));
+        let train = meter.meter(Stage::Train, || self.find_train(record, range, &scan, &mut noise));
+        let outcome = train.and_then(|train| meter.meter(Stage::Wall, || self.wall(record, &noise, &train)));
         // What is known of the pulse helps most where there was no reading.
-        meter.meter(Stage::Pulse, || self.describe(record, &scan));
+        meter.meter(Stage::Pulse, || self.describe(record, &noise));
         outcome
     }
 }

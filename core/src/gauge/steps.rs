@@ -2,13 +2,14 @@
 
 use super::interpretation::{clearest, rules, start_of_wall, times};
 use super::{CoatingReading, Gauge, Reading};
-use crate::echo::noise::listen;
+use crate::echo::noise::{Noise, TimingNoise, listen, reached};
 use crate::echo::pulse::{PulseContext, PulseFacts, ReferencePulse, measure_pulse};
-use crate::echo::scan::{Scan, scan};
+use crate::echo::scan::{CANDIDATE_CAPACITY, Candidate, Scan, scan};
 use crate::echo::separation::{judge, nearest_pair};
-use crate::echo::train::{Train, Undecided, find_train};
-use crate::echo::{Surroundings, measure_echoes};
+use crate::echo::train::{Hypothesis, Train, Undecided, choose, fit};
+use crate::echo::{Echo, EchoRole, Surroundings, measure_echoes};
 use crate::math;
+use crate::order;
 use crate::outcome::NoReading;
 use crate::record::{Record, SampleRange};
 use crate::setup::{GaugeSetup, PULSE_CAPACITY, ProbeKind, Span};
@@ -17,6 +18,7 @@ use crate::wall::judgement::{self, Evidence};
 use crate::wall::uncertainty::Source;
 use crate::wall::{thickness, uncertainty};
 use crate::workspace::Workspace;
+use heapless::Vec;
 
 /// Share of clipped samples in the window, in thousandths, from which nothing is read any more.
 const CLIPPED_LIMIT: u16 = 30;
@@ -27,16 +29,21 @@ fn surroundings<'a>(
     pulse: &'a [f32; PULSE_CAPACITY],
     facts: PulseFacts,
     record: &Record<'a>,
-    scan: &Scan,
+    noise: &Noise,
 ) -> Surroundings<'a> {
     Surroundings {
         record: *record,
         pulse: ReferencePulse::new(pulse, facts),
-        noise: scan.noise,
-        timing_noise: scan.timing_noise,
+        noise: noise.per_sample,
+        timing_noise: noise.timing,
         samples_per_cycle: setup.samples_per_cycle(),
     }
 }
+
+/// Height over the scan's threshold, or over that of its like, up to which a peak that no train explains is taken for grain.
+const GRAIN_LIMIT: f32 = 2.5;
+/// So many peaks that no train explains are each other's like.
+const GRAIN_PEAKS: usize = 4;
 
 impl Gauge<'_> {
     /// Checks what can be checked before looking at the codes' course.
@@ -78,13 +85,13 @@ impl Gauge<'_> {
         Ok(range)
     }
 
-    pub(super) fn scan(&mut self, record: &Record<'_>, range: SampleRange) -> Scan {
+    pub(super) fn scan(&mut self, record: &Record<'_>, range: SampleRange) -> (Scan, Noise) {
         let envelope = self
             .workspace
             .envelope
             .get_mut(..record.codes().len())
             .unwrap_or(&mut []);
-        let mut found = scan(
+        let found = scan(
             record.codes(),
             record.format(),
             range,
@@ -93,30 +100,34 @@ impl Gauge<'_> {
             envelope,
         );
         let pulse = ReferencePulse::new(self.workspace.pulse, self.facts);
-        listen(
-            record.codes(),
+        let echoes = reached(
+            found.candidates.iter().copied(),
             &pulse,
-            &mut found,
+            &found,
             &self.detector,
             self.workspace.skirt,
-            envelope,
-            &mut self.workspace.correlation[..],
         );
-        found
+        let noise = Noise {
+            per_sample: found.noise,
+            timing: listen(record, &pulse, &found, found.filled, &echoes, envelope, found.threshold),
+            sure: found.quiet,
+        };
+        (found, noise)
     }
 
     /// Fits the pulse at every candidate; the noise may turn out lower than the scan thought.
-    pub(super) fn measure_echoes(&mut self, record: &Record<'_>, range: SampleRange, scan: &mut Scan) {
+    pub(super) fn measure_echoes(&mut self, record: &Record<'_>, range: SampleRange, scan: &Scan, noise: &mut Noise) {
         let Workspace { pulse, correlation, .. } = &mut self.workspace;
-        let surroundings = surroundings(&self.setup, pulse, self.facts, record, scan);
+        let surroundings = surroundings(&self.setup, pulse, self.facts, record, noise);
         measure_echoes(
             &surroundings,
-            scan,
+            &scan.candidates,
+            noise,
             range,
             &mut self.findings.echoes,
             &mut correlation[..],
         );
-        self.findings.noise = scan.noise;
+        self.findings.noise = noise.per_sample;
     }
 
     /// Which echoes are one wall's multiples.
@@ -125,36 +136,96 @@ impl Gauge<'_> {
         record: &Record<'_>,
         range: SampleRange,
         scan: &Scan,
+        noise: &mut Noise,
     ) -> Result<Train, NoReading> {
         if self.findings.echoes.is_empty() {
             return Err(self.nothing_found(record, range));
         }
         let start = start_of_wall(&self.setup, record, &mut self.findings.echoes)?;
+        let before = surroundings(&self.setup, self.workspace.pulse, self.facts, record, noise);
+        let rules = rules(&self.setup, &before, range, scan, &self.detector, start);
+        let chosen = choose(&before, &self.findings.echoes, &rules);
+        let hypothesis = chosen.map_err(|why| self.undecided(record, noise, why))?;
+
+        let heard = noise.timing;
+        if let Some(timing) = self.listen_again(record, scan, start, &hypothesis) {
+            noise.timing = timing;
+        }
         let Workspace { pulse, train: lags, .. } = &mut self.workspace;
-        let surroundings = surroundings(&self.setup, pulse, self.facts, record, scan);
-        let rules = rules(&self.setup, &surroundings, range, scan, &self.detector, start);
-        let period_of = |samples: f32| self.setup.velocity() * (record.clock().rate.period() * samples) * 0.5;
-        let train = match find_train(&surroundings, &mut self.findings.echoes, &rules, lags) {
-            Ok(train) => train,
-            Err(Undecided::Ambiguous { candidates, best, next }) => {
-                return Err(NoReading::Ambiguous {
-                    candidates,
-                    best: period_of(best),
-                    next: period_of(next),
-                });
-            }
-            Err(Undecided::NoTrain) if self.setup.probe.kind == ProbeKind::DelayLine => {
-                return Err(NoReading::NotCoupled);
-            }
-            Err(Undecided::NoTrain) => return Err(NoReading::NoEcho { noise: scan.noise }),
-        };
+        let surroundings = surroundings(&self.setup, pulse, self.facts, record, noise);
+        for echo in &mut self.findings.echoes {
+            echo.reassess(&heard, &surroundings);
+        }
+        let fitted = fit(&surroundings, &mut self.findings.echoes, &rules, &hypothesis, lags);
+        let train = fitted.map_err(|why| self.undecided(record, noise, why))?;
         self.findings.train = Some(train);
         Ok(train)
     }
 
+    /// The timing noise once it is known which echoes are the wall's: grain stands above the scan's threshold too where it is
+    /// loud, and to stay away from it would be to listen only where it is not. And before the part's
+    /// surface there is none. `None` if that changes nothing.
+    fn listen_again(
+        &self,
+        record: &Record<'_>,
+        scan: &Scan,
+        start: f32,
+        hypothesis: &Hypothesis,
+    ) -> Option<TimingNoise> {
+        let cycle = self.setup.samples_per_cycle();
+        let explained = |candidate: &Candidate| {
+            let place = candidate.index as f32;
+            let known =
+                |echo: &Echo| echo.role != EchoRole::Other && (echo.position.as_samples() - place).abs() < cycle;
+            hypothesis.explains(place, cycle) || self.findings.echoes.iter().any(known)
+        };
+        let mut strangers: Vec<u16, CANDIDATE_CAPACITY> = Vec::new();
+        for candidate in scan.candidates.iter().filter(|candidate| !explained(candidate)) {
+            let _ = strangers.push(candidate.height);
+        }
+        order::sort(&mut strangers, |a, b| a < b);
+        let filled = scan.filled;
+        let surface = math::saturating_i32(start).max(0).unsigned_abs();
+        if strangers.is_empty() && surface <= filled.start {
+            return None;
+        }
+        let range = SampleRange {
+            start: surface.max(filled.start).min(filled.end),
+            end: filled.end,
+        };
+        // Few strangers are echoes unless they hardly stand out; many of about one height are grain.
+        let usual = strangers.get(strangers.len() / 2).copied().unwrap_or(0);
+        let mut loud = GRAIN_LIMIT * scan.threshold;
+        if strangers.len() >= GRAIN_PEAKS {
+            loud = math::larger(loud, GRAIN_LIMIT * f32::from(usual));
+        }
+        let is_echo = |candidate: &Candidate| f32::from(candidate.height) > loud || explained(candidate);
+        let pulse = ReferencePulse::new(self.workspace.pulse, self.facts);
+        let echoes = scan.candidates.iter().copied().filter(is_echo);
+        let echoes = reached(echoes, &pulse, scan, &self.detector, self.workspace.skirt);
+        let envelope = self.workspace.envelope.get(..record.codes().len())?;
+        Some(listen(record, &pulse, scan, range, &echoes, envelope, loud))
+    }
+
+    /// Why there is no train.
+    fn undecided(&self, record: &Record<'_>, noise: &Noise, why: Undecided) -> NoReading {
+        let wall_of = |samples: f32| self.setup.velocity() * (record.clock().rate.period() * samples) * 0.5;
+        match why {
+            Undecided::Ambiguous { candidates, best, next } => NoReading::Ambiguous {
+                candidates,
+                best: wall_of(best),
+                next: wall_of(next),
+            },
+            Undecided::NoTrain if self.setup.probe.kind == ProbeKind::DelayLine => NoReading::NotCoupled,
+            Undecided::NoTrain => NoReading::NoEcho {
+                noise: noise.per_sample,
+            },
+        }
+    }
+
     /// Thickness, budget and doubts.
-    pub(super) fn wall(&mut self, record: &Record<'_>, scan: &Scan, train: &Train) -> Result<Reading, NoReading> {
-        let surroundings = surroundings(&self.setup, self.workspace.pulse, self.facts, record, scan);
+    pub(super) fn wall(&mut self, record: &Record<'_>, noise: &Noise, train: &Train) -> Result<Reading, NoReading> {
+        let surroundings = surroundings(&self.setup, self.workspace.pulse, self.facts, record, noise);
         let times = times(record, train, &self.findings.echoes);
         let needs_two = thickness::wall_span(&self.setup) == Span::BackWallToBackWall;
         if needs_two && times.period.is_none() {
@@ -225,9 +296,9 @@ impl Gauge<'_> {
     }
     /// Pulse metrics of the best echo, and the verdict on the nearest pair.
     #[inline(never)]
-    pub(super) fn describe(&mut self, record: &Record<'_>, scan: &Scan) {
+    pub(super) fn describe(&mut self, record: &Record<'_>, noise: &Noise) {
         let Workspace { pulse, correlation, .. } = &mut self.workspace;
-        let surroundings = surroundings(&self.setup, pulse, self.facts, record, scan);
+        let surroundings = surroundings(&self.setup, pulse, self.facts, record, noise);
         let scratch = &mut correlation[..];
         if let Some((first, second)) = nearest_pair(&self.findings.echoes) {
             self.findings.separation = Some(judge(&surroundings, &first, &second, scratch));

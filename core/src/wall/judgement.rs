@@ -265,7 +265,10 @@ pub fn doubts(evidence: &Evidence<'_>) -> Doubts {
         );
     }
     // Arrivals that do not lie on a line, by more than chance and by more than the reading allows.
-    let typical = evidence.surroundings.arrival_noise(train.support) * math::sqrt(train.unevenness);
+    let typical = evidence
+        .surroundings
+        .arrival_noise(train.support, train.first.as_samples())
+        * math::sqrt(train.unevenness);
     let scatter = evidence.thickness_of(period * typical);
     doubts.raise_if(
         span == Span::BackWallToBackWall && train.is_uneven() && scatter > expanded,

@@ -36,7 +36,7 @@ struct Tooth {
 
 /// A period with its place.
 #[derive(Clone, Copy, Debug)]
-pub(super) struct Hypothesis {
+pub struct Hypothesis {
     /// Place of the multiple with number 0: where the wall begins.
     pub(super) zero: f32,
     pub(super) period: f32,
@@ -46,6 +46,21 @@ pub(super) struct Hypothesis {
     /// Number of the first and of the last multiple that has an echo.
     pub(super) first: u32,
     pub(super) last: u32,
+}
+
+impl Hypothesis {
+    /// Does a multiple of this train lie within `tolerance` of a place? In samples.
+    #[must_use]
+    pub fn explains(&self, place: f32, tolerance: f32) -> bool {
+        let (number, off) = nearest(self, place);
+        number >= 1 && off.abs() < tolerance
+    }
+
+    /// Place of a multiple in samples from the record's first.
+    #[must_use]
+    pub fn place(&self, number: u32) -> f32 {
+        self.zero + number as f32 * self.period
+    }
 }
 
 type Teeth = Vec<Tooth, ECHO_CAPACITY>;

@@ -40,7 +40,11 @@ struct Member {
     first_lag: i32,
     /// Fitted amplitude in codes, with sign.
     amplitude: f32,
-    /// Root of its weight: the amplitude, less what its correlation's top is blunter than the pulse's.
+    /// How sharp its correlation's top is over the pulse's own.
+    sharpness: f32,
+    /// Timing noise at its place over that at the first multiple: 1 in white noise, less where grain dies away.
+    noise: f32,
+    /// Root of its weight: the amplitude, less what its correlation's top is blunter than the pulse's, over the noise.
     weight: f32,
     /// Distance of its own arrival from the line, in samples.
     off: f32,
@@ -89,9 +93,10 @@ pub(super) fn fit(
             let place = line.place(usize::from(member.step)) - origin - member.first_lag as f32;
             let value = interpolate::at(window, place);
             member.amplitude = value / surroundings.pulse.facts.energy;
-            let sharp = sharpness(curvature(window, place, value), member.amplitude, &surroundings.pulse);
-            member.weight = member.amplitude.abs() * sharp;
-            member.off = slope(window, place) / (member.amplitude * sharp * surroundings.pulse.facts.derivative_energy);
+            member.sharpness = sharpness(curvature(window, place, value), member.amplitude, &surroundings.pulse);
+            member.weight = member.amplitude.abs() * member.sharpness / member.noise;
+            member.off = slope(window, place)
+                / (member.amplitude * member.sharpness * surroundings.pulse.facts.derivative_energy);
             // A step beyond a tenth of a cycle is noise or another cycle: the line decides, not the echo.
             let limit = 0.1 * surroundings.samples_per_cycle;
             let off = math::clamp(member.off, -limit, limit);
@@ -120,7 +125,8 @@ pub(super) fn fit(
     if !(line.period > 0.0) {
         return None;
     }
-    let variance = surroundings.timing_noise * surroundings.timing_noise / surroundings.pulse.facts.derivative_energy;
+    let noise_there = surroundings.timing_noise.at(first.as_samples());
+    let variance = noise_there * noise_there / surroundings.pulse.facts.derivative_energy;
     let determinant = s0 * s2 - s1 * s1;
     let (mut scatter, mut strongest) = (0.0, 0.0);
     for member in &members {
@@ -199,6 +205,7 @@ fn collect(
     let pulse = &surroundings.pulse;
     let middle = (TRAIN_LAGS / 2) as i32 - 1;
     let known = (best.last - best.first) as usize;
+    let noise_at_first = surroundings.timing_noise.at(line.base as f32 + line.first);
     let mut lost = 0;
     for step in 0..=u8::MAX {
         let place = line.place(usize::from(step));
@@ -230,6 +237,8 @@ fn collect(
                 step,
                 first_lag,
                 amplitude: sign * amplitude,
+                sharpness: 1.0,
+                noise: surroundings.timing_noise.at(line.base as f32 + place) / noise_at_first,
                 weight: amplitude,
                 off: 0.0,
             });
@@ -266,7 +275,7 @@ fn give_roles(
                 amplitude: member.amplitude,
                 // The fit has not looked: the strong multiples speak for the train.
                 group_lag: 0.0,
-                sharpness: member.weight / member.amplitude.abs(),
+                sharpness: member.sharpness,
             },
         ) {
             echo.role = EchoRole::BackWall(multiple);

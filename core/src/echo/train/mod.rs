@@ -27,7 +27,7 @@ use crate::math;
 use crate::units::SamplePosition;
 use crate::workspace::{ECHO_CAPACITY, TRAIN_LAGS};
 
-pub use choosing::MARGIN;
+pub use choosing::{Hypothesis, MARGIN};
 
 /// What is known before the echoes are looked at. Places are in samples from the record's first.
 #[derive(Clone, Copy, Debug, PartialEq)]
@@ -104,20 +104,33 @@ pub enum Undecided {
     },
 }
 
-/// Finds the train among `echoes`, gives them their roles, adds weak multiples that only the fit could find, and fits.
+/// Which period explains the echoes?
 ///
 /// Echoes that already have a role other than [`EchoRole::Other`](crate::echo::EchoRole::Other) (an interface echo) take no part.
 ///
 /// # Errors
 /// [`Undecided`].
 #[inline(never)]
-pub fn find_train(
+pub fn choose(surroundings: &Surroundings<'_>, echoes: &EchoList, rules: &Rules) -> Result<Hypothesis, Undecided> {
+    choosing::choose(surroundings, echoes, rules, tolerance(surroundings))
+}
+
+/// Fits the chosen train, gives its echoes their roles and adds weak multiples that only the fit could find.
+///
+/// # Errors
+/// [`Undecided::NoTrain`] if the first multiple is lost in the fit.
+#[inline(never)]
+pub fn fit(
     surroundings: &Surroundings<'_>,
     echoes: &mut EchoList,
     rules: &Rules,
+    choice: &Hypothesis,
     lags: &mut [f32; ECHO_CAPACITY * TRAIN_LAGS],
 ) -> Result<Train, Undecided> {
-    let tolerance = 0.2 * surroundings.samples_per_cycle;
-    let best = choosing::choose(surroundings, echoes, rules, tolerance)?;
-    fitting::fit(surroundings, echoes, rules, &best, tolerance, lags).ok_or(Undecided::NoTrain)
+    fitting::fit(surroundings, echoes, rules, choice, tolerance(surroundings), lags).ok_or(Undecided::NoTrain)
+}
+
+/// How far from its tooth, in samples, an echo may lie.
+fn tolerance(surroundings: &Surroundings<'_>) -> f32 {
+    0.2 * surroundings.samples_per_cycle
 }
