@@ -22,8 +22,8 @@ use crate::setup::PULSE_CAPACITY;
 use crate::workspace::ECHO_CAPACITY;
 use heapless::Vec;
 
-/// Places looked at, if the record has room for so many. A root mean square of 128 values is known to 6 %.
-const PLACES: u32 = 160;
+/// Places looked at, if the record has room for so many. A root mean square of 100 values is known to 7 %.
+const PLACES: u32 = 100;
 /// With fewer places the record has no quiet stretch to speak of.
 const FEWEST_PLACES: f32 = 16.0;
 /// Parts of the record whose noise may differ.
