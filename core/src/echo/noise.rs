@@ -175,7 +175,10 @@ pub fn listen(
 ) -> TimingNoise {
     let mut parts = [Part::default(); BLOCKS];
     let per_sample = BLOCKS as f32 / math::larger(range.length() as f32, 1.0);
-    let step = (u32::from(pulse.facts.length) / 2).max(range.length() / PLACES);
+    // Densest where the first back wall mostly is: the first quarter gets as many places as the rest, if there is room.
+    let half_pulse = u32::from(pulse.facts.length) / 2;
+    let early = range.start + range.length() / 4;
+    let step = |place: u32| half_pulse.max(range.length() / if place < early { 2 * PLACES } else { PLACES * 2 / 3 });
     quiet_places(range, step, echoes, |place| {
         if f32::from(envelope.get(place as usize).copied().unwrap_or(u16::MAX)) > quiet {
             return;
@@ -229,15 +232,22 @@ fn course(parts: &[Part; BLOCKS], energy: f32, noise: f32, least: f32) -> Timing
     for (knot, level) in course.knots.iter_mut().zip(&levels) {
         *knot = (
             level.places / level.count,
-            math::larger(level.variance() / energy, least),
+            math::larger(level.variance() * few(level.count) / energy, least),
         );
         course.count += 1;
     }
     course
 }
 
+/// By how much the variance of so few values has to be widened for k = 2 to hold: half of Student's t at 95.45 %,
+/// squared (JCGM 100:2008, table G.2), as 1 + 2.6 / (n - 1) to 7 %. Fewer than 4 values are as good as 4: never are
+/// so few alone.
+fn few(count: f32) -> f32 {
+    1.0 + 2.6 / math::larger(count - 1.0, 3.0)
+}
+
 /// Calls `visit` with places that no echo reaches.
-fn quiet_places(range: SampleRange, step: u32, echoes: &[Reached], mut visit: impl FnMut(u32)) {
+fn quiet_places(range: SampleRange, step: impl Fn(u32) -> u32, echoes: &[Reached], mut visit: impl FnMut(u32)) {
     let mut place = range.start;
     while place < range.end {
         match echoes.iter().find(|(middle, reach)| place.abs_diff(*middle) < *reach) {
@@ -245,7 +255,7 @@ fn quiet_places(range: SampleRange, step: u32, echoes: &[Reached], mut visit: im
             Some((middle, reach)) => place = middle.saturating_add(*reach).max(place + 1),
             None => {
                 visit(place);
-                place += step.max(1);
+                place += step(place).max(1);
             }
         }
     }
@@ -355,6 +365,26 @@ mod tests {
             for (x, s) in signal.iter_mut().skip(start).zip(self.pulse().samples) {
                 *x += amplitude * s;
             }
+        }
+    }
+
+    #[test]
+    fn val_few_values_are_widened_as_student_says() {
+        // t at 95.45 % for 5, 7, 10, 20, 50 and 100 degrees of freedom: JCGM 100:2008, table G.2.
+        for (count, t) in [
+            (5.0, 2.65),
+            (7.0, 2.43),
+            (10.0, 2.28),
+            (20.0, 2.13),
+            (50.0, 2.05),
+            (100.0, 2.025),
+        ] {
+            let widened: f32 = t * t / 4.0;
+            assert!(
+                (few(count) / widened - 1.0).abs() < 0.07,
+                "{count}: {} {widened}",
+                few(count)
+            );
         }
     }
 
