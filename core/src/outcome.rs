@@ -217,8 +217,8 @@ doubts! {
     OutsideCalibratedRange = 6, "outside-calibrated-range", "calibrate on blocks that bracket the part";
     /// The element size is not known, and the beam's spreading could have moved the reading.
     BeamUnknown = 7, "beam-unknown", "state the element diameter in the set-up";
-    /// A dual-element probe's V-shaped path is not corrected.
-    VPathUncorrected = 8, "v-path-uncorrected", "calibrate on a block close to the part's thickness";
+    /// A dual-element probe's V-shaped path is not corrected, or could have moved the reading in spite of it.
+    VPathUncorrected = 8, "v-path-uncorrected", "state the distance of the elements and their delay blocks in the set-up";
     /// Fewer than four samples a cycle of the centre frequency.
     CoarseSampling = 9, "coarse-sampling", "sample faster, or interleave delayed shots";
     /// Samples near the reading's echoes are clipped.

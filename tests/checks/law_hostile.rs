@@ -3,8 +3,9 @@
 
 use halfpulse::wall::calibration::{velocity_from_thickness, zero_and_velocity, zero_at_known_velocity};
 use halfpulse::{
-    AdcFormat, Averager, Block, CalibratedRange, Coating, EchoRole, Gauge, GaugeSetup, Hertz, Interleaver, Material,
-    Metres, MetresPerSecond, NoReading, Probe, Reading, Record, SampleClock, Scratch, Seconds, Span, Window, Zero,
+    AdcFormat, Averager, Block, CalibratedRange, Coating, DelayLine, EchoRole, ElementSeparation, Gauge, GaugeSetup,
+    Hertz, Interleaver, Material, Metres, MetresPerSecond, NoReading, Probe, Reading, Record, SampleClock, Scratch,
+    Seconds, Span, Window, Zero,
 };
 use halfpulse_tests::oracle::{self, Random};
 use proptest::prelude::*;
@@ -118,6 +119,9 @@ prop_compose! {
         film in around(2e-6),
         coating in prop::option::of(around(2300.0)),
         calibrated in prop::option::of((around(2e-3), around(25e-3))),
+        delay_line in prop::option::of((around(8e-3), around(2350.0))),
+        separation in prop::option::of((around(6e-3), around(1e-4))),
+        learned in (prop::option::of(around(5e-3)), around(0.07)),
     ) -> GaugeSetup {
         let frequency = Hertz::new(frequency);
         let mut probe = match kind {
@@ -127,6 +131,12 @@ prop_compose! {
         }
         .with_couplant_film(Metres::new(film));
         probe.element_diameter = diameter.map(Metres::new);
+        probe.element_diameter_uncertainty = learned.1;
+        probe.delay_line = delay_line
+            .map(|(length, velocity)| DelayLine { length: Metres::new(length), velocity: MetresPerSecond::new(velocity) });
+        if kind == 2 {
+            probe.separation = separation.map(|(d, u)| ElementSeparation::new(Metres::new(d), Metres::new(u)));
+        }
         GaugeSetup {
             // "Not a number" stands for the lowest rate that the probe allows.
             sample_rate: if rate.is_nan() { probe.upper_frequency() * 2.0 } else { Hertz::new(rate) },
@@ -136,6 +146,7 @@ prop_compose! {
                 offset: Seconds::new(if zero.3 { zero.0 } else { 0.0 }),
                 standard_uncertainty: Seconds::new(zero.1),
                 velocity_correlation: zero.2,
+                learned_on: learned.0.map(Metres::new),
             },
             span: [Span::TransmissionPulseToBackWall, Span::InterfaceToBackWall, Span::BackWallToBackWall][usize::from(span)],
             window: Window {

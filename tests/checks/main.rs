@@ -11,6 +11,7 @@ mod val_envelope;
 mod val_gauge;
 mod val_pulse;
 mod val_receiver;
+mod val_path;
 mod val_population;
 mod val_train_fit;
 mod val_no_echo;

@@ -97,12 +97,13 @@ pub fn rules(
         visible_from,
         visible_to,
         threshold: scan.threshold / detector.counts_per_code(format) / surroundings.amplitude_noise(),
+        law: thickness::path_law(setup).scaled(surroundings.record.clock().rate.get()),
     }
 }
 
-/// The times that thickness and budget are made from.
+/// The times that thickness and budget are made from, of straight ways.
 #[must_use]
-pub fn times(record: &Record<'_>, train: &Train, echoes: &[Echo]) -> TrainTimes {
+pub fn times(setup: &GaugeSetup, record: &Record<'_>, train: &Train, echoes: &[Echo]) -> TrainTimes {
     let clock = record.clock();
     let seconds = |samples: f32| clock.rate.period() * samples;
     let role = |role: EchoRole| echoes.iter().find(|echo| echo.role == role);
@@ -124,9 +125,11 @@ pub fn times(record: &Record<'_>, train: &Train, echoes: &[Echo]) -> TrainTimes 
         };
         Timed::new(seconds(train.period), seconds(u * ratio))
     });
-    let first = role(EchoRole::BackWall(1)).map(timed).unwrap_or_else(|| {
+    let seen = role(EchoRole::BackWall(1)).map(|echo| TrainTimes::single(timed(echo)).straightened(setup));
+    let mut times = seen.unwrap_or_else(|| {
         // The first back wall lies in the dead zone: it follows from the others.
         let steps = f32::from(train.first_multiple) - 1.0;
+        let earliest = TrainTimes::single(Timed::new(clock.time_of(train.first), Seconds::ZERO)).straightened(setup);
         let number = f32::from(train.first_multiple);
         let u = match (period, role(EchoRole::BackWall(train.first_multiple))) {
             (Some(period), _) => period.standard_uncertainty * number,
@@ -134,9 +137,11 @@ pub fn times(record: &Record<'_>, train: &Train, echoes: &[Echo]) -> TrainTimes 
             (None, Some(lone)) => lone.standard_uncertainty / number,
             (None, None) => seconds(train.period),
         };
-        Timed::new(clock.time_of(train.first) - seconds(train.period) * steps, u)
+        TrainTimes::single(Timed::new(
+            earliest.first_back_wall.time - seconds(train.period) * steps,
+            u,
+        ))
     });
-    let mut times = TrainTimes::single(first);
     if let Some(period) = period {
         times = times.with_period(period, train.correlation);
     }

@@ -6,7 +6,7 @@ use crate::echo::noise::{Noise, TimingNoise, listen, reached};
 use crate::echo::pulse::{PulseContext, PulseFacts, ReferencePulse, measure_pulse};
 use crate::echo::scan::{CANDIDATE_CAPACITY, Candidate, Scan, scan};
 use crate::echo::separation::{judge, nearest_pair};
-use crate::echo::train::{Hypothesis, Train, Undecided, choose, fit};
+use crate::echo::train::{Hypothesis, Rules, Train, Undecided, choose, fit};
 use crate::echo::{Echo, EchoRole, Surroundings, measure_echoes};
 use crate::math;
 use crate::order;
@@ -148,7 +148,7 @@ impl Gauge<'_> {
         let hypothesis = chosen.map_err(|why| self.undecided(record, noise, why))?;
 
         let heard = noise.timing;
-        if let Some(timing) = self.listen_again(record, scan, start, &hypothesis) {
+        if let Some(timing) = self.listen_again(record, scan, &rules, &hypothesis) {
             noise.timing = timing;
         }
         let Workspace { pulse, train: lags, .. } = &mut self.workspace;
@@ -169,7 +169,7 @@ impl Gauge<'_> {
         &self,
         record: &Record<'_>,
         scan: &Scan,
-        start: f32,
+        rules: &Rules,
         hypothesis: &Hypothesis,
     ) -> Option<TimingNoise> {
         let cycle = self.setup.samples_per_cycle();
@@ -177,7 +177,7 @@ impl Gauge<'_> {
             let place = candidate.index as f32;
             let known =
                 |echo: &Echo| echo.role != EchoRole::Other && (echo.position.as_samples() - place).abs() < cycle;
-            hypothesis.explains(place, cycle) || self.findings.echoes.iter().any(known)
+            hypothesis.explains(rules.straight_place(place), cycle) || self.findings.echoes.iter().any(known)
         };
         let mut strangers: Vec<u16, CANDIDATE_CAPACITY> = Vec::new();
         for candidate in scan.candidates.iter().filter(|candidate| !explained(candidate)) {
@@ -185,7 +185,7 @@ impl Gauge<'_> {
         }
         order::sort(&mut strangers, |a, b| a < b);
         let filled = scan.filled;
-        let surface = math::saturating_i32(start).max(0).unsigned_abs();
+        let surface = math::saturating_i32(rules.start).max(0).unsigned_abs();
         if strangers.is_empty() && surface <= filled.start {
             return None;
         }
@@ -226,7 +226,7 @@ impl Gauge<'_> {
     /// Thickness, budget and doubts.
     pub(super) fn wall(&mut self, record: &Record<'_>, noise: &Noise, train: &Train) -> Result<Reading, NoReading> {
         let surroundings = surroundings(&self.setup, self.workspace.pulse, self.facts, record, noise);
-        let times = times(record, train, &self.findings.echoes);
+        let times = times(&self.setup, record, train, &self.findings.echoes);
         let needs_two = thickness::wall_span(&self.setup) == Span::BackWallToBackWall;
         if needs_two && times.period.is_none() {
             return Err(NoReading::OneEchoWhereTwoAreNeeded {

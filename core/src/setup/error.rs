@@ -17,8 +17,14 @@ pub enum SetupError {
     RelativeBandwidth,
     /// The element diameter is not a positive number.
     ElementDiameter,
+    /// The uncertainty of the element diameter is not between 0 and 100 %.
+    ElementDiameterUncertainty,
     /// The couplant film is negative or not a number.
     CouplantFilm,
+    /// Length or velocity of the delay line is not a positive number.
+    DelayLine,
+    /// The distance of the elements or its uncertainty is negative or not a number, or the probe has one element.
+    ElementSeparation,
     /// The velocity is not a positive number.
     Velocity,
     /// The velocity's uncertainty is negative or not a number.
@@ -37,6 +43,8 @@ pub enum SetupError {
     ZeroUncertainty,
     /// The correlation of velocity and zero is not between -1 and 1.
     ZeroCorrelation,
+    /// The thickness of the block that the zero was learned on is negative or not a number.
+    ZeroLearnedOn,
     /// The window's start does not lie before its end.
     Window,
     /// The coverage factor is not a positive number.
@@ -72,7 +80,14 @@ impl SetupError {
             Self::CentreFrequency => "centre frequency must be a positive number of hertz, up to 1e12",
             Self::RelativeBandwidth => "relative bandwidth must be above 0 and at most 200 %",
             Self::ElementDiameter => "element diameter must be a positive length up to 1 km, or left out if unknown",
+            Self::ElementDiameterUncertainty => "relative uncertainty of the element diameter must be from 0 to 100 %",
             Self::CouplantFilm => "couplant film must be zero or a positive length up to 1 m",
+            Self::DelayLine => {
+                "delay line must have a positive length up to 1 km and a velocity from 1 to 1e6 m/s, or be left out"
+            }
+            Self::ElementSeparation => {
+                "element separation and its uncertainty must be zero or positive, and the probe a dual-element one"
+            }
             Self::Velocity => "velocity must be a positive number of metres per second, from 1 to 1e6",
             Self::VelocityUncertainty => "velocity standard uncertainty must be zero or positive, up to 1e6 m/s",
             Self::PartVelocityUncertainty => {
@@ -88,6 +103,9 @@ impl SetupError {
             Self::ZeroOffset => "zero offset must be a number of seconds, less than 1",
             Self::ZeroUncertainty => "zero standard uncertainty must be zero or positive, less than 1 s",
             Self::ZeroCorrelation => "correlation of velocity and zero must lie between -1 and 1",
+            Self::ZeroLearnedOn => {
+                "the block that the zero was learned on must be zero or a positive length up to 1 km"
+            }
             Self::Window => "the window must start before it ends",
             Self::CoverageFactor => "coverage factor must be a positive number up to 1000, normally 2",
             Self::CoatingVelocity => "coating velocity must be a positive number of metres per second, from 1 to 1e6",

@@ -10,7 +10,7 @@ mod probe;
 
 pub use error::SetupError;
 pub use material::{Material, PartTemperature, UNKNOWN_TEMPERATURE, VelocityTemperature};
-pub use probe::{Probe, ProbeFace, ProbeKind};
+pub use probe::{DelayLine, ElementSeparation, Probe, ProbeFace, ProbeKind};
 
 use crate::units::{Celsius, Hertz, Metres, MetresPerSecond, Seconds};
 
@@ -50,13 +50,18 @@ pub struct Coating {
 /// The probe's zero, as learned on a block. It belongs to the reference pulse it was learned with.
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub struct Zero {
-    /// Where the part's front surface lies on the record's time axis.
+    /// Where the part's front surface lies on the record's time axis: for a dual-element probe the time of the straight
+    /// way through its blocks.
     pub offset: Seconds,
     /// Its standard uncertainty (k = 1).
     pub standard_uncertainty: Seconds,
     /// Correlation between the errors of velocity and offset, from -1 to 1. A two-block calibration
     /// makes it strongly positive; to leave it out would misstate every uncertainty.
     pub velocity_correlation: f32,
+    /// Which block's beam spreading the offset holds: that of a block on which it was learned without correcting for the
+    /// beam, or none (a thickness of 0) if the beam was corrected. Not known: what rests on the offset is not corrected
+    /// for the beam either.
+    pub learned_on: Option<Metres>,
 }
 
 impl Zero {
@@ -67,7 +72,16 @@ impl Zero {
             offset,
             standard_uncertainty,
             velocity_correlation: 0.0,
+            learned_on: None,
         }
+    }
+
+    /// The same zero, learned on a block of this thickness without correcting for the beam; a thickness of 0 if the beam
+    /// was corrected.
+    #[must_use]
+    pub const fn with_learned_on(mut self, block: Metres) -> Self {
+        self.learned_on = Some(block);
+        self
     }
 }
 
@@ -220,8 +234,23 @@ impl GaugeSetup {
         {
             return Some(SetupError::ElementDiameter);
         }
+        if !within(probe.element_diameter_uncertainty, 0.0, 1.0) {
+            return Some(SetupError::ElementDiameterUncertainty);
+        }
         if !within(probe.couplant_film.get(), 0.0, 1.0) {
             return Some(SetupError::CouplantFilm);
+        }
+        if let Some(line) = probe.delay_line
+            && !(within(line.length.get(), 1e-6, 1e3) && within(line.velocity.get(), 1.0, 1e6))
+        {
+            return Some(SetupError::DelayLine);
+        }
+        if let Some(separation) = probe.separation
+            && !(within(separation.distance.get(), 0.0, 1e3)
+                && within(separation.standard_uncertainty.get(), 0.0, 1e3)
+                && matches!(probe.kind, ProbeKind::DualElement))
+        {
+            return Some(SetupError::ElementSeparation);
         }
         if !within(self.material.velocity.get(), 1.0, 1e6) {
             return Some(SetupError::Velocity);
@@ -258,6 +287,11 @@ impl GaugeSetup {
         }
         if !(self.zero.velocity_correlation >= -1.0 && self.zero.velocity_correlation <= 1.0) {
             return Some(SetupError::ZeroCorrelation);
+        }
+        if let Some(block) = self.zero.learned_on
+            && !within(block.get(), 0.0, 1e3)
+        {
+            return Some(SetupError::ZeroLearnedOn);
         }
         let window = &self.window;
         if !(within(window.from.get(), -1e3, 1e3)
@@ -332,6 +366,25 @@ mod tests {
             Some(SetupError::CouplantFilm)
         );
         assert_eq!(
+            spoilt(|s| s.probe.delay_line = Some(DelayLine {
+                length: Metres::from_mm(8.0),
+                velocity: MetresPerSecond::ZERO
+            })),
+            Some(SetupError::DelayLine)
+        );
+        let six = ElementSeparation::new(Metres::from_mm(6.0), Metres::ZERO);
+        assert_eq!(
+            spoilt(|s| s.probe.separation = Some(six)),
+            Some(SetupError::ElementSeparation)
+        );
+        assert_eq!(
+            spoilt(|s| {
+                s.probe.kind = ProbeKind::DualElement;
+                s.probe.separation = Some(ElementSeparation::new(Metres::new(-1e-3), Metres::ZERO));
+            }),
+            Some(SetupError::ElementSeparation)
+        );
+        assert_eq!(
             spoilt(|s| s.material.velocity = MetresPerSecond::new(-1.0)),
             Some(SetupError::Velocity)
         );
@@ -368,6 +421,14 @@ mod tests {
         assert_eq!(
             spoilt(|s| s.zero.velocity_correlation = 1.1),
             Some(SetupError::ZeroCorrelation)
+        );
+        assert_eq!(
+            spoilt(|s| s.zero.learned_on = Some(Metres::new(-1.0))),
+            Some(SetupError::ZeroLearnedOn)
+        );
+        assert_eq!(
+            spoilt(|s| s.probe.element_diameter_uncertainty = f32::NAN),
+            Some(SetupError::ElementDiameterUncertainty)
         );
         assert_eq!(spoilt(|s| s.window.to = s.window.from), Some(SetupError::Window));
         assert_eq!(spoilt(|s| s.coverage_factor = 0.0), Some(SetupError::CoverageFactor));

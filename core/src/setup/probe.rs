@@ -1,6 +1,6 @@
 //! The probe as its data sheet describes it.
 
-use crate::units::{Hertz, Metres};
+use crate::units::{Hertz, Metres, MetresPerSecond};
 
 /// How the probe meets the part.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
@@ -22,6 +22,35 @@ pub enum ProbeFace {
     Plastic,
 }
 
+/// A delay line, or each of the two delay blocks of a dual-element probe.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct DelayLine {
+    /// Length, once.
+    pub length: Metres,
+    /// Velocity of longitudinal waves in it.
+    pub velocity: MetresPerSecond,
+}
+
+/// How far apart the elements of a dual-element probe sit.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct ElementSeparation {
+    /// From centre to centre, where they sit.
+    pub distance: Metres,
+    /// Its standard uncertainty (k = 1): what is not known of the centres between which sound goes, and of the blocks.
+    pub standard_uncertainty: Metres,
+}
+
+impl ElementSeparation {
+    /// A distance with its standard uncertainty.
+    #[must_use]
+    pub const fn new(distance: Metres, standard_uncertainty: Metres) -> Self {
+        Self {
+            distance,
+            standard_uncertainty,
+        }
+    }
+}
+
 /// The probe as its data sheet describes it.
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub struct Probe {
@@ -33,11 +62,19 @@ pub struct Probe {
     pub relative_bandwidth: f32,
     /// Diameter of the active element, if known: without it the budget has no term for the beam.
     pub element_diameter: Option<Metres>,
+    /// Relative standard uncertainty (k = 1) of the diameter that acts: 0.07 is 7 %. The one of the data sheet is the
+    /// plate's; areas that act have been found up to 40 % smaller.
+    pub element_diameter_uncertainty: f32,
     /// What touches the couplant.
     pub face: ProbeFace,
     /// How far the couplant film may differ from the film that the zero was learned with. The
     /// uncertainty's coupling term follows from it; 0 leaves it out.
     pub couplant_film: Metres,
+    /// The delay line, or the blocks of a dual-element probe, if known.
+    pub delay_line: Option<DelayLine>,
+    /// Distance of a dual-element probe's elements, if known: without it every reading carries
+    /// [`crate::outcome::Doubt::VPathUncorrected`]. Without blocks in [`Probe::delay_line`] the elements sit on the part.
+    pub separation: Option<ElementSeparation>,
 }
 
 impl Probe {
@@ -47,8 +84,11 @@ impl Probe {
             centre_frequency,
             relative_bandwidth,
             element_diameter: None,
+            element_diameter_uncertainty: 0.07,
             face,
             couplant_film: Metres::new(2e-6),
+            delay_line: None,
+            separation: None,
         }
     }
 
@@ -74,8 +114,8 @@ impl Probe {
         )
     }
 
-    /// A dual-element probe. Its V-shaped path is not corrected yet: every reading carries
-    /// [`crate::outcome::Doubt::VPathUncorrected`].
+    /// A dual-element probe. Its V-shaped path is corrected once [`Probe::with_separation`] says how far apart the
+    /// elements sit, and [`Probe::with_delay_line`] on what.
     #[must_use]
     pub const fn dual_element(centre_frequency: Hertz, relative_bandwidth: f32) -> Self {
         Self::of_kind(
@@ -93,6 +133,13 @@ impl Probe {
         self
     }
 
+    /// The same probe with another relative uncertainty of the element's diameter.
+    #[must_use]
+    pub const fn with_element_diameter_uncertainty(mut self, relative: f32) -> Self {
+        self.element_diameter_uncertainty = relative;
+        self
+    }
+
     /// The same probe with another bound on the couplant film's change.
     #[must_use]
     pub const fn with_couplant_film(mut self, film: Metres) -> Self {
@@ -104,6 +151,20 @@ impl Probe {
     #[must_use]
     pub const fn with_face(mut self, face: ProbeFace) -> Self {
         self.face = face;
+        self
+    }
+
+    /// The same probe with a known delay line, or blocks of a dual-element probe.
+    #[must_use]
+    pub const fn with_delay_line(mut self, delay_line: DelayLine) -> Self {
+        self.delay_line = Some(delay_line);
+        self
+    }
+
+    /// The same dual-element probe with a known distance of its elements.
+    #[must_use]
+    pub const fn with_separation(mut self, separation: ElementSeparation) -> Self {
+        self.separation = Some(separation);
         self
     }
 

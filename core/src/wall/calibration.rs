@@ -82,6 +82,7 @@ pub fn zero_at_known_velocity(block: &Block, material: &Material) -> Result<Zero
         offset: block.time - trip,
         standard_uncertainty: Seconds::new(uncertainty),
         velocity_correlation: share(from_velocity, uncertainty),
+        learned_on: None,
     })
 }
 
@@ -140,6 +141,7 @@ pub fn zero_and_velocity(one: &Block, other: &Block) -> Result<(Zero, Material),
             offset: thin.time - Seconds::new(trip),
             standard_uncertainty: Seconds::new(zero_uncertainty),
             velocity_correlation: share(covariance, relative * zero_uncertainty),
+            learned_on: None,
         })?,
         Material::new(velocity, velocity * relative),
     ))

@@ -59,7 +59,7 @@ impl Evidence<'_> {
 
     /// Thickness that a time stands for.
     fn thickness_of(&self, time: Seconds) -> Metres {
-        self.setup.velocity() * time * 0.5
+        self.setup.velocity() * time * (0.5 * uncertainty::gain(self.setup, self.wall))
     }
 
     /// How far a difference between the pulse and what came back could have moved an arrival.
@@ -247,7 +247,10 @@ pub fn doubts(evidence: &Evidence<'_>) -> Doubts {
         uncertainty::unknown_temperature_matters(setup, wall, evidence.budget),
         Doubt::TemperatureUnknown,
     );
-    doubts.raise_if(setup.probe.kind == ProbeKind::DualElement, Doubt::VPathUncorrected);
+    doubts.raise_if(
+        uncertainty::v_path_matters(setup, wall, expanded),
+        Doubt::VPathUncorrected,
+    );
     doubts.raise_if(
         setup.samples_per_cycle() < SAMPLES_PER_CYCLE_LIMIT,
         Doubt::CoarseSampling,
@@ -258,11 +261,10 @@ pub fn doubts(evidence: &Evidence<'_>) -> Doubts {
     if span != Span::BackWallToBackWall
         && let Some(excess) = thickness::excess(setup, times)
     {
-        let spread = evidence.thickness_of(excess.standard_uncertainty) * setup.coverage_factor;
-        doubts.raise_if(
-            evidence.thickness_of(excess.time).abs() > expanded + spread,
-            Doubt::ZeroContradicted,
-        );
+        // Straight times already.
+        let straight = |time: Seconds| setup.velocity() * time * 0.5;
+        let spread = straight(excess.standard_uncertainty) * setup.coverage_factor;
+        doubts.raise_if(straight(excess.time).abs() > expanded + spread, Doubt::ZeroContradicted);
     }
     // Arrivals that do not lie on a line, by more than chance and by more than the reading allows.
     let typical = evidence

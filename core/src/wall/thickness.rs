@@ -1,6 +1,7 @@
 //! Times to thickness.
 
 use crate::math;
+use crate::path::{PathLaw, VPath};
 use crate::setup::{GaugeSetup, ProbeKind, Span};
 use crate::units::{Metres, MetresPerSecond, Seconds};
 
@@ -24,7 +25,8 @@ impl Timed {
     }
 }
 
-/// What the fit of one record's back-wall train gave. Times count from the transmission trigger.
+/// What the fit of one record's back-wall train gave. Times count from the transmission trigger, and are those of
+/// straight ways: see [`path_law`] and [`TrainTimes::straightened`].
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub struct TrainTimes {
     /// Arrival of the first back wall.
@@ -64,6 +66,40 @@ impl TrainTimes {
         self.interface = Some(interface);
         self
     }
+
+    /// The same with the first back wall where it would lie, were its way straight, if it is now where it came. The
+    /// period of a fitted train is straight already.
+    #[must_use]
+    pub fn straightened(mut self, setup: &GaugeSetup) -> Self {
+        if let law @ PathLaw::V(_) = path_law(setup) {
+            let first = self.first_back_wall;
+            let straight = law.straighten((first.time - setup.zero.offset).get());
+            self.first_back_wall = Timed::new(
+                setup.zero.offset + Seconds::new(straight),
+                first.standard_uncertainty * (1.0 / law.slope(straight)),
+            );
+        }
+        self
+    }
+}
+
+/// How the times of this set-up's echoes follow from straight ways, in seconds. A dual-element probe whose elements'
+/// distance is stated has a V; everything else is straight.
+#[must_use]
+pub fn path_law(setup: &GaugeSetup) -> PathLaw {
+    match (setup.probe.kind, setup.probe.separation) {
+        (ProbeKind::DualElement, Some(separation)) => {
+            PathLaw::V(VPath::new(separation, setup.probe.delay_line, setup.velocity()))
+        }
+        _ => PathLaw::Straight,
+    }
+}
+
+/// How much later than straight the first back wall of a wall comes. A block's time less this is what calibration
+/// needs.
+#[must_use]
+pub fn path_deviation(setup: &GaugeSetup, wall: Metres) -> Seconds {
+    Seconds::new(path_law(setup).deviation((wall * 2.0 / setup.velocity()).get()))
 }
 
 /// The span that the wall is read by. On a coated part that is back wall to back wall whatever the set-up
@@ -148,14 +184,40 @@ pub fn coating(setup: &GaugeSetup, times: &TrainTimes) -> Option<Metres> {
 /// back wall must besides lie in the window with its front, half of T20 behind the start.
 #[must_use]
 pub fn thinnest_wall(setup: &GaugeSetup, envelope_duration: Seconds) -> Metres {
-    let mut spacing = envelope_duration * SMALLEST_SPACING;
+    let law = path_law(setup);
+    let mut trip = law.period_of_spacing(envelope_duration.get() * SMALLEST_SPACING);
     if matches!(wall_span(setup), Span::TransmissionPulseToBackWall) {
         let dead = setup.window.from - setup.zero.offset + envelope_duration * 0.5;
-        if dead > spacing {
-            spacing = dead;
+        trip = math::larger(trip, law.straighten(dead.get()));
+    }
+    half_path(setup.velocity(), Seconds::new(trip))
+}
+
+/// The thickest wall that a set-up reads with a pulse of this -20 dB envelope duration: its first back wall, or the
+/// second between back walls, must lie in the window with its end, half of the duration before the window's. Behind a
+/// delay line that also means before the delay line's own second echo, at twice the time of its first, if the set-up
+/// states the delay line; the window's end counts from the trigger. Nothing, if no wall fits.
+///
+/// Whether an echo of so thick a wall stands above the noise is another question.
+#[must_use]
+pub fn thickest_wall(setup: &GaugeSetup, envelope_duration: Seconds) -> Metres {
+    let law = path_law(setup);
+    let half = envelope_duration * 0.5;
+    let (mut end, mut start) = (setup.window.to, setup.zero.offset);
+    if let (ProbeKind::DelayLine, Some(line)) = (setup.probe.kind, setup.probe.delay_line) {
+        let interface = line.length * 2.0 / line.velocity;
+        start = interface;
+        let second = interface * 2.0 - half;
+        if second < end {
+            end = second;
         }
     }
-    half_path(setup.velocity(), spacing)
+    let longest = law.straighten((end - half - start).get());
+    let trips = match wall_span(setup) {
+        Span::BackWallToBackWall => 2.0,
+        Span::TransmissionPulseToBackWall | Span::InterfaceToBackWall => 1.0,
+    };
+    half_path(setup.velocity(), Seconds::new(math::larger(longest, 0.0) / trips))
 }
 
 /// Smallest spacing of echoes that a train is read with, over the -20 dB duration of the envelope.

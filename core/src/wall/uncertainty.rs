@@ -2,9 +2,11 @@
 
 use crate::echo::pulse::PulseFacts;
 use crate::math;
+use crate::path::PathLaw;
+use crate::path::v_path::Ray;
 use crate::setup::{CalibratedRange, GaugeSetup, ProbeKind, Span, UNKNOWN_TEMPERATURE};
 use crate::units::{Metres, MetresPerSecond, Seconds};
-use crate::wall::thickness::{TrainTimes, excess, round_trip, wall_span};
+use crate::wall::thickness::{TrainTimes, excess, path_law, round_trip, wall_span};
 use crate::wall::{beam, coupling};
 use heapless::Vec;
 
@@ -29,6 +31,8 @@ pub enum Source {
     Temperature,
     /// The noise that the reference pulse itself was learned with.
     ReferencePulse,
+    /// The distance of a dual-element probe's elements.
+    VPath,
 }
 
 impl Source {
@@ -44,6 +48,7 @@ impl Source {
             Self::Coupling => "coupling",
             Self::Temperature => "temperature",
             Self::ReferencePulse => "reference-pulse",
+            Self::VPath => "v-path",
         }
     }
 }
@@ -75,7 +80,7 @@ impl Budget {
     /// Adds a term; one that is zero, negative or not a number is left out.
     pub fn add(&mut self, source: Source, standard_uncertainty: Metres) {
         if standard_uncertainty.get() > 0.0 {
-            // Eight places for eight sources: a full list cannot happen, and would lose nothing but a line.
+            // Eight places for nine sources, of which calibration takes the place of zero: a full list cannot happen.
             let _ = self.terms.push(Term {
                 source,
                 standard_uncertainty,
@@ -127,8 +132,12 @@ const RECTANGULAR: f32 = 0.577_350_26;
 /// | beam | c / 2 times the whole uncorrected diffraction shift, as the half-width of a rectangle; only if the element is known |
 /// | coupling | c / 2 times the shift by the couplant film, likewise |
 /// | temperature | d / c times what temperature does to the velocity, [`crate::setup::Material::temperature_uncertainty`] |
+/// | v-path | what the distance of a dual-element probe's elements may be off by moves the wall, see [`v_path_uncertainty`] |
 ///
 /// The noise of the reference pulse stands apart, because it is a matter of the pulse: [`reference_pulse`].
+///
+/// Where sound goes along a V, a time counts 1 / cos θ as much as straight down, θ being the ray's angle in the part:
+/// the terms of timing, zero, beam and coupling grow with it, that of velocity with its square.
 ///
 /// Nothing but timing depends on the noise, so a budget that timing does not dominate is not made smaller by averaging.
 /// A span without its times (see [`round_trip`]) has no timing term: there is no reading then.
@@ -140,12 +149,15 @@ pub fn budget(setup: &GaugeSetup, times: &TrainTimes, wall: Metres) -> Budget {
         budget.add(Source::Timing, half_velocity * trip.standard_uncertainty);
     }
     add_calibration(&mut budget, setup, wall);
-    let beam = half_velocity * beam_half_width(setup, wall);
+    let moved = half_velocity * gain(setup, wall);
+    let beam = moved * beam_half_width(setup, wall);
     budget.add(Source::Beam, beam * RECTANGULAR);
-    let coupling = half_velocity * coupling::half_width(&setup.probe, wall_span(setup));
+    let coupling = moved * coupling::half_width(&setup.probe, wall_span(setup));
     budget.add(Source::Coupling, coupling * RECTANGULAR);
     let temperature = setup.material.temperature_uncertainty() / setup.velocity();
-    budget.add(Source::Temperature, (wall * temperature).abs());
+    let by_velocity = gain(setup, wall) * gain(setup, wall);
+    budget.add(Source::Temperature, (wall * temperature).abs() * by_velocity);
+    budget.add(Source::VPath, v_path_uncertainty(setup, wall));
     budget
 }
 
@@ -195,14 +207,83 @@ pub fn unknown_temperature_matters(setup: &GaugeSetup, wall: Metres, budget: &Bu
     follows.part.is_none() && half_width.abs().get() > setup.coverage_factor * math::sqrt(others)
 }
 
+/// How many times as much as straight down an error of a time counts where sound goes along a V: 1 / cos θ. 1 between
+/// back walls, whose period is straight.
+#[must_use]
+pub fn gain(setup: &GaugeSetup, wall: Metres) -> f32 {
+    match (wall_span(setup), ray(setup, wall)) {
+        (Span::TransmissionPulseToBackWall, Some(ray)) => 1.0 / ray.cosine,
+        _ => 1.0,
+    }
+}
+
+/// The ray to a wall, where its way is a V.
+fn ray(setup: &GaugeSetup, wall: Metres) -> Option<Ray> {
+    match path_law(setup) {
+        PathLaw::Straight => None,
+        PathLaw::V(path) => Some(path.at((wall * 2.0 / setup.velocity()).get())),
+    }
+}
+
+/// What the distance of the elements may be off by moves a wall, as a standard uncertainty.
+///
+/// With p half the distance, ∂t/∂p = 2 sin θ / c and ∂t/∂d = 2 cos θ / c: an error of p moves the wall by tan θ times as
+/// much. A zero that was learned on blocks with the same distance has taken the part of the block with it, and what is
+/// left goes with sin θ - sin θ of the block: the larger of that of thinnest and thickest block. Between back walls the
+/// error of the second less that of the first counts, and no zero.
+///
+/// Zero for a probe without a stated distance: that is a doubt.
+#[must_use]
+pub fn v_path_uncertainty(setup: &GaugeSetup, wall: Metres) -> Metres {
+    let (Some(separation), Some(here)) = (setup.probe.separation, ray(setup, wall)) else {
+        return Metres::ZERO;
+    };
+    let sine_at = |wall: Metres| ray(setup, wall).map_or(0.0, |ray| ray.sine);
+    let share = match (wall_span(setup), setup.calibrated) {
+        (Span::BackWallToBackWall, _) => {
+            let next = ray(setup, wall * 2.0).unwrap_or(here);
+            // t2 - t1 against p and against d.
+            (here.sine - next.sine) / math::larger(2.0 * next.cosine - here.cosine, 0.1)
+        }
+        (_, None) => here.sine / here.cosine,
+        (_, Some(range)) => {
+            let thin = (here.sine - sine_at(range.from)).abs();
+            let thick = (here.sine - sine_at(range.to)).abs();
+            math::larger(thin, thick) / here.cosine
+        }
+    };
+    separation.standard_uncertainty * (0.5 * share)
+}
+
+/// Could the V-shaped way of a dual-element probe have moved this wall by more than `limit` beyond its budget? Without a
+/// stated distance nothing is corrected, and it could; with one the budget holds its uncertainty as far as a straight
+/// line does: what the line leaves over, U²(p) / (2 d cos² θ) for the expanded uncertainty U(p) of half the distance, is
+/// judged here. So is a ray of more than 60° from the upright, where the width of the elements counts as much as their
+/// distance.
+#[must_use]
+pub fn v_path_matters(setup: &GaugeSetup, wall: Metres, limit: Metres) -> bool {
+    if setup.probe.kind != ProbeKind::DualElement {
+        return false;
+    }
+    let (Some(separation), Some(ray)) = (setup.probe.separation, ray(setup, wall)) else {
+        return true;
+    };
+    let half = separation.standard_uncertainty * (0.5 * setup.coverage_factor);
+    let left = half * ((half / wall) / (2.0 * ray.cosine * ray.cosine));
+    ray.cosine < 0.5 || left > limit
+}
+
 /// Velocity and zero: apart, or as one term if their errors hang together.
 ///
 /// d = c (t - t0) / 2, so that ∂d/∂c = d / c and ∂d/∂t0 = -c / 2, and with A = (d / c) u(c), B = (c / 2) u(t0):
 /// u² = A² + B² - 2 r A B = (A - B)² + 2 (1 - r) A B (JCGM 100:2008, 5.2.2). The second form cannot turn negative
 /// by rounding where both cancel, which is at the thickness of the block.
+///
+/// Along a V ∂d/∂c = d / (c cos² θ) and ∂d/∂t0 = -c / (2 cos θ).
 fn add_calibration(budget: &mut Budget, setup: &GaugeSetup, wall: Metres) {
     let material = &setup.material;
-    let of_velocity = |uncertainty: MetresPerSecond| (wall * (uncertainty / setup.velocity())).abs();
+    let gain = gain(setup, wall);
+    let of_velocity = |uncertainty: MetresPerSecond| (wall * (uncertainty / setup.velocity())).abs() * (gain * gain);
     let velocity = of_velocity(material.velocity_standard_uncertainty);
     // What the part differs from the blocks by knows nothing of the blocks' zero.
     let part = of_velocity(material.part_velocity_standard_uncertainty);
@@ -212,7 +293,7 @@ fn add_calibration(budget: &mut Budget, setup: &GaugeSetup, wall: Metres) {
         budget.add(Source::Velocity, both);
         return;
     }
-    let zero = setup.velocity() * 0.5 * setup.zero.standard_uncertainty;
+    let zero = setup.velocity() * 0.5 * setup.zero.standard_uncertainty * gain;
     let correlation = setup.zero.velocity_correlation;
     if correlation == 0.0 {
         budget.add(Source::Velocity, both);

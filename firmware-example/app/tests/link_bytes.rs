@@ -36,7 +36,7 @@ fn examples() -> Vec<(&'static str, Message)> {
         (
             "hello",
             Message::Hello(Hello {
-                protocol: 1,
+                protocol: 2,
                 samples: 4096,
             }),
         ),

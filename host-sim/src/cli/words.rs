@@ -64,6 +64,7 @@ const TERMS: &[(Source, &str)] = &[
         Source::ReferencePulse,
         "the noise that the reference pulse itself was learned with",
     ),
+    (Source::VPath, "the distance of a dual-element probe's elements"),
 ];
 
 /// All words with what they mean or what to do about them.

@@ -6,8 +6,8 @@ use crate::input_error::InputError;
 use crate::record_file::CodeKind;
 use halfpulse::echo::pulse::PulseQuality;
 use halfpulse::{
-    CalibratedRange, Celsius, Coating, GaugeSetup, Guard, Hertz, Limits, Material, Metres, MetresPerSecond, Probe,
-    ProbeFace, ProbeKind, Seconds, Span, VelocityTemperature, Window, Zero,
+    CalibratedRange, Celsius, Coating, DelayLine, ElementSeparation, GaugeSetup, Guard, Hertz, Limits, Material,
+    Metres, MetresPerSecond, Probe, ProbeFace, ProbeKind, Seconds, Span, VelocityTemperature, Window, Zero,
 };
 
 /// `[record]`: what the converter's numbers mean.
@@ -36,6 +36,8 @@ pub struct ProbeKeys {
     pub relative_bandwidth_percent: f64,
     /// Diameter of the element, if known.
     pub element_diameter_mm: Option<f64>,
+    /// Standard uncertainty of the diameter that acts.
+    pub element_diameter_uncertainty_percent: f64,
     /// What touches the couplant; `None`: by kind.
     pub face: Option<ProbeFace>,
     /// Uncertain couplant film.
@@ -46,6 +48,24 @@ pub struct ProbeKeys {
     pub reference_pulse_noise_percent: Option<f64>,
     /// How far other shots' echoes differ from it.
     pub reference_pulse_mismatch_percent: Option<f64>,
+}
+
+/// `[delay_line]`: also the delay blocks of a dual-element probe.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct DelayLineKeys {
+    /// Length, once.
+    pub length_mm: f64,
+    /// Velocity of longitudinal waves.
+    pub velocity_m_s: f64,
+}
+
+/// `[dual_element]`.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct DualElementKeys {
+    /// Distance of the elements' centres.
+    pub separation_mm: f64,
+    /// Its standard uncertainty; `None`: 3 %.
+    pub separation_standard_uncertainty_mm: Option<f64>,
 }
 
 /// `[material]`.
@@ -98,6 +118,8 @@ pub struct ZeroKeys {
     pub offset_ns: f64,
     /// Its standard uncertainty, if stated.
     pub standard_uncertainty_ns: Option<f64>,
+    /// Block whose beam spreading the offset holds, if known; 0: none.
+    pub learned_on_mm: Option<f64>,
     /// Checksum of the pulse that it was learned with.
     pub reference_pulse_checksum: Option<String>,
 }
@@ -139,6 +161,10 @@ pub struct SetupKeys {
     pub record: RecordKeys,
     /// `[probe]`
     pub probe: ProbeKeys,
+    /// `[delay_line]`
+    pub delay_line: Option<DelayLineKeys>,
+    /// `[dual_element]`
+    pub dual_element: Option<DualElementKeys>,
     /// `[material]`
     pub material: MaterialKeys,
     /// `[coating] velocity_m_s`, if the table is there.
@@ -173,11 +199,31 @@ impl SetupKeys {
                 centre_frequency_mhz: document.needed_number("probe", "centre_frequency_mhz")?,
                 relative_bandwidth_percent: document.needed_number("probe", "relative_bandwidth_percent")?,
                 element_diameter_mm: document.number("probe", "element_diameter_mm")?,
+                element_diameter_uncertainty_percent: document
+                    .number("probe", "element_diameter_uncertainty_percent")?
+                    .unwrap_or(7.0),
                 face: document.word("probe", "face", FACES)?,
                 couplant_film_um: document.number("probe", "couplant_film_um")?.unwrap_or(2.0),
                 reference_pulse: document.text("probe", "reference_pulse")?,
                 reference_pulse_noise_percent: document.number("probe", "reference_pulse_noise_percent")?,
                 reference_pulse_mismatch_percent: document.number("probe", "reference_pulse_mismatch_percent")?,
+            },
+            delay_line: if document.has_table("delay_line") {
+                Some(DelayLineKeys {
+                    length_mm: document.needed_number("delay_line", "length_mm")?,
+                    velocity_m_s: document.needed_number("delay_line", "velocity_m_s")?,
+                })
+            } else {
+                None
+            },
+            dual_element: if document.has_table("dual_element") {
+                Some(DualElementKeys {
+                    separation_mm: document.needed_number("dual_element", "separation_mm")?,
+                    separation_standard_uncertainty_mm: document
+                        .number("dual_element", "separation_standard_uncertainty_mm")?,
+                })
+            } else {
+                None
             },
             material: MaterialKeys {
                 name: document.text("material", "name")?,
@@ -206,6 +252,7 @@ impl SetupKeys {
             zero: ZeroKeys {
                 offset_ns: document.number("zero", "offset_ns")?.unwrap_or(0.0),
                 standard_uncertainty_ns: document.number("zero", "standard_uncertainty_ns")?,
+                learned_on_mm: document.number("zero", "learned_on_mm")?,
                 reference_pulse_checksum: document.text("zero", "reference_pulse_checksum")?,
             },
             measure: MeasureKeys {
@@ -302,7 +349,19 @@ impl SetupKeys {
         };
         probe.element_diameter = self.probe.element_diameter_mm.map(|mm| Metres::from_mm(mm as f32));
         probe.face = self.probe.face.unwrap_or(probe.face);
+        probe.element_diameter_uncertainty = (self.probe.element_diameter_uncertainty_percent / 100.0) as f32;
         probe.couplant_film = Metres::new((self.probe.couplant_film_um * 1e-6) as f32);
+        probe.delay_line = self.delay_line.map(|line| DelayLine {
+            length: Metres::from_mm(line.length_mm as f32),
+            velocity: MetresPerSecond::new(line.velocity_m_s as f32),
+        });
+        probe.separation = self.dual_element.map(|dual| {
+            let uncertainty = dual.separation_standard_uncertainty_mm;
+            ElementSeparation::new(
+                Metres::from_mm(dual.separation_mm as f32),
+                Metres::from_mm(uncertainty.unwrap_or(0.03 * dual.separation_mm.abs()) as f32),
+            )
+        });
         let calibration = self.calibration.as_ref();
         // An offset without a stated uncertainty: an unknown one where it only serves to check (a second
         // of uncertainty contradicts nothing), an exact one between two echoes of the same record.
@@ -318,6 +377,7 @@ impl SetupKeys {
                 offset: Seconds::from_ns(self.zero.offset_ns as f32),
                 standard_uncertainty: Seconds::from_ns(self.zero.standard_uncertainty_ns.unwrap_or(unstated) as f32),
                 velocity_correlation: calibration.and_then(|c| c.velocity_zero_correlation).unwrap_or(0.0) as f32,
+                learned_on: self.zero.learned_on_mm.map(|mm| Metres::from_mm(mm as f32)),
             },
             span: self.measure.span,
             window: Window {

@@ -91,6 +91,11 @@ pub const KEYS: &[Key] = &[
     ),
     key(
         "probe",
+        "element_diameter_uncertainty_percent",
+        "standard uncertainty (k = 1) of the diameter that acts; default 7",
+    ),
+    key(
+        "probe",
         "face",
         "what touches the couplant: \"hard\" (default of contact) or \"plastic\" (default of the others)",
     ),
@@ -113,6 +118,22 @@ pub const KEYS: &[Key] = &[
         "probe",
         "reference_pulse_mismatch_percent",
         "root of the energy by which other shots' echoes differ from the learned pulse; written by calibrate, default 0",
+    ),
+    key(
+        "delay_line",
+        "length_mm",
+        "length of the delay line, or of each delay block of a dual-element probe; the table may be left out",
+    ),
+    key("delay_line", "velocity_m_s", "velocity of longitudinal waves in it"),
+    key(
+        "dual_element",
+        "separation_mm",
+        "distance of the two elements' centres, where they sit: the V-shaped path is corrected with it",
+    ),
+    key(
+        "dual_element",
+        "separation_standard_uncertainty_mm",
+        "its standard uncertainty (k = 1); default 3 % of it",
     ),
     key("material", "name", "what the part is made of; only shown"),
     key("material", "velocity_m_s", "velocity of longitudinal waves in the part"),
@@ -169,6 +190,11 @@ pub const KEYS: &[Key] = &[
         "zero",
         "standard_uncertainty_ns",
         "its standard uncertainty (k = 1); needed by transmission-pulse-to-back-wall",
+    ),
+    key(
+        "zero",
+        "learned_on_mm",
+        "block whose beam spreading the offset holds, 0 if the beam was corrected; without it that is not known",
     ),
     key(
         "zero",

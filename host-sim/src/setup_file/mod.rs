@@ -20,7 +20,8 @@ pub mod keys;
 mod write;
 
 pub use contents::{
-    CalibrationKeys, LimitsKeys, MaterialKeys, MeasureKeys, PartKeys, ProbeKeys, RecordKeys, SetupKeys, ZeroKeys,
+    CalibrationKeys, DelayLineKeys, DualElementKeys, LimitsKeys, MaterialKeys, MeasureKeys, PartKeys, ProbeKeys,
+    RecordKeys, SetupKeys, ZeroKeys,
 };
 
 use crate::input_error::InputError;
@@ -272,6 +273,10 @@ impl SetupFile {
             SetupError::CentreFrequency => ("probe", "centre_frequency_mhz"),
             SetupError::RelativeBandwidth => ("probe", "relative_bandwidth_percent"),
             SetupError::ElementDiameter => ("probe", "element_diameter_mm"),
+            SetupError::ElementDiameterUncertainty => ("probe", "element_diameter_uncertainty_percent"),
+            SetupError::DelayLine => ("delay_line", "velocity_m_s"),
+            SetupError::ElementSeparation => ("dual_element", "separation_mm"),
+            SetupError::ZeroLearnedOn => ("zero", "learned_on_mm"),
             SetupError::CouplantFilm => ("probe", "couplant_film_um"),
             SetupError::Velocity => ("material", "velocity_m_s"),
             SetupError::VelocityUncertainty => ("material", "velocity_standard_uncertainty_m_s"),

@@ -325,16 +325,25 @@ fn every_key_is_described_and_written() {
             full_scale: Some(2.0),
         },
         probe: ProbeKeys {
-            kind: ProbeKind::DelayLine,
+            kind: ProbeKind::DualElement,
             centre_frequency_mhz: 5.0,
             relative_bandwidth_percent: 60.0,
             element_diameter_mm: Some(6.0),
+            element_diameter_uncertainty_percent: 5.0,
             face: Some(ProbeFace::Hard),
             couplant_film_um: 3.0,
             reference_pulse: Some("a \"b\" \\ c\u{7}.npy".to_string()),
             reference_pulse_noise_percent: Some(0.25),
             reference_pulse_mismatch_percent: Some(1.5),
         },
+        delay_line: Some(DelayLineKeys {
+            length_mm: 8.0,
+            velocity_m_s: 2350.0,
+        }),
+        dual_element: Some(DualElementKeys {
+            separation_mm: 6.4,
+            separation_standard_uncertainty_mm: Some(0.1),
+        }),
         material: MaterialKeys {
             name: Some("Stahl, größer".to_string()),
             velocity_m_s: 5920.0,
@@ -359,6 +368,7 @@ fn every_key_is_described_and_written() {
         zero: ZeroKeys {
             offset_ns: 12.345,
             standard_uncertainty_ns: Some(0.5),
+            learned_on_mm: Some(5.0),
             reference_pulse_checksum: Some("fnv1a64:00".to_string()),
         },
         measure: MeasureKeys {

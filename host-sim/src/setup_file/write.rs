@@ -42,11 +42,20 @@ impl SetupKeys {
             ("probe", "centre_frequency_mhz") => Some(number(self.probe.centre_frequency_mhz)),
             ("probe", "relative_bandwidth_percent") => Some(number(self.probe.relative_bandwidth_percent)),
             ("probe", "element_diameter_mm") => self.probe.element_diameter_mm.map(number),
+            ("probe", "element_diameter_uncertainty_percent") => {
+                Some(number(self.probe.element_diameter_uncertainty_percent))
+            }
             ("probe", "face") => self.probe.face.and_then(|face| word(word_of(FACES, face))),
             ("probe", "couplant_film_um") => Some(number(self.probe.couplant_film_um)),
             ("probe", "reference_pulse") => self.probe.reference_pulse.as_deref().and_then(word),
             ("probe", "reference_pulse_noise_percent") => self.probe.reference_pulse_noise_percent.map(number),
             ("probe", "reference_pulse_mismatch_percent") => self.probe.reference_pulse_mismatch_percent.map(number),
+            ("delay_line", "length_mm") => self.delay_line.map(|line| number(line.length_mm)),
+            ("delay_line", "velocity_m_s") => self.delay_line.map(|line| number(line.velocity_m_s)),
+            ("dual_element", "separation_mm") => self.dual_element.map(|dual| number(dual.separation_mm)),
+            ("dual_element", "separation_standard_uncertainty_mm") => {
+                (self.dual_element).and_then(|dual| dual.separation_standard_uncertainty_mm.map(number))
+            }
             ("material", "name") => self.material.name.as_deref().and_then(word),
             ("material", "velocity_m_s") => Some(number(self.material.velocity_m_s)),
             ("material", "velocity_standard_uncertainty_m_s") => {
@@ -75,6 +84,7 @@ impl SetupKeys {
             ("coating", "velocity_m_s") => self.coating_velocity_m_s.map(number),
             ("zero", "offset_ns") => Some(number(self.zero.offset_ns)),
             ("zero", "standard_uncertainty_ns") => self.zero.standard_uncertainty_ns.map(number),
+            ("zero", "learned_on_mm") => self.zero.learned_on_mm.map(number),
             ("zero", "reference_pulse_checksum") => self.zero.reference_pulse_checksum.as_deref().and_then(word),
             ("measure", "span") => word(word_of(SPANS, self.measure.span)),
             ("measure", "from_us") => Some(number(self.measure.from_us)),

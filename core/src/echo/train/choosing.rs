@@ -34,7 +34,7 @@ struct Tooth {
     polarity: Polarity,
 }
 
-/// A period with its place.
+/// A period with its place, both of straight ways.
 #[derive(Clone, Copy, Debug)]
 pub struct Hypothesis {
     /// Place of the multiple with number 0: where the wall begins.
@@ -49,14 +49,15 @@ pub struct Hypothesis {
 }
 
 impl Hypothesis {
-    /// Does a multiple of this train lie within `tolerance` of a place? In samples.
+    /// Does a multiple of this train lie within `tolerance` of a place of the straight way
+    /// ([`Rules::straight_place`])? In samples.
     #[must_use]
     pub fn explains(&self, place: f32, tolerance: f32) -> bool {
         let (number, off) = nearest(self, place);
         number >= 1 && off.abs() < tolerance
     }
 
-    /// Place of a multiple in samples from the record's first.
+    /// Place of a multiple in samples from the record's first, were its way straight.
     #[must_use]
     pub fn place(&self, number: u32) -> f32 {
         self.zero + number as f32 * self.period
@@ -76,17 +77,25 @@ pub(super) fn choose(
     let sigma = surroundings.amplitude_noise();
     let at_threshold = math::ln(1.0 + rules.threshold * rules.threshold / 3.0);
     let mut teeth: Teeth = Vec::new();
+    // From here on every place is that of a straight way.
+    let straight = Rules {
+        shortest: rules.law.period_of_spacing(rules.shortest),
+        visible_from: rules.straight_place(rules.visible_from),
+        visible_to: rules.straight_place(rules.visible_to),
+        ..*rules
+    };
     let inside = |echo: &&Echo| echo.role == EchoRole::Other && echo.position.as_samples() <= rules.visible_to;
     for echo in echoes.iter().filter(inside) {
         let height = echo.amplitude / sigma;
         let gain = math::smaller(math::ln(1.0 + height * height / 3.0) - at_threshold, GAIN_LIMIT);
         let _ = teeth.push(Tooth {
-            place: echo.position.as_samples(),
+            place: rules.straight_place(echo.position.as_samples()),
             amplitude: echo.amplitude,
             gain,
             polarity: echo.polarity,
         });
     }
+    let rules = &straight;
     let mut ranked: Vec<Hypothesis, 8> = Vec::new();
     let mut consider = |anchor: f32, number: u32, period: f32| {
         if !(period >= rules.shortest) {
@@ -176,7 +185,7 @@ fn rank(ranked: &mut Vec<Hypothesis, 8>, hypothesis: Hypothesis, tolerance: f32)
     order::sort(ranked, |a, b| a.score > b.score);
 }
 
-/// Number of the multiple nearest to a place, and how far the place lies from it.
+/// Number of the multiple nearest to a place of the straight way, and how far the place lies from it.
 #[inline(never)]
 pub(super) fn nearest(hypothesis: &Hypothesis, place: f32) -> (i32, f32) {
     let number = math::round_to_i32((place - hypothesis.zero) / hypothesis.period);

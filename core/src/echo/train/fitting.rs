@@ -8,6 +8,7 @@ use crate::echo::interpolate::{self, REACH};
 use crate::echo::{Echo, EchoList, EchoRole, Polarity, Surroundings, echo_at};
 use crate::math;
 use crate::order;
+use crate::path::PathLaw;
 use crate::units::SamplePosition;
 use crate::workspace::{ECHO_CAPACITY, TRAIN_LAGS};
 use heapless::Vec;
@@ -21,13 +22,47 @@ type Members = Vec<Member, ECHO_CAPACITY>;
 struct Line {
     base: u32,
     first: f32,
+    /// Straight time from multiple to multiple.
     period: f32,
+    /// Number of the first multiple.
+    number: u32,
+    law: PathLaw,
 }
 
 impl Line {
     /// Place of the `step`-th multiple after the first, relative to the base.
-    fn place(&self, step: usize) -> f32 {
-        self.first + step as f32 * self.period
+    fn place(&self, step: u8) -> f32 {
+        let straight = self.first + f32::from(step) * self.period;
+        match self.law {
+            PathLaw::Straight => straight,
+            law => straight + law.deviation(self.straight(step)) - law.deviation(self.straight(0)),
+        }
+    }
+
+    /// How far the place moves where the period grows by one.
+    fn lever(&self, step: u8) -> f32 {
+        let steps = f32::from(step);
+        match self.law {
+            PathLaw::Straight => steps,
+            law => {
+                let moved = |step: u8| (law.slope(self.straight(step)) - 1.0) * self.multiple(step);
+                steps + moved(step) - moved(0)
+            }
+        }
+    }
+
+    fn multiple(&self, step: u8) -> f32 {
+        self.number as f32 + f32::from(step)
+    }
+
+    /// Straight time from the start of the wall.
+    fn straight(&self, step: u8) -> f32 {
+        self.multiple(step) * self.period
+    }
+
+    /// Actual time from the start of the wall to the first multiple.
+    fn before_first(&self) -> f32 {
+        self.straight(0) + self.law.deviation(self.straight(0))
     }
 }
 
@@ -61,23 +96,28 @@ pub(super) fn fit(
     tolerance: f32,
     lags: &mut [f32; ECHO_CAPACITY * TRAIN_LAGS],
 ) -> Option<Train> {
-    let sign = sign_of_train(echoes, best, tolerance);
+    let sign = sign_of_train(echoes, rules, best, tolerance);
     // Re-anchor at the first multiple's own echo: its position is exact where the hypothesis is rounded.
     let anchor = echoes
         .iter()
         .filter(|echo| echo.role == EchoRole::Other)
         .find(|echo| {
-            let (number, off) = nearest(best, echo.position.as_samples());
+            let (number, off) = nearest(best, rules.straight_place(echo.position.as_samples()));
             number == i32::try_from(best.first).unwrap_or(1) && off.abs() < tolerance
         })
-        .map_or(
-            SamplePosition::new(0, best.zero + best.first as f32 * best.period),
+        .map_or_else(
+            || {
+                let straight = best.zero + best.first as f32 * best.period;
+                SamplePosition::new(0, straight + rules.law.deviation(straight - rules.start))
+            },
             |echo| echo.position,
         );
     let mut line = Line {
         base: anchor.index,
         first: anchor.fraction,
         period: best.period,
+        number: best.first,
+        law: rules.law,
     };
     let origin = surroundings.pulse.facts.origin;
     let mut members = Members::new();
@@ -90,7 +130,7 @@ pub(super) fn fit(
         (s0, s1, s2) = (0.0, 0.0, 0.0);
         let (mut t0, mut t1) = (0.0, 0.0);
         for (member, window) in members.iter_mut().zip(lags.chunks_exact(TRAIN_LAGS)) {
-            let place = line.place(usize::from(member.step)) - origin - member.first_lag as f32;
+            let place = line.place(member.step) - origin - member.first_lag as f32;
             let value = interpolate::at(window, place);
             member.amplitude = value / surroundings.pulse.facts.energy;
             member.sharpness = sharpness(curvature(window, place, value), member.amplitude, &surroundings.pulse);
@@ -100,7 +140,7 @@ pub(super) fn fit(
             // A step beyond a tenth of a cycle is noise or another cycle: the line decides, not the echo.
             let limit = 0.1 * surroundings.samples_per_cycle;
             let off = math::clamp(member.off, -limit, limit);
-            let (n, weight) = (f32::from(member.step), member.weight * member.weight);
+            let (n, weight) = (line.lever(member.step), member.weight * member.weight);
             s0 += weight;
             s1 += weight * n;
             s2 += weight * n * n;
@@ -119,7 +159,7 @@ pub(super) fn fit(
     let first = SamplePosition::new(line.base, line.first);
     let lone = members.len() < 2;
     if lone {
-        line.period = (first.as_samples() - rules.start) / best.first as f32;
+        line.period = rules.law.straighten(first.as_samples() - rules.start) / best.first as f32;
     }
     // A lone echo before the start is no wall's; nor is a fit that has run away.
     if !(line.period > 0.0) {
@@ -149,7 +189,7 @@ pub(super) fn fit(
         correlation: if lone { 0.0 } else { -s1 / math::sqrt(s0 * s2) },
         support: math::sqrt(s0 - strongest),
         first,
-        start_difference: first.as_samples() - best.first as f32 * line.period - rules.start,
+        start_difference: first.as_samples() - line.before_first() - rules.start,
         unevenness,
         freedom,
         unexplained: unexplained(echoes, rules),
@@ -176,10 +216,10 @@ fn unexplained(echoes: &EchoList, rules: &Rules) -> f32 {
 }
 
 /// Sign of the strongest multiple: all back walls of one wall share it.
-fn sign_of_train(echoes: &EchoList, best: &Hypothesis, tolerance: f32) -> f32 {
+fn sign_of_train(echoes: &EchoList, rules: &Rules, best: &Hypothesis, tolerance: f32) -> f32 {
     let mut strongest: Option<&Echo> = None;
     for echo in echoes.iter().filter(|echo| echo.role == EchoRole::Other) {
-        let (number, off) = nearest(best, echo.position.as_samples());
+        let (number, off) = nearest(best, rules.straight_place(echo.position.as_samples()));
         if number >= 1 && off.abs() < tolerance && strongest.is_none_or(|s| echo.amplitude > s.amplitude) {
             strongest = Some(echo);
         }
@@ -208,7 +248,7 @@ fn collect(
     let noise_at_first = surroundings.timing_noise.at(line.base as f32 + line.first);
     let mut lost = 0;
     for step in 0..=u8::MAX {
-        let place = line.place(usize::from(step));
+        let place = line.place(step);
         if line.base as f32 + place > rules.visible_to || members.is_full() {
             break;
         }
@@ -261,7 +301,7 @@ fn give_roles(
     tolerance: f32,
 ) {
     for member in members {
-        let place = SamplePosition::new(line.base, line.place(usize::from(member.step)));
+        let place = SamplePosition::new(line.base, line.place(member.step));
         let multiple = u8::try_from(best.first + u32::from(member.step)).unwrap_or(u8::MAX);
         let known = echoes
             .iter_mut()

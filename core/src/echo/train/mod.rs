@@ -10,6 +10,8 @@
 //! above 35 % of the largest loses its own gain; a first tooth below 22 % of the largest makes it
 //! unlikely. The best score wins, if it leads the best *different* period by [`MARGIN`].
 //!
+//! Echoes are looked at where they would lie, were their ways straight ([`PathLaw`]): there every train is even.
+//!
 //! *Fitting.* Start and period are fitted to the correlations of all multiples at once (all amplitudes
 //! free): the joint least squares that two arrivals alone fall short of by 1.6 to 4 times. Weak
 //! multiples are read only where the strong ones predict them. For white noise the standard uncertainty is the
@@ -24,6 +26,7 @@ mod fitting;
 
 use crate::echo::{EchoList, Surroundings};
 use crate::math;
+use crate::path::PathLaw;
 use crate::units::SamplePosition;
 use crate::workspace::{ECHO_CAPACITY, TRAIN_LAGS};
 
@@ -36,7 +39,7 @@ pub struct Rules {
     pub start: f32,
     /// How far from a whole number of periods after the start the train may lie without objection.
     pub start_tolerance: f32,
-    /// Shortest period that can be read.
+    /// Smallest distance of two multiples that can be read.
     pub shortest: f32,
     /// First sample at which an echo could have been seen.
     pub visible_from: f32,
@@ -44,6 +47,19 @@ pub struct Rules {
     pub visible_to: f32,
     /// Detection threshold in standard deviations of a fitted amplitude.
     pub threshold: f32,
+    /// How the echoes' times follow from the wall's straight ones, in samples.
+    pub law: PathLaw,
+}
+
+impl Rules {
+    /// Where an echo would lie, were its way straight. Of a [straight](PathLaw::Straight) law the place itself.
+    #[must_use]
+    pub fn straight_place(&self, place: f32) -> f32 {
+        match self.law {
+            PathLaw::Straight => place,
+            law => self.start + law.straighten(place - self.start),
+        }
+    }
 }
 
 /// The multiples of one wall.
@@ -54,7 +70,8 @@ pub struct Train {
     pub first_multiple: u8,
     /// Echoes that took part.
     pub echoes: u8,
-    /// The period in samples: fitted from two echoes on, else the lone echo's distance from the start.
+    /// The period in samples, of straight ways: fitted from two echoes on, else the lone echo's straight distance from
+    /// the start.
     pub period: f32,
     /// Its standard uncertainty in samples from noise; `None` for a lone echo.
     pub period_uncertainty: Option<f32>,
@@ -65,7 +82,8 @@ pub struct Train {
     pub support: f32,
     /// Fitted place of the first multiple that was seen.
     pub first: SamplePosition,
-    /// How far the start lies from where the train begins, in samples: first - first_multiple · period - start.
+    /// How far the start lies from where the train begins, in samples: first - start less the actual time of
+    /// first_multiple · period.
     pub start_difference: f32,
     /// Scatter of the arrivals about the fit over what noise explains (chi-square per degree of
     /// freedom); 0 without a degree of freedom.

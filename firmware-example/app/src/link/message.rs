@@ -5,14 +5,14 @@ use crate::link::refusal::Refusal;
 use halfpulse::setup::{ProbeFace, ProbeKind};
 use halfpulse::workspace::ECHO_CAPACITY;
 use halfpulse::{
-    CalibratedRange, Coating, GaugeSetup, Hertz, Material, Metres, MetresPerSecond, Probe, Seconds, SetupError, Span,
-    Window, Zero,
+    CalibratedRange, Coating, DelayLine, ElementSeparation, GaugeSetup, Hertz, Material, Metres, MetresPerSecond,
+    Probe, Seconds, SetupError, Span, Window, Zero,
 };
 use heapless::Vec;
 use serde::{Deserialize, Serialize};
 
 /// Version of this protocol. Both ends must speak the same.
-pub const PROTOCOL: u8 = 1;
+pub const PROTOCOL: u8 = 2;
 
 /// Everything that can be said. Numbers are in SI units unless their name says otherwise.
 #[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
@@ -83,6 +83,14 @@ pub struct SetUp {
     pub coating: Option<f32>,
     /// Thinnest and thickest block of the calibration, if there was one.
     pub calibrated: Option<[f32; 2]>,
+    /// Relative standard uncertainty of the element's diameter.
+    pub element_diameter_uncertainty: f32,
+    /// Length and velocity of the delay line or the delay blocks, if known.
+    pub delay_line: Option<[f32; 2]>,
+    /// Distance of a dual-element probe's elements and its standard uncertainty, if known.
+    pub separation: Option<[f32; 2]>,
+    /// Block whose beam shift the zero holds, if known.
+    pub zero_learned_on: Option<f32>,
 }
 
 impl SetUp {
@@ -122,6 +130,10 @@ impl SetUp {
             coverage_factor: setup.coverage_factor,
             coating: setup.coating.map(|coating| coating.velocity.get()),
             calibrated: setup.calibrated.map(|range| [range.from.get(), range.to.get()]),
+            element_diameter_uncertainty: setup.probe.element_diameter_uncertainty,
+            delay_line: (setup.probe.delay_line).map(|line| [line.length.get(), line.velocity.get()]),
+            separation: (setup.probe.separation).map(|s| [s.distance.get(), s.standard_uncertainty.get()]),
+            zero_learned_on: setup.zero.learned_on.map(Metres::get),
         }
     }
 
@@ -158,6 +170,13 @@ impl SetUp {
                 element_diameter: self.element_diameter.map(Metres::new),
                 face,
                 couplant_film: Metres::new(self.couplant_film),
+                element_diameter_uncertainty: self.element_diameter_uncertainty,
+                delay_line: self.delay_line.map(|[length, velocity]| DelayLine {
+                    length: Metres::new(length),
+                    velocity: MetresPerSecond::new(velocity),
+                }),
+                separation: (self.separation)
+                    .map(|[distance, u]| ElementSeparation::new(Metres::new(distance), Metres::new(u))),
             },
             material: Material::new(
                 MetresPerSecond::new(velocity),
@@ -167,6 +186,7 @@ impl SetUp {
                 offset: Seconds::new(offset),
                 standard_uncertainty: Seconds::new(offset_uncertainty),
                 velocity_correlation: correlation,
+                learned_on: self.zero_learned_on.map(Metres::new),
             },
             span,
             window: Window {
