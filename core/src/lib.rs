@@ -93,7 +93,7 @@ pub use setup::{
     ProbeKind, SetupError, Span, VelocityTemperature, Window, Zero,
 };
 pub use units::{Celsius, Decibels, Hertz, Metres, MetresPerSecond, SamplePosition, Seconds};
-pub use wall::calibration::{Block, CalibrationError};
+pub use wall::calibration::{Block, CalibrationError, DriftCheck, DriftState};
 pub use wall::limits::{Guard, LimitState, Limits, LimitsError, LimitsVerdict};
 pub use wall::uncertainty::{Budget, Source, Term};
 pub use workspace::{Scratch, Workspace};

@@ -253,6 +253,12 @@ impl Doubts {
         }
     }
 
+    /// The same set without this doubt.
+    #[must_use]
+    pub const fn without(self, doubt: Doubt) -> Self {
+        Self(self.0 & !(doubt as u32))
+    }
+
     /// Is this doubt raised?
     #[must_use]
     pub const fn contains(self, doubt: Doubt) -> bool {
@@ -332,6 +338,8 @@ mod tests {
         doubts.raise_if(false, Doubt::NearMinimum);
         assert_eq!(doubts.to_string(), "few-echoes, low-signal");
         assert_eq!(doubts.iter().count(), 2);
+        assert_eq!(doubts.without(Doubt::LowSignal).to_string(), "few-echoes");
+        assert_eq!(doubts.without(Doubt::NearMinimum), doubts);
     }
 
     #[test]

@@ -47,6 +47,21 @@ pub fn at(samples: &[f32], place: f32) -> f32 {
     weighted((0..2 * reach).map(tap), fraction, sine)
 }
 
+/// The value of a record `fraction` of a sample (0 to 1) beyond sample `index`. Codes beyond the ends count as zero.
+#[must_use]
+pub fn at_codes(codes: &[i16], index: usize, fraction: f32) -> f32 {
+    let code = |i: Option<usize>| i.and_then(|i| codes.get(i)).map_or(0.0, |&code| f32::from(code));
+    if fraction == 0.0 {
+        return code(Some(index));
+    }
+    let mut sine = math::sin_pi_unit(fraction) * core::f32::consts::FRAC_1_PI;
+    if REACH & 1 == 0 {
+        sine = -sine;
+    }
+    let first = |tap: usize| (index + 1 + tap).checked_sub(REACH);
+    weighted((0..2 * REACH).map(|tap| code(first(tap))), fraction, sine)
+}
+
 /// One over the window's half length.
 const STEP: f32 = 1.0 / REACH as f32;
 
@@ -70,6 +85,16 @@ fn weighted(taps: impl Iterator<Item = f32>, fraction: f32, sine: f32) -> f32 {
 #[cfg(test)]
 mod tests {
     use super::*;
+
+    #[test]
+    fn codes_and_samples_agree() {
+        let codes: std::vec::Vec<i16> = (0..60).map(|i| (i * i * 7 % 1000 - 500) as i16).collect();
+        let samples: std::vec::Vec<f32> = codes.iter().map(|&code| f32::from(code)).collect();
+        for (index, fraction) in [(0, 0.3), (9, 0.5), (30, 0.0), (30, 0.99), (58, 0.2)] {
+            let (a, b) = (at_codes(&codes, index, fraction), at(&samples, index as f32 + fraction));
+            assert!((a - b).abs() < 0.01, "{index} + {fraction}: {a} {b}");
+        }
+    }
 
     fn worst(frequency: f32) -> f32 {
         let mut samples = [0.0; 64];

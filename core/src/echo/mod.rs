@@ -2,11 +2,12 @@
 //!
 //! The steps in the order of the signal: [`scan`] finds candidates in the whole record with integers;
 //! [`measure_echoes`] fits the reference pulse at each candidate, in a short `f32` window;
-//! [`separation`] says whether neighbours can be told apart; [`train`] finds the multiples of one wall.
+//! [`learning`] makes the reference pulse from a block's shots; [`separation`] says whether neighbours can be told apart; [`train`] finds the multiples of one wall.
 
 pub mod envelope;
 pub mod interpolate;
 pub mod pulse;
+pub mod learning;
 pub mod correlation;
 pub mod arrival;
 pub mod scan;

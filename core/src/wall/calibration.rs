@@ -1,9 +1,16 @@
-//! Blocks to zero and velocity.
+//! Blocks to zero and velocity; and does the gauge still read a block right?
+//!
+//! Zero and velocity of two blocks have errors that hang together, and both are *effective*: what beam and couplant film do
+//! to the blocks' echoes goes into them. They read right between the blocks, with the same probe and span; beyond them the
+//! uncertainty grows with the distance, however good the blocks ([`crate::wall::uncertainty::budget`] counts that, and what
+//! is left of beam and film). **The block is not the part**: what the part's velocity may differ by is for the user to
+//! state, [`Material::part_velocity_standard_uncertainty`].
 //!
 //! Block times are the arrivals that the span uses: first back wall after the transmission trigger, or after the
 //! interface echo behind a delay line. The errors of blocks are taken as independent of each other.
 
 use crate::math;
+use crate::outcome::{Doubt, Doubts};
 use crate::setup::{Material, Zero};
 use crate::units::{Metres, MetresPerSecond, Seconds};
 use core::fmt;
@@ -185,6 +192,105 @@ pub fn velocity_from_thickness(block: &Block, zero: &Zero) -> Result<(Zero, Mate
     Ok((finite_zero(zero)?, Material::new(velocity, velocity * relative)))
 }
 
+/// Does the gauge still read a block as its certificate says?
+#[derive(Clone, Copy, Debug, PartialEq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
+pub struct DriftCheck {
+    /// Reading less certificate: positive reads too thick.
+    pub difference: Metres,
+    /// Standard uncertainty of the difference (k = 1): the reading's and the block's, as the root of the sum of squares.
+    pub standard_uncertainty: Metres,
+    /// k of the expanded uncertainty.
+    pub coverage_factor: f32,
+}
+
+/// What a [`DriftCheck`] says.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
+pub enum DriftState {
+    /// The difference lies within its expanded uncertainty.
+    Within,
+    /// It does not: something has changed, or the block is not the one that was named.
+    Outside,
+    /// The reading has a doubt or is no number: it says nothing about the gauge.
+    Undecided,
+}
+
+impl DriftState {
+    /// One stable word for programs.
+    #[must_use]
+    pub const fn word(self) -> &'static str {
+        match self {
+            Self::Within => "within",
+            Self::Outside => "outside",
+            Self::Undecided => "undecided",
+        }
+    }
+
+    /// What to do.
+    #[must_use]
+    pub const fn advice(self) -> &'static str {
+        match self {
+            Self::Within => "nothing to do",
+            Self::Outside => {
+                "couple again and repeat, then check the block's name and temperature; if it stays, calibrate again, \
+                 and repeat what was read since the last check that was within"
+            }
+            Self::Undecided => "couple again, or take a block within the calibrated range, and repeat",
+        }
+    }
+}
+
+impl DriftCheck {
+    /// Expanded uncertainty of the difference.
+    #[must_use]
+    pub fn expanded(&self) -> Metres {
+        self.standard_uncertainty * self.coverage_factor
+    }
+
+    /// The difference in units of its expanded uncertainty, with its sign: beyond ±1 it is outside. (The score E_n of
+    /// comparisons, ISO/IEC 17043, from memory.) 0 if there is neither difference nor uncertainty.
+    #[must_use]
+    pub fn ratio(&self) -> f32 {
+        if self.difference == Metres::ZERO {
+            0.0
+        } else {
+            self.difference / self.expanded()
+        }
+    }
+
+    /// Within or outside; undecided if the reading's `doubts` tell of any, or if something is not a number.
+    ///
+    /// One doubt does not count against "outside": that the multiples contradict the zero, because on a bare block that is
+    /// the drift itself.
+    #[must_use]
+    pub fn state(&self, doubts: Doubts) -> DriftState {
+        let ratio = self.ratio().abs();
+        if ratio <= 1.0 && doubts.is_empty() {
+            DriftState::Within
+        } else if ratio > 1.0 && doubts.without(Doubt::ZeroContradicted).is_empty() {
+            DriftState::Outside
+        } else {
+            DriftState::Undecided
+        }
+    }
+}
+
+/// Compares a reading of a block with its certificate: `known` and `read` are thickness and standard uncertainty (k = 1).
+///
+/// The reading must be made with a set-up for blocks ([`Material::of_blocks`]), or what the part may differ by would hide
+/// a drift. A block that the calibration itself used has its error in both: the check is then less strict than it could
+/// be, and shows drift but no error of that block. Take another one now and then.
+#[must_use]
+pub fn drift_check(known: (Metres, Metres), read: (Metres, Metres), coverage_factor: f32) -> DriftCheck {
+    let (a, b) = (known.1.get(), read.1.get());
+    DriftCheck {
+        difference: read.0 - known.0,
+        standard_uncertainty: Metres::new(math::sqrt(a * a + b * b)),
+        coverage_factor,
+    }
+}
+
 /// Refuses what has left the range of numbers on the way: microseconds squared fit, years do not.
 fn finite_zero(zero: Zero) -> Result<Zero, CalibrationError> {
     if zero.offset.is_finite() && zero.standard_uncertainty.is_finite() && zero.velocity_correlation.is_finite() {
@@ -348,6 +454,29 @@ mod tests {
         assert!((relative - 6.914_333e-4).abs() < 1e-8, "{relative}");
         assert!((zero.velocity_correlation - 5.92e-4 / 6.914_333e-4).abs() < 1e-4);
         assert_eq!(zero.offset, given.offset);
+    }
+
+    #[test]
+    fn val_drift_check() {
+        // E_n = (x - X) / sqrt(U_x² + U_X²) (ISO/IEC 17043, from memory), by hand: 10 um over 2 sqrt(3² + 4²) um is 1.
+        let um = |um: f32| Metres::new(um * 1e-6);
+        let known = (um(10_000.0), um(3.0));
+        let check = |read: f32| drift_check(known, (um(read), um(4.0)), 2.0);
+        assert!((check(10_010.0).ratio() - 1.0).abs() < 1e-3 && (check(9_980.0).ratio() + 2.0).abs() < 1e-3);
+        assert!((check(10_005.0).expanded().get() * 1e6 - 10.0).abs() < 1e-4);
+        assert_eq!(check(10_009.0).state(Doubts::NONE), DriftState::Within);
+        assert_eq!(check(9_989.0).state(Doubts::NONE), DriftState::Outside);
+        let mut doubts = Doubts::NONE;
+        doubts.raise(Doubt::ZeroContradicted);
+        assert_eq!(check(10_000.0).state(doubts), DriftState::Undecided);
+        assert_eq!(check(10_030.0).state(doubts), DriftState::Outside);
+        doubts.raise(Doubt::LowSignal);
+        assert_eq!(check(10_030.0).state(doubts), DriftState::Undecided);
+        assert_eq!(check(f32::NAN).state(Doubts::NONE), DriftState::Undecided);
+        let exact = drift_check((um(5.0), Metres::ZERO), (um(5.0), Metres::ZERO), 2.0);
+        assert_eq!((exact.ratio(), exact.state(Doubts::NONE)), (0.0, DriftState::Within));
+        let off = drift_check((um(5.0), Metres::ZERO), (um(6.0), Metres::ZERO), 2.0);
+        assert_eq!(off.state(Doubts::NONE), DriftState::Outside);
     }
 
     #[test]

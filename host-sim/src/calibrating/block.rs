@@ -62,6 +62,8 @@ pub struct BlockTimes {
     pub period: Option<Timed>,
     /// The nearest echoes before and after the first back wall.
     pub neighbours: (Option<Seconds>, Option<Seconds>),
+    /// The first back wall in each shot that shows it, with the shot's number.
+    pub of_shots: Vec<(usize, Echo)>,
 }
 
 impl BlockTimes {
@@ -163,6 +165,7 @@ pub fn measure(gauge: &mut Gauge<'_>, block: &BlockRecord, learn: Learn) -> Resu
         period: period.map(|period| Timed::new(period.time, larger(period.standard_uncertainty, scatter.period))),
         back_wall,
         neighbours,
+        of_shots: scatter.of_shots,
     })
 }
 
@@ -254,12 +257,14 @@ fn find(echoes: &[Echo], block: &BlockRecord, setup: &GaugeSetup) -> Option<(Ech
     Some((*back_wall, interface.filter(|_| needs_interface)))
 }
 
-/// Standard uncertainties of the mean from the scatter of the shots; zero with fewer than three.
-#[derive(Clone, Copy, Default)]
+/// Standard uncertainties of the mean from the scatter of the shots; zero with fewer than three. And the first back wall
+/// of each.
+#[derive(Clone, Default)]
 struct Scatter {
     back_wall: Seconds,
     interface: Seconds,
     period: Seconds,
+    of_shots: Vec<(usize, Echo)>,
 }
 
 fn scatter(
@@ -268,21 +273,22 @@ fn scatter(
     setup: &GaugeSetup,
     (back_wall, interface, period): (&Echo, Option<&Echo>, Option<Timed>),
 ) -> Scatter {
-    if block.shots.len() < 3 {
-        return Scatter::default();
-    }
     let half_cycle = setup.probe.centre_frequency.period() * 0.5;
     let near = |echoes: &[Echo], of: &Echo| {
-        let distances = echoes.iter().map(|echo| echo.arrival - of.arrival);
-        distances
-            .min_by(|a, b| a.abs().get().total_cmp(&b.abs().get()))
-            .filter(|d| d.abs() < half_cycle)
+        let distance = |echo: &Echo| echo.arrival - of.arrival;
+        let nearest = echoes
+            .iter()
+            .min_by(|a, b| distance(a).abs().get().total_cmp(&distance(b).abs().get()))?;
+        (distance(nearest).abs() < half_cycle).then_some((*nearest, distance(nearest)))
     };
-    let (mut walls, mut interfaces, mut periods) = (Vec::new(), Vec::new(), Vec::new());
-    for shot in &block.shots {
+    let (mut of_shots, mut walls, mut interfaces, mut periods) = (Vec::new(), Vec::new(), Vec::new(), Vec::new());
+    for (number, shot) in block.shots.iter().enumerate() {
         let (echoes, outcome) = look(gauge, block, shot);
-        walls.extend(near(&echoes, back_wall));
-        interfaces.extend(interface.and_then(|of| near(&echoes, of)));
+        if let Some((echo, distance)) = near(&echoes, back_wall) {
+            walls.push(distance);
+            of_shots.push((number, echo));
+        }
+        interfaces.extend(interface.and_then(|of| near(&echoes, of)).map(|(_, distance)| distance));
         if let (Some(of), Ok(this), Span::BackWallToBackWall) = (period, outcome, setup.span) {
             periods.extend(Some(this.time - of.time).filter(|d| d.abs() < half_cycle));
         }
@@ -291,6 +297,7 @@ fn scatter(
         back_wall: of_the_mean(&walls),
         interface: of_the_mean(&interfaces),
         period: of_the_mean(&periods),
+        of_shots,
     }
 }
 

@@ -1,88 +1,188 @@
-//! The reference pulse, cut out of a block's record.
+//! The reference pulse, learned from a block's shots.
 
 use super::block::{BlockRecord, BlockTimes};
 use crate::input_error::InputError;
-use halfpulse::echo::envelope::envelope_into;
+use halfpulse::echo::Surroundings;
+use halfpulse::echo::learning::{LearningError, PulseLearner, mismatch, unexplained};
+use halfpulse::echo::pulse::PulseQuality;
 use halfpulse::setup::PULSE_CAPACITY;
-use halfpulse::{GaugeSetup, Seconds};
+use halfpulse::{Echo, Gauge, GaugeSetup, Record, Seconds};
 
-/// Where the pulse may end: -46 dB below its envelope's peak.
-const END_LEVEL: f32 = 0.005;
-/// Or where it may not be told from noise: the envelope of noise exceeds 3.5 sigma once in 460 samples
-/// (Rayleigh's distribution, exp(-3.5²/2)).
-const NOISE_LEVEL: f32 = 3.5;
+/// A learned pulse and how good it is.
+#[derive(Clone, Debug)]
+pub struct LearnedPulse {
+    /// Its samples, envelope peak 1.
+    pub samples: Vec<f32>,
+    /// Its own noise, and how far other shots' echoes differ from it.
+    pub quality: PulseQuality,
+    /// How many shots are in it.
+    pub shots: usize,
+}
 
-/// The samples round the first back wall, scaled to an envelope peak of 1, with tapered ends.
-///
-/// The pulse ends on either side where its envelope stays below -46 dB, or within the noise, for a cycle; at the latest half-way to the neighbouring echo. Half a cycle at each end is tapered to zero.
+/// One shot in eight is kept out of a first pulse, to tell by how much echoes of other shots differ from it.
+const KEPT_OUT: usize = 8;
+/// With fewer shots than this none is kept out: a first pulse of so few would have more noise than mismatch.
+const ENOUGH_TO_KEEP_OUT: usize = 16;
+
+/// The mean of all shots' first back walls, each moved to the same place, scaled to an envelope peak of 1, with
+/// tapered ends: [`halfpulse::echo::learning`].
 ///
 /// # Errors
 /// An echo too close to the record's ends or to its neighbours; a pulse longer than the core holds.
 pub fn reference_pulse(block: &BlockRecord, times: &BlockTimes, setup: &GaugeSetup) -> Result<Vec<f32>, InputError> {
-    let fault = |what: &str, remedy: &str| InputError::in_file(&block.path, what, remedy);
-    let samples_per_cycle = setup.samples_per_cycle();
-    let cycle = samples_per_cycle.ceil() as usize;
-    let codes: Vec<f32> = block.average.codes.iter().map(|code| f32::from(*code)).collect();
+    Ok(learned(block, times, setup, |_| true)?.samples)
+}
+
+/// The pulse of the shots that `takes` lets through, by their place in the list of those that show the echo.
+pub fn learned(
+    block: &BlockRecord,
+    times: &BlockTimes,
+    setup: &GaugeSetup,
+    takes: impl Fn(usize) -> bool,
+) -> Result<LearnedPulse, InputError> {
+    let fault = |error: LearningError| {
+        let (what, remedy) = error.sentence().split_once(": ").unwrap_or((error.sentence(), ""));
+        InputError::in_file(&block.path, what, remedy)
+    };
+    let (before, length) = window(block, times, setup);
+    let mut sums = vec![0.0; length];
+    let mut learner = PulseLearner::new(&mut sums, before);
+    let mut trouble = LearningError::NoShot;
+    for (number, echo) in times
+        .of_shots
+        .iter()
+        .enumerate()
+        .filter(|(place, _)| takes(*place))
+        .map(|(_, of_shot)| of_shot)
+    {
+        let Some(shot) = block.shots.get(*number) else { continue };
+        // A shot that is clipped, or whose echo jitters out of the record, is left out.
+        if let Err(error) = learner.add(&Record::new(&shot.codes, shot.format, block.clock), echo) {
+            trouble = error;
+        }
+    }
+    if learner.shots() == 0 {
+        return Err(fault(trouble));
+    }
+    let learned = learner.finish(setup.samples_per_cycle()).map_err(fault)?;
+    Ok(LearnedPulse {
+        samples: learned.samples.to_vec(),
+        quality: learned.quality,
+        shots: usize::from(learned.shots),
+    })
+}
+
+/// Samples before the echo's place, and in all: half of the way to the neighbours, because they reach as far
+/// towards this echo; and inside the record, with a cycle to spare for shots that jitter.
+fn window(block: &BlockRecord, times: &BlockTimes, setup: &GaugeSetup) -> (usize, usize) {
     let peak_at = times.back_wall.position.index as usize;
     let to_samples = |time: Seconds| (time.get() * setup.sample_rate.get()) as usize;
-    // Half of the way, because the neighbour reaches as far towards this echo.
     let room = |neighbour: Option<Seconds>| {
         let way = neighbour.map(|time| (time - times.back_wall.arrival).abs());
         way.map_or(PULSE_CAPACITY, |way| to_samples(way) / 2)
     };
-    let first = peak_at.saturating_sub(room(times.neighbours.0));
-    let last = (peak_at + room(times.neighbours.1)).min(codes.len().saturating_sub(1));
-
-    // A constant offset of the converter would end up in the envelope.
-    let around = codes.get(first..=last).unwrap_or(&[]);
-    let mean = around.iter().sum::<f32>() / around.len().max(1) as f32;
-    let centred: Vec<f32> = around.iter().map(|code| code - mean).collect();
-    let mut envelope = vec![0.0; centred.len()];
-    envelope_into(&centred, samples_per_cycle, &mut envelope);
-    let middle = peak_at - first;
-    let near = middle.saturating_sub(cycle)..(middle + cycle + 1).min(envelope.len());
-    let peak = envelope.get(near).unwrap_or(&[]).iter().copied().fold(0.0, f32::max);
-    if peak <= 0.0 {
-        return Err(fault("holds no pulse", "record the block again"));
-    }
-    let noise = times.back_wall.amplitude / times.back_wall.snr.as_amplitude_ratio();
-    let level = (END_LEVEL * peak).max(NOISE_LEVEL * noise);
-    let reach = |values: &mut dyn Iterator<Item = f32>| {
-        let mut last_loud = 0;
-        for (distance, value) in values.enumerate() {
-            if value >= level {
-                last_loud = distance;
-            } else if distance - last_loud > cycle {
-                break;
-            }
-        }
-        last_loud
+    let spare = if block.shots.len() > 1 {
+        setup.samples_per_cycle().ceil() as usize
+    } else {
+        0
     };
-    let after = reach(&mut envelope[middle..].iter().copied());
-    let before = reach(&mut envelope[..=middle].iter().rev().copied());
-    let taper = (cycle / 2).max(2);
-    let start = middle.saturating_sub(before + taper);
-    let end = (middle + after + taper + 1).min(centred.len());
-    if before + after < cycle || end - start < 2 * cycle + 1 {
-        return Err(fault(
-            "its first back wall has no room for a reference pulse",
-            "take a thicker block, or record for longer",
+    let before = room(times.neighbours.0).min(peak_at.saturating_sub(spare));
+    let behind = block.average.codes.len().saturating_sub(peak_at + 2 + spare);
+    (before, before + room(times.neighbours.1).min(behind) + 1)
+}
+
+/// How far the echoes of other shots, and of other blocks, differ from a pulse: the root of the energy that it leaves
+/// unexplained. `gauge` has the set-up of the blocks; it comes back with the pulse learned from all shots.
+///
+/// One shot in eight is measured with a pulse of the others. Of another block, whose metal changes the pulse's shape a
+/// little, all are; the larger of all these counts. Too few shots tell nothing (0) about their own block.
+///
+/// # Errors
+/// As [`reference_pulse`]; a pulse that the core refuses.
+pub fn learn_with_mismatch(
+    gauge: &mut Gauge<'_>,
+    blocks: &[BlockRecord],
+    times: &[BlockTimes],
+    own: usize,
+) -> Result<LearnedPulse, InputError> {
+    let setup = *gauge.setup();
+    let (Some(block), Some(its_times)) = (blocks.get(own), times.get(own)) else {
+        return Err(InputError::in_argument(
+            "a block is missing",
+            "give --block 5.000mm=FILE",
         ));
+    };
+    let refused = |error: halfpulse::SetupError| {
+        InputError::in_file(
+            &block.path,
+            format!("its echo is no reference pulse: {error}"),
+            "record the block again",
+        )
+    };
+    let mut worst = 0.0f32;
+    if its_times.of_shots.len() >= ENOUGH_TO_KEEP_OUT {
+        let first = learned(block, its_times, &setup, |place| place % KEPT_OUT != 0)?;
+        gauge
+            .learn_pulse_of_quality(&first.samples, first.quality)
+            .map_err(refused)?;
+        let kept_out = its_times.of_shots.iter().step_by(KEPT_OUT);
+        worst = worst.max(mean_mismatch(gauge, block, kept_out));
     }
-    if end - start > PULSE_CAPACITY {
-        return Err(fault(
-            "its pulse is longer than the gauge can hold",
-            "lower the sample rate, or raise the signal",
-        ));
-    }
-    let mut pulse: Vec<f32> = centred[start..end].iter().map(|sample| sample / peak).collect();
-    let length = pulse.len();
-    for (i, sample) in pulse.iter_mut().enumerate() {
-        let edge = i.min(length - 1 - i);
-        if edge < taper {
-            // Raised cosine: no step at either end of the taper.
-            *sample *= 0.5 - 0.5 * (std::f32::consts::PI * (edge as f32 + 0.5) / taper as f32).cos();
+    let mut all = learned(block, its_times, &setup, |_| true)?;
+    gauge
+        .learn_pulse_of_quality(&all.samples, all.quality)
+        .map_err(refused)?;
+    for (number, (other, times)) in blocks.iter().zip(times).enumerate() {
+        if number != own && is_isolated(times, gauge) {
+            worst = worst.max(mean_mismatch(gauge, other, times.of_shots.iter()));
         }
     }
-    Ok(pulse)
+    all.quality.mismatch = worst;
+    gauge
+        .learn_pulse_of_quality(&all.samples, all.quality)
+        .map_err(refused)?;
+    Ok(all)
+}
+
+/// Is the first back wall further from its neighbours than two pulses?
+fn is_isolated(times: &BlockTimes, gauge: &Gauge<'_>) -> bool {
+    let clear = gauge.setup().sample_rate.period() * (2.0 * gauge.pulse().facts.envelope_duration);
+    [times.neighbours.0, times.neighbours.1]
+        .iter()
+        .flatten()
+        .all(|neighbour| (*neighbour - times.back_wall.arrival).abs() > clear)
+}
+
+/// Mismatch of the gauge's pulse from the first back walls of some shots.
+fn mean_mismatch<'e>(
+    gauge: &mut Gauge<'_>,
+    block: &BlockRecord,
+    shots: impl Iterator<Item = &'e (usize, Echo)>,
+) -> f32 {
+    let half_cycle = gauge.setup().probe.centre_frequency.period() * 0.5;
+    let (mut sum, mut count) = (0.0f64, 0u32);
+    for (number, known) in shots {
+        let Some(shot) = block.shots.get(*number) else { continue };
+        let record = Record::new(&shot.codes, shot.format, block.clock);
+        // Whether the record gives a reading does not matter here.
+        let _ = gauge.measure(&record);
+        let echoes = &gauge.findings().echoes;
+        let found = echoes
+            .iter()
+            .find(|echo| (echo.arrival - known.arrival).abs() < half_cycle && !echo.clipped);
+        let surroundings = Surroundings {
+            record,
+            pulse: gauge.pulse(),
+            noise: gauge.findings().noise,
+            samples_per_cycle: gauge.setup().samples_per_cycle(),
+        };
+        if let Some(left) = found.and_then(|echo| unexplained(&surroundings, echo)) {
+            sum += f64::from(left);
+            count += 1;
+        }
+    }
+    if count == 0 {
+        return 0.0;
+    }
+    mismatch((sum / f64::from(count)) as f32)
 }

@@ -2,7 +2,8 @@
 //!
 //! 1. Each block's averaged shots are measured with the pulse at hand (modelled, or learned before) to
 //!    find its first back wall near the time that its thickness promises ([`block`]).
-//! 2. The reference pulse is cut round the clearest first back wall ([`cut`]).
+//! 2. The reference pulse is learned from all shots' first back walls on the block where it is clearest ([`cut`]), with
+//!    its own noise and with how far echoes of other shots and blocks differ from it.
 //! 3. All blocks are measured again with that pulse, and zero and velocity follow from what the span
 //!    measures between: the first back wall; the first back wall after the interface; or the period for
 //!    the velocity and the first back wall for the zero.
@@ -20,10 +21,15 @@ use crate::input_error::InputError;
 use crate::measuring::HeapScratch;
 use crate::setup_file::{CalibrationKeys, SetupFile, SetupKeys, checksum};
 use block::{BlockRecord, BlockTimes};
+use cut::LearnedPulse;
+use halfpulse::echo::pulse::PulseQuality;
 use halfpulse::wall::calibration::{self, Block, CalibrationError};
 use halfpulse::wall::thickness::Timed;
 use halfpulse::wall::{beam, coupling};
-use halfpulse::{GaugeSetup, Material, Metres, Seconds, Span, Zero};
+use halfpulse::{
+    Celsius, DriftCheck, DriftState, GaugeSetup, Material, Metres, MetresPerSecond, NoReading, Reading, Record,
+    Seconds, Span, Zero,
+};
 
 /// What shall be learned from the blocks, besides the reference pulse.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, clap::ValueEnum)]
@@ -43,6 +49,10 @@ pub struct Calibrated {
     pub keys: SetupKeys,
     /// The reference pulse.
     pub pulse: Vec<f32>,
+    /// Its own noise, and how far other shots' echoes differ from it.
+    pub quality: PulseQuality,
+    /// How many shots are in it.
+    pub pulse_shots: usize,
     /// The zero in force.
     pub zero: Zero,
     /// The material in force.
@@ -56,22 +66,42 @@ pub struct Calibrated {
 /// Standard uncertainty over half-width of a rectangular distribution (JCGM 100:2008, 4.3.7).
 const RECTANGULAR: f32 = 0.577_350_26;
 
+/// How well the temperature of a block is known, where one is stated: its standard uncertainty (k = 1) in kelvin.
+const BLOCK_TEMPERATURE_UNCERTAINTY: Celsius = Celsius::new(1.0);
+
 /// Calibrates a set-up on blocks. `pulse_name` is what the set-up will call the pulse's file.
 ///
 /// # Errors
-/// A block whose back wall is not found or contradicts its thickness; blocks that do not determine what
-/// shall be learned.
+/// As [`calibrate_at`]; a set-up whose velocity follows temperature, because that of the blocks is not stated.
 pub fn calibrate(
     setup: &SetupFile,
     blocks: &[BlockRecord],
     learn: Learn,
     pulse_name: &str,
 ) -> Result<Calibrated, InputError> {
+    calibrate_at(setup, blocks, learn, pulse_name, None)
+}
+
+/// The same with the blocks' temperature in degrees Celsius. If the set-up's velocity follows temperature, a zero is
+/// learned with the velocity at that temperature, and a velocity that is learned holds at it.
+///
+/// # Errors
+/// A block whose back wall is not found or contradicts its thickness; blocks that do not determine what
+/// shall be learned; a temperature that is needed and not stated.
+pub fn calibrate_at(
+    setup: &SetupFile,
+    blocks: &[BlockRecord],
+    learn: Learn,
+    pulse_name: &str,
+    temperature_c: Option<f64>,
+) -> Result<Calibrated, InputError> {
     let mut core_setup = setup.gauge_setup()?;
     check_number(core_setup.span, blocks.len(), learn)?;
     // Blocks are bare, and what an earlier calibration covered says nothing about this one.
     core_setup.coating = None;
     core_setup.calibrated = None;
+    let as_stated = core_setup.material;
+    core_setup.material = material_of_blocks(&as_stated, temperature_c)?;
 
     let longest = blocks.iter().map(|block| block.average.codes.len()).max().unwrap_or(0);
     let mut scratch = HeapScratch::new(longest);
@@ -83,20 +113,13 @@ pub fn calibrate(
         .collect::<Result<_, _>>()?;
     let snr = |times: &BlockTimes| times.back_wall.snr.get();
     let clearest = before.iter().enumerate().max_by(|a, b| snr(a.1).total_cmp(&snr(b.1)));
-    let Some((pulse_from, clearest)) = clearest else {
+    let Some((pulse_from, _)) = clearest else {
         return Err(InputError::in_argument(
             "there is no block",
             "give --block 5.000mm=FILE",
         ));
     };
-    let pulse = cut::reference_pulse(&blocks[pulse_from], clearest, &core_setup)?;
-    gauge.learn_pulse(&pulse).map_err(|error| {
-        InputError::in_file(
-            &blocks[pulse_from].path,
-            format!("its echo is no reference pulse: {error}"),
-            "record the block again",
-        )
-    })?;
+    let learned = cut::learn_with_mismatch(&mut gauge, blocks, &before, pulse_from)?;
 
     let times: Vec<BlockTimes> = blocks
         .iter()
@@ -105,16 +128,92 @@ pub fn calibrate(
     if let (Learn::Velocity, [before], [after]) = (learn, &before[..], &times[..]) {
         core_setup.zero = translated(&core_setup, before, after);
     }
-    let (zero, material) = solve(&core_setup, blocks, &times, learn)?;
-    let keys = new_keys(setup, blocks, learn, (&zero, &material), &pulse, pulse_name);
+    let (mut zero, mut material) = solve(&core_setup, blocks, &times, learn)?;
+    if learn == Learn::Zero {
+        // What temperature adds to the doubt of the blocks' velocity is no error of the velocity that the set-up keeps.
+        let (kept, used) = (
+            as_stated.velocity_standard_uncertainty.get(),
+            core_setup.material.velocity_standard_uncertainty.get(),
+        );
+        if used > 0.0 {
+            zero.velocity_correlation *= kept / used;
+        }
+        material = as_stated;
+    }
+    let mut keys = new_keys(setup, blocks, learn, (&zero, &material), &learned, pulse_name);
+    if let Some(calibration) = &mut keys.calibration {
+        calibration.temperature_c = temperature_c;
+    }
+    if learn != Learn::Zero && as_stated.temperature.is_some() {
+        keys.material.velocity_temperature_c = temperature_c;
+    }
     Ok(Calibrated {
         keys,
-        pulse,
+        pulse: learned.samples,
+        quality: learned.quality,
+        pulse_shots: learned.shots,
         zero,
         material,
         pulse_from,
         times,
     })
+}
+
+/// The material as the blocks have it, at their temperature.
+fn material_of_blocks(stated: &Material, temperature_c: Option<f64>) -> Result<Material, InputError> {
+    let Some(follows) = stated.temperature else {
+        return Ok(stated.of_blocks());
+    };
+    let Some(temperature) = temperature_c else {
+        return Err(InputError::in_argument(
+            "the set-up's velocity follows temperature, and that of the blocks is not stated",
+            "add --temperature, or remove the coefficient from the set-up",
+        ));
+    };
+    let temperature = Celsius::new(temperature as f32);
+    let there = stated.with_temperature(follows.with_part(temperature, BLOCK_TEMPERATURE_UNCERTAINTY));
+    let (own, by_temperature) = (
+        there.velocity_standard_uncertainty.get(),
+        there.temperature_uncertainty().get(),
+    );
+    Ok(Material::new(
+        there.velocity_in_part(),
+        MetresPerSecond::new(own.hypot(by_temperature)),
+    ))
+}
+
+/// One block read with a set-up as it is.
+#[derive(Clone, Debug)]
+pub struct Checked {
+    /// What the average of its shots reads, or why it does not.
+    pub outcome: Result<Reading, NoReading>,
+    /// Its difference to the block; `None` without a reading.
+    pub drift: Option<(DriftCheck, DriftState)>,
+}
+
+/// Reads a block with a set-up as it is, for drift: what the part may differ from blocks by is left out, and so is a
+/// coating.
+///
+/// # Errors
+/// A set-up or pulse that cannot be used; a temperature that is needed and not stated.
+pub fn check(setup: &SetupFile, block: &BlockRecord, temperature_c: Option<f64>) -> Result<Checked, InputError> {
+    let mut scratch = HeapScratch::new(block.average.codes.len());
+    let mut gauge = setup.gauge(scratch.workspace())?;
+    let mut core_setup = *gauge.setup();
+    core_setup.coating = None;
+    core_setup.material = material_of_blocks(&core_setup.material, temperature_c)?;
+    gauge.change_setup(core_setup).map_err(|error| setup.locate(error))?;
+    let record = Record::new(&block.average.codes, block.average.format, block.clock);
+    let outcome = gauge.measure(&record);
+    let drift = outcome.as_ref().ok().map(|reading| {
+        let drift = calibration::drift_check(
+            (block.thickness, block.thickness_uncertainty),
+            (reading.thickness, reading.standard_uncertainty),
+            reading.coverage_factor,
+        );
+        (drift, drift.state(reading.doubts))
+    });
+    Ok(Checked { outcome, drift })
 }
 
 /// A zero that was learned with another pulse, as the new pulse sees it.
@@ -294,8 +393,8 @@ fn weighted(materials: &[Material]) -> Result<Material, InputError> {
         }
     }
     Ok(Material::new(
-        halfpulse::MetresPerSecond::new(mean as f32),
-        halfpulse::MetresPerSecond::new((1.0 / weights.sqrt()) as f32),
+        MetresPerSecond::new(mean as f32),
+        MetresPerSecond::new((1.0 / weights.sqrt()) as f32),
     ))
 }
 
@@ -305,12 +404,15 @@ fn new_keys(
     blocks: &[BlockRecord],
     learn: Learn,
     (zero, material): (&Zero, &Material),
-    pulse: &[f32],
+    pulse: &LearnedPulse,
     pulse_name: &str,
 ) -> SetupKeys {
     let mut keys = setup.keys.clone();
     keys.probe.reference_pulse = Some(pulse_name.to_string());
-    keys.zero.reference_pulse_checksum = Some(checksum(pulse));
+    keys.zero.reference_pulse_checksum = Some(checksum(&pulse.samples));
+    let percent = |share: f32| rounded((share * 1e6).round() * 1e-4);
+    keys.probe.reference_pulse_noise_percent = Some(percent(pulse.quality.noise));
+    keys.probe.reference_pulse_mismatch_percent = Some(percent(pulse.quality.mismatch));
     // An unknown zero (see the set-up file) stays unknown.
     if learn != Learn::Velocity || keys.zero.standard_uncertainty_ns.is_some() {
         keys.zero.offset_ns = rounded(zero.offset.as_ns());

@@ -1,5 +1,8 @@
 //! `halfpulse calibrate`: blocks of known thickness to reference pulse, zero and velocity.
 
+mod check;
+
+use super::read::Format;
 use super::{Outcome, written};
 use crate::calibrating::block::BlockRecord;
 use crate::calibrating::{self, Calibrated, Learn};
@@ -7,6 +10,7 @@ use crate::input_error::InputError;
 use crate::measuring;
 use crate::record_file::{self, npy};
 use crate::setup_file::{SetupFile, span_word};
+use halfpulse::echo::learning::ENOUGH_SHOTS;
 use std::io::Write;
 use std::path::{Path, PathBuf};
 use std::time::{SystemTime, UNIX_EPOCH};
@@ -35,9 +39,15 @@ pub struct Arguments {
     #[arg(long, value_enum)]
     learn: Option<Learn>,
     /// The new set-up; its reference pulse is written beside it
-    #[arg(short, long, value_name = "OUT.toml")]
-    output: PathBuf,
-    /// Temperature of the blocks in degrees Celsius, to be noted in the set-up
+    #[arg(short, long, value_name = "OUT.toml", required_unless_present = "check")]
+    output: Option<PathBuf>,
+    /// Learn nothing: read the blocks with the set-up as it is, and say whether it still reads them right
+    #[arg(long, conflicts_with_all = ["output", "learn", "date"])]
+    check: bool,
+    /// How a check is printed
+    #[arg(long, value_enum, default_value_t = Format::Text, requires = "check")]
+    format: Format,
+    /// Temperature of the blocks in degrees Celsius, to be noted in the set-up; needed if its velocity follows temperature
     #[arg(long, value_name = "C", allow_negative_numbers = true)]
     temperature: Option<f64>,
     /// Day to be noted in the set-up, as 2026-01-31; today (UTC) if not stated
@@ -50,15 +60,27 @@ Examples:
   halfpulse calibrate --setup probe.toml --block 5.000mm=thin.npy -o ready.toml
   halfpulse calibrate --setup probe.toml --block 5.000mm=thin.npy --block 25.000mm+-0.002mm=thick.npy -o ready.toml
   halfpulse calibrate --setup probe.toml --block 10.00mm=part.npy --learn velocity -o ready.toml
+  halfpulse calibrate --check --setup ready.toml --block 10.000mm+-0.002mm=block.npy
 
 All shots of a file are of one place; they are averaged. What is learned, by span:
   transmission-pulse-to-back-wall   first back wall = zero + 2 d / velocity
   interface-to-back-wall            first back wall - interface = zero (normally 0) + 2 d / velocity
   back-wall-to-back-wall            period = 2 d / velocity; zero from the first back wall
 Two blocks determine zero and velocity together, and how their errors hang together. What the blocks
-cannot determine is refused. A velocity is that of the blocks: a part of another steel has its own, and
-its uncertainty in the set-up is for you to widen. A zero belongs to the pulse it was learned with: the new set-up names the
-pulse's file and its checksum.";
+cannot determine is refused.
+  * The block is not the part. A velocity is that of the blocks: a part of another heat or rolling direction has
+    its own. Say by how much it may differ in [material] part_velocity_standard_uncertainty_m_s.
+  * Zero and velocity of two blocks are effective ones: beam and couplant film move the blocks' echoes too. Learn
+    with the probe and the span in use, on blocks that bracket the parts: beyond them the uncertainty grows.
+  * The reference pulse is the mean of all shots, each moved to the same place. Record 128 shots or more: its own
+    noise is that of a shot over their root. Its noise, and by how much other shots differ from it (mismatch),
+    are noted in the set-up.
+  * A zero belongs to the pulse it was learned with: the new set-up names the pulse's file and its checksum.
+  * --check reads blocks with the set-up as it is: within or outside, by how much, and what to do. Check before
+    and after a series, on a block that the calibration did not use. Exit status: 0 all within, 2 some not,
+    1 an error. JSON, one object a block: file, block_mm, block_standard_uncertainty_mm, thickness_mm,
+    difference_mm, expanded_uncertainty_mm (of the difference), ratio (their quotient), state (within, outside,
+    undecided), doubts, no_reading.";
 
 /// Runs the command.
 ///
@@ -71,6 +93,15 @@ pub fn run(arguments: &Arguments, out: &mut dyn Write) -> Result<Outcome, InputE
         .iter()
         .map(|text| read_block(text, &setup))
         .collect::<Result<_, _>>()?;
+    if arguments.temperature.is_some_and(|t| !(-273.15..=3000.0).contains(&t)) {
+        return Err(InputError::in_argument(
+            "--temperature is no temperature of a block",
+            "give degrees Celsius",
+        ));
+    }
+    let Some(output) = arguments.output.as_deref().filter(|_| !arguments.check) else {
+        return check::run(&setup, &blocks, arguments.temperature, arguments.format, out);
+    };
     let learn = arguments.learn.unwrap_or(match blocks.len() {
         1 => Learn::Zero,
         _ => Learn::ZeroAndVelocity,
@@ -79,25 +110,18 @@ pub fn run(arguments: &Arguments, out: &mut dyn Write) -> Result<Outcome, InputE
         Some(date) => checked_date(date)?,
         None => today(),
     };
-    if arguments.temperature.is_some_and(|t| !(-273.15..=3000.0).contains(&t)) {
-        return Err(InputError::in_argument(
-            "--temperature is no temperature of a block",
-            "give degrees Celsius",
-        ));
-    }
-    let pulse_path = pulse_path(&arguments.output)?;
+    let pulse_path = pulse_path(output)?;
     let pulse_name = pulse_path.file_name().map(|name| name.to_string_lossy().into_owned());
     let pulse_name = pulse_name.unwrap_or_default();
-    let mut learned = calibrating::calibrate(&setup, &blocks, learn, &pulse_name)?;
+    let mut learned = calibrating::calibrate_at(&setup, &blocks, learn, &pulse_name, arguments.temperature)?;
     if let Some(calibration) = &mut learned.keys.calibration {
         calibration.date = Some(date);
-        calibration.temperature_c = arguments.temperature;
     }
     npy::write_pulse(&pulse_path, &learned.pulse)?;
-    learned.keys.write(&arguments.output)?;
+    learned.keys.write(output)?;
     // What was written must be usable: read it as `read` will.
-    SetupFile::read(&arguments.output)?.reference_pulse()?;
-    let report = report(&learned, &blocks, learn, &arguments.output, &pulse_path);
+    SetupFile::read(output)?.reference_pulse()?;
+    let report = report(&learned, &blocks, learn, output, &pulse_path);
     written(out.write_all(report.as_bytes()).and_then(|()| out.flush()))?;
     Ok(Outcome::Done)
 }
@@ -238,12 +262,27 @@ fn report(learned: &Calibrated, blocks: &[BlockRecord], learn: Learn, output: &P
         text.push_str(&format!("correlation of velocity and zero: {correlation:.3}\n"));
     }
     text.push_str(&format!(
-        "reference pulse: {} samples from {} mm, {}\nset-up: {}\n",
+        "reference pulse: {} samples from {} shots on {} mm, its own noise {:.3} %, mismatch {:.2} %, {}\nset-up: {}\n",
         learned.pulse.len(),
+        learned.pulse_shots,
         blocks.get(learned.pulse_from).map_or(0.0, |block| block.thickness_mm),
+        100.0 * learned.quality.noise,
+        100.0 * learned.quality.mismatch,
         pulse.display(),
         output.display()
     ));
+    if learned.pulse_shots < usize::from(ENOUGH_SHOTS) {
+        text.push_str(&format!(
+            "note: a pulse of {ENOUGH_SHOTS} shots or more has less noise of its own\n"
+        ));
+    }
+    let material = &learned.keys.material;
+    if material.part_velocity_standard_uncertainty_m_s.is_none() {
+        text.push_str(
+            "note: the block is not the part: state in [material] part_velocity_standard_uncertainty_m_s by how much \
+             the part's velocity may differ, or 0\n",
+        );
+    }
     text
 }
 
