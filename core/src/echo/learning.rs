@@ -18,8 +18,8 @@
 
 use crate::echo::correlation::energy;
 use crate::echo::envelope::{squared_at, stride};
-use crate::echo::pulse::PulseQuality;
-use crate::echo::{Echo, Surroundings, interpolate, under};
+use crate::echo::pulse::{PulseQuality, ReferencePulse};
+use crate::echo::{Echo, interpolate, under};
 use crate::math;
 use crate::record::Record;
 use crate::setup::PULSE_CAPACITY;
@@ -35,8 +35,9 @@ const END_LEVEL: f32 = 0.005;
 /// Or where it may not be told from noise: the envelope of noise exceeds 3.5 standard deviations once in 460
 /// samples (Rayleigh's distribution, exp(-3.5²/2)).
 const NOISE_LEVEL: f32 = 3.5;
-/// Noise that dithers the converter well enough for averages to gain resolution: 0.4 of a step, over its rounding noise.
-const DITHERS: f32 = 1.385_640_6;
+/// Noise that dithers the converter well enough for averages to gain resolution, over its rounding noise: 0.4 steps, with the
+/// rounding that is measured with them sqrt(0.4² + 1/12), over 1 / sqrt(12).
+const DITHERS: f32 = 1.708_8;
 
 /// The coherent sum of shots, each moved so that its echo lies at the same place.
 #[derive(Debug)]
@@ -95,10 +96,8 @@ impl<'b> PulseLearner<'b> {
         for (place, sum) in self.sums.iter_mut().enumerate() {
             *sum += interpolate::at_codes(record.codes(), first + place, echo.position.fraction);
         }
-        let (noise, rounding) = (
-            echo.amplitude / echo.snr.as_amplitude_ratio(),
-            record.format().rounding_noise(),
-        );
+        let noise = echo.amplitude / echo.snr.as_amplitude_ratio();
+        let rounding = record.format().rounding_noise(noise);
         self.variances += noise * noise;
         if noise < DITHERS * rounding {
             // Rounding that is the same in every shot.
@@ -196,16 +195,16 @@ impl<'b> PulseLearner<'b> {
 /// the fitted energy. By chance it is negative as often as positive where the pulse fits: the mean of several shots, and
 /// of that the root ([`mismatch`]), is the pulse's mismatch. `None` if the echo stands out of the record.
 ///
-/// The echo must be isolated and of a shot that is not in the pulse.
+/// `noise` is the record's, root mean square per sample in codes. The echo must be isolated and of a shot that is not in
+/// the pulse.
 #[must_use]
-pub fn unexplained(surroundings: &Surroundings<'_>, echo: &Echo) -> Option<f32> {
-    let pulse = &surroundings.pulse;
-    let codes = under(&surroundings.record, pulse, echo.position)?;
+pub fn unexplained(record: &Record<'_>, pulse: &ReferencePulse<'_>, noise: f32, echo: &Echo) -> Option<f32> {
+    let codes = under(record, pulse, echo.position)?;
     let explained = echo.amplitude * echo.amplitude * pulse.facts.energy;
     let of_pulse = echo.amplitude * pulse.facts.noise;
     // Delay, amplitude and mean were fitted.
     let freedom = codes.len() as f32 - 3.0;
-    let by_noise = (surroundings.noise * surroundings.noise + of_pulse * of_pulse) * freedom;
+    let by_noise = (noise * noise + of_pulse * of_pulse) * freedom;
     (explained > 0.0).then(|| (energy(codes) - explained - by_noise) / explained)
 }
 
@@ -265,7 +264,8 @@ impl core::error::Error for LearningError {}
 #[cfg(test)]
 mod tests {
     use super::*;
-    use crate::echo::pulse::{ReferencePulse, learn};
+    use crate::echo::Surroundings;
+    use crate::echo::pulse::learn;
     use crate::echo::{EchoRole, Polarity};
     use crate::record::{AdcFormat, SampleClock};
     use crate::units::{Decibels, Hertz, SamplePosition, Seconds};
@@ -412,10 +412,11 @@ mod tests {
                     record: record(&codes),
                     pulse: reference,
                     noise: 100.0,
+                    timing_noise: crate::echo::noise::TimingNoise::steady(100.0),
                     samples_per_cycle: SPC,
                 };
                 let echo = crate::echo::echo_at(&surroundings, found.unwrap()).unwrap();
-                *sum += unexplained(&surroundings, &echo).unwrap() / 40.0;
+                *sum += unexplained(&surroundings.record, &reference, 100.0, &echo).unwrap() / 40.0;
             }
         }
         assert!(mismatch(own) < 0.008, "{own}");

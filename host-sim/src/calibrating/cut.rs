@@ -2,7 +2,6 @@
 
 use super::block::{BlockRecord, BlockTimes};
 use crate::input_error::InputError;
-use halfpulse::echo::Surroundings;
 use halfpulse::echo::learning::{LearningError, PulseLearner, mismatch, unexplained};
 use halfpulse::echo::pulse::PulseQuality;
 use halfpulse::setup::PULSE_CAPACITY;
@@ -170,13 +169,8 @@ fn mean_mismatch<'e>(
         let found = echoes
             .iter()
             .find(|echo| (echo.arrival - known.arrival).abs() < half_cycle && !echo.clipped);
-        let surroundings = Surroundings {
-            record,
-            pulse: gauge.pulse(),
-            noise: gauge.findings().noise,
-            samples_per_cycle: gauge.setup().samples_per_cycle(),
-        };
-        if let Some(left) = found.and_then(|echo| unexplained(&surroundings, echo)) {
+        let (pulse, noise) = (gauge.pulse(), gauge.findings().noise);
+        if let Some(left) = found.and_then(|echo| unexplained(&record, &pulse, noise, echo)) {
             sum += f64::from(left);
             count += 1;
         }
