@@ -7,6 +7,7 @@ mod val_calibration;
 mod val_tables;
 mod val_uncertainty;
 mod val_arrival;
+mod val_clipped_echoes;
 mod val_envelope;
 mod val_gauge;
 mod val_pulse;

@@ -24,12 +24,8 @@ pub fn at(samples: &[f32], place: f32) -> f32 {
             .copied()
             .unwrap_or(0.0);
     }
-    // sin(π(x - k)) alternates in sign from tap to tap: one sine serves all.
-    let mut sine = math::sin_pi_unit(fraction) * core::f32::consts::FRAC_1_PI;
+    let sine = first_sign(fraction);
     let reach = REACH as i32;
-    if REACH & 1 == 0 {
-        sine = -sine;
-    }
     let start = base + 1 - reach;
     let inside = usize::try_from(start)
         .ok()
@@ -65,21 +61,84 @@ pub fn at_codes(codes: &[i16], index: usize, fraction: f32) -> f32 {
 /// One over the window's half length.
 const STEP: f32 = 1.0 / REACH as f32;
 
+/// sin(π x) / π with the sign that it has at the first tap: it alternates from tap to tap, so one sine serves all.
+fn first_sign(fraction: f32) -> f32 {
+    let sine = math::sin_pi_unit(fraction) * core::f32::consts::FRAC_1_PI;
+    if REACH & 1 == 0 { -sine } else { sine }
+}
+
+/// Weight of the tap at `number`.
+#[inline(always)]
+fn tap_weight(fraction: f32, number: f32, sign: f32) -> f32 {
+    // From whole numbers each time: summed up, the distance would lose the digits that matter
+    // beside a sample.
+    let distance = fraction - number;
+    let u = distance * STEP;
+    let v = 1.0 - u * u;
+    (sign / distance) * (v * v * v)
+}
+
 /// Sum of the taps, each with its weight; `sine` is sin(π x) / π with the first tap's sign.
 #[inline(always)]
 fn weighted(taps: impl Iterator<Item = f32>, fraction: f32, sine: f32) -> f32 {
     let (mut sum, mut number, mut sign) = (0.0, 1.0 - REACH as f32, sine);
     for tap in taps {
-        // From whole numbers each time: summed up, the distance would lose the digits that matter
-        // beside a sample.
-        let distance = fraction - number;
-        let u = distance * STEP;
-        let v = 1.0 - u * u;
-        sum += tap * (sign / distance) * (v * v * v);
+        sum += tap * tap_weight(fraction, number, sign);
         sign = -sign;
         number += 1.0;
     }
     sum
+}
+
+/// The same for many places that lie equally far from their samples: the weights are worked out once.
+#[derive(Clone, Copy, Debug)]
+pub struct Between {
+    weights: [f32; 2 * REACH],
+    shift: i32,
+}
+
+impl Between {
+    /// Values at `number + shift`, for whole numbers.
+    #[must_use]
+    pub fn new(shift: f32) -> Self {
+        let whole = math::floor(shift);
+        let fraction = shift - whole;
+        let mut weights = [0.0; 2 * REACH];
+        if fraction == 0.0 {
+            if let Some(weight) = weights.get_mut(REACH - 1) {
+                *weight = 1.0;
+            }
+        } else {
+            let mut sign = first_sign(fraction);
+            for (tap, weight) in weights.iter_mut().enumerate() {
+                *weight = tap_weight(fraction, tap as f32 + 1.0 - REACH as f32, sign);
+                sign = -sign;
+            }
+        }
+        Self {
+            weights,
+            shift: math::saturating_i32(whole) - (REACH as i32 - 1),
+        }
+    }
+
+    /// The value of `samples` at `number` plus the shift. Samples beyond the ends count as zero.
+    #[must_use]
+    pub fn of(&self, samples: &[f32], number: usize) -> f32 {
+        let first = number as i64 + i64::from(self.shift);
+        let (skip, start) = if first < 0 {
+            (first.unsigned_abs() as usize, 0)
+        } else {
+            (0, first as usize)
+        };
+        let (Some(weights), Some(taps)) = (self.weights.get(skip..), samples.get(start..)) else {
+            return 0.0;
+        };
+        let mut sum = 0.0;
+        for (weight, tap) in weights.iter().zip(taps) {
+            sum += weight * tap;
+        }
+        sum
+    }
 }
 
 #[cfg(test)]
@@ -116,6 +175,24 @@ mod tests {
             assert!(worst(frequency) < limit, "{frequency}: {}", worst(frequency));
         }
         assert!(worst(0.45) > 1e-2, "the stated limit of the kernel is real");
+    }
+
+    #[test]
+    fn weights_worked_out_once_give_the_same() {
+        let mut samples = [0.0; 64];
+        for (i, s) in samples.iter_mut().enumerate() {
+            *s = math::cos(0.7 * i as f32 + 0.2);
+        }
+        for shift in [0.0, 0.25, -0.4, 3.7, -12.3, 70.0, -70.0] {
+            let between = Between::new(shift);
+            for number in [0, 1, 5, 30, 60, 63] {
+                let expected = at(&samples, number as f32 + shift);
+                assert!(
+                    (between.of(&samples, number) - expected).abs() < 1e-4,
+                    "{number} {shift}"
+                );
+            }
+        }
     }
 
     #[test]

@@ -10,12 +10,14 @@ pub mod pulse;
 pub mod learning;
 pub mod correlation;
 pub mod arrival;
+pub mod clipping;
 pub mod scan;
 pub mod noise;
 pub mod separation;
 pub mod train;
 
 use crate::echo::arrival::{Arrival, Estimator, Search, estimate, group_lag_noise};
+use crate::echo::clipping::{is_cut, mend};
 use crate::echo::correlation::{Sign, energy};
 use crate::echo::noise::{Noise, TimingNoise};
 use crate::echo::pulse::ReferencePulse;
@@ -79,6 +81,9 @@ pub struct Echo {
     pub group_lag: Seconds,
     /// Some sample under the pulse is clipped.
     pub clipped: bool,
+    /// Share of the pulse's information on the delay that the echo was fitted with: 1 for a whole echo, less for a clipped
+    /// one, which is fitted to its whole samples alone; 0 if those do not determine it.
+    pub information: f32,
     /// What it was found to be.
     pub role: EchoRole,
 }
@@ -169,34 +174,51 @@ fn find_arrival(surroundings: &Surroundings<'_>, index: u32, sign: Sign, scratch
 ///
 /// The standard uncertainty is timing noise · sqrt(Σ s'²) over the curvature of the correlation's top: for an echo
 /// of the pulse's shape in white noise the Cramér-Rao bound, which the fit reaches. It knows
-/// nothing of a wrong pulse and of overlapping echoes: see [`Echo::mismatch`].
+/// nothing of a wrong pulse and of overlapping echoes: see [`Echo::mismatch`]. A clipped echo is fitted anew to its whole
+/// samples ([`clipping`]).
 #[must_use]
 pub fn echo_at(surroundings: &Surroundings<'_>, arrival: Arrival) -> Option<Echo> {
     let Surroundings {
         record, pulse, noise, ..
     } = surroundings;
+    let under = under(record, pulse, arrival.position)?;
+    let format = record.format();
+    let clipped = under.iter().any(|&code| is_cut(code, &format));
+    let (mut arrival, mut information) = (arrival, 1.0);
+    // Numbers that were fitted: delay, amplitude, mean.
+    let mut freedom = under.len() as f32 - 3.0;
+    let mut energy_under = pulse.facts.energy;
+    let mut left = None;
+    if clipped {
+        let mended = mend(record.codes(), &format, pulse, &arrival, surroundings.samples_per_cycle);
+        information = mended.map_or(0.0, |mended| mended.information);
+        if let Some(mended) = mended {
+            let whole = under.iter().filter(|&&code| !is_cut(code, &format)).count();
+            freedom = math::larger(whole as f32 - 4.0, 1.0);
+            energy_under = mended.energy;
+            left = Some(mended.unexplained * freedom);
+            arrival = mended.arrival;
+        }
+    }
     let amplitude = arrival.amplitude.abs();
     if !(amplitude > 0.0) {
         return None;
     }
-    let under = under(record, pulse, arrival.position)?;
-    let (upper, lower) = (record.format().upper_rail(), record.format().lower_rail());
-    let clipped = under.iter().any(|&code| code >= upper || code <= lower);
-
-    let explained = amplitude * amplitude * pulse.facts.energy;
-    // Three numbers were fitted: delay, amplitude, mean. Chance adds up to five standard deviations.
-    let freedom = under.len() as f32 - 3.0;
+    let explained = amplitude * amplitude * energy_under;
+    // Chance adds up to five standard deviations.
     let from_noise = noise * noise * (freedom + 5.0 * math::sqrt(2.0 * freedom));
-    let excess = (energy(under) - explained - from_noise) / explained;
+    let left = left.unwrap_or_else(|| energy(under) - explained);
+    let excess = (left - from_noise) / explained;
     let clock = record.clock();
     let place = arrival.position.as_samples();
     let timing_noise = surroundings.timing_noise.at(place);
     let by_noise = GROUP_LAG_CHANCE * group_lag_noise(surroundings.samples_per_cycle, amplitude / timing_noise, pulse);
     let period = clock.rate.period();
+    let sharpness = arrival.sharpness * math::sqrt(if information > 0.0 { information } else { 1.0 });
     Some(Echo {
         position: arrival.position,
         arrival: clock.time_of(arrival.position),
-        standard_uncertainty: period * surroundings.arrival_noise(amplitude * arrival.sharpness, place),
+        standard_uncertainty: period * surroundings.arrival_noise(amplitude * sharpness, place),
         amplitude,
         polarity: if arrival.amplitude < 0.0 {
             Polarity::Negative
@@ -207,6 +229,7 @@ pub fn echo_at(surroundings: &Surroundings<'_>, arrival: Arrival) -> Option<Echo
         mismatch: math::sqrt(excess),
         group_lag: toward_zero(period * arrival.group_lag, period * by_noise),
         clipped,
+        information,
         role: EchoRole::Other,
     })
 }

@@ -255,7 +255,10 @@ pub fn doubts(evidence: &Evidence<'_>) -> Doubts {
         setup.samples_per_cycle() < SAMPLES_PER_CYCLE_LIMIT,
         Doubt::CoarseSampling,
     );
-    doubts.raise_if(evidence.used().any(|echo| echo.clipped), Doubt::ClippedEcho);
+    doubts.raise_if(
+        evidence.used().any(|echo| echo.clipped && echo.information == 0.0),
+        Doubt::ClippedEcho,
+    );
 
     // First arrival less zero against the period: paint and a wrong zero show here.
     if span != Span::BackWallToBackWall

@@ -3,6 +3,7 @@
 use super::choosing::{Hypothesis, nearest};
 use super::{Rules, Train};
 use crate::echo::arrival::{Arrival, sharpness};
+use crate::echo::clipping::fill_in;
 use crate::echo::correlation::{correlate_into, curvature, slope};
 use crate::echo::interpolate::{self, REACH};
 use crate::echo::{Echo, EchoList, EchoRole, Polarity, Surroundings, echo_at};
@@ -79,6 +80,8 @@ struct Member {
     sharpness: f32,
     /// Timing noise at its place over that at the first multiple: 1 in white noise, less where grain dies away.
     noise: f32,
+    /// Share of the pulse's information that its whole samples carry: less than 1 for a clipped echo.
+    information: f32,
     /// Root of its weight: the amplitude, less what its correlation's top is blunter than the pulse's, over the noise.
     weight: f32,
     /// Distance of its own arrival from the line, in samples.
@@ -121,7 +124,7 @@ pub(super) fn fit(
     };
     let origin = surroundings.pulse.facts.origin;
     let mut members = Members::new();
-    collect(surroundings, rules, best, &line, sign, lags, &mut members);
+    collect(surroundings, echoes, rules, best, &line, sign, lags, &mut members);
     if members.first().is_none_or(|first| first.step > 0) {
         return None;
     }
@@ -134,7 +137,7 @@ pub(super) fn fit(
             let value = interpolate::at(window, place);
             member.amplitude = value / surroundings.pulse.facts.energy;
             member.sharpness = sharpness(curvature(window, place, value), member.amplitude, &surroundings.pulse);
-            member.weight = member.amplitude.abs() * member.sharpness / member.noise;
+            member.weight = member.amplitude.abs() * member.sharpness * math::sqrt(member.information) / member.noise;
             member.off = slope(window, place)
                 / (member.amplitude * member.sharpness * surroundings.pulse.facts.derivative_energy);
             // A step beyond a tenth of a cycle is noise or another cycle: the line decides, not the echo.
@@ -233,6 +236,7 @@ fn sign_of_train(echoes: &EchoList, rules: &Rules, best: &Hypothesis, tolerance:
 /// Correlation windows of the multiples, from the first on until two in a row are lost in the noise.
 fn collect(
     surroundings: &Surroundings<'_>,
+    echoes: &EchoList,
     rules: &Rules,
     best: &Hypothesis,
     line: &Line,
@@ -269,6 +273,26 @@ fn collect(
             break;
         };
         correlate_into(codes, absolute - middle, pulse, window);
+        // A clipped echo as its whole samples say it was.
+        let centre = SamplePosition::new(line.base, place);
+        let cut = echoes.iter().find(|echo| {
+            echo.clipped
+                && echo.information > 0.0
+                && echo.position.samples_after(centre).abs() < 0.5 * surroundings.samples_per_cycle
+        });
+        if let Some(echo) = cut {
+            let format = surroundings.record.format();
+            let amplitude = echo.signed_amplitude();
+            fill_in(
+                codes,
+                &format,
+                pulse,
+                echo.position,
+                amplitude,
+                absolute - middle,
+                window,
+            );
+        }
         let amplitude =
             sign * interpolate::at(window, place - pulse.facts.origin - first_lag as f32) / pulse.facts.energy;
         if amplitude > minimum {
@@ -278,6 +302,7 @@ fn collect(
                 first_lag,
                 amplitude: sign * amplitude,
                 sharpness: 1.0,
+                information: cut.map_or(1.0, |echo| echo.information),
                 noise: surroundings.timing_noise.at(line.base as f32 + place) / noise_at_first,
                 weight: amplitude,
                 off: 0.0,
