@@ -89,8 +89,8 @@ pub use outcome::{Doubt, Doubts, NoReading};
 pub use record::average::{AverageError, Averager, Interleaver};
 pub use record::{AdcFormat, Record, SampleClock};
 pub use setup::{
-    CalibratedRange, Coating, DelayLine, ElementSeparation, GaugeSetup, Material, PartTemperature, Probe, ProbeFace,
-    ProbeKind, SetupError, Span, VelocityTemperature, Window, Zero,
+    CalibratedRange, Coating, DelayLine, EchoSign, ElementSeparation, GaugeSetup, Material, PartTemperature, Probe,
+    ProbeFace, ProbeKind, SetupError, Span, VelocityTemperature, Window, Zero,
 };
 pub use units::{Celsius, Decibels, Hertz, Metres, MetresPerSecond, SamplePosition, Seconds};
 pub use wall::calibration::{Block, CalibrationError, DriftCheck, DriftState};

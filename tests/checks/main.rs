@@ -17,6 +17,7 @@ mod val_population;
 mod val_train_fit;
 mod val_no_echo;
 mod law_hostile;
+mod val_wrong_cycle;
 mod val_world_border;
 mod val_world_grain;
 mod val_world_paths;

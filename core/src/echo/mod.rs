@@ -249,6 +249,15 @@ fn unexplained_per_sample(record: &Record<'_>, pulse: &ReferencePulse<'_>, arriv
     Some(math::larger(left, 0.0) / math::larger(codes.len() as f32 - 3.0, 1.0))
 }
 
+/// The signs that echoes are searched with.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub struct Signs {
+    /// Of the candidate that is the interface echo, and its place in the list; `None` where there is none.
+    pub interface: Option<(usize, Sign)>,
+    /// Of all others.
+    pub others: Sign,
+}
+
 /// Fits the pulse at every candidate inside `range` and lists the echoes. A noise that is not sure may turn out lower: where
 /// the fits show that echoes have been taken for noise.
 ///
@@ -258,6 +267,7 @@ fn unexplained_per_sample(record: &Record<'_>, pulse: &ReferencePulse<'_>, arriv
 pub fn measure_echoes(
     surroundings: &Surroundings<'_>,
     candidates: &[Candidate],
+    signs: Signs,
     noise: &mut Noise,
     range: SampleRange,
     echoes: &mut EchoList,
@@ -277,8 +287,16 @@ pub fn measure_echoes(
     };
 
     let mut arrivals: Vec<Arrival, ECHO_CAPACITY> = Vec::new();
-    for candidate in candidates.iter().filter(|candidate| usable(candidate.index)) {
-        let arrival = find_arrival(surroundings, candidate.index, Sign::Either, scratch);
+    for (number, candidate) in candidates
+        .iter()
+        .enumerate()
+        .filter(|(_, candidate)| usable(candidate.index))
+    {
+        let sign = match signs.interface {
+            Some((interface, sign)) if interface == number => sign,
+            _ => signs.others,
+        };
+        let arrival = find_arrival(surroundings, candidate.index, sign, scratch);
         let Some(arrival) = arrival.filter(|arrival| inside(arrival.position.index)) else {
             continue;
         };

@@ -1,18 +1,41 @@
 //! What a set-up means for one record: where the wall begins, what its train may look like, which times
 //! the thickness is made from, which echo shows the pulse best.
 
-use crate::echo::scan::{Detector, Scan};
+use crate::echo::correlation::Sign;
+use crate::echo::scan::{Candidate, Detector, Scan};
 use crate::echo::train::{Rules, Train};
-use crate::echo::{Echo, EchoList, EchoRole, Surroundings};
+use crate::echo::{Echo, EchoList, EchoRole, Signs, Surroundings};
 use crate::math;
 use crate::outcome::NoReading;
 use crate::record::{Record, SampleRange};
-use crate::setup::{GaugeSetup, ProbeKind, Span};
+use crate::setup::{EchoSign, GaugeSetup, ProbeKind, Span};
 use crate::units::Seconds;
 use crate::wall::thickness::{self, Timed, TrainTimes};
 
 /// An interface echo is the first one that reaches this share of the strongest.
 const INTERFACE_SHARE: f32 = 0.35;
+
+/// The signs that a set-up lets echoes be searched with. The interface echo is told by its height alone, as
+/// [`start_of_wall`] does it.
+#[must_use]
+pub fn signs(setup: &GaugeSetup, candidates: &[Candidate]) -> Signs {
+    let sign = |known: EchoSign| match known {
+        EchoSign::Unknown => Sign::Either,
+        EchoSign::AsPulse => Sign::Positive,
+        EchoSign::Inverted => Sign::Negative,
+    };
+    let strongest = candidates.iter().map(|candidate| candidate.height).max().unwrap_or(0);
+    let interface = candidates
+        .iter()
+        .position(|candidate| f32::from(candidate.height) >= INTERFACE_SHARE * f32::from(strongest));
+    Signs {
+        interface: match setup.probe.kind {
+            ProbeKind::DelayLine => interface.map(|place| (place, sign(setup.probe.interface_sign))),
+            ProbeKind::Contact | ProbeKind::DualElement => None,
+        },
+        others: sign(setup.probe.back_wall_sign),
+    }
+}
 
 /// Where the wall begins, in samples from the record's first; marks the interface echo and the
 /// coating's far side on the way.

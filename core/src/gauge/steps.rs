@@ -1,6 +1,6 @@
 //! The steps of [`Gauge::measure`](super::Gauge::measure), a method for each [`Stage`](super::stage::Stage).
 
-use super::interpretation::{clearest, rules, start_of_wall, times};
+use super::interpretation::{clearest, rules, signs, start_of_wall, times};
 use super::{CoatingReading, Gauge, Reading};
 use crate::echo::noise::{Noise, TimingNoise, listen, reached};
 use crate::echo::pulse::{PulseContext, PulseFacts, ReferencePulse, measure_pulse};
@@ -122,6 +122,7 @@ impl Gauge<'_> {
         measure_echoes(
             &surroundings,
             &scan.candidates,
+            signs(&self.setup, &scan.candidates),
             noise,
             range,
             &mut self.findings.echoes,

@@ -10,7 +10,7 @@ mod probe;
 
 pub use error::SetupError;
 pub use material::{Material, PartTemperature, UNKNOWN_TEMPERATURE, VelocityTemperature};
-pub use probe::{DelayLine, ElementSeparation, Probe, ProbeFace, ProbeKind};
+pub use probe::{DelayLine, EchoSign, ElementSeparation, Probe, ProbeFace, ProbeKind};
 
 use crate::units::{Celsius, Hertz, Metres, MetresPerSecond, Seconds};
 

@@ -51,6 +51,22 @@ impl ElementSeparation {
     }
 }
 
+/// The sign that echoes are known to have, relative to the reference pulse.
+///
+/// Knowing it saves 3 to 5 dB before half a cycle can be misread. A pulse learned on a block's back wall makes back walls in air
+/// [`EchoSign::AsPulse`]; the interface echo of a plastic delay line on metal is then [`EchoSign::Inverted`]. With a
+/// modelled pulse it is not known (its phase isn't).
+#[derive(Clone, Copy, Debug, PartialEq, Eq, Default)]
+pub enum EchoSign {
+    /// Either: whichever fits better.
+    #[default]
+    Unknown,
+    /// As the reference pulse.
+    AsPulse,
+    /// Upside down.
+    Inverted,
+}
+
 /// The probe as its data sheet describes it.
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub struct Probe {
@@ -75,6 +91,10 @@ pub struct Probe {
     /// Distance of a dual-element probe's elements, if known: without it every reading carries
     /// [`crate::outcome::Doubt::VPathUncorrected`]. Without blocks in [`Probe::delay_line`] the elements sit on the part.
     pub separation: Option<ElementSeparation>,
+    /// Sign of the back-wall echoes.
+    pub back_wall_sign: EchoSign,
+    /// Sign of the interface echo behind a delay line.
+    pub interface_sign: EchoSign,
 }
 
 impl Probe {
@@ -89,6 +109,8 @@ impl Probe {
             couplant_film: Metres::new(2e-6),
             delay_line: None,
             separation: None,
+            back_wall_sign: EchoSign::Unknown,
+            interface_sign: EchoSign::Unknown,
         }
     }
 
@@ -144,6 +166,14 @@ impl Probe {
     #[must_use]
     pub const fn with_couplant_film(mut self, film: Metres) -> Self {
         self.couplant_film = film;
+        self
+    }
+
+    /// The same probe with known signs of the back-wall echoes and of the interface echo.
+    #[must_use]
+    pub const fn with_signs(mut self, back_wall: EchoSign, interface: EchoSign) -> Self {
+        self.back_wall_sign = back_wall;
+        self.interface_sign = interface;
         self
     }
 

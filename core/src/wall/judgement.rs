@@ -8,7 +8,7 @@ use crate::echo::train::Train;
 use crate::echo::{Echo, EchoRole, Surroundings};
 use crate::math;
 use crate::outcome::{Doubt, Doubts};
-use crate::setup::{GaugeSetup, ProbeKind, Span};
+use crate::setup::{EchoSign, GaugeSetup, ProbeKind, Span};
 use crate::units::{Metres, Seconds};
 use crate::wall::thickness::{self, TrainTimes};
 use crate::wall::uncertainty::{self, Budget, Source};
@@ -175,11 +175,22 @@ pub fn wrong_cycle_probability(evidence: &Evidence<'_>) -> f32 {
         8.0 * math::normal_tail(math::sqrt(distance) * amplitude / evidence.surroundings.noise)
     };
     let half_cycle = math::sqrt(math::sqrt(math::larger(facts.cycle_likeness, 0.0)));
+    let likeness = |echo: &Echo| {
+        let sign = match echo.role {
+            EchoRole::Interface => evidence.setup.probe.interface_sign,
+            _ => evidence.setup.probe.back_wall_sign,
+        };
+        if sign == EchoSign::Unknown {
+            half_cycle
+        } else {
+            facts.cycle_likeness
+        }
+    };
     let total = match thickness::wall_span(evidence.setup) {
         Span::BackWallToBackWall => probability(evidence.train.support, facts.cycle_likeness),
         Span::TransmissionPulseToBackWall | Span::InterfaceToBackWall => evidence
             .used()
-            .fold(0.0, |sum, echo| sum + probability(echo.amplitude, half_cycle)),
+            .fold(0.0, |sum, echo| sum + probability(echo.amplitude, likeness(echo))),
     };
     math::smaller(total, 1.0)
 }

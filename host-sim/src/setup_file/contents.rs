@@ -1,13 +1,13 @@
 //! What a set-up file says, table by table: from the document, and to what the core takes.
 
 use super::document::Document;
-use super::{CODES, FACES, KINDS, SPANS};
+use super::{CODES, FACES, KINDS, SIGNS, SPANS};
 use crate::input_error::InputError;
 use crate::record_file::CodeKind;
 use halfpulse::echo::pulse::PulseQuality;
 use halfpulse::{
-    CalibratedRange, Celsius, Coating, DelayLine, ElementSeparation, GaugeSetup, Guard, Hertz, Limits, Material,
-    Metres, MetresPerSecond, Probe, ProbeFace, ProbeKind, Seconds, Span, VelocityTemperature, Window, Zero,
+    CalibratedRange, Celsius, Coating, DelayLine, EchoSign, ElementSeparation, GaugeSetup, Guard, Hertz, Limits,
+    Material, Metres, MetresPerSecond, Probe, ProbeFace, ProbeKind, Seconds, Span, VelocityTemperature, Window, Zero,
 };
 
 /// `[record]`: what the converter's numbers mean.
@@ -42,6 +42,10 @@ pub struct ProbeKeys {
     pub face: Option<ProbeFace>,
     /// Uncertain couplant film.
     pub couplant_film_um: f64,
+    /// Sign of the back-wall echoes relative to the reference pulse.
+    pub back_wall_sign: Option<EchoSign>,
+    /// Sign of the interface echo.
+    pub interface_sign: Option<EchoSign>,
     /// File of the learned pulse, relative to the set-up file.
     pub reference_pulse: Option<String>,
     /// The learned pulse's own noise.
@@ -204,6 +208,8 @@ impl SetupKeys {
                     .unwrap_or(7.0),
                 face: document.word("probe", "face", FACES)?,
                 couplant_film_um: document.number("probe", "couplant_film_um")?.unwrap_or(2.0),
+                back_wall_sign: document.word("probe", "back_wall_sign", SIGNS)?,
+                interface_sign: document.word("probe", "interface_sign", SIGNS)?,
                 reference_pulse: document.text("probe", "reference_pulse")?,
                 reference_pulse_noise_percent: document.number("probe", "reference_pulse_noise_percent")?,
                 reference_pulse_mismatch_percent: document.number("probe", "reference_pulse_mismatch_percent")?,
@@ -362,6 +368,8 @@ impl SetupKeys {
                 Metres::from_mm(uncertainty.unwrap_or(0.03 * dual.separation_mm.abs()) as f32),
             )
         });
+        probe.back_wall_sign = self.probe.back_wall_sign.unwrap_or_default();
+        probe.interface_sign = self.probe.interface_sign.unwrap_or_default();
         let calibration = self.calibration.as_ref();
         // An offset without a stated uncertainty: an unknown one where it only serves to check (a second
         // of uncertainty contradicts nothing), an exact one between two echoes of the same record.

@@ -106,6 +106,16 @@ pub const KEYS: &[Key] = &[
     ),
     key(
         "probe",
+        "back_wall_sign",
+        "\"as-pulse\", \"inverted\" or \"unknown\" (default): sign of the back walls relative to the reference pulse",
+    ),
+    key(
+        "probe",
+        "interface_sign",
+        "the same for the interface echo behind a delay line",
+    ),
+    key(
+        "probe",
         "reference_pulse",
         ".npy file of the learned pulse, relative to this file; without it a modelled pulse is used",
     ),

@@ -27,7 +27,7 @@ pub use contents::{
 use crate::input_error::InputError;
 use crate::record_file::{CodeKind, Coding, npy};
 use document::{Document, Place};
-use halfpulse::{Gauge, GaugeSetup, Limits, LimitsError, ProbeFace, ProbeKind, SetupError, Span, Workspace};
+use halfpulse::{EchoSign, Gauge, GaugeSetup, Limits, LimitsError, ProbeFace, ProbeKind, SetupError, Span, Workspace};
 use std::path::{Path, PathBuf};
 
 const CODES: &[(&str, CodeKind)] = &[("signed", CodeKind::Signed), ("offset-binary", CodeKind::OffsetBinary)];
@@ -37,6 +37,11 @@ const KINDS: &[(&str, ProbeKind)] = &[
     ("dual-element", ProbeKind::DualElement),
 ];
 const FACES: &[(&str, ProbeFace)] = &[("hard", ProbeFace::Hard), ("plastic", ProbeFace::Plastic)];
+const SIGNS: &[(&str, EchoSign)] = &[
+    ("unknown", EchoSign::Unknown),
+    ("as-pulse", EchoSign::AsPulse),
+    ("inverted", EchoSign::Inverted),
+];
 const SPANS: &[(&str, Span)] = &[
     ("transmission-pulse-to-back-wall", Span::TransmissionPulseToBackWall),
     ("interface-to-back-wall", Span::InterfaceToBackWall),

@@ -332,6 +332,8 @@ fn every_key_is_described_and_written() {
             element_diameter_uncertainty_percent: 5.0,
             face: Some(ProbeFace::Hard),
             couplant_film_um: 3.0,
+            back_wall_sign: Some(EchoSign::AsPulse),
+            interface_sign: Some(EchoSign::Inverted),
             reference_pulse: Some("a \"b\" \\ c\u{7}.npy".to_string()),
             reference_pulse_noise_percent: Some(0.25),
             reference_pulse_mismatch_percent: Some(1.5),

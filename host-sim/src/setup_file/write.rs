@@ -1,7 +1,7 @@
 //! A set-up back into its file, each key with what it says.
 
 use super::keys::KEYS;
-use super::{CODES, FACES, KINDS, SPANS, SetupKeys, word_of};
+use super::{CODES, FACES, KINDS, SIGNS, SPANS, SetupKeys, word_of};
 use crate::input_error::InputError;
 use std::path::Path;
 
@@ -47,6 +47,8 @@ impl SetupKeys {
             }
             ("probe", "face") => self.probe.face.and_then(|face| word(word_of(FACES, face))),
             ("probe", "couplant_film_um") => Some(number(self.probe.couplant_film_um)),
+            ("probe", "back_wall_sign") => self.probe.back_wall_sign.and_then(|sign| word(word_of(SIGNS, sign))),
+            ("probe", "interface_sign") => self.probe.interface_sign.and_then(|sign| word(word_of(SIGNS, sign))),
             ("probe", "reference_pulse") => self.probe.reference_pulse.as_deref().and_then(word),
             ("probe", "reference_pulse_noise_percent") => self.probe.reference_pulse_noise_percent.map(number),
             ("probe", "reference_pulse_mismatch_percent") => self.probe.reference_pulse_mismatch_percent.map(number),

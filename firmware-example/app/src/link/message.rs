@@ -2,7 +2,7 @@
 //! changing anything, and raise [`PROTOCOL`] with any change.
 
 use crate::link::refusal::Refusal;
-use halfpulse::setup::{ProbeFace, ProbeKind};
+use halfpulse::setup::{EchoSign, ProbeFace, ProbeKind};
 use halfpulse::workspace::ECHO_CAPACITY;
 use halfpulse::{
     CalibratedRange, Coating, DelayLine, ElementSeparation, GaugeSetup, Hertz, Material, Metres, MetresPerSecond,
@@ -177,6 +177,9 @@ impl SetUp {
                 }),
                 separation: (self.separation)
                     .map(|[distance, u]| ElementSeparation::new(Metres::new(distance), Metres::new(u))),
+                // The link carries no learned pulse, so no sign can be known.
+                back_wall_sign: EchoSign::Unknown,
+                interface_sign: EchoSign::Unknown,
             },
             material: Material::new(
                 MetresPerSecond::new(velocity),
