@@ -28,6 +28,8 @@ struct Line {
     /// Number of the first multiple.
     number: u32,
     law: PathLaw,
+    /// Sign of all multiples, 1 or -1.
+    sign: f32,
 }
 
 impl Line {
@@ -99,7 +101,6 @@ pub(super) fn fit(
     tolerance: f32,
     lags: &mut [f32; ECHO_CAPACITY * TRAIN_LAGS],
 ) -> Option<Train> {
-    let sign = sign_of_train(echoes, rules, best, tolerance);
     // Re-anchor at the first multiple's own echo: its position is exact where the hypothesis is rounded.
     let anchor = echoes
         .iter()
@@ -121,10 +122,11 @@ pub(super) fn fit(
         period: best.period,
         number: best.first,
         law: rules.law,
+        sign: sign_of_train(echoes, rules, best, tolerance),
     };
     let origin = surroundings.pulse.facts.origin;
     let mut members = Members::new();
-    collect(surroundings, echoes, rules, best, &line, sign, lags, &mut members);
+    collect(surroundings, echoes, rules, best, &line, lags, &mut members);
     if members.first().is_none_or(|first| first.step > 0) {
         return None;
     }
@@ -240,7 +242,6 @@ fn collect(
     rules: &Rules,
     best: &Hypothesis,
     line: &Line,
-    sign: f32,
     lags: &mut [f32; ECHO_CAPACITY * TRAIN_LAGS],
     members: &mut Members,
 ) {
@@ -294,13 +295,13 @@ fn collect(
             );
         }
         let amplitude =
-            sign * interpolate::at(window, place - pulse.facts.origin - first_lag as f32) / pulse.facts.energy;
+            line.sign * interpolate::at(window, place - pulse.facts.origin - first_lag as f32) / pulse.facts.energy;
         if amplitude > minimum {
             lost = 0;
             let _ = members.push(Member {
                 step,
                 first_lag,
-                amplitude: sign * amplitude,
+                amplitude: line.sign * amplitude,
                 sharpness: 1.0,
                 information: cut.map_or(1.0, |echo| echo.information),
                 noise: surroundings.timing_noise.at(line.base as f32 + place) / noise_at_first,
