@@ -310,6 +310,7 @@ mod tests {
             mismatch: 0.0,
             group_lag: Seconds::ZERO,
             clipped: false,
+            information: 1.0,
             role: EchoRole::Other,
         }
     }
