@@ -1,6 +1,8 @@
 //! Summaries of campaigns as a table for people, and as CSV and JSON for programs.
 
 mod json;
+#[cfg(feature = "parquet")]
+pub mod parquet;
 
 pub use json::json;
 

@@ -119,6 +119,16 @@ impl Unfinished {
     }
 }
 
+impl Write for Unfinished {
+    fn write(&mut self, bytes: &[u8]) -> std::io::Result<usize> {
+        self.file.write(bytes)
+    }
+
+    fn flush(&mut self) -> std::io::Result<()> {
+        self.file.flush()
+    }
+}
+
 impl Drop for Unfinished {
     fn drop(&mut self) {
         if let Some(part) = &self.part {

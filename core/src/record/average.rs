@@ -206,8 +206,12 @@ impl Rails {
 
 /// Equivalent-time sampling: shots whose pulser fired later and later against the sample clock become one dense record.
 ///
-/// Each phase's mean is taken off, to the nearest code, because a converter's drift between phases would look like
-/// a signal at its own sample rate. What the delays' errors do is not corrected: a fixed pattern of 1 ns moves arrivals
+/// Each phase's offset is taken off, to the nearest code, because a converter's drift between phases would look like
+/// a signal at its own sample rate. The offset is the mean of the codes near their median, so that echoes do not count:
+/// where the probe's frequency is a multiple of the base rate, a phase meets every echo at the same place of its cycle,
+/// and a mean of all codes would take a part of the echoes for offset and spread it over the whole record. Where
+/// echoes or a transmission pulse fill more than about half of the record that still happens: choose another
+/// base rate then. What the delays' errors do is not corrected: a fixed pattern of 1 ns moves arrivals
 /// by a constant 0.05 to 0.7 ns, which a zero learned the same way contains. The analogue bandwidth must cover the pulse,
 /// and each phase may itself be an average.
 #[derive(Debug)]
@@ -274,7 +278,7 @@ impl<'c> Interleaver<'c> {
             room(codes.len().saturating_mul(usize::from(self.phases)), self.codes.len())?;
             self.shape = Some(Shape::of(record));
         }
-        let mean = mean(codes);
+        let offset = offset(codes);
         let rails = Rails::of(record.format());
         let dense = self.codes.iter_mut().skip(usize::from(phase));
         for (slot, &code) in dense.step_by(usize::from(self.phases).max(1)).zip(codes) {
@@ -283,7 +287,7 @@ impl<'c> Interleaver<'c> {
             } else if code <= rails.lower {
                 rails.lower
             } else {
-                rails.inside(i64::from(code) - mean)
+                rails.inside(i64::from(code) - offset)
             };
         }
         self.present |= bit;
@@ -316,11 +320,45 @@ pub fn shot_delay(rate: Hertz, phases: u8, number: u8) -> Seconds {
     Seconds::new(f32::from(number) / (f32::from(phases) * rate.get()))
 }
 
-/// The mean of codes, rounded to the nearest; 0 of none.
-fn mean(codes: &[i16]) -> i64 {
-    let sum: i64 = codes.iter().map(|&code| i64::from(code)).sum();
-    let count = codes.len() as i64;
+/// Codes this many times the median deviation off the median are signal: white noise gets there once in 144 samples.
+const SIGNAL_DEVIATIONS: i32 = 4;
+/// Rounding alone can make that deviation 0.
+const LEAST_REACH: i32 = 2;
+
+/// What a converter gives without a signal: the mean of the codes near their median, rounded to the nearest; 0 of none.
+fn offset(codes: &[i16]) -> i64 {
+    let values = codes.iter().map(|&code| i32::from(code));
+    let middle = median(values.clone());
+    let deviation = median(values.clone().map(|value| (value - middle).abs()));
+    let reach = deviation.saturating_mul(SIGNAL_DEVIATIONS);
+    let reach = if reach < LEAST_REACH { LEAST_REACH } else { reach };
+    let (sum, count) = values
+        .filter(|value| (value - middle).abs() <= reach)
+        .fold((0i64, 0i64), |(sum, count), value| (sum + i64::from(value), count + 1));
     (2 * sum + count).checked_div_euclid(2 * count).unwrap_or(0)
+}
+
+/// The least value that at least half of the values do not exceed: by halving the range of codes and their differences, 17
+/// times through the values, because there is no memory to sort them in.
+fn median(values: impl Iterator<Item = i32> + Clone) -> i32 {
+    let (mut low, mut high) = (i32::from(i16::MIN), i32::from(u16::MAX));
+    while low < high {
+        let middle = low + ((high - low) >> 1);
+        let (mut below, mut above) = (0u32, 0u32);
+        for value in values.clone() {
+            if value <= middle {
+                below = below.saturating_add(1);
+            } else {
+                above = above.saturating_add(1);
+            }
+        }
+        if below >= above {
+            high = middle;
+        } else {
+            low = middle + 1;
+        }
+    }
+    low
 }
 
 /// Refuses memory that is too short.

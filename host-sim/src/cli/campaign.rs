@@ -48,9 +48,13 @@ pub struct Arguments {
     /// Where the cells' figures go (.csv or .json)
     #[arg(long, value_name = "SUMMARY")]
     summary: Option<PathBuf>,
-    /// Folder for the figures (.svg)
+    /// Folder for the figures (.svg; .png too if halfpulse was built with --features png)
     #[arg(long, value_name = "FOLDER")]
     figures: Option<PathBuf>,
+    /// Where the results go as Parquet too, once they are whole (needs -o or results that are there, and a halfpulse
+    /// built with --features parquet)
+    #[arg(long, value_name = "RESULTS.parquet", conflicts_with = "replay")]
+    parquet: Option<PathBuf>,
     /// No progress bar
     #[arg(long)]
     quiet: bool,
@@ -99,7 +103,16 @@ fn long_help() -> String {
 /// What is wrong with the campaign, or with an output.
 pub fn run(arguments: &Arguments, out: &mut dyn Write) -> Result<Outcome, InputError> {
     let path = &arguments.campaign;
-    let summary = if path.extension().is_some_and(|extension| extension == "csv") {
+    let is_results = path.extension().is_some_and(|extension| extension == "csv");
+    let results = if is_results {
+        Some(path)
+    } else {
+        arguments.output.as_ref()
+    };
+    if arguments.parquet.is_some() {
+        check_parquet(results.is_some())?;
+    }
+    let summary = if is_results {
         sum_up(path, arguments)?
     } else {
         let campaign = Campaign::read_changed(path, arguments.runs, arguments.seed)?;
@@ -110,6 +123,10 @@ pub fn run(arguments: &Arguments, out: &mut dyn Write) -> Result<Outcome, InputE
         measure(&campaign, arguments)?
     };
     written(out.write_all(table(&summary).as_bytes()))?;
+    #[cfg(feature = "parquet")]
+    if let (Some(results), Some(path)) = (results, &arguments.parquet) {
+        export::parquet::write(results, path)?;
+    }
     if let Some(path) = &arguments.summary {
         let text = match path.extension() {
             Some(extension) if extension == "json" => export::json(&summary),
@@ -119,12 +136,43 @@ pub fn run(arguments: &Arguments, out: &mut dyn Write) -> Result<Outcome, InputE
     }
     if let Some(folder) = &arguments.figures {
         std::fs::create_dir_all(folder).map_err(|error| InputError::unwritable(folder, &error))?;
-        for (name, figure) in plot::of_campaign(&summary) {
-            let path = folder.join(name);
-            output::write(&path, figure.as_bytes())?;
+        for picture in plot::of_campaign(&summary) {
+            let path = folder.join(&picture.name);
+            output::write(&path.with_extension("svg"), picture.svg().as_bytes())?;
+            #[cfg(feature = "png")]
+            {
+                let path = path.with_extension("png");
+                let drawn = picture.png().map_err(|error| {
+                    InputError::in_file(
+                        &path,
+                        format!("cannot be drawn ({error})"),
+                        "take the figure of the same name in .svg",
+                    )
+                })?;
+                output::write(&path, &drawn)?;
+            }
         }
     }
     Ok(Outcome::Done)
+}
+
+/// Can Parquet be written? Better known before a campaign than after it.
+fn check_parquet(has_results: bool) -> Result<(), InputError> {
+    if !cfg!(feature = "parquet") {
+        let what = "--parquet: this halfpulse was built without it";
+        return Err(InputError::in_argument(
+            what,
+            "build it with cargo build --release --features parquet",
+        ));
+    }
+    if !has_results {
+        let what = "--parquet is made from results";
+        return Err(InputError::in_argument(
+            what,
+            "give -o RESULTS.csv too, or the results instead of the campaign",
+        ));
+    }
+    Ok(())
 }
 
 /// Runs `merge`.

@@ -36,7 +36,8 @@ A scene says what is under the probe and what the receiver adds. The least one:
 More tables: [delay_line], [dual_element], [couplant], [surface], [coating], [back], [pit],
 [lamination], [grain], [temperature], [echoes], [transmission_pulse]; and for a receiver that is not
 ideal: [receiver], [interference], [timing], [converter], [equivalent_time], [drop_outs].
-Commented examples are in host-sim/scenes/.
+Commented examples are in host-sim/scenes/: spoilt_receiver.toml has every key of the receiver's tables. Interference
+is stated as it reaches the converter: band limits act on echoes and thermal noise alone.
 
 Examples:
   halfpulse simulate host-sim/scenes/painted_steel.toml -o painted.npy
@@ -188,6 +189,34 @@ mod tests {
             assert_eq!(truth["scene"]["echoes"]["decay"], 0.8);
             assert!(String::from_utf8(said).unwrap().contains("6 echoes"));
         }
+    }
+
+    /// Every example can be simulated, and shows what its comments say: nothing is refused, and echoes there are.
+    #[test]
+    fn all_examples_can_be_simulated() {
+        let folder = tempfile::tempdir().unwrap();
+        let scenes = Path::new(env!("CARGO_MANIFEST_DIR")).join("scenes");
+        let mut seen = 0;
+        for entry in std::fs::read_dir(scenes).unwrap() {
+            let path = entry.unwrap().path();
+            let output = folder.path().join("a.npy");
+            let mut said = Vec::new();
+            run(&arguments(&path, output.clone(), 10), &mut said).unwrap_or_else(|error| panic!("{error}"));
+            let truth = std::fs::read_to_string(output.with_extension("json")).unwrap();
+            let truth: serde_json::Value = serde_json::from_str(&truth).unwrap();
+            assert!(
+                !truth["shots"][9]["echoes"].as_array().unwrap().is_empty(),
+                "{}",
+                path.display()
+            );
+            let written: toml::Table = std::fs::read_to_string(&path).unwrap().parse().unwrap();
+            for (table, value) in &written {
+                // What a file says and the scene does not keep would be said in vain.
+                assert!(!truth["scene"][table].is_null(), "{}: {table} {value}", path.display());
+            }
+            seen += 1;
+        }
+        assert!(seen >= 7, "{seen} scenes");
     }
 
     #[test]

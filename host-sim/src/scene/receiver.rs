@@ -63,8 +63,13 @@ impl Default for Receiver {
     }
 }
 
-/// Table `[interference]`: what reaches the converter from elsewhere. Amplitudes are peaks over full scale,
-/// behind gain and band limits.
+/// Table `[interference]`: what reaches the converter from elsewhere. Amplitudes are peaks over full scale, and
+/// shapes those at the converter: gain and the band limits of table `[receiver]` do not act on them.
+///
+/// What is picked up behind the filter (by the converter's board, from its supply) is described as it is. What is picked up
+/// before it (by the probe or its cable) has been filtered when it reaches the converter; state that: a tone, hum or the
+/// carrier of a burst at frequency f is multiplied by 1 / sqrt(1 + (f / low)^2n) / sqrt(1 + (high / f)^2m) of the Butterworth
+/// limits with orders n and m, and a spike is about as long as the low-pass rings, 0.4 / low.
 #[derive(Clone, Debug, PartialEq, Default, Serialize, Deserialize)]
 #[serde(default, deny_unknown_fields)]
 pub struct Interference {
