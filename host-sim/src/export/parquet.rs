@@ -87,9 +87,18 @@ impl Column {
     fn clear(&mut self) {
         match &mut self.values {
             Values::Whole(values) => values.clear(),
-            Values::Single(values, levels) => (values.clear(), levels.clear()).0,
-            Values::Double(values, levels) => (values.clear(), levels.clear()).0,
-            Values::Text(values, levels) => (values.clear(), levels.clear()).0,
+            Values::Single(values, levels) => {
+                values.clear();
+                levels.clear();
+            }
+            Values::Double(values, levels) => {
+                values.clear();
+                levels.clear();
+            }
+            Values::Text(values, levels) => {
+                values.clear();
+                levels.clear();
+            }
         }
     }
 }
@@ -174,13 +183,15 @@ fn columns(results: &Path) -> Result<Vec<Column>, InputError> {
     }
     for (name, numeric) in names.iter().zip(numeric) {
         // An axis may have any name.
-        let name = match columns.iter().any(|column| column.name == *name) {
-            true => format!("campaign.{name}"),
-            false => name.clone(),
+        let name = if columns.iter().any(|column| column.name == *name) {
+            format!("campaign.{name}")
+        } else {
+            name.clone()
         };
-        let values = match numeric {
-            true => Values::Double(Vec::new(), Vec::new()),
-            false => Values::Text(Vec::new(), Vec::new()),
+        let values = if numeric {
+            Values::Double(Vec::new(), Vec::new())
+        } else {
+            Values::Text(Vec::new(), Vec::new())
         };
         columns.push(Column::new(&name, values));
     }
