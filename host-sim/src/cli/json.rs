@@ -31,7 +31,12 @@ JSON, one object a record and line; numbers or null, never NaN; more keys may fo
                                  upper_frequency_mhz, relative_bandwidth_percent, q,
                                  duration_20db_envelope_ns, duration_20db_rectified_ns,
                                  spatial_pulse_length_mm, axial_resolution_mm}: two-way spectrum at
-                                 -6 dB; the lengths are null without a set-up
+                                 -6 dB; q: centre over width; the envelope's duration is that of the
+                                 pulse's shape; the rectified signal's is up to half a cycle shorter and
+                                 jumps by half-waves with the carrier's phase; spatial pulse length:
+                                 velocity times the envelope's duration; axial resolution: half of it;
+                                 the lengths are null without a set-up, all is null below 26 dB, where
+                                 the -20 dB points lie in the noise
   separation                     null, or {spacing_ns, standard_uncertainty_ns, verdict, log_odds} of
                                  the nearest pair of echoes
   budget                         [{term, standard_uncertainty_mm}]

@@ -2,6 +2,7 @@
 
 use super::words;
 use crate::measuring::Measured;
+use halfpulse::echo::pulse::METRICS_MINIMUM_SNR;
 use halfpulse::{EchoRole, Limits, Polarity, Reading};
 use std::fmt::Write as _;
 
@@ -133,13 +134,14 @@ pub fn block(measured: &Measured, limits: Option<&Limits>) -> String {
     if let Some(pulse) = &findings.pulse {
         let _ = write!(
             text,
-            "  pulse: {:.2} MHz, {:.2} to {:.2} MHz at -6 dB ({:.0} %, Q {:.2}); envelope {:.0} ns at -20 dB",
+            "  pulse: {:.2} MHz, {:.2} to {:.2} MHz at -6 dB ({:.0} %, Q {:.2}); at -20 dB envelope {:.0} ns, rectified {:.0} ns",
             pulse.centre_frequency().as_mhz(),
             pulse.lower_frequency.as_mhz(),
             pulse.upper_frequency.as_mhz(),
             100.0 * pulse.relative_bandwidth(),
             pulse.q(),
-            pulse.envelope_duration.as_ns()
+            pulse.envelope_duration.as_ns(),
+            pulse.rectified_duration.as_ns()
         );
         if measured.span.is_some() {
             let _ = write!(
@@ -150,6 +152,12 @@ pub fn block(measured: &Measured, limits: Option<&Limits>) -> String {
             );
         }
         text.push('\n');
+    } else if !findings.echoes.is_empty() {
+        let _ = writeln!(
+            text,
+            "  pulse: not described, no echo stands {:.0} dB above the noise with room around it; average more shots",
+            METRICS_MINIMUM_SNR.get()
+        );
     }
     if let Some(pair) = &findings.separation {
         let _ = writeln!(
