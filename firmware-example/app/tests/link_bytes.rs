@@ -1,6 +1,9 @@
 //! The link's specification against its code: every worked example of `LINK.md`, byte by byte.
 
-use halfpulse::{GaugeSetup, Hertz, Material, Metres, MetresPerSecond, Probe, Seconds, Span, Window, Zero};
+use halfpulse::{
+    Celsius, GaugeSetup, Hertz, Material, Metres, MetresPerSecond, Probe, Seconds, Span, VelocityTemperature, Window,
+    Zero,
+};
 use halfpulse_app::link::frame::{read_frame, write_frame};
 use halfpulse_app::link::{
     Done, EchoPlace, Fire, FrontEndFault, GainChoice, Hello, LinkReading, LinkReport, Message, NotFired, Outcome,
@@ -192,6 +195,13 @@ fn what_is_written_is_read_back() {
 fn a_set_up_comes_back_as_it_went() {
     let sent = SetUp::of(&SETUP);
     assert_eq!(sent.setup(), Some(SETUP));
+    let follows = VelocityTemperature::new(-0.8, Celsius::new(21.0));
+    for follows in [follows, follows.with_part(Celsius::new(60.0), Celsius::new(2.0))] {
+        let mut warm = SETUP;
+        warm.material = warm.material.with_temperature(follows);
+        warm.material = warm.material.with_part_uncertainty(MetresPerSecond::new(9.0));
+        assert_eq!(SetUp::of(&warm).setup(), Some(warm));
+    }
     for wrong in [
         SetUp { kind: 3, ..sent },
         SetUp { face: 2, ..sent },

@@ -5,14 +5,14 @@ use crate::link::refusal::Refusal;
 use halfpulse::setup::{EchoSign, ProbeFace, ProbeKind};
 use halfpulse::workspace::ECHO_CAPACITY;
 use halfpulse::{
-    CalibratedRange, Coating, DelayLine, ElementSeparation, GaugeSetup, Hertz, Material, Metres, MetresPerSecond,
-    Probe, Seconds, SetupError, Span, Window, Zero,
+    CalibratedRange, Celsius, Coating, DelayLine, ElementSeparation, GaugeSetup, Hertz, Material, Metres,
+    MetresPerSecond, PartTemperature, Probe, Seconds, SetupError, Span, VelocityTemperature, Window, Zero,
 };
 use heapless::Vec;
 use serde::{Deserialize, Serialize};
 
 /// Version of this protocol. Both ends must speak the same.
-pub const PROTOCOL: u8 = 2;
+pub const PROTOCOL: u8 = 3;
 
 /// Everything that can be said. Numbers are in SI units unless their name says otherwise.
 #[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
@@ -91,6 +91,12 @@ pub struct SetUp {
     pub separation: Option<[f32; 2]>,
     /// Block whose beam shift the zero holds, if known.
     pub zero_learned_on: Option<f32>,
+    /// How far the part's velocity may differ from the blocks', as a standard uncertainty.
+    pub part_velocity_uncertainty: f32,
+    /// Temperature coefficient of the velocity, its standard uncertainty, and the temperature that the velocity holds at.
+    pub velocity_temperature: Option<[f32; 3]>,
+    /// Temperature of the part and its standard uncertainty, if known.
+    pub part_temperature: Option<[f32; 2]>,
 }
 
 impl SetUp {
@@ -134,6 +140,14 @@ impl SetUp {
             delay_line: (setup.probe.delay_line).map(|line| [line.length.get(), line.velocity.get()]),
             separation: (setup.probe.separation).map(|s| [s.distance.get(), s.standard_uncertainty.get()]),
             zero_learned_on: setup.zero.learned_on.map(Metres::get),
+            part_velocity_uncertainty: setup.material.part_velocity_standard_uncertainty.get(),
+            velocity_temperature: setup.material.temperature.map(|follows| {
+                let (slope, uncertainty) = (follows.coefficient, follows.coefficient_standard_uncertainty);
+                [slope, uncertainty, follows.reference.get()]
+            }),
+            part_temperature: (setup.material.temperature)
+                .and_then(|follows| follows.part)
+                .map(|part| [part.temperature.get(), part.standard_uncertainty.get()]),
         }
     }
 
@@ -181,10 +195,22 @@ impl SetUp {
                 back_wall_sign: EchoSign::Unknown,
                 interface_sign: EchoSign::Unknown,
             },
-            material: Material::new(
-                MetresPerSecond::new(velocity),
-                MetresPerSecond::new(velocity_uncertainty),
-            ),
+            material: Material {
+                velocity: MetresPerSecond::new(velocity),
+                velocity_standard_uncertainty: MetresPerSecond::new(velocity_uncertainty),
+                part_velocity_standard_uncertainty: MetresPerSecond::new(self.part_velocity_uncertainty),
+                temperature: (self.velocity_temperature).map(|[coefficient, uncertainty, reference]| {
+                    VelocityTemperature {
+                        coefficient,
+                        coefficient_standard_uncertainty: uncertainty,
+                        reference: Celsius::new(reference),
+                        part: self.part_temperature.map(|[temperature, uncertainty]| PartTemperature {
+                            temperature: Celsius::new(temperature),
+                            standard_uncertainty: Celsius::new(uncertainty),
+                        }),
+                    }
+                }),
+            },
             zero: Zero {
                 offset: Seconds::new(offset),
                 standard_uncertainty: Seconds::new(offset_uncertainty),
