@@ -215,3 +215,9 @@ pub fn measure(gauge: &mut Gauge<'_>, name: &str, shot: &Shot, clock: SampleCloc
         full_scale: shot.format.full_scale(),
     }
 }
+
+/// Asks whether an echo of the shot that was measured last is two, and puts the answer beside what was found.
+pub fn separate(gauge: &mut Gauge<'_>, shot: &Shot, clock: SampleClock, measured: &mut Measured) {
+    let _ = gauge.separate(&Record::new(&shot.codes, shot.format, clock));
+    measured.findings.separation = gauge.findings().separation;
+}

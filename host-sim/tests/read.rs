@@ -92,7 +92,15 @@ fn a_clean_train_reads_right_and_json_has_every_key() {
         assert_eq!(record["separation"]["verdict"], "resolved-classically");
         assert_eq!(
             keys(&record["separation"]),
-            ["log_odds", "spacing_ns", "standard_uncertainty_ns", "verdict"]
+            [
+                "amplitude_ratio",
+                "first_arrival_ns",
+                "log_odds",
+                "reason",
+                "spacing_ns",
+                "standard_uncertainty_ns",
+                "verdict"
+            ]
         );
         assert_eq!(record["budget"][0]["term"], "timing");
         assert_eq!(record["dominating_term"], "timing");

@@ -1,6 +1,7 @@
 //! Whatever the gauge is given, nothing panics (overflow checks are on here), every number that comes out is finite
 //! and possible, and the gauge stays usable afterwards.
 
+use halfpulse::echo::separation::Verdict;
 use halfpulse::wall::calibration::{velocity_from_thickness, zero_and_velocity, zero_at_known_velocity};
 use halfpulse::{
     AdcFormat, Averager, Block, CalibratedRange, Coating, DelayLine, EchoRole, ElementSeparation, Gauge, GaugeSetup,
@@ -230,8 +231,15 @@ fn check(gauge: &Gauge<'_>, codes: &[i16], outcome: &Result<Reading, NoReading>)
         positive("q", pulse.q())?;
     }
     if let Some(separation) = &findings.separation {
-        not_negative("spacing", separation.spacing.get())?;
-        not_negative("a spacing's uncertainty", separation.standard_uncertainty.get())?;
+        if let Some(pair) = &separation.pair {
+            not_negative("spacing", pair.spacing.get())?;
+            not_negative("a spacing's uncertainty", pair.standard_uncertainty.get())?;
+            prop_assert!(pair.amplitude_ratio.is_finite(), "{}", pair.amplitude_ratio);
+        }
+        let resolved = separation.verdict != Verdict::NotResolved;
+        prop_assert_eq!(separation.unresolved.is_none(), resolved, "{:?}", separation);
+        prop_assert!(!resolved || separation.pair.is_some(), "{:?}", separation);
+        prop_assert!(separation.log_odds.is_none_or(f32::is_finite), "{:?}", separation);
     }
     match outcome {
         Ok(reading) => {
@@ -337,7 +345,11 @@ proptest! {
             rate: clock_rate.map_or(setup.sample_rate, Hertz::new),
             first_sample: Seconds::new(first_sample),
         };
-        let outcome = gauge.measure(&Record::new(&codes, format, clock));
+        let record = Record::new(&codes, format, clock);
+        let outcome = gauge.measure(&record);
+        check(&gauge, &codes, &outcome)?;
+        let separation = gauge.separate(&record);
+        prop_assert_eq!(separation.is_some(), !gauge.findings().echoes.is_empty());
         check(&gauge, &codes, &outcome)?;
     }
 
@@ -370,7 +382,9 @@ proptest! {
             let setup = *gauge.setup();
             let frequency = f64::from(1.0 / setup.samples_per_cycle());
             let codes = hostile_codes(20, SAMPLES, frequency, &mut Random::new(seed));
-            let outcome = gauge.measure(&Record::new(&codes, AdcFormat::signed(16), SampleClock::new(setup.sample_rate)));
+            let record = Record::new(&codes, AdcFormat::signed(16), SampleClock::new(setup.sample_rate));
+            let outcome = gauge.measure(&record);
+            let _ = gauge.separate(&record);
             check(&gauge, &codes, &outcome)?;
         }
         gauge.change_setup(usual()).expect("back to a sound set-up");

@@ -46,6 +46,19 @@ pub fn correlate_into(codes: &[i16], first: i32, pulse: &ReferencePulse<'_>, lag
     }
 }
 
+/// The same at every `step`-th lag: R\[k\] = Σ_j s\[j\] x\[first + k step + j\].
+pub fn correlate_every(codes: &[i16], first: i32, step: usize, pulse: &ReferencePulse<'_>, lags: &mut [f32]) {
+    if step <= 1 {
+        return correlate_into(codes, first, pulse, lags);
+    }
+    let step = i32::try_from(step).unwrap_or(i32::MAX);
+    let mut start = first;
+    for lag in lags {
+        *lag = single(codes, start, pulse);
+        start = start.saturating_add(step);
+    }
+}
+
 /// One lag, with zeros outside the record.
 fn single(codes: &[i16], start: i32, pulse: &ReferencePulse<'_>) -> f32 {
     let skip = if start < 0 { start.unsigned_abs() as usize } else { 0 };

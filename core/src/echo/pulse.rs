@@ -214,7 +214,8 @@ fn facts_of(samples: &mut [f32], samples_per_cycle: f32) -> Result<PulseFacts, S
 }
 
 /// Sum of products of a pulse with itself `lag` samples later.
-fn autocorrelation(samples: &[f32], lag: usize) -> f32 {
+#[must_use]
+pub fn autocorrelation(samples: &[f32], lag: usize) -> f32 {
     let mut sum = 0.0;
     for (a, b) in samples.iter().zip(samples.get(lag..).unwrap_or(&[])) {
         sum += a * b;

@@ -5,14 +5,16 @@
 //! another gauge from them; [`interpretation`] holds what a set-up means for one record.
 
 pub mod interpretation;
+mod separating;
 pub mod stage;
 mod steps;
 
 use self::stage::{Stage, StageMeter};
 use crate::echo::EchoList;
+use crate::echo::noise::Noise;
 use crate::echo::pulse::{PulseFacts, PulseMetrics, PulseQuality, ReferencePulse, learn, model};
 use crate::echo::scan::Detector;
-use crate::echo::separation::Separation;
+use crate::echo::separation::{PulseTrust, Separation};
 use crate::echo::train::Train;
 use crate::outcome::{Doubts, NoReading};
 use crate::record::{Record, RecordHealth};
@@ -86,7 +88,8 @@ pub struct Findings {
     pub train: Option<Train>,
     /// The pulse as the best echo shows it; `None` if no echo stands high enough above the noise.
     pub pulse: Option<PulseMetrics>,
-    /// The nearest pair of echoes; `None` with fewer than two.
+    /// The verdict on the nearest pair of echoes: the classical one, `None` with fewer than two; after
+    /// [`Gauge::separate`] that of the model.
     pub separation: Option<Separation>,
 }
 
@@ -96,6 +99,8 @@ pub struct Gauge<'w> {
     setup: GaugeSetup,
     workspace: Workspace<'w>,
     facts: PulseFacts,
+    trust: PulseTrust,
+    noise: Noise,
     detector: Detector,
     findings: Findings,
 }
@@ -121,6 +126,8 @@ impl<'w> Gauge<'w> {
             setup,
             workspace,
             facts,
+            trust: PulseTrust::Modelled,
+            noise: Noise::default(),
             detector,
             findings: Findings::default(),
         };
@@ -148,9 +155,11 @@ impl<'w> Gauge<'w> {
             return Err(SetupError::PulseQuality);
         }
         let learned = learn(samples, self.setup.samples_per_cycle(), self.workspace.pulse);
+        self.trust = PulseTrust::Modelled;
         let result = match learned {
             Ok(facts) => {
                 self.facts = facts.with_quality(quality);
+                self.trust = PulseTrust::learned(&self.facts);
                 Ok(())
             }
             Err(error) => {
@@ -176,6 +185,7 @@ impl<'w> Gauge<'w> {
             && old.centre_frequency == new.centre_frequency
             && old.relative_bandwidth == new.relative_bandwidth;
         if !same_pulse {
+            self.trust = PulseTrust::Modelled;
             // Only a pulse that is too long can fail, and then the old one is written back.
             let modelled = model(&setup, self.workspace.pulse);
             if let Err(error) = modelled {
@@ -235,6 +245,7 @@ impl<'w> Gauge<'w> {
         let outcome = train.and_then(|train| meter.meter(Stage::Wall, || self.wall(record, &noise, &train)));
         // What is known of the pulse helps most where there was no reading.
         meter.meter(Stage::Pulse, || self.describe(record, &noise));
+        self.noise = noise;
         outcome
     }
 }

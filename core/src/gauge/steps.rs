@@ -24,7 +24,7 @@ use heapless::Vec;
 const CLIPPED_LIMIT: u16 = 30;
 
 /// What echoes of this record are measured against.
-fn surroundings<'a>(
+pub(super) fn surroundings<'a>(
     setup: &GaugeSetup,
     pulse: &'a [f32; PULSE_CAPACITY],
     facts: PulseFacts,

@@ -41,7 +41,9 @@ mod app {
             gauge.measure(&record)
         });
         printout::outcome(console, canned.name, &outcome, gauge.findings());
-        for (what, cost) in [("gauge-new", making), ("measure", measuring)] {
+        let (separation, separating) = board::counted(|| gauge.separate(&record));
+        printout::separation(console, separation.as_ref());
+        for (what, cost) in [("gauge-new", making), ("measure", measuring), ("separate", separating)] {
             Line::new(console, "cost")
                 .words(what)
                 .word("instructions", cost.instructions)

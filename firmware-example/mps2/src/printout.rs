@@ -5,6 +5,7 @@
 //! and doubts are written with it on purpose: they must not bring a panic into the image either.
 
 use core::fmt::{self, Write};
+use halfpulse::echo::separation::Separation;
 use halfpulse::{CoatingReading, Echo, EchoRole, Findings, NoReading, Polarity, Reading};
 
 /// Where the lines go.
@@ -138,15 +139,28 @@ fn write_findings(sink: &mut impl Sink, findings: &Findings) {
             .bits("spatial-pulse-length", pulse.spatial_pulse_length.get())
             .end();
     }
-    if let Some(separation) = &findings.separation {
-        let line = Line::new(sink, "separation")
-            .word("verdict", separation.verdict as u32)
-            .bits("spacing", separation.spacing.get())
-            .bits("standard-uncertainty", separation.standard_uncertainty.get());
-        match separation.log_odds {
-            Some(odds) => line.bits("log-odds", odds).end(),
-            None => line.end(),
-        }
+    separation(sink, findings.separation.as_ref());
+}
+
+/// Writes the verdict on the nearest pair of echoes, if there is one.
+pub fn separation(sink: &mut impl Sink, separation: Option<&Separation>) {
+    let Some(separation) = separation else {
+        return;
+    };
+    let mut line = Line::new(sink, "separation").word("verdict", separation.verdict as u32);
+    if let Some(pair) = &separation.pair {
+        line = line
+            .bits("first", pair.first.get())
+            .bits("spacing", pair.spacing.get())
+            .bits("standard-uncertainty", pair.standard_uncertainty.get())
+            .bits("amplitude-ratio", pair.amplitude_ratio);
+    }
+    if let Some(why) = separation.unresolved {
+        line = line.word("unresolved", why as u32);
+    }
+    match separation.log_odds {
+        Some(odds) => line.bits("log-odds", odds).end(),
+        None => line.end(),
     }
 }
 

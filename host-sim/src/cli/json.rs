@@ -3,7 +3,7 @@
 use crate::measuring::Measured;
 use crate::setup_file::span_word;
 use halfpulse::echo::pulse::PulseMetrics;
-use halfpulse::echo::separation::Separation;
+use halfpulse::echo::separation::{EchoPair, Separation, Unresolved};
 use halfpulse::{Echo, EchoRole, LimitState, Limits, LimitsVerdict, Polarity};
 use serde::Serialize;
 
@@ -37,8 +37,11 @@ JSON, one object a record and line; numbers or null, never NaN; more keys may fo
                                  velocity times the envelope's duration; axial resolution: half of it;
                                  the lengths are null without a set-up, all is null below 26 dB, where
                                  the -20 dB points lie in the noise
-  separation                     null, or {spacing_ns, standard_uncertainty_ns, verdict, log_odds} of
-                                 the nearest pair of echoes
+  separation                     null, or {verdict, reason, first_arrival_ns, spacing_ns,
+                                 standard_uncertainty_ns, amplitude_ratio, log_odds} of the nearest pair of
+                                 echoes; reason: why it is not resolved, else null; ratio: second over
+                                 first; log_odds: natural logarithm of the likelihood ratio of two echoes
+                                 over one, null without --separate; without a pair its keys are null
   budget                         [{term, standard_uncertainty_mm}]
   dominating_term                the largest of them
   limits                         null without a reading or without [limits] in the set-up, or
@@ -111,9 +114,12 @@ struct JsonPulse {
 
 #[derive(Serialize)]
 struct JsonSeparation {
+    verdict: &'static str,
+    reason: Option<&'static str>,
+    first_arrival_ns: Option<f32>,
     spacing_ns: Option<f32>,
     standard_uncertainty_ns: Option<f32>,
-    verdict: &'static str,
+    amplitude_ratio: Option<f32>,
     log_odds: Option<f32>,
 }
 
@@ -162,10 +168,14 @@ fn pulse(pulse: &PulseMetrics, velocity_known: bool) -> JsonPulse {
 }
 
 fn separation(separation: &Separation) -> JsonSeparation {
+    let of_pair = |number: fn(&EchoPair) -> f32| separation.pair.as_ref().and_then(|pair| finite(number(pair)));
     JsonSeparation {
-        spacing_ns: finite(separation.spacing.as_ns()),
-        standard_uncertainty_ns: finite(separation.standard_uncertainty.as_ns()),
         verdict: separation.verdict.word(),
+        reason: separation.unresolved.map(Unresolved::word),
+        first_arrival_ns: of_pair(|pair| pair.first.as_ns()),
+        spacing_ns: of_pair(|pair| pair.spacing.as_ns()),
+        standard_uncertainty_ns: of_pair(|pair| pair.standard_uncertainty.as_ns()),
+        amplitude_ratio: of_pair(|pair| pair.amplitude_ratio),
         log_odds: separation.log_odds.and_then(finite),
     }
 }

@@ -34,6 +34,10 @@ pub struct Arguments {
     /// The shots of each file are of one place: measure their average
     #[arg(long)]
     average: bool,
+    /// Ask whether an echo hides a second one, closer than half the spatial pulse length: with a learned pulse in the
+    /// set-up from 0.15 of the pulse duration on, with the data sheet's from 0.25
+    #[arg(long)]
+    separate: bool,
     /// Samples per microsecond of files that do not state it; only without a set-up
     #[arg(long, value_name = "MHZ", conflicts_with = "setup")]
     sample_rate: Option<f64>,
@@ -56,6 +60,7 @@ Examples:
   halfpulse read pipe.csv                           echoes and pulse, no thickness
   halfpulse read pipe.csv --setup probe.toml        thickness with its uncertainty
   halfpulse read shots.npy --setup probe.toml --average --format json
+  halfpulse read pipe.csv --setup probe.toml --separate         is an echo two?
 
 Files:
   .npy   1-D: one shot; 2-D: one shot a row; int16, int32: codes; float32, float64: +-1 is full scale
@@ -94,7 +99,7 @@ pub fn run(arguments: &Arguments, out: &mut dyn Write) -> Result<Outcome, InputE
     };
     let (mut refused, mut failed) = (false, false);
     for path in &arguments.files {
-        let result = read_file(path, &source, arguments.average, &mut |measured| {
+        let result = read_file(path, &source, arguments, &mut |measured| {
             refused |= measured.outcome.is_err();
             print(out, arguments.format, measured, limits.as_ref())
         });
@@ -167,7 +172,7 @@ fn print(out: &mut dyn Write, format: Format, measured: &Measured, limits: Optio
 fn read_file(
     path: &Path,
     source: &Source,
-    average: bool,
+    arguments: &Arguments,
     sink: &mut dyn FnMut(&Measured) -> std::io::Result<()>,
 ) -> Result<(), Stop> {
     let name = path.display().to_string();
@@ -177,8 +182,11 @@ fn read_file(
             let clock = measuring::clock(path, &file, setup)?;
             let mut scratch = HeapScratch::new(file.shots.first().map_or(0, Vec::len));
             let mut gauge = setup.gauge(scratch.workspace())?;
-            for shot in measuring::shots(path, file, average)? {
-                let measured = measuring::measure(&mut gauge, &name, &shot, clock);
+            for shot in measuring::shots(path, file, arguments.average)? {
+                let mut measured = measuring::measure(&mut gauge, &name, &shot, clock);
+                if arguments.separate {
+                    measuring::separate(&mut gauge, &shot, clock, &mut measured);
+                }
                 sink(&measured).map_err(Stop::Output)?;
             }
         }
@@ -191,8 +199,8 @@ fn read_file(
             let file = record_file::read(path, &coding)?;
             let clock = unknown_clock(path, &file, unknown.rate_mhz)?;
             tell_assumptions(path, &file, unknown);
-            for shot in measuring::shots(path, file, average)? {
-                let measured = look_at(&name, &shot, clock);
+            for shot in measuring::shots(path, file, arguments.average)? {
+                let measured = look_at(&name, &shot, clock, arguments.separate);
                 sink(&measured).map_err(Stop::Output)?;
             }
         }
@@ -237,7 +245,7 @@ fn tell_assumptions(path: &Path, file: &RecordFile, unknown: &UnknownRecord) {
 }
 
 /// Echoes and pulse of a record that nobody has told anything about.
-fn look_at(name: &str, shot: &Shot, clock: SampleClock) -> Measured {
+fn look_at(name: &str, shot: &Shot, clock: SampleClock, separate: bool) -> Measured {
     let mut measured = Measured {
         file: name.to_string(),
         shot: shot.number,
@@ -252,6 +260,9 @@ fn look_at(name: &str, shot: &Shot, clock: SampleClock) -> Measured {
     let mut scratch = HeapScratch::new(shot.codes.len());
     if let Ok(mut gauge) = Gauge::new(setup, scratch.workspace()) {
         measured.findings = measuring::measure(&mut gauge, name, shot, clock).findings;
+        if separate {
+            measuring::separate(&mut gauge, shot, clock, &mut measured);
+        }
         // Which echo is which rests on a set-up; so do not claim it.
         for echo in &mut measured.findings.echoes {
             echo.role = EchoRole::Other;

@@ -3,6 +3,7 @@
 use super::words;
 use crate::measuring::Measured;
 use halfpulse::echo::pulse::METRICS_MINIMUM_SNR;
+use halfpulse::echo::separation::Separation;
 use halfpulse::{EchoRole, Limits, Polarity, Reading};
 use std::fmt::Write as _;
 
@@ -84,6 +85,37 @@ fn limits_block(text: &mut String, reading: &Reading, limits: &Limits) {
     }
 }
 
+/// The verdict on the nearest pair. Likelihood ratios far beyond a million to one say no more than that.
+fn separation_line(text: &mut String, separation: &Separation) {
+    match &separation.pair {
+        Some(pair) => {
+            let _ = write!(
+                text,
+                "  nearest pair: {:.2} ns apart (u {:.3} ns), amplitude ratio {:+.2}, {}",
+                pair.spacing.as_ns(),
+                pair.standard_uncertainty.as_ns(),
+                pair.amplitude_ratio,
+                separation.verdict.word()
+            );
+        }
+        None => {
+            let _ = write!(text, "  second echo: {}", separation.verdict.word());
+        }
+    }
+    if let Some(why) = separation.unresolved {
+        let _ = write!(text, " ({})", why.word());
+    }
+    if let Some(odds) = separation.log_odds {
+        let tens = f64::from(odds) / std::f64::consts::LN_10;
+        let _ = if tens > 6.0 {
+            write!(text, "; more than a million to one for two")
+        } else {
+            write!(text, "; likelihood ratio of two over one {:.2e}", 10f64.powf(tens))
+        };
+    }
+    text.push('\n');
+}
+
 /// The block of one record.
 #[must_use]
 pub fn block(measured: &Measured, limits: Option<&Limits>) -> String {
@@ -159,14 +191,8 @@ pub fn block(measured: &Measured, limits: Option<&Limits>) -> String {
             METRICS_MINIMUM_SNR.get()
         );
     }
-    if let Some(pair) = &findings.separation {
-        let _ = writeln!(
-            text,
-            "  nearest pair: {:.2} ns apart (u {:.3} ns), {}",
-            pair.spacing.as_ns(),
-            pair.standard_uncertainty.as_ns(),
-            pair.verdict.word()
-        );
+    if let Some(separation) = &findings.separation {
+        separation_line(&mut text, separation);
     }
     if let Ok(reading) = &measured.outcome {
         budget_block(&mut text, reading);

@@ -1,6 +1,7 @@
 //! The words that programs meet: roles, verdicts, doubts, refusals, terms of the budget.
 
 use crate::measuring::NO_SETUP;
+use halfpulse::echo::separation::Unresolved;
 use halfpulse::wall::uncertainty::Source;
 use halfpulse::{Doubt, EchoRole, Hertz, Metres, NoReading, Seconds};
 
@@ -67,6 +68,29 @@ const TERMS: &[(Source, &str)] = &[
     (Source::VPath, "the distance of a dual-element probe's elements"),
 ];
 
+/// Every reason for not telling two echoes apart.
+const UNRESOLVED: &[(Unresolved, &str)] = &[
+    (Unresolved::Overlap, "they overlap; ask with --separate"),
+    (
+        Unresolved::OnePulse,
+        "one pulse explains the record about as well as two",
+    ),
+    (
+        Unresolved::TooClose,
+        "closer than 0.12 of the pulse duration: an attenuated echo looks the same",
+    ),
+    (Unresolved::Ambiguous, "more than one spacing explains the record"),
+    (
+        Unresolved::ModelsDisagree,
+        "with and without freedom of the pulse's shape the answers differ: learn the pulse",
+    ),
+    (
+        Unresolved::Clipped,
+        "clipped samples forge second echoes: lower the gain",
+    ),
+    (Unresolved::NoRoom, "the record ends there, or the pulse is too long"),
+];
+
 /// All words with what they mean or what to do about them.
 #[must_use]
 pub fn help() -> String {
@@ -87,9 +111,13 @@ pub fn help() -> String {
         "\nRoles of echoes: transmission-pulse, interface, coating, back-wall, mode-converted, other\n\
          Verdicts on the nearest pair of echoes:\n  \
          resolved-classically: spacing at least half the spatial pulse length, and a valley of 6 dB\n  \
-         resolved-by-model: closer, but only two pulses explain the record\n  \
-         not-resolved\n",
+         resolved-by-model: closer, but only two pulses explain the record (with --separate)\n  \
+         not-resolved\n\
+         Why a pair is not resolved:\n",
     );
+    for (why, about) in UNRESOLVED {
+        text.push_str(&format!("  {:<31}{about}\n", why.word()));
+    }
     text
 }
 
@@ -125,11 +153,9 @@ mod tests {
             "}\n}",
         ));
         assert_eq!(words.len(), REFUSALS.len() + TERMS.len());
-        words.extend(words_in(
-            include_str!("../../../core/src/echo/separation.rs"),
-            "impl Verdict",
-            "}\n}",
-        ));
+        let separation = include_str!("../../../core/src/echo/separation/mod.rs");
+        words.extend(words_in(separation, "impl Verdict", "}\n}"));
+        words.extend(words_in(separation, "impl Unresolved", "}\n}"));
         for word in words {
             assert!(help.contains(&format!("  {word}")), "{word}");
         }

@@ -39,6 +39,7 @@ fn host_printout() -> Result<String, String> {
         let mut gauge = Gauge::new(canned.setup, scratch.workspace()).map_err(|error| error.to_string())?;
         let outcome = gauge.measure(&record);
         printout::outcome(&mut text, canned.name, &outcome, gauge.findings());
+        printout::separation(&mut text, gauge.separate(&record).as_ref());
     }
     printout::end(&mut text, u32::try_from(RECORDS.len()).unwrap_or(u32::MAX));
     Ok(text.0)

@@ -1,0 +1,387 @@
+//! One or two pulses whose common shape is only roughly known: the fit for a pulse from a data sheet.
+//!
+//! The modelled pulse exp(-v²/2) (1 + γ (v³ - 3v)) cos(ω u + φ), v = u/σ, may be turned in phase, moved in frequency,
+//! wider, narrower or less symmetrical than the data sheet says, the same for both echoes. All of it is fitted together
+//! with delays and amplitudes, with the data sheet as prior knowledge: normal with the standard deviations
+//! below. What a wrong shape would pass off as a second echo is then explained by the shape, in the hypothesis of
+//! one echo too. Gauss-Newton with Marquardt's damping (1963, from memory) on the samples themselves.
+
+use crate::echo::pulse::ReferencePulse;
+use crate::math;
+
+/// Standard deviation of the phase: 25 degrees.
+const PHASE: f32 = 0.436;
+/// Relative standard deviation of the centre frequency: the slope of attenuation in the part is in it.
+const FREQUENCY: f32 = 0.05;
+/// Relative standard deviation of the pulse's length.
+const WIDTH: f32 = 0.08;
+/// Standard deviation of the skewness γ: a rise of half or twice the decay is about 0.1.
+const SKEW: f32 = 0.07;
+/// A Gaussian's duration at -20 dB over its σ: 2 sqrt(2 ln 10).
+const DURATION_OVER_SIGMA: f32 = 4.291_932;
+/// The pulse counts as zero this many σ from its middle (-42 dB).
+const SUPPORT: f32 = 3.1;
+/// Numbers that a fit of two has: amplitude and delay of the first, phase, frequency, width, skewness, amplitude and
+/// delay of the second.
+const COUNT: usize = 8;
+
+/// What the fit knows from the start.
+#[derive(Clone, Copy, Debug)]
+pub struct Model<'a> {
+    /// The record.
+    pub codes: &'a [i16],
+    /// What a code of no signal is.
+    pub mean: f32,
+    /// Radians a sample of the centre frequency.
+    pub turn: f32,
+    /// The envelope's standard deviation in samples.
+    pub sigma: f32,
+    /// Root mean square of the noise, in codes.
+    pub noise: f32,
+}
+
+/// Where a fit stands or starts.
+#[derive(Clone, Copy, Debug, Default)]
+pub struct Fit {
+    /// Sample of the first echo's middle.
+    pub first: f32,
+    /// Its amplitude in codes.
+    pub first_amplitude: f32,
+    /// Sample of the second echo's middle.
+    pub second: f32,
+    /// Its amplitude; 0 in a fit of one.
+    pub second_amplitude: f32,
+    /// Phase in radians, beyond the data sheet's.
+    pub phase: f32,
+    /// Relative change of the frequency.
+    pub frequency: f32,
+    /// Relative change of the width.
+    pub width: f32,
+    /// Skewness γ.
+    pub skew: f32,
+    /// Energy that is explained, less what the change of shape costs as prior knowledge sees it.
+    pub explained: f32,
+    /// Variance of the spacing in samples²; for a fit of two that has come to its end.
+    pub spacing_variance: f32,
+}
+
+/// Normal equations: a row each, the right side last.
+type Rows = [[f32; COUNT + 1]; COUNT];
+
+/// Two sets of normal equations, kept in the caller's scratch memory to spare the stack.
+#[derive(Debug)]
+pub struct Work<'w> {
+    here: &'w mut Rows,
+    next: &'w mut Rows,
+}
+
+impl<'w> Work<'w> {
+    /// Takes them from `memory`, which needs [`WORK`] entries.
+    #[must_use]
+    pub fn new(memory: &'w mut [f32]) -> Option<Self> {
+        let (rows, _) = memory.as_chunks_mut::<{ COUNT + 1 }>();
+        let (here, rest) = rows.split_first_chunk_mut::<COUNT>()?;
+        let (next, _) = rest.split_first_chunk_mut::<COUNT>()?;
+        Some(Self { here, next })
+    }
+}
+
+/// Entries of scratch memory that a fit needs.
+pub const WORK: usize = 2 * COUNT * (COUNT + 1);
+
+impl<'a> Model<'a> {
+    /// Takes the figures of the modelled pulse.
+    #[must_use]
+    pub fn new(codes: &'a [i16], mean: f32, pulse: &ReferencePulse<'_>, samples_per_cycle: f32, noise: f32) -> Self {
+        Self {
+            codes,
+            mean,
+            turn: core::f32::consts::TAU / samples_per_cycle,
+            sigma: pulse.facts.envelope_duration / DURATION_OVER_SIGMA,
+            noise,
+        }
+    }
+
+    /// Fits from a start, one echo (`second_amplitude` is 0 and stays it) or two, in so many steps at most.
+    #[must_use]
+    #[inline(never)]
+    pub fn fit(&self, start: &Fit, steps: u8, work: &mut Work<'_>) -> Fit {
+        let scale = math::larger(start.first_amplitude.abs(), start.second_amplitude.abs());
+        let (mut rows, mut other) = (&mut *work.here, &mut *work.next);
+        let mut here = *start;
+        here.explained = self.normal(&here, scale, rows, true);
+        let enough = math::larger(0.05 * self.noise * self.noise, 3e-6 * here.explained);
+        let mut damping = 1e-3;
+        for number in 0..steps {
+            *other = *rows;
+            for (place, row) in other.iter_mut().enumerate() {
+                if let Some(own) = row.get_mut(place) {
+                    // What is not fitted stands still.
+                    *own = if *own > 0.0 { *own * (1.0 + damping) } else { 1.0 };
+                }
+            }
+            let Some([a1, t1, phase, frequency, width, skew, a2, t2]) = solve(other) else {
+                break;
+            };
+            let limit = |step: f32| math::clamp(step, -0.6, 0.6) / self.turn;
+            let mut next = Fit {
+                first_amplitude: here.first_amplitude + scale * a1,
+                first: here.first + limit(t1),
+                phase: math::clamp(here.phase + phase, -1.3, 1.3),
+                frequency: math::clamp(here.frequency + frequency, -0.3, 0.3),
+                width: math::clamp(here.width + width, -0.4, 0.6),
+                skew: math::clamp(here.skew + skew, -0.4, 0.4),
+                second_amplitude: here.second_amplitude + scale * a2,
+                second: here.second + limit(t2),
+                ..here
+            };
+            // The matrix changes little from step to step: every other one makes do with the last.
+            let renew = number & 1 == 1;
+            if !renew {
+                *other = *rows;
+            }
+            next.explained = self.normal(&next, scale, other, renew);
+            if next.explained > here.explained {
+                let gained = next.explained - here.explained;
+                core::mem::swap(&mut rows, &mut other);
+                here = next;
+                damping *= 0.2;
+                if gained < enough {
+                    break;
+                }
+            } else {
+                damping = math::larger(damping, 1e-3) * 8.0;
+                if damping > 1e3 {
+                    break;
+                }
+            }
+        }
+        if start.second_amplitude != 0.0 {
+            here.spacing_variance = self.spacing_variance(rows, scale);
+        }
+        here
+    }
+
+    /// Normal equations at a fit (last column: the right side), in units of `scale` for amplitudes and radians for
+    /// delays; only the right side unless they are renewed. Gives what the fit explains.
+    #[inline(never)]
+    fn normal(&self, fit: &Fit, scale: f32, rows: &mut Rows, renew: bool) -> f32 {
+        if renew {
+            *rows = [[0.0; COUNT + 1]; COUNT];
+        }
+        let mut right = [0.0; COUNT];
+        let sigma = self.sigma * (1.0 + fit.width);
+        let turn = self.turn * (1.0 + fit.frequency);
+        let (early, late) = if fit.second_amplitude == 0.0 {
+            (fit.first, fit.first)
+        } else {
+            (
+                math::smaller(fit.first, fit.second),
+                math::larger(fit.first, fit.second),
+            )
+        };
+        let begin = math::larger(math::floor(early - SUPPORT * sigma), 0.0);
+        let end = math::larger(math::floor(late + SUPPORT * sigma) + 1.0, 0.0);
+        let whole = |place: f32| usize::try_from(math::saturating_i32(place)).unwrap_or(0);
+        let codes = self.codes.get(whole(begin)..).unwrap_or(&[]);
+        let codes = codes.get(..codes.len().min(whole(end - begin))).unwrap_or(&[]);
+
+        let inverse = 1.0 / scale;
+        let (b1, b2) = (fit.first_amplitude * inverse, fit.second_amplitude * inverse);
+        let mut one = Wave::new(begin - fit.first, sigma, turn, fit);
+        let mut two = Wave::new(begin - fit.second, sigma, turn, fit);
+        let wider = 1.0 / ((1.0 + fit.width) * sigma * sigma);
+        let narrow = 1.0 / (sigma * self.turn);
+        let ratio = turn / self.turn;
+        let mut explained = 0.0;
+        for &code in codes {
+            let signal = (f32::from(code) - self.mean) * inverse;
+            let left = signal - b1 * one.direct - b2 * two.direct;
+            explained += signal * signal - left * left;
+            let slopes = [
+                one.direct,
+                b1 * (one.along * narrow + ratio * one.turned),
+                -(b1 * one.turned + b2 * two.turned),
+                -self.turn * (b1 * one.place * one.turned + b2 * two.place * two.turned),
+                wider * (b1 * one.place * one.place * one.direct + b2 * two.place * two.place * two.direct),
+                b1 * one.skewed + b2 * two.skewed,
+                if b2 == 0.0 { 0.0 } else { two.direct },
+                b2 * (two.along * narrow + ratio * two.turned),
+            ];
+            for (sum, slope) in right.iter_mut().zip(&slopes) {
+                *sum += slope * left;
+            }
+            if renew {
+                accumulate(rows, &slopes);
+            }
+            one.step();
+            two.step();
+        }
+        for (row, sum) in rows.iter_mut().zip(right) {
+            if let Some(last) = row.last_mut() {
+                *last = sum;
+            }
+        }
+        self.add_prior(fit, inverse, rows, renew, &mut explained);
+        explained * scale * scale
+    }
+
+    /// The data sheet as four more observations.
+    #[inline(never)]
+    fn add_prior(&self, fit: &Fit, inverse: f32, rows: &mut Rows, renew: bool, explained: &mut f32) {
+        let noise = self.noise * inverse;
+        let known = [
+            (fit.phase, PHASE),
+            (fit.frequency, FREQUENCY),
+            (fit.width, WIDTH),
+            (fit.skew, SKEW),
+        ];
+        for ((number, row), (value, deviation)) in rows.iter_mut().enumerate().skip(2).zip(known) {
+            let weight = (noise / deviation) * (noise / deviation);
+            if let Some(own) = row.get_mut(number).filter(|_| renew) {
+                *own += weight;
+            }
+            if let Some(right) = row.last_mut() {
+                *right -= weight * value;
+            }
+            *explained -= weight * value * value;
+        }
+    }
+
+    /// Variance of the spacing from the inverse of the normal equations.
+    fn spacing_variance(&self, rows: &mut Rows, scale: f32) -> f32 {
+        let direction = [0.0, -1.0, 0.0, 0.0, 0.0, 0.0, 0.0, 1.0];
+        for (row, value) in rows.iter_mut().zip(direction) {
+            if let Some(right) = row.last_mut() {
+                *right = value;
+            }
+        }
+        let Some(answer) = solve(rows) else {
+            return f32::INFINITY;
+        };
+        let mut variance = 0.0;
+        for (a, b) in answer.iter().zip(direction) {
+            variance += a * b;
+        }
+        let unit = self.noise / (scale * self.turn);
+        variance * unit * unit
+    }
+}
+
+/// A pulse from sample to sample: two multiplications for the envelope, a turn for the carrier.
+struct Wave {
+    /// Samples after the pulse's middle.
+    place: f32,
+    /// The pulse.
+    direct: f32,
+    /// The same a quarter cycle on.
+    turned: f32,
+    /// σ times what the envelope's slope contributes to a change of the delay.
+    along: f32,
+    /// The pulse's derivative by skewness.
+    skewed: f32,
+    envelope: f32,
+    growth: f32,
+    change: f32,
+    cosine: f32,
+    sine: f32,
+    turn: (f32, f32),
+    inverse: f32,
+    skew: f32,
+}
+
+impl Wave {
+    #[inline(never)]
+    fn new(place: f32, sigma: f32, turn: f32, fit: &Fit) -> Self {
+        let half = 0.5 / (sigma * sigma);
+        let (cosine, sine) = cosine_and_sine(turn * place + fit.phase);
+        let mut wave = Self {
+            place,
+            direct: 0.0,
+            turned: 0.0,
+            along: 0.0,
+            skewed: 0.0,
+            envelope: math::exp(-place * place * half),
+            growth: math::exp(-(2.0 * place + 1.0) * half),
+            change: math::exp(-2.0 * half),
+            cosine,
+            sine,
+            turn: cosine_and_sine(turn),
+            inverse: 1.0 / sigma,
+            skew: fit.skew,
+        };
+        wave.fill();
+        wave
+    }
+
+    fn fill(&mut self) {
+        let v = self.place * self.inverse;
+        let odd = v * (v * v - 3.0);
+        let shape = 1.0 + self.skew * odd;
+        let symmetrical = self.envelope * self.cosine;
+        self.direct = shape * symmetrical;
+        self.turned = shape * self.envelope * self.sine;
+        self.skewed = odd * symmetrical;
+        self.along = symmetrical * (v * shape - 3.0 * self.skew * (v * v - 1.0));
+    }
+
+    #[inline(always)]
+    fn step(&mut self) {
+        self.place += 1.0;
+        self.envelope *= self.growth;
+        self.growth *= self.change;
+        let (c, s) = self.turn;
+        (self.cosine, self.sine) = (self.cosine * c - self.sine * s, self.sine * c + self.cosine * s);
+        self.fill();
+    }
+}
+
+#[inline(never)]
+fn cosine_and_sine(angle: f32) -> (f32, f32) {
+    (math::cos(angle), math::sin(angle))
+}
+
+/// Adds the products of one sample's slopes to the upper triangle.
+#[inline(always)]
+fn accumulate(rows: &mut Rows, slopes: &[f32; COUNT]) {
+    let mut others: &[f32] = slopes;
+    for (place, row) in rows.iter_mut().enumerate() {
+        let Some((&slope, rest)) = others.split_first() else {
+            return;
+        };
+        for (cell, &other) in row.iter_mut().skip(place).zip(others) {
+            *cell += slope * other;
+        }
+        others = rest;
+    }
+}
+
+/// Solves symmetric positive definite equations given by their upper triangle, in place.
+fn solve(rows: &mut Rows) -> Option<[f32; COUNT]> {
+    for pivot in 0..COUNT {
+        let (lead, below) = rows.get_mut(pivot..)?.split_first_mut()?;
+        let lead = lead.get(pivot..)?;
+        let (&own, rest) = lead.split_first()?;
+        if !(own > 0.0) {
+            return None;
+        }
+        let inverse = 1.0 / own;
+        for (place, row) in below.iter_mut().enumerate() {
+            let factor = rest.get(place)? * inverse;
+            let cells = row.get_mut(pivot + 1 + place..)?;
+            for (cell, above) in cells.iter_mut().zip(rest.get(place..)?) {
+                *cell -= factor * above;
+            }
+        }
+    }
+    let mut answer = [0.0; COUNT];
+    for place in (0..COUNT).rev() {
+        let row = rows.get(place)?;
+        let mut sum = *row.last()?;
+        for (cell, known) in row.iter().zip(&answer).skip(place + 1) {
+            sum -= cell * known;
+        }
+        *answer.get_mut(place)? = sum / row.get(place)?;
+    }
+    Some(answer)
+}
