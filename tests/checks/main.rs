@@ -14,6 +14,8 @@ mod val_pulse;
 mod val_receiver;
 mod val_path;
 mod val_population;
+mod val_separation;
+mod val_separation_support;
 mod val_train_fit;
 mod val_no_echo;
 mod law_hostile;

@@ -18,8 +18,10 @@ use crate::echo::interpolate::REACH;
 use crate::math;
 use crate::units::SamplePosition;
 
-/// Least 2 ln Λ for two echoes of a known shape: about 1 % false splits without any allowance, none with it.
-pub const THRESHOLD: f32 = 14.0;
+/// Least 2 ln Λ for two echoes of a known shape: no false split in a thousand without any allowance.
+pub const THRESHOLD: f32 = 20.0;
+/// Ratio of the noise that moves arrivals to that of one sample from which on the two are not the same.
+const GRAIN: f32 = 1.2;
 /// Longest spacing that is searched, in pulse durations: beyond it the classical verdict needs no help.
 pub const LONGEST: f32 = 1.6;
 /// Shortest, likewise; shorter than what is ever declared, so that what looks like such a pair is known as one.
@@ -118,8 +120,14 @@ pub fn decide(surroundings: &Surroundings<'_>, stretch: &Stretch, memory: &mut [
     let Some(lags) = Lags::fill(surroundings, from, to, longest, more, likeness) else {
         return Answer::refused(Unresolved::NoRoom);
     };
-    // Grain counts with what of it lies in the pulse's band.
-    let heard = math::larger(surroundings.noise, surroundings.timing_noise.at(0.5 * (from + to)));
+    // Grain counts with what of it lies in the pulse's band; the larger of two estimates of one white noise would be
+    // too large.
+    let timing = surroundings.timing_noise.at(0.5 * (from + to));
+    let heard = if timing > GRAIN * surroundings.noise {
+        timing
+    } else {
+        surroundings.noise
+    };
     let noise = math::larger(heard, record.format().rounding_noise(surroundings.noise));
     let shortest = SHORTEST * duration;
     let Some(one) = single(&lags) else {
@@ -127,7 +135,10 @@ pub fn decide(surroundings: &Surroundings<'_>, stretch: &Stretch, memory: &mut [
     };
     let found = pairs(&lags, shortest, noise, grid);
     let Some(best) = found.first() else {
-        return Answer::refused(Unresolved::OnePulse);
+        return Answer {
+            log_odds: Some(0.0),
+            ..Answer::refused(Unresolved::OnePulse)
+        };
     };
     let decision = Decision {
         surroundings,

@@ -2,7 +2,7 @@
 //! shape as it stands has to agree.
 
 use super::Unresolved;
-use super::model::{Answer, Decision, LEFT_OVER, Split, THRESHOLD, under};
+use super::model::{Answer, Decision, LEFT_OVER, Split, under};
 use super::pair::Pair;
 use super::shape::{Fit, Model, Work};
 use crate::echo::Surroundings;
@@ -11,14 +11,16 @@ use crate::math;
 use crate::units::SamplePosition;
 use heapless::Vec;
 
-/// Least 2 ln Λ once the shape is free on both sides: 99 % of single echoes stay below 12, 95 % below 9, with
-/// frequency, phase and width wrong at once.
-const THRESHOLD_FREE: f32 = 9.5;
+/// Least 2 ln Λ once the shape is free on both sides: 98 % of single echoes stay below it with frequency, phase and width wrong
+/// at once, 99 % with one of them (`val_separation_with_a_modelled_pulse`).
+const THRESHOLD_FREE: f32 = 8.0;
+/// The same for the shape as it stands.
+const THRESHOLD_STIFF: f32 = 14.0;
 /// How many of the best pairs the fit with a free shape starts from.
 const STARTS: usize = 3;
 /// Share of the lead of the data sheet's shape that counts when pairs are compared: shapes far from the sheet in several
 /// numbers at once are rarer than three independent ones.
-const STIFFNESS: f32 = 0.03;
+const STIFFNESS: f32 = 0.08;
 /// Energy that a fitted shape still leaves unexplained, over the echo's; what the pair leaves comes on top.
 const MISMATCH: f32 = 1e-5;
 /// The same for the shape as it stands.
@@ -81,14 +83,14 @@ impl Decision<'_> {
         }
         let most = fits.iter().fold(0.0, |most, fit| math::larger(most, fit.explained));
         let hopeless = most - HOPE * (most - one.explained) - 20.0 * self.noise * self.noise;
-        let mut fit = Fit::default();
+        let (mut fit, mut cost) = (Fit::default(), 0.0);
         for (own, pair) in fits.iter_mut().zip(found) {
             if own.explained >= hopeless {
                 *own = model.fit(own, MORE_STEPS, &mut work);
             }
-            own.explained -= STIFFNESS * (best.explained - pair.explained);
-            if own.explained > fit.explained {
-                fit = *own;
+            let stiffness = STIFFNESS * (best.explained - pair.explained);
+            if own.explained - stiffness > fit.explained - cost {
+                (fit, cost) = (*own, stiffness);
             }
         }
         let offset = base as f32;
@@ -97,12 +99,15 @@ impl Decision<'_> {
         let gained = self.statistic(fit.explained - one.explained, mismatch);
         let stiff = self.statistic(best.explained - self.one.explained(), MISMATCH_STIFF);
         let spacing = fit.second - fit.first;
-        let others = fits.iter().map(|other| (other.second - other.first, other.explained));
-        let lead = self.lead((spacing, fit.explained), others, mismatch);
+        let others = fits.iter().zip(found).map(|(other, pair)| {
+            let stiffness = STIFFNESS * (best.explained - pair.explained);
+            (other.second - other.first, other.explained - stiffness)
+        });
+        let lead = self.lead((spacing, fit.explained - cost), others, mismatch);
         let ratio = (fit.second_amplitude / fit.first_amplitude).abs();
         let sound = ratio >= LEAST_RATIO && ratio * LEAST_RATIO <= 1.0 && fit.spacing_variance > 0.0;
         let split = self.accept(gained, THRESHOLD_FREE, spacing, lead).and_then(|()| {
-            if !(stiff > THRESHOLD && sound) {
+            if !(stiff > THRESHOLD_STIFF && sound) {
                 return Err(Unresolved::ModelsDisagree);
             }
             Ok(Split {
