@@ -293,7 +293,9 @@ fn layout(axis: &Axis, curves: &[Curve], panel: &Panel, plots: Option<&[Plot]>) 
             .with_x_axis_min(from - 0.5)
             .with_x_axis_max(to + 0.5);
     } else if axis.logarithmic {
-        layout = layout.with_log_x();
+        layout = layout
+            .with_log_x()
+            .with_x_tick_format(TickFormat::Custom(Arc::new(plain)));
     }
     let values = || {
         curves
