@@ -4,9 +4,9 @@
 use halfpulse::echo::separation::Verdict;
 use halfpulse::wall::calibration::{velocity_from_thickness, zero_and_velocity, zero_at_known_velocity};
 use halfpulse::{
-    AdcFormat, Averager, Block, CalibratedRange, Coating, DelayLine, EchoRole, ElementSeparation, Gauge, GaugeSetup,
-    Hertz, Interleaver, Material, Metres, MetresPerSecond, NoReading, Probe, Reading, Record, SampleClock, Scratch,
-    Seconds, Span, Window, Zero,
+    AdcFormat, Averager, Block, CalibratedRange, Celsius, Coating, DelayLine, EchoRole, ElementSeparation, Gauge,
+    GaugeSetup, Hertz, Interleaver, Material, Metres, MetresPerSecond, NoReading, PartTemperature, Probe, Reading,
+    Record, SampleClock, Scratch, Seconds, Span, VelocityTemperature, Window, Zero,
 };
 use halfpulse_tests::oracle::{self, Random};
 use proptest::prelude::*;
@@ -123,6 +123,7 @@ prop_compose! {
         delay_line in prop::option::of((around(8e-3), around(2350.0))),
         separation in prop::option::of((around(6e-3), around(1e-4))),
         learned in (prop::option::of(around(5e-3)), around(0.07)),
+        part in (around(9.0), prop::option::of((around(0.8), around(0.16), around(20.0), prop::option::of((around(60.0), around(1.0)))))),
     ) -> GaugeSetup {
         let frequency = Hertz::new(frequency);
         let mut probe = match kind {
@@ -142,7 +143,20 @@ prop_compose! {
             // "Not a number" stands for the lowest rate that the probe allows.
             sample_rate: if rate.is_nan() { probe.upper_frequency() * 2.0 } else { Hertz::new(rate) },
             probe,
-            material: Material::new(MetresPerSecond::new(velocity.0), MetresPerSecond::new(velocity.1)),
+            material: Material {
+                velocity: MetresPerSecond::new(velocity.0),
+                velocity_standard_uncertainty: MetresPerSecond::new(velocity.1),
+                part_velocity_standard_uncertainty: MetresPerSecond::new(part.0),
+                temperature: part.1.map(|(slope, uncertainty, reference, part)| VelocityTemperature {
+                    coefficient: -slope,
+                    coefficient_standard_uncertainty: uncertainty,
+                    reference: Celsius::new(reference),
+                    part: part.map(|(temperature, uncertainty)| PartTemperature {
+                        temperature: Celsius::new(temperature),
+                        standard_uncertainty: Celsius::new(uncertainty),
+                    }),
+                }),
+            },
             zero: Zero {
                 offset: Seconds::new(if zero.3 { zero.0 } else { 0.0 }),
                 standard_uncertainty: Seconds::new(zero.1),

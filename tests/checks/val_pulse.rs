@@ -4,8 +4,8 @@
 use halfpulse::echo::pulse::{self, PulseContext, PulseMetrics, ReferencePulse, measure_pulse};
 use halfpulse::setup::PULSE_CAPACITY;
 use halfpulse::{GaugeSetup, Hertz, Material, MetresPerSecond, Probe, Seconds, Span, Window, Zero};
-use halfpulse_tests::oracle;
 use halfpulse_tests::published::{Table, number_rows};
+use halfpulse_tests::{oracle, readme};
 use std::f64::consts::PI;
 
 /// A set-up whose probe has the given data sheet.
@@ -296,6 +296,7 @@ fn val_metrics_of_scipy_echoes() {
 #[test]
 fn val_metrics_scatter() {
     let mut random = oracle::Random::new(7);
+    let mut shown = Vec::new();
     let study = [
         (0.3, [0.002, 0.018, 0.04]),
         (0.6, [0.006, 0.025, 0.04]),
@@ -346,9 +347,15 @@ fn val_metrics_scatter() {
             for (number, what) in ["centre", "bandwidth", "duration"].iter().enumerate() {
                 let (mean, deviation) = oracle::mean_and_deviation(&found[number]);
                 let rms = mean.hypot(deviation);
+                // 95 %: the relative standard deviation of an rms of n errors is 1 / sqrt(2 n).
+                let interval = 1.96 * rms / (2.0 * found[number].len() as f64).sqrt();
+                if relative == 0.6 && per_cycle == 10.0 {
+                    shown.push(format!("{:.2} ± {:.2} %", 100.0 * rms, 100.0 * interval));
+                }
                 println!(
-                    "{relative:.1} at {per_cycle} samples a cycle, 30 dB: {what} rms {:.2} % ({:+.2} +- {:.2} %)",
+                    "{relative:.1} at {per_cycle} samples a cycle, 30 dB: {what} rms {:.2} ± {:.2} % ({:+.2} +- {:.2} %)",
                     100.0 * rms,
+                    100.0 * interval,
                     100.0 * mean,
                     100.0 * deviation
                 );
@@ -371,6 +378,11 @@ fn val_metrics_scatter() {
             }
         }
     }
+    readme::figure(
+        "pulse of one shot at 30 dB, rms error: centre frequency / bandwidth / -20 dB envelope duration",
+        &shown.join(" / "),
+        "val_metrics_scatter",
+    );
 }
 
 /// Below 26 dB the -20 dB points lie in the noise (6 dB above it at 26 dB): nothing is said. Above, the pulse is described.
