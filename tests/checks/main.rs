@@ -12,6 +12,7 @@ mod val_envelope;
 mod val_gauge;
 mod val_pulse;
 mod val_receiver;
+mod val_beam;
 mod val_path;
 mod val_population;
 mod val_separation;

@@ -105,7 +105,7 @@ impl Bench {
             setup: GaugeSetup::new(
                 Hertz::from_mhz(rate_mhz),
                 // The beam's doubt would speak for the disturbance: a wide element has none.
-                probe(Hertz::from_mhz(frequency_mhz), 0.6).with_element_diameter(Metres::from_mm(1000.0)),
+                probe(Hertz::from_mhz(frequency_mhz), 0.6).with_element_diameter(Metres::new(100.0)),
                 Material::new(MetresPerSecond::new(5920.0), MetresPerSecond::new(17.0)),
                 Zero::new(Seconds::ZERO, Seconds::from_ns(1.0)),
                 span,

@@ -1,7 +1,9 @@
 //! Ways that are not straight down: core's V-path against published values and against the simulated world.
 
-use halfpulse::wall::thickness::{Timed, TrainTimes, path_deviation, path_law, wall};
+use halfpulse::path::Spreading;
+use halfpulse::wall::thickness::{Timed, TrainTimes, wall};
 use halfpulse::wall::uncertainty::{Source, budget};
+use halfpulse::wall::way::{path_deviation, path_law};
 use halfpulse::{
     AdcFormat, DelayLine, Doubt, ElementSeparation, Gauge, GaugeSetup, Hertz, Material, Metres, MetresPerSecond, Probe,
     Record, SampleClock, Scratch, Seconds, Span, Window, Zero,
@@ -36,8 +38,10 @@ fn setup(span: Span, separation_mm: f64, blocks: Option<DelayLine>) -> GaugeSetu
     )
 }
 
-fn arrival(time: f64) -> TrainTimes {
-    TrainTimes::single(Timed::new(Seconds::new(time as f32), Seconds::from_ns(1.0)))
+/// A first back wall at this time, with 1 ns of noise, as if its way were straight.
+fn straightened(time: f64, setup: &GaugeSetup) -> TrainTimes {
+    let arrival = Timed::new(Seconds::new(time as f32), Seconds::from_ns(1.0));
+    TrainTimes::single(arrival).straightened(&path_law(setup, &Spreading::NONE), setup.zero.offset)
 }
 
 /// Times to thickness: 2 sqrt(d² + s²) / c, and with blocks Fermat's way by direct minimisation (SciPy 1.17), from 1 to
@@ -55,17 +59,17 @@ fn val_v_path_times_to_thickness() {
         cases.push((setup, row.number("tof_min_s"), row.number("d_m")));
         // The angle in the part is the law's slope.
         let straight = 2.0 * row.number("d_m") / 5920.0;
-        let cosine = f64::from(path_law(&setup).slope(straight as f32));
+        let cosine = f64::from(path_law(&setup, &Spreading::NONE).slope(straight as f32));
         assert!(
             (cosine - row.number("theta2_deg").to_radians().cos()).abs() < 1e-5,
             "{row:?}"
         );
     }
     for (setup, time, expected) in cases {
-        let found = wall(&setup, &arrival(time).straightened(&setup)).expect("a wall");
+        let found = wall(&setup, &straightened(time, &setup)).expect("a wall");
         let off = f64::from(found.get()) - expected;
         assert!(off.abs() < 0.5e-6 + 1e-7 * expected, "{expected} m: {off:e} off");
-        let block = time - f64::from(path_deviation(&setup, Metres::new(expected as f32)).get());
+        let block = time - f64::from(path_deviation(&setup, &Spreading::NONE, Metres::new(expected as f32)).get());
         let straight = f64::from(setup.zero.offset.get()) + 2.0 * expected / 5920.0;
         assert!((block - straight).abs() < 2e-11 + 2e-7 * straight, "{expected} m");
     }
@@ -80,7 +84,7 @@ fn val_v_path_sensitivities() {
     for mm in [1.0, 2.0, 5.0, 25.0] {
         let d = mm * 1e-3;
         let time = 2.0 * f64::hypot(d, 2e-3) / 5920.0;
-        let times = arrival(time).straightened(&setup);
+        let times = straightened(time, &setup);
         let budget = budget(&setup, &times, Metres::new(d as f32));
         let partial = |by: &dyn Fn(f64) -> f64, step: f64| ((by(step) - by(-step)) / (2.0 * step)).abs();
         for (source, expected) in [
@@ -146,7 +150,7 @@ fn val_simulated_dual_elements_read_right() {
         let shot = synthesise(&scene, number as u64).expect("a good scene");
         for span in [Span::TransmissionPulseToBackWall, Span::BackWallToBackWall] {
             let mut setup = setup(span, 6.4, Some(BLOCKS));
-            setup.probe.element_diameter = Some(Metres::new(1.0));
+            setup.probe.element_diameter = Some(Metres::new(100.0));
             let read = |setup: GaugeSetup| {
                 let mut scratch = Box::new(Scratch::<4096>::ZERO);
                 let mut gauge = Gauge::new(setup, scratch.workspace()).expect("a good set-up");

@@ -76,7 +76,7 @@ fn scene(random: &mut Random, kind: ProbeKind, span: Span) -> (Scene, GaugeSetup
         Probe::contact
     };
     let probe = probe_kind(Hertz::from_mhz(frequency as f32), bandwidth as f32 / 100.0)
-        .with_element_diameter(Metres::from_mm(1000.0))
+        .with_element_diameter(Metres::new(100.0))
         .with_couplant_film(Metres::ZERO);
     let setup = GaugeSetup::new(
         Hertz::from_mhz(rate as f32),

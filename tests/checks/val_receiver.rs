@@ -32,7 +32,7 @@ fn setup(span: Span) -> GaugeSetup {
     GaugeSetup::new(
         Hertz::from_mhz(50.0),
         Probe::contact(Hertz::from_mhz(5.0), 0.6)
-            .with_element_diameter(Metres::from_mm(1000.0))
+            .with_element_diameter(Metres::new(100.0))
             .with_couplant_film(Metres::ZERO),
         Material::new(MetresPerSecond::new(VELOCITY as f32), MetresPerSecond::ZERO),
         Zero::new(Seconds::ZERO, Seconds::ZERO),

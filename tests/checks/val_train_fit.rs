@@ -39,7 +39,7 @@ fn setup() -> GaugeSetup {
         // So wide an element has a plane beam: no term for its spreading.
         Probe::contact(Hertz::from_mhz(5.0), 0.6)
             .with_couplant_film(Metres::ZERO)
-            .with_element_diameter(Metres::from_mm(2000.0)),
+            .with_element_diameter(Metres::new(100.0)),
         Material::new(MetresPerSecond::new(VELOCITY as f32), MetresPerSecond::ZERO),
         Zero::new(Seconds::ZERO, Seconds::ZERO),
         Span::BackWallToBackWall,

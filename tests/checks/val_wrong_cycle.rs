@@ -33,7 +33,7 @@ fn val_wrong_cycle() {
                 Hertz::from_mhz(50.0),
                 Probe::contact(Hertz::from_mhz(5.0), 0.6)
                     .with_couplant_film(Metres::ZERO)
-                    .with_element_diameter(Metres::from_mm(2000.0))
+                    .with_element_diameter(Metres::new(100.0))
                     .with_signs(sign, EchoSign::Unknown),
                 Material::new(MetresPerSecond::new(VELOCITY), MetresPerSecond::ZERO),
                 Zero::new(Seconds::ZERO, Seconds::ZERO),

@@ -89,6 +89,33 @@ pub struct Echo {
 }
 
 impl Echo {
+    /// How far the group lag lies from the one that its way gives an echo, beyond what noise explains; with the sign of what
+    /// is too much. [`Echo::group_lag`] itself for a way that gives none.
+    #[must_use]
+    pub fn strange_lag(&self, expected: Seconds, now: &Surroundings<'_>) -> Seconds {
+        if expected == Seconds::ZERO {
+            return self.group_lag;
+        }
+        let noise = now.timing_noise.at(self.position.as_samples());
+        let chance = GROUP_LAG_CHANCE * group_lag_noise(now.samples_per_cycle, self.amplitude / noise, &now.pulse);
+        let chance = now.record.clock().rate.period() * chance;
+        // What noise explains has been taken off, towards nothing: the lag may be so much more, and as much again.
+        let (low, high) = if self.group_lag > Seconds::ZERO {
+            (self.group_lag, self.group_lag + chance * 2.0)
+        } else if self.group_lag < Seconds::ZERO {
+            (self.group_lag - chance * 2.0, self.group_lag)
+        } else {
+            (chance * -2.0, chance * 2.0)
+        };
+        if expected < low {
+            low - expected
+        } else if expected > high {
+            high - expected
+        } else {
+            Seconds::ZERO
+        }
+    }
+
     /// Fitted amplitude with the polarity's sign.
     #[must_use]
     pub fn signed_amplitude(&self) -> f32 {

@@ -7,6 +7,7 @@ use crate::echo::train::{Rules, Train};
 use crate::echo::{Echo, EchoList, EchoRole, Signs, Surroundings};
 use crate::math;
 use crate::outcome::NoReading;
+use crate::path::PathLaw;
 use crate::record::{Record, SampleRange};
 use crate::setup::{EchoSign, GaugeSetup, ProbeKind, Span};
 use crate::units::Seconds;
@@ -81,16 +82,17 @@ pub fn start_of_wall(setup: &GaugeSetup, record: &Record<'_>, echoes: &mut EchoL
     Ok(place + offset.get() * clock.rate.get())
 }
 
-/// What the train may look like.
+/// What the train may look like. The law counts in seconds.
 #[must_use]
-pub fn rules(
+pub fn rules<'a>(
     setup: &GaugeSetup,
+    law: &PathLaw<'a>,
     surroundings: &Surroundings<'_>,
     range: SampleRange,
     scan: &Scan,
     detector: &Detector,
     start: f32,
-) -> Rules {
+) -> Rules<'a> {
     let facts = &surroundings.pulse.facts;
     let format = surroundings.record.format();
     let shortest = thickness::SMALLEST_SPACING * facts.envelope_duration;
@@ -120,13 +122,13 @@ pub fn rules(
         visible_from,
         visible_to,
         threshold: scan.threshold / detector.counts_per_code(format) / surroundings.amplitude_noise(),
-        law: thickness::path_law(setup).scaled(surroundings.record.clock().rate.get()),
+        law: law.scaled(surroundings.record.clock().rate.get()),
     }
 }
 
 /// The times that thickness and budget are made from, of straight ways.
 #[must_use]
-pub fn times(setup: &GaugeSetup, record: &Record<'_>, train: &Train, echoes: &[Echo]) -> TrainTimes {
+pub fn times(setup: &GaugeSetup, law: &PathLaw<'_>, record: &Record<'_>, train: &Train, echoes: &[Echo]) -> TrainTimes {
     let clock = record.clock();
     let seconds = |samples: f32| clock.rate.period() * samples;
     let role = |role: EchoRole| echoes.iter().find(|echo| echo.role == role);
@@ -148,11 +150,18 @@ pub fn times(setup: &GaugeSetup, record: &Record<'_>, train: &Train, echoes: &[E
         };
         Timed::new(seconds(train.period), seconds(u * ratio))
     });
-    let seen = role(EchoRole::BackWall(1)).map(|echo| TrainTimes::single(timed(echo)).straightened(setup));
+    let interface = role(EchoRole::Interface).map(timed);
+    let start = match (interface, thickness::wall_span(setup)) {
+        (Some(interface), Span::InterfaceToBackWall) => interface.time + setup.zero.offset,
+        (Some(interface), _) => interface.time,
+        (None, _) => setup.zero.offset,
+    };
+    let seen = role(EchoRole::BackWall(1)).map(|echo| TrainTimes::single(timed(echo)).straightened(law, start));
     let mut times = seen.unwrap_or_else(|| {
         // The first back wall lies in the dead zone: it follows from the others.
         let steps = f32::from(train.first_multiple) - 1.0;
-        let earliest = TrainTimes::single(Timed::new(clock.time_of(train.first), Seconds::ZERO)).straightened(setup);
+        let earliest =
+            TrainTimes::single(Timed::new(clock.time_of(train.first), Seconds::ZERO)).straightened(law, start);
         let number = f32::from(train.first_multiple);
         let u = match (period, role(EchoRole::BackWall(train.first_multiple))) {
             (Some(period), _) => period.standard_uncertainty * number,
@@ -168,8 +177,8 @@ pub fn times(setup: &GaugeSetup, record: &Record<'_>, train: &Train, echoes: &[E
     if let Some(period) = period {
         times = times.with_period(period, train.correlation);
     }
-    if let Some(interface) = role(EchoRole::Interface) {
-        times = times.with_interface(timed(interface));
+    if let Some(interface) = interface {
+        times = times.with_interface(interface);
     }
     times
 }

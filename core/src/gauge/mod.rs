@@ -17,11 +17,13 @@ use crate::echo::scan::Detector;
 use crate::echo::separation::{PulseTrust, Separation};
 use crate::echo::train::Train;
 use crate::outcome::{Doubts, NoReading};
+use crate::path::Spreading;
 use crate::record::{Record, RecordHealth};
 use crate::setup::{GaugeSetup, SetupError};
-use crate::units::Metres;
+use crate::units::{Metres, Seconds};
 use crate::wall::limits::{Limits, LimitsVerdict};
 use crate::wall::uncertainty::Budget;
+use crate::wall::{thickness, way};
 use crate::workspace::Workspace;
 
 /// A thickness that can be signed for.
@@ -102,7 +104,17 @@ pub struct Gauge<'w> {
     trust: PulseTrust,
     noise: Noise,
     detector: Detector,
+    spreading: Spreading,
     findings: Findings,
+}
+
+/// What the spreading of the set-up's beam does to arrivals; nothing if it is not known.
+fn spreading(setup: &GaugeSetup) -> Spreading {
+    if way::corrects_beam(setup) {
+        Spreading::new(setup.probe.relative_bandwidth)
+    } else {
+        Spreading::NONE
+    }
 }
 
 impl<'w> Gauge<'w> {
@@ -129,6 +141,7 @@ impl<'w> Gauge<'w> {
             trust: PulseTrust::Modelled,
             noise: Noise::default(),
             detector,
+            spreading: spreading(&setup),
             findings: Findings::default(),
         };
         gauge.fit_detector();
@@ -195,9 +208,31 @@ impl<'w> Gauge<'w> {
             }
             self.facts = modelled?;
         }
+        if way::corrects_beam(&setup) != way::corrects_beam(&self.setup)
+            || old.relative_bandwidth != new.relative_bandwidth
+        {
+            self.spreading = spreading(&setup);
+        }
         self.setup = setup;
         self.fit_detector();
         Ok(())
+    }
+
+    /// How much later than straight the first back wall of a block comes, by the V of a dual-element probe or the
+    /// spreading of the beam: its time less this is what a calibration needs, see [`way::path_deviation`].
+    #[must_use]
+    pub fn path_deviation(&self, wall: Metres) -> Seconds {
+        way::path_deviation(&self.setup, &self.spreading, wall)
+    }
+
+    /// The thinnest and the thickest wall that the set-up reads with the pulse in force.
+    #[must_use]
+    pub fn wall_limits(&self) -> (Metres, Metres) {
+        let duration = self.setup.sample_rate.period() * self.facts.envelope_duration;
+        (
+            thickness::thinnest_wall(&self.setup, duration),
+            thickness::thickest_wall(&self.setup, duration),
+        )
     }
 
     /// The set-up in force.

@@ -16,6 +16,7 @@ use crate::setup::{GaugeSetup, PULSE_CAPACITY, ProbeKind, Span};
 use crate::units::Metres;
 use crate::wall::judgement::{self, Evidence};
 use crate::wall::uncertainty::Source;
+use crate::wall::way::path_law;
 use crate::wall::{thickness, uncertainty};
 use crate::workspace::Workspace;
 use heapless::Vec;
@@ -144,7 +145,8 @@ impl Gauge<'_> {
         }
         let start = start_of_wall(&self.setup, record, &mut self.findings.echoes)?;
         let before = surroundings(&self.setup, self.workspace.pulse, self.facts, record, noise);
-        let rules = rules(&self.setup, &before, range, scan, &self.detector, start);
+        let law = path_law(&self.setup, &self.spreading);
+        let rules = rules(&self.setup, &law, &before, range, scan, &self.detector, start);
         let chosen = choose(&before, &self.findings.echoes, &rules);
         let hypothesis = chosen.map_err(|why| self.undecided(record, noise, why))?;
 
@@ -170,7 +172,7 @@ impl Gauge<'_> {
         &self,
         record: &Record<'_>,
         scan: &Scan,
-        rules: &Rules,
+        rules: &Rules<'_>,
         hypothesis: &Hypothesis,
     ) -> Option<TimingNoise> {
         let cycle = self.setup.samples_per_cycle();
@@ -227,7 +229,8 @@ impl Gauge<'_> {
     /// Thickness, budget and doubts.
     pub(super) fn wall(&mut self, record: &Record<'_>, noise: &Noise, train: &Train) -> Result<Reading, NoReading> {
         let surroundings = surroundings(&self.setup, self.workspace.pulse, self.facts, record, noise);
-        let times = times(&self.setup, record, train, &self.findings.echoes);
+        let law = path_law(&self.setup, &self.spreading);
+        let times = times(&self.setup, &law, record, train, &self.findings.echoes);
         let needs_two = thickness::wall_span(&self.setup) == Span::BackWallToBackWall;
         if needs_two && times.period.is_none() {
             return Err(NoReading::OneEchoWhereTwoAreNeeded {
@@ -256,6 +259,7 @@ impl Gauge<'_> {
             echoes: &self.findings.echoes,
             train,
             times: &times,
+            law,
             wall,
             budget: &budget,
             expanded: standard_uncertainty * self.setup.coverage_factor,

@@ -154,7 +154,7 @@ mod tests {
 
     const STEEL: MetresPerSecond = MetresPerSecond::new(5920.0);
 
-    fn law(distance_mm: f32, blocks: Option<(f32, f32)>, part: f32) -> PathLaw {
+    fn law(distance_mm: f32, blocks: Option<(f32, f32)>, part: f32) -> PathLaw<'static> {
         let separation = ElementSeparation::new(Metres::from_mm(distance_mm), Metres::ZERO);
         let blocks = blocks.map(|(mm, velocity)| DelayLine {
             length: Metres::from_mm(mm),

@@ -1,12 +1,14 @@
 //! The beam: how far it stays together, how wide it gets, and how far its spreading moves an echo.
 //!
 //! A piston of diameter D that looks at a flat back wall does not receive a plane wave: the echo is
-//! weaker and its phase is ahead, by up to a quarter of a cycle far away. Nothing here corrects a
-//! reading; the shift stands in the budget.
+//! weaker and its phase is ahead, by up to a quarter of a cycle far away. [`crate::path::diffraction`] says how far
+//! an arrival is found from where a plane wave's would be, and corrects it; here stands what nobody corrects, as the
+//! budget needs it.
 
 use crate::math;
-use crate::units::{Hertz, Metres, MetresPerSecond, Seconds};
-use core::f32::consts::{FRAC_PI_2, TAU};
+use crate::path::diffraction::Diffraction;
+use crate::units::{Decibels, Hertz, Metres, MetresPerSecond, Seconds};
+use core::f32::consts::TAU;
 
 /// Length of the near field, D² / (4 λ): the usual short form.
 #[must_use]
@@ -30,70 +32,18 @@ pub fn beam_width(diameter: Metres, wavelength: Metres, range: Metres) -> Metres
     range * (wavelength / diameter) * 1.027_339_6
 }
 
-/// What diffraction does to one frequency of a pulse that a piston sends and receives again:
-/// D(S) = 1 - exp(-ju) [J0(u) + j J1(u)], u = 2 π / S.
-///
-/// Rogers & Van Buren 1974 (formula from memory). S is the sum of path times wavelength over the
-/// squared element radius, over the whole round trip. It is the paraxial form: within 1 % of the exact
-/// integral for elements of five wavelengths and more and paths beyond a third of the radius. Shear
-/// waves from the element's edge are neglected, and the effective element can be smaller than the one
-/// on the data sheet.
-#[derive(Clone, Copy, Debug, PartialEq)]
-pub struct Diffraction {
-    /// Real part.
-    pub in_phase: f32,
-    /// Imaginary part.
-    pub quadrature: f32,
-    /// How far the phase is ahead of a plane wave's, in radians, 0 to π/2.
-    pub phase_advance: f32,
-}
-
-impl Diffraction {
-    /// The factor at the normalised distance `s`. 0 or less is a plane wave: factor 1.
-    #[must_use]
-    pub fn at(s: f32) -> Self {
-        let u = TAU / s;
-        if s <= 0.0 || u == f32::INFINITY {
-            return Self {
-                in_phase: 1.0,
-                quadrature: 0.0,
-                phase_advance: 0.0,
-            };
-        }
-        if u < 0.5 {
-            // Far away the real part is the small difference of large numbers. The power series of
-            // both parts, divided by u so that the phase survives however small u gets.
-            let square = u * u;
-            let real = u * (0.25 - square * (7.0 / 192.0 - square * (11.0 / 3840.0)));
-            let imaginary = 0.5 - square * (5.0 / 48.0 - square * (7.0 / 640.0));
-            return Self {
-                in_phase: u * real,
-                quadrature: u * imaginary,
-                phase_advance: math::atan2(imaginary, real),
-            };
-        }
-        let (j0, j1) = math::bessel_j0_j1(u);
-        let (sin, cos) = (math::sin(u), math::cos(u));
-        let in_phase = 1.0 - (cos * j0 + sin * j1);
-        let quadrature = sin * j0 - cos * j1;
-        Self {
-            in_phase,
-            quadrature,
-            phase_advance: math::clamp(math::atan2(quadrature, in_phase), 0.0, FRAC_PI_2),
-        }
-    }
-
-    /// Amplitude relative to a plane wave, 0 to about 1.
-    #[must_use]
-    pub fn magnitude(&self) -> f32 {
-        math::sqrt(self.in_phase * self.in_phase + self.quadrature * self.quadrature)
-    }
-}
-
 /// S of a path in one medium: path times wavelength over the squared radius.
 #[must_use]
 pub fn normalised_distance(diameter: Metres, wavelength: Metres, path: Metres) -> f32 {
     4.0 * (path / diameter) * (wavelength / diameter)
+}
+
+/// Amplitude of an echo at a normalised distance relative to a plane wave's: what the spreading of the beam costs, as the
+/// centre frequency feels it. 0 dB or a little above in the near field, falling by 6 dB where the distance doubles in
+/// the far field.
+#[must_use]
+pub fn loss(s: f32) -> Decibels {
+    Decibels::from_amplitude_ratio(Diffraction::at(s).magnitude())
 }
 
 /// How far diffraction that nobody corrects moves the difference of two arrivals, from the phase at
@@ -147,6 +97,7 @@ pub fn uncorrected_period_shift(
 #[cfg(test)]
 mod tests {
     use super::*;
+    use crate::path::diffraction::tests::correlation_advance_over_60_lines as correlation_advance;
     use proptest::prelude::*;
     use std::vec::Vec;
 
@@ -165,50 +116,13 @@ mod tests {
             near_field_length_exact(Metres::from_mm(1.0), Metres::from_mm(2.0)),
             Metres::ZERO
         );
+        // Rogers & Van Buren's factor with SciPy 1.17, in dB: S = 1, 10 and 100.
+        for (s, db) in [(1.0, -1.850_37), (10.0, -10.342_49), (100.0, -30.059_86f32)] {
+            assert!((loss(s).get() - db).abs() < 2e-4, "{s}: {}", loss(s));
+        }
         // Root of 2 J1(x)/x = 10^(-3/20) from SciPy 1.17: sin θ = 0.513669776547 λ/D on each side.
         let width = beam_width(diameter, wavelength, Metres::from_mm(50.0));
         assert!((width.as_mm() - 2.0 * 0.513_669_8 * 1.184 / 6.0 * 50.0).abs() < 1e-4);
-    }
-
-    #[test]
-    fn val_diffraction_factor() {
-        // Rogers & Van Buren 1974 (formula from memory), evaluated with SciPy 1.17; S = 0.5 also with
-        // mpmath to 30 digits.
-        for (s, real, imaginary, degrees) in [
-            (0.05, 0.949_721_1, 0.050_179_4, 3.024_463_6),
-            (0.1, 0.928_966_6, 0.070_753_59, 4.355_453_4),
-            (0.5, 0.842_492_6, 0.154_530_82, 10.393_716),
-            (1.0, 0.779_723_1, 0.212_382_53, 15.236_704),
-            (1.5, 0.694_230_1, 0.260_043_94, 20.534_89),
-            (2.0, 0.695_757_8, 0.284_615_34, 22.248_117),
-            (3.0, 0.592_241_9, 0.431_480_25, 36.075_36),
-            (5.0, 0.314_330_6, 0.452_789_44, 55.231_26),
-            (10.0, 0.093_186_78, 0.289_366_46, 72.149_51),
-            (30.0, 0.010_896_318, 0.103_767_17, 84.005_49),
-            (100.0, 0.000_986_392_4, 0.031_390_1, 88.200_15),
-        ] {
-            let factor = Diffraction::at(s);
-            assert!((factor.in_phase - real).abs() < 1.5e-6, "S = {s}: {factor:?}");
-            assert!((factor.quadrature - imaginary).abs() < 1.5e-6, "S = {s}: {factor:?}");
-            assert!(
-                (factor.phase_advance.to_degrees() - degrees).abs() < 2e-4,
-                "S = {s}: {factor:?}"
-            );
-            assert!((factor.magnitude() - real.hypot(imaginary)).abs() < 2e-6);
-        }
-    }
-
-    #[test]
-    fn edges_of_the_factor() {
-        assert_eq!(Diffraction::at(0.0).in_phase, 1.0);
-        assert_eq!(Diffraction::at(1e-40).phase_advance, 0.0);
-        assert_eq!(Diffraction::at(-1.0).phase_advance, 0.0);
-        assert_eq!(Diffraction::at(f32::INFINITY).phase_advance, FRAC_PI_2);
-        assert!(Diffraction::at(f32::NAN).phase_advance.is_nan());
-        // The series and the closed form meet: S = 4π.
-        let (below, above) = (Diffraction::at(12.566_3), Diffraction::at(12.566_5));
-        assert!((below.in_phase - above.in_phase).abs() < 2e-5);
-        assert!((below.phase_advance - above.phase_advance).abs() < 2e-5);
     }
 
     #[test]
@@ -289,37 +203,6 @@ mod tests {
         }
     }
 
-    /// How far correlation with the undisturbed pulse finds an echo too early, in cycles of the centre frequency:
-    /// Newton's method on the correlation's peak, over a Gaussian spectrum of the given -6 dB width.
-    fn correlation_advance(s: f64, bandwidth: f64) -> f64 {
-        const LINES: i32 = 60;
-        let lines: Vec<(f64, f64, f64)> = (1..=LINES)
-            .map(|line| 1.0 + 1.3 * bandwidth * (2.0 * f64::from(line) / f64::from(LINES) - 1.0))
-            .filter(|f| *f > 0.02)
-            .map(|f| {
-                let factor = Diffraction::at((s / f) as f32);
-                let weight = (-(f - 1.0).powi(2) * 8.0 * std::f64::consts::LN_2 / bandwidth.powi(2)).exp();
-                (
-                    f,
-                    weight * f64::from(factor.in_phase),
-                    weight * f64::from(factor.quadrature),
-                )
-            })
-            .collect();
-        let mut advance = f64::from(Diffraction::at(s as f32).phase_advance) / std::f64::consts::TAU;
-        for _ in 0..8 {
-            let (mut slope, mut curve) = (0.0, 0.0);
-            for &(f, re, im) in &lines {
-                let omega = std::f64::consts::TAU * f;
-                let (sin, cos) = (omega * advance).sin_cos();
-                slope += omega * (im * cos - re * sin);
-                curve -= omega * omega * (re * cos + im * sin);
-            }
-            advance -= slope / curve;
-        }
-        advance
-    }
-
     #[test]
     fn no_start_makes_an_added_path_worse_than_a_start_at_the_element() {
         for (bandwidth, allowed) in [(0.3, 1.09), (0.6, 1.03), (1.0, 1.0)] {
@@ -371,13 +254,6 @@ mod tests {
     }
 
     proptest! {
-        #[test]
-        fn phase_stays_between_nothing_and_a_quarter(s in 1e-6f32..1e9) {
-            let factor = Diffraction::at(s);
-            prop_assert!((0.0..=FRAC_PI_2).contains(&factor.phase_advance));
-            prop_assert!(factor.magnitude() <= 1.001);
-        }
-
         #[test]
         fn shifts_are_bounded_for_any_input(d in any::<f32>(), c in any::<f32>(), f in any::<f32>(), a in any::<f32>(), b in any::<f32>()) {
             let (d, c, f) = (Metres::new(d), MetresPerSecond::new(c), Hertz::new(f));

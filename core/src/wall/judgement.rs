@@ -8,10 +8,12 @@ use crate::echo::train::Train;
 use crate::echo::{Echo, EchoRole, Surroundings};
 use crate::math;
 use crate::outcome::{Doubt, Doubts};
+use crate::path::PathLaw;
 use crate::setup::{EchoSign, GaugeSetup, ProbeKind, Span};
 use crate::units::{Metres, Seconds};
 use crate::wall::thickness::{self, TrainTimes};
-use crate::wall::uncertainty::{self, Budget, Source};
+use crate::wall::uncertainty::{self, Budget};
+use crate::wall::way;
 
 /// Wrong-cycle probability above which the signal counts as low.
 const WRONG_CYCLE_LIMIT: f32 = 1e-3;
@@ -27,6 +29,9 @@ const UNEXPLAINED_LIMIT: f32 = 0.3;
 /// The same for one or two multiples, to which one coincidence is enough.
 const UNEXPLAINED_LIMIT_OF_FEW: f32 = 0.1;
 
+/// So many standard uncertainties of an excess are no chance any more (1 in 370).
+const BEYOND_CHANCE: f32 = 3.0;
+
 /// What a reading rests on.
 #[derive(Clone, Copy, Debug)]
 pub struct Evidence<'a> {
@@ -40,6 +45,8 @@ pub struct Evidence<'a> {
     pub train: &'a Train,
     /// The times that the thickness was made from.
     pub times: &'a TrainTimes,
+    /// How their times followed from the echoes', in seconds.
+    pub law: PathLaw<'a>,
     /// The thickness.
     pub wall: Metres,
     /// Where its uncertainty comes from.
@@ -59,7 +66,7 @@ impl Evidence<'_> {
 
     /// Thickness that a time stands for.
     fn thickness_of(&self, time: Seconds) -> Metres {
-        self.setup.velocity() * time * (0.5 * uncertainty::gain(self.setup, self.wall))
+        self.setup.velocity() * time * (0.5 * way::gain(self.setup, self.wall))
     }
 
     /// How far a difference between the pulse and what came back could have moved an arrival.
@@ -84,12 +91,10 @@ impl Evidence<'_> {
         self.thickness_of(self.surroundings.record.clock().rate.period() * samples)
     }
 
-    /// What the budget already allows for the beam, which turns phases by nature: its share of the
-    /// group lag is about twice its shift, since the envelope moves the other way.
+    /// What the spreading of the beam, which turns phases by nature, may do to a group lag: about twice its shift, since
+    /// the envelope moves the other way. The correction moves arrivals and leaves the echoes' shapes as they are.
     fn known_phase(&self) -> Metres {
-        let beam = self.budget.terms().iter().find(|term| term.source == Source::Beam);
-        // The term is a rectangular half width over sqrt(3).
-        beam.map_or(Metres::ZERO, |term| term.standard_uncertainty * (2.2 * 1.732_051))
+        self.thickness_of(way::beam_shift(self.setup, self.wall)) * 2.2
     }
 
     /// Largest part of the reading that differences between its echoes could stand for.
@@ -102,6 +107,9 @@ impl Evidence<'_> {
         let Some(reference) = reference else {
             return Metres::ZERO;
         };
+        // What the beam turns by nature.
+        let trip = (self.wall * 2.0 / self.setup.velocity()).get();
+        let by_beam = |multiples: f32| Seconds::new(self.law.group_lag(multiples * trip));
         let mut largest = Metres::ZERO;
         for echo in self.echoes {
             let steps = match (span, echo.role) {
@@ -112,7 +120,15 @@ impl Evidence<'_> {
                 _ => continue,
             };
             let mismatch = math::larger(echo.mismatch, reference.mismatch);
-            let shift = self.shift(mismatch, echo.group_lag - reference.group_lag) / steps;
+            let from = match span {
+                Span::InterfaceToBackWall => 0.0,
+                _ => f32::from(self.train.first_multiple),
+            };
+            let (here, there) = (by_beam(from + steps), by_beam(from));
+            let strange = echo.strange_lag(here, self.surroundings) - reference.strange_lag(there, self.surroundings);
+            // A third to spare: the element's size is not known well.
+            let beyond = strange.abs() - (here - there).abs() * 0.3;
+            let shift = self.shift(mismatch, Seconds::new(math::larger(beyond.get(), 0.0))) / steps;
             if shift > largest {
                 largest = shift;
             }
@@ -250,18 +266,12 @@ pub fn doubts(evidence: &Evidence<'_>) -> Doubts {
             Doubt::OutsideCalibratedRange,
         );
     }
-    doubts.raise_if(
-        uncertainty::unknown_beam_matters(setup, wall, expanded),
-        Doubt::BeamUnknown,
-    );
+    doubts.raise_if(way::unknown_beam_matters(setup, wall, expanded), Doubt::BeamUnknown);
     doubts.raise_if(
         uncertainty::unknown_temperature_matters(setup, wall, evidence.budget),
         Doubt::TemperatureUnknown,
     );
-    doubts.raise_if(
-        uncertainty::v_path_matters(setup, wall, expanded),
-        Doubt::VPathUncorrected,
-    );
+    doubts.raise_if(way::v_path_matters(setup, wall, expanded), Doubt::VPathUncorrected);
     doubts.raise_if(
         setup.samples_per_cycle() < SAMPLES_PER_CYCLE_LIMIT,
         Doubt::CoarseSampling,
@@ -274,11 +284,12 @@ pub fn doubts(evidence: &Evidence<'_>) -> Doubts {
     // First arrival less zero against the period: paint and a wrong zero show here.
     if span != Span::BackWallToBackWall
         && let Some(excess) = thickness::excess(setup, times)
+        && let Some(chance) = uncertainty::excess_uncertainty(setup, times, wall)
     {
-        // Straight times already.
-        let straight = |time: Seconds| setup.velocity() * time * 0.5;
-        let spread = straight(excess.standard_uncertainty) * setup.coverage_factor;
-        doubts.raise_if(straight(excess.time).abs() > expanded + spread, Doubt::ZeroContradicted);
+        // Straight times already. More than the reading allows, and more than chance.
+        let shown = (setup.velocity() * excess.time * 0.5).abs();
+        let chance = setup.velocity() * chance * (0.5 * BEYOND_CHANCE);
+        doubts.raise_if(shown > expanded && shown > chance, Doubt::ZeroContradicted);
     }
     // Arrivals that do not lie on a line, by more than chance and by more than the reading allows.
     let typical = evidence

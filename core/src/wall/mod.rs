@@ -7,3 +7,4 @@ pub mod coupling;
 pub mod limits;
 pub mod thickness;
 pub mod uncertainty;
+pub mod way;

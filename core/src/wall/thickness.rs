@@ -1,9 +1,10 @@
 //! Times to thickness.
 
 use crate::math;
-use crate::path::{PathLaw, VPath};
+use crate::path::PathLaw;
 use crate::setup::{GaugeSetup, ProbeKind, Span};
 use crate::units::{Metres, MetresPerSecond, Seconds};
+use crate::wall::way;
 
 /// A time and its standard uncertainty from the record's noise (k = 1).
 #[derive(Clone, Copy, Debug, PartialEq, Default)]
@@ -26,7 +27,7 @@ impl Timed {
 }
 
 /// What the fit of one record's back-wall train gave. Times count from the transmission trigger, and are those of
-/// straight ways: see [`path_law`] and [`TrainTimes::straightened`].
+/// straight ways: see [`way::path_law`] and [`TrainTimes::straightened`].
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub struct TrainTimes {
     /// Arrival of the first back wall.
@@ -67,39 +68,21 @@ impl TrainTimes {
         self
     }
 
-    /// The same with the first back wall where it would lie, were its way straight, if it is now where it came. The
-    /// period of a fitted train is straight already.
+    /// The same with the first back wall where it would lie, were its way straight, if it is now where it came. `start` is
+    /// the start of the wall that the law counts from: zero offset or interface. The period of a fitted train is
+    /// straight already.
     #[must_use]
-    pub fn straightened(mut self, setup: &GaugeSetup) -> Self {
-        if let law @ PathLaw::V(_) = path_law(setup) {
+    pub fn straightened(mut self, law: &PathLaw<'_>, start: Seconds) -> Self {
+        if *law != PathLaw::Straight {
             let first = self.first_back_wall;
-            let straight = law.straighten((first.time - setup.zero.offset).get());
+            let straight = law.straighten((first.time - start).get());
             self.first_back_wall = Timed::new(
-                setup.zero.offset + Seconds::new(straight),
+                start + Seconds::new(straight),
                 first.standard_uncertainty * (1.0 / law.slope(straight)),
             );
         }
         self
     }
-}
-
-/// How the times of this set-up's echoes follow from straight ways, in seconds. A dual-element probe whose elements'
-/// distance is stated has a V; everything else is straight.
-#[must_use]
-pub fn path_law(setup: &GaugeSetup) -> PathLaw {
-    match (setup.probe.kind, setup.probe.separation) {
-        (ProbeKind::DualElement, Some(separation)) => {
-            PathLaw::V(VPath::new(separation, setup.probe.delay_line, setup.velocity()))
-        }
-        _ => PathLaw::Straight,
-    }
-}
-
-/// How much later than straight the first back wall of a wall comes. A block's time less this is what calibration
-/// needs.
-#[must_use]
-pub fn path_deviation(setup: &GaugeSetup, wall: Metres) -> Seconds {
-    Seconds::new(path_law(setup).deviation((wall * 2.0 / setup.velocity()).get()))
 }
 
 /// The span that the wall is read by. On a coated part that is back wall to back wall whatever the set-up
@@ -184,7 +167,7 @@ pub fn coating(setup: &GaugeSetup, times: &TrainTimes) -> Option<Metres> {
 /// back wall must besides lie in the window with its front, half of T20 behind the start.
 #[must_use]
 pub fn thinnest_wall(setup: &GaugeSetup, envelope_duration: Seconds) -> Metres {
-    let law = path_law(setup);
+    let law = v_law(setup);
     let mut trip = law.period_of_spacing(envelope_duration.get() * SMALLEST_SPACING);
     if matches!(wall_span(setup), Span::TransmissionPulseToBackWall) {
         let dead = setup.window.from - setup.zero.offset + envelope_duration * 0.5;
@@ -201,7 +184,7 @@ pub fn thinnest_wall(setup: &GaugeSetup, envelope_duration: Seconds) -> Metres {
 /// Whether an echo of so thick a wall stands above the noise is another question.
 #[must_use]
 pub fn thickest_wall(setup: &GaugeSetup, envelope_duration: Seconds) -> Metres {
-    let law = path_law(setup);
+    let law = v_law(setup);
     let half = envelope_duration * 0.5;
     let (mut end, mut start) = (setup.window.to, setup.zero.offset);
     if let (ProbeKind::DelayLine, Some(line)) = (setup.probe.kind, setup.probe.delay_line) {
@@ -218,6 +201,11 @@ pub fn thickest_wall(setup: &GaugeSetup, envelope_duration: Seconds) -> Metres {
         Span::TransmissionPulseToBackWall | Span::InterfaceToBackWall => 1.0,
     };
     half_path(setup.velocity(), Seconds::new(math::larger(longest, 0.0) / trips))
+}
+
+/// The V of a dual-element probe: a beam's spreading does not matter for limits.
+fn v_law(setup: &GaugeSetup) -> PathLaw<'static> {
+    way::v_path(setup).map_or(PathLaw::Straight, PathLaw::V)
 }
 
 /// Smallest spacing of echoes that a train is read with, over the -20 dB duration of the envelope.

@@ -2,12 +2,10 @@
 
 use crate::echo::pulse::PulseFacts;
 use crate::math;
-use crate::path::PathLaw;
-use crate::path::v_path::Ray;
-use crate::setup::{CalibratedRange, GaugeSetup, ProbeKind, Span, UNKNOWN_TEMPERATURE};
+use crate::setup::{GaugeSetup, ProbeKind, Span, UNKNOWN_TEMPERATURE};
 use crate::units::{Metres, MetresPerSecond, Seconds};
-use crate::wall::thickness::{TrainTimes, excess, path_law, round_trip, wall_span};
-use crate::wall::{beam, coupling};
+use crate::wall::thickness::{TrainTimes, excess, round_trip, wall_span};
+use crate::wall::{coupling, way};
 use heapless::Vec;
 
 /// Where a share of the uncertainty comes from.
@@ -23,7 +21,8 @@ pub enum Source {
     Zero,
     /// Velocity and zero together, where a calibration has tied their errors to each other.
     Calibration,
-    /// The beam's spreading moves echoes (piston diffraction), not corrected.
+    /// The beam's spreading moves echoes (piston diffraction): what the correction leaves over, or all of it where
+    /// nothing can be corrected.
     Beam,
     /// The couplant film differs from the one at calibration.
     Coupling,
@@ -119,7 +118,7 @@ impl Budget {
 
 /// 1 / sqrt(3): the standard uncertainty of a rectangular distribution over its half-width
 /// (JCGM 100:2008, 4.3.7).
-const RECTANGULAR: f32 = 0.577_350_26;
+pub(super) const RECTANGULAR: f32 = 0.577_350_26;
 
 /// The budget of a wall that was read with [`crate::wall::thickness::wall`].
 ///
@@ -129,10 +128,10 @@ const RECTANGULAR: f32 = 0.577_350_26;
 /// | velocity | d / c times the velocity's uncertainty: that of the blocks, and what the part may differ from them |
 /// | zero | c / 2 times the zero's uncertainty; not between back walls |
 /// | calibration | instead of the two before, where the set-up says that their errors are correlated; only what the part may differ from the blocks stays apart, as velocity |
-/// | beam | c / 2 times the whole uncorrected diffraction shift, as the half-width of a rectangle; only if the element is known |
+/// | beam | c / 2 times what is left of the diffraction shift, see [`way::beam_uncertainty`]; only if the element is known |
 /// | coupling | c / 2 times the shift by the couplant film, likewise |
 /// | temperature | d / c times what temperature does to the velocity, [`crate::setup::Material::temperature_uncertainty`] |
-/// | v-path | what the distance of a dual-element probe's elements may be off by moves the wall, see [`v_path_uncertainty`] |
+/// | v-path | what the distance of a dual-element probe's elements may be off by moves the wall, see [`way::v_path_uncertainty`] |
 ///
 /// The noise of the reference pulse stands apart, because it is a matter of the pulse: [`reference_pulse`].
 ///
@@ -149,15 +148,14 @@ pub fn budget(setup: &GaugeSetup, times: &TrainTimes, wall: Metres) -> Budget {
         budget.add(Source::Timing, half_velocity * trip.standard_uncertainty);
     }
     add_calibration(&mut budget, setup, wall);
-    let moved = half_velocity * gain(setup, wall);
-    let beam = moved * beam_half_width(setup, wall);
-    budget.add(Source::Beam, beam * RECTANGULAR);
+    let moved = half_velocity * way::gain(setup, wall);
+    budget.add(Source::Beam, moved * way::beam_uncertainty(setup, wall));
     let coupling = moved * coupling::half_width(&setup.probe, wall_span(setup));
     budget.add(Source::Coupling, coupling * RECTANGULAR);
     let temperature = setup.material.temperature_uncertainty() / setup.velocity();
-    let by_velocity = gain(setup, wall) * gain(setup, wall);
+    let by_velocity = way::gain(setup, wall) * way::gain(setup, wall);
     budget.add(Source::Temperature, (wall * temperature).abs() * by_velocity);
-    budget.add(Source::VPath, v_path_uncertainty(setup, wall));
+    budget.add(Source::VPath, way::v_path_uncertainty(setup, wall));
     budget
 }
 
@@ -207,72 +205,6 @@ pub fn unknown_temperature_matters(setup: &GaugeSetup, wall: Metres, budget: &Bu
     follows.part.is_none() && half_width.abs().get() > setup.coverage_factor * math::sqrt(others)
 }
 
-/// How many times as much as straight down an error of a time counts where sound goes along a V: 1 / cos θ. 1 between
-/// back walls, whose period is straight.
-#[must_use]
-pub fn gain(setup: &GaugeSetup, wall: Metres) -> f32 {
-    match (wall_span(setup), ray(setup, wall)) {
-        (Span::TransmissionPulseToBackWall, Some(ray)) => 1.0 / ray.cosine,
-        _ => 1.0,
-    }
-}
-
-/// The ray to a wall, where its way is a V.
-fn ray(setup: &GaugeSetup, wall: Metres) -> Option<Ray> {
-    match path_law(setup) {
-        PathLaw::Straight => None,
-        PathLaw::V(path) => Some(path.at((wall * 2.0 / setup.velocity()).get())),
-    }
-}
-
-/// What the distance of the elements may be off by moves a wall, as a standard uncertainty.
-///
-/// With p half the distance, ∂t/∂p = 2 sin θ / c and ∂t/∂d = 2 cos θ / c: an error of p moves the wall by tan θ times as
-/// much. A zero that was learned on blocks with the same distance has taken the part of the block with it, and what is
-/// left goes with sin θ - sin θ of the block: the larger of that of thinnest and thickest block. Between back walls the
-/// error of the second less that of the first counts, and no zero.
-///
-/// Zero for a probe without a stated distance: that is a doubt.
-#[must_use]
-pub fn v_path_uncertainty(setup: &GaugeSetup, wall: Metres) -> Metres {
-    let (Some(separation), Some(here)) = (setup.probe.separation, ray(setup, wall)) else {
-        return Metres::ZERO;
-    };
-    let sine_at = |wall: Metres| ray(setup, wall).map_or(0.0, |ray| ray.sine);
-    let share = match (wall_span(setup), setup.calibrated) {
-        (Span::BackWallToBackWall, _) => {
-            let next = ray(setup, wall * 2.0).unwrap_or(here);
-            // t2 - t1 against p and against d.
-            (here.sine - next.sine) / math::larger(2.0 * next.cosine - here.cosine, 0.1)
-        }
-        (_, None) => here.sine / here.cosine,
-        (_, Some(range)) => {
-            let thin = (here.sine - sine_at(range.from)).abs();
-            let thick = (here.sine - sine_at(range.to)).abs();
-            math::larger(thin, thick) / here.cosine
-        }
-    };
-    separation.standard_uncertainty * (0.5 * share)
-}
-
-/// Could the V-shaped way of a dual-element probe have moved this wall by more than `limit` beyond its budget? Without a
-/// stated distance nothing is corrected, and it could; with one the budget holds its uncertainty as far as a straight
-/// line does: what the line leaves over, U²(p) / (2 d cos² θ) for the expanded uncertainty U(p) of half the distance, is
-/// judged here. So is a ray of more than 60° from the upright, where the width of the elements counts as much as their
-/// distance.
-#[must_use]
-pub fn v_path_matters(setup: &GaugeSetup, wall: Metres, limit: Metres) -> bool {
-    if setup.probe.kind != ProbeKind::DualElement {
-        return false;
-    }
-    let (Some(separation), Some(ray)) = (setup.probe.separation, ray(setup, wall)) else {
-        return true;
-    };
-    let half = separation.standard_uncertainty * (0.5 * setup.coverage_factor);
-    let left = half * ((half / wall) / (2.0 * ray.cosine * ray.cosine));
-    ray.cosine < 0.5 || left > limit
-}
-
 /// Velocity and zero: apart, or as one term if their errors hang together.
 ///
 /// d = c (t - t0) / 2, so that ∂d/∂c = d / c and ∂d/∂t0 = -c / 2, and with A = (d / c) u(c), B = (c / 2) u(t0):
@@ -282,7 +214,7 @@ pub fn v_path_matters(setup: &GaugeSetup, wall: Metres, limit: Metres) -> bool {
 /// Along a V ∂d/∂c = d / (c cos² θ) and ∂d/∂t0 = -c / (2 cos θ).
 fn add_calibration(budget: &mut Budget, setup: &GaugeSetup, wall: Metres) {
     let material = &setup.material;
-    let gain = gain(setup, wall);
+    let gain = way::gain(setup, wall);
     let of_velocity = |uncertainty: MetresPerSecond| (wall * (uncertainty / setup.velocity())).abs() * (gain * gain);
     let velocity = of_velocity(material.velocity_standard_uncertainty);
     // What the part differs from the blocks by knows nothing of the blocks' zero.
@@ -306,76 +238,12 @@ fn add_calibration(budget: &mut Budget, setup: &GaugeSetup, wall: Metres) {
     }
 }
 
-/// How far diffraction can have moved the round trip of the span.
-///
-/// * Between back walls in direct contact: the largest shift between neighbours.
-/// * Behind a delay line, whose own path is not known: as if the path in the part began at the element, see
-///   [`beam::uncorrected_shift`].
-/// * From the transmission pulse: the first back wall's own shift. If a calibration is named, its zero has taken
-///   the shift of the blocks with it, see [`remaining_shift`].
-///
-/// 0 without an element diameter; a dual-element probe counts as a single element of that diameter.
-fn beam_half_width(setup: &GaugeSetup, wall: Metres) -> Seconds {
-    let Some(diameter) = setup.probe.element_diameter else {
-        return Seconds::ZERO;
-    };
-    let (velocity, frequency) = (setup.velocity(), setup.probe.centre_frequency);
-    let shift = |from: Metres, to: Metres| beam::uncorrected_shift(diameter, velocity, frequency, from * 2.0, to * 2.0);
-    let behind_delay_line = matches!(setup.probe.kind, ProbeKind::DelayLine);
-    match (wall_span(setup), setup.calibrated) {
-        (Span::BackWallToBackWall, _) if !behind_delay_line => {
-            beam::uncorrected_period_shift(diameter, velocity, frequency, wall * 2.0)
-        }
-        (Span::TransmissionPulseToBackWall, Some(range)) if !behind_delay_line => remaining_shift(shift, range, wall),
-        (Span::TransmissionPulseToBackWall | Span::InterfaceToBackWall, Some(range)) => {
-            // The zero may or may not have been learned on the blocks: take the longer way.
-            let beyond = range.to - wall;
-            shift(Metres::ZERO, if beyond > wall { beyond } else { wall })
-        }
-        _ => shift(Metres::ZERO, wall),
-    }
-}
-
-/// What is left of a shift that a calibration on blocks has taken into zero and velocity: between the blocks at
-/// most the larger of the differences to them; beyond them the difference to the nearer one, and what a straight line
-/// through both adds. `shift` gives the difference between two walls.
-fn remaining_shift(shift: impl Fn(Metres, Metres) -> Seconds, range: CalibratedRange, wall: Metres) -> Seconds {
-    let (to_thin, to_thick) = (shift(range.from, wall), shift(range.to, wall));
-    let (nearest, beyond) = if wall > range.to {
-        (to_thick, wall - range.to)
-    } else if wall < range.from {
-        (to_thin, range.from - wall)
-    } else {
-        return larger(to_thin, to_thick);
-    };
-    let length = range.to - range.from;
-    if length > Metres::ZERO {
-        nearest + shift(range.from, range.to) * (beyond / length)
-    } else {
-        nearest
-    }
-}
-
-/// Could the spreading of a beam whose element the set-up does not name move this wall by more than `limit` (a
-/// half-width: say, the expanded uncertainty)? Judged with an element of two wavelengths, smaller than any usual one and
-/// so with the largest shift. Always false if the element is known: then the shift stands in the budget.
-#[must_use]
-pub fn unknown_beam_matters(setup: &GaugeSetup, wall: Metres, limit: Metres) -> bool {
-    if setup.probe.element_diameter.is_some() {
-        return false;
-    }
-    let mut smallest = *setup;
-    smallest.probe.element_diameter = Some(setup.velocity() / setup.probe.centre_frequency * 2.0);
-    setup.velocity() * 0.5 * beam_half_width(&smallest, wall) > limit
-}
-
-/// Standard uncertainty (k = 1) of [`excess`] as a whole: timing of first back wall, start and period; the zero; beam and
-/// couplant of the first back wall and of the period together, as rectangles. An excess far beyond it on a part that is
+/// Standard uncertainty (k = 1) of [`excess`] as a whole: timing of first back wall, start and period; the zero; beam,
+/// V-path and couplant of the first back wall and of the period together. An excess far beyond it on a part that is
 /// said to be bare contradicts the zero. `None` where there is no excess.
 #[must_use]
 pub fn excess_uncertainty(setup: &GaugeSetup, times: &TrainTimes, wall: Metres) -> Option<Seconds> {
     let timing = excess(setup, times)?.standard_uncertainty.get();
-    let zero = setup.zero.standard_uncertainty.get();
     let mut first = *setup;
     first.coating = None;
     first.span = match setup.probe.kind {
@@ -384,10 +252,13 @@ pub fn excess_uncertainty(setup: &GaugeSetup, times: &TrainTimes, wall: Metres) 
     };
     let mut period = first;
     period.span = Span::BackWallToBackWall;
-    let beam = (beam_half_width(&first, wall) + beam_half_width(&period, wall)).get() * RECTANGULAR;
+    let zero = setup.zero.standard_uncertainty.get() * way::gain(&first, wall);
+    let beam = (way::beam_uncertainty(&first, wall) + way::beam_uncertainty(&period, wall)).get();
+    let v_path = way::v_path_uncertainty(&first, wall) + way::v_path_uncertainty(&period, wall);
+    let v_path = (v_path * 2.0 / setup.velocity()).get();
     let film = coupling::half_width(&setup.probe, first.span) + coupling::half_width(&setup.probe, period.span);
     let film = film.get() * RECTANGULAR;
-    let variance = timing * timing + zero * zero + beam * beam + film * film;
+    let variance = timing * timing + zero * zero + beam * beam + film * film + v_path * v_path;
     Some(Seconds::new(math::sqrt(variance)))
 }
 
@@ -399,15 +270,10 @@ pub fn coating_uncertainty(setup: &GaugeSetup, times: &TrainTimes, wall: Metres)
     Some(setup.coating?.velocity * excess_uncertainty(setup, times, wall)? * 0.5)
 }
 
-/// The longer of two times.
-fn larger(a: Seconds, b: Seconds) -> Seconds {
-    if b > a { b } else { a }
-}
-
 #[cfg(test)]
 mod tests {
     use super::*;
-    use crate::setup::{Coating, Material, Probe, Window, Zero};
+    use crate::setup::{CalibratedRange, Coating, Material, Probe, Window, Zero};
     use crate::units::{Hertz, MetresPerSecond};
     use crate::wall::calibration::{Block, zero_and_velocity, zero_at_known_velocity};
     use crate::wall::thickness::Timed;
@@ -613,10 +479,10 @@ mod tests {
         let zero = Zero::new(Seconds::ZERO, Seconds::ZERO);
         let setup = bare(contact(), Span::BackWallToBackWall, 0.0, zero);
         let wall = Metres::from_mm(5.0);
-        assert!(unknown_beam_matters(&setup, wall, Metres::new(10e-6)));
-        assert!(!unknown_beam_matters(&setup, wall, Metres::new(200e-6)));
+        assert!(way::unknown_beam_matters(&setup, wall, Metres::new(10e-6)));
+        assert!(!way::unknown_beam_matters(&setup, wall, Metres::new(200e-6)));
         let known = contact().with_element_diameter(Metres::from_mm(6.0));
-        assert!(!unknown_beam_matters(
+        assert!(!way::unknown_beam_matters(
             &bare(known, Span::BackWallToBackWall, 0.0, zero),
             wall,
             Metres::ZERO

@@ -56,6 +56,8 @@ pub struct BlockTimes {
     pub back_wall: Echo,
     /// Its arrival, with the larger of noise and scatter as its uncertainty.
     pub first_back_wall: Timed,
+    /// How much later than straight the first back wall comes, as the set-up has it.
+    pub deviation: Seconds,
     /// The interface echo, where the span needs it.
     pub interface: Option<Timed>,
     /// The period of the back walls, where there is one.
@@ -67,10 +69,12 @@ pub struct BlockTimes {
 }
 
 impl BlockTimes {
-    /// The time that a zero refers to: the first back wall, after the interface if there is one.
+    /// The time that a zero refers to: the first back wall, after the interface if there is one, as if its way were
+    /// straight.
     #[must_use]
     pub fn first(&self) -> Timed {
-        let first = self.first_back_wall;
+        let mut first = self.first_back_wall;
+        first.time = first.time - self.deviation;
         match self.interface {
             None => first,
             Some(interface) => Timed::new(
@@ -161,6 +165,7 @@ pub fn measure(gauge: &mut Gauge<'_>, block: &BlockRecord, learn: Learn) -> Resu
     let scatter = scatter(gauge, block, &setup, (&back_wall, interface.as_ref(), period));
     Ok(BlockTimes {
         first_back_wall: timed(&back_wall, scatter.back_wall),
+        deviation: gauge.path_deviation(block.thickness),
         interface: interface.map(|echo| timed(&echo, scatter.interface)),
         period: period.map(|period| Timed::new(period.time, larger(period.standard_uncertainty, scatter.period))),
         back_wall,

@@ -25,10 +25,10 @@ use cut::LearnedPulse;
 use halfpulse::echo::pulse::PulseQuality;
 use halfpulse::wall::calibration::{self, Block, CalibrationError};
 use halfpulse::wall::thickness::Timed;
-use halfpulse::wall::{beam, coupling};
+use halfpulse::wall::{coupling, way};
 use halfpulse::{
-    Celsius, DriftCheck, DriftState, GaugeSetup, Material, Metres, MetresPerSecond, NoReading, Reading, Record,
-    Seconds, Span, Zero,
+    CalibratedRange, Celsius, DriftCheck, DriftState, GaugeSetup, Material, Metres, MetresPerSecond, NoReading,
+    Reading, Record, Seconds, Span, Zero,
 };
 
 /// What shall be learned from the blocks, besides the reference pulse.
@@ -102,6 +102,9 @@ pub fn calibrate_at(
     core_setup.calibrated = None;
     let as_stated = core_setup.material;
     core_setup.material = material_of_blocks(&as_stated, temperature_c)?;
+    if learn != Learn::Velocity && way::corrects_beam(&core_setup) {
+        core_setup.zero.learned_on = Some(Metres::ZERO);
+    }
 
     let longest = blocks.iter().map(|block| block.average.codes.len()).max().unwrap_or(0);
     let mut scratch = HeapScratch::new(longest);
@@ -121,7 +124,7 @@ pub fn calibrate_at(
     };
     let learned = cut::learn_with_mismatch(&mut gauge, blocks, &before, pulse_from)?;
 
-    let times: Vec<BlockTimes> = blocks
+    let mut times: Vec<BlockTimes> = blocks
         .iter()
         .map(|block| block::measure(&mut gauge, block, learn))
         .collect::<Result<_, _>>()?;
@@ -129,6 +132,16 @@ pub fn calibrate_at(
         core_setup.zero = translated(&core_setup, before, after);
     }
     let (mut zero, mut material) = solve(&core_setup, blocks, &times, learn)?;
+    // The way of the sound hangs a little on the velocity that is being learned.
+    for _ in 0..2 {
+        core_setup.material.velocity = material.velocity;
+        gauge.change_setup(core_setup).map_err(|error| setup.locate(error))?;
+        for (times, block) in times.iter_mut().zip(blocks) {
+            times.deviation = gauge.path_deviation(block.thickness);
+        }
+        (zero, material) = solve(&core_setup, blocks, &times, learn)?;
+    }
+    zero.learned_on = core_setup.zero.learned_on;
     if learn == Learn::Zero {
         // What temperature adds to the doubt of the blocks' velocity is no error of the velocity that the set-up keeps.
         let (kept, used) = (
@@ -330,12 +343,14 @@ fn solve(
     }
 }
 
-/// How far the uncorrected spreading of the beam moves the echo of one wall against another's.
+/// How far the spreading of the beam moves the echo of one wall against another's beyond what is corrected, as a
+/// half-width.
 fn spreading(setup: &GaugeSetup, from: Metres, to: Metres) -> Seconds {
-    setup.probe.element_diameter.map_or(Seconds::ZERO, |diameter| {
-        let (velocity, frequency) = (setup.material.velocity, setup.probe.centre_frequency);
-        beam::uncorrected_shift(diameter, velocity, frequency, from * 2.0, to * 2.0).abs()
-    })
+    let mut against = *setup;
+    // What nobody corrects is the whole difference.
+    against.zero.learned_on = setup.zero.learned_on.map(|_| from);
+    against.calibrated = (from > Metres::ZERO).then_some(CalibratedRange { from, to: from });
+    way::beam_uncertainty(&against, to) * (1.0 / RECTANGULAR)
 }
 
 /// The velocity from the periods of one or two blocks: the mean weighted by the inverse variances.
@@ -354,10 +369,9 @@ fn velocity_from_periods(
                 "record for longer, or raise the gain",
             ));
         };
-        let beam = setup.probe.element_diameter.map_or(Seconds::ZERO, |diameter| {
-            let (velocity, frequency) = (setup.material.velocity, setup.probe.centre_frequency);
-            beam::uncorrected_period_shift(diameter, velocity, frequency, block.thickness * 2.0).abs()
-        });
+        let mut between = *setup;
+        between.span = Span::BackWallToBackWall;
+        let beam = way::beam_uncertainty(&between, block.thickness) * (1.0 / RECTANGULAR);
         let nothing = Zero::new(Seconds::ZERO, Seconds::ZERO);
         let (_, material) =
             calibration::velocity_from_thickness(&as_block(block, period, &[film, beam]), &nothing).map_err(refusal)?;
@@ -417,6 +431,7 @@ fn new_keys(
     if learn != Learn::Velocity || keys.zero.standard_uncertainty_ns.is_some() {
         keys.zero.offset_ns = rounded(zero.offset.as_ns());
         keys.zero.standard_uncertainty_ns = Some(rounded(zero.standard_uncertainty.as_ns()));
+        keys.zero.learned_on_mm = zero.learned_on.map(|block| rounded(block.as_mm()));
     }
     if learn != Learn::Zero {
         keys.material.velocity_m_s = rounded(material.velocity.get());

@@ -71,7 +71,7 @@ type Teeth = Vec<Tooth, ECHO_CAPACITY>;
 pub(super) fn choose(
     surroundings: &Surroundings<'_>,
     echoes: &EchoList,
-    rules: &Rules,
+    rules: &Rules<'_>,
     tolerance: f32,
 ) -> Result<Hypothesis, Undecided> {
     let sigma = surroundings.amplitude_noise();
@@ -219,7 +219,7 @@ fn polish(hypothesis: &mut Hypothesis, teeth: &Teeth, tolerance: f32) {
 
 /// Scores a hypothesis against the echoes, and notes which multiples it found.
 #[inline(never)]
-fn score(hypothesis: &mut Hypothesis, teeth: &Teeth, rules: &Rules, tolerance: f32, at_threshold: f32) {
+fn score(hypothesis: &mut Hypothesis, teeth: &Teeth, rules: &Rules<'_>, tolerance: f32, at_threshold: f32) {
     hypothesis.score = f32::NEG_INFINITY;
     let largest = teeth.iter().fold(0.0, |m, tooth| math::larger(m, tooth.amplitude));
     let last_place = teeth.last().map_or(0.0, |tooth| tooth.place);

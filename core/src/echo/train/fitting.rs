@@ -20,19 +20,19 @@ const FIT_MINIMUM: f32 = 3.0;
 type Members = Vec<Member, ECHO_CAPACITY>;
 
 /// Places of the multiples during the fit, relative to `base` so that `f32` keeps its digits.
-struct Line {
+struct Line<'a> {
     base: u32,
     first: f32,
     /// Straight time from multiple to multiple.
     period: f32,
     /// Number of the first multiple.
     number: u32,
-    law: PathLaw,
+    law: PathLaw<'a>,
     /// Sign of all multiples, 1 or -1.
     sign: f32,
 }
 
-impl Line {
+impl Line<'_> {
     /// Place of the `step`-th multiple after the first, relative to the base.
     fn place(&self, step: u8) -> f32 {
         let straight = self.first + f32::from(step) * self.period;
@@ -96,7 +96,7 @@ struct Member {
 pub(super) fn fit(
     surroundings: &Surroundings<'_>,
     echoes: &mut EchoList,
-    rules: &Rules,
+    rules: &Rules<'_>,
     best: &Hypothesis,
     tolerance: f32,
     lags: &mut [f32; ECHO_CAPACITY * TRAIN_LAGS],
@@ -204,7 +204,7 @@ pub(super) fn fit(
 
 /// Energy of what stands between the multiples over theirs. What does not look like the pulse (the tail of a strong
 /// interface echo) counts by the share of it that does.
-fn unexplained(echoes: &EchoList, rules: &Rules) -> f32 {
+fn unexplained(echoes: &EchoList, rules: &Rules<'_>) -> f32 {
     let (mut explained, mut left) = (0.0, 0.0);
     for echo in echoes {
         let place = echo.position.as_samples();
@@ -221,7 +221,7 @@ fn unexplained(echoes: &EchoList, rules: &Rules) -> f32 {
 }
 
 /// Sign of the strongest multiple: all back walls of one wall share it.
-fn sign_of_train(echoes: &EchoList, rules: &Rules, best: &Hypothesis, tolerance: f32) -> f32 {
+fn sign_of_train(echoes: &EchoList, rules: &Rules<'_>, best: &Hypothesis, tolerance: f32) -> f32 {
     let mut strongest: Option<&Echo> = None;
     for echo in echoes.iter().filter(|echo| echo.role == EchoRole::Other) {
         let (number, off) = nearest(best, rules.straight_place(echo.position.as_samples()));
@@ -239,9 +239,9 @@ fn sign_of_train(echoes: &EchoList, rules: &Rules, best: &Hypothesis, tolerance:
 fn collect(
     surroundings: &Surroundings<'_>,
     echoes: &EchoList,
-    rules: &Rules,
+    rules: &Rules<'_>,
     best: &Hypothesis,
-    line: &Line,
+    line: &Line<'_>,
     lags: &mut [f32; ECHO_CAPACITY * TRAIN_LAGS],
     members: &mut Members,
 ) {
@@ -322,28 +322,49 @@ fn give_roles(
     surroundings: &Surroundings<'_>,
     echoes: &mut EchoList,
     best: &Hypothesis,
-    line: &Line,
+    line: &Line<'_>,
     members: &[Member],
     tolerance: f32,
 ) {
-    for member in members {
-        let place = SamplePosition::new(line.base, line.place(member.step));
-        let multiple = u8::try_from(best.first + u32::from(member.step)).unwrap_or(u8::MAX);
-        let known = echoes
-            .iter_mut()
-            .find(|echo| echo.role == EchoRole::Other && echo.position.samples_after(place).abs() < tolerance);
-        if let Some(echo) = known {
-            echo.role = EchoRole::BackWall(multiple);
-        } else if let Some(mut echo) = echo_at(
+    let fitted = |member: &Member, place: SamplePosition, group_lag: f32| {
+        echo_at(
             surroundings,
             Arrival {
                 position: SamplePosition::new(place.index, place.fraction + member.off),
                 amplitude: member.amplitude,
-                // The fit has not looked: the strong multiples speak for the train.
-                group_lag: 0.0,
+                group_lag,
                 sharpness: member.sharpness,
             },
-        ) {
+        )
+    };
+    for member in members {
+        let place = SamplePosition::new(line.base, line.place(member.step));
+        let multiple = u8::try_from(best.first + u32::from(member.step)).unwrap_or(u8::MAX);
+        let distance = |echo: &Echo| echo.position.samples_after(place);
+        let mut nearest: Option<&mut Echo> = None;
+        for echo in echoes.iter_mut().filter(|echo| echo.role == EchoRole::Other) {
+            if nearest
+                .as_ref()
+                .is_none_or(|other| distance(echo).abs() < distance(other).abs())
+            {
+                nearest = Some(echo);
+            }
+        }
+        // The beam turns the phase by up to a quarter of a cycle: then two half cycles fit an echo about as well, and
+        // the train knows which it is.
+        let reach = 0.6 * surroundings.samples_per_cycle;
+        let known = nearest.filter(|echo| distance(echo).abs() < reach);
+        if let Some(echo) = known {
+            let off = distance(echo);
+            if off.abs() >= tolerance {
+                let lag = echo.group_lag.get() * surroundings.record.clock().rate.get();
+                if let Some(at_fit) = fitted(member, place, lag + off) {
+                    *echo = at_fit;
+                }
+            }
+            echo.role = EchoRole::BackWall(multiple);
+        } else if let Some(mut echo) = fitted(member, place, 0.0) {
+            // Its group lag is not known: the strong multiples speak for the train.
             echo.role = EchoRole::BackWall(multiple);
             if echoes.push(echo).is_ok() {
                 order::sink_last(echoes, |a, b| a.position.samples_after(b.position) < 0.0);

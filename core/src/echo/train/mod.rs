@@ -34,7 +34,7 @@ pub use choosing::{Hypothesis, MARGIN};
 
 /// What is known before the echoes are looked at. Places are in samples from the record's first.
 #[derive(Clone, Copy, Debug, PartialEq)]
-pub struct Rules {
+pub struct Rules<'a> {
     /// Where the wall begins: zero offset or interface echo.
     pub start: f32,
     /// How far from a whole number of periods after the start the train may lie without objection.
@@ -48,16 +48,17 @@ pub struct Rules {
     /// Detection threshold in standard deviations of a fitted amplitude.
     pub threshold: f32,
     /// How the echoes' times follow from the wall's straight ones, in samples.
-    pub law: PathLaw,
+    pub law: PathLaw<'a>,
 }
 
-impl Rules {
-    /// Where an echo would lie, were its way straight. Of a [straight](PathLaw::Straight) law the place itself.
+impl Rules<'_> {
+    /// Where an echo would lie, were its way straight. A beam's spreading moves it by less than what choosing tolerates,
+    /// and is left to the fit.
     #[must_use]
     pub fn straight_place(&self, place: f32) -> f32 {
         match self.law {
-            PathLaw::Straight => place,
-            law => self.start + law.straighten(place - self.start),
+            law @ PathLaw::V(_) => self.start + law.straighten(place - self.start),
+            _ => place,
         }
     }
 }
@@ -141,7 +142,7 @@ pub fn choose(surroundings: &Surroundings<'_>, echoes: &EchoList, rules: &Rules)
 pub fn fit(
     surroundings: &Surroundings<'_>,
     echoes: &mut EchoList,
-    rules: &Rules,
+    rules: &Rules<'_>,
     choice: &Hypothesis,
     lags: &mut [f32; ECHO_CAPACITY * TRAIN_LAGS],
 ) -> Result<Train, Undecided> {
