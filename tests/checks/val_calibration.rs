@@ -178,8 +178,7 @@ fn recorded(scene: &Scene, claimed_mm: f64, shots: u64, seed: u64) -> BlockRecor
     BlockRecord::new(Path::new("block"), (claimed_mm, 0.002), file, clock).expect("the block is sound")
 }
 
-/// Zero and velocity of two blocks are effective: beam and film are in them. The stated uncertainty must hold all the
-/// same, between the blocks and far beyond them.
+/// Zero and velocity of two blocks: the beam is taken off, the films are in them. The stated uncertainty must hold, between the blocks and far beyond them.
 ///
 /// Truth: the simulator's walls, with Rogers and Van Buren's diffraction and the layered film (f64, checked against
 /// published tables by `val_world_*`). Films are drawn from 0 to the set-up's 2 um on either block and on the part, the
@@ -246,8 +245,8 @@ fn val_two_blocks_with_beam_and_film() {
         assert!(f64::from(*inside) >= 0.93 * f64::from(*all), "{inside} of {all}");
     }
     assert!(undoubted <= 3, "{undoubted} outside without a doubt");
-    // The velocity is the effective one: what the beam adds between 5 and 25 mm (22.206 ns of 6756.8) makes it 0.33 % higher,
-    // by the correlation shifts in `diffraction_delay.csv`.
+    // The velocity is the metal's: what the beam adds between 5 and 25 mm (22.206 ns of 6756.8, `diffraction_delay.csv`),
+    // which would make it 0.33 % higher, is taken off. The films, at random, leave a tenth of a per cent.
     let (mean, _) = oracle::mean_and_deviation(&velocities);
-    assert!((mean / 5920.0 - 1.0033).abs() < 0.0015, "{mean}");
+    assert!((mean / 5920.0 - 1.0).abs() < 0.0015, "{mean}");
 }

@@ -99,8 +99,10 @@ pub fn zero_at_known_velocity(block: &Block, material: &Material) -> Result<Zero
 /// δc / c = (e1 - e2) / T and δt0 = (1 + λ) e1 - λ e2: both fall with the blocks' distance, and their correlation is
 /// strongly positive.
 ///
-/// What the beam does to the blocks goes into both: the velocity is the one that reads right between the blocks with this
-/// probe and span, and not a property of the metal (6 mm, 5 MHz, blocks of 5 and 25 mm of steel: 0.35 % too high).
+/// What the beam does to the blocks goes into both, unless the blocks' times are those of straight ways (less
+/// [`Gauge::path_deviation`](crate::Gauge::path_deviation)): the velocity is then the one that reads right between the
+/// blocks with this probe and span, and not a property of the metal (6 mm, 5 MHz, blocks of 5 and 25 mm of steel: 0.35 %
+/// too high).
 ///
 /// # Errors
 /// Blocks that are not usable, or so alike that they do not determine both.
