@@ -251,6 +251,12 @@ fn val_zero_learned_warm() {
     let keys = SetupFile::read(&bench.path("ready.toml")).unwrap().keys;
     assert_eq!(keys.calibration.as_ref().unwrap().temperature_c, Some(45.0));
     assert_eq!(keys.material.velocity_m_s, 5920.0);
+    // By hand, over 3390 ns: 6 m/s are 3.447 ns; 1 K and 0.16 m/s/K over 25 K are 4.079 m/s and 2.344 ns; 1 um is 0.339 ns.
+    // Only the first is an error of the velocity that the set-up keeps.
+    let u = keys.zero.standard_uncertainty_ns.unwrap();
+    assert!((u - 4.18).abs() < 0.03, "{u}");
+    let correlation = keys.calibration.as_ref().unwrap().velocity_zero_correlation.unwrap();
+    assert!((correlation - 3.447 / 4.18).abs() < 0.01, "{correlation}");
     let cold = Train {
         velocity: 5944.0,
         ..block(14.0)
