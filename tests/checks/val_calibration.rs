@@ -250,3 +250,34 @@ fn val_two_blocks_with_beam_and_film() {
     let (mean, _) = oracle::mean_and_deviation(&velocities);
     assert!((mean / 5920.0 - 1.0).abs() < 0.0015, "{mean}");
 }
+
+/// What the part may differ by from the blocks stands beside velocity and zero, whether those are tied or not, and is not
+/// cancelled at the blocks' thickness as their own errors are.
+///
+/// Truth: by hand. 8 m/s in 5920 over 10 mm are 13.5135 um; with 6 m/s of the blocks' as the root of squares 16.8919 um.
+#[test]
+fn val_the_block_is_not_the_part() {
+    let material = Material::new(MetresPerSecond::new(5920.0), MetresPerSecond::new(6.0));
+    let part = material.with_part_uncertainty(MetresPerSecond::new(8.0));
+    let times = TrainTimes::single(Timed::new(Seconds::from_us(3.3784), Seconds::ZERO));
+    let term = |material: Material, zero: Zero, source: Source| {
+        let mut setup = setup(Span::TransmissionPulseToBackWall, material);
+        setup.zero = zero;
+        let budget = budget(&setup, &times, Metres::from_mm(10.0));
+        let found = budget.terms().iter().find(|term| term.source == source);
+        found.map_or(0.0, |term| f64::from(term.standard_uncertainty.get()) * 1e6)
+    };
+    let free = Zero::new(Seconds::ZERO, Seconds::from_ns(2.0));
+    assert!((term(part, free, Source::Velocity) - 16.8919).abs() < 1e-3);
+    assert!((term(part, free, Source::Zero) - 5.92).abs() < 1e-3);
+    // A zero learned on an exact block of 10 mm at this velocity: the two cancel, only the part is left.
+    let tied = Zero {
+        velocity_correlation: 1.0,
+        ..Zero::new(Seconds::ZERO, Seconds::new(20e-3 / 5920.0 * 6.0 / 5920.0))
+    };
+    assert!(term(material, tied, Source::Calibration) < 0.01);
+    assert_eq!(term(material, tied, Source::Velocity), 0.0);
+    assert!((term(part, tied, Source::Velocity) - 13.5135).abs() < 1e-3);
+    assert!(term(part, tied, Source::Calibration) < 0.01);
+    assert_eq!(term(part.of_blocks(), tied, Source::Velocity), 0.0);
+}
