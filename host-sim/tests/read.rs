@@ -337,3 +337,46 @@ fn help_teaches() {
         assert!(run.error().contains(word), "{}", run.errors);
     }
 }
+
+/// Two echoes 0.4 pulse durations apart: the classical verdict cannot tell them, the model does when asked.
+#[test]
+fn an_echo_that_is_two_is_told_when_asked() {
+    let bench = Bench::new();
+    // 10 mm of steel, every back wall with a second echo of half its height 200 ns behind (10 samples of 27).
+    let shots: Vec<Vec<i16>> = (0..2)
+        .map(|seed| {
+            let one = Train::CLEAN.shot(10 + seed);
+            let late = Train::CLEAN.shot(20 + seed);
+            let mut both = one.clone();
+            for (sample, second) in both.iter_mut().skip(10).zip(&late) {
+                *sample = (f64::from(*sample) + 0.5 * f64::from(*second)).round() as i16;
+            }
+            both
+        })
+        .collect();
+    bench.write_shots("a.npy", &shots);
+    let arguments = ["read", "a.npy", "--setup", "setup.toml", "--format", "json"];
+    let before = bench.run(&arguments).json();
+    let after = bench.run(&[&arguments[..], &["--separate"]].concat()).json();
+    assert_eq!(after.len(), 2);
+    for (before, after) in before.iter().zip(&after) {
+        assert!(before["separation"]["log_odds"].is_null(), "{before}");
+        let separation = &after["separation"];
+        assert_eq!(separation["verdict"], "resolved-by-model", "{after}");
+        assert!(separation["reason"].is_null());
+        let spacing = separation["spacing_ns"].as_f64().unwrap();
+        let u = separation["standard_uncertainty_ns"].as_f64().unwrap();
+        assert!((spacing - 200.0).abs() < 5.0 * u + 1.0, "{separation}");
+        assert!(
+            (separation["amplitude_ratio"].as_f64().unwrap() - 0.5).abs() < 0.1,
+            "{separation}"
+        );
+        assert!(separation["log_odds"].as_f64().unwrap() > 10.0);
+        assert_eq!(before["thickness_mm"], after["thickness_mm"], "the reading stays");
+    }
+    let text = bench.run(&["read", "a.npy", "--setup", "setup.toml", "--separate"]).out;
+    assert!(
+        text.contains("resolved-by-model; more than a million to one for two"),
+        "{text}"
+    );
+}

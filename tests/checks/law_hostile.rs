@@ -399,6 +399,12 @@ proptest! {
             let record = Record::new(&codes, AdcFormat::signed(16), SampleClock::new(setup.sample_rate));
             let outcome = gauge.measure(&record);
             let _ = gauge.separate(&record);
+            if let Ok(wall) = gauge.thin_wall(&record) {
+                positive("a thin wall's period", wall.period)?;
+                not_negative("its uncertainty", wall.period_uncertainty)?;
+                finite("its decay", wall.decay)?;
+                finite("its amplitudes", wall.interface_amplitude + wall.wall_amplitude)?;
+            }
             check(&gauge, &codes, &outcome)?;
         }
         gauge.change_setup(usual()).expect("back to a sound set-up");

@@ -14,7 +14,7 @@ use std::fmt;
 /// Samples a second where nothing else is said.
 pub const RATE: f64 = 50e6;
 /// Envelope peak of the larger echo, in codes of 12 bits.
-const PEAK: f64 = 800.0;
+pub const PEAK: f64 = 800.0;
 /// Samples of a record.
 const LENGTH: usize = 640;
 /// -20 dB duration of the envelope of the vectors' pulse, in samples (`tests/published/README.md`).
@@ -80,7 +80,7 @@ impl Pulse {
     }
 
     /// Adds an echo whose origin lies at `place`.
-    fn add(&self, samples: &mut [f64], place: f64, amplitude: f64) {
+    pub fn add(&self, samples: &mut [f64], place: f64, amplitude: f64) {
         let n = self.turns.len();
         let whole = place.floor();
         let shifted: Vec<(f64, f64)> = self
@@ -286,7 +286,7 @@ impl fmt::Display for Tally {
 }
 
 /// A share in per cent with its 95 % interval (Wilson 1927).
-fn share(count: usize, of: usize) -> String {
+pub fn share(count: usize, of: usize) -> String {
     let (n, p, z) = (of as f64, count as f64 / of as f64, 1.96f64);
     let middle = (p + z * z / (2.0 * n)) / (1.0 + z * z / n);
     let half = z / (1.0 + z * z / n) * (p * (1.0 - p) / n + z * z / (4.0 * n * n)).sqrt();

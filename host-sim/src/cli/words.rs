@@ -89,6 +89,10 @@ const UNRESOLVED: &[(Unresolved, &str)] = &[
         "clipped samples forge second echoes: lower the gain",
     ),
     (Unresolved::NoRoom, "the record ends there, or the pulse is too long"),
+    (
+        Unresolved::PulseUnknown,
+        "the pulse is only known from a data sheet: learn it",
+    ),
 ];
 
 /// All words with what they mean or what to do about them.

@@ -11,6 +11,8 @@
 //! ([`crate::Gauge::separate`]): tables of correlations ([`lags`]), the search over all pairs ([`pair`]), and for a pulse
 //! that is only known from a data sheet the fit of its shape ([`shape`]).
 //!
+//! A wall whose echoes run into the interface echo of a delay line is more than two pulses: [`thin_wall`].
+//!
 //! What it reaches at 30 dB (5 MHz, 60 %, `val_separation*` print it): with a learned pulse 95 % right from 0.15 pulse
 //! durations on, spacing at the Cramér-Rao bound; with a modelled one from 0.15 (equal echoes) or 0.25.
 //!
@@ -19,11 +21,13 @@
 //! width are all off, or a probe whose pulse rises twice as fast as it decays, can give a spacing that is half a cycle off
 //! below 0.4 pulse durations: learn the pulse.
 
+mod equations;
 pub mod lags;
 pub mod model;
 pub mod pair;
 mod rough;
 pub mod shape;
+pub mod thin_wall;
 
 use crate::echo::envelope::{squared_at, stride};
 use crate::echo::pulse::PulseFacts;
@@ -109,6 +113,8 @@ pub enum Unresolved {
     Clipped,
     /// The record ends here, or the pulse is too long for the scratch memory.
     NoRoom,
+    /// The pulse is only known from a data sheet, and the question needs a learned one.
+    PulseUnknown,
 }
 
 impl Unresolved {
@@ -123,6 +129,7 @@ impl Unresolved {
             Self::ModelsDisagree => "models-disagree",
             Self::Clipped => "clipped",
             Self::NoRoom => "no-room",
+            Self::PulseUnknown => "pulse-unknown",
         }
     }
 }

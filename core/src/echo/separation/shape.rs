@@ -6,6 +6,7 @@
 //! below. What a wrong shape would pass off as a second echo is then explained by the shape, in the hypothesis of
 //! one echo too. Gauss-Newton with Marquardt's damping (1963, from memory) on the samples themselves.
 
+use super::equations::solve;
 use crate::echo::pulse::ReferencePulse;
 use crate::math;
 
@@ -354,34 +355,4 @@ fn accumulate(rows: &mut Rows, slopes: &[f32; COUNT]) {
         }
         others = rest;
     }
-}
-
-/// Solves symmetric positive definite equations given by their upper triangle, in place.
-fn solve(rows: &mut Rows) -> Option<[f32; COUNT]> {
-    for pivot in 0..COUNT {
-        let (lead, below) = rows.get_mut(pivot..)?.split_first_mut()?;
-        let lead = lead.get(pivot..)?;
-        let (&own, rest) = lead.split_first()?;
-        if !(own > 0.0) {
-            return None;
-        }
-        let inverse = 1.0 / own;
-        for (place, row) in below.iter_mut().enumerate() {
-            let factor = rest.get(place)? * inverse;
-            let cells = row.get_mut(pivot + 1 + place..)?;
-            for (cell, above) in cells.iter_mut().zip(rest.get(place..)?) {
-                *cell -= factor * above;
-            }
-        }
-    }
-    let mut answer = [0.0; COUNT];
-    for place in (0..COUNT).rev() {
-        let row = rows.get(place)?;
-        let mut sum = *row.last()?;
-        for (cell, known) in row.iter().zip(&answer).skip(place + 1) {
-            sum -= cell * known;
-        }
-        *answer.get_mut(place)? = sum / row.get(place)?;
-    }
-    Some(answer)
 }
