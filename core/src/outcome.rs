@@ -63,6 +63,11 @@ pub enum NoReading {
         /// When it arrived.
         at: Seconds,
     },
+    /// What would be the wall's echoes does not look like the pulse: spikes, ringing, interference.
+    NotThePulse {
+        /// Energy that the fitted pulse leaves unexplained over what it explains, in per cent.
+        unexplained_percent: u16,
+    },
     /// More than one wall explains the echoes about as well.
     Ambiguous {
         /// How many explanations are close to the best.
@@ -96,6 +101,7 @@ impl NoReading {
             Self::NotCoupled => "not-coupled",
             Self::NoInterfaceEcho => "no-interface-echo",
             Self::OneEchoWhereTwoAreNeeded { .. } => "one-echo-where-two-are-needed",
+            Self::NotThePulse { .. } => "not-the-pulse",
             Self::Ambiguous { .. } => "ambiguous",
             Self::BelowMinimum { .. } => "below-minimum",
         }
@@ -120,6 +126,9 @@ impl NoReading {
             Self::NoInterfaceEcho => "let the window start before the delay line's end, or choose another span",
             Self::OneEchoWhereTwoAreNeeded { .. } => {
                 "use a span that needs one echo, record for longer, or raise the gain"
+            }
+            Self::NotThePulse { .. } => {
+                "look at the A-scan for spikes and ringing, or learn the reference pulse with this probe"
             }
             Self::Ambiguous { .. } => "move the probe a little, couple it better, or average more shots",
             Self::BelowMinimum { .. } => "use a delay line or a probe with a shorter pulse",
@@ -155,6 +164,12 @@ impl fmt::Display for NoReading {
             Self::NoInterfaceEcho => f.write_str("no interface echo in the window")?,
             Self::OneEchoWhereTwoAreNeeded { at } => {
                 write!(f, "one back-wall echo at {at}, the span needs two")?;
+            }
+            Self::NotThePulse { unexplained_percent } => {
+                write!(
+                    f,
+                    "what came back is not the pulse: {unexplained_percent} % as much left over as explained"
+                )?;
             }
             Self::Ambiguous { candidates, best, next } => {
                 write!(
@@ -229,6 +244,8 @@ doubts! {
     UnevenTrain = 12, "uneven-train", "look at the A-scan: a pit or a tilted back wall under the probe?";
     /// Much of what came back belongs to no multiple of this wall.
     UnexplainedEchoes = 13, "unexplained-echoes", "look at the A-scan: grain, a lamination or interference?";
+    /// An echo came back before the back wall: something under the probe may be thinner than the reading.
+    EarlierEcho = 15, "earlier-echo", "look at the A-scan: a pit, a step or a lamination above the back wall?";
     /// The part's temperature is not stated, and most of the uncertainty is a guess of it.
     TemperatureUnknown = 14, "temperature-unknown", "measure the part's temperature and state it in the set-up";
 }

@@ -264,6 +264,9 @@ impl Gauge<'_> {
             budget: &budget,
             expanded: standard_uncertainty * self.setup.coverage_factor,
         };
+        if let Some(unexplained_percent) = judgement::not_the_pulse(&evidence) {
+            return Err(NoReading::NotThePulse { unexplained_percent });
+        }
         let coating = thickness::coating(&self.setup, &times).and_then(|thickness| {
             let from_times = uncertainty::coating_uncertainty(&self.setup, &times, wall)?;
             let from_overlap = judgement::coating_overlap(&evidence)?;

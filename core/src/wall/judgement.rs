@@ -31,6 +31,12 @@ const UNEXPLAINED_LIMIT_OF_FEW: f32 = 0.1;
 
 /// So many standard uncertainties of an excess are no chance any more (1 in 370).
 const BEYOND_CHANCE: f32 = 3.0;
+/// Unexplained over explained amplitude from which what came back is not the pulse at all. An evenly attenuated pulse or one of half the
+/// bandwidth stays below 0.5; spikes and ringing lie between 0.85 and 5.
+const NOT_THE_PULSE: f32 = 0.85;
+/// Standard deviations of an amplitude above which a peak before the back wall is an echo: among the hundred independent
+/// values of a record, chance reaches 4.
+const EARLIER_ECHO: f32 = 6.0;
 
 /// What a reading rests on.
 #[derive(Clone, Copy, Debug)]
@@ -136,13 +142,33 @@ impl Evidence<'_> {
         largest
     }
 
-    /// Does the reading rest on something that does not look like the pulse at all: a spike, a step? Between back walls
-    /// the strongest decides, elsewhere each.
-    fn is_strange(&self) -> bool {
+    /// How little the echoes that the reading rests on look like the pulse. Between back walls the strongest decides,
+    /// elsewhere the worst.
+    fn strangeness(&self) -> f32 {
         let train = thickness::wall_span(self.setup) == Span::BackWallToBackWall;
         let strongest = self.used().fold(0.0, |m, echo| math::larger(m, echo.amplitude));
         self.used()
-            .any(|echo| echo.mismatch > UNRECOGNISED && !(train && echo.amplitude < strongest))
+            .filter(|echo| !(train && echo.amplitude < strongest))
+            .fold(0.0, |m, echo| math::larger(m, echo.mismatch))
+    }
+
+    /// Did something that looks like the pulse come back before the first back wall that was seen, and after the surface?
+    fn has_earlier_echo(&self) -> bool {
+        let Some(first) = self.back_wall(self.train.first_multiple) else {
+            return false;
+        };
+        let facts = &self.surroundings.pulse.facts;
+        let surface = self
+            .interface()
+            .map_or(self.setup.zero.offset, |interface| interface.arrival);
+        self.echoes.iter().any(|echo| {
+            let noise = self.surroundings.timing_noise.at(echo.position.as_samples()) / math::sqrt(facts.energy);
+            echo.role == EchoRole::Other
+                && echo.arrival > surface
+                && echo.arrival < first.arrival
+                && echo.mismatch < UNRECOGNISED
+                && echo.amplitude > EARLIER_ECHO * noise
+        })
     }
 
     /// Echoes that the reading is made from.
@@ -211,6 +237,15 @@ pub fn wrong_cycle_probability(evidence: &Evidence<'_>) -> f32 {
     math::smaller(total, 1.0)
 }
 
+/// What a reading would rest on, if that is not the pulse: the share of its energy that is unexplained, in per cent of
+/// the explained one.
+#[must_use]
+pub fn not_the_pulse(evidence: &Evidence<'_>) -> Option<u16> {
+    let strangeness = evidence.strangeness();
+    let percent = math::round_to_i32(100.0 * math::smaller(strangeness * strangeness, 100.0));
+    (strangeness > NOT_THE_PULSE).then(|| u16::try_from(percent).unwrap_or(u16::MAX))
+}
+
 /// Every doubt that applies.
 #[must_use]
 pub fn doubts(evidence: &Evidence<'_>) -> Doubts {
@@ -246,7 +281,8 @@ pub fn doubts(evidence: &Evidence<'_>) -> Doubts {
         evidence.differing_shift() > expanded + evidence.known_phase(),
         Doubt::OverlappingEcho,
     );
-    doubts.raise_if(evidence.is_strange(), Doubt::PulseMismatch);
+    doubts.raise_if(evidence.strangeness() > UNRECOGNISED, Doubt::PulseMismatch);
+    doubts.raise_if(evidence.has_earlier_echo(), Doubt::EarlierEcho);
     if span == Span::TransmissionPulseToBackWall
         && let Some(first) = evidence.back_wall(1)
     {

@@ -35,6 +35,7 @@ const REFUSALS: &[NoReading] = &[
     NoReading::NotCoupled,
     NoReading::NoInterfaceEcho,
     NoReading::OneEchoWhereTwoAreNeeded { at: Seconds::ZERO },
+    NoReading::NotThePulse { unexplained_percent: 0 },
     NoReading::Ambiguous {
         candidates: 0,
         best: Metres::ZERO,

@@ -34,6 +34,7 @@ impl Refusal {
                 (13, [u32::from(candidates), bits(best.get()), bits(next.get())])
             }
             NoReading::BelowMinimum { minimum } => (14, [bits(minimum.get()), 0, 0]),
+            NoReading::NotThePulse { unexplained_percent } => (15, [u32::from(unexplained_percent), 0, 0]),
             _ => (0, [0; 3]),
         };
         Self { code, evidence }
@@ -74,6 +75,9 @@ impl Refusal {
             14 => NoReading::BelowMinimum {
                 minimum: Metres::new(number(a)),
             },
+            15 => NoReading::NotThePulse {
+                unexplained_percent: u16::try_from(a).ok()?,
+            },
             _ => return None,
         })
     }
@@ -103,6 +107,6 @@ mod tests {
             assert_eq!(back.refusal(), Some(refusal));
             known += 1;
         }
-        assert_eq!(known, 14);
+        assert_eq!(known, 15);
     }
 }
