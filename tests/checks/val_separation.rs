@@ -348,3 +348,72 @@ fn val_separation_with_other_probes() {
         }
     }
 }
+
+/// A data sheet's pulse sampled far more often than it needs: neighbouring samples are averaged on the way to the fit
+/// of its shape, and nothing may be lost by that.
+#[test]
+fn val_separation_of_an_oversampled_modelled_pulse() {
+    let mut random = Random::new(38);
+    for (what, rate) in [("10", 50.0), ("20", 100.0), ("40", 200.0)] {
+        let cell = Cell {
+            frequency_mhz: 5.0,
+            bandwidth_mhz: 3.0,
+            rate_mhz: rate,
+        };
+        let truth = cell.pulse_with_phase(0.2);
+        let mut scratch = Box::new(Scratch::<1024>::ZERO);
+        let mut gauge = cell.modelled_gauge(&mut scratch);
+        // The same energy over the noise: 30 dB at 50 MS/s.
+        let snr = 30.0 - 10.0 * (rate / 50.0f64).log10();
+        for (ratio, x, least) in [(0.0, 0.0, 0), (1.0, 0.15, 95), (0.5, 0.3, 90), (-0.5, 0.5, 95)] {
+            let case = Case {
+                spacing: x * cell.duration_samples(),
+                ..Case::pair(ratio, x, snr)
+            };
+            let cell = crate::val_separation_support::tally_at(&mut gauge, &truth, case, 100, rate, &mut random);
+            println!("modelled pulse, {what} samples a cycle, ratio {ratio:+}, x {x}: {cell}");
+            assert!(
+                cell.right >= least && cell.wrong <= 4,
+                "{what}, ratio {ratio}, x {x}: {cell}"
+            );
+        }
+    }
+}
+
+/// Where both echoes are known to have the reference's shape, they may stand closer: x = 0.1.
+#[test]
+fn val_separation_at_a_tenth_of_the_duration() {
+    let truth = Pulse::of_the_vectors();
+    let mut scratch = Box::new(Scratch::<1024>::ZERO);
+    let gauge = gauge_with_pulse(&mut scratch, Some((&truth, 64, 40.0)));
+    let mut random = Random::new(39);
+    let noise = 800.0 * 10f32.powf(-1.5);
+    for (ratio, least) in [(1.0, 95), (0.5, 95), (-0.5, 85)] {
+        let spacing = 0.1 * 26.25;
+        let (mut right, mut wrong) = (0, 0);
+        for _ in 0..200 {
+            let codes = Case::pair(ratio, 0.1, 30.0).record(&truth, &mut random);
+            let surroundings = Surroundings {
+                record: Record::new(&codes, AdcFormat::signed(12), SampleClock::new(Hertz::new(RATE as f32))),
+                pulse: gauge.pulse(),
+                noise,
+                timing_noise: TimingNoise::steady(noise),
+                samples_per_cycle: 10.0,
+            };
+            let stretch = Stretch {
+                from: 265.0,
+                to: 340.0,
+                least_spacing: 0.06,
+                trust: gauge.pulse_trust(),
+            };
+            let answer = decide(&surroundings, &stretch, &mut [0.0; 512], &mut [0.0; 416]);
+            if let Ok(split) = answer.split {
+                let good = (f64::from(split.spacing) - spacing).abs() < 0.25 * spacing;
+                right += u32::from(good);
+                wrong += u32::from(!good);
+            }
+        }
+        println!("shapes known to be alike, ratio {ratio:+}, x 0.1: right {right}, wrong {wrong} of 200");
+        assert!(right >= 2 * least, "ratio {ratio}: {right} right, {wrong} wrong");
+    }
+}

@@ -168,11 +168,13 @@ pub struct Cell {
 impl Cell {
     /// Its pulse, with a phase that no data sheet tells.
     pub fn pulse(&self) -> Pulse {
-        Pulse::gaussian_at(
-            self.frequency_mhz / self.rate_mhz,
-            self.bandwidth_mhz / self.frequency_mhz,
-            0.6,
-        )
+        self.pulse_with_phase(0.6)
+    }
+
+    /// Its pulse with a phase in radians.
+    pub fn pulse_with_phase(&self, phase: f64) -> Pulse {
+        let relative = self.bandwidth_mhz / self.frequency_mhz;
+        Pulse::gaussian_at(self.frequency_mhz / self.rate_mhz, relative, phase)
     }
 
     /// -20 dB duration of its envelope in samples: 2 sqrt(2 ln 10) sigma.
@@ -186,18 +188,23 @@ impl Cell {
 
     /// A gauge for it that has learned the pulse without noise.
     pub fn gauge<'s>(&self, scratch: &'s mut Scratch<1024>, pulse: &Pulse) -> Gauge<'s> {
-        let rate = self.rate_mhz as f32;
-        let probe = Probe::contact(
-            Hertz::from_mhz(self.frequency_mhz as f32),
-            (self.bandwidth_mhz / self.frequency_mhz) as f32,
-        );
-        let mut gauge = Gauge::new(setup(rate, probe), scratch.workspace()).expect("a sound set-up");
+        let mut gauge = self.modelled_gauge(scratch);
         let mut samples = vec![0.0; 256];
         pulse.add(&mut samples, 128.0, 1.0);
         let reach = (0.8 * self.duration_samples()).ceil() as usize;
         let samples: Vec<f32> = samples[128 - reach..=128 + reach].iter().map(|&x| x as f32).collect();
         gauge.learn_pulse(&samples).expect("the pulse fits");
         gauge
+    }
+
+    /// A gauge for it with the data sheet's pulse.
+    pub fn modelled_gauge<'s>(&self, scratch: &'s mut Scratch<1024>) -> Gauge<'s> {
+        let rate = self.rate_mhz as f32;
+        let probe = Probe::contact(
+            Hertz::from_mhz(self.frequency_mhz as f32),
+            (self.bandwidth_mhz / self.frequency_mhz) as f32,
+        );
+        Gauge::new(setup(rate, probe), scratch.workspace()).expect("a sound set-up")
     }
 }
 

@@ -62,7 +62,7 @@ impl Decision<'_> {
         mean /= window.len().max(1) as f32;
         let model = Model::new(codes.unwrap_or(&[]), mean, pulse, *samples_per_cycle, self.noise);
         let unit = 1.0 / math::sqrt(pulse.facts.energy);
-        let shifted = |place: f32| self.samples(place) + self.lags.start.min(0) as f32;
+        let shifted = |place: f32| model.point_of(self.samples(place) + self.lags.start.min(0) as f32);
 
         let single = Fit {
             first: shifted(self.one.place),
@@ -82,28 +82,33 @@ impl Decision<'_> {
             let _ = fits.push(model.fit(&start, FIRST_STEPS, &mut work));
         }
         let most = fits.iter().fold(0.0, |most, fit| math::larger(most, fit.explained));
-        let hopeless = most - HOPE * (most - one.explained) - 20.0 * self.noise * self.noise;
+        // Energies of points as energies of samples, which the tables' are.
+        let stride = model.stride();
+        let hopeless = most - HOPE * (most - one.explained) - 20.0 * self.noise * self.noise / stride;
         let (mut fit, mut cost) = (Fit::default(), 0.0);
         for (own, pair) in fits.iter_mut().zip(found) {
             if own.explained >= hopeless {
                 *own = model.fit(own, MORE_STEPS, &mut work);
             }
-            let stiffness = STIFFNESS * (best.explained - pair.explained);
+            let stiffness = STIFFNESS * (best.explained - pair.explained) / stride;
             if own.explained - stiffness > fit.explained - cost {
                 (fit, cost) = (*own, stiffness);
             }
         }
-        let offset = base as f32;
-        let left = self.unexplained(fit.first + offset, fit.second + offset, fit.explained);
+        if !(fit.explained > 0.0) {
+            return Answer::refused(Unresolved::OnePulse);
+        }
+        let left = model.unexplained(&fit);
         let mismatch = math::larger(MISMATCH, LEFT_OVER * left);
-        let gained = self.statistic(fit.explained - one.explained, mismatch);
+        let gained = self.statistic(stride * (fit.explained - one.explained), mismatch);
         let stiff = self.statistic(best.explained - self.one.explained(), MISMATCH_STIFF);
-        let spacing = fit.second - fit.first;
+        let spacing = stride * (fit.second - fit.first);
         let others = fits.iter().zip(found).map(|(other, pair)| {
             let stiffness = STIFFNESS * (best.explained - pair.explained);
-            (other.second - other.first, other.explained - stiffness)
+            let apart = stride * (other.second - other.first);
+            (apart, stride * other.explained - stiffness)
         });
-        let lead = self.lead((spacing, fit.explained - cost), others, mismatch);
+        let lead = self.lead((spacing, stride * (fit.explained - cost)), others, mismatch);
         let ratio = (fit.second_amplitude / fit.first_amplitude).abs();
         let sound = ratio >= LEAST_RATIO && ratio * LEAST_RATIO <= 1.0 && fit.spacing_variance > 0.0;
         let split = self.accept(gained, THRESHOLD_FREE, spacing, lead).and_then(|()| {
@@ -111,9 +116,9 @@ impl Decision<'_> {
                 return Err(Unresolved::ModelsDisagree);
             }
             Ok(Split {
-                first: SamplePosition::new(base.unsigned_abs(), fit.first),
+                first: SamplePosition::new(base.unsigned_abs(), model.sample_of(fit.first)),
                 spacing,
-                spacing_uncertainty: math::sqrt(fit.spacing_variance * self.inflation(mismatch)),
+                spacing_uncertainty: stride * math::sqrt(fit.spacing_variance * self.inflation(mismatch)),
                 first_amplitude: fit.first_amplitude,
                 second_amplitude: fit.second_amplitude,
             })

@@ -7,6 +7,7 @@
 //! one echo too. Gauss-Newton with Marquardt's damping (1963, from memory) on the samples themselves.
 
 use super::equations::solve;
+use super::lags::step;
 use crate::echo::pulse::ReferencePulse;
 use crate::math;
 
@@ -26,29 +27,31 @@ const SUPPORT: f32 = 3.1;
 /// delay of the second.
 const COUNT: usize = 8;
 
-/// What the fit knows from the start.
+/// What the fit knows from the start. It counts in points: means of as many neighbouring samples as leave 8 to 16 points a
+/// cycle, so that its work does not grow with the sample rate.
 #[derive(Clone, Copy, Debug)]
 pub struct Model<'a> {
-    /// The record.
-    pub codes: &'a [i16],
+    codes: &'a [i16],
+    /// Samples a point.
+    stride: usize,
     /// What a code of no signal is.
-    pub mean: f32,
-    /// Radians a sample of the centre frequency.
-    pub turn: f32,
-    /// The envelope's standard deviation in samples.
-    pub sigma: f32,
-    /// Root mean square of the noise, in codes.
-    pub noise: f32,
+    mean: f32,
+    /// Radians a point of the centre frequency.
+    turn: f32,
+    /// The envelope's standard deviation in points.
+    sigma: f32,
+    /// Root mean square of a point's noise, in codes.
+    noise: f32,
 }
 
 /// Where a fit stands or starts.
 #[derive(Clone, Copy, Debug, Default)]
 pub struct Fit {
-    /// Sample of the first echo's middle.
+    /// Point of the first echo's middle ([`Model::point_of`]).
     pub first: f32,
     /// Its amplitude in codes.
     pub first_amplitude: f32,
-    /// Sample of the second echo's middle.
+    /// Point of the second echo's middle.
     pub second: f32,
     /// Its amplitude; 0 in a fit of one.
     pub second_amplitude: f32,
@@ -60,9 +63,9 @@ pub struct Fit {
     pub width: f32,
     /// Skewness γ.
     pub skew: f32,
-    /// Energy that is explained, less what the change of shape costs as prior knowledge sees it.
+    /// Energy of the points that is explained, less what the change of shape costs as prior knowledge sees it.
     pub explained: f32,
-    /// Variance of the spacing in samples²; for a fit of two that has come to its end.
+    /// Variance of the spacing in points²; for a fit of two that has come to its end.
     pub spacing_variance: f32,
 }
 
@@ -91,16 +94,86 @@ impl<'w> Work<'w> {
 pub const WORK: usize = 2 * COUNT * (COUNT + 1);
 
 impl<'a> Model<'a> {
-    /// Takes the figures of the modelled pulse.
+    /// Takes the figures of the modelled pulse; `noise` is that of a sample.
     #[must_use]
     pub fn new(codes: &'a [i16], mean: f32, pulse: &ReferencePulse<'_>, samples_per_cycle: f32, noise: f32) -> Self {
+        let stride = step(samples_per_cycle);
+        let samples = stride as f32;
         Self {
             codes,
+            stride,
             mean,
-            turn: core::f32::consts::TAU / samples_per_cycle,
-            sigma: pulse.facts.envelope_duration / DURATION_OVER_SIGMA,
-            noise,
+            turn: core::f32::consts::TAU * samples / samples_per_cycle,
+            sigma: pulse.facts.envelope_duration / (DURATION_OVER_SIGMA * samples),
+            noise: noise / math::sqrt(samples),
         }
+    }
+
+    /// The point at a sample of the codes.
+    #[must_use]
+    pub fn point_of(&self, sample: f32) -> f32 {
+        let samples = self.stride as f32;
+        (sample - 0.5 * (samples - 1.0)) / samples
+    }
+
+    /// The sample at a point.
+    #[must_use]
+    pub fn sample_of(&self, point: f32) -> f32 {
+        let samples = self.stride as f32;
+        point * samples + 0.5 * (samples - 1.0)
+    }
+
+    /// Samples a point: energies of points times this are energies of samples.
+    #[must_use]
+    pub fn stride(&self) -> f32 {
+        self.stride as f32
+    }
+
+    /// Share of the explained energy that a fit leaves unexplained, less what noise explains with three standard
+    /// deviations to spare.
+    #[must_use]
+    pub fn unexplained(&self, fit: &Fit) -> f32 {
+        let (first, count) = self.support(fit);
+        let (mut sum, mut squares, mut points) = (0.0, 0.0, 0.0);
+        for signal in self.signals(first, count) {
+            sum += signal;
+            squares += signal * signal;
+            points += 1.0;
+        }
+        let energy = squares - sum * (sum / math::larger(points, 1.0));
+        let freedom = math::larger(points - 5.0, 1.0);
+        let by_noise = self.noise * self.noise * (freedom + 3.0 * math::sqrt(2.0 * freedom));
+        math::larger(energy - fit.explained - by_noise, 0.0) / fit.explained
+    }
+
+    /// First point and number of points under the pulses of a fit.
+    fn support(&self, fit: &Fit) -> (usize, usize) {
+        let sigma = self.sigma * (1.0 + fit.width);
+        let (early, late) = if fit.second_amplitude == 0.0 {
+            (fit.first, fit.first)
+        } else {
+            (
+                math::smaller(fit.first, fit.second),
+                math::larger(fit.first, fit.second),
+            )
+        };
+        let whole = |place: f32| usize::try_from(math::saturating_i32(math::floor(place))).unwrap_or(0);
+        let begin = whole(early - SUPPORT * sigma);
+        (begin, whole(late + SUPPORT * sigma + 1.0).saturating_sub(begin))
+    }
+
+    /// Points without the mean.
+    fn signals(&self, first: usize, count: usize) -> impl Iterator<Item = f32> {
+        let codes = self.codes.get(first.saturating_mul(self.stride)..).unwrap_or(&[]);
+        let share = 1.0 / self.stride as f32;
+        let mean = self.mean;
+        codes.chunks_exact(self.stride.max(1)).take(count).map(move |codes| {
+            let mut sum = 0.0;
+            for &code in codes {
+                sum += f32::from(code);
+            }
+            sum * share - mean
+        })
     }
 
     /// Fits from a start, one echo (`second_amplitude` is 0 and stays it) or two, in so many steps at most.
@@ -173,20 +246,8 @@ impl<'a> Model<'a> {
         let mut right = [0.0; COUNT];
         let sigma = self.sigma * (1.0 + fit.width);
         let turn = self.turn * (1.0 + fit.frequency);
-        let (early, late) = if fit.second_amplitude == 0.0 {
-            (fit.first, fit.first)
-        } else {
-            (
-                math::smaller(fit.first, fit.second),
-                math::larger(fit.first, fit.second),
-            )
-        };
-        let begin = math::larger(math::floor(early - SUPPORT * sigma), 0.0);
-        let end = math::larger(math::floor(late + SUPPORT * sigma) + 1.0, 0.0);
-        let whole = |place: f32| usize::try_from(math::saturating_i32(place)).unwrap_or(0);
-        let codes = self.codes.get(whole(begin)..).unwrap_or(&[]);
-        let codes = codes.get(..codes.len().min(whole(end - begin))).unwrap_or(&[]);
-
+        let (first, count) = self.support(fit);
+        let begin = first as f32;
         let inverse = 1.0 / scale;
         let (b1, b2) = (fit.first_amplitude * inverse, fit.second_amplitude * inverse);
         let mut one = Wave::new(begin - fit.first, sigma, turn, fit);
@@ -195,8 +256,8 @@ impl<'a> Model<'a> {
         let narrow = 1.0 / (sigma * self.turn);
         let ratio = turn / self.turn;
         let mut explained = 0.0;
-        for &code in codes {
-            let signal = (f32::from(code) - self.mean) * inverse;
+        for signal in self.signals(first, count) {
+            let signal = signal * inverse;
             let left = signal - b1 * one.direct - b2 * two.direct;
             explained += signal * signal - left * left;
             let slopes = [
