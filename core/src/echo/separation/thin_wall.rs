@@ -35,7 +35,7 @@ const FAINT: f32 = 0.01;
 /// How far the start is looked for to either side of the highest correlation, in cycles.
 const START: f32 = 0.5;
 /// Starts of the polish.
-const STARTS: usize = 6;
+const STARTS: usize = 4;
 /// Most steps of a polish.
 const STEPS: u8 = 20;
 /// Least 2 ln Λ of a wall over none, and of the best period over any other.
@@ -171,13 +171,8 @@ struct Alike {
     value: [f32; PULSES],
     slope: [f32; PULSES],
     down: [f32; PULSES],
-}
-
-/// The window's correlation and its slope at every pulse of the model.
-struct Seen {
-    value: [f32; PULSES],
-    slope: [f32; PULSES],
-    count: usize,
+    /// Multiples of the period at which pulses still look alike.
+    reach: usize,
 }
 
 /// Shares of every pulse and of its derivative (by its delay) in one of the five numbers' slopes.
@@ -260,10 +255,13 @@ impl Train<'_> {
                 with += weight * alike.get(number).copied().unwrap_or(0.0);
                 weight *= decay;
             }
-            for (number, a) in weights.iter().enumerate() {
-                for (other, b) in weights.iter().enumerate() {
-                    own += a * b * alike.get(number.abs_diff(other)).copied().unwrap_or(0.0);
+            // Pulses `apart` multiples from each other: their weights' products, both ways round.
+            for (apart, alike) in alike.iter().enumerate().take_while(|(_, alike)| **alike != 0.0) {
+                let mut products = 0.0;
+                for (a, b) in weights.iter().zip(weights.iter().skip(apart)) {
+                    products += a * b;
                 }
+                own += if apart == 0 { 1.0 } else { 2.0 } * alike * products;
             }
             let determinant = own - with * with;
             if !(determinant > 1e-6) {
@@ -367,40 +365,22 @@ impl Train<'_> {
         let seen = self.seen(fit, count);
         let columns = columns(fit, count);
         // The model itself: both amplitudes' columns.
-        let mut model = [0.0; PULSES];
+        let mut model = Column::EMPTY;
         let [interface, wall, ..] = &columns;
-        for ((value, b), a) in model.iter_mut().zip(&interface.pulse).zip(&wall.pulse) {
+        for ((value, b), a) in model.pulse.iter_mut().zip(&interface.pulse).zip(&wall.pulse) {
             *value = fit.interface * b + fit.wall * a;
         }
-        let nothing = [0.0; PULSES];
-        let mut explained = 0.0;
-        for (share, value) in model.iter().zip(&seen.value) {
-            explained += 2.0 * share * value;
-        }
-        explained -= alike.product(&model, &nothing, &model, &nothing, count);
+        let of_model = alike.seen_by_each(&model, count);
+        let explained = 2.0 * model.times(&seen, count) - model.times(&of_model, count);
         let mut rows = [[0.0; COUNT + 1]; COUNT];
+        for (number, other) in columns.iter().enumerate() {
+            let of_other = alike.seen_by_each(other, count);
+            for (row, column) in rows.iter_mut().zip(&columns) {
+                *row.get_mut(number)? = column.times(&of_other, count);
+            }
+        }
         for (row, column) in rows.iter_mut().zip(&columns) {
-            let (right, cells) = row.split_last_mut()?;
-            for (cell, other) in cells.iter_mut().zip(&columns) {
-                *cell = alike.product(
-                    &column.pulse,
-                    &column.derivative,
-                    &other.pulse,
-                    &other.derivative,
-                    count,
-                );
-            }
-            for (((p, q), value), slope) in column
-                .pulse
-                .iter()
-                .zip(&column.derivative)
-                .zip(&seen.value)
-                .zip(&seen.slope)
-                .take(seen.count)
-            {
-                *right += p * value + q * slope;
-            }
-            *right -= alike.product(&column.pulse, &column.derivative, &model, &nothing, count);
+            *row.last_mut()? = column.times(&seen, count) - column.times(&of_model, count);
         }
         Some((rows, explained))
     }
@@ -410,6 +390,7 @@ impl Train<'_> {
             value: [0.0; PULSES],
             slope: [0.0; PULSES],
             down: [0.0; PULSES],
+            reach: usize::try_from(math::saturating_i32(self.lags.longest() / period)).unwrap_or(0),
         };
         for (number, ((value, slope), down)) in alike
             .value
@@ -428,13 +409,11 @@ impl Train<'_> {
         alike
     }
 
-    fn seen(&self, fit: &Fit, count: usize) -> Seen {
-        let mut seen = Seen {
-            value: [0.0; PULSES],
-            slope: [0.0; PULSES],
-            count,
-        };
-        for (number, (value, slope)) in seen.value.iter_mut().zip(&mut seen.slope).enumerate().take(count) {
+    /// The window's correlation at every pulse of the model, and its slope.
+    fn seen(&self, fit: &Fit, count: usize) -> Column {
+        let mut seen = Column::EMPTY;
+        let Column { pulse, derivative } = &mut seen;
+        for (number, (value, slope)) in pulse.iter_mut().zip(derivative).enumerate().take(count) {
             let local = self.lags.around(fit.start + number as f32 * fit.period);
             (*value, *slope) = (local.value, local.slope);
         }
@@ -443,22 +422,39 @@ impl Train<'_> {
 }
 
 impl Alike {
-    /// Inner product of two sums of pulses and their derivatives by delay.
-    fn product(&self, p: &[f32], q: &[f32], other_p: &[f32], other_q: &[f32], count: usize) -> f32 {
-        let mut sum = 0.0;
-        for (i, (p, q)) in p.iter().zip(q).enumerate().take(count) {
-            if *p == 0.0 && *q == 0.0 {
-                continue;
-            }
-            for (j, (other_p, other_q)) in other_p.iter().zip(other_q).enumerate().take(count) {
+    /// What a sum of pulses and derivatives looks like to every pulse and to every derivative: inner products with a
+    /// second sum are then plain sums of products.
+    fn seen_by_each(&self, column: &Column, count: usize) -> Column {
+        let mut seen = Column::EMPTY;
+        for (i, (pulse, derivative)) in seen.pulse.iter_mut().zip(&mut seen.derivative).enumerate().take(count) {
+            let near = column.pulse.iter().zip(&column.derivative).enumerate().take(count);
+            for (j, (p, q)) in near.skip(i.saturating_sub(self.reach)).take(2 * self.reach + 1) {
                 let apart = i.abs_diff(j);
                 let get = |table: &[f32; PULSES]| table.get(apart).copied().unwrap_or(0.0);
-                // d/dt_j of the likeness of pulses i and j, odd in their distance.
+                // The derivative of the likeness by the second delay is odd in their distance.
                 let slope = if j >= i { get(&self.slope) } else { -get(&self.slope) };
-                sum += (p * other_p) * get(&self.value)
-                    + (p * other_q - q * other_p) * slope
-                    + (q * other_q) * get(&self.down);
+                *pulse += p * get(&self.value) + q * slope;
+                *derivative += q * get(&self.down) - p * slope;
             }
+        }
+        seen
+    }
+}
+
+impl Column {
+    const EMPTY: Self = Self {
+        pulse: [0.0; PULSES],
+        derivative: [0.0; PULSES],
+    };
+
+    /// Sum of products with what [`Alike::seen_by_each`] or the record gives.
+    fn times(&self, seen: &Self, count: usize) -> f32 {
+        let mut sum = 0.0;
+        for (a, b) in self.pulse.iter().zip(&seen.pulse).take(count) {
+            sum += a * b;
+        }
+        for (a, b) in self.derivative.iter().zip(&seen.derivative).take(count) {
+            sum += a * b;
         }
         sum
     }
@@ -466,10 +462,7 @@ impl Alike {
 
 /// The slopes of the model by its five numbers.
 fn columns(fit: &Fit, count: usize) -> [Column; COUNT] {
-    let empty = Column {
-        pulse: [0.0; PULSES],
-        derivative: [0.0; PULSES],
-    };
+    let empty = Column::EMPTY;
     let (mut interface, mut wall, mut start, mut period, mut decay) = (empty, empty, empty, empty, empty);
     if let (Some(pulse), Some(derivative)) = (interface.pulse.first_mut(), start.derivative.first_mut()) {
         (*pulse, *derivative) = (1.0, fit.interface);
