@@ -44,7 +44,8 @@ impl Gauge<'_> {
     /// Reads a wall behind a delay line whose echoes overlap with the interface echo and with each other, from 0.3 pulse durations
     /// of period on (0.47 mm of steel at 5 MHz, 60 %): where [`Gauge::measure`] has answered
     /// [`crate::NoReading::BelowMinimum`] or found no train. The wall is half the period times the velocity; the period's
-    /// uncertainty is that of noise and pulse alone. Needs a learned pulse.
+    /// uncertainty is that of noise and pulse alone. Needs a learned pulse. It takes some 5 million instructions on a Cortex-M4F
+    /// (30 ms at 170 MHz) and 4 KiB of stack.
     ///
     /// `record` must be the one that was measured last.
     ///
