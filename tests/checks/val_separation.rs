@@ -15,6 +15,7 @@ use halfpulse::setup::PULSE_CAPACITY;
 use halfpulse::{AdcFormat, Gauge, Hertz, Record, SampleClock, Scratch};
 use halfpulse_tests::oracle::{self, Random};
 use halfpulse_tests::published::{Table, code_rows, number_rows};
+use halfpulse_tests::readme;
 
 /// The 32 records of `pairs.csv`: NumPy's exhaustive search and maximum-likelihood fit of one and two pulses
 /// (`tests/published/README.md`). Where two explain less than one, only the verdict can be compared.
@@ -112,6 +113,7 @@ fn val_separation_with_a_learned_pulse() {
     let single = tally(&mut gauge, &truth, Case::single(30.0), 1000, &mut random);
     println!("learned pulse, one echo: split {}", single.wrong_share());
     assert!(single.wrong <= 10, "{} of 1000 single echoes split", single.wrong);
+    let mut closest = Vec::new();
     for row in Table::read("vectors/pair_bound.csv").rows() {
         let (ratio, x) = (row.number("ratio"), row.number("x"));
         let cell = tally(&mut gauge, &truth, Case::pair(ratio, x, 30.0), SHOTS, &mut random);
@@ -134,7 +136,20 @@ fn val_separation_with_a_learned_pulse() {
             "ratio {ratio}, x {x}: {} within k = 2",
             cell.covered
         );
+        if x == 0.15 {
+            closest.push(format!("{:.0}", 100.0 * cell.right as f64 / SHOTS as f64));
+        }
     }
+    readme::figure(
+        "echoes 0.15 pulse durations apart (classical limit: 1), 30 dB, learned pulse, amplitudes 1 / 0.5 / -0.5: told apart, spacing right",
+        &format!("{} %", closest.join(" / ")),
+        "val_separation",
+    );
+    readme::figure(
+        "single echoes taken for two: learned pulse",
+        &format!("{} of 1000", single.wrong),
+        "val_separation",
+    );
 }
 
 /// What attenuation in the part does to a single echo (spectrum times exp(-beta (f - f0) / f0), which moves the centre frequency
@@ -188,6 +203,13 @@ fn val_separation_with_a_modelled_pulse() {
             "{what}: {} of 300 single echoes split",
             single.wrong
         );
+        if !sole {
+            readme::figure(
+                "the same with a modelled pulse whose frequency (5 %), phase (20 degrees) and bandwidth (10 %) are wrong",
+                &format!("{} of 300", single.wrong),
+                "val_separation",
+            );
+        }
         for (ratio, x) in [
             (1.0, 0.15),
             (1.0, 0.25),
