@@ -439,3 +439,34 @@ fn val_separation_at_a_tenth_of_the_duration() {
         assert!(right >= 2 * least, "ratio {ratio}: {right} right, {wrong} wrong");
     }
 }
+
+/// What moves arrivals more than the noise of a sample says (grain) counts where it stands above it: three times the noise,
+/// a ninth of the logarithm of the odds.
+#[test]
+fn law_separation_in_grain() {
+    let truth = Pulse::of_the_vectors();
+    let mut scratch = Box::new(Scratch::<1024>::ZERO);
+    let gauge = gauge_with_pulse(&mut scratch, Some((&truth, 64, 40.0)));
+    let codes = Case::pair(0.5, 0.4, 30.0).record(&truth, &mut Random::new(40));
+    let noise = 800.0 * 10f32.powf(-1.5);
+    let odds = |timing: f32| {
+        let surroundings = Surroundings {
+            record: Record::new(&codes, AdcFormat::signed(12), SampleClock::new(Hertz::new(RATE as f32))),
+            pulse: gauge.pulse(),
+            noise,
+            timing_noise: TimingNoise::steady(timing),
+            samples_per_cycle: 10.0,
+        };
+        let stretch = Stretch {
+            from: 265.0,
+            to: 345.0,
+            least_spacing: 0.12,
+            trust: PulseTrust::Learned { mismatch: 0.0 },
+        };
+        let answer = decide(&surroundings, &stretch, &mut [0.0; 512], &mut [0.0; 416]);
+        answer.log_odds.expect("a fit")
+    };
+    let alone = odds(noise);
+    assert!((odds(3.0 * noise) * 9.0 / alone - 1.0).abs() < 1e-3, "{alone}");
+    assert_eq!(odds(0.5 * noise), alone, "a quieter estimate of the same noise");
+}
