@@ -6,7 +6,7 @@ use crate::echo::noise::{Noise, TimingNoise, listen, reached};
 use crate::echo::pulse::{PulseContext, PulseFacts, ReferencePulse, measure_pulse};
 use crate::echo::scan::{CANDIDATE_CAPACITY, Candidate, Scan, scan};
 use crate::echo::separation::{judge, nearest_pair};
-use crate::echo::train::{Hypothesis, Rules, Train, Undecided, choose, fit};
+use crate::echo::train::{Hypothesis, Rules, Train, Undecided, choose, fit, holds_thinner};
 use crate::echo::{Echo, EchoRole, Surroundings, measure_echoes};
 use crate::math;
 use crate::order;
@@ -160,6 +160,10 @@ impl Gauge<'_> {
             echo.reassess(&heard, &surroundings);
         }
         let fitted = fit(&surroundings, &mut self.findings.echoes, &rules, &hypothesis, lags);
+        let fitted = fitted.map(|train| Train {
+            thinner_too: holds_thinner(&surroundings, &self.findings.echoes, &rules, &train),
+            ..train
+        });
         let train = fitted.map_err(|why| self.undecided(record, noise, why))?;
         self.findings.train = Some(train);
         Ok(train)

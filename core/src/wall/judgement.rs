@@ -34,10 +34,6 @@ const BEYOND_CHANCE: f32 = 3.0;
 /// Unexplained over explained amplitude from which what came back is not the pulse at all. An evenly attenuated pulse or one of half the
 /// bandwidth stays below 0.5; spikes and ringing lie between 0.85 and 5.
 const NOT_THE_PULSE: f32 = 0.85;
-/// Standard deviations of an amplitude above which a peak before the back wall is an echo: among the hundred independent
-/// values of a record, chance reaches 4.
-const EARLIER_ECHO: f32 = 6.0;
-
 /// What a reading rests on.
 #[derive(Clone, Copy, Debug)]
 pub struct Evidence<'a> {
@@ -152,22 +148,26 @@ impl Evidence<'_> {
             .fold(0.0, |m, echo| math::larger(m, echo.mismatch))
     }
 
+    /// Does the strongest of the echoes that the reading rests on stand out of grain and noise? A lone one must.
+    fn stands_out(&self) -> bool {
+        self.used()
+            .any(|echo| self.surroundings.stands_out(echo.amplitude, echo.position.as_samples()))
+    }
+
     /// Did something that looks like the pulse come back before the first back wall that was seen, and after the surface?
     fn has_earlier_echo(&self) -> bool {
         let Some(first) = self.back_wall(self.train.first_multiple) else {
             return false;
         };
-        let facts = &self.surroundings.pulse.facts;
         let surface = self
             .interface()
             .map_or(self.setup.zero.offset, |interface| interface.arrival);
         self.echoes.iter().any(|echo| {
-            let noise = self.surroundings.timing_noise.at(echo.position.as_samples()) / math::sqrt(facts.energy);
             echo.role == EchoRole::Other
                 && echo.arrival > surface
                 && echo.arrival < first.arrival
                 && echo.mismatch < UNRECOGNISED
-                && echo.amplitude > EARLIER_ECHO * noise
+                && self.surroundings.stands_out(echo.amplitude, echo.position.as_samples())
         })
     }
 
@@ -282,7 +282,7 @@ pub fn doubts(evidence: &Evidence<'_>) -> Doubts {
         Doubt::OverlappingEcho,
     );
     doubts.raise_if(evidence.strangeness() > UNRECOGNISED, Doubt::PulseMismatch);
-    doubts.raise_if(evidence.has_earlier_echo(), Doubt::EarlierEcho);
+    doubts.raise_if(train.thinner_too || evidence.has_earlier_echo(), Doubt::EarlierEcho);
     if span == Span::TransmissionPulseToBackWall
         && let Some(first) = evidence.back_wall(1)
     {
@@ -292,6 +292,7 @@ pub fn doubts(evidence: &Evidence<'_>) -> Doubts {
         );
     }
     doubts.raise_if(wrong_cycle_probability(evidence) > WRONG_CYCLE_LIMIT, Doubt::LowSignal);
+    doubts.raise_if(!evidence.stands_out(), Doubt::LowSignal);
     // A single block covers a point. How far the part lies from it stands in the budget already (velocity,
     // beam); what only a second block shows, a velocity that changes, its stated uncertainty must cover.
     if let Some(range) = setup.calibrated

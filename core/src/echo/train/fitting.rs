@@ -197,17 +197,38 @@ pub(super) fn fit(
         start_difference: first.as_samples() - line.before_first() - rules.start,
         unevenness,
         freedom,
-        unexplained: unexplained(echoes, rules),
-        may_be_double: best.hidden,
+        unexplained: unexplained(surroundings, echoes, rules),
+        thinner_too: false,
+        may_be_double: best.hidden || is_halved(surroundings, echoes, first, line.period),
+    })
+}
+
+/// Does an echo stronger than the second multiple stand half-way between the first and the second? A beam's spreading turns the
+/// phase from multiple to multiple, so that every other one can look upside down and half a cycle off.
+fn is_halved(surroundings: &Surroundings<'_>, echoes: &EchoList, first: SamplePosition, period: f32) -> bool {
+    let second = echoes.iter().find(|echo| {
+        matches!(echo.role, EchoRole::BackWall(_))
+            && (echo.position.samples_after(first) - period).abs() < 0.5 * surroundings.samples_per_cycle
+    });
+    let Some(second) = second else {
+        return false;
+    };
+    echoes.iter().any(|echo| {
+        echo.role == EchoRole::Other
+            && echo.amplitude > second.amplitude
+            && (echo.position.samples_after(first) - 0.5 * period).abs() < 0.75 * surroundings.samples_per_cycle
     })
 }
 
 /// Energy of what stands between the multiples over theirs. What does not look like the pulse (the tail of a strong
 /// interface echo) counts by the share of it that does.
-fn unexplained(echoes: &EchoList, rules: &Rules<'_>) -> f32 {
+fn unexplained(surroundings: &Surroundings<'_>, echoes: &EchoList, rules: &Rules<'_>) -> f32 {
     let (mut explained, mut left) = (0.0, 0.0);
     for echo in echoes {
         let place = echo.position.as_samples();
+        if !surroundings.stands_out(echo.amplitude, place) {
+            continue;
+        }
         let energy = echo.amplitude * echo.amplitude;
         match echo.role {
             EchoRole::BackWall(_) => explained += energy,

@@ -24,7 +24,7 @@
 mod choosing;
 mod fitting;
 
-use crate::echo::{EchoList, Surroundings};
+use crate::echo::{Echo, EchoList, EchoRole, Surroundings};
 use crate::math;
 use crate::path::PathLaw;
 use crate::units::SamplePosition;
@@ -93,8 +93,10 @@ pub struct Train {
     pub freedom: u8,
     /// Energy of the echoes inside the window, behind the start, that no multiple explains, over that of the multiples.
     pub unexplained: f32,
+    /// Beside this train the echoes hold another one of a thinner wall: a pit, a step or a lamination under the probe.
+    pub thinner_too: bool,
     /// A wall of half or a third of this thickness would have its first echo in the dead zone and is not excluded by
-    /// the others.
+    /// the others; or an echo stronger than the second multiple stands half-way to it.
     pub may_be_double: bool,
 }
 
@@ -148,6 +150,30 @@ pub fn fit(
 ) -> Result<Train, Undecided> {
     fitting::fit(surroundings, echoes, rules, choice, tolerance(surroundings), lags).ok_or(Undecided::NoTrain)
 }
+
+/// Do the echoes that a fitted train has left over hold the train of a thinner wall, from the same start on? Grain's peaks
+/// are as many, but each of them speaks against every train that the others might be.
+#[must_use]
+#[inline(never)]
+pub fn holds_thinner(surroundings: &Surroundings<'_>, echoes: &EchoList, rules: &Rules<'_>, train: &Train) -> bool {
+    let first = train.first.as_samples();
+    let before = |echo: &&Echo| {
+        let place = echo.position.as_samples();
+        echo.role == EchoRole::Other && place > rules.start && place < first
+    };
+    if echoes.iter().filter(before).count() == 0 {
+        return false;
+    }
+    let tolerance = tolerance(surroundings);
+    choosing::choose(surroundings, echoes, rules, tolerance).is_ok_and(|other| {
+        other.score > SECOND_TRAIN
+            && other.period < train.period
+            && (other.zero - rules.start).abs() < rules.start_tolerance + tolerance
+    })
+}
+
+/// Score from which a second train is believed: two echoes that speak for it with all their weight.
+const SECOND_TRAIN: f32 = 6.0;
 
 /// How far from its tooth, in samples, an echo may lie.
 fn tolerance(surroundings: &Surroundings<'_>) -> f32 {
