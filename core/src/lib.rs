@@ -83,10 +83,12 @@ pub mod echo;
 pub mod wall;
 pub mod gauge;
 
+pub use echo::shots::{Jitter, ShotArrivals};
 pub use echo::{Echo, EchoList, EchoRole, Polarity};
 pub use gauge::{CoatingReading, Findings, Gauge, Reading};
 pub use outcome::{Doubt, Doubts, NoReading};
 pub use record::average::{AverageError, Averager, Interleaver};
+pub use record::movement::{Movement, movement};
 pub use record::{AdcFormat, Record, SampleClock};
 pub use setup::{
     CalibratedRange, Coating, DelayLine, EchoSign, ElementSeparation, GaugeSetup, Material, PartTemperature, Probe,

@@ -178,6 +178,7 @@ fn setup() -> GaugeSetup {
         coverage_factor: 2.0,
         coating: None,
         calibrated: None,
+        trigger_jitter: Seconds::ZERO,
     }
 }
 

@@ -6,7 +6,7 @@ use halfpulse::wall::calibration::{velocity_from_thickness, zero_and_velocity, z
 use halfpulse::{
     AdcFormat, Averager, Block, CalibratedRange, Celsius, Coating, DelayLine, EchoRole, ElementSeparation, Gauge,
     GaugeSetup, Hertz, Interleaver, Material, Metres, MetresPerSecond, NoReading, PartTemperature, Probe, Reading,
-    Record, SampleClock, Scratch, Seconds, Span, VelocityTemperature, Window, Zero,
+    Record, SampleClock, Scratch, Seconds, Span, VelocityTemperature, Window, Zero, movement,
 };
 use halfpulse_tests::oracle::{self, Random};
 use proptest::prelude::*;
@@ -171,6 +171,7 @@ prop_compose! {
             coverage_factor: coverage,
             coating: coating.map(|velocity| Coating { velocity: MetresPerSecond::new(velocity) }),
             calibrated: calibrated.map(|(from, to)| CalibratedRange { from: Metres::new(from), to: Metres::new(to) }),
+            trigger_jitter: Seconds::new(zero.1),
         }
     }
 }
@@ -463,7 +464,9 @@ proptest! {
             let _ = averager.add(&record);
             if let Some(interleaver) = &mut interleaver {
                 let _ = interleaver.add(&record);
+                let _ = interleaver.again(&record);
             }
+            let _ = movement(&record, &record);
         }
         let mut scratch = Box::new(Scratch::<SAMPLES>::ZERO);
         let mut gauge = Gauge::new(usual(), scratch.workspace()).expect("a sound set-up");

@@ -2,7 +2,7 @@
 //!
 //! The steps in the order of the signal: [`scan`] finds candidates in the whole record with integers;
 //! [`measure_echoes`] fits the reference pulse at each candidate, in a short `f32` window;
-//! [`learning`] makes the reference pulse from a block's shots; [`separation`] says whether neighbours can be told apart; [`train`] finds the multiples of one wall.
+//! [`learning`] makes the reference pulse from a block's shots; [`shots`] tells jitter from arrivals shot by shot; [`separation`] says whether neighbours can be told apart; [`train`] finds the multiples of one wall.
 
 pub mod envelope;
 pub mod interpolate;
@@ -15,6 +15,7 @@ pub mod scan;
 pub mod noise;
 pub mod separation;
 pub mod train;
+pub mod shots;
 
 use crate::echo::arrival::{Arrival, Estimator, Search, estimate, group_lag_noise};
 use crate::echo::clipping::{is_cut, mend};

@@ -180,7 +180,8 @@ pub fn times(setup: &GaugeSetup, law: &PathLaw<'_>, record: &Record<'_>, train: 
     if let Some(interface) = interface {
         times = times.with_interface(interface);
     }
-    times
+    let shots = f32::from(record.format().shots.max(1));
+    times.with_jitter(setup.trigger_jitter * (1.0 / math::sqrt(shots)))
 }
 
 /// The strongest echo that is not clipped, a back wall if there is one, and its distance in samples

@@ -1,10 +1,11 @@
 //! Records to a better record: coherent averaging, interleaving of delayed shots, the next gain step.
 //!
-//! All of it works sample by sample and knows nothing of echoes. Probe and part must not move between shots, and
-//! shots must be further apart than the reverberation lasts. Averaging gains the square root of the number of shots
+//! All of it works sample by sample and knows nothing of echoes. Probe and part must not move between shots
+//! (`super::movement` and [`crate::echo::shots`] notice it), and shots must be further apart than the reverberation lasts. Averaging gains the square root of the number of shots
 //! only while the noise is at least 0.4 steps of the converter: below that the rounding errors repeat themselves.
 
 use crate::math;
+use crate::record::movement::{Movement, Pair, rails};
 use crate::record::{AdcFormat, Record, RecordHealth, SampleClock};
 use crate::units::{Decibels, Hertz, Seconds};
 use core::fmt;
@@ -255,16 +256,8 @@ impl<'c> Interleaver<'c> {
     /// A clock that is more than a tenth of a dense sample off its place, a phase that is there already, another length or
     /// format, no room. Nothing is changed then.
     pub fn add(&mut self, record: &Record<'_>) -> Result<(), AverageError> {
-        let (codes, clock) = (record.codes(), record.clock());
-        let rate_error = (clock.rate / self.base_rate - 1.0).abs();
-        let place = self.clock.samples_at(clock.first_sample);
-        let nearest = math::round_to_i32(place);
-        // Written so that "not a number" is refused.
-        let fits = rate_error < 1e-6 && (place - nearest as f32).abs() < 0.1;
-        let phase = u8::try_from(nearest).unwrap_or(u8::MAX);
-        if !fits || phase >= self.phases {
-            return Err(AverageError::ClockChanged);
-        }
+        let codes = record.codes();
+        let phase = self.phase(&record.clock())?;
         let bit = 1u64 << (phase & 63);
         if self.present & bit != 0 {
             return Err(AverageError::PhaseTwice { phase });
@@ -294,11 +287,59 @@ impl<'c> Interleaver<'c> {
         Ok(())
     }
 
+    /// Where a shot of this clock belongs.
+    fn phase(&self, clock: &SampleClock) -> Result<u8, AverageError> {
+        let rate_error = (clock.rate / self.base_rate - 1.0).abs();
+        let place = self.clock.samples_at(clock.first_sample);
+        let nearest = math::round_to_i32(place);
+        // Written so that "not a number" is refused.
+        let fits = rate_error < 1e-6 && (place - nearest as f32).abs() < 0.1;
+        let phase = u8::try_from(nearest).unwrap_or(u8::MAX);
+        if fits && phase < self.phases {
+            Ok(phase)
+        } else {
+            Err(AverageError::ClockChanged)
+        }
+    }
+
+    /// Compares a further shot of any delay with the one that is there, once all are: fire the first delay again at the end,
+    /// and use the dense record only if [`Movement::has_moved`] says no. What one delay tells of a movement is
+    /// about the square root of the phases less certain than what a whole second round would: repeat more of them, and
+    /// join them by [`Movement::with`], where that matters. The dense record stays as it is.
+    ///
+    /// # Errors
+    /// [`AverageError::PhasesMissing`]; a shot that does not fit, as for [`Interleaver::add`]; [`AverageError::Nothing`] if
+    /// too few samples are whole to tell (fewer than 16 of the shot's).
+    pub fn again(&self, record: &Record<'_>) -> Result<Movement, AverageError> {
+        let shape = self.whole()?;
+        let length = shape.length.saturating_mul(usize::from(self.phases));
+        let dense = Record::new(self.codes.get(..length).unwrap_or(&[]), shape.format, self.clock);
+        shape.check(record)?;
+        let phase = self.phase(&record.clock())?;
+        let pair = Pair {
+            dense: &dense,
+            step: usize::from(self.phases),
+            first: usize::from(phase),
+            second: record,
+            offset: offset(record.codes()) as i32,
+            rails: rails(record),
+        };
+        pair.compare().ok_or(AverageError::Nothing)
+    }
+
     /// The dense record.
     ///
     /// # Errors
     /// [`AverageError::PhasesMissing`] or no shot at all.
     pub fn finish(self) -> Result<Record<'c>, AverageError> {
+        let shape = self.whole()?;
+        let length = shape.length.saturating_mul(usize::from(self.phases));
+        let codes = self.codes.get(..length).unwrap_or(&[]);
+        Ok(Record::new(codes, shape.format, self.clock))
+    }
+
+    /// What all shots have in common, once all are there.
+    fn whole(&self) -> Result<Shape, AverageError> {
         let Some(shape) = self.shape else {
             return Err(AverageError::Nothing);
         };
@@ -308,9 +349,7 @@ impl<'c> Interleaver<'c> {
                 missing: self.phases - there,
             });
         }
-        let length = shape.length.saturating_mul(usize::from(self.phases));
-        let codes = self.codes.get(..length).unwrap_or(&[]);
-        Ok(Record::new(codes, shape.format, self.clock))
+        Ok(shape)
     }
 }
 
@@ -340,7 +379,7 @@ fn offset(codes: &[i16]) -> i64 {
 
 /// The least value that at least half of the values do not exceed: by halving the range of codes and their differences, 17
 /// times through the values, because there is no memory to sort them in.
-fn median(values: impl Iterator<Item = i32> + Clone) -> i32 {
+pub(super) fn median(values: impl Iterator<Item = i32> + Clone) -> i32 {
     let (mut low, mut high) = (i32::from(i16::MIN), i32::from(u16::MAX));
     while low < high {
         let middle = low + ((high - low) >> 1);

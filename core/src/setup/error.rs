@@ -47,6 +47,8 @@ pub enum SetupError {
     ZeroLearnedOn,
     /// The window's start does not lie before its end.
     Window,
+    /// The trigger's jitter is negative, not a number or beyond a millisecond.
+    TriggerJitter,
     /// The coverage factor is not a positive number.
     CoverageFactor,
     /// The coating's velocity is not a positive number.
@@ -107,6 +109,7 @@ impl SetupError {
                 "the block that the zero was learned on must be zero or a positive length up to 1 km"
             }
             Self::Window => "the window must start before it ends",
+            Self::TriggerJitter => "trigger jitter must be zero or positive, up to 1 ms",
             Self::CoverageFactor => "coverage factor must be a positive number up to 1000, normally 2",
             Self::CoatingVelocity => "coating velocity must be a positive number of metres per second, from 1 to 1e6",
             Self::CalibratedRange => "calibrated range must go from a positive thickness to one not below it",

@@ -124,10 +124,13 @@ pub struct GaugeSetup {
     pub coating: Option<Coating>,
     /// What the calibration covered, if there was one.
     pub calibrated: Option<CalibratedRange>,
+    /// Jitter of the pulser against the sample clock, root mean square from shot to shot ([`crate::ShotArrivals`] measures
+    /// it): it moves arrivals that count from the trigger, divided by the root of n in an average of n shots.
+    pub trigger_jitter: Seconds,
 }
 
 impl GaugeSetup {
-    /// Checks everything and builds the set-up. k is 2; no coating; no calibrated range.
+    /// Checks everything and builds the set-up. k is 2; no coating; no calibrated range; no jitter.
     ///
     /// # Errors
     /// The first field that is wrong, as a [`SetupError`].
@@ -149,6 +152,7 @@ impl GaugeSetup {
             coverage_factor: 2.0,
             coating: None,
             calibrated: None,
+            trigger_jitter: Seconds::ZERO,
         };
         match setup.check() {
             None => Ok(setup),
@@ -195,6 +199,13 @@ impl GaugeSetup {
     #[must_use]
     pub const fn with_calibrated_range(mut self, range: CalibratedRange) -> Self {
         self.calibrated = Some(range);
+        self
+    }
+
+    /// The same set-up for a pulser that jitters so much, root mean square from shot to shot.
+    #[must_use]
+    pub const fn with_trigger_jitter(mut self, jitter: Seconds) -> Self {
+        self.trigger_jitter = jitter;
         self
     }
 
@@ -299,6 +310,9 @@ impl GaugeSetup {
             && window.from.get() < window.to.get())
         {
             return Some(SetupError::Window);
+        }
+        if !within(self.trigger_jitter.get(), 0.0, 1e-3) {
+            return Some(SetupError::TriggerJitter);
         }
         if !within(self.coverage_factor, 1e-3, 1e3) {
             return Some(SetupError::CoverageFactor);
@@ -431,6 +445,10 @@ mod tests {
             Some(SetupError::ElementDiameterUncertainty)
         );
         assert_eq!(spoilt(|s| s.window.to = s.window.from), Some(SetupError::Window));
+        assert_eq!(
+            spoilt(|s| s.trigger_jitter = Seconds::new(-1e-9)),
+            Some(SetupError::TriggerJitter)
+        );
         assert_eq!(spoilt(|s| s.coverage_factor = 0.0), Some(SetupError::CoverageFactor));
         assert_eq!(
             spoilt(|s| s.coating = Some(Coating {

@@ -6,7 +6,7 @@ use crate::setup::{GaugeSetup, ProbeKind, Span};
 use crate::units::{Metres, MetresPerSecond, Seconds};
 use crate::wall::way;
 
-/// A time and its standard uncertainty from the record's noise (k = 1).
+/// A time and its standard uncertainty from the record's noise (and the trigger's jitter; k = 1).
 #[derive(Clone, Copy, Debug, PartialEq, Default)]
 pub struct Timed {
     /// The time.
@@ -65,6 +65,20 @@ impl TrainTimes {
     #[must_use]
     pub const fn with_interface(mut self, interface: Timed) -> Self {
         self.interface = Some(interface);
+        self
+    }
+
+    /// The same with the jitter of the trigger in the first back wall's uncertainty, where that counts from the trigger; with
+    /// an interface echo of the same record, which jitters with it, nothing changes. The period's error stays what it
+    /// is, and so does its covariance with the first back wall's.
+    #[must_use]
+    pub fn with_jitter(mut self, jitter: Seconds) -> Self {
+        let noise = self.first_back_wall.standard_uncertainty;
+        if self.interface.is_none() && jitter > Seconds::ZERO {
+            let both = root_of_squares(noise, jitter);
+            self.first_back_wall.standard_uncertainty = both;
+            self.first_period_correlation *= noise / both;
+        }
         self
     }
 
@@ -315,6 +329,22 @@ mod tests {
         let left = excess(&setup(Span::BackWallToBackWall, 0.5), &times).unwrap();
         assert!((left.standard_uncertainty.as_ns() - 5f32.sqrt()).abs() < 1e-5);
         assert!(left.time.as_ns().abs() < 1e-3);
+    }
+
+    #[test]
+    fn jitter_moves_what_counts_from_the_trigger() {
+        // 3 ns of noise and 4 ns of jitter are 5 ns; the covariance of -3 x 2 x 0.7 ns² stays.
+        let first = Timed::new(Seconds::from_us(2.5), Seconds::from_ns(3.0));
+        let period = Timed::new(Seconds::from_us(2.0), Seconds::from_ns(2.0));
+        let times = TrainTimes::single(first).with_period(period, -0.7);
+        let jittered = times.with_jitter(Seconds::from_ns(4.0));
+        assert!((jittered.first_back_wall.standard_uncertainty.as_ns() - 5.0).abs() < 1e-5);
+        assert!((jittered.first_period_correlation * 5.0 + 0.7 * 3.0).abs() < 1e-5);
+        // Variance of first - period: 25 + 4 + 2 x 4.2.
+        let left = excess(&setup(Span::BackWallToBackWall, 0.5), &jittered).unwrap();
+        assert!((left.standard_uncertainty.as_ns() - 37.4f32.sqrt()).abs() < 1e-5);
+        let behind = times.with_interface(us(1.0));
+        assert_eq!(behind.with_jitter(Seconds::from_ns(4.0)), behind);
     }
 
     #[test]

@@ -13,7 +13,7 @@ use heapless::Vec;
 #[non_exhaustive]
 #[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub enum Source {
-    /// Noise moves the echoes' arrivals.
+    /// Noise moves the echoes' arrivals, and the trigger's jitter those that count from it.
     Timing,
     /// The part's velocity.
     Velocity,
@@ -124,7 +124,7 @@ pub(super) const RECTANGULAR: f32 = 0.577_350_26;
 ///
 /// | term | value |
 /// |---|---|
-/// | timing | c / 2 times the uncertainty of the round trip from noise |
+/// | timing | c / 2 times the uncertainty of the round trip from noise, and from the trigger's jitter over the root of the shots |
 /// | velocity | d / c times the velocity's uncertainty: that of the blocks, and what the part may differ from them |
 /// | zero | c / 2 times the zero's uncertainty; not between back walls |
 /// | calibration | instead of the two before, where the set-up says that their errors are correlated; only what the part may differ from the blocks stays apart, as velocity |
@@ -138,7 +138,7 @@ pub(super) const RECTANGULAR: f32 = 0.577_350_26;
 /// Where sound goes along a V, a time counts 1 / cos θ as much as straight down, θ being the ray's angle in the part:
 /// the terms of timing, zero, beam and coupling grow with it, that of velocity with its square.
 ///
-/// Nothing but timing depends on the noise, so a budget that timing does not dominate is not made smaller by averaging.
+/// Nothing but timing depends on noise and shots, so a budget that timing does not dominate is not made smaller by averaging.
 /// A span without its times (see [`round_trip`]) has no timing term: there is no reading then.
 #[must_use]
 pub fn budget(setup: &GaugeSetup, times: &TrainTimes, wall: Metres) -> Budget {

@@ -23,6 +23,8 @@ pub struct RecordKeys {
     pub codes: CodeKind,
     /// Full scale of floats.
     pub full_scale: Option<f64>,
+    /// Jitter of the pulser against the sample clock, rms; `None`: none.
+    pub trigger_jitter_ns: Option<f64>,
 }
 
 /// `[probe]`.
@@ -195,6 +197,7 @@ impl SetupKeys {
                 bits: document.small_integer("record", "bits")?,
                 codes: document.word("record", "codes", CODES)?.unwrap_or_default(),
                 full_scale: document.number("record", "full_scale")?,
+                trigger_jitter_ns: document.number("record", "trigger_jitter_ns")?,
             },
             probe: ProbeKeys {
                 kind: document
@@ -403,6 +406,7 @@ impl SetupKeys {
                     to: Metres::from_mm(c.to_mm? as f32),
                 })
             }),
+            trigger_jitter: Seconds::from_ns(self.record.trigger_jitter_ns.unwrap_or(0.0) as f32),
         }
     }
 }

@@ -70,6 +70,11 @@ pub const KEYS: &[Key] = &[
         "what a file of floats calls full scale; default 1",
     ),
     key(
+        "record",
+        "trigger_jitter_ns",
+        "jitter of the pulser against the sample clock, rms, 0 to 1e6: widens what counts from the trigger; default 0",
+    ),
+    key(
         "probe",
         "kind",
         "\"contact\", \"delay-line\" (also a water path) or \"dual-element\"",

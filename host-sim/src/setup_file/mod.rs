@@ -294,6 +294,7 @@ impl SetupFile {
             SetupError::ZeroUncertainty => ("zero", "standard_uncertainty_ns"),
             SetupError::ZeroCorrelation => ("calibration", "velocity_zero_correlation"),
             SetupError::Window => ("measure", "from_us"),
+            SetupError::TriggerJitter => ("record", "trigger_jitter_ns"),
             SetupError::CoverageFactor => ("measure", "coverage_factor"),
             SetupError::CoatingVelocity => ("coating", "velocity_m_s"),
             SetupError::CalibratedRange => ("calibration", "from_mm"),

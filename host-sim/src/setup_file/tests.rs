@@ -323,6 +323,7 @@ fn every_key_is_described_and_written() {
             bits: Some(12),
             codes: CodeKind::OffsetBinary,
             full_scale: Some(2.0),
+            trigger_jitter_ns: Some(0.5),
         },
         probe: ProbeKeys {
             kind: ProbeKind::DualElement,

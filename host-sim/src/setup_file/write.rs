@@ -38,6 +38,7 @@ impl SetupKeys {
             ("record", "bits") => self.record.bits.map(|bits| bits.to_string()),
             ("record", "codes") => word(word_of(CODES, self.record.codes)),
             ("record", "full_scale") => self.record.full_scale.map(number),
+            ("record", "trigger_jitter_ns") => self.record.trigger_jitter_ns.map(number),
             ("probe", "kind") => word(word_of(KINDS, self.probe.kind)),
             ("probe", "centre_frequency_mhz") => Some(number(self.probe.centre_frequency_mhz)),
             ("probe", "relative_bandwidth_percent") => Some(number(self.probe.relative_bandwidth_percent)),

@@ -230,6 +230,8 @@ impl SetUp {
                 from: Metres::new(from),
                 to: Metres::new(to),
             }),
+            // The link carries none: the board's clock fires its pulser.
+            trigger_jitter: Seconds::ZERO,
         })
     }
 }
