@@ -8,7 +8,9 @@ use halfpulse::{
 };
 use halfpulse_app::acquire::{FrontEnd, FrontEndPlan, ShotCounts};
 use halfpulse_app::gauge_app::{App, RecordMemory, Step};
-use halfpulse_app::link::{GainChoice, Hello, LinkReport, Message, Outcome, Port, Refusal, SharedPort, Status, Take};
+use halfpulse_app::link::{
+    GainChoice, Hello, LinkReport, Message, Outcome, PROTOCOL, Port, Refusal, SharedPort, Status, Take,
+};
 use halfpulse_app::remote::{RemoteFault, RemoteReceiver};
 use halfpulse_app::report::{Fault, Report, ReportSink, Shortfall};
 use halfpulse_sim::Scene;
@@ -161,7 +163,7 @@ fn with_rig(seed: u64, work: impl FnOnce(Rig<'_, '_>)) {
         number: 0,
     };
     let hello = Message::Hello(Hello {
-        protocol: 1,
+        protocol: PROTOCOL,
         samples: 0,
     });
     host.borrow_mut().send(&hello).unwrap();
@@ -170,7 +172,7 @@ fn with_rig(seed: u64, work: impl FnOnce(Rig<'_, '_>)) {
     assert_eq!(
         answer,
         Some(Message::Hello(Hello {
-            protocol: 1,
+            protocol: PROTOCOL,
             samples: SAMPLES as u16
         }))
     );
@@ -394,7 +396,7 @@ fn who_has_not_introduced_itself_is_not_listened_to() {
         assert_eq!(rig.take(1), None);
         assert_eq!(rig.status().unexpected, 1);
         let ours = Message::Hello(Hello {
-            protocol: 1,
+            protocol: PROTOCOL,
             samples: 0,
         });
         rig.host.borrow_mut().send(&ours).unwrap();
