@@ -50,6 +50,9 @@ type Remote<'p> = RemoteReceiver<'p, GaugeLine, SharedSamples, NoDelay>;
 
 fn scene() -> Scene {
     let mut scene = Scene::contact(5.0, 60.0, "carbon steel", 10.0);
+    // As the set-up has it.
+    scene.probe.element_diameter_mm = Some(6.0);
+    scene.probe.beam_diffraction = true;
     scene.noise.snr_db = Some(40.0);
     scene
 }

@@ -288,6 +288,42 @@ fn unexplained_per_sample(record: &Record<'_>, pulse: &ReferencePulse<'_>, arriv
     Some(math::larger(left, 0.0) / math::larger(codes.len() as f32 - 3.0, 1.0))
 }
 
+/// Moves echoes that were found on the wrong half cycle for the way they came.
+///
+/// A beam turns an echo's phase by up to a quarter of a cycle: then two half cycles of opposite sign fit it about as well,
+/// and noise decides between them. What tells them apart is the group lag, of which one has what its way gives
+/// (`expected_lag` in samples for a place) and the other half a cycle less or more. Echoes whose noise leaves that open
+/// stay as they are, and so do those that have a role already.
+pub fn settle_half_cycles(
+    surroundings: &Surroundings<'_>,
+    echoes: &mut EchoList,
+    expected_lag: impl Fn(f32) -> f32,
+    scratch: &mut [f32],
+) {
+    let (rate, half) = (surroundings.record.clock().rate, 0.5 * surroundings.samples_per_cycle);
+    for echo in echoes.iter_mut().filter(|echo| echo.role == EchoRole::Other) {
+        let expected = expected_lag(echo.position.as_samples());
+        let strange = echo.strange_lag(rate.period() * expected, surroundings).get() * rate.get();
+        if expected == 0.0 || strange.abs() < 0.5 * half {
+            continue;
+        }
+        let moved = math::round_to_i32(strange / half);
+        let place = math::round_to_i32(echo.position.as_samples() + moved as f32 * half);
+        let sign = match (echo.polarity, moved % 2 == 0) {
+            (Polarity::Positive, true) | (Polarity::Negative, false) => Sign::Positive,
+            _ => Sign::Negative,
+        };
+        let settled = u32::try_from(place)
+            .ok()
+            .and_then(|place| find_arrival(surroundings, place, sign, scratch))
+            .filter(|arrival| arrival.amplitude.abs() > 0.6 * echo.amplitude)
+            .and_then(|arrival| echo_at(surroundings, arrival));
+        if let Some(settled) = settled {
+            *echo = settled;
+        }
+    }
+}
+
 /// The signs that echoes are searched with.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
 pub struct Signs {

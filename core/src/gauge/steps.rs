@@ -7,12 +7,13 @@ use crate::echo::pulse::{PulseContext, PulseFacts, ReferencePulse, measure_pulse
 use crate::echo::scan::{CANDIDATE_CAPACITY, Candidate, Scan, scan};
 use crate::echo::separation::{judge, nearest_pair};
 use crate::echo::train::{Hypothesis, Rules, Train, Undecided, choose, fit, holds_thinner};
-use crate::echo::{Echo, EchoRole, Surroundings, measure_echoes};
+use crate::echo::{Echo, EchoRole, Surroundings, measure_echoes, settle_half_cycles};
 use crate::math;
 use crate::order;
 use crate::outcome::NoReading;
+use crate::path::PathLaw;
 use crate::record::{Record, SampleRange};
-use crate::setup::{GaugeSetup, PULSE_CAPACITY, ProbeKind, Span};
+use crate::setup::{EchoSign, GaugeSetup, PULSE_CAPACITY, ProbeKind, Span};
 use crate::units::Metres;
 use crate::wall::judgement::{self, Evidence};
 use crate::wall::uncertainty::Source;
@@ -144,6 +145,7 @@ impl Gauge<'_> {
             return Err(self.nothing_found(record, range));
         }
         let start = start_of_wall(&self.setup, record, &mut self.findings.echoes)?;
+        self.settle_half_cycles(record, noise, start);
         let before = surroundings(&self.setup, self.workspace.pulse, self.facts, record, noise);
         let law = path_law(&self.setup, &self.spreading);
         let rules = rules(&self.setup, &law, &before, range, scan, &self.detector, start);
@@ -167,6 +169,19 @@ impl Gauge<'_> {
         let train = fitted.map_err(|why| self.undecided(record, noise, why))?;
         self.findings.train = Some(train);
         Ok(train)
+    }
+
+    /// Where the beam turns phases and nobody says which sign back walls have, the group lag tells the half cycle.
+    fn settle_half_cycles(&mut self, record: &Record<'_>, noise: &Noise, start: f32) {
+        let law = path_law(&self.setup, &self.spreading);
+        let law = law.scaled(self.setup.sample_rate.get());
+        if !matches!(law, PathLaw::Beam(_)) || self.setup.probe.back_wall_sign != EchoSign::Unknown {
+            return;
+        }
+        let Workspace { pulse, correlation, .. } = &mut self.workspace;
+        let surroundings = surroundings(&self.setup, pulse, self.facts, record, noise);
+        let expected = |place: f32| law.group_lag(math::larger(place - start, 0.0));
+        settle_half_cycles(&surroundings, &mut self.findings.echoes, expected, &mut correlation[..]);
     }
 
     /// The timing noise once it is known which echoes are the wall's: grain stands above the scan's threshold too where it is

@@ -282,8 +282,9 @@ pub fn doubts(evidence: &Evidence<'_>) -> Doubts {
     };
     doubts.raise_if(train.unexplained > unexplained_limit, Doubt::UnexplainedEchoes);
 
+    let differing = evidence.differing_shift();
     doubts.raise_if(
-        evidence.differing_shift() > expanded + evidence.known_phase(),
+        differing > expanded && differing > expanded + evidence.known_phase(),
         Doubt::OverlappingEcho,
     );
     doubts.raise_if(evidence.strangeness() > UNRECOGNISED, Doubt::PulseMismatch);
