@@ -224,13 +224,15 @@ fn val_far_echoes_keep_their_half_cycle() {
     };
     scene.noise.snr_db = Some(25.0);
     let mut worst = 0f64;
-    let mut flipped = 0;
+    let (mut refused, mut flipped) = (0, 0);
     for seed in 0..60 {
         let shot = synthesise(&scene, seed).expect("a good scene");
         let mut setup = contact(6e-3, Span::TransmissionPulseToBackWall, Some(Metres::ZERO));
         setup.sample_rate = Hertz::from_mhz(50.0);
-        let reading = read(setup, &shot.codes, scene.record.bits);
-        worst = worst.max((f64::from(reading.thickness.as_mm()) - 60.0).abs());
+        match measure(setup, &shot.codes, scene.record.bits) {
+            Ok(reading) => worst = worst.max((f64::from(reading.thickness.as_mm()) - 60.0).abs()),
+            Err(_) => refused += 1,
+        }
         setup.probe.element_diameter = None;
         // Refused, or a quarter of a wavelength off.
         flipped += u32::from(match measure(setup, &shot.codes, scene.record.bits) {
@@ -242,6 +244,6 @@ fn val_far_echoes_keep_their_half_cycle() {
         "worst of 60: {:.1} um; refused or on the other half cycle without a known element: {flipped}",
         1e3 * worst
     );
-    assert!(worst < 0.02, "{worst} mm");
+    assert!(worst < 0.02 && refused <= 2, "{worst} mm, {refused} refused");
     assert!(flipped > 3, "{flipped}: the scene does not try it");
 }

@@ -288,31 +288,41 @@ fn unexplained_per_sample(record: &Record<'_>, pulse: &ReferencePulse<'_>, arriv
     Some(math::larger(left, 0.0) / math::larger(codes.len() as f32 - 3.0, 1.0))
 }
 
+/// Share of a cycle up to which a turned phase leaves the right half cycle clearly ahead.
+const LITTLE_TURNED: f32 = 0.12;
+
 /// Moves echoes that were found on the wrong half cycle for the way they came.
 ///
 /// A beam turns an echo's phase by up to a quarter of a cycle: then two half cycles of opposite sign fit it about as well,
 /// and noise decides between them. What tells them apart is the group lag, of which one has what its way gives
-/// (`expected_lag` in samples for a place) and the other half a cycle less or more. Echoes whose noise leaves that open
-/// stay as they are, and so do those that have a role already.
+/// (`expected_lag` in samples for a place) and the other half a cycle less or more: the nearer one is taken. Where the way
+/// turns the phase by little the choice is not in doubt and echoes stay as they are, and so do those that have a role.
 pub fn settle_half_cycles(
     surroundings: &Surroundings<'_>,
     echoes: &mut EchoList,
     expected_lag: impl Fn(f32) -> f32,
     scratch: &mut [f32],
 ) {
-    let (rate, half) = (surroundings.record.clock().rate, 0.5 * surroundings.samples_per_cycle);
+    let half = 0.5 * surroundings.samples_per_cycle;
     for echo in echoes.iter_mut().filter(|echo| echo.role == EchoRole::Other) {
         let expected = expected_lag(echo.position.as_samples());
-        let strange = echo.strange_lag(rate.period() * expected, surroundings).get() * rate.get();
-        if expected == 0.0 || strange.abs() < 0.5 * half {
+        if expected.abs() < LITTLE_TURNED * surroundings.samples_per_cycle {
             continue;
         }
-        let moved = math::round_to_i32(strange / half);
-        let place = math::round_to_i32(echo.position.as_samples() + moved as f32 * half);
-        let sign = match (echo.polarity, moved % 2 == 0) {
-            (Polarity::Positive, true) | (Polarity::Negative, false) => Sign::Positive,
-            _ => Sign::Negative,
+        let (here, opposite) = match echo.polarity {
+            Polarity::Positive => (Sign::Positive, Sign::Negative),
+            Polarity::Negative => (Sign::Negative, Sign::Positive),
         };
+        // Anew, because what the list holds is the lag less what noise explains.
+        let Some(found) = find_arrival(surroundings, echo.position.index, here, scratch) else {
+            continue;
+        };
+        let moved = math::round_to_i32((found.group_lag - expected) / half);
+        if moved == 0 {
+            continue;
+        }
+        let place = math::round_to_i32(echo.position.as_samples() + moved as f32 * half);
+        let sign = if moved % 2 == 0 { here } else { opposite };
         let settled = u32::try_from(place)
             .ok()
             .and_then(|place| find_arrival(surroundings, place, sign, scratch))
