@@ -90,6 +90,13 @@ pub struct Echo {
 }
 
 impl Echo {
+    /// What noise explains of a group lag.
+    fn chance_of_lag(&self, now: &Surroundings<'_>) -> Seconds {
+        let noise = now.timing_noise.at(self.position.as_samples());
+        let chance = GROUP_LAG_CHANCE * group_lag_noise(now.samples_per_cycle, self.amplitude / noise, &now.pulse);
+        now.record.clock().rate.period() * chance
+    }
+
     /// How far the group lag lies from the one that its way gives an echo, beyond what noise explains; with the sign of what
     /// is too much. [`Echo::group_lag`] itself for a way that gives none.
     #[must_use]
@@ -97,9 +104,7 @@ impl Echo {
         if expected == Seconds::ZERO {
             return self.group_lag;
         }
-        let noise = now.timing_noise.at(self.position.as_samples());
-        let chance = GROUP_LAG_CHANCE * group_lag_noise(now.samples_per_cycle, self.amplitude / noise, &now.pulse);
-        let chance = now.record.clock().rate.period() * chance;
+        let chance = self.chance_of_lag(now);
         // What noise explains has been taken off, towards nothing: the lag may be so much more, and as much again.
         let (low, high) = if self.group_lag > Seconds::ZERO {
             (self.group_lag, self.group_lag + chance * 2.0)
@@ -289,7 +294,7 @@ fn unexplained_per_sample(record: &Record<'_>, pulse: &ReferencePulse<'_>, arriv
 }
 
 /// Share of a cycle up to which a turned phase leaves the right half cycle clearly ahead.
-const LITTLE_TURNED: f32 = 0.12;
+const LITTLE_TURNED: f32 = 0.15;
 
 /// Moves echoes that were found on the wrong half cycle for the way they came.
 ///
@@ -303,7 +308,10 @@ pub fn settle_half_cycles(
     expected_lag: impl Fn(f32) -> f32,
     scratch: &mut [f32],
 ) {
-    let half = 0.5 * surroundings.samples_per_cycle;
+    let (half, rate) = (
+        0.5 * surroundings.samples_per_cycle,
+        surroundings.record.clock().rate.get(),
+    );
     for echo in echoes.iter_mut().filter(|echo| echo.role == EchoRole::Other) {
         let expected = expected_lag(echo.position.as_samples());
         if expected.abs() < LITTLE_TURNED * surroundings.samples_per_cycle {
@@ -313,11 +321,18 @@ pub fn settle_half_cycles(
             Polarity::Positive => (Sign::Positive, Sign::Negative),
             Polarity::Negative => (Sign::Negative, Sign::Positive),
         };
-        // Anew, because what the list holds is the lag less what noise explains.
-        let Some(found) = find_arrival(surroundings, echo.position.index, here, scratch) else {
+        // The list holds the lag less what noise explains.
+        let chance = echo.chance_of_lag(surroundings);
+        let lag = if echo.group_lag > Seconds::ZERO {
+            (echo.group_lag + chance).get() * rate
+        } else if echo.group_lag < Seconds::ZERO {
+            (echo.group_lag - chance).get() * rate
+        } else if let Some(found) = find_arrival(surroundings, echo.position.index, here, scratch) {
+            found.group_lag
+        } else {
             continue;
         };
-        let moved = math::round_to_i32((found.group_lag - expected) / half);
+        let moved = math::round_to_i32((lag - expected) / half);
         if moved == 0 {
             continue;
         }

@@ -11,6 +11,7 @@
 
 use crate::math;
 use core::f32::consts::{FRAC_1_SQRT_2, FRAC_PI_2, TAU};
+use heapless::Vec;
 
 /// What diffraction does to one frequency of a pulse that a piston sends and receives again:
 /// D(S) = 1 - exp(-ju) [J0(u) + j J1(u)], u = 2 π / S.
@@ -86,14 +87,35 @@ const WIDTH: f32 = 2.350_788;
 /// Lines below this share of the centre frequency carry nothing.
 const LOWEST_LINE: f32 = 0.05;
 
-/// Calls `each` with frequency over centre frequency and weight, for a spectrum with this standard deviation.
-fn lines(deviation: f32, mut each: impl FnMut(f32, f32)) {
+/// One line of a pulse's spectrum after its way: frequency over centre frequency, and the factor times the line's weight.
+#[derive(Clone, Copy, Debug)]
+struct Line {
+    frequency: f32,
+    in_phase: f32,
+    quadrature: f32,
+}
+
+type Lines = Vec<Line, 9>;
+
+/// A Gaussian spectrum of this standard deviation at a normalised distance of the centre frequency.
+fn spectrum(s: f32, deviation: f32) -> Lines {
+    let mut lines = Lines::new();
+    let mut add = |frequency: f32, weight: f32| {
+        let factor = Diffraction::at(s / frequency);
+        // Nine places for nine nodes.
+        let _ = lines.push(Line {
+            frequency,
+            in_phase: weight * factor.in_phase,
+            quadrature: weight * factor.quadrature,
+        });
+    };
     for (node, weight) in NODES {
-        each(1.0 + deviation * node, weight);
+        add(1.0 + deviation * node, weight);
         if node > 0.0 && 1.0 - deviation * node > LOWEST_LINE {
-            each(1.0 - deviation * node, weight);
+            add(1.0 - deviation * node, weight);
         }
     }
+    lines
 }
 
 /// How many cycles of the centre frequency too early correlation with the undisturbed pulse finds an echo, for the
@@ -104,17 +126,19 @@ fn lines(deviation: f32, mut each: impl FnMut(f32, f32)) {
 /// where the centre frequency's phase puts it.
 #[must_use]
 pub fn correlation_advance(s: f32, bandwidth: f32) -> f32 {
+    advance_of_carrier(s, &spectrum(s, bandwidth * (FRAC_1_SQRT_2 / WIDTH)))
+}
+
+fn advance_of_carrier(s: f32, lines: &Lines) -> f32 {
     let mut advance = Diffraction::at(s).phase_advance / TAU;
-    let deviation = bandwidth * (FRAC_1_SQRT_2 / WIDTH);
     for _ in 0..4 {
         let (mut slope, mut curve) = (0.0, 0.0);
-        lines(deviation, |frequency, weight| {
-            let factor = Diffraction::at(s / frequency);
-            let angle = TAU * frequency * advance;
+        for line in lines {
+            let angle = TAU * line.frequency * advance;
             let (sin, cos) = (math::sin(angle), math::cos(angle));
-            slope += weight * frequency * (factor.quadrature * cos - factor.in_phase * sin);
-            curve += weight * frequency * frequency * (factor.in_phase * cos + factor.quadrature * sin);
-        });
+            slope += line.frequency * (line.quadrature * cos - line.in_phase * sin);
+            curve += line.frequency * line.frequency * (line.in_phase * cos + line.quadrature * sin);
+        }
         if !(curve > 0.0) {
             break;
         }
@@ -128,28 +152,26 @@ pub fn correlation_advance(s: f32, bandwidth: f32) -> f32 {
 /// [`correlation_advance`]; for [`Estimator::EnvelopePeak`](crate::echo::arrival::Estimator::EnvelopePeak).
 #[must_use]
 pub fn envelope_delay(s: f32, bandwidth: f32) -> f32 {
-    delay_of_envelope(s, bandwidth / WIDTH)
+    delay_of_envelope(&spectrum(s, bandwidth / WIDTH))
 }
 
-/// The same for a Gaussian spectrum of this standard deviation.
-fn delay_of_envelope(s: f32, deviation: f32) -> f32 {
+fn delay_of_envelope(lines: &Lines) -> f32 {
     let mut delay = 0.0;
     for _ in 0..6 {
         // The signal relative to the carrier, and its derivatives by time in cycles.
         let (mut re, mut im, mut re1, mut im1, mut re2, mut im2) = (0.0, 0.0, 0.0, 0.0, 0.0, 0.0);
-        lines(deviation, |frequency, weight| {
-            let factor = Diffraction::at(s / frequency);
-            let omega = TAU * (frequency - 1.0);
+        for line in lines {
+            let omega = TAU * (line.frequency - 1.0);
             let (sin, cos) = (math::sin(omega * delay), math::cos(omega * delay));
-            let a = weight * (factor.in_phase * cos - factor.quadrature * sin);
-            let b = weight * (factor.in_phase * sin + factor.quadrature * cos);
+            let a = line.in_phase * cos - line.quadrature * sin;
+            let b = line.in_phase * sin + line.quadrature * cos;
             re += a;
             im += b;
             re1 -= omega * b;
             im1 += omega * a;
             re2 -= omega * omega * a;
             im2 -= omega * omega * b;
-        });
+        }
         let slope = re * re1 + im * im1;
         let curve = re1 * re1 + im1 * im1 + re * re2 + im * im2;
         if !(curve < 0.0) {
@@ -189,9 +211,10 @@ impl Spreading {
         for (step, (advance, lag)) in rows {
             // The last one stands for infinity; a million is as far as a tenth of the table's error.
             let root = step as f32 / math::larger((STEPS - step) as f32, 0.032);
-            *advance = correlation_advance(root * root, bandwidth);
             // The correlation's spectrum is the pulse's, squared.
-            *lag = *advance + delay_of_envelope(root * root, bandwidth * (FRAC_1_SQRT_2 / WIDTH));
+            let lines = spectrum(root * root, bandwidth * (FRAC_1_SQRT_2 / WIDTH));
+            *advance = advance_of_carrier(root * root, &lines);
+            *lag = *advance + delay_of_envelope(&lines);
         }
         table
     }

@@ -7,7 +7,8 @@
 //! state, [`Material::part_velocity_standard_uncertainty`].
 //!
 //! Block times are the arrivals that the span uses: first back wall after the transmission trigger, or after the
-//! interface echo behind a delay line. The errors of blocks are taken as independent of each other.
+//! interface echo behind a delay line; less what the V of a dual-element probe and the spreading of the beam do to them
+//! ([`Gauge::path_deviation`](crate::Gauge::path_deviation)), for these are taken off every reading too. The errors of blocks are taken as independent of each other.
 
 use crate::math;
 use crate::outcome::{Doubt, Doubts};

@@ -357,6 +357,39 @@ mod tests {
         assert!((contact.as_mm() - (0.6 + 0.2675) * 2.96).abs() < 1e-5);
     }
 
+    #[test]
+    fn thickest_wall_by_span() {
+        let duration = Seconds::from_ns(500.0);
+        // Arithmetic: window to 60 µs, half of 0.5 µs before its end; 5920 m/s.
+        let contact = thickest_wall(&setup(Span::TransmissionPulseToBackWall, 0.4), duration);
+        assert!((contact.as_mm() - (60.0 - 0.25 - 0.4) * 2.96).abs() < 1e-4);
+        let train = thickest_wall(&setup(Span::BackWallToBackWall, 0.0), duration);
+        assert!((train.as_mm() - 59.75 * 1.48).abs() < 1e-4);
+        // 9.4 mm of 2350 m/s are 8 µs: half a pulse before the delay line's second echo, less half a pulse.
+        let mut delay = setup(Span::InterfaceToBackWall, 0.0);
+        delay.probe.delay_line = Some(crate::setup::DelayLine {
+            length: Metres::from_mm(9.4),
+            velocity: MetresPerSecond::new(2350.0),
+        });
+        assert!((thickest_wall(&delay, duration).as_mm() - 7.5 * 2.96).abs() < 1e-4);
+        // Elements 6 mm apart on such blocks hear the thinnest wall later than straight, and it must be thicker for it.
+        let mut dual = setup(Span::TransmissionPulseToBackWall, 8.0);
+        dual.probe = Probe::dual_element(Hertz::from_mhz(5.0), 0.6)
+            .with_separation(crate::setup::ElementSeparation::new(Metres::from_mm(6.0), Metres::ZERO));
+        dual.window.from = Seconds::from_us(8.0);
+        let straight = {
+            let mut other = dual;
+            other.probe.separation = None;
+            thinnest_wall(&other, duration)
+        };
+        dual.probe.delay_line = delay.probe.delay_line;
+        let bent = thinnest_wall(&dual, duration);
+        assert!(bent > straight * 1.1 && bent < straight * 1.6, "{bent} {straight}");
+        dual.window.to = dual.window.from;
+        dual.window.from = Seconds::ZERO;
+        assert_eq!(thickest_wall(&dual, duration), Metres::ZERO);
+    }
+
     proptest! {
         #[test]
         fn a_later_start_moves_start_and_echoes_alike(shift in -5.0f32..50.0, trip in 0.5f32..30.0) {

@@ -100,7 +100,7 @@ const FROM_TRANSMISSION_PULSE: GaugeSetup = GaugeSetup::new(
     Hertz::from_mhz(50.0),
     Probe::contact(Hertz::from_mhz(2.25), 0.7).with_element_diameter(Metres::from_mm(13.0)),
     Material::new(MetresPerSecond::new(6380.0), MetresPerSecond::new(20.0)),
-    Zero::new(Seconds::from_ns(350.0), Seconds::from_ns(2.0)),
+    Zero::new(Seconds::from_ns(350.0), Seconds::from_ns(2.0)).with_learned_on(Metres::ZERO),
     Span::TransmissionPulseToBackWall,
     Window {
         from: Seconds::from_us(5.0),

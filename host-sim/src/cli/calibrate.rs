@@ -70,7 +70,8 @@ Two blocks determine zero and velocity together, and how their errors hang toget
 cannot determine is refused.
   * The block is not the part. A velocity is that of the blocks: a part of another heat or rolling direction has
     its own. Say by how much it may differ in [material] part_velocity_standard_uncertainty_m_s.
-  * Zero and velocity of two blocks are effective ones: beam and couplant film move the blocks' echoes too. Learn
+  * Zero and velocity of two blocks are effective ones: the couplant film moves the blocks' echoes too, and so does the
+    beam unless the element is known. Learn
     with the probe and the span in use, on blocks that bracket the parts: beyond them the uncertainty grows.
   * The reference pulse is the mean of all shots, each moved to the same place. Record 128 shots or more: its own
     noise is that of a shot over their root. Its noise, and by how much other shots differ from it (mismatch),

@@ -9,6 +9,9 @@
 //!   reads 2 d / c = period of the train and uses the offset only to check.
 //! * Without `[zero] standard_uncertainty_ns` the offset of back-wall-to-back-wall counts as unknown
 //!   (no check), that of interface-to-back-wall as exact; transmission-pulse-to-back-wall refuses.
+//! * With `[dual_element]` the times are those along a V, and with an element diameter those of a beam that spreads; both
+//!   are corrected. A transmission-pulse-to-back-wall reading also rests on what the zero holds of the beam
+//!   (`learned_on_mm`): not known, the first back wall stays as it came, and the budget says so.
 //! * A zero belongs to the reference pulse it was learned with: if the file names the pulse's checksum,
 //!   another pulse is an error.
 //! * Unknown keys are refused; every key is described in [`keys::KEYS`] and by `halfpulse read --help`.
