@@ -24,6 +24,7 @@ use crate::echo::noise::{Noise, TimingNoise};
 use crate::echo::pulse::ReferencePulse;
 use crate::echo::scan::Candidate;
 use crate::math;
+use crate::order;
 use crate::record::{Record, SampleRange};
 use crate::units::{Decibels, SamplePosition, Seconds};
 use crate::workspace::ECHO_CAPACITY;
@@ -312,6 +313,7 @@ pub fn settle_half_cycles(
         0.5 * surroundings.samples_per_cycle,
         surroundings.record.clock().rate.get(),
     );
+    let mut any = false;
     for echo in echoes.iter_mut().filter(|echo| echo.role == EchoRole::Other) {
         let expected = expected_lag(echo.position.as_samples());
         if expected.abs() < LITTLE_TURNED * surroundings.samples_per_cycle {
@@ -345,7 +347,18 @@ pub fn settle_half_cycles(
             .and_then(|arrival| echo_at(surroundings, arrival));
         if let Some(settled) = settled {
             *echo = settled;
+            any = true;
         }
+    }
+    if any {
+        // Two of one echo may have met.
+        order::sort(echoes, |a, b| a.position.samples_after(b.position) < 0.0);
+        let mut last: Option<SamplePosition> = None;
+        echoes.retain(|echo| {
+            let apart = last.is_none_or(|last| echo.position.samples_after(last) >= half);
+            last = Some(echo.position);
+            apart || echo.role != EchoRole::Other
+        });
     }
 }
 

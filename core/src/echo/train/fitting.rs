@@ -373,7 +373,10 @@ fn give_roles(
         }
         // The beam turns the phase by up to a quarter of a cycle: then two half cycles fit an echo about as well, and
         // the train knows which it is.
-        let reach = 0.6 * surroundings.samples_per_cycle;
+        let reach = match line.law {
+            PathLaw::Beam(_) => 0.6 * surroundings.samples_per_cycle,
+            _ => tolerance,
+        };
         let known = nearest.filter(|echo| distance(echo).abs() < reach);
         if let Some(echo) = known {
             let off = distance(echo);
