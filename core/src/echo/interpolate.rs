@@ -103,22 +103,22 @@ impl Between {
     pub fn new(shift: f32) -> Self {
         let whole = math::floor(shift);
         let fraction = shift - whole;
-        let mut weights = [0.0; 2 * REACH];
+        let mut between = Self {
+            weights: [0.0; 2 * REACH],
+            shift: math::saturating_i32(whole) - (REACH as i32 - 1),
+        };
         if fraction == 0.0 {
-            if let Some(weight) = weights.get_mut(REACH - 1) {
+            if let Some(weight) = between.weights.get_mut(REACH - 1) {
                 *weight = 1.0;
             }
         } else {
             let mut sign = first_sign(fraction);
-            for (tap, weight) in weights.iter_mut().enumerate() {
+            for (tap, weight) in between.weights.iter_mut().enumerate() {
                 *weight = tap_weight(fraction, tap as f32 + 1.0 - REACH as f32, sign);
                 sign = -sign;
             }
         }
-        Self {
-            weights,
-            shift: math::saturating_i32(whole) - (REACH as i32 - 1),
-        }
+        between
     }
 
     /// The value of `samples` at `number` plus the shift. Samples beyond the ends count as zero.

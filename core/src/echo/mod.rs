@@ -438,8 +438,8 @@ pub fn measure_echoes(
         ..*surroundings
     };
     echoes.clear();
-    for arrival in arrivals {
-        if let Some(echo) = echo_at(&surroundings, arrival) {
+    for arrival in &arrivals {
+        if let Some(echo) = echo_at(&surroundings, *arrival) {
             let _ = echoes.push(echo);
         }
     }

@@ -164,6 +164,7 @@ pub fn reached(
 /// Only `range` is listened to: before the part's surface there is no grain. `envelope` is the one that the scan has filled: where it is above `quiet`, in its counts, something stands that is not
 /// noise.
 #[must_use]
+#[inline(never)]
 pub fn listen(
     record: &Record<'_>,
     pulse: &ReferencePulse<'_>,
@@ -202,6 +203,7 @@ pub fn listen(
 }
 
 /// From what the parts have shown to the noise's course.
+#[inline(never)]
 fn course(parts: &[Part; BLOCKS], energy: f32, noise: f32, least: f32) -> TimingNoise {
     let (mut early, mut late) = (Part::default(), Part::default());
     for (number, part) in parts.iter().enumerate() {

@@ -283,6 +283,7 @@ fn quiet_level(envelope: &[u16], lobe: usize) -> f32 {
 /// Scans a record.
 ///
 /// `envelope` must be at least as long as `codes`: the gauge has made sure of that.
+#[inline(never)]
 pub fn scan(
     codes: &[i16],
     format: AdcFormat,

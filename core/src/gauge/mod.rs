@@ -274,13 +274,17 @@ impl<'w> Gauge<'w> {
     pub fn measure_metered(&mut self, record: &Record<'_>, meter: &mut impl StageMeter) -> Result<Reading, NoReading> {
         self.findings = Findings::default();
         let range = meter.meter(Stage::Health, || self.usable_range(record))?;
-        let (scan, mut noise) = meter.meter(Stage::Scan, || self.scan(record, range));
-        meter.meter(Stage::Echoes, || self.measure_echoes(record, range, &scan, &mut noise));
-        let train = meter.meter(Stage::Train, || self.find_train(record, range, &scan, &mut noise));
-        let outcome = train.and_then(|train| meter.meter(Stage::Wall, || self.wall(record, &noise, &train)));
+        // Not taken apart: that would be a second copy on the stack.
+        let mut heard = meter.meter(Stage::Scan, || self.scan(record, range));
+        let (scan, noise) = &mut heard;
+        meter.meter(Stage::Echoes, || self.measure_echoes(record, range, scan, noise));
+        let outcome = match meter.meter(Stage::Train, || self.find_train(record, range, scan, noise)) {
+            Ok(train) => meter.meter(Stage::Wall, || self.wall(record, noise, &train)),
+            Err(why) => Err(why),
+        };
         // What is known of the pulse helps most where there was no reading.
-        meter.meter(Stage::Pulse, || self.describe(record, &noise));
-        self.noise = noise;
+        meter.meter(Stage::Pulse, || self.describe(record, noise));
+        self.noise = *noise;
         outcome
     }
 }

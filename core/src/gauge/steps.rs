@@ -26,6 +26,7 @@ use heapless::Vec;
 const CLIPPED_LIMIT: u16 = 30;
 
 /// What echoes of this record are measured against.
+#[inline(never)]
 pub(super) fn surroundings<'a>(
     setup: &GaugeSetup,
     pulse: &'a [f32; PULSE_CAPACITY],
@@ -47,8 +48,16 @@ const GRAIN_LIMIT: f32 = 2.5;
 /// So many peaks that no train explains are each other's like.
 const GRAIN_PEAKS: usize = 4;
 
+/// Does a piece of work in a frame of its own, which is off the stack before the next piece begins: inlined, the
+/// frames of all would add up.
+#[inline(never)]
+fn apart<R>(work: impl FnOnce() -> R) -> R {
+    work()
+}
+
 impl Gauge<'_> {
     /// Checks what can be checked before looking at the codes' course.
+    #[inline(never)]
     pub(super) fn usable_range(&mut self, record: &Record<'_>) -> Result<SampleRange, NoReading> {
         let (expected, got) = (self.setup.sample_rate, record.clock().rate);
         if !((expected - got).abs().get() <= 1e-6 * expected.get()) {
@@ -87,6 +96,7 @@ impl Gauge<'_> {
         Ok(range)
     }
 
+    #[inline(never)]
     pub(super) fn scan(&mut self, record: &Record<'_>, range: SampleRange) -> (Scan, Noise) {
         let envelope = self
             .workspace
@@ -118,6 +128,7 @@ impl Gauge<'_> {
     }
 
     /// Fits the pulse at every candidate; the noise may turn out lower than the scan thought.
+    #[inline(never)]
     pub(super) fn measure_echoes(&mut self, record: &Record<'_>, range: SampleRange, scan: &Scan, noise: &mut Noise) {
         let Workspace { pulse, correlation, .. } = &mut self.workspace;
         let surroundings = surroundings(&self.setup, pulse, self.facts, record, noise);
@@ -134,6 +145,7 @@ impl Gauge<'_> {
     }
 
     /// Which echoes are one wall's multiples.
+    #[inline(never)]
     pub(super) fn find_train(
         &mut self,
         record: &Record<'_>,
@@ -146,25 +158,29 @@ impl Gauge<'_> {
         }
         let start = start_of_wall(&self.setup, record, &mut self.findings.echoes)?;
         self.settle_half_cycles(record, noise, start);
-        let before = surroundings(&self.setup, self.workspace.pulse, self.facts, record, noise);
-        let law = path_law(&self.setup, &self.spreading);
-        let rules = rules(&self.setup, &law, &before, range, scan, &self.detector, start);
-        let chosen = choose(&before, &self.findings.echoes, &rules);
+        let (rules, chosen) = apart(|| {
+            let before = surroundings(&self.setup, self.workspace.pulse, self.facts, record, noise);
+            let law = path_law(&self.setup, &self.spreading);
+            let rules = rules(&self.setup, &law, &before, range, scan, &self.detector, start);
+            let chosen = choose(&before, &self.findings.echoes, &rules);
+            (rules, chosen)
+        });
         let hypothesis = chosen.map_err(|why| self.undecided(record, noise, why))?;
-
-        let heard = noise.timing;
         if let Some(timing) = self.listen_again(record, scan, &rules, &hypothesis) {
-            noise.timing = timing;
+            apart(|| {
+                let heard = core::mem::replace(&mut noise.timing, timing);
+                let surroundings = surroundings(&self.setup, self.workspace.pulse, self.facts, record, noise);
+                for echo in &mut self.findings.echoes {
+                    echo.reassess(&heard, &surroundings);
+                }
+            });
         }
-        let Workspace { pulse, train: lags, .. } = &mut self.workspace;
-        let surroundings = surroundings(&self.setup, pulse, self.facts, record, noise);
-        for echo in &mut self.findings.echoes {
-            echo.reassess(&heard, &surroundings);
-        }
-        let fitted = fit(&surroundings, &mut self.findings.echoes, &rules, &hypothesis, lags);
-        let fitted = fitted.map(|train| Train {
-            thinner_too: holds_thinner(&surroundings, &self.findings.echoes, &rules, &train),
-            ..train
+        let fitted = apart(|| {
+            let Workspace { pulse, train: lags, .. } = &mut self.workspace;
+            let surroundings = surroundings(&self.setup, pulse, self.facts, record, noise);
+            let train = fit(&surroundings, &mut self.findings.echoes, &rules, &hypothesis, lags)?;
+            let thinner_too = holds_thinner(&surroundings, &self.findings.echoes, &rules, &train);
+            Ok(Train { thinner_too, ..train })
         });
         let train = fitted.map_err(|why| self.undecided(record, noise, why))?;
         self.findings.train = Some(train);
@@ -172,6 +188,7 @@ impl Gauge<'_> {
     }
 
     /// Where the beam turns phases and nobody says which sign back walls have, the group lag tells the half cycle.
+    #[inline(never)]
     fn settle_half_cycles(&mut self, record: &Record<'_>, noise: &Noise, start: f32) {
         let law = path_law(&self.setup, &self.spreading);
         let law = law.scaled(self.setup.sample_rate.get());
@@ -187,6 +204,7 @@ impl Gauge<'_> {
     /// The timing noise once it is known which echoes are the wall's: grain stands above the scan's threshold too where it is
     /// loud, and to stay away from it would be to listen only where it is not. And before the part's
     /// surface there is none. `None` if that changes nothing.
+    #[inline(never)]
     fn listen_again(
         &self,
         record: &Record<'_>,
@@ -230,6 +248,7 @@ impl Gauge<'_> {
     }
 
     /// Why there is no train.
+    #[inline(never)]
     fn undecided(&self, record: &Record<'_>, noise: &Noise, why: Undecided) -> NoReading {
         let wall_of = |samples: f32| self.setup.velocity() * (record.clock().rate.period() * samples) * 0.5;
         match why {
@@ -246,6 +265,7 @@ impl Gauge<'_> {
     }
 
     /// Thickness, budget and doubts.
+    #[inline(never)]
     pub(super) fn wall(&mut self, record: &Record<'_>, noise: &Noise, train: &Train) -> Result<Reading, NoReading> {
         let surroundings = surroundings(&self.setup, self.workspace.pulse, self.facts, record, noise);
         let law = path_law(&self.setup, &self.spreading);
@@ -307,6 +327,7 @@ impl Gauge<'_> {
     }
 
     /// Why there is no echo: a transmission pulse before the window tells that the pulser works.
+    #[inline(never)]
     pub(super) fn nothing_found(&self, record: &Record<'_>, range: SampleRange) -> NoReading {
         let before = record.health(SampleRange {
             start: 0,

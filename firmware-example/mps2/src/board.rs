@@ -190,7 +190,7 @@ impl embedded_hal::delay::DelayNs for Delay {
 }
 
 /// What a piece of work took.
-#[derive(Clone, Copy, Debug)]
+#[derive(Clone, Copy, Debug, Default)]
 pub struct Cost {
     /// Executed instructions, if the emulator runs with `-icount shift=7`; good to about ten.
     pub instructions: u32,
@@ -200,6 +200,14 @@ pub struct Cost {
 
 /// Does some work, counts its instructions and the stack that it uses.
 pub fn counted<R>(work: impl FnOnce() -> R) -> (R, Cost) {
+    let mut cost = Cost::default();
+    let result = counted_into(&mut cost, work);
+    (result, cost)
+}
+
+/// The same for a large result, which goes straight to where it is kept: in a tuple it would be on the stack twice.
+#[inline(always)]
+pub fn counted_into<R>(cost: &mut Cost, work: impl FnOnce() -> R) -> R {
     let top = stack_pointer();
     paint_below(top);
     let before = ticks();
@@ -207,9 +215,11 @@ pub fn counted<R>(work: impl FnOnce() -> R) -> (R, Cost) {
     let result = apart(work);
     close_region();
     let passed = before.wrapping_sub(ticks());
-    let stack = (stack_start().wrapping_sub(top) as u32) + used_below(top);
-    let instructions = (u64::from(passed) * 10 / 32) as u32;
-    (result, Cost { instructions, stack })
+    *cost = Cost {
+        instructions: (u64::from(passed) * 10 / 32) as u32,
+        stack: (stack_start().wrapping_sub(top) as u32) + used_below(top),
+    };
+    result
 }
 
 /// Tells the emulator's counting plugin (`cargo board cost`) that a region begins; elsewhere it does nothing.

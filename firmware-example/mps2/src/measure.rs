@@ -7,7 +7,7 @@
 mod app {
     use cortex_m_rt::entry;
     use halfpulse::{Gauge, Record, Scratch};
-    use halfpulse_mps2::board::{self, Console};
+    use halfpulse_mps2::board::{self, Console, Cost};
     use halfpulse_mps2::canned::{CAPACITY, Canned, RECORDS};
     use halfpulse_mps2::printout::{self, Line};
 
@@ -27,22 +27,18 @@ mod app {
 
     fn measure(canned: &Canned, scratch: &mut Scratch<CAPACITY>, codes: &mut [i16; CAPACITY], console: &mut Console) {
         let record = Record::new(canned.copy_codes(codes), canned.format, canned.clock);
-        let (gauge, making) = board::counted(|| Gauge::new(canned.setup, scratch.workspace()));
-        let mut gauge = match gauge {
+        let (mut making, mut measuring) = (Cost::default(), Cost::default());
+        // Not taken out of its result: that would be a second copy on the stack.
+        let mut made = board::counted_into(&mut making, || Gauge::new(canned.setup, scratch.workspace()));
+        let gauge = match &mut made {
             Ok(gauge) => gauge,
             Err(error) => {
-                Line::new(console, "set-up error").sentence(&error).end();
+                Line::new(console, "set-up error").sentence(error).end();
                 board::exit(false);
             }
         };
-        let (outcome, measuring) = board::counted(|| {
-            #[cfg(feature = "planted-panic")]
-            planted_panic(record.codes());
-            gauge.measure(&record)
-        });
-        printout::outcome(console, canned.name, &outcome, gauge.findings());
-        let (separation, separating) = board::counted(|| gauge.separate(&record));
-        printout::separation(console, separation.as_ref());
+        read(canned, &record, gauge, console, &mut measuring);
+        let separating = separate(&record, gauge, console);
         for (what, cost) in [("gauge-new", making), ("measure", measuring), ("separate", separating)] {
             Line::new(console, "cost")
                 .words(what)
@@ -50,6 +46,24 @@ mod app {
                 .word("stack", cost.stack)
                 .end();
         }
+    }
+
+    /// Apart, so that what is read is off the stack when the next thing begins.
+    #[inline(never)]
+    fn read(canned: &Canned, record: &Record<'_>, gauge: &mut Gauge<'_>, console: &mut Console, cost: &mut Cost) {
+        let outcome = board::counted_into(cost, || {
+            #[cfg(feature = "planted-panic")]
+            planted_panic(record.codes());
+            gauge.measure(record)
+        });
+        printout::outcome(console, canned.name, &outcome, gauge.findings());
+    }
+
+    #[inline(never)]
+    fn separate(record: &Record<'_>, gauge: &mut Gauge<'_>, console: &mut Console) -> Cost {
+        let (separation, cost) = board::counted(|| gauge.separate(record));
+        printout::separation(console, separation.as_ref());
+        cost
     }
 
     /// What the core must never hold: an index that could lie outside.

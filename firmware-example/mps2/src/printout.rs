@@ -81,6 +81,7 @@ impl<S: Sink> Write for Pieces<'_, S> {
 }
 
 /// Writes the outcome of one measurement.
+#[inline(never)]
 pub fn outcome(sink: &mut impl Sink, name: &str, outcome: &Result<Reading, NoReading>, findings: &Findings) {
     Line::new(sink, "record").words(name).end();
     match outcome {
@@ -143,6 +144,7 @@ fn write_findings(sink: &mut impl Sink, findings: &Findings) {
 }
 
 /// Writes the verdict on the nearest pair of echoes, if there is one.
+#[inline(never)]
 pub fn separation(sink: &mut impl Sink, separation: Option<&Separation>) {
     let Some(separation) = separation else {
         return;

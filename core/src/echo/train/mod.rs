@@ -131,7 +131,6 @@ pub enum Undecided {
 ///
 /// # Errors
 /// [`Undecided`].
-#[inline(never)]
 pub fn choose(surroundings: &Surroundings<'_>, echoes: &EchoList, rules: &Rules) -> Result<Hypothesis, Undecided> {
     choosing::choose(surroundings, echoes, rules, tolerance(surroundings))
 }
@@ -140,7 +139,6 @@ pub fn choose(surroundings: &Surroundings<'_>, echoes: &EchoList, rules: &Rules)
 ///
 /// # Errors
 /// [`Undecided::NoTrain`] if the first multiple is lost in the fit.
-#[inline(never)]
 pub fn fit(
     surroundings: &Surroundings<'_>,
     echoes: &mut EchoList,
