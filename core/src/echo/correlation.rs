@@ -23,17 +23,8 @@ pub fn correlate_into(codes: &[i16], first: i32, pulse: &ReferencePulse<'_>, lag
         let inside = usize::try_from(start)
             .ok()
             .and_then(|s| codes.get(s..)?.get(..length + 3));
-        if let (Some(x), [a, b, c, d]) = (inside, &mut *block) {
-            let (mut ra, mut rb, mut rc, mut rd) = (0.0, 0.0, 0.0, 0.0);
-            for (s, w) in pulse.samples.iter().zip(x.windows(4)) {
-                if let [p, q, r, t] = w {
-                    ra += s * f32::from(*p);
-                    rb += s * f32::from(*q);
-                    rc += s * f32::from(*r);
-                    rd += s * f32::from(*t);
-                }
-            }
-            (*a, *b, *c, *d) = (ra, rb, rc, rd);
+        if let (Some(x), Ok(block)) = (inside, <&mut [f32; 4]>::try_from(&mut *block)) {
+            *block = four_lags(pulse.samples, x);
         } else {
             for (k, lag) in block.iter_mut().enumerate() {
                 *lag = single(codes, start.saturating_add(k as i32), pulse);
@@ -44,6 +35,37 @@ pub fn correlate_into(codes: &[i16], first: i32, pulse: &ReferencePulse<'_>, lag
     for (k, lag) in blocks.into_remainder().iter_mut().enumerate() {
         *lag = single(codes, start.saturating_add(k as i32), pulse);
     }
+}
+
+/// Four neighbouring lags; `x` is three longer than the pulse. Every code is converted once and used for all
+/// four: unrolled by four, so that it never has to be moved.
+fn four_lags(samples: &[f32], x: &[i16]) -> [f32; 4] {
+    let mut sums = [0.0f32; 4];
+    let Some(([p, q, r], x)) = x.split_first_chunk::<3>() else {
+        return sums;
+    };
+    let [mut p, mut q, mut r] = [f32::from(*p), f32::from(*q), f32::from(*r)];
+    let mut add = |s: f32, window: [f32; 4]| {
+        for (sum, x) in sums.iter_mut().zip(window) {
+            *sum += s * x;
+        }
+    };
+    let (samples, last_samples) = samples.as_chunks::<4>();
+    let (x, last_x) = x.as_chunks::<4>();
+    for ([s0, s1, s2, s3], [x0, x1, x2, x3]) in samples.iter().zip(x) {
+        let [a, b, c, d] = [f32::from(*x0), f32::from(*x1), f32::from(*x2), f32::from(*x3)];
+        add(*s0, [p, q, r, a]);
+        add(*s1, [q, r, a, b]);
+        add(*s2, [r, a, b, c]);
+        add(*s3, [a, b, c, d]);
+        (p, q, r) = (b, c, d);
+    }
+    for (s, x) in last_samples.iter().zip(last_x) {
+        let a = f32::from(*x);
+        add(*s, [p, q, r, a]);
+        (p, q, r) = (q, r, a);
+    }
+    sums
 }
 
 /// The same at every `step`-th lag: R\[k\] = Σ_j s\[j\] x\[first + k step + j\].

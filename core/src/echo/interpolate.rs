@@ -31,7 +31,7 @@ pub fn at(samples: &[f32], place: f32) -> f32 {
         .ok()
         .and_then(|i| samples.get(i..)?.first_chunk::<{ 2 * REACH }>());
     if let Some(taps) = inside {
-        return weighted(taps.iter().copied(), fraction, sine);
+        return weighted_taps(taps, fraction, sine);
     }
     let tap = |k: i32| {
         usize::try_from(start + k)
@@ -89,6 +89,22 @@ fn weighted(taps: impl Iterator<Item = f32>, fraction: f32, sine: f32) -> f32 {
     }
     sum
 }
+
+/// [`weighted`] for taps that are all there, four at a time.
+fn weighted_taps(taps: &[f32; 2 * REACH], fraction: f32, sine: f32) -> f32 {
+    let (mut sum, mut number) = (0.0, 1.0 - REACH as f32);
+    let (fours, _) = taps.as_chunks::<4>();
+    for [a, b, c, d] in fours {
+        sum += a * tap_weight(fraction, number, sine);
+        sum += b * tap_weight(fraction, number + 1.0, -sine);
+        sum += c * tap_weight(fraction, number + 2.0, sine);
+        sum += d * tap_weight(fraction, number + 3.0, -sine);
+        number += 4.0;
+    }
+    sum
+}
+
+const _: () = assert!(REACH & 1 == 0, "taps are summed four at a time");
 
 /// The same for many places that lie equally far from their samples: the weights are worked out once.
 #[derive(Clone, Copy, Debug)]

@@ -266,11 +266,25 @@ fn quiet_places(range: SampleRange, step: impl Fn(u32) -> u32, echoes: &[Reached
 /// Σ s\[k\] (x\[start + k + 2\] - x\[start + k\]): the record's correlation with the (negative) central difference of the
 /// pulse. `None` if it would stand out of the record.
 fn derivative_part(codes: &[i16], start: usize, samples: &[f32]) -> Option<f32> {
-    let earlier = codes.get(start..)?;
-    let later = earlier.get(2..)?.get(..samples.len())?;
+    let ([a, b], later) = codes.get(start..)?.split_first_chunk::<2>()?;
+    let later = later.get(..samples.len())?;
+    let [mut a, mut b] = [i32::from(*a), i32::from(*b)];
     let mut sum = 0.0;
-    for ((s, &before), &after) in samples.iter().zip(earlier).zip(later) {
-        sum += s * (i32::from(after) - i32::from(before)) as f32;
+    // Unrolled by four: every code is loaded once.
+    let (samples, last_samples) = samples.as_chunks::<4>();
+    let (later, last_later) = later.as_chunks::<4>();
+    for ([s0, s1, s2, s3], x) in samples.iter().zip(later) {
+        let [x0, x1, x2, x3] = x.map(i32::from);
+        sum += s0 * (x0 - a) as f32;
+        sum += s1 * (x1 - b) as f32;
+        sum += s2 * (x2 - x0) as f32;
+        sum += s3 * (x3 - x1) as f32;
+        (a, b) = (x2, x3);
+    }
+    for (s, x) in last_samples.iter().zip(last_later) {
+        let x = i32::from(*x);
+        sum += s * (x - a) as f32;
+        (a, b) = (b, x);
     }
     Some(sum)
 }

@@ -187,8 +187,6 @@ impl<'r> Record<'r> {
         };
         let (mut all, mut any) = (u16::MAX, 0u16);
         for &code in codes {
-            health.samples += 1;
-            health.clipped += u32::from(code >= upper) + u32::from(code <= lower);
             if code < health.lowest {
                 health.lowest = code;
             }
@@ -197,6 +195,13 @@ impl<'r> Record<'r> {
             }
             all &= code as u16;
             any |= code as u16;
+        }
+        health.samples = codes.len() as u32;
+        // Most records have none: only then are they counted.
+        if health.highest >= upper || health.lowest <= lower {
+            for &code in codes {
+                health.clipped += u32::from(code >= upper) + u32::from(code <= lower);
+            }
         }
         if health.samples > 0 {
             health.constant_bits = all | !any;
