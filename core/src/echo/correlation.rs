@@ -40,32 +40,37 @@ pub fn correlate_into(codes: &[i16], first: i32, pulse: &ReferencePulse<'_>, lag
 /// Four neighbouring lags; `x` is three longer than the pulse. Every code is converted once and used for all
 /// four: unrolled by four, so that it never has to be moved.
 fn four_lags(samples: &[f32], x: &[i16]) -> [f32; 4] {
-    let mut sums = [0.0f32; 4];
+    let mut sums = (0.0f32, 0.0f32, 0.0f32, 0.0f32);
     let Some(([p, q, r], x)) = x.split_first_chunk::<3>() else {
-        return sums;
+        return [0.0; 4];
     };
-    let [mut p, mut q, mut r] = [f32::from(*p), f32::from(*q), f32::from(*r)];
-    let mut add = |s: f32, window: [f32; 4]| {
-        for (sum, x) in sums.iter_mut().zip(window) {
-            *sum += s * x;
-        }
-    };
+    let (mut p, mut q, mut r) = (f32::from(*p), f32::from(*q), f32::from(*r));
     let (samples, last_samples) = samples.as_chunks::<4>();
     let (x, last_x) = x.as_chunks::<4>();
     for ([s0, s1, s2, s3], [x0, x1, x2, x3]) in samples.iter().zip(x) {
-        let [a, b, c, d] = [f32::from(*x0), f32::from(*x1), f32::from(*x2), f32::from(*x3)];
-        add(*s0, [p, q, r, a]);
-        add(*s1, [q, r, a, b]);
-        add(*s2, [r, a, b, c]);
-        add(*s3, [a, b, c, d]);
+        let a = f32::from(*x0);
+        sums = add_products(sums, *s0, (p, q, r, a));
+        let b = f32::from(*x1);
+        sums = add_products(sums, *s1, (q, r, a, b));
+        let c = f32::from(*x2);
+        sums = add_products(sums, *s2, (r, a, b, c));
+        let d = f32::from(*x3);
+        sums = add_products(sums, *s3, (a, b, c, d));
         (p, q, r) = (b, c, d);
     }
     for (s, x) in last_samples.iter().zip(last_x) {
         let a = f32::from(*x);
-        add(*s, [p, q, r, a]);
+        sums = add_products(sums, *s, (p, q, r, a));
         (p, q, r) = (q, r, a);
     }
-    sums
+    sums.into()
+}
+
+type Four = (f32, f32, f32, f32);
+
+#[inline(always)]
+fn add_products(sums: Four, s: f32, x: Four) -> Four {
+    (sums.0 + s * x.0, sums.1 + s * x.1, sums.2 + s * x.2, sums.3 + s * x.3)
 }
 
 /// The same at every `step`-th lag: R\[k\] = Σ_j s\[j\] x\[first + k step + j\].

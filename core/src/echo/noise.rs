@@ -273,8 +273,8 @@ fn derivative_part(codes: &[i16], start: usize, samples: &[f32]) -> Option<f32> 
     // Unrolled by four: every code is loaded once.
     let (samples, last_samples) = samples.as_chunks::<4>();
     let (later, last_later) = later.as_chunks::<4>();
-    for ([s0, s1, s2, s3], x) in samples.iter().zip(later) {
-        let [x0, x1, x2, x3] = x.map(i32::from);
+    for ([s0, s1, s2, s3], [x0, x1, x2, x3]) in samples.iter().zip(later) {
+        let (x0, x1, x2, x3) = (i32::from(*x0), i32::from(*x1), i32::from(*x2), i32::from(*x3));
         sum += s0 * (x0 - a) as f32;
         sum += s1 * (x1 - b) as f32;
         sum += s2 * (x2 - x0) as f32;

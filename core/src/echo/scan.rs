@@ -219,20 +219,17 @@ fn fill(codes: &[i16], range: SampleRange, detector: &Detector, shift: u32, enve
     let mut odd = sum_of(&ODD, start - 2 * lobe);
 
     // From there on only what enters and leaves each lobe.
-    let taps = |first: usize, number: usize| {
-        let (fours, _) = codes.get(first + number * lobe..).unwrap_or(&[]).as_chunks::<4>();
-        fours
-    };
+    let taps = |first: usize, number: usize| codes.get(first + number * lobe..).unwrap_or(&[]);
     let e = start - before;
     let o = start - 2 * lobe;
-    let even_fours = taps(e, 0)
+    let even_taps = taps(e, 0)
         .iter()
         .zip(taps(e, 1))
         .zip(taps(e, 2))
         .zip(taps(e, 3))
         .zip(taps(e, 4))
         .zip(taps(e, 5));
-    let odd_fours = taps(o, 0)
+    let odd_taps = taps(o, 0)
         .iter()
         .zip(taps(o, 1))
         .zip(taps(o, 2))
@@ -240,39 +237,18 @@ fn fill(codes: &[i16], range: SampleRange, detector: &Detector, shift: u32, enve
         .zip(taps(o, 4));
     let out = envelope.get_mut(start..start + count).unwrap_or(&mut []);
     let half = (1i32 << shift) >> 1;
-    let mut step = |entry: &mut u16, [e0, e1, e2, e3, e4, e5]: [i16; 6], [o0, o1, o2, o3, o4]: [i16; 5]| {
+    for ((entry, (((((e0, e1), e2), e3), e4), e5)), ((((o0, o1), o2), o3), o4)) in
+        out.iter_mut().zip(even_taps).zip(odd_taps)
+    {
         let (a, b) = (even.abs(), odd.abs());
         let (high, low) = if a > b { (a, b) } else { (b, a) };
         // Root of a sum of squares to 2.4 %: the larger of max and 7/8 max + 1/2 min.
         let mixed = high - (high >> 3) + (low >> 1);
         let magnitude = ((if mixed > high { mixed } else { high }) + half) >> shift;
         *entry = if magnitude > 65535 { u16::MAX } else { magnitude as u16 };
-        let i = |code: i16| i32::from(code);
+        let i = |code: &i16| i32::from(*code);
         even += 3 * (i(e5) - i(e0)) + 9 * (i(e1) - i(e4)) + 12 * (i(e3) - i(e2));
         odd += 12 * (i(o1) + i(o3)) - 4 * (i(o0) + i(o4)) - 16 * i(o2);
-    };
-    // Four at a time, because eleven pointers are more than the machine has registers.
-    let mut fours = out.chunks_exact_mut(4);
-    for ((four, (((((e0, e1), e2), e3), e4), e5)), ((((o0, o1), o2), o3), o4)) in
-        (&mut fours).zip(even_fours).zip(odd_fours)
-    {
-        for (k, entry) in four.iter_mut().enumerate() {
-            let at = |taps: &[i16; 4]| taps.get(k).copied().unwrap_or(0);
-            step(
-                entry,
-                [at(e0), at(e1), at(e2), at(e3), at(e4), at(e5)],
-                [at(o0), at(o1), at(o2), at(o3), at(o4)],
-            );
-        }
-    }
-    let done = count & !3;
-    for (k, entry) in fours.into_remainder().iter_mut().enumerate() {
-        let at = |first: usize, number: usize| codes.get(first + number * lobe + done + k).copied().unwrap_or(0);
-        step(
-            entry,
-            [at(e, 0), at(e, 1), at(e, 2), at(e, 3), at(e, 4), at(e, 5)],
-            [at(o, 0), at(o, 1), at(o, 2), at(o, 3), at(o, 4)],
-        );
     }
     SampleRange {
         start: start as u32,
