@@ -85,6 +85,7 @@ pub mod gauge;
 
 pub use echo::shots::{Jitter, ShotArrivals};
 pub use echo::{Echo, EchoList, EchoRole, Polarity};
+pub use gauge::two_gains::{TwoGains, TwoGainsError};
 pub use gauge::{CoatingReading, Findings, Gauge, Reading};
 pub use outcome::{Doubt, Doubts, NoReading};
 pub use record::average::{AverageError, Averager, Interleaver};

@@ -4,9 +4,10 @@
 use halfpulse::echo::separation::Verdict;
 use halfpulse::wall::calibration::{velocity_from_thickness, zero_and_velocity, zero_at_known_velocity};
 use halfpulse::{
-    AdcFormat, Averager, Block, CalibratedRange, Celsius, Coating, DelayLine, EchoRole, ElementSeparation, Gauge,
-    GaugeSetup, Hertz, Interleaver, Material, Metres, MetresPerSecond, NoReading, PartTemperature, Probe, Reading,
-    Record, SampleClock, Scratch, Seconds, Span, VelocityTemperature, Window, Zero, movement,
+    AdcFormat, Averager, Block, CalibratedRange, Celsius, Coating, Decibels, DelayLine, EchoRole, ElementSeparation,
+    Gauge, GaugeSetup, Hertz, Interleaver, Material, Metres, MetresPerSecond, NoReading, PartTemperature, Probe,
+    ProbeKind, Reading, Record, SampleClock, Scratch, Seconds, Span, TwoGains, VelocityTemperature, Window, Zero,
+    movement,
 };
 use halfpulse_tests::oracle::{self, Random};
 use proptest::prelude::*;
@@ -458,8 +459,10 @@ proptest! {
         let clock = SampleClock { rate: Hertz::new(rate), first_sample: Seconds::new(first_sample) };
         let mut averager = Averager::new(&mut sums);
         let mut interleaver = Interleaver::new(&mut dense, clock, phases).ok();
+        let mut shots = Vec::new();
         for kind in kinds {
             let shot = hostile_codes(kind, length, 0.1, &mut random);
+            shots.push(shot.clone());
             let record = Record::new(&shot, format, clock);
             let _ = averager.add(&record);
             if let Some(interleaver) = &mut interleaver {
@@ -476,5 +479,15 @@ proptest! {
         }
         let _ = interleaver.map(Interleaver::finish);
         reads_the_easy_record(&mut gauge)?;
+        let mut behind = usual();
+        (behind.probe.kind, behind.span) = (ProbeKind::DelayLine, Span::InterfaceToBackWall);
+        gauge.change_setup(behind).expect("a sound set-up");
+        for two in shots.windows(2) {
+            let record = |codes| Record::new(codes, format, SampleClock::new(Hertz::from_mhz(50.0)));
+            if let Ok(pair) = TwoGains::new(record(&two[0]), record(&two[1]), Decibels::new(40.0)) {
+                let outcome = gauge.measure_two_gains(&pair);
+                check(&gauge, &two[1], &outcome)?;
+            }
+        }
     }
 }

@@ -21,6 +21,7 @@ mod val_separation;
 mod val_separation_support;
 mod val_thin_wall;
 mod val_train_fit;
+mod val_two_gains;
 mod val_no_echo;
 mod law_hostile;
 mod val_wrong_cycle;

@@ -8,6 +8,7 @@ pub mod interpretation;
 mod separating;
 pub mod stage;
 mod steps;
+pub mod two_gains;
 
 use self::stage::{Stage, StageMeter};
 use crate::echo::EchoList;

@@ -12,7 +12,7 @@ use crate::math;
 use crate::order;
 use crate::outcome::NoReading;
 use crate::path::PathLaw;
-use crate::record::{Record, SampleRange};
+use crate::record::{Record, RecordHealth, SampleRange};
 use crate::setup::{EchoSign, GaugeSetup, PULSE_CAPACITY, ProbeKind, Span};
 use crate::units::Metres;
 use crate::wall::judgement::{self, Evidence};
@@ -59,6 +59,22 @@ impl Gauge<'_> {
     /// Checks what can be checked before looking at the codes' course.
     #[inline(never)]
     pub(super) fn usable_range(&mut self, record: &Record<'_>) -> Result<SampleRange, NoReading> {
+        let range = self.sound_range(record)?;
+        self.not_clipped(self.findings.health)?;
+        Ok(range)
+    }
+
+    /// Refuses what is clipped too much.
+    pub(super) fn not_clipped(&self, health: RecordHealth) -> Result<(), NoReading> {
+        let per_mille = health.clipped_per_mille();
+        if per_mille > CLIPPED_LIMIT {
+            return Err(NoReading::Clipped { per_mille });
+        }
+        Ok(())
+    }
+
+    /// The same without the share of clipped samples.
+    pub(super) fn sound_range(&mut self, record: &Record<'_>) -> Result<SampleRange, NoReading> {
         let (expected, got) = (self.setup.sample_rate, record.clock().rate);
         if !((expected - got).abs().get() <= 1e-6 * expected.get()) {
             return Err(NoReading::SampleRateMismatch { expected, got });
@@ -88,10 +104,6 @@ impl Gauge<'_> {
             return Err(NoReading::StuckBits {
                 mask: health.stuck_bits(),
             });
-        }
-        let per_mille = health.clipped_per_mille();
-        if per_mille > CLIPPED_LIMIT {
-            return Err(NoReading::Clipped { per_mille });
         }
         Ok(range)
     }

@@ -379,7 +379,7 @@ fn offset(codes: &[i16]) -> i64 {
 
 /// The least value that at least half of the values do not exceed: by halving the range of codes and their differences, 17
 /// times through the values, because there is no memory to sort them in.
-pub(super) fn median(values: impl Iterator<Item = i32> + Clone) -> i32 {
+pub(crate) fn median(values: impl Iterator<Item = i32> + Clone) -> i32 {
     let (mut low, mut high) = (i32::from(i16::MIN), i32::from(u16::MAX));
     while low < high {
         let middle = low + ((high - low) >> 1);
