@@ -346,13 +346,23 @@ fn peaks(scanned: &[u16], first: u32, lobe: u32, threshold: f32) -> Vec<Candidat
             let _ = found.push(peak);
         }
     };
+    // The height beyond which it climbs out of a valley, as a whole number, and only where the valley changes.
     let rise = threshold * 0.1;
-    let (mut climbing, mut top, mut valley) = (
+    let above = |valley: u16| {
+        let limit = f32::from(valley) * 1.25 + rise;
+        if limit < 65535.0 {
+            math::saturating_i32(limit) as u16
+        } else {
+            u16::MAX
+        }
+    };
+    let (mut climbing, mut top, mut valley, mut limit) = (
         false,
         Candidate {
             index: first,
             height: 0,
         },
+        u16::MAX,
         u16::MAX,
     );
     for (i, &height) in scanned.iter().enumerate() {
@@ -362,11 +372,11 @@ fn peaks(scanned: &[u16], first: u32, lobe: u32, threshold: f32) -> Vec<Candidat
                 top = Candidate { index, height };
             } else if height < top.height - (top.height >> 2) || index - top.index > 2 * lobe {
                 keep(top);
-                (climbing, valley) = (false, height);
+                (climbing, valley, limit) = (false, height, above(height));
             }
         } else if height < valley {
-            valley = height;
-        } else if f32::from(height) > f32::from(valley) * 1.25 + rise {
+            (valley, limit) = (height, above(height));
+        } else if height > limit {
             (climbing, top) = (true, Candidate { index, height });
         }
     }
