@@ -10,6 +10,7 @@ use super::lags::Lags;
 use crate::echo::correlation::{Sign, coarse_maximum, refine};
 use crate::echo::interpolate::REACH;
 use crate::math;
+use crate::order;
 use heapless::Vec;
 
 /// Grid points a cycle. The grid only finds basins, half a cycle wide: what is decided on is interpolated to
@@ -131,7 +132,9 @@ fn insert(found: &mut Vec<Pair, KEPT>, pair: Pair) {
     if found.is_full() && place < found.len() {
         let _ = found.pop();
     }
-    let _ = found.insert(place, pair);
+    if found.push(pair).is_ok() {
+        order::sink_last(found, |a, b| a.explained > b.explained);
+    }
 }
 
 /// The best pair at every spacing of the grid, and of those the local maxima.
@@ -166,7 +169,10 @@ fn starts(lags: &Lags<'_>, shortest: f32, fine: f32, grid: &[f32]) -> Vec<Start,
             if starts.is_full() && place < starts.len() {
                 let _ = starts.pop();
             }
-            let _ = starts.insert(place, middle);
+            // `insert` could panic, as far as the optimiser for size can tell.
+            if starts.push(middle).is_ok() {
+                order::sink_last(&mut starts, |a, b| a.explained > b.explained);
+            }
         }
         (before, middle) = (middle, now);
     }
