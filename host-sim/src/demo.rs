@@ -179,6 +179,7 @@ fn setup() -> GaugeSetup {
         coating: None,
         calibrated: None,
         trigger_jitter: Seconds::ZERO,
+        roughness: Metres::ZERO,
     }
 }
 

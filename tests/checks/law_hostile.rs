@@ -173,6 +173,7 @@ prop_compose! {
             coating: coating.map(|velocity| Coating { velocity: MetresPerSecond::new(velocity) }),
             calibrated: calibrated.map(|(from, to)| CalibratedRange { from: Metres::new(from), to: Metres::new(to) }),
             trigger_jitter: Seconds::new(zero.1),
+            roughness: Metres::ZERO,
         }
     }
 }

@@ -127,6 +127,9 @@ pub struct GaugeSetup {
     /// Jitter of the pulser against the sample clock, root mean square from shot to shot ([`crate::ShotArrivals`] measures
     /// it): it moves arrivals that count from the trigger, divided by the root of n in an average of n shots.
     pub trigger_jitter: Seconds,
+    /// Root mean square roughness of the back wall, for the budget: a reading gives the mean wall under the beam, and the
+    /// least one is two to two and a half times the roughness thinner. 0 (the default) for a smooth one.
+    pub roughness: Metres,
 }
 
 impl GaugeSetup {
@@ -153,6 +156,7 @@ impl GaugeSetup {
             coating: None,
             calibrated: None,
             trigger_jitter: Seconds::ZERO,
+            roughness: Metres::ZERO,
         };
         match setup.check() {
             None => Ok(setup),
@@ -215,6 +219,13 @@ impl GaugeSetup {
         self.material.velocity_in_part()
     }
 
+    /// The same set-up for a back wall of this root mean square roughness.
+    #[must_use]
+    pub const fn with_roughness(mut self, roughness: Metres) -> Self {
+        self.roughness = roughness;
+        self
+    }
+
     /// Samples per cycle of the centre frequency.
     #[must_use]
     pub const fn samples_per_cycle(&self) -> f32 {
@@ -272,6 +283,9 @@ impl GaugeSetup {
         }
         if !within(self.material.part_velocity_standard_uncertainty.get(), 0.0, 1e6) {
             return Some(SetupError::PartVelocityUncertainty);
+        }
+        if !within(self.roughness.get(), 0.0, 0.1) {
+            return Some(SetupError::Roughness);
         }
         if let Some(follows) = &self.material.temperature {
             if !(within(follows.coefficient, -1e3, 1e3) && within(follows.coefficient_standard_uncertainty, 0.0, 1e3)) {

@@ -238,15 +238,15 @@ pub fn wrong_cycle_probability(evidence: &Evidence<'_>) -> f32 {
 }
 
 /// What a reading would rest on, if that is not the pulse: the share of its energy that is unexplained, in per cent of
-/// the explained one. Three multiples at one distance are no chance, whatever they look like (the echoes of a thin wall
-/// run into each other): they are doubted instead.
+/// the explained one. Three multiples at one distance and little else are no chance, whatever they look like (the
+/// echoes of a thin wall run into each other): they are doubted instead.
 #[must_use]
 pub fn not_the_pulse(evidence: &Evidence<'_>) -> Option<u16> {
-    let strangeness = if evidence.train.echoes > 2 {
-        0.0
-    } else {
-        evidence.strangeness()
-    };
+    let train = evidence.train;
+    if train.echoes > 2 && train.unexplained < UNEXPLAINED_LIMIT {
+        return None;
+    }
+    let strangeness = evidence.strangeness();
     let percent = math::round_to_i32(100.0 * math::smaller(strangeness * strangeness, 100.0));
     (strangeness > NOT_THE_PULSE).then(|| u16::try_from(percent).unwrap_or(u16::MAX))
 }

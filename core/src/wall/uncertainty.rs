@@ -32,6 +32,8 @@ pub enum Source {
     ReferencePulse,
     /// The distance of a dual-element probe's elements.
     VPath,
+    /// The back wall is rough: its least place lies before its mean, which is what a reading gives.
+    Roughness,
 }
 
 impl Source {
@@ -48,6 +50,7 @@ impl Source {
             Self::Temperature => "temperature",
             Self::ReferencePulse => "reference-pulse",
             Self::VPath => "v-path",
+            Self::Roughness => "roughness",
         }
     }
 }
@@ -66,7 +69,7 @@ pub struct Term {
 #[derive(Clone, Debug, PartialEq, Default)]
 #[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Budget {
-    terms: Vec<Term, 8>,
+    terms: Vec<Term, 10>,
 }
 
 impl Budget {
@@ -120,6 +123,10 @@ impl Budget {
 /// (JCGM 100:2008, 4.3.7).
 pub(super) const RECTANGULAR: f32 = 0.577_350_26;
 
+/// How far a rough back wall reaches before its mean under the beam, over its root mean square: about 2 among the few
+/// correlation lengths that a beam covers, and seldom more than 2.5 (common practice).
+const DEEPEST: f32 = 2.5;
+
 /// The budget of a wall that was read with [`crate::wall::thickness::wall`].
 ///
 /// | term | value |
@@ -156,6 +163,7 @@ pub fn budget(setup: &GaugeSetup, times: &TrainTimes, wall: Metres) -> Budget {
     let by_velocity = way::gain(setup, wall) * way::gain(setup, wall);
     budget.add(Source::Temperature, (wall * temperature).abs() * by_velocity);
     budget.add(Source::VPath, way::v_path_uncertainty(setup, wall));
+    budget.add(Source::Roughness, setup.roughness * (DEEPEST * RECTANGULAR));
     budget
 }
 

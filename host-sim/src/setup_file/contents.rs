@@ -96,6 +96,8 @@ pub struct MaterialKeys {
 /// `[part]`: what is known of the part, besides its material.
 #[derive(Clone, Debug, PartialEq, Default)]
 pub struct PartKeys {
+    /// The back wall's root mean square roughness.
+    pub roughness_um: Option<f64>,
     /// Its temperature.
     pub temperature_c: Option<f64>,
     /// The temperature's standard uncertainty.
@@ -250,6 +252,7 @@ impl SetupKeys {
                 velocity_temperature_c: document.number("material", "velocity_temperature_c")?,
             },
             part: PartKeys {
+                roughness_um: document.number("part", "roughness_um")?,
                 temperature_c: document.number("part", "temperature_c")?,
                 temperature_standard_uncertainty_k: document.number("part", "temperature_standard_uncertainty_k")?,
             },
@@ -400,6 +403,7 @@ impl SetupKeys {
             coating: self.coating_velocity_m_s.map(|velocity| Coating {
                 velocity: MetresPerSecond::new(velocity as f32),
             }),
+            roughness: Metres::new((self.part.roughness_um.unwrap_or(0.0) * 1e-6) as f32),
             calibrated: calibration.and_then(|c| {
                 Some(CalibratedRange {
                     from: Metres::from_mm(c.from_mm? as f32),

@@ -192,6 +192,12 @@ pub const KEYS: &[Key] = &[
         "its standard uncertainty (k = 1) in kelvin; default 1",
     ),
     key(
+        "part",
+        "roughness_um",
+        "root mean square roughness of the back wall, for the budget (the least wall is about twice that thinner \
+         than the reading); default 0",
+    ),
+    key(
         "coating",
         "velocity_m_s",
         "velocity in the coating; the table asks for coating and wall",

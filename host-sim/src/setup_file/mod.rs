@@ -292,6 +292,7 @@ impl SetupFile {
             SetupError::TemperatureCoefficient => ("material", "velocity_temperature_coefficient_m_s_k"),
             SetupError::ReferenceTemperature => ("material", "velocity_temperature_c"),
             SetupError::PartTemperature => ("part", "temperature_c"),
+            SetupError::Roughness => ("part", "roughness_um"),
             SetupError::PulseQuality => ("probe", "reference_pulse_noise_percent"),
             SetupError::ZeroOffset => ("zero", "offset_ns"),
             SetupError::ZeroUncertainty => ("zero", "standard_uncertainty_ns"),

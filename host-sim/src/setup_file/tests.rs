@@ -357,6 +357,7 @@ fn every_key_is_described_and_written() {
             velocity_temperature_c: Some(21.0),
         },
         part: PartKeys {
+            roughness_um: Some(25.0),
             temperature_c: Some(60.0),
             temperature_standard_uncertainty_k: Some(2.0),
         },

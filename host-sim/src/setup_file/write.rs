@@ -75,6 +75,7 @@ impl SetupKeys {
                 .velocity_temperature_coefficient_standard_uncertainty_m_s_k
                 .map(number),
             ("material", "velocity_temperature_c") => self.material.velocity_temperature_c.map(number),
+            ("part", "roughness_um") => self.part.roughness_um.map(number),
             ("part", "temperature_c") => self.part.temperature_c.map(number),
             ("part", "temperature_standard_uncertainty_k") => self.part.temperature_standard_uncertainty_k.map(number),
             ("limits", "minimum_mm") => limits.map(|limits| number(limits.minimum_mm)),

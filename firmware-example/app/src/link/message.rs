@@ -83,6 +83,8 @@ pub struct SetUp {
     pub coating: Option<f32>,
     /// Thinnest and thickest block of the calibration, if there was one.
     pub calibrated: Option<[f32; 2]>,
+    /// Root mean square roughness of the back wall.
+    pub roughness: f32,
     /// Relative standard uncertainty of the element's diameter.
     pub element_diameter_uncertainty: f32,
     /// Length and velocity of the delay line or the delay blocks, if known.
@@ -135,6 +137,7 @@ impl SetUp {
             window: [setup.window.from.get(), setup.window.to.get()],
             coverage_factor: setup.coverage_factor,
             coating: setup.coating.map(|coating| coating.velocity.get()),
+            roughness: setup.roughness.get(),
             calibrated: setup.calibrated.map(|range| [range.from.get(), range.to.get()]),
             element_diameter_uncertainty: setup.probe.element_diameter_uncertainty,
             delay_line: (setup.probe.delay_line).map(|line| [line.length.get(), line.velocity.get()]),
@@ -226,6 +229,7 @@ impl SetUp {
             coating: self.coating.map(|velocity| Coating {
                 velocity: MetresPerSecond::new(velocity),
             }),
+            roughness: Metres::new(self.roughness),
             calibrated: self.calibrated.map(|[from, to]| CalibratedRange {
                 from: Metres::new(from),
                 to: Metres::new(to),
