@@ -19,8 +19,10 @@ pub struct Budget {
     pub flash_bytes: u64,
     /// Variables.
     pub static_ram_bytes: u64,
-    /// The deepest call.
+    /// The deepest call of a measurement.
     pub stack_bytes: u64,
+    /// The deepest call of the whole gauge.
+    pub gauge_stack_bytes: u64,
 }
 
 /// One line of costs that the board wrote.

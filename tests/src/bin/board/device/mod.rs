@@ -73,7 +73,7 @@ pub fn run(checks: &mut Checks) -> Result<(), Trouble> {
             checks.check(
                 "stack_of_the_whole_gauge",
                 status.map_err(|error| error.to_string()).and_then(|status: Status| {
-                    within("bytes of stack at most", status.stack.into(), budget.stack_bytes)
+                    within("bytes of stack at most", status.stack.into(), budget.gauge_stack_bytes)
                 }),
             );
         }
