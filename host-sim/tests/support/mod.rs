@@ -4,6 +4,8 @@
 #![allow(dead_code)] // Each test binary uses a part of it.
 #![allow(clippy::disallowed_methods)] // No bits are compared between machines here.
 
+pub mod small;
+
 use std::f64::consts::{PI, TAU};
 use std::path::PathBuf;
 use std::process::{Child, Command, Output, Stdio};
