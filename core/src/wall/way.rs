@@ -176,7 +176,7 @@ pub fn v_path_matters(setup: &GaugeSetup, wall: Metres, limit: Metres) -> bool {
 /// * From the interface: from the delay line's distance on. Behind a delay line that is not known, whatever the span, as
 ///   if the path in the part began at the element, see [`crate::wall::beam::uncorrected_shift`].
 /// * From the transmission pulse: the first back wall's own shift. A zero that was learned on a block holds that of the
-///   block; one of a calibration with its blocks, those of all of them ([`remaining_shift`]).
+///   block; one of a calibration with its blocks, those of all of them (`remaining_shift`).
 ///
 /// 0 without an element diameter; a dual-element probe counts as a single element of that diameter.
 #[must_use]

@@ -127,7 +127,7 @@ pub enum Undecided {
 
 /// Which period explains the echoes?
 ///
-/// Echoes that already have a role other than [`EchoRole::Other`](crate::echo::EchoRole::Other) (an interface echo) take no part.
+/// Echoes that already have a role other than [`EchoRole::Other`] (an interface echo) take no part.
 ///
 /// # Errors
 /// [`Undecided`].
