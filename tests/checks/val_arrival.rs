@@ -7,7 +7,7 @@ use halfpulse::echo::correlation::Sign;
 use halfpulse::echo::pulse::{ReferencePulse, learn};
 use halfpulse::setup::PULSE_CAPACITY;
 use halfpulse_tests::oracle;
-use halfpulse_tests::published::{Table, code_rows, number_rows};
+use halfpulse_tests::published::{Table, code_rows, number_rows, pairs};
 
 const REACH: usize = 8;
 
@@ -132,15 +132,7 @@ fn val_scatter_is_the_bound() {
 /// single fit, wherever two overlapping echoes put it.
 #[test]
 fn val_single_echo_fits_of_numpy() {
-    const ORIGIN: usize = 128;
-    // The reference is good for -50 to +75 samples about its origin; beyond it is below 0.1 %.
-    const CUT: usize = ORIGIN - 50;
-    // 0.4 of a 12-bit full scale is the size of an echo of amplitude 1.
-    const UNIT: f64 = 0.4 * 2048.0;
-    let reference: Vec<f32> = number_rows("vectors/pair_reference.csv")[0][CUT..ORIGIN + 75]
-        .iter()
-        .map(|&x| x as f32)
-        .collect();
+    let reference = pairs::reference();
     let mut buffer = [0.0f32; PULSE_CAPACITY];
     let facts = learn(&reference, 10.0, &mut buffer).expect("a reference pulse");
     let pulse = ReferencePulse::new(&buffer, facts);
@@ -151,12 +143,12 @@ fn val_single_echo_fits_of_numpy() {
         let stated = row.number("one_delay");
         // A cycle to either side, so that the right one has to be chosen. (Two equal echoes far apart
         // would tie over the whole record.)
-        let around = stated - (ORIGIN - CUT) as f64 + f64::from(facts.origin);
+        let around = stated - pairs::BEFORE_ORIGIN as f64 + f64::from(facts.origin);
         let arrival = read(Estimator::LeastSquares, &codes, around, 11.0, 10.0, &pulse);
-        let place = shift(arrival, &pulse) + (ORIGIN - CUT) as f64;
+        let place = shift(arrival, &pulse) + pairs::BEFORE_ORIGIN as f64;
         // The bound of one echo of amplitude 1 at this noise: 0.021 samples at 30 dB.
         let bound = 0.021 * 10f64.powf((30.0 - row.number("snr_db")) / 20.0);
-        let amplitude = f64::from(arrival.amplitude) / UNIT;
+        let amplitude = f64::from(arrival.amplitude) / pairs::UNIT;
         let name = format!("ratio {}, spacing {}", row.text("true_ratio"), row.text("true_spacing"));
         println!(
             "{name}: {place:.4} {stated:.4}, {amplitude:.4} {}",

@@ -14,31 +14,25 @@ use halfpulse::echo::separation::{PulseTrust, Unresolved, Verdict};
 use halfpulse::setup::PULSE_CAPACITY;
 use halfpulse::{AdcFormat, Gauge, Hertz, Record, SampleClock, Scratch};
 use halfpulse_tests::oracle::{self, Random};
-use halfpulse_tests::published::{Table, code_rows, number_rows};
+use halfpulse_tests::published::{Table, code_rows, pairs};
 use halfpulse_tests::readme;
 
 /// The 32 records of `pairs.csv`: NumPy's exhaustive search and maximum-likelihood fit of one and two pulses
 /// (`tests/published/README.md`). Where two explain less than one, only the verdict can be compared.
 #[test]
 fn val_pairs_of_numpy() {
-    const ORIGIN: usize = 128;
-    const CUT: usize = ORIGIN - 50;
-    const UNIT: f64 = 0.4 * 2048.0;
-    let reference: Vec<f32> = number_rows("vectors/pair_reference.csv")[0][CUT..ORIGIN + 75]
-        .iter()
-        .map(|&x| x as f32)
-        .collect();
+    let reference = pairs::reference();
     let mut buffer = [0.0f32; PULSE_CAPACITY];
     let facts = learn(&reference, 10.0, &mut buffer).expect("a reference pulse");
     let pulse = ReferencePulse::new(&buffer, facts);
     // What NumPy calls a delay is where sample 128 of the reference goes.
-    let origin = f64::from(facts.origin) - (ORIGIN - CUT) as f64;
+    let origin = f64::from(facts.origin) - pairs::BEFORE_ORIGIN as f64;
     let mut compared = 0;
     for (row, codes) in Table::read("vectors/pairs.csv")
         .rows()
         .zip(code_rows("vectors/pair_codes.csv"))
     {
-        let sigma = UNIT * 10f64.powf(-row.number("snr_db") / 20.0);
+        let sigma = pairs::UNIT * 10f64.powf(-row.number("snr_db") / 20.0);
         let noise = sigma.hypot(12f64.sqrt().recip()) as f32;
         let surroundings = Surroundings {
             record: Record::new(&codes, AdcFormat::signed(12), SampleClock::new(Hertz::from_mhz(50.0))),

@@ -151,3 +151,21 @@ pub fn delay_line_codes() -> Vec<i16> {
         .map(|row| (row.number("y") * 32768.0).round() as i16)
         .collect()
 }
+
+/// The records of one or two echoes, `vectors/pairs.csv`.
+pub mod pairs {
+    /// Samples of the reference pulse before its origin. What the table calls a delay is where the origin goes.
+    pub const BEFORE_ORIGIN: usize = 50;
+    /// Codes of an echo of amplitude 1: 0.4 of a 12-bit full scale.
+    pub const UNIT: f64 = 0.4 * 2048.0;
+
+    /// The pulse, from -50 to +75 samples about its origin, which is sample 128 of the table; beyond that it is below 0.1 %.
+    #[must_use]
+    pub fn reference() -> Vec<f32> {
+        const ORIGIN: usize = 128;
+        super::number_rows("vectors/pair_reference.csv")[0][ORIGIN - BEFORE_ORIGIN..ORIGIN + 75]
+            .iter()
+            .map(|&x| x as f32)
+            .collect()
+    }
+}

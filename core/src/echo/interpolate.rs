@@ -50,12 +50,12 @@ pub fn at_codes(codes: &[i16], index: usize, fraction: f32) -> f32 {
     if fraction == 0.0 {
         return code(Some(index));
     }
-    let mut sine = math::sin_pi_unit(fraction) * core::f32::consts::FRAC_1_PI;
-    if REACH & 1 == 0 {
-        sine = -sine;
-    }
     let first = |tap: usize| (index + 1 + tap).checked_sub(REACH);
-    weighted((0..2 * REACH).map(|tap| code(first(tap))), fraction, sine)
+    weighted(
+        (0..2 * REACH).map(|tap| code(first(tap))),
+        fraction,
+        first_sign(fraction),
+    )
 }
 
 /// One over the window's half length.

@@ -161,8 +161,8 @@ pub fn reached(
 /// The record's timing noise beside the echoes. A steady one is never less than the noise per sample that the scan has
 /// found, which is what it is in white noise and known better there.
 ///
-/// Only `range` is listened to: before the part's surface there is no grain. `envelope` is the one that the scan has filled: where it is above `quiet`, in its counts, something stands that is not
-/// noise.
+/// Only `range` is listened to: before the part's surface there is no grain. `envelope` is the one that the scan has
+/// filled: where it is above `quiet`, in its counts, something stands that is not noise.
 #[must_use]
 #[inline(never)]
 pub fn listen(

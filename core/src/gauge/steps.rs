@@ -327,13 +327,14 @@ impl Gauge<'_> {
                 standard_uncertainty: Metres::new(math::sqrt(a * a + b * b)),
             })
         });
+        let wrong_cycle_probability = judgement::wrong_cycle_probability(&evidence);
         Ok(Reading {
             thickness: wall,
             standard_uncertainty,
             coverage_factor: self.setup.coverage_factor,
             coating,
-            wrong_cycle_probability: judgement::wrong_cycle_probability(&evidence),
-            doubts: judgement::doubts(&evidence),
+            wrong_cycle_probability,
+            doubts: judgement::doubts(&evidence, wrong_cycle_probability),
             budget,
         })
     }
@@ -354,6 +355,7 @@ impl Gauge<'_> {
             }
         }
     }
+
     /// Pulse metrics of the best echo, and the verdict on the nearest pair.
     #[inline(never)]
     pub(super) fn describe(&mut self, record: &Record<'_>, noise: &Noise) {

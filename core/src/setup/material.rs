@@ -2,15 +2,12 @@
 //! the part may differ from the blocks.
 
 use crate::math;
+use crate::math::RECTANGULAR;
 use crate::units::{Celsius, MetresPerSecond};
 
 /// How far a part whose temperature nobody states may be from the temperature that its velocity holds at:
 /// half-width of a rectangular distribution, in kelvin. A convention; hot pipes are further off.
 pub const UNKNOWN_TEMPERATURE: Celsius = Celsius::new(10.0);
-
-/// 1 / sqrt(3): the standard uncertainty of a rectangular distribution over its half-width
-/// (JCGM 100:2008, 4.3.7).
-const RECTANGULAR: f32 = 0.577_350_26;
 
 /// The part's material.
 #[derive(Clone, Copy, Debug, PartialEq)]

@@ -6,7 +6,7 @@
 
 use crate::echo::train::Train;
 use crate::echo::{Echo, EchoRole, Surroundings};
-use crate::math;
+use crate::math::{self, RECTANGULAR};
 use crate::outcome::{Doubt, Doubts};
 use crate::path::PathLaw;
 use crate::setup::{EchoSign, GaugeSetup, ProbeKind, Span};
@@ -199,7 +199,7 @@ pub fn coating_overlap(evidence: &Evidence<'_>) -> Option<Metres> {
     }
     // A rectangular half width, in the coating's own velocity.
     let half_width = evidence.shift_by(worst) * (coating.velocity / evidence.setup.velocity());
-    Some(half_width * 0.577_350_3)
+    Some(half_width * RECTANGULAR)
 }
 
 /// Upper bound of the probability that the reading is wrong by a cycle.
@@ -251,9 +251,9 @@ pub fn not_the_pulse(evidence: &Evidence<'_>) -> Option<u16> {
     (strangeness > NOT_THE_PULSE).then(|| u16::try_from(percent).unwrap_or(u16::MAX))
 }
 
-/// Every doubt that applies.
+/// Every doubt that applies; `wrong_cycle` is [`wrong_cycle_probability`], which the reading states too.
 #[must_use]
-pub fn doubts(evidence: &Evidence<'_>) -> Doubts {
+pub fn doubts(evidence: &Evidence<'_>, wrong_cycle: f32) -> Doubts {
     let Evidence {
         setup,
         train,
@@ -297,7 +297,7 @@ pub fn doubts(evidence: &Evidence<'_>) -> Doubts {
             Doubt::PulseMismatch,
         );
     }
-    doubts.raise_if(wrong_cycle_probability(evidence) > WRONG_CYCLE_LIMIT, Doubt::LowSignal);
+    doubts.raise_if(wrong_cycle > WRONG_CYCLE_LIMIT, Doubt::LowSignal);
     doubts.raise_if(!evidence.stands_out(), Doubt::LowSignal);
     // A single block covers a point. How far the part lies from it stands in the budget already (velocity,
     // beam); what only a second block shows, a velocity that changes, its stated uncertainty must cover.

@@ -1,7 +1,7 @@
 //! The uncertainty budget: named terms, combined as JCGM 100:2008 (5.1.2) says.
 
 use crate::echo::pulse::PulseFacts;
-use crate::math;
+use crate::math::{self, RECTANGULAR};
 use crate::setup::{GaugeSetup, ProbeKind, Span, UNKNOWN_TEMPERATURE};
 use crate::units::{Metres, MetresPerSecond, Seconds};
 use crate::wall::thickness::{TrainTimes, excess, round_trip, wall_span};
@@ -118,10 +118,6 @@ impl Budget {
         largest.map(|term| term.source)
     }
 }
-
-/// 1 / sqrt(3): the standard uncertainty of a rectangular distribution over its half-width
-/// (JCGM 100:2008, 4.3.7).
-pub(super) const RECTANGULAR: f32 = 0.577_350_26;
 
 /// How far a rough back wall reaches before its mean under the beam, over its root mean square: about 2 among the few
 /// correlation lengths that a beam covers, and seldom more than 2.5 (common practice).

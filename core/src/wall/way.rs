@@ -1,6 +1,6 @@
 //! What is known of the sound's way, and what is not: the law of a set-up's echoes, and how far it may be off.
 
-use crate::math;
+use crate::math::{self, RECTANGULAR};
 use crate::path::diffraction::{Beam, Diffraction, Spreading};
 use crate::path::v_path::Ray;
 use crate::path::{PathLaw, VPath};
@@ -8,7 +8,6 @@ use crate::setup::{CalibratedRange, GaugeSetup, ProbeKind, Span};
 use crate::units::{Metres, Seconds};
 use crate::wall::beam::normalised_distance;
 use crate::wall::thickness::wall_span;
-use crate::wall::uncertainty::RECTANGULAR;
 use core::f32::consts::TAU;
 
 /// What is left of a corrected shift besides what the element's size is off by, as the half-width of a rectangle over the
