@@ -270,11 +270,9 @@ impl<'a> Model<'a> {
                 if b2 == 0.0 { 0.0 } else { two.direct },
                 b2 * (two.along * narrow + ratio * two.turned),
             ];
-            for (sum, slope) in right.iter_mut().zip(&slopes) {
-                *sum += slope * left;
-            }
+            add_right(&mut right, &slopes, left);
             if renew {
-                accumulate(rows, &slopes);
+                add_products(rows, &slopes);
             }
             one.step();
             two.step();
@@ -403,17 +401,39 @@ fn cosine_and_sine(angle: f32) -> (f32, f32) {
     (math::cos(angle), math::sin(angle))
 }
 
-/// Adds the products of one sample's slopes to the upper triangle.
+/// Adds the products of one sample's slopes to the upper triangle. Written out: this runs for every sample of every step, and
+/// an optimiser for size leaves loops as they stand.
 #[inline(always)]
-fn accumulate(rows: &mut Rows, slopes: &[f32; COUNT]) {
-    let mut others: &[f32] = slopes;
-    for (place, row) in rows.iter_mut().enumerate() {
-        let Some((&slope, rest)) = others.split_first() else {
-            return;
+fn add_products(rows: &mut Rows, slopes: &[f32; COUNT]) {
+    macro_rules! add {
+        ($row:ident, $slope:ident: [$($skipped:tt)*] $($cell:ident $other:ident)*) => {
+            let [$($skipped,)* $($cell,)* _] = $row;
+            $(*$cell += $slope * $other;)*
         };
-        for (cell, &other) in row.iter_mut().skip(place).zip(others) {
-            *cell += slope * other;
-        }
-        others = rest;
     }
+    let [s0, s1, s2, s3, s4, s5, s6, s7] = *slopes;
+    let [r0, r1, r2, r3, r4, r5, r6, r7] = rows;
+    add!(r0, s0: [] a s0 b s1 c s2 d s3 e s4 f s5 g s6 h s7);
+    add!(r1, s1: [_] b s1 c s2 d s3 e s4 f s5 g s6 h s7);
+    add!(r2, s2: [_ _] c s2 d s3 e s4 f s5 g s6 h s7);
+    add!(r3, s3: [_ _ _] d s3 e s4 f s5 g s6 h s7);
+    add!(r4, s4: [_ _ _ _] e s4 f s5 g s6 h s7);
+    add!(r5, s5: [_ _ _ _ _] f s5 g s6 h s7);
+    add!(r6, s6: [_ _ _ _ _ _] g s6 h s7);
+    add!(r7, s7: [_ _ _ _ _ _ _] h s7);
+}
+
+/// Adds a sample's slopes times what is left of it.
+#[inline(always)]
+fn add_right(right: &mut [f32; COUNT], slopes: &[f32; COUNT], left: f32) {
+    let [s0, s1, s2, s3, s4, s5, s6, s7] = *slopes;
+    let [a, b, c, d, e, f, g, h] = right;
+    *a += s0 * left;
+    *b += s1 * left;
+    *c += s2 * left;
+    *d += s3 * left;
+    *e += s4 * left;
+    *f += s5 * left;
+    *g += s6 * left;
+    *h += s7 * left;
 }
