@@ -1,16 +1,11 @@
 //! Every check; the file names tell where the truth comes from: val_ outside, law_ symmetry, regress_ our own past.
 
-mod law_gauge;
 mod regress_campaigns;
 mod val_bound;
 mod val_calibration;
-mod val_tables;
 mod val_uncertainty;
-mod val_arrival;
 mod val_averaging;
 mod val_clipped_echoes;
-mod val_envelope;
-mod val_gauge;
 mod val_interleaving;
 mod val_pulse;
 mod val_receiver;

@@ -27,7 +27,7 @@ pub fn figure_of_this_compiler(label: &str, value: &str, command: &str) {
 }
 
 fn row(label: &str, value: &str, test: &str, compare: bool) {
-    let path = Path::new(env!("CARGO_MANIFEST_DIR")).join("../README.md");
+    let path = Path::new(env!("CARGO_MANIFEST_DIR")).join("../../README.md");
     let _guard = FILE.lock().unwrap_or_else(PoisonError::into_inner);
     let text = std::fs::read_to_string(&path).expect("README.md is there");
     let wanted = format!("| {label} | {value} | `{test}` |");

@@ -6,8 +6,8 @@ use halfpulse::echo::arrival::{Arrival, Estimator, Search, estimate};
 use halfpulse::echo::correlation::Sign;
 use halfpulse::echo::pulse::{ReferencePulse, learn};
 use halfpulse::setup::PULSE_CAPACITY;
-use halfpulse_tests::oracle;
-use halfpulse_tests::published::{Table, code_rows, number_rows, pairs};
+use halfpulse_published::oracle;
+use halfpulse_published::{Table, code_rows, number_rows, pairs};
 
 const REACH: usize = 8;
 

@@ -6,8 +6,8 @@
 //! rate, is 28 % off at 50 samples a cycle.)
 
 use halfpulse::echo::envelope::envelope_into;
-use halfpulse_tests::oracle;
-use halfpulse_tests::published::{Row, Table, number_rows};
+use halfpulse_published::oracle;
+use halfpulse_published::{Row, Table, number_rows};
 
 /// Largest error where the exact envelope is above a tenth of its peak, as a share of the peak.
 fn largest_error(samples: &[f64], samples_per_cycle: f64, exact: &[f64]) -> f64 {

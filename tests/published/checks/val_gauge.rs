@@ -6,8 +6,8 @@ use halfpulse::{
     AdcFormat, Doubt, Gauge, GaugeSetup, Hertz, Material, Metres, MetresPerSecond, NoReading, Polarity, Probe, Reading,
     Record, SampleClock, Scratch, Seconds, Span, Window, Zero,
 };
-use halfpulse_tests::published::{Table, code_rows, delay_line_codes, number_rows};
-use halfpulse_tests::readme;
+use halfpulse_published::readme;
+use halfpulse_published::{Table, code_rows, delay_line_codes, number_rows};
 
 /// The true wall of the delay-line A-scan.
 const TRUE_WALL_MM: f64 = 4.0;

@@ -5,7 +5,7 @@ use halfpulse::{
     AdcFormat, Echo, EchoRole, Gauge, GaugeSetup, Hertz, Material, Metres, MetresPerSecond, NoReading, Polarity, Probe,
     Reading, Record, SampleClock, Scratch, Seconds, Span, Window, Zero,
 };
-use halfpulse_tests::oracle;
+use halfpulse_published::oracle;
 use proptest::prelude::*;
 
 const SAMPLES: usize = 3000;

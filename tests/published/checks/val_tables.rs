@@ -1,8 +1,8 @@
 //! The published tables against closed forms and against each other: what every other check of
 //! this kind leans on.
 
-use halfpulse_tests::oracle;
-use halfpulse_tests::published::{Table, code_rows, delay_line_codes, number_rows};
+use halfpulse_published::oracle;
+use halfpulse_published::{Table, code_rows, delay_line_codes, number_rows};
 
 /// Closed form: half-width of a Gaussian at -X dB is sqrt(X ln 10 / 10) standard deviations, hence
 /// the product of -6 dB bandwidth and -20 dB duration.

@@ -3,10 +3,13 @@
 //! Plain comma-separated numbers and words, no quotes. A table that is missing or malformed is a
 //! mistake in this repository, so everything here panics with file, line and column.
 
+pub mod oracle;
+pub mod readme;
+
 use std::path::PathBuf;
 
 fn text(name: &str) -> String {
-    let path = PathBuf::from(env!("CARGO_MANIFEST_DIR")).join("published").join(name);
+    let path = PathBuf::from(env!("CARGO_MANIFEST_DIR")).join(name);
     std::fs::read_to_string(&path).unwrap_or_else(|error| panic!("{}: {error}", path.display()))
 }
 

@@ -1,0 +1,11 @@
+//! Quick checks of the core alone against what comes from outside: published values, general-purpose libraries, closed forms.
+//!
+//! Everything here takes a few seconds and needs no crate of this project but the core, so that it can be run against every
+//! mutant of the core (`.cargo/mutants.toml`).
+
+mod law_gauge;
+mod val_arrival;
+mod val_envelope;
+mod val_gauge;
+mod val_pairs;
+mod val_tables;
