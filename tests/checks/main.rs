@@ -14,6 +14,7 @@ mod val_path;
 mod val_population;
 mod val_separation;
 mod val_separation_support;
+mod val_textbook;
 mod val_thin_wall;
 mod val_train_fit;
 mod val_two_gains;

@@ -2,19 +2,23 @@
 //!
 //! Instructions are counted twice, by the board's timer under the emulator's instruction clock and by a
 //! plugin of the emulator; the plugin also tells how often each instruction ran, from which cycles are
-//! estimated. The table is committed as `tests/board_costs.txt`, so that a change shows as a difference.
+//! estimated. The table is committed as `tests/board_costs.txt`, so that a change shows as a difference. Counted in the same
+//! run: the textbook's way through a record (`firmware-example/textbook`), which a typical reading has to undercut.
 
 mod cycles;
+mod textbook;
 
 use crate::toolchain::{CORTEX_M4F, Toolchain, root, target_folder};
 use crate::{Checks, Trouble, emulator};
 use cycles::Counts;
 use halfpulse::gauge::stage::Stage;
 use halfpulse_mps2::canned::RECORDS;
+use halfpulse_tests::readme;
 use std::fmt::Write as _;
 use std::fs;
 use std::path::{Path, PathBuf};
 use std::process::{Command, Stdio};
+use textbook::Textbook;
 
 /// By how much the sum of the stages may differ from the whole reading.
 const SUM_TOLERANCE: f64 = 0.03;
@@ -36,6 +40,14 @@ struct Region {
 struct Cost {
     instructions: u64,
     cycles: u64,
+}
+
+impl Cost {
+    /// Exact where the plugin counts; the timer is good to some ten.
+    fn add(&mut self, region: &Region, counts: Option<&Counts>, number: usize) {
+        self.instructions += counts.map_or(region.instructions, |counts| counts.instructions(number));
+        self.cycles += counts.map_or(0, |counts| counts.cycles(number));
+    }
 }
 
 /// One line of the table.
@@ -66,9 +78,19 @@ pub fn run(checks: &mut Checks, write: bool) -> Result<(), Trouble> {
         say!("note: this emulator does not load the counting plugin, which is made for QEMU 7.2: no cycles");
     }
     let rows = rows(&regions, counts.as_ref()).map_err(Trouble::Failed)?;
-    let table = table(&rows, &toolchain.to_string());
+    let textbook = Textbook::of(&regions, counts.as_ref()).map_err(Trouble::Failed)?;
+    let table = table(&rows, &textbook, &toolchain.to_string());
     say!("{table}");
     checks.check("stages_sum_to_the_whole", sums(&rows));
+    let typical = rows.first().map_or(Cost::default(), |row| row.whole);
+    checks.check("typical_reading_below_the_textbook", textbook.against(typical));
+    if typical.cycles > 0 {
+        readme::figure_of_this_compiler(
+            "a typical reading (10 mm of steel), estimated cycles / the textbook's way through the record, counted in the same run",
+            &format!("{} / {}", typical.cycles, textbook.whole().cycles),
+            "cargo board cost",
+        );
+    }
     let file = root().join("tests/board_costs.txt");
     if write {
         fs::write(&file, &table).map_err(|error| Trouble::Failed(format!("{}: {error}", file.display())))?;
@@ -179,6 +201,9 @@ fn agree(regions: &[Region], counts: &Counts) -> Result<String, String> {
 fn rows(regions: &[Region], counts: Option<&Counts>) -> Result<Vec<Row>, String> {
     let mut rows: Vec<Row> = Vec::new();
     for (number, region) in regions.iter().enumerate() {
+        if region.record == textbook::RECORD {
+            continue;
+        }
         if rows.last().is_none_or(|row| row.record != region.record) {
             rows.push(Row {
                 record: region.record.clone(),
@@ -193,9 +218,7 @@ fn rows(regions: &[Region], counts: Option<&Counts>) -> Result<Vec<Row>, String>
             None if region.what == "measure" => &mut row.whole,
             None => return Err(format!("the board speaks of a stage `{}`", region.what)),
         };
-        // Exact where the plugin counts; the timer is good to some ten.
-        cost.instructions += counts.map_or(region.instructions, |counts| counts.instructions(number));
-        cost.cycles += counts.map_or(0, |counts| counts.cycles(number));
+        cost.add(region, counts, number);
     }
     if rows.len() == RECORDS.len() && rows.iter().all(|row| row.whole.instructions > 0) {
         Ok(rows)
@@ -204,7 +227,7 @@ fn rows(regions: &[Region], counts: Option<&Counts>) -> Result<Vec<Row>, String>
     }
 }
 
-fn table(rows: &[Row], toolchain: &str) -> String {
+fn table(rows: &[Row], textbook: &Textbook, toolchain: &str) -> String {
     let mut text = String::from(
         "What a reading costs on a Cortex-M4F, by stage; records of 4096 samples. Written by `cargo board cost --write`.\n\
          Instructions are exact; cycles are estimated without wait states. A stage that ran twice counts twice.\n",
@@ -228,9 +251,7 @@ fn table(rows: &[Row], toolchain: &str) -> String {
         }
         let _ = writeln!(text);
     }
-    let end = text.trim_end().len();
-    text.truncate(end);
-    text + "\n"
+    text + &textbook.table()
 }
 
 /// Only the compiler: where its core library comes from is this machine's affair.
@@ -313,7 +334,7 @@ mod tests {
         let folder = std::env::temp_dir().join(format!("halfpulse-cost-{}", std::process::id()));
         fs::create_dir_all(&folder).unwrap();
         let file = folder.join("costs.txt");
-        fs::write(&file, table(&[row(600)], "rustc 1, somewhere")).unwrap();
+        fs::write(&file, table(&[row(600)], &Textbook::default(), "rustc 1, somewhere")).unwrap();
         let compare = |whole: u64, compiler: &str| compare(&file, &[row(whole)], compiler);
         assert!(compare(600, "rustc 1").unwrap().contains("the same"));
         assert!(compare(650, "rustc 1").unwrap().contains("600 -> 650"));
