@@ -5,7 +5,6 @@
 //! from back wall to back wall, so that the paint drops out. Nothing here knows the truth but the
 //! table.
 
-use crate::calibrating::Learn;
 use crate::calibrating::block::{self, BlockRecord};
 use crate::calibrating::cut;
 use crate::input_error::InputError;
@@ -197,7 +196,7 @@ fn learn(gauge: &mut Gauge<'_>) -> Result<(), InputError> {
     let (format, clock) = (shots[0].format, shots[0].clock);
     let file = RecordFile::from_codes(shots.into_iter().map(|shot| shot.codes).collect(), format);
     let block = BlockRecord::new(Path::new("block of the demonstration"), (12.5, 0.002), file, clock)?;
-    let times = block::measure(gauge, &block, Learn::Zero)?;
+    let times = block::measure(gauge, &block, false)?;
     let pulse = cut::reference_pulse(&block, &times, gauge.setup())?;
     gauge
         .learn_pulse(&pulse)

@@ -10,7 +10,7 @@ use halfpulse::{
     Gauge, GaugeSetup, Hertz, Material, Metres, MetresPerSecond, Probe, Scratch, Seconds, Span, Window, Zero,
 };
 use halfpulse_sim::calibrating::block::{self, BlockRecord};
-use halfpulse_sim::calibrating::{Learn, cut};
+use halfpulse_sim::calibrating::cut;
 use halfpulse_sim::front_end::{Purpose, Random};
 use halfpulse_sim::record_file::RecordFile;
 use halfpulse_sim::scene::Scene;
@@ -57,7 +57,7 @@ fn learn(gauge: &mut Gauge<'_>) {
     let (format, clock) = (shots[0].format, shots[0].clock);
     let file = RecordFile::from_codes(shots.into_iter().map(|shot| shot.codes).collect(), format);
     let block = BlockRecord::new(Path::new("block"), (WALL_MM, 0.001), file, clock).expect("the block is sound");
-    let times = block::measure(gauge, &block, Learn::Zero).expect("the block can be read");
+    let times = block::measure(gauge, &block, false).expect("the block can be read");
     let pulse = cut::reference_pulse(&block, &times, gauge.setup()).expect("a pulse can be cut");
     gauge.learn_pulse(&pulse).expect("the pulse fits");
 }

@@ -297,48 +297,54 @@ fn unexplained_per_sample(record: &Record<'_>, pulse: &ReferencePulse<'_>, arriv
 /// Share of a cycle up to which a turned phase leaves the right half cycle clearly ahead.
 const LITTLE_TURNED: f32 = 0.15;
 
+/// Share of a cycle by which a lag may differ from the one that its way gives, and the half cycle still be told by it.
+const SURELY_SETTLED: f32 = 0.1;
+
 /// Moves echoes that were found on the wrong half cycle for the way they came.
 ///
 /// A beam turns an echo's phase by up to a quarter of a cycle: then two half cycles of opposite sign fit it about as well,
 /// and noise decides between them. What tells them apart is the group lag, of which one has what its way gives
 /// (`expected_lag` in samples for a place) and the other half a cycle less or more: the nearer one is taken. Where the way
 /// turns the phase by little the choice is not in doubt and echoes stay as they are, and so do those that have a role.
+///
+/// What turns all echoes alike (the way through a couplant film, a modelled pulse of another phase than the probe's)
+/// adds to every lag. The strongest echo says how much, and so all of one train land on one half cycle, be it the
+/// right one or its neighbour.
 pub fn settle_half_cycles(
     surroundings: &Surroundings<'_>,
     echoes: &mut EchoList,
     expected_lag: impl Fn(f32) -> f32,
     scratch: &mut [f32],
 ) {
-    let (half, rate) = (
-        0.5 * surroundings.samples_per_cycle,
-        surroundings.record.clock().rate.get(),
-    );
+    let cycle = surroundings.samples_per_cycle;
+    let half = 0.5 * cycle;
+    let is_turned = |expected: f32| expected.abs() >= LITTLE_TURNED * cycle;
+    let mut common = 0.0;
+    if let Some(strongest) = strongest_other(echoes)
+        && let Some(lag) = whole_lag(surroundings, &strongest, scratch)
+    {
+        let expected = expected_lag(strongest.position.as_samples());
+        common = lag - expected;
+        let settled = common - math::round_to_i32(common / half) as f32 * half;
+        if is_turned(expected) && settled.abs() < SURELY_SETTLED * cycle {
+            common = settled;
+        }
+    }
     let mut any = false;
     for echo in echoes.iter_mut().filter(|echo| echo.role == EchoRole::Other) {
         let expected = expected_lag(echo.position.as_samples());
-        if expected.abs() < LITTLE_TURNED * surroundings.samples_per_cycle {
+        if !is_turned(expected) {
             continue;
         }
-        let (here, opposite) = match echo.polarity {
-            Polarity::Positive => (Sign::Positive, Sign::Negative),
-            Polarity::Negative => (Sign::Negative, Sign::Positive),
-        };
-        // The list holds the lag less what noise explains.
-        let chance = echo.chance_of_lag(surroundings);
-        let lag = if echo.group_lag > Seconds::ZERO {
-            (echo.group_lag + chance).get() * rate
-        } else if echo.group_lag < Seconds::ZERO {
-            (echo.group_lag - chance).get() * rate
-        } else if let Some(found) = find_arrival(surroundings, echo.position.index, here, scratch) {
-            found.group_lag
-        } else {
+        let Some(lag) = whole_lag(surroundings, echo, scratch) else {
             continue;
         };
-        let moved = math::round_to_i32((lag - expected) / half);
+        let moved = math::round_to_i32((lag - expected - common) / half);
         if moved == 0 {
             continue;
         }
         let place = math::round_to_i32(echo.position.as_samples() + moved as f32 * half);
+        let (here, opposite) = signs_of(echo);
         let sign = if moved % 2 == 0 { here } else { opposite };
         let settled = u32::try_from(place)
             .ok()
@@ -359,6 +365,38 @@ pub fn settle_half_cycles(
             last = Some(echo.position);
             apart || echo.role != EchoRole::Other
         });
+    }
+}
+
+/// The strongest echo without a role.
+fn strongest_other(echoes: &EchoList) -> Option<Echo> {
+    let mut strongest: Option<Echo> = None;
+    for echo in echoes.iter().filter(|echo| echo.role == EchoRole::Other) {
+        if strongest.is_none_or(|s| echo.amplitude > s.amplitude) {
+            strongest = Some(*echo);
+        }
+    }
+    strongest
+}
+
+/// An echo's own sign, and the other one.
+fn signs_of(echo: &Echo) -> (Sign, Sign) {
+    match echo.polarity {
+        Polarity::Positive => (Sign::Positive, Sign::Negative),
+        Polarity::Negative => (Sign::Negative, Sign::Positive),
+    }
+}
+
+/// The group lag of an echo in samples, with what noise explains: the list holds it without.
+fn whole_lag(surroundings: &Surroundings<'_>, echo: &Echo, scratch: &mut [f32]) -> Option<f32> {
+    let chance = echo.chance_of_lag(surroundings);
+    let rate = surroundings.record.clock().rate.get();
+    if echo.group_lag > Seconds::ZERO {
+        Some((echo.group_lag + chance).get() * rate)
+    } else if echo.group_lag < Seconds::ZERO {
+        Some((echo.group_lag - chance).get() * rate)
+    } else {
+        find_arrival(surroundings, echo.position.index, signs_of(echo).0, scratch).map(|found| found.group_lag)
     }
 }
 

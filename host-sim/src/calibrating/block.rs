@@ -1,6 +1,5 @@
 //! One block: which of its echoes is the first back wall, and when it came.
 
-use super::Learn;
 use crate::input_error::InputError;
 use crate::measuring::{self, Shot};
 use crate::record_file::RecordFile;
@@ -100,9 +99,8 @@ const UNKNOWN_VELOCITY: f32 = 0.1;
 /// # Errors
 /// No back wall where the thickness promises one; a clipped one; no interface echo or no period where
 /// they are needed.
-pub fn measure(gauge: &mut Gauge<'_>, block: &BlockRecord, learn: Learn) -> Result<BlockTimes, InputError> {
+pub fn measure(gauge: &mut Gauge<'_>, block: &BlockRecord, needs_period: bool) -> Result<BlockTimes, InputError> {
     let setup = *gauge.setup();
-    let needs_period = setup.span == Span::BackWallToBackWall && learn != Learn::Zero;
     let (echoes, outcome) = look(gauge, block, &block.average);
     let found = find(&echoes, block, &setup);
     let Some((back_wall, interface)) = found else {

@@ -110,9 +110,11 @@ pub fn calibrate_at(
     let mut scratch = HeapScratch::new(longest);
     let mut gauge = setup.gauge(scratch.workspace())?;
     gauge.change_setup(core_setup).map_err(|error| setup.locate(error))?;
+    // The pulse at hand has to find the first back walls. Periods can wait for the pulse that is learned: under a couplant
+    // film echoes may be so unlike a modelled one that their half cycles are told only by chance.
     let before: Vec<BlockTimes> = blocks
         .iter()
-        .map(|block| block::measure(&mut gauge, block, learn))
+        .map(|block| block::measure(&mut gauge, block, false))
         .collect::<Result<_, _>>()?;
     let snr = |times: &BlockTimes| times.back_wall.snr.get();
     let clearest = before.iter().enumerate().max_by(|a, b| snr(a.1).total_cmp(&snr(b.1)));
@@ -124,9 +126,10 @@ pub fn calibrate_at(
     };
     let learned = cut::learn_with_mismatch(&mut gauge, blocks, &before, pulse_from)?;
 
+    let needs_period = core_setup.span == Span::BackWallToBackWall && learn != Learn::Zero;
     let mut times: Vec<BlockTimes> = blocks
         .iter()
-        .map(|block| block::measure(&mut gauge, block, learn))
+        .map(|block| block::measure(&mut gauge, block, needs_period))
         .collect::<Result<_, _>>()?;
     if let (Learn::Velocity, [before], [after]) = (learn, &before[..], &times[..]) {
         core_setup.zero = translated(&core_setup, before, after);

@@ -4,7 +4,7 @@ use super::draw::{Draw, hash};
 use super::file::{Campaign, draws, table_of};
 use super::places::Places;
 use crate::calibrating::block::{self, BlockRecord};
-use crate::calibrating::{Learn, cut};
+use crate::calibrating::cut;
 use crate::input_error::InputError;
 use crate::measuring::HeapScratch;
 use crate::record_file::RecordFile;
@@ -95,6 +95,6 @@ fn learn(campaign: &Campaign, block: &Table, shots: u32) -> Result<Vec<f32>, Inp
     let block = BlockRecord::new(&campaign.setup_path, size, file, clock).map_err(|error| fault(&error))?;
     let mut scratch = HeapScratch::new(scene.record.samples);
     let mut gauge = setup.gauge(scratch.workspace())?;
-    let times = block::measure(&mut gauge, &block, Learn::Zero).map_err(|error| fault(&error))?;
+    let times = block::measure(&mut gauge, &block, false).map_err(|error| fault(&error))?;
     cut::reference_pulse(&block, &times, gauge.setup()).map_err(|error| fault(&error))
 }
