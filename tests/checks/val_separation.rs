@@ -1,5 +1,4 @@
-//! Two echoes told apart by the model: against NumPy's exhaustive search on the same codes, against the numerical
-//! Cramér-Rao bound, and by the share of right answers on records with known truth, through the gauge as it is used.
+//! Two echoes told apart by the model: against the numerical Cramér-Rao bound, and by the share of right answers on records with known truth, through the gauge as it is used.
 //!
 //! x is the spacing over the envelope's -20 dB duration: x = 1 is the classical limit, half the spatial pulse length.
 //! *Right* is what tells two echoes apart with a spacing within a quarter of the true one and within 50 ns. Noise: 30 dB
@@ -8,13 +7,11 @@
 use crate::val_separation_support::{Case, Cell, Pulse, RATE, Tally, gauge_with_pulse, look, tally};
 use halfpulse::echo::Surroundings;
 use halfpulse::echo::noise::TimingNoise;
-use halfpulse::echo::pulse::{ReferencePulse, learn};
 use halfpulse::echo::separation::model::{Stretch, decide};
 use halfpulse::echo::separation::{PulseTrust, Unresolved, Verdict};
-use halfpulse::setup::PULSE_CAPACITY;
 use halfpulse::{AdcFormat, Gauge, Hertz, Record, SampleClock, Scratch};
 use halfpulse_tests::oracle::{self, Random};
-use halfpulse_tests::published::{Table, code_rows, pairs};
+use halfpulse_tests::published::Table;
 use halfpulse_tests::readme;
 
 /// A pulse learned from the same probe (average of 16 shots at 40 dB): at least 95 % right from x = 0.15 on, at most 1 % of

@@ -233,3 +233,68 @@ pub fn period_bound(
     }
     (fisher[0][count] / fisher[0][0]).sqrt() / scale[0]
 }
+
+/// Bessel function of the first kind and whole order by Bessel's own integral (Abramowitz and Stegun 9.1.21): the mean of
+/// cos(n τ - x sin τ) over half a turn, by the trapezoidal rule, which converges faster than any power here.
+#[must_use]
+pub fn bessel(order: u32, x: f64) -> f64 {
+    let steps = 64 + 2 * x.abs() as usize;
+    let value = |i: usize| {
+        let angle = PI * i as f64 / steps as f64;
+        (f64::from(order) * angle - x * angle.sin()).cos()
+    };
+    let inner: f64 = (1..steps).map(value).sum();
+    (0.5 * (value(0) + value(steps)) + inner) / steps as f64
+}
+
+/// How far the phase of a piston's pulse is ahead of a plane wave's, in radians, at the normalised distance `s`:
+/// the angle of 1 - exp(-ju) [J0(u) + j J1(u)], u = 2 π / s (Rogers and Van Buren 1974, from memory).
+#[must_use]
+pub fn piston_advance(s: f64) -> f64 {
+    let u = 2.0 * PI / s;
+    let (j0, j1) = (bessel(0, u), bessel(1, u));
+    let (sin, cos) = u.sin_cos();
+    (sin * j0 - cos * j1).atan2(1.0 - cos * j0 - sin * j1)
+}
+
+/// Partial derivatives by central differences, each step being this share of its quantity (or of one where it is 0).
+#[must_use]
+pub fn gradient<const N: usize>(function: impl Fn([f64; N]) -> f64, at: [f64; N], share: f64) -> [f64; N] {
+    std::array::from_fn(|i| {
+        let step = share * if at[i] == 0.0 { 1.0 } else { at[i].abs() };
+        let moved = |by: f64| {
+            let mut there = at;
+            there[i] += by;
+            function(there)
+        };
+        (moved(step) - moved(-step)) / (2.0 * step)
+    })
+}
+
+/// Standard uncertainty of a function of quantities with these standard uncertainties and this correlation between each
+/// two: the whole double sum of JCGM 100:2008, 5.2.2, with the derivatives of [`gradient`].
+#[must_use]
+pub fn propagated<const N: usize>(
+    function: impl Fn([f64; N]) -> f64,
+    at: [f64; N],
+    uncertainties: [f64; N],
+    correlation: impl Fn(usize, usize) -> f64,
+) -> f64 {
+    let slopes = gradient(function, at, 1e-5);
+    let mut variance = 0.0;
+    for i in 0..N {
+        for j in 0..N {
+            let r = if i == j { 1.0 } else { correlation(i, j) };
+            variance += slopes[i] * slopes[j] * uncertainties[i] * uncertainties[j] * r;
+        }
+    }
+    variance.max(0.0).sqrt()
+}
+
+/// Correlation of two series of the same length.
+#[must_use]
+pub fn correlation(a: &[f64], b: &[f64]) -> f64 {
+    let ((mean_a, deviation_a), (mean_b, deviation_b)) = (mean_and_deviation(a), mean_and_deviation(b));
+    let products: f64 = a.iter().zip(b).map(|(x, y)| (x - mean_a) * (y - mean_b)).sum();
+    products / (deviation_a * deviation_b * (a.len() as f64 - 1.0))
+}
