@@ -4,17 +4,18 @@
 //! mutant of the core (`.cargo/mutants.toml`).
 
 mod law_gauge;
+mod sources;
 mod val_arrival;
-mod val_envelope;
-mod val_gauge;
-mod val_pairs;
-mod val_tables;
 mod val_beam_and_film;
 mod val_blocks;
 mod val_bounds;
 mod val_budget;
 mod val_converter;
+mod val_envelope;
 mod val_functions;
+mod val_gauge;
+mod val_pairs;
+mod val_tables;
+mod val_train;
 mod val_wall;
 mod val_way;
-mod val_train;

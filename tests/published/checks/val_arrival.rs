@@ -75,7 +75,9 @@ fn all_shifts() -> Vec<(usize, [f64; 3], f64, f64)> {
 }
 
 /// Cosine through three values, and the band-limited maximum: the same codes, the same numbers, within
-/// a small part of the bound that noise sets anyway (NumPy 2.4.6, double precision).
+/// a small part of the bound that noise sets anyway.
+///
+/// Source: `delays.csv`, NumPy 2.4.6 in double precision, `tests/oracles/delays.py`.
 #[test]
 fn val_delays_of_numpy() {
     let bounds: Vec<f64> = Table::read("vectors/delay_sets.csv")
@@ -108,6 +110,9 @@ fn val_delays_of_numpy() {
 /// Against the truth: the scatter of 16 delays about their mean (the noise in a set's reference is
 /// common to them) over the Cramér-Rao bound. All 96 together have 90 degrees of freedom: 0.80 to 1.20 are
 /// 2.7 standard deviations of that ratio.
+///
+/// Source: `delay_sets.csv`, Cramér-Rao bound of each set by numerical derivatives (`tests/oracles/delays.py --bounds`), and the true
+/// delays that the records were made with.
 #[test]
 fn val_scatter_is_the_bound() {
     let sets = Table::read("vectors/delay_sets.csv");
@@ -130,6 +135,8 @@ fn val_scatter_is_the_bound() {
 
 /// Least squares with one echo on records of one or two echoes: place, sign and size of NumPy's best
 /// single fit, wherever two overlapping echoes put it.
+///
+/// Source: `pairs.csv`, NumPy 2.4.6, `tests/oracles/pairs.py`.
 #[test]
 fn val_single_echo_fits_of_numpy() {
     let reference = pairs::reference();
@@ -169,6 +176,8 @@ fn val_single_echo_fits_of_numpy() {
 /// MS/s, 12 bit. Stated (NumPy Monte Carlo): half of the envelope 11, envelope peak 37, correlation with
 /// cosine 0.98, with band-limited interpolation 0.98. Two thirds to three halves of it are allowed
 /// for the window estimators (their envelopes differ), 0.93 to 1.07 for the two that reach the bound.
+///
+/// Source: NumPy Monte Carlo of the same estimators; the bound by `oracle::delay_bound`.
 #[test]
 fn val_estimators_over_the_bound() {
     const SHOTS: usize = 1500;
@@ -220,6 +229,8 @@ fn val_estimators_over_the_bound() {
 /// with the sign free, is found where it is and the right way up. Half a cycle away a pulse of 20 % is
 /// still 0.982 of itself (closed form exp(-T^2 / 16 sigma^2), `cycle_skip.csv`), so an estimator that compares
 /// whole samples only is lost here: they can miss the top by more than that.
+///
+/// Source: `cycle_skip.csv`, closed form with SciPy 1.17.1; the places that the records are made with.
 #[test]
 fn val_right_half_cycle_at_any_fraction() {
     for row in Table::read("physics/cycle_skip.csv").rows() {

@@ -213,9 +213,9 @@ fn val_group_lag_noise_by_monte_carlo() {
 
 /// The search holds what it promises in scratch memory, neither more nor less, and narrows where it gets less.
 ///
-/// Source: `estimate`'s contract: echoes at either end of the reach, by all five estimators, in just the stated entries.
+/// By `estimate`'s contract: echoes at either end of the reach, by all five estimators, in just the stated entries.
 #[test]
-fn val_search_in_the_stated_memory() {
+fn search_in_the_stated_memory() {
     const ESTIMATORS: [Estimator; 5] = [
         Estimator::LeastSquares,
         Estimator::Correlation,

@@ -31,6 +31,8 @@ fn noise_share(echo: &Row<'_>) -> f64 {
 
 /// The stored records as they are. Noise outside the filter's band gets another quadrature than
 /// SciPy's filter of infinite length gives it, so four times the noise is allowed on top.
+///
+/// Source: `echo_envelopes.csv`, `abs(scipy.signal.hilbert(x))` of SciPy 1.17.1, `tests/oracles/echoes.py`.
 #[test]
 fn val_envelope_of_noisy_echoes() {
     let envelopes = number_rows("vectors/echo_envelopes.csv");
@@ -51,6 +53,8 @@ fn val_envelope_of_noisy_echoes() {
 
 /// The same records without what lies outside a tenth to twice the centre frequency: here the
 /// filter alone counts, and the limits hold as they stand.
+///
+/// Source: the analytic signal by its definition, a discrete Fourier transform in double precision (`oracle::envelope`).
 #[test]
 fn val_envelope_inside_the_band() {
     for (echo, codes) in Table::read("vectors/echoes.csv")
@@ -67,6 +71,8 @@ fn val_envelope_inside_the_band() {
 }
 
 /// Gaussian pulses of several carrier phases, from 4 samples a cycle upwards.
+///
+/// Source: the analytic signal by its definition, a discrete Fourier transform in double precision (`oracle::envelope`).
 #[test]
 fn val_envelope_of_gaussian_pulses() {
     for relative_bandwidth in [0.3, 0.6, 1.0] {
@@ -102,6 +108,8 @@ fn val_envelope_of_gaussian_pulses() {
 
 /// Width at half the peak (which `scipy.signal.peak_widths` calls rel_height 0.5) of the core's
 /// envelope.
+///
+/// Source: `echoes.csv`, SciPy 1.17.1, `tests/oracles/echoes.py`.
 #[test]
 fn val_half_widths_of_scipy() {
     for (echo, codes) in Table::read("vectors/echoes.csv")

@@ -102,7 +102,7 @@ fn val_decibels() {
         (2.0, 6.020_599_9),
         (10.0, 20.0),
         (0.1, -20.0),
-        (0.501_187_23, -6.0),
+        (0.501_187_2, -6.0),
     ] {
         assert!(
             (f64::from(Decibels::from_amplitude_ratio(ratio).get()) - db).abs() < 2e-5,

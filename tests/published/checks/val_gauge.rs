@@ -90,6 +90,8 @@ fn val_delay_line_arrivals() {
 }
 
 /// The readings of an estimator without corrections, within 0.3 µm; the record either way up.
+///
+/// Source: `delay_line_echoes.csv`, the independent NumPy model's own correlation, `tests/oracles/delay_line_ascan.py`.
 #[test]
 fn val_delay_line_readings() {
     for (span, stated, row) in [
@@ -124,6 +126,8 @@ fn val_delay_line_readings() {
 /// Never confidently wrong: the element's diameter given, the true wall lies within the stated expanded
 /// uncertainty, although the uncorrected beam reads 14 and 20 µm thin. And the uncertainty is not bought with
 /// emptiness: below 40 µm, mostly from the beam.
+///
+/// Source: the model's wall of 4.000 mm, `tests/oracles/delay_line_ascan.py`.
 #[test]
 fn val_true_wall_is_covered() {
     for span in [Span::InterfaceToBackWall, Span::BackWallToBackWall] {
@@ -155,7 +159,9 @@ fn val_true_wall_is_covered() {
 
 /// The pulse of the interface echo: the model's probe is the Gaussian of 5 MHz and 60 %, and 8 mm of
 /// polystyrene (30 dB/m at 5 MHz, proportional to frequency, two ways) shift a Gaussian's centre down by
-/// alpha * path * sigma_f^2 / f0 (closed form, from memory), that is by 18 kHz; diffraction takes a little more.
+/// alpha * path * sigma_f^2 / f0, that is by 18 kHz; diffraction takes a little more.
+///
+/// Source: closed form of a Gaussian spectrum (from memory); the model of `tests/oracles/delay_line_ascan.py`.
 #[test]
 fn val_delay_line_pulse() {
     with_delay_line(delay_line_setup(Span::InterfaceToBackWall, None), false, |gauge, _| {
@@ -174,6 +180,8 @@ fn val_delay_line_pulse() {
 /// lies within four standard uncertainties (two hold for 95 %, but here all must). What carries doubts
 /// other than a low signal still is no gross error. Refusals are an answer too: one scene has its second echo
 /// outside the record. (No beam and no V-shaped path in these records: those two doubts mean nothing here.)
+///
+/// Source: `scenes.csv`, the periods that NumPy made the records with.
 #[test]
 fn val_scenes_of_numpy() {
     let pulse: Vec<f32> = number_rows("vectors/scene_pulse.csv")[0]

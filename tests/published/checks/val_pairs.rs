@@ -11,6 +11,8 @@ use halfpulse_published::{Table, code_rows, pairs};
 
 /// The 32 records of `pairs.csv`: NumPy's exhaustive search and maximum-likelihood fit of one and two pulses
 /// (`tests/published/README.md`). Where two explain less than one, only the verdict can be compared.
+///
+/// Source: `pairs.csv`, NumPy 2.4.6 and SciPy 1.17.1, `tests/oracles/pairs.py`.
 #[test]
 fn val_pairs_of_numpy() {
     let reference = pairs::reference();

@@ -1,7 +1,8 @@
 //! Trains of back walls of known place: which period is chosen, what the joint fit makes of them, and what it states.
 //!
 //! The records are made here, a Gaussian pulse of 5 MHz and 60 % at 50 MS/s (`oracle::gaussian_pulse`) without noise in 16 bits; the noise
-//! that the steps are told is a number of its own, so that what they state of it can be compared to the last digits.
+//! that the steps are told is a number of its own, so that what they state of it can be compared to the last digits. Where only the
+//! record's own truth is compared, no outside source speaks, and the check is not called `val_`.
 
 use halfpulse::echo::arrival::{Estimator, Search, estimate};
 use halfpulse::echo::correlation::Sign;
@@ -112,10 +113,8 @@ fn near(found: f32, expected: f64, allowed: f64) -> bool {
 }
 
 /// Period, place, numbers and roles of clean trains, upright and upside down.
-///
-/// Source: the record's own truth, which this check makes with `scipy.signal.gausspulse`'s pulse (see `val_tables`).
 #[test]
-fn val_trains_of_known_period() {
+fn trains_of_known_period() {
     for (period, height, decay, count) in [
         (61.37, 12_000.0, 0.7, 6),
         (203.8, -9_000.0, 0.85, 5),
@@ -210,10 +209,8 @@ fn val_uneven_trains() {
 }
 
 /// Echoes between the multiples: their energy over the train's, no part in the fit.
-///
-/// Source: the record's own truth, made here: energies go with the squares of amplitudes.
 #[test]
-fn val_strangers_between_multiples() {
+fn strangers_between_multiples() {
     let train_echoes = multiples(150.0, 12_000.0, 0.8, 6);
     let energy: f64 = train_echoes.iter().map(|echo| echo.1 * echo.1).sum();
     for (place, height) in [(331.0, 3_000.0), (480.0, -4_000.0)] {
@@ -246,10 +243,8 @@ fn val_strangers_between_multiples() {
 }
 
 /// Multiples that nobody has seen yet are found by the fit where they must be, and the one echo too many is not.
-///
-/// Source: the record's own truth, made here.
 #[test]
-fn val_weak_multiples_are_found() {
+fn weak_multiples_are_found() {
     let echoes = multiples(131.3, 14_000.0, 0.6, 7);
     let outcome = read(&echoes, &echoes[..3], &rules());
     let train = outcome.train.expect("a train");
@@ -268,10 +263,8 @@ fn val_weak_multiples_are_found() {
 }
 
 /// A single echo: its distance from the start, and nothing about a scatter.
-///
-/// Source: the record's own truth, made here.
 #[test]
-fn val_lone_echo() {
+fn lone_echo() {
     let echoes = multiples(401.6, 9_000.0, 0.5, 1);
     let train = read(&echoes, &echoes, &rules()).train.expect("a train");
     assert!(
@@ -287,10 +280,8 @@ fn val_lone_echo() {
 }
 
 /// The first echo in the dead zone: the multiples count from the second, unless nothing says that there was one.
-///
-/// Source: the record's own truth, made here.
 #[test]
-fn val_first_echo_in_the_dead_zone() {
+fn first_echo_in_the_dead_zone() {
     let echoes = multiples(80.2, 12_000.0, 0.85, 7);
     let mut late = rules();
     late.visible_from = 220.0;
@@ -310,10 +301,8 @@ fn val_first_echo_in_the_dead_zone() {
 }
 
 /// An echo stronger than the second multiple half-way to it: the wall may be half as thick.
-///
-/// Source: geometry: all multiples of half the period are expected there.
 #[test]
-fn val_stronger_echo_half_way() {
+fn stronger_echo_half_way() {
     let mut echoes = multiples(160.0, 12_000.0, 0.6, 5);
     assert!(!read(&echoes, &echoes, &rules()).train.expect("a train").may_be_double);
     // Upside down, so that it is no multiple of the shorter wall.
@@ -329,10 +318,8 @@ fn val_stronger_echo_half_way() {
 }
 
 /// Two trains from one start: the stronger is read, and the thinner wall is noticed.
-///
-/// Source: the record's own truth, made here.
 #[test]
-fn val_two_walls_under_one_probe() {
+fn two_walls_under_one_probe() {
     let thick = multiples(301.0, 16_000.0, 0.7, 5);
     let mut both = thick.clone();
     both.extend(multiples(187.0, 5_000.0, 0.75, 3));
@@ -350,10 +337,10 @@ fn val_two_walls_under_one_probe() {
 /// A strong echo and a weak one half its time behind it, where a first echo of half the period would be hidden: as the second
 /// gets stronger it is one wall that may be half as thick, then either, then the thinner one.
 ///
-/// Source: log-likelihood of an echo of unknown height in noise, ln(1 + A² / 3 σ²), and the losses stated in the module's
+/// Log-likelihood of an echo of unknown height in noise, ln(1 + A² / 3 σ²), and the losses stated in the module's
 /// documentation, worked out by hand: 200 codes gain 1.0, 331 gain 2.0, 700 gain 3.5, and a hidden echo costs 1.1.
 #[test]
-fn val_half_the_wall_or_not() {
+fn half_the_wall_or_not() {
     let mut late = rules();
     late.visible_from = (START + 150.0) as f32;
     let read_with = |height: f64| {
