@@ -14,6 +14,7 @@ mod val_converter;
 mod val_envelope;
 mod val_functions;
 mod val_gauge;
+mod val_overlapping;
 mod val_pairs;
 mod val_tables;
 mod val_train;

@@ -171,4 +171,31 @@ pub mod pairs {
             .map(|&x| x as f32)
             .collect()
     }
+
+    /// The pulse itself, 256 samples with its origin at sample 128 and an envelope peak of 1.
+    #[must_use]
+    pub fn whole_reference() -> Vec<f64> {
+        let codes = super::number_rows("vectors/pair_reference.csv");
+        codes[0].iter().map(|code| code / 32_111.66).collect()
+    }
+
+    /// Adds an echo of the pulse whose origin lies at `place`: the band-limited shift, by the pulse's spectrum.
+    pub fn add(samples: &mut [f64], place: f64, amplitude: f64) {
+        static SPECTRUM: std::sync::OnceLock<Vec<(f64, f64)>> = std::sync::OnceLock::new();
+        let spectrum = SPECTRUM.get_or_init(|| crate::oracle::transform(&whole_reference()));
+        let n = 2 * (spectrum.len() - 1);
+        for (i, sample) in samples.iter_mut().enumerate() {
+            let t = i as f64 - place + 128.0;
+            if t < 0.0 || t > n as f64 - 1.0 {
+                continue;
+            }
+            let turn = std::f64::consts::TAU * t / n as f64;
+            let mut sum = 0.5 * spectrum[0].0;
+            for (bin, &(re, im)) in spectrum.iter().enumerate().take(n / 2).skip(1) {
+                let (sin, cos) = (turn * bin as f64).sin_cos();
+                sum += re * cos - im * sin;
+            }
+            *sample += amplitude * 2.0 * sum / n as f64;
+        }
+    }
 }

@@ -1,0 +1,256 @@
+//! Overlapping echoes of known place: spacing and period that come out, and the uncertainty that is stated of them.
+//!
+//! The records are made here without noise; the noise that the steps are told is that of the tables of bounds.
+
+use halfpulse::echo::Surroundings;
+use halfpulse::echo::noise::TimingNoise;
+use halfpulse::echo::pulse::{ReferencePulse, learn};
+use halfpulse::echo::separation::model::{Answer, Stretch, decide};
+use halfpulse::echo::separation::thin_wall::{ThinWall, thin_wall};
+use halfpulse::echo::separation::{LEARNED_MISMATCH, PulseTrust, Unresolved};
+use halfpulse::setup::PULSE_CAPACITY;
+use halfpulse::{AdcFormat, Hertz, Record, SampleClock};
+use halfpulse_published::{Table, oracle, pairs};
+use std::f64::consts::TAU;
+
+/// -20 dB duration of the vectors' pulse, in samples (`README.md`).
+const DURATION: f64 = 26.25;
+/// Envelope peak of the larger echo, in codes of 16 bits: 800 of 12 bits.
+const PEAK: f64 = 12_800.0;
+/// A code of 12 bits in those of 16: what the tables' rounding noise is of.
+const CODE: f64 = 16.0;
+
+/// Noise that the tables of bounds were made with: this far below the peak, and rounding to 12 bits.
+fn noise_of(snr_db: f64) -> f32 {
+    (PEAK * 10f64.powf(-snr_db / 20.0)).hypot(CODE / 12f64.sqrt()) as f32
+}
+
+/// What a record says to somebody who knows this pulse of ten samples a cycle.
+fn with_record<T>(samples: &[f64], template: &[f32], noise: f32, ask: impl FnOnce(&Surroundings<'_>) -> T) -> T {
+    let codes = oracle::codes(samples, 16);
+    let mut buffer = [0.0f32; PULSE_CAPACITY];
+    let facts = learn(template, 10.0, &mut buffer).expect("a reference pulse");
+    ask(&Surroundings {
+        record: Record::new(&codes, AdcFormat::signed(16), SampleClock::new(Hertz::from_mhz(50.0))),
+        pulse: ReferencePulse::new(&buffer, facts),
+        noise,
+        timing_noise: TimingNoise::steady(noise),
+        samples_per_cycle: 10.0,
+    })
+}
+
+/// How far behind the vectors' own origin the core finds the pulse's.
+fn origin() -> f64 {
+    with_record(&[], &pairs::reference(), 1.0, |surroundings| {
+        f64::from(surroundings.pulse.facts.origin) - pairs::BEFORE_ORIGIN as f64
+    })
+}
+
+fn split(samples: &[f64], template: &[f32], middle: f64, trust: PulseTrust) -> Answer {
+    with_record(samples, template, noise_of(30.0), |surroundings| {
+        let stretch = Stretch {
+            from: (middle - 40.0) as f32,
+            to: (middle + 40.0) as f32,
+            least_spacing: 0.1,
+            trust,
+        };
+        decide(surroundings, &stretch, &mut [0.0; 512], &mut [0.0; 416])
+    })
+}
+
+/// The spacing of two echoes, their ratio, and the stated standard uncertainty of the spacing.
+///
+/// Source: `pair_bound.csv`, Cramér-Rao bound by NumPy's numerical derivatives (`tests/oracles/pairs.py`); spacing and ratio are
+/// those that the records are made with.
+#[test]
+fn val_bound_of_a_spacing() {
+    for row in Table::read("vectors/pair_bound.csv").rows() {
+        let (ratio, x) = (row.number("ratio"), row.number("x"));
+        let (first, spacing) = (150.4, x * DURATION);
+        let mut samples = vec![0.0; 400];
+        pairs::add(&mut samples, first, PEAK);
+        pairs::add(&mut samples, first + spacing, ratio * PEAK);
+        let trust = PulseTrust::Learned { mismatch: 0.0 };
+        let answer = split(&samples, &pairs::reference(), first + 0.5 * spacing, trust);
+        let found = answer.split.unwrap_or_else(|why| panic!("{row:?}: {why:?} {answer:?}"));
+        let bound = row.number("spacing_bound_ns") / 20.0;
+        let off = f64::from(found.spacing) - spacing;
+        let stated = f64::from(found.spacing_uncertainty) / bound;
+        let amplitudes = f64::from(found.second_amplitude / found.first_amplitude);
+        println!("{row:?}: off {off:+.4} of a bound of {bound:.4}, stated {stated:.3}, ratio {amplitudes:.3}");
+        // The reference is cut at its ends: that is what the spacing is off by.
+        assert!(off.abs() < 0.1 * bound, "{row:?}: {off}");
+        assert!((stated - 1.0).abs() < 0.03, "{row:?}: {stated}");
+        assert!((amplitudes - ratio).abs() < 0.005, "{row:?}: {amplitudes}");
+        let place = f64::from(found.first.as_samples());
+        assert!((place - first - origin()).abs() < 0.01, "{row:?}: {place}");
+    }
+}
+
+/// Twice the logarithm of the likelihood ratio of two echoes over one.
+///
+/// Source: the energies that one and two pulses leave, from least squares over the samples in double precision with the best single
+/// place found by search, over the noise's variance (S. S. Wilks 1938, from memory).
+#[test]
+fn val_likelihood_of_two_echoes() {
+    let template: Vec<f64> = pairs::whole_reference();
+    for (ratio, x) in [(1.0, 0.25), (0.5, 0.5), (-0.5, 0.25)] {
+        let mut samples = vec![0.0; 400];
+        pairs::add(&mut samples, 150.4, PEAK);
+        pairs::add(&mut samples, 150.4 + x * DURATION, ratio * PEAK);
+        let energy: f64 = samples.iter().map(|s| s * s).sum();
+        let own: f64 = template.iter().map(|s| s * s).sum();
+        // What the best single echo explains: its correlation squared over the pulse's energy.
+        let explained = |place: f64| -> f64 {
+            let mut one = vec![0.0; 400];
+            pairs::add(&mut one, place, 1.0);
+            let product: f64 = one.iter().zip(&samples).map(|(a, b)| a * b).sum();
+            product * product / own
+        };
+        let places = (0..21).map(|i| 145.0 + f64::from(i));
+        let near = places
+            .max_by(|a, b| explained(*a).total_cmp(&explained(*b)))
+            .expect("places");
+        let (mut low, mut high) = (near - 1.0, near + 1.0);
+        for _ in 0..14 {
+            let (a, b) = (low + 0.382 * (high - low), low + 0.618 * (high - low));
+            if explained(a) > explained(b) {
+                high = b;
+            } else {
+                low = a;
+            }
+        }
+        let best = explained(0.5 * (low + high));
+        let expected = (energy - best) / f64::from(noise_of(30.0)).powi(2);
+        let trust = PulseTrust::Learned { mismatch: 0.0 };
+        let answer = split(&samples, &pairs::reference(), 150.4 + 0.5 * x * DURATION, trust);
+        let twice = 2.0 * f64::from(answer.log_odds.expect("a fit"));
+        println!("ratio {ratio}, x {x}: {twice:.2}, {expected:.2}");
+        assert!(
+            (twice / expected - 1.0).abs() < 0.002,
+            "ratio {ratio}, x {x}: {twice} {expected}"
+        );
+    }
+}
+
+/// One echo is one: whole, with a turned phase, or having lost its higher frequencies.
+#[test]
+fn one_echo_is_not_split() {
+    let mut samples = vec![0.0; 400];
+    pairs::add(&mut samples, 160.7, -PEAK);
+    let trust = PulseTrust::Learned {
+        mismatch: LEARNED_MISMATCH,
+    };
+    let answer = split(&samples, &pairs::reference(), 160.7, trust);
+    assert_eq!(answer.split, Err(Unresolved::OnePulse), "{answer:?}");
+    assert!(answer.log_odds.expect("a fit") < 7.0, "{answer:?}");
+    samples[165] = 40_000.0;
+    assert_eq!(
+        split(&samples, &pairs::reference(), 160.7, trust).split,
+        Err(Unresolved::Clipped)
+    );
+    // Outside the record.
+    assert_eq!(
+        split(&samples, &pairs::reference(), 900.0, trust).split,
+        Err(Unresolved::NoRoom)
+    );
+    // A Gaussian echo with everything a little off, and a pulse that is only modelled.
+    let template: Vec<f32> = (-35..=35)
+        .map(|k| gaussian(f64::from(k), 0.1, 0.6, 0.0) as f32)
+        .collect();
+    for (frequency, bandwidth, phase) in [
+        (0.1, 0.6, 0.3),
+        (0.095, 0.6, 0.0),
+        (0.1, 0.54, 0.0),
+        (0.095, 0.54, 0.35),
+    ] {
+        let echo: Vec<f64> = (0..400)
+            .map(|i| PEAK * gaussian(f64::from(i) - 170.2, frequency, bandwidth, phase))
+            .collect();
+        let answer = split(&echo, &template, 170.2, PulseTrust::Modelled);
+        assert!(answer.split.is_err(), "{frequency}, {bandwidth}, {phase}: {answer:?}");
+    }
+}
+
+fn gaussian(t: f64, frequency: f64, bandwidth: f64, phase: f64) -> f64 {
+    let sigma = oracle::gaussian_sigma(frequency, bandwidth);
+    (-0.5 * (t / sigma).powi(2)).exp() * (TAU * frequency * t + phase).cos()
+}
+
+/// Two echoes of a pulse that is only modelled, and off in frequency, phase or width, or in nothing.
+#[test]
+fn two_echoes_of_a_modelled_pulse() {
+    let template: Vec<f32> = (-35..=35)
+        .map(|k| gaussian(f64::from(k), 0.1, 0.6, 0.0) as f32)
+        .collect();
+    for (frequency, bandwidth, phase) in [(0.1, 0.6, 0.0), (0.1, 0.6, 0.3), (0.096, 0.6, 0.0), (0.1, 0.55, 0.0)] {
+        for (ratio, spacing) in [(1.0, 8.0), (0.5, 13.3), (-0.5, 17.1), (0.8, 24.6)] {
+            let echo = |t: f64| PEAK * gaussian(t, frequency, bandwidth, phase);
+            let samples: Vec<f64> = (0..400)
+                .map(|i| echo(f64::from(i) - 160.3) + ratio * echo(f64::from(i) - 160.3 - spacing))
+                .collect();
+            let answer = split(&samples, &template, 160.3 + 0.5 * spacing, PulseTrust::Modelled);
+            let name = format!("{frequency}, {bandwidth}, {phase}; ratio {ratio}, spacing {spacing}");
+            let found = answer.split.unwrap_or_else(|why| panic!("{name}: {why:?}"));
+            let off = f64::from(found.spacing) - spacing;
+            println!("{name}: {off:+.3}, stated {:.3}", found.spacing_uncertainty);
+            assert!(off.abs() < 0.25, "{name}: {off}");
+            assert!(
+                off.abs() < 3.0 * f64::from(found.spacing_uncertainty),
+                "{name}: {off} {found:?}"
+            );
+            let amplitudes = f64::from(found.second_amplitude / found.first_amplitude);
+            assert!((amplitudes - ratio).abs() < 0.1, "{name}: {amplitudes}");
+        }
+    }
+}
+
+fn thin(wall: f64, decay: f64, period: f64, snr_db: f64) -> Result<ThinWall, Unresolved> {
+    let place = 300.4;
+    let mut samples = vec![0.0; 900];
+    pairs::add(&mut samples, place, PEAK);
+    for multiple in 1..=40 {
+        let height = PEAK * wall * decay.powi(multiple - 1);
+        let at = place + f64::from(multiple) * period;
+        if height.abs() > 1e-3 * PEAK && at < 750.0 {
+            pairs::add(&mut samples, at, height);
+        }
+    }
+    with_record(&samples, &pairs::reference(), noise_of(snr_db), |surroundings| {
+        thin_wall(surroundings, 300.0, 0.0, &mut [0.0; 512], &mut [0.0; 416])
+    })
+}
+
+/// The period of a wall whose echoes run into the interface echo, and its stated standard uncertainty.
+///
+/// Source: `thin_wall_bound.csv`, Cramér-Rao bound of the model's five numbers by NumPy's numerical derivatives
+/// (`tests/oracles/pairs.py`); the period and heights are those that the records are made with.
+#[test]
+fn val_bound_of_a_thin_wall() {
+    for row in Table::read("vectors/thin_wall_bound.csv").rows() {
+        let (snr, period) = (row.number("snr_db"), row.number("x") * DURATION);
+        let found = thin(-0.6, 0.5, period, snr).unwrap_or_else(|why| panic!("{row:?}: {why:?}"));
+        let bound = row.number("period_bound_ns") / 20.0;
+        let (off, stated) = (
+            f64::from(found.period) - period,
+            f64::from(found.period_uncertainty) / bound,
+        );
+        println!(
+            "{row:?}: off {:+.3} of the bound, stated {stated:.3}; {found:?}",
+            off / bound
+        );
+        assert!(off.abs() < 0.3 * bound, "{row:?}: {off}");
+        assert!((stated - 1.0).abs() < 0.05, "{row:?}: {stated}");
+        assert!((f64::from(found.decay) - 0.5).abs() < 0.002, "{found:?}");
+        assert!(
+            (f64::from(found.interface_amplitude) / PEAK - 1.0).abs() < 0.05,
+            "{found:?}"
+        );
+        assert!((f64::from(found.wall_amplitude) / PEAK + 0.6).abs() < 0.01, "{found:?}");
+        assert!(
+            (f64::from(found.interface.as_samples()) - 300.4).abs() < 0.1,
+            "{found:?}"
+        );
+    }
+    assert_eq!(thin(0.0, 0.5, 10.0, 30.0).unwrap_err(), Unresolved::OnePulse);
+}
