@@ -90,6 +90,7 @@ pub use gauge::{CoatingReading, Findings, Gauge, Reading};
 pub use outcome::{Doubt, Doubts, NoReading};
 pub use record::average::{AverageError, Averager, Interleaver};
 pub use record::movement::{Movement, movement};
+pub use record::rounds::TwoRounds;
 pub use record::{AdcFormat, Record, SampleClock};
 pub use setup::{
     CalibratedRange, Coating, DelayLine, EchoSign, ElementSeparation, GaugeSetup, Material, PartTemperature, Probe,

@@ -82,6 +82,13 @@ pub enum NoReading {
         /// The smallest thickness that the span reads.
         minimum: Metres,
     },
+    /// Two rounds of shots of one place do not show the same echoes: something has moved, or what looks like echoes is none.
+    Unsteady {
+        /// Echoes of the mean that the rounds do not have in common.
+        echoes: u8,
+        /// How far the reading moved from the one round to the other.
+        moved: Metres,
+    },
 }
 
 impl NoReading {
@@ -104,6 +111,7 @@ impl NoReading {
             Self::NotThePulse { .. } => "not-the-pulse",
             Self::Ambiguous { .. } => "ambiguous",
             Self::BelowMinimum { .. } => "below-minimum",
+            Self::Unsteady { .. } => "unsteady",
         }
     }
 
@@ -132,6 +140,7 @@ impl NoReading {
             }
             Self::Ambiguous { .. } => "move the probe a little, couple it better, or average more shots",
             Self::BelowMinimum { .. } => "use a delay line or a probe with a shorter pulse",
+            Self::Unsteady { .. } => "hold probe and part still, and look for interference",
         }
     }
 }
@@ -178,6 +187,10 @@ impl fmt::Display for NoReading {
                 )?;
             }
             Self::BelowMinimum { minimum } => write!(f, "the echoes overlap: thinner than {minimum}")?,
+            Self::Unsteady { echoes: 0, moved } => write!(f, "the wall moved by {moved} between two rounds of shots")?,
+            Self::Unsteady { echoes, .. } => {
+                write!(f, "{echoes} of the echoes are not the same in two rounds of shots")?;
+            }
         }
         write!(f, "; {}", self.advice())
     }

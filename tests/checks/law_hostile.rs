@@ -6,8 +6,8 @@ use halfpulse::wall::calibration::{velocity_from_thickness, zero_and_velocity, z
 use halfpulse::{
     AdcFormat, Averager, Block, CalibratedRange, Celsius, Coating, Decibels, DelayLine, EchoRole, ElementSeparation,
     Gauge, GaugeSetup, Hertz, Interleaver, Material, Metres, MetresPerSecond, NoReading, PartTemperature, Probe,
-    ProbeKind, Reading, Record, SampleClock, Scratch, Seconds, Span, TwoGains, VelocityTemperature, Window, Zero,
-    movement,
+    ProbeKind, Reading, Record, SampleClock, Scratch, Seconds, Span, TwoGains, TwoRounds, VelocityTemperature, Window,
+    Zero, movement,
 };
 use halfpulse_tests::oracle::{self, Random};
 use proptest::prelude::*;
@@ -286,6 +286,7 @@ fn check(gauge: &Gauge<'_>, codes: &[i16], outcome: &Result<Reading, NoReading>)
                     positive("the next wall", next.get())?;
                 }
                 NoReading::BelowMinimum { minimum } => finite("the minimum", minimum.get())?,
+                NoReading::Unsteady { moved, .. } => not_negative("the movement", moved.get())?,
                 _ => {}
             }
             prop_assert!(!why.to_string().is_empty() && !why.word().is_empty());
@@ -479,6 +480,12 @@ proptest! {
             check(&gauge, record.codes(), &outcome)?;
         }
         let _ = interleaver.map(Interleaver::finish);
+        let (mut earlier, mut later) = (shots.first().cloned().unwrap_or_default(), shots.last().cloned().unwrap_or_default());
+        let rate = SampleClock::new(Hertz::from_mhz(50.0));
+        if let Ok(rounds) = TwoRounds::new(&mut earlier, &mut later, format, rate) {
+            let outcome = gauge.measure_two_rounds(&rounds);
+            check(&gauge, rounds.mean().codes(), &outcome)?;
+        }
         reads_the_easy_record(&mut gauge)?;
         let mut behind = usual();
         (behind.probe.kind, behind.span) = (ProbeKind::DelayLine, Span::InterfaceToBackWall);

@@ -18,6 +18,7 @@ mod val_textbook;
 mod val_thin_wall;
 mod val_train_fit;
 mod val_two_gains;
+mod val_two_rounds;
 mod val_no_echo;
 mod law_hostile;
 mod val_wrong_cycle;

@@ -9,7 +9,7 @@ use halfpulse::echo::correlation::Sign;
 use halfpulse::echo::pulse::{ReferencePulse, learn};
 use halfpulse::record::average::shot_delay;
 use halfpulse::setup::PULSE_CAPACITY;
-use halfpulse::{AdcFormat, Hertz, Interleaver, Movement, Record, SampleClock, Seconds, movement};
+use halfpulse::{AdcFormat, AverageError, Hertz, Interleaver, Movement, Record, SampleClock, Seconds, movement};
 use halfpulse_tests::oracle::{self, Random};
 
 const BITS: u8 = 12;
@@ -83,9 +83,15 @@ impl Bench {
         }
     }
 
+    /// The jitter that a set-up states.
+    fn stated(&self) -> Seconds {
+        Seconds::new(self.jitter as f32)
+    }
+
     /// One round of shots, and the first `again` delays once more, compared. `speed` is the movement from shot to shot.
     fn round(&self, codes: &mut [i16], first: f64, speed: f64, again: u8, random: &mut Random) -> Option<Movement> {
-        let mut interleaver = Interleaver::new(codes, self.clock(0), self.phases).expect("a possible number of phases");
+        let interleaver = Interleaver::new(codes, self.clock(0), self.phases).expect("a possible number of phases");
+        let mut interleaver = interleaver.with_trigger_jitter(self.stated());
         let errors: Vec<(f64, f64)> = (0..self.phases)
             .map(|_| {
                 (
@@ -111,10 +117,14 @@ impl Bench {
         for shot in 0..u32::from(again) {
             let (number, codes) = fire(u32::from(self.phases) + shot);
             let record = Record::new(&codes, AdcFormat::signed(BITS), self.clock(number));
-            let one = interleaver.again(&record).expect("all delays are there");
-            found = Some(found.map_or(one, |before| before.with(one)));
+            found = Some(interleaver.again(&record).expect("all delays are there"));
         }
-        interleaver.finish().expect("all delays are there");
+        match interleaver.finish() {
+            Ok(_) => assert!(self.phases == 1 || found.is_some_and(|found| !found.has_moved(self.stated()))),
+            Err(AverageError::NotRepeated) => assert!(again == 0 && self.phases > 1),
+            Err(AverageError::Moved { .. }) => assert!(found.is_some_and(|found| found.has_moved(self.stated()))),
+            Err(other) => panic!("{other}"),
+        }
         found
     }
 }

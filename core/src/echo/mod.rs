@@ -13,6 +13,7 @@ pub mod arrival;
 pub mod clipping;
 pub mod scan;
 pub mod noise;
+pub mod rest;
 pub mod separation;
 pub mod train;
 pub mod shots;

@@ -15,6 +15,7 @@
 //! Not for noise that grows with time, nor for what stands under an echo alone: a phase that differs, an overlapping echo.
 
 use crate::echo::pulse::ReferencePulse;
+use crate::echo::rest::rest;
 use crate::echo::scan::{Candidate, Detector, Scan};
 use crate::math;
 use crate::record::{Record, SampleRange};
@@ -67,6 +68,24 @@ impl TimingNoise {
             (before, variance) = (Some((middle, level)), level);
         }
         math::sqrt(variance)
+    }
+
+    /// The same course where it lies above another one.
+    #[must_use]
+    pub fn at_least(mut self, other: &Self) -> Self {
+        for (middle, variance) in self.knots.iter_mut().take(usize::from(self.count)) {
+            let least = other.at(*middle);
+            *variance = math::larger(*variance, least * least);
+        }
+        self
+    }
+
+    /// The same course with other variances.
+    pub(super) fn with_variances(mut self, other: impl Fn(f32) -> f32) -> Self {
+        for (_, variance) in self.knots.iter_mut().take(usize::from(self.count)) {
+            *variance = other(*variance);
+        }
+        self
     }
 
     /// How much higher than its first level the variance was this many samples before: the straight line through the
@@ -199,7 +218,11 @@ pub fn listen(
     }
     let energy = difference_energy(pulse.samples);
     let rounding = record.format().rounding_noise(scan.noise);
-    course(&parts, energy, scan.noise, rounding * rounding)
+    let timing = course(&parts, energy, scan.noise, rounding * rounding);
+    match rest(record, range, echoes, scan.noise) {
+        Some(rest) => rest.timing(timing),
+        None => timing,
+    }
 }
 
 /// From what the parts have shown to the noise's course.
@@ -249,7 +272,12 @@ fn few(count: f32) -> f32 {
 }
 
 /// Calls `visit` with places that no echo reaches.
-fn quiet_places(range: SampleRange, step: impl Fn(u32) -> u32, echoes: &[Reached], mut visit: impl FnMut(u32)) {
+pub(super) fn quiet_places(
+    range: SampleRange,
+    step: impl Fn(u32) -> u32,
+    echoes: &[Reached],
+    mut visit: impl FnMut(u32),
+) {
     let mut place = range.start;
     while place < range.end {
         match echoes.iter().find(|(middle, reach)| place.abs_diff(*middle) < *reach) {

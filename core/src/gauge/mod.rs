@@ -9,6 +9,7 @@ mod separating;
 pub mod stage;
 mod steps;
 pub mod two_gains;
+mod two_rounds;
 
 use self::stage::{Stage, StageMeter};
 use crate::echo::EchoList;

@@ -215,6 +215,9 @@ impl Rails {
 /// base rate then. What the delays' errors do is not corrected: a fixed pattern of 1 ns moves arrivals
 /// by a constant 0.05 to 0.7 ns, which a zero learned the same way contains. The analogue bandwidth must cover the pulse,
 /// and each phase may itself be an average.
+///
+/// Probe and part must keep still, or the dense record is of no wall at all: fire the first delays again at the end
+/// ([`Interleaver::again`]); [`Interleaver::finish`] refuses a record of which that was not asked, or denied.
 #[derive(Debug)]
 pub struct Interleaver<'c> {
     codes: &'c mut [i16],
@@ -223,6 +226,8 @@ pub struct Interleaver<'c> {
     phases: u8,
     present: u64,
     shape: Option<Shape>,
+    jitter: Seconds,
+    movement: Option<Movement>,
 }
 
 impl<'c> Interleaver<'c> {
@@ -247,7 +252,16 @@ impl<'c> Interleaver<'c> {
             phases,
             present: 0,
             shape: None,
+            jitter: Seconds::ZERO,
+            movement: None,
         })
+    }
+
+    /// The same for a trigger that jitters so much (root mean square from shot to shot), which is no movement.
+    #[must_use]
+    pub const fn with_trigger_jitter(mut self, jitter: Seconds) -> Self {
+        self.jitter = jitter;
+        self
     }
 
     /// Puts one shot where its clock says that it belongs. The order of the shots does not matter.
@@ -302,15 +316,15 @@ impl<'c> Interleaver<'c> {
         }
     }
 
-    /// Compares a further shot of any delay with the one that is there, once all are: fire the first delay again at the end,
-    /// and use the dense record only if [`Movement::has_moved`] says no. What one delay tells of a movement is
-    /// about the square root of the phases less certain than what a whole second round would: repeat more of them, and
-    /// join them by [`Movement::with`], where that matters. The dense record stays as it is.
+    /// Compares a further shot of any delay with the one that is there, once all are: fire the first delay again at the end. What one
+    /// delay tells of a movement is about the square root of the phases less certain than what a whole second round
+    /// would: repeat more of them where that matters. All comparisons count together, for [`Interleaver::finish`]
+    /// and in what is returned. The dense record stays as it is.
     ///
     /// # Errors
     /// [`AverageError::PhasesMissing`]; a shot that does not fit, as for [`Interleaver::add`]; [`AverageError::Nothing`] if
     /// too few samples are whole to tell (fewer than 16 of the shot's).
-    pub fn again(&self, record: &Record<'_>) -> Result<Movement, AverageError> {
+    pub fn again(&mut self, record: &Record<'_>) -> Result<Movement, AverageError> {
         let shape = self.whole()?;
         let length = shape.length.saturating_mul(usize::from(self.phases));
         let dense = Record::new(self.codes.get(..length).unwrap_or(&[]), shape.format, self.clock);
@@ -324,14 +338,33 @@ impl<'c> Interleaver<'c> {
             offset: offset(record.codes()) as i32,
             rails: rails(record),
         };
-        pair.compare().ok_or(AverageError::Nothing)
+        let found = pair.compare().ok_or(AverageError::Nothing)?;
+        let found = self.movement.map_or(found, |before| before.with(found));
+        self.movement = Some(found);
+        Ok(found)
     }
 
-    /// The dense record.
+    /// The dense record, if the shots that were fired again say that nothing has moved while it was taken.
+    ///
+    /// # Errors
+    /// [`AverageError::PhasesMissing`] or no shot at all; [`AverageError::NotRepeated`] if no shot was fired again
+    /// (a single phase needs none); [`AverageError::Moved`].
+    pub fn finish(self) -> Result<Record<'c>, AverageError> {
+        self.whole()?;
+        match self.movement {
+            None if self.phases > 1 => Err(AverageError::NotRepeated),
+            Some(movement) if movement.has_moved(self.jitter) => Err(AverageError::Moved {
+                picoseconds: math::saturating_i32(movement.later_by.get() * 1e12),
+            }),
+            _ => self.finish_unwatched(),
+        }
+    }
+
+    /// The dense record of a place that cannot move (a probe that is glued on, a fixture): nothing notices it if it does.
     ///
     /// # Errors
     /// [`AverageError::PhasesMissing`] or no shot at all.
-    pub fn finish(self) -> Result<Record<'c>, AverageError> {
+    pub fn finish_unwatched(self) -> Result<Record<'c>, AverageError> {
         let shape = self.whole()?;
         let length = shape.length.saturating_mul(usize::from(self.phases));
         let codes = self.codes.get(..length).unwrap_or(&[]);
@@ -499,6 +532,13 @@ pub enum AverageError {
         /// How many.
         missing: u8,
     },
+    /// No delay was shot again, so that nobody knows whether anything has moved.
+    NotRepeated,
+    /// Probe or part have moved while the delays were shot.
+    Moved {
+        /// By how much later the echoes came when a delay was shot again; of no meaning beyond a quarter of a cycle.
+        picoseconds: i32,
+    },
 }
 
 impl AverageError {
@@ -521,6 +561,10 @@ impl AverageError {
             Self::Phases => "the number of delayed shots must be 1 to 64",
             Self::PhaseTwice { .. } => "two shots have the same delay: fire each delay once, or average them first",
             Self::PhasesMissing { .. } => "some delays are missing: fire each of them once",
+            Self::NotRepeated => "no delay was fired again, so that a movement would not be noticed: repeat the first",
+            Self::Moved { .. } => {
+                "probe or part moved while the delays were fired: hold them still, fire faster, or state the trigger's jitter"
+            }
         }
     }
 }
@@ -533,6 +577,7 @@ impl fmt::Display for AverageError {
             Self::LengthChanged { expected, got } => write!(f, " (expected {expected} samples, got {got})"),
             Self::PhaseTwice { phase } => write!(f, " (phase {phase})"),
             Self::PhasesMissing { missing } => write!(f, " ({missing} missing)"),
+            Self::Moved { picoseconds } => write!(f, " (echoes {picoseconds} ps later)"),
             _ => Ok(()),
         }
     }

@@ -152,7 +152,7 @@ fn delayed_shots_become_one_dense_record() {
             Err(AverageError::PhaseTwice { phase: 9 - number })
         );
     }
-    let record = interleaver.finish().unwrap();
+    let record = interleaver.finish_unwatched().unwrap();
     assert_eq!(record.codes().len(), 250);
     assert!((record.clock().rate.as_mhz() - 50.0).abs() < 1e-4);
     assert!((record.clock().first_sample.as_ns() - 820.0).abs() < 1e-3);
@@ -199,12 +199,21 @@ fn interleaving_refuses_what_does_not_fit() {
     interleaver.add(&shot(&[2047, 2046, -1000], at(0.0))).unwrap();
     assert!(interleaver.add(&shot(&[0; 2], at(-10.0))).is_err());
     interleaver.add(&shot(&[-2048, -2047, -1001], at(-10.0))).unwrap();
-    let record = interleaver.finish().unwrap();
+    let record = interleaver.finish_unwatched().unwrap();
     assert_eq!(record.codes(), [-2048, 2047, 0, -1, 1046, -2047]);
     let mut short = [0; 6];
     let mut half = Interleaver::new(&mut short, CLOCK, 2).unwrap();
     half.add(&shot(&[1; 3], at(0.0))).unwrap();
     assert_eq!(half.finish().unwrap_err(), AverageError::PhasesMissing { missing: 1 });
+    // Nobody has looked whether anything moved; a single phase cannot.
+    let mut two = [0; 6];
+    let mut interleaver = Interleaver::new(&mut two, CLOCK, 2).unwrap();
+    interleaver.add(&shot(&[1, 2, 3], at(0.0))).unwrap();
+    interleaver.add(&shot(&[1, 2, 3], at(-10.0))).unwrap();
+    assert_eq!(interleaver.finish().unwrap_err(), AverageError::NotRepeated);
+    let mut interleaver = Interleaver::new(&mut two, CLOCK, 1).unwrap();
+    interleaver.add(&shot(&[1, 2, 3], at(0.0))).unwrap();
+    assert_eq!(interleaver.finish().unwrap().codes().len(), 3);
 }
 
 /// What a 12-bit converter says of a peak of this height (in codes at 0 dB) at a gain.
@@ -314,7 +323,7 @@ fn echoes_at_the_base_rate_are_no_offset() {
             .add(&Record::new(&codes, AdcFormat::signed(12), clock))
             .unwrap();
     }
-    let record = interleaver.finish().unwrap();
+    let record = interleaver.finish_unwatched().unwrap();
     for (place, &code) in record.codes().iter().enumerate() {
         assert_eq!(code, burst(place), "{place}");
     }

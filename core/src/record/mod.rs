@@ -3,6 +3,7 @@
 pub mod average;
 pub mod movement;
 pub mod receiver;
+pub mod rounds;
 
 use crate::math;
 use crate::outcome::NoReading;

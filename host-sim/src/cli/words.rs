@@ -42,6 +42,10 @@ const REFUSALS: &[NoReading] = &[
         next: Metres::ZERO,
     },
     NoReading::BelowMinimum { minimum: Metres::ZERO },
+    NoReading::Unsteady {
+        echoes: 0,
+        moved: Metres::ZERO,
+    },
 ];
 
 /// Every term of the budget, with what it stands for.

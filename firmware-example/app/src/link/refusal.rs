@@ -35,6 +35,7 @@ impl Refusal {
             }
             NoReading::BelowMinimum { minimum } => (14, [bits(minimum.get()), 0, 0]),
             NoReading::NotThePulse { unexplained_percent } => (15, [u32::from(unexplained_percent), 0, 0]),
+            NoReading::Unsteady { echoes, moved } => (16, [u32::from(echoes), bits(moved.get()), 0]),
             _ => (0, [0; 3]),
         };
         Self { code, evidence }
@@ -78,6 +79,10 @@ impl Refusal {
             15 => NoReading::NotThePulse {
                 unexplained_percent: u16::try_from(a).ok()?,
             },
+            16 => NoReading::Unsteady {
+                echoes: u8::try_from(a).ok()?,
+                moved: Metres::new(number(b)),
+            },
             _ => return None,
         })
     }
@@ -107,6 +112,6 @@ mod tests {
             assert_eq!(back.refusal(), Some(refusal));
             known += 1;
         }
-        assert_eq!(known, 15);
+        assert_eq!(known, 16);
     }
 }

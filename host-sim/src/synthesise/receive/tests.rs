@@ -238,7 +238,7 @@ fn interleaved(scene: &Scene, codes: &mut [i16]) -> SampleClock {
             .add(&Record::new(&made.codes, made.format, made.clock))
             .unwrap();
     }
-    interleaver.finish().unwrap().clock()
+    interleaver.finish_unwatched().unwrap().clock()
 }
 
 /// The interleaved record is the directly sampled one: within the rounding of both and of the phases'
