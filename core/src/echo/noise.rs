@@ -15,7 +15,7 @@
 //! Not for noise that grows with time, nor for what stands under an echo alone: a phase that differs, an overlapping echo.
 
 use crate::echo::pulse::ReferencePulse;
-use crate::echo::rest::rest;
+use crate::echo::rest::{is_below_the_step, rest};
 use crate::echo::scan::{Candidate, Detector, Scan};
 use crate::math;
 use crate::record::{Record, SampleRange};
@@ -80,12 +80,11 @@ impl TimingNoise {
         self
     }
 
-    /// The same course with other variances.
-    pub(super) fn with_variances(mut self, other: impl Fn(f32) -> f32) -> Self {
+    /// Replaces every variance by another one.
+    pub(super) fn change_variances(&mut self, other: impl Fn(f32) -> f32) {
         for (_, variance) in self.knots.iter_mut().take(usize::from(self.count)) {
             *variance = other(*variance);
         }
-        self
     }
 
     /// How much higher than its first level the variance was this many samples before: the straight line through the
@@ -218,10 +217,18 @@ pub fn listen(
     }
     let energy = difference_energy(pulse.samples);
     let rounding = record.format().rounding_noise(scan.noise);
-    let timing = course(&parts, energy, scan.noise, rounding * rounding);
-    match rest(record, range, echoes, scan.noise) {
-        Some(rest) => rest.timing(timing),
-        None => timing,
+    let mut timing = course(&parts, energy, scan.noise, rounding * rounding);
+    if is_below_the_step(record, scan.noise) {
+        under_echoes(&mut timing, record, range, echoes);
+    }
+    timing
+}
+
+/// Off the stack while records are louder.
+#[inline(never)]
+fn under_echoes(timing: &mut TimingNoise, record: &Record<'_>, range: SampleRange, echoes: &[Reached]) {
+    if let Some(rest) = rest(record, range, echoes) {
+        rest.timing(timing);
     }
 }
 

@@ -54,24 +54,34 @@ impl Rest {
 
     /// The same for the noise of arrivals.
     #[must_use]
-    pub(crate) fn timing(&self, noise: TimingNoise) -> TimingNoise {
-        noise.with_variances(|variance| self.variance(variance))
+    pub(crate) fn timing(&self, noise: &mut TimingNoise) {
+        noise.change_variances(|variance| self.variance(variance));
     }
 }
 
-/// Looks at a shot whose noise, as the scan has found it, is so small that rounding hides it; `None` for any other, and where the
-/// codes do not tell: too few quiet samples, codes that do not change at all, or that wander.
+/// Is this a single shot whose noise, as the scan has found it, is so small that rounding hides it?
 #[must_use]
-pub fn rest(record: &Record<'_>, range: SampleRange, echoes: &[Reached], noise: f32) -> Option<Rest> {
+pub fn is_below_the_step(record: &Record<'_>, noise: f32) -> bool {
     let format = record.format();
-    if !(noise < OF_USE_BELOW && format.shots <= 1 && format.codes_per_step == 1.0) {
-        return None;
-    }
+    noise < OF_USE_BELOW && format.shots <= 1 && format.codes_per_step == 1.0
+}
+
+/// Looks at such a shot; `None` where the codes do not tell: too few quiet samples, codes that do not change at all, or
+/// that wander.
+#[must_use]
+pub fn rest(record: &Record<'_>, range: SampleRange, echoes: &[Reached]) -> Option<Rest> {
     let code = |place: usize| record.codes().get(place).map(|&code| i32::from(code));
     count(code, range, echoes)
 }
 
-/// The same for the mean of two rounds of one shot each, whose sums and differences give the codes of the first back.
+/// What a noise that was measured at rest in such a shot is under an echo; the same if the codes do not tell.
+#[must_use]
+#[inline(never)]
+pub fn under_echo(noise: f32, record: &Record<'_>, range: SampleRange, echoes: &[Reached]) -> f32 {
+    rest(record, range, echoes).map_or(noise, |rest| rest.under_echo(noise))
+}
+
+/// [`rest`] for the mean of two rounds of one shot each, whose sums and differences give the codes of the first back.
 #[must_use]
 pub fn rest_of_rounds(rounds: &TwoRounds<'_>, range: SampleRange, echoes: &[Reached], noise: f32) -> Option<Rest> {
     let (mean, difference) = (rounds.mean(), rounds.difference());
@@ -168,7 +178,9 @@ mod tests {
             start: 0,
             end: codes.len() as u32,
         };
-        rest(&record, range, &[], noise)
+        is_below_the_step(&record, noise)
+            .then(|| rest(&record, range, &[]))
+            .flatten()
     }
 
     #[test]

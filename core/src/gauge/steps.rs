@@ -4,7 +4,7 @@ use super::interpretation::{clearest, rules, signs, start_of_wall, times};
 use super::{CoatingReading, Gauge, Reading};
 use crate::echo::noise::{Noise, TimingNoise, listen, reached};
 use crate::echo::pulse::{PulseContext, PulseFacts, ReferencePulse, measure_pulse};
-use crate::echo::rest::rest;
+use crate::echo::rest::{is_below_the_step, under_echo};
 use crate::echo::scan::{CANDIDATE_CAPACITY, Candidate, Scan, scan};
 use crate::echo::separation::{judge, nearest_pair};
 use crate::echo::train::{Hypothesis, Rules, Train, Undecided, choose, fit, holds_thinner};
@@ -133,9 +133,10 @@ impl Gauge<'_> {
             self.workspace.skirt,
         );
         let noise = Noise {
-            per_sample: match rest(record, found.filled, &echoes, found.noise) {
-                Some(rest) => rest.under_echo(found.noise),
-                None => found.noise,
+            per_sample: if is_below_the_step(record, found.noise) {
+                under_echo(found.noise, record, found.filled, &echoes)
+            } else {
+                found.noise
             },
             timing: listen(record, &pulse, &found, found.filled, &echoes, envelope, found.threshold),
             sure: found.quiet,

@@ -152,7 +152,7 @@ impl Gauge<'_> {
         let echoes = reached(candidates, &pulse, scan, &self.detector, self.workspace.skirt);
         if let Some(rest) = rest_of_rounds(rounds, scan.filled, &echoes, noise.per_sample) {
             noise.per_sample = rest.under_echo(noise.per_sample);
-            noise.timing = rest.timing(noise.timing);
+            rest.timing(&mut noise.timing);
         }
     }
 
