@@ -15,7 +15,6 @@
 //! Not for noise that grows with time, nor for what stands under an echo alone: a phase that differs, an overlapping echo.
 
 use crate::echo::pulse::ReferencePulse;
-use crate::echo::rest::{is_below_the_step, rest};
 use crate::echo::scan::{Candidate, Detector, Scan};
 use crate::math;
 use crate::record::{Record, SampleRange};
@@ -217,19 +216,7 @@ pub fn listen(
     }
     let energy = difference_energy(pulse.samples);
     let rounding = record.format().rounding_noise(scan.noise);
-    let mut timing = course(&parts, energy, scan.noise, rounding * rounding);
-    if is_below_the_step(record, scan.noise) {
-        under_echoes(&mut timing, record, range, echoes);
-    }
-    timing
-}
-
-/// Off the stack while records are louder.
-#[inline(never)]
-fn under_echoes(timing: &mut TimingNoise, record: &Record<'_>, range: SampleRange, echoes: &[Reached]) {
-    if let Some(rest) = rest(record, range, echoes) {
-        rest.timing(timing);
-    }
+    course(&parts, energy, scan.noise, rounding * rounding)
 }
 
 /// From what the parts have shown to the noise's course.

@@ -53,7 +53,6 @@ impl Rest {
     }
 
     /// The same for the noise of arrivals.
-    #[must_use]
     pub(crate) fn timing(&self, noise: &mut TimingNoise) {
         noise.change_variances(|variance| self.variance(variance));
     }
@@ -72,13 +71,6 @@ pub fn is_below_the_step(record: &Record<'_>, noise: f32) -> bool {
 pub fn rest(record: &Record<'_>, range: SampleRange, echoes: &[Reached]) -> Option<Rest> {
     let code = |place: usize| record.codes().get(place).map(|&code| i32::from(code));
     count(code, range, echoes)
-}
-
-/// What a noise that was measured at rest in such a shot is under an echo; the same if the codes do not tell.
-#[must_use]
-#[inline(never)]
-pub fn under_echo(noise: f32, record: &Record<'_>, range: SampleRange, echoes: &[Reached]) -> f32 {
-    rest(record, range, echoes).map_or(noise, |rest| rest.under_echo(noise))
 }
 
 /// [`rest`] for the mean of two rounds of one shot each, whose sums and differences give the codes of the first back.
@@ -130,38 +122,49 @@ fn of_counts(counts: &[u32; CODES], all: u32) -> Option<Rest> {
         return None;
     }
     let total = seen as f32;
-    let moment = |power: i32| -> f32 {
-        let of =
-            |(code, &count): (usize, &u32)| count as f32 * if power == 1 { code as f32 } else { (code * code) as f32 };
-        counts.iter().enumerate().map(of).sum::<f32>() / total
-    };
-    let mean = moment(1);
-    // Lowest and highest edge that so many samples lie on either side of.
-    let edges = |least: u32| {
-        let (mut below, mut found) = (0, None);
-        for (code, &count) in counts.iter().enumerate() {
-            below += count;
-            if below >= least && seen - below >= least {
-                let edge = (code as f32, math::normal_quantile_of_tail(1.0 - below as f32 / total));
-                let (lowest, _) = found.unwrap_or((edge, edge));
-                found = Some((lowest, edge));
-            }
-        }
-        found
-    };
-    let spread = |((low, a), (high, b)): ((f32, f32), (f32, f32))| (high > low).then(|| (high - low) / (b - a));
-    let noise = match edges(WELL_KNOWN).and_then(spread).or_else(|| edges(1).and_then(spread)) {
-        Some(noise) => noise,
+    let (mut sum, mut squares, mut code) = (0u32, 0u32, 0u32);
+    for &count in counts {
+        sum += count * code;
+        squares += count * code * code;
+        code += 1;
+    }
+    let mean = sum as f32 / total;
+    let noise = match edges(counts, seen, WELL_KNOWN).or_else(|| edges(counts, seen, 1))? {
+        (first, last) if last.code > first.code => (last.code - first.code) / (last.quantile - first.quantile),
         // Two codes: of the edges to either side no sample says where they are, but that they are far.
-        None => {
-            let ((_, z), _) = edges(1)?;
-            1.0 / (z.abs() + math::normal_quantile_of_tail(0.5 / total))
-        }
+        (only, _) => 1.0 / (only.quantile.abs() + math::normal_quantile_of_tail(0.5 / total)),
     };
     Some(Rest {
-        at_rest: math::larger(moment(2) - mean * mean, ROUNDING),
+        at_rest: math::larger(squares as f32 / total - mean * mean, ROUNDING),
         moving: noise * noise + ROUNDING,
     })
+}
+
+/// The edge above a code, and how many standard deviations above the resting place it lies.
+#[derive(Clone, Copy)]
+struct Edge {
+    code: f32,
+    quantile: f32,
+}
+
+/// Lowest and highest edge that so many samples lie on either side of; `None` if that is true of none, or of one alone
+/// although more is asked than a single sample.
+#[inline(never)]
+fn edges(counts: &[u32; CODES], seen: u32, least: u32) -> Option<(Edge, Edge)> {
+    let (mut below, mut code) = (0, 0.0);
+    let mut found: Option<(Edge, Edge)> = None;
+    for &count in counts {
+        below += count;
+        if below >= least && seen - below >= least {
+            let edge = Edge {
+                code,
+                quantile: math::normal_quantile_of_tail(1.0 - below as f32 / seen as f32),
+            };
+            found = Some((found.map_or(edge, |(first, _)| first), edge));
+        }
+        code += 1.0;
+    }
+    found.filter(|(first, last)| least <= 1 || last.code > first.code)
 }
 
 #[cfg(test)]

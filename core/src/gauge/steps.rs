@@ -4,7 +4,7 @@ use super::interpretation::{clearest, rules, signs, start_of_wall, times};
 use super::{CoatingReading, Gauge, Reading};
 use crate::echo::noise::{Noise, TimingNoise, listen, reached};
 use crate::echo::pulse::{PulseContext, PulseFacts, ReferencePulse, measure_pulse};
-use crate::echo::rest::{is_below_the_step, under_echo};
+use crate::echo::rest::{Rest, is_below_the_step, rest};
 use crate::echo::scan::{CANDIDATE_CAPACITY, Candidate, Scan, scan};
 use crate::echo::separation::{judge, nearest_pair};
 use crate::echo::train::{Hypothesis, Rules, Train, Undecided, choose, fit, holds_thinner};
@@ -133,20 +133,31 @@ impl Gauge<'_> {
             self.workspace.skirt,
         );
         let noise = Noise {
-            per_sample: if is_below_the_step(record, found.noise) {
-                under_echo(found.noise, record, found.filled, &echoes)
-            } else {
-                found.noise
-            },
+            per_sample: found.noise,
             timing: listen(record, &pulse, &found, found.filled, &echoes, envelope, found.threshold),
             sure: found.quiet,
         };
         (found, noise)
     }
 
+    /// What the codes between the echoes tell of noise below the converter's step.
+    #[inline(never)]
+    fn rest(&self, record: &Record<'_>, scan: &Scan) -> Option<Rest> {
+        let pulse = ReferencePulse::new(self.workspace.pulse, self.facts);
+        let candidates = scan.candidates.iter().copied();
+        let echoes = reached(candidates, &pulse, scan, &self.detector, self.workspace.skirt);
+        rest(record, scan.filled, &echoes)
+    }
+
     /// Fits the pulse at every candidate; the noise may turn out lower than the scan thought.
     #[inline(never)]
     pub(super) fn measure_echoes(&mut self, record: &Record<'_>, range: SampleRange, scan: &Scan, noise: &mut Noise) {
+        if is_below_the_step(record, scan.noise)
+            && let Some(rest) = self.rest(record, scan)
+        {
+            noise.per_sample = rest.under_echo(noise.per_sample);
+            rest.timing(&mut noise.timing);
+        }
         let Workspace { pulse, correlation, .. } = &mut self.workspace;
         let surroundings = surroundings(&self.setup, pulse, self.facts, record, noise);
         measure_echoes(
@@ -183,7 +194,12 @@ impl Gauge<'_> {
             (rules, chosen)
         });
         let hypothesis = chosen.map_err(|why| self.undecided(record, noise, why))?;
-        if let Some(timing) = self.listen_again(record, scan, &rules, &hypothesis) {
+        if let Some(mut timing) = self.listen_again(record, scan, &rules, &hypothesis) {
+            if is_below_the_step(record, scan.noise)
+                && let Some(rest) = self.rest(record, scan)
+            {
+                rest.timing(&mut timing);
+            }
             apart(|| {
                 let heard = core::mem::replace(&mut noise.timing, timing);
                 let surroundings = surroundings(&self.setup, self.workspace.pulse, self.facts, record, noise);
