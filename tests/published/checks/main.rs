@@ -5,6 +5,7 @@
 
 mod law_gauge;
 mod sources;
+mod train_records;
 mod val_arrival;
 mod val_beam_and_film;
 mod val_blocks;
@@ -18,5 +19,6 @@ mod val_overlapping;
 mod val_pairs;
 mod val_tables;
 mod val_train;
+mod val_train_choice;
 mod val_wall;
 mod val_way;

@@ -1,122 +1,11 @@
-//! Trains of back walls of known place: which period is chosen, what the joint fit makes of them, and what it states.
-//!
-//! The records are made here, a Gaussian pulse of 5 MHz and 60 % at 50 MS/s (`oracle::gaussian_pulse`) without noise in 16 bits; the noise
-//! that the steps are told is a number of its own, so that what they state of it can be compared to the last digits. Where only the
-//! record's own truth is compared, no outside source speaks, and the check is not called `val_`.
+//! What the joint fit makes of trains of known place, and what it states of its uncertainty (records: `train_records.rs`).
 
-use halfpulse::echo::arrival::{Estimator, Search, estimate};
-use halfpulse::echo::correlation::Sign;
-use halfpulse::echo::noise::TimingNoise;
-use halfpulse::echo::pulse::{ReferencePulse, learn};
-use halfpulse::echo::train::{Hypothesis, Rules, Train, Undecided, choose, fit, holds_thinner};
-use halfpulse::echo::{EchoList, EchoRole, Polarity, Surroundings, echo_at};
-use halfpulse::path::{PathLaw, VPath};
-use halfpulse::setup::PULSE_CAPACITY;
-use halfpulse::workspace::{ECHO_CAPACITY, TRAIN_LAGS};
-use halfpulse::{AdcFormat, ElementSeparation, Hertz, Metres, MetresPerSecond, Record, SampleClock};
+use crate::train_records::{NOISE, RATE, SAMPLES, START, multiples, near, pulse, read, read_codes, rules};
+use halfpulse::echo::train::Rules;
+use halfpulse::echo::{EchoRole, Polarity};
+use halfpulse::path::{Beam, PathLaw, Spreading, VPath};
+use halfpulse::{ElementSeparation, Metres, MetresPerSecond};
 use halfpulse_published::oracle;
-
-const RATE: f64 = 50e6;
-const SAMPLES: usize = 2000;
-const NOISE: f64 = 60.0;
-/// Where the wall begins.
-const START: f64 = 100.25;
-
-fn pulse(t: f64) -> f64 {
-    oracle::gaussian_pulse(t / RATE, 5e6, 0.6)
-}
-
-/// A record with echoes of these places and amplitudes.
-fn codes(echoes: &[(f64, f64)]) -> Vec<i16> {
-    let sample = |i: usize| {
-        echoes
-            .iter()
-            .map(|(place, height)| height * pulse(i as f64 - place))
-            .sum()
-    };
-    let samples: Vec<f64> = (0..SAMPLES).map(sample).collect();
-    oracle::codes(&samples, 16)
-}
-
-/// Echoes that are multiples 1 to `count` of a wall of this period, falling by `decay` each time.
-fn multiples(period: f64, height: f64, decay: f64, count: i32) -> Vec<(f64, f64)> {
-    (1..=count)
-        .map(|n| (START + f64::from(n) * period, height * decay.powi(n - 1)))
-        .collect()
-}
-
-fn rules<'a>() -> Rules<'a> {
-    Rules {
-        start: START as f32,
-        start_tolerance: 10.0,
-        shortest: 15.0,
-        visible_from: 110.0,
-        visible_to: SAMPLES as f32,
-        threshold: 4.5,
-        law: PathLaw::Straight,
-    }
-}
-
-/// What came of a record: the train and the echoes with their roles.
-struct Outcome {
-    choice: Result<Hypothesis, Undecided>,
-    train: Result<Train, Undecided>,
-    echoes: EchoList,
-    thinner: bool,
-}
-
-/// Finds those of `seen` in the record of all `echoes`, chooses and fits.
-fn read(echoes: &[(f64, f64)], seen: &[(f64, f64)], rules: &Rules<'_>) -> Outcome {
-    read_codes(&codes(echoes), seen, rules)
-}
-
-/// The same for any record.
-fn read_codes(codes: &[i16], seen: &[(f64, f64)], rules: &Rules<'_>) -> Outcome {
-    let template: Vec<f32> = (-30..=30).map(|k| pulse(f64::from(k)) as f32).collect();
-    let mut buffer = [0.0f32; PULSE_CAPACITY];
-    let facts = learn(&template, 10.0, &mut buffer).expect("a reference pulse");
-    let surroundings = Surroundings {
-        record: Record::new(codes, AdcFormat::signed(16), SampleClock::new(Hertz::new(RATE as f32))),
-        pulse: ReferencePulse::new(&buffer, facts),
-        noise: NOISE as f32,
-        timing_noise: TimingNoise::steady(NOISE as f32),
-        samples_per_cycle: 10.0,
-    };
-    let mut found = EchoList::new();
-    let mut seen = seen.to_vec();
-    seen.sort_by(|a, b| a.0.total_cmp(&b.0));
-    for (place, _) in seen {
-        let search = Search {
-            around: place.round() as u32,
-            reach: 2.0,
-            sign: Sign::Either,
-            samples_per_cycle: 10.0,
-        };
-        let arrival = estimate(
-            Estimator::LeastSquares,
-            codes,
-            &search,
-            &surroundings.pulse,
-            &mut [0.0; 512],
-        );
-        let echo = echo_at(&surroundings, arrival.expect("an echo")).expect("inside");
-        found.push(echo).expect("room");
-    }
-    let mut lags = [0.0; ECHO_CAPACITY * TRAIN_LAGS];
-    let choice = choose(&surroundings, &found, rules);
-    let train = choice.and_then(|choice| fit(&surroundings, &mut found, rules, &choice, &mut lags));
-    let thinner = train.is_ok_and(|train| holds_thinner(&surroundings, &found, rules, &train));
-    Outcome {
-        choice,
-        train,
-        echoes: found,
-        thinner,
-    }
-}
-
-fn near(found: f32, expected: f64, allowed: f64) -> bool {
-    (f64::from(found) - expected).abs() < allowed
-}
 
 /// Period, place, numbers and roles of clean trains, upright and upside down.
 #[test]
@@ -214,55 +103,6 @@ fn val_uneven_trains() {
     }
 }
 
-/// The period that is chosen before anything is fitted to the record: that of the echoes' places, each with the square of its
-/// amplitude as its weight.
-///
-/// Source: weighted least squares of the places in double precision, worked out here (C. F. Gauss; any book on statistics).
-#[test]
-fn val_choice_is_the_weighted_mean() {
-    for (decay, moved) in [
-        (0.7, [0.6, -0.5, 0.4, -0.7, 0.3]),
-        (0.9, [-0.8, 0.2, 0.7, 0.1, -0.6]),
-        (0.8, [0.0, 0.9, -0.9, 0.9, -0.9]),
-    ] {
-        let mut echoes = multiples(140.3, 12_000.0, decay, 5);
-        for (echo, off) in echoes.iter_mut().zip(moved) {
-            echo.0 += off;
-        }
-        let choice = read(&echoes, &echoes, &rules()).choice.expect("a train");
-        let sum = |f: &dyn Fn(f64, f64) -> f64| -> f64 {
-            let term = |(n, echo): (usize, &(f64, f64))| echo.1 * echo.1 * f((n + 1) as f64, echo.0);
-            echoes.iter().enumerate().map(term).sum()
-        };
-        let (s0, s1, s2) = (sum(&|_, _| 1.0), sum(&|n, _| n), sum(&|n, _| n * n));
-        let (t0, t1) = (sum(&|_, x| x), sum(&|n, x| n * x));
-        let determinant = s0 * s2 - s1 * s1;
-        let (zero, period) = ((s2 * t0 - s1 * t1) / determinant, (s0 * t1 - s1 * t0) / determinant);
-        for n in [0u8, 1, 2, 5] {
-            let expected = zero + f64::from(n) * period;
-            let found = choice.place(u32::from(n));
-            assert!(
-                near(found, expected, 5e-3),
-                "decay {decay}, multiple {n}: {found} {expected}"
-            );
-        }
-        for n in 1..=8 {
-            let place = (zero + f64::from(n) * period) as f32;
-            assert!(
-                choice.explains(place, 0.5) && choice.explains(place - 0.4, 0.5) && choice.explains(place + 0.4, 0.5)
-            );
-            assert!(
-                !choice.explains(place + 0.6, 0.5) && !choice.explains(place - 0.6, 0.5),
-                "{n}"
-            );
-        }
-        assert!(
-            !choice.explains(zero as f32, 0.5),
-            "where the wall begins there is no multiple"
-        );
-    }
-}
-
 /// Echoes between the multiples: their energy over the train's, no part in the fit.
 #[test]
 fn strangers_between_multiples() {
@@ -342,6 +182,10 @@ fn weak_multiples_are_found() {
     let faint: Vec<(f64, f64)> = multiples(131.3, 14_000.0, 0.12, 7);
     let outcome = read(&faint, &faint[..2], &rules());
     assert_eq!(outcome.train.expect("a train").echoes, 3);
+    // So that what stands where a later multiple would be does not become one.
+    let mut later = faint.clone();
+    later.push((START + 7.0 * 131.3, 2_000.0));
+    assert_eq!(read(&later, &later[..2], &rules()).train.expect("a train").echoes, 3);
 }
 
 /// A single echo: its distance from the start, and nothing about a scatter.
@@ -359,122 +203,6 @@ fn lone_echo() {
     );
     assert_eq!((train.echoes, train.first_multiple, train.unevenness), (1, 1, 0.0));
     assert!(train.support < 1.0, "{train:?}");
-}
-
-/// The first echo in the dead zone: the multiples count from the second, unless nothing says that there was one.
-#[test]
-fn first_echo_in_the_dead_zone() {
-    let echoes = multiples(80.2, 12_000.0, 0.85, 7);
-    let mut late = rules();
-    late.visible_from = 220.0;
-    // 100.25 + 80.2 is hidden, 260.65 is the first that can be seen.
-    let train = read(&echoes, &echoes[1..], &late).train.expect("a train");
-    assert_eq!((train.first_multiple, train.echoes), (2, 6), "{train:?}");
-    assert!(
-        near(train.period, 80.2, 5e-3) && near(train.first.as_samples(), START + 160.4, 5e-3),
-        "{train:?}"
-    );
-    assert!(near(train.start_difference, 0.0, 2e-2), "{train:?}");
-    // Every other echo alone: half the period would have its first tooth in the dead zone, and speaks for nothing.
-    let wide = multiples(160.4, 12_000.0, 0.8, 5);
-    let train = read(&wide, &wide, &late).train.expect("a train");
-    assert!(near(train.period, 160.4, 5e-3), "{train:?}");
-    assert_eq!(train.first_multiple, 1);
-}
-
-/// An echo stronger than the second multiple half-way to it: the wall may be half as thick.
-#[test]
-fn stronger_echo_half_way() {
-    let mut echoes = multiples(160.0, 12_000.0, 0.6, 5);
-    assert!(!read(&echoes, &echoes, &rules()).train.expect("a train").may_be_double);
-    // Upside down, so that it is no multiple of the shorter wall.
-    echoes.push((START + 240.0, -8_000.0));
-    let train = read(&echoes, &echoes, &rules()).train.expect("a train");
-    assert!(near(train.period, 160.0, 0.05) && train.may_be_double, "{train:?}");
-    // Weaker than the second multiple, it says nothing.
-    echoes[5].1 = -6_000.0;
-    assert!(!read(&echoes, &echoes, &rules()).train.expect("a train").may_be_double);
-    // Half-way is within three quarters of a cycle.
-    for (off, half) in [(-6.5, true), (6.5, true), (-9.0, false), (9.0, false), (20.0, false)] {
-        echoes[5] = (START + 240.0 + off, -8_000.0);
-        let train = read(&echoes, &echoes, &rules()).train.expect("a train");
-        assert_eq!(train.may_be_double, half, "{off}: {train:?}");
-    }
-}
-
-/// Two trains from one start: the stronger is read, and the thinner wall is noticed.
-#[test]
-fn two_walls_under_one_probe() {
-    let thick = multiples(301.0, 16_000.0, 0.7, 5);
-    let mut both = thick.clone();
-    both.extend(multiples(187.0, 5_000.0, 0.75, 3));
-    let outcome = read(&both, &both, &rules());
-    let train = outcome.train.expect("a train");
-    assert!(
-        near(train.period, 301.0, 0.02) && outcome.thinner,
-        "{train:?} {}",
-        outcome.thinner
-    );
-    assert!(!read(&thick, &thick, &rules()).thinner);
-    // The thinner wall's echoes all before the thicker one's first.
-    let mut early = thick.clone();
-    early.extend(multiples(121.0, 5_000.0, 0.9, 2));
-    let outcome = read(&early, &early, &rules());
-    assert!(near(outcome.train.expect("a train").period, 301.0, 0.02) && outcome.thinner);
-    // A single echo more is no second train, nor are two behind the first.
-    for strangers in [
-        vec![(START + 187.0, 5_000.0)],
-        vec![(START + 374.0, 5_000.0), (START + 561.0, 4_000.0)],
-    ] {
-        let mut few = thick.clone();
-        few.extend(strangers);
-        assert!(!read(&few, &few, &rules()).thinner);
-    }
-    assert_eq!(read(&[], &[], &rules()).train.unwrap_err(), Undecided::NoTrain);
-}
-
-/// A strong echo and a weak one half its time behind it, where a first echo of half the period would be hidden: as the second
-/// gets stronger it is one wall that may be half as thick, then either, then the thinner one.
-///
-/// Log-likelihood of an echo of unknown height in noise, ln(1 + A² / 3 σ²), and the losses stated in the module's
-/// documentation, worked out by hand: 200 codes gain 1.0, 331 gain 2.0, 700 gain 3.5, and a hidden echo costs 1.1.
-#[test]
-fn half_the_wall_or_not() {
-    let mut late = rules();
-    late.visible_from = (START + 150.0) as f32;
-    let read_with = |height: f64| {
-        let echoes = [(START + 200.0, 3_000.0), (START + 300.0, height)];
-        read(&echoes, &echoes, &late).train
-    };
-    let whole = read_with(200.0).expect("the thicker wall");
-    assert!(near(whole.period, 200.0, 0.01) && whole.may_be_double, "{whole:?}");
-    match read_with(331.0) {
-        Err(Undecided::Ambiguous { candidates, best, next }) => {
-            assert!(near(best, 100.0, 0.5) && near(next, 200.0, 0.5), "{best} {next}");
-            assert_eq!(candidates, 2);
-        }
-        other => panic!("{other:?}"),
-    }
-    let half = read_with(700.0).expect("the thinner wall");
-    assert!(near(half.period, 100.0, 0.1) && half.first_multiple == 2, "{half:?}");
-}
-
-/// Two faint echoes whose train would begin far from where the wall does: no train. Loud enough, they are one.
-#[test]
-fn trains_that_contradict_their_start() {
-    // Nearer than the shortest period, so that the first one's distance from the start is no period.
-    let echoes = |height: f64| [(START + 12.0, height), (START + 212.0, height)];
-    assert_eq!(
-        read(&echoes(136.0), &echoes(136.0), &rules()).train.unwrap_err(),
-        Undecided::NoTrain
-    );
-    let train = read(&echoes(3_000.0), &echoes(3_000.0), &rules())
-        .train
-        .expect("a train");
-    assert!(
-        near(train.period, 200.0, 0.01) && near(train.start_difference, -188.0, 0.02),
-        "{train:?}"
-    );
 }
 
 /// A clipped first echo takes part with what its whole samples know.
@@ -500,6 +228,26 @@ fn val_clipped_first_multiple() {
         let stated = f64::from(train.period_uncertainty.expect("four echoes")) / bound;
         println!("{height}: stated {stated:.3} of the bound");
         assert!((stated - 1.0).abs() < 0.05, "{height}: {stated}");
+        // A sample off the line it is as uncertain.
+        let mut moved = echoes.clone();
+        moved[0].0 += 0.9;
+        let off = read(&moved, &moved, &rules()).train.expect("a train");
+        let ratio = off.period_uncertainty.expect("four echoes") / train.period_uncertainty.expect("four echoes");
+        assert!(near(ratio, 1.0, 0.1), "{height}: {ratio}");
+        let mut second = multiples(133.6, height, 1.0, 3);
+        second[1].0 += 0.9;
+        let even = read(
+            &multiples(133.6, height, 1.0, 3),
+            &multiples(133.6, height, 1.0, 3),
+            &rules(),
+        )
+        .train
+        .expect("a train");
+        let off = read(&second, &second, &rules()).train.expect("a train");
+        assert!(
+            near(off.support / even.support, 1.0, 0.03),
+            "{height}: {off:?} {even:?}"
+        );
     }
 }
 
@@ -591,5 +339,56 @@ fn val_train_along_a_v() {
         let bound = oracle::delay_bound(&template, NOISE) * spread.sqrt();
         let stated = train.period_uncertainty.expect("four echoes");
         assert!(near(stated / bound as f32, 1.0, 0.01), "{wall} m: {stated} {bound}");
+    }
+}
+
+/// Where the beam spreads, echoes come early by what the law says of their way; and an echo that was found half a cycle off, the
+/// wrong way up, is put right by the train.
+#[test]
+fn trains_of_a_spreading_beam() {
+    let table = Spreading::new(0.6);
+    let period = 160.3;
+    let law = PathLaw::Beam(Beam {
+        table: &table,
+        start: 0.0,
+        rate: (1.5 / period) as f32,
+        cycle: 10.0,
+        held: Some(0.0),
+    });
+    let spread = Rules { law, ..rules() };
+    let echoes: Vec<(f64, f64)> = (1..=5)
+        .map(|n| {
+            let straight = f64::from(n) * period;
+            let place = START + straight + f64::from(law.deviation(straight as f32));
+            (place, 14_000.0 * 0.8f64.powi(n - 1))
+        })
+        .collect();
+    // By up to a quarter of a cycle, and not evenly.
+    assert!(echoes[4].0 < START + 5.0 * period - 1.0);
+    let mut seen = echoes.clone();
+    for off in [0.0, 5.0, -5.0] {
+        seen[2].0 = echoes[2].0 + off;
+        let outcome = read(&echoes, &seen, &spread);
+        let train = outcome.train.unwrap_or_else(|why| panic!("{off}: {why:?}"));
+        assert!(
+            near(train.period, period, 5e-3) && train.echoes == 5,
+            "{off}: {train:?}"
+        );
+        assert!(
+            near(train.start_difference, 0.0, 2e-2) && train.unevenness < 0.05,
+            "{off}: {train:?}"
+        );
+        assert_eq!(outcome.echoes.len(), 5);
+        for (n, (echo, (place, _))) in outcome.echoes.iter().zip(&echoes).enumerate() {
+            assert_eq!(
+                (echo.role, echo.polarity),
+                (EchoRole::BackWall(n as u8 + 1), Polarity::Positive),
+                "{off}"
+            );
+            assert!(
+                near(echo.position.as_samples(), *place, 0.03),
+                "{off}: {echo:?} {place}"
+            );
+        }
     }
 }
