@@ -1,11 +1,14 @@
 //! Zero and velocity from blocks: uncertainties and their correlation, propagated by numerical derivatives and by chance.
 
 use halfpulse::wall::calibration::{
-    Block, drift_check, velocity_from_thickness, zero_and_velocity, zero_at_known_velocity,
+    Block, CalibrationError, DriftState, drift_check, velocity_from_thickness, zero_and_velocity,
+    zero_at_known_velocity,
 };
 use halfpulse::wall::thickness::{Timed, TrainTimes};
 use halfpulse::wall::uncertainty::budget;
-use halfpulse::{GaugeSetup, Hertz, Material, Metres, MetresPerSecond, Probe, Seconds, Span, Window, Zero};
+use halfpulse::{
+    Doubt, Doubts, GaugeSetup, Hertz, Material, Metres, MetresPerSecond, Probe, Seconds, Span, Window, Zero,
+};
 use halfpulse_published::{Table, oracle};
 
 /// Of thickness in metres, time in seconds, and their standard uncertainties.
@@ -220,6 +223,113 @@ fn val_score_of_a_drift_check() {
             (f64::from(check.ratio()) - score).abs() < 2e-3,
             "{check:?}: {}",
             check.ratio()
+        );
+    }
+}
+
+/// What blocks do not determine to a tenth is refused, just beyond that and not just before.
+#[test]
+fn blocks_that_determine_too_little() {
+    use CalibrationError as E;
+    // 20 mm and 6.757 us between them: ten times the root of two squares.
+    let of = |u_d: f64, u_t: f64| {
+        let at = |d: f64| block(d, 0.5e-6 + 2.0 * d / 5920.0, u_d, u_t);
+        zero_and_velocity(&at(5e-3), &at(25e-3))
+    };
+    assert!(of(1.40e-3, 0.0).is_ok() && of(0.0, 0.47e-6).is_ok());
+    assert_eq!(of(1.43e-3, 0.0), Err(E::ThicknessesTooClose));
+    assert_eq!(of(0.0, 0.49e-6), Err(E::TimesTooClose));
+    // One block: 10 mm, 4 us behind the zero.
+    let of = |u_d: f64, u_t: f64, u_zero: f64| {
+        let zero = Zero::new(Seconds::from_us(1.0), Seconds::new(u_zero as f32));
+        velocity_from_thickness(&block(10e-3, 5e-6, u_d, u_t), &zero)
+    };
+    assert!(of(0.99e-3, 0.0, 0.0).is_ok() && of(0.0, 0.39e-6, 0.0).is_ok() && of(0.0, 0.0, 0.39e-6).is_ok());
+    assert!(of(0.0, 0.28e-6, 0.28e-6).is_ok());
+    assert_eq!(of(1.01e-3, 0.0, 0.0), Err(E::ThicknessesTooClose));
+    for (u_t, u_zero) in [(0.41e-6, 0.0), (0.0, 0.41e-6), (0.29e-6, 0.29e-6)] {
+        assert_eq!(of(0.0, u_t, u_zero), Err(E::TimesTooClose), "{u_t} {u_zero}");
+    }
+    // Velocities that no wall has: below 300 m/s and above 20 km/s.
+    for (velocity, possible) in [(299.0, false), (301.0, true), (19_900.0, true), (20_100.0, false)] {
+        let one = block(10e-3, 20e-3 / velocity, 0.0, 0.0);
+        let found = velocity_from_thickness(&one, &Zero::new(Seconds::ZERO, Seconds::ZERO));
+        assert_eq!(found.is_ok(), possible, "{velocity}: {found:?}");
+        let known = Material::new(MetresPerSecond::new(velocity as f32), MetresPerSecond::ZERO);
+        assert_eq!(zero_at_known_velocity(&one, &known).is_ok(), possible, "{velocity}");
+    }
+    // Numbers that are none, and signs that cannot be.
+    let steel = Material::new(MetresPerSecond::new(5920.0), MetresPerSecond::new(10.0));
+    let refused = |d, t, u_d, u_t| zero_at_known_velocity(&block(d, t, u_d, u_t), &steel).unwrap_err();
+    for broken in [f64::NAN, f64::INFINITY] {
+        assert_eq!(refused(broken, 5e-6, 0.0, 0.0), E::NotANumber);
+        assert_eq!(refused(5e-3, broken, 0.0, 0.0), E::NotANumber);
+        assert_eq!(refused(5e-3, 5e-6, broken, 0.0), E::NotANumber);
+        assert_eq!(refused(5e-3, 5e-6, 0.0, broken), E::NotANumber);
+    }
+    assert_eq!(refused(0.0, 5e-6, 0.0, 0.0), E::Thickness);
+    assert_eq!(refused(5e-3, 5e-6, -1e-9, 0.0), E::Uncertainty);
+    assert_eq!(refused(5e-3, 5e-6, 0.0, -1e-12), E::Uncertainty);
+    let negative = Material::new(MetresPerSecond::new(5920.0), MetresPerSecond::new(-1.0));
+    assert_eq!(
+        zero_at_known_velocity(&block(5e-3, 5e-6, 0.0, 0.0), &negative),
+        Err(E::Uncertainty)
+    );
+    let unsure = Zero::new(Seconds::ZERO, Seconds::from_ns(-1.0));
+    assert_eq!(
+        velocity_from_thickness(&block(5e-3, 5e-6, 0.0, 0.0), &unsure),
+        Err(E::Uncertainty)
+    );
+    // Two blocks that contradict each other.
+    let pair = |d1: f64, t1: f64, d2: f64, t2: f64| {
+        zero_and_velocity(&block(d1, t1, 0.0, 0.0), &block(d2, t2, 0.0, 0.0)).unwrap_err()
+    };
+    assert_eq!(pair(5e-3, 2e-6, 5e-3, 3e-6), E::SameThickness);
+    assert_eq!(pair(5e-3, 2e-6, 9e-3, 2e-6), E::SameTime);
+    assert_eq!(pair(5e-3, 2e-6, 9e-3, 1e-6), E::ThickerIsEarlier);
+    assert_eq!(pair(9e-3, 1e-6, 5e-3, 2e-6), E::ThickerIsEarlier);
+}
+
+/// Within, outside or undecided, with and without doubts.
+#[test]
+fn states_of_a_drift_check() {
+    let um = |value: f64| Metres::new((value * 1e-6) as f32);
+    let check = |read: f64| drift_check((um(5_000.0), um(3.0)), (um(read), um(4.0)), 2.0);
+    let with = |doubts: &[Doubt]| {
+        let mut all = Doubts::NONE;
+        doubts.iter().for_each(|doubt| all.raise(*doubt));
+        all
+    };
+    assert!((f64::from(check(5_000.0).expanded().get()) - 10e-6).abs() < 1e-10);
+    for (read, clean, drift, other) in [
+        (
+            5_009.5,
+            DriftState::Within,
+            DriftState::Undecided,
+            DriftState::Undecided,
+        ),
+        (
+            4_990.5,
+            DriftState::Within,
+            DriftState::Undecided,
+            DriftState::Undecided,
+        ),
+        (5_010.5, DriftState::Outside, DriftState::Outside, DriftState::Undecided),
+        (4_989.5, DriftState::Outside, DriftState::Outside, DriftState::Undecided),
+        (
+            f64::NAN,
+            DriftState::Undecided,
+            DriftState::Undecided,
+            DriftState::Undecided,
+        ),
+    ] {
+        assert_eq!(check(read).state(Doubts::NONE), clean, "{read}");
+        assert_eq!(check(read).state(with(&[Doubt::ZeroContradicted])), drift, "{read}");
+        assert_eq!(check(read).state(with(&[Doubt::LowSignal])), other, "{read}");
+        assert_eq!(
+            check(read).state(with(&[Doubt::ZeroContradicted, Doubt::LowSignal])),
+            other,
+            "{read}"
         );
     }
 }
