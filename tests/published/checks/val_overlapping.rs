@@ -3,11 +3,14 @@
 //! The records are made here without noise; the noise that the steps are told is that of the tables of bounds.
 
 use halfpulse::echo::Surroundings;
+use halfpulse::echo::arrival::{Estimator, Search, estimate};
+use halfpulse::echo::correlation::Sign;
+use halfpulse::echo::echo_at;
 use halfpulse::echo::noise::TimingNoise;
 use halfpulse::echo::pulse::{ReferencePulse, learn};
-use halfpulse::echo::separation::model::{Answer, Stretch, decide};
+use halfpulse::echo::separation::model::{Answer, LEAST_SPACING, Stretch, decide};
 use halfpulse::echo::separation::thin_wall::{ThinWall, thin_wall};
-use halfpulse::echo::separation::{LEARNED_MISMATCH, PulseTrust, Unresolved};
+use halfpulse::echo::separation::{LEARNED_MISMATCH, PulseTrust, Unresolved, Verdict, judge};
 use halfpulse::setup::PULSE_CAPACITY;
 use halfpulse::{AdcFormat, Hertz, Record, SampleClock};
 use halfpulse_published::{Table, oracle, pairs};
@@ -130,6 +133,152 @@ fn val_likelihood_of_two_echoes() {
             (twice / expected - 1.0).abs() < 0.002,
             "ratio {ratio}, x {x}: {twice} {expected}"
         );
+        // What the pulse may be off by is as much more noise: the share of the energy that one echo explains.
+        for mismatch in [3e-4, 2e-3] {
+            let variance = f64::from(noise_of(30.0)).powi(2);
+            let trust = PulseTrust::Learned {
+                mismatch: mismatch as f32,
+            };
+            let answer = split(&samples, &pairs::reference(), 150.4 + 0.5 * x * DURATION, trust);
+            let twice = 2.0 * f64::from(answer.log_odds.expect("a fit"));
+            let expected = (energy - best) / (variance + mismatch * best);
+            assert!(
+                (twice / expected - 1.0).abs() < 0.01,
+                "ratio {ratio}, x {x}: {twice} {expected}"
+            );
+        }
+    }
+}
+
+/// The classical verdict: a spacing of at least the -20 dB duration. (The valley of Gaussian echoes is deep enough from there on.)
+///
+/// Source: `axial_resolution.csv`: half the spatial pulse length, in time the envelope's -20 dB duration of 2 sqrt(2 ln 10) σ
+/// (closed form of the Gaussian pulse).
+#[test]
+fn val_classical_verdict() {
+    let template: Vec<f32> = (-35..=35)
+        .map(|k| gaussian(f64::from(k), 0.1, 0.6, 0.0) as f32)
+        .collect();
+    let table = Table::read("physics/axial_resolution.csv");
+    let row = table
+        .rows()
+        .find(|row| row.number("f0_Hz") == 5e6 && row.number("fbw6") == 0.6);
+    let duration = 50e6 * row.expect("5 MHz and 60 %").number("t20_s");
+    for (share, ratio, resolved) in [
+        (1.03, 1.0, true),
+        (0.97, 1.0, false),
+        (1.03, -0.3, true),
+        (0.97, -0.5, false),
+        (1.6, 0.5, true),
+    ] {
+        for offset in [0.0, 3_000.0] {
+            let spacing = share * duration;
+            let echo = |t: f64| 12_000.0 * gaussian(t, 0.1, 0.6, 0.0);
+            let samples: Vec<f64> = (0..600)
+                .map(|i| offset + echo(f64::from(i) - 200.0) + ratio * echo(f64::from(i) - 200.0 - spacing))
+                .collect();
+            with_record(&samples, &template, 10.0, |surroundings| {
+                let find = |place: f64| {
+                    let search = Search {
+                        around: place.round() as u32,
+                        reach: 2.0,
+                        sign: Sign::Either,
+                        samples_per_cycle: 10.0,
+                    };
+                    let codes = surroundings.record.codes();
+                    let arrival = estimate(
+                        Estimator::LeastSquares,
+                        codes,
+                        &search,
+                        &surroundings.pulse,
+                        &mut [0.0; 512],
+                    );
+                    echo_at(surroundings, arrival.expect("an echo")).expect("inside")
+                };
+                let (first, second) = (find(200.0), find(200.0 + spacing));
+                let found = judge(surroundings, &first, &second, &mut [0.0; 512]);
+                let name = format!("{share} durations, ratio {ratio}, offset {offset}");
+                assert_eq!(
+                    found.verdict == Verdict::ResolvedClassically,
+                    resolved,
+                    "{name}: {found:?}"
+                );
+                assert_eq!(found.unresolved, (!resolved).then_some(Unresolved::Overlap), "{name}");
+                let pair = found.pair.expect("two echoes");
+                assert!(
+                    (f64::from(pair.spacing.as_ns()) - 20.0 * spacing).abs() < 5.0,
+                    "{name}: {pair:?}"
+                );
+                assert!(
+                    (f64::from(pair.amplitude_ratio) - ratio).abs() < 0.02,
+                    "{name}: {pair:?}"
+                );
+                let both = first
+                    .standard_uncertainty
+                    .get()
+                    .hypot(second.standard_uncertainty.get());
+                assert!((pair.standard_uncertainty.get() / both - 1.0).abs() < 1e-5, "{name}");
+            });
+        }
+    }
+}
+
+/// Every answer has a word of its own.
+#[test]
+fn words_are_distinct() {
+    let verdicts = [
+        Verdict::ResolvedClassically,
+        Verdict::ResolvedByModel,
+        Verdict::NotResolved,
+    ];
+    let reasons = [
+        Unresolved::Overlap,
+        Unresolved::OnePulse,
+        Unresolved::TooClose,
+        Unresolved::Ambiguous,
+        Unresolved::ModelsDisagree,
+        Unresolved::Clipped,
+        Unresolved::NoRoom,
+        Unresolved::PulseUnknown,
+    ];
+    let mut words: Vec<&str> = verdicts.iter().map(|verdict| verdict.word()).collect();
+    words.extend(reasons.iter().map(|why| why.word()));
+    assert!(words.iter().all(|word| word.len() > 3), "{words:?}");
+    words.sort_unstable();
+    words.dedup();
+    assert_eq!(words.len(), verdicts.len() + reasons.len(), "{words:?}");
+}
+
+/// An echo that has lost its higher frequencies, or whose phase is turned, is no two, though the pulse was learned.
+#[test]
+fn attenuated_echoes_are_not_split() {
+    let template: Vec<f32> = (-35..=35)
+        .map(|k| gaussian(f64::from(k), 0.1, 0.6, 0.0) as f32)
+        .collect();
+    for (frequency, bandwidth, phase) in [
+        (0.099, 0.6, 0.0),
+        (0.098, 0.6, 0.0),
+        (0.095, 0.6, 0.0),
+        (0.1, 0.58, 0.0),
+        (0.1, 0.6, 0.17),
+        (0.1, 0.6, -0.35),
+        (0.095, 0.57, 0.2),
+    ] {
+        let samples: Vec<f64> = (0..400)
+            .map(|i| PEAK * gaussian(f64::from(i) - 170.2, frequency, bandwidth, phase))
+            .collect();
+        let answer = with_record(&samples, &template, noise_of(30.0), |surroundings| {
+            let stretch = Stretch {
+                from: 130.0,
+                to: 210.0,
+                least_spacing: LEAST_SPACING,
+                trust: PulseTrust::Learned {
+                    mismatch: LEARNED_MISMATCH,
+                },
+            };
+            decide(surroundings, &stretch, &mut [0.0; 512], &mut [0.0; 416])
+        });
+        assert!(answer.split.is_err(), "{frequency}, {bandwidth}, {phase}: {answer:?}");
     }
 }
 
