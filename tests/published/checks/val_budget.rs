@@ -6,8 +6,8 @@ use halfpulse::wall::uncertainty::{
     Budget, Source, budget, coating_uncertainty, excess_uncertainty, reference_pulse, unknown_temperature_matters,
 };
 use halfpulse::{
-    CalibratedRange, Celsius, Coating, GaugeSetup, Guard, Hertz, LimitState, Limits, Material, Metres, MetresPerSecond,
-    Probe, Seconds, Span, VelocityTemperature, Window, Zero,
+    CalibratedRange, Celsius, Coating, DriftState, GaugeSetup, Guard, Hertz, LimitState, Limits, Material, Metres,
+    MetresPerSecond, Probe, Seconds, Span, VelocityTemperature, Window, Zero,
 };
 use halfpulse_published::oracle;
 
@@ -288,4 +288,28 @@ fn val_guard_bands_of_jcgm_106() {
         (f64::from(verdict.conformance_probability) - 0.839_995).abs() < 2e-4,
         "{verdict:?}"
     );
+}
+
+/// Every source has a word of its own, and every state of a drift check a word and an advice.
+#[test]
+fn words_are_distinct() {
+    let sources = [
+        Source::Timing,
+        Source::Velocity,
+        Source::Zero,
+        Source::Calibration,
+        Source::Beam,
+        Source::Coupling,
+        Source::Temperature,
+        Source::ReferencePulse,
+        Source::VPath,
+        Source::Roughness,
+    ];
+    let states = [DriftState::Within, DriftState::Outside, DriftState::Undecided];
+    let mut words: Vec<&str> = sources.iter().map(|source| source.word()).collect();
+    words.extend(states.iter().flat_map(|state| [state.word(), state.advice()]));
+    assert!(words.iter().all(|word| word.len() > 3), "{words:?}");
+    words.sort_unstable();
+    words.dedup();
+    assert_eq!(words.len(), 16, "{words:?}");
 }

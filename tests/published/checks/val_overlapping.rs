@@ -30,15 +30,26 @@ fn noise_of(snr_db: f64) -> f32 {
 
 /// What a record says to somebody who knows this pulse of ten samples a cycle.
 fn with_record<T>(samples: &[f64], template: &[f32], noise: f32, ask: impl FnOnce(&Surroundings<'_>) -> T) -> T {
+    sampled(10.0, samples, template, noise, ask)
+}
+
+/// The same for any number of samples a cycle.
+fn sampled<T>(
+    samples_per_cycle: f32,
+    samples: &[f64],
+    template: &[f32],
+    noise: f32,
+    ask: impl FnOnce(&Surroundings<'_>) -> T,
+) -> T {
     let codes = oracle::codes(samples, 16);
     let mut buffer = [0.0f32; PULSE_CAPACITY];
-    let facts = learn(template, 10.0, &mut buffer).expect("a reference pulse");
+    let facts = learn(template, samples_per_cycle, &mut buffer).expect("a reference pulse");
     ask(&Surroundings {
         record: Record::new(&codes, AdcFormat::signed(16), SampleClock::new(Hertz::from_mhz(50.0))),
         pulse: ReferencePulse::new(&buffer, facts),
         noise,
         timing_noise: TimingNoise::steady(noise),
-        samples_per_cycle: 10.0,
+        samples_per_cycle,
     })
 }
 
@@ -88,6 +99,109 @@ fn val_bound_of_a_spacing() {
         let place = f64::from(found.first.as_samples());
         assert!((place - first - origin()).abs() < 0.01, "{row:?}: {place}");
     }
+}
+
+/// Records that are sampled more often, or just often enough, and pulses of other widths: spacing and period at their bounds.
+///
+/// Source: Cramér-Rao bound of two echoes with all amplitudes free, numerical Fisher matrix (`oracle::period_bound`); of a thin
+/// wall by the same derivatives with its decay and both amplitudes (`thin_bound`).
+#[test]
+fn val_bounds_at_other_rates() {
+    for (cycle, bandwidth) in [(5.0, 0.6), (8.0, 0.4), (16.0, 0.7), (24.0, 0.6), (30.0, 0.6)] {
+        let sigma = oracle::gaussian_sigma(1.0 / cycle, bandwidth);
+        let pulse = |t: f64| (-0.5 * (t / sigma).powi(2)).exp() * (TAU * t / cycle).cos();
+        let half = (3.4 * sigma).ceil() as i32;
+        let template: Vec<f32> = (-half..=half).map(|k| pulse(f64::from(k)) as f32).collect();
+        let duration = 2.0 * (2.0 * 10f64.ln()).sqrt() * sigma;
+        let noise = noise_of(35.0);
+        let first = 4.0 * duration + 0.3;
+        let length = (16.0 * duration) as usize;
+        let times: Vec<f64> = (0..length).map(|i| i as f64).collect();
+        for (ratio, x) in [(1.0, 0.3), (-0.6, 0.5), (0.5, 0.9)] {
+            let (spacing, name) = (
+                x * duration,
+                format!("{cycle} samples a cycle, {bandwidth}: ratio {ratio}, x {x}"),
+            );
+            let samples: Vec<f64> = times
+                .iter()
+                .map(|t| PEAK * (pulse(t - first) + ratio * pulse(t - first - spacing)))
+                .collect();
+            let middle = first + 0.5 * spacing;
+            let answer = sampled(cycle as f32, &samples, &template, noise, |surroundings| {
+                let stretch = Stretch {
+                    from: (middle - 1.4 * duration) as f32,
+                    to: (middle + 1.4 * duration) as f32,
+                    least_spacing: LEAST_SPACING,
+                    trust: PulseTrust::Learned { mismatch: 0.0 },
+                };
+                decide(surroundings, &stretch, &mut [0.0; 512], &mut [0.0; 416])
+            });
+            let found = answer.split.unwrap_or_else(|why| panic!("{name}: {why:?}"));
+            let heights = [PEAK, ratio * PEAK];
+            let bound = oracle::period_bound(pulse, &times, first - spacing, spacing, &heights, f64::from(noise));
+            let (off, stated) = (
+                f64::from(found.spacing) - spacing,
+                f64::from(found.spacing_uncertainty) / bound,
+            );
+            println!("{name}: off {:+.3} of the bound, stated {stated:.3}", off / bound);
+            assert!(off.abs() < 0.2 * bound, "{name}: {off} {bound}");
+            assert!((stated - 1.0).abs() < 0.06, "{name}: {stated}");
+        }
+        let period = 0.5 * duration;
+        let (wall, decay) = (-0.6, 0.5);
+        let model = |t: f64, [start, period, wall, interface, decay]: [f64; 5]| -> f64 {
+            let echoes = (1..=9).map(|n| wall * decay.powi(n - 1) * pulse(t - start - f64::from(n) * period));
+            interface * pulse(t - start) + echoes.sum::<f64>()
+        };
+        let truth = [first, period, wall, 1.0, decay];
+        let samples: Vec<f64> = times.iter().map(|&t| PEAK * model(t, truth)).collect();
+        let name = format!("{cycle} samples a cycle, {bandwidth}: thin wall");
+        let found = sampled(cycle as f32, &samples, &template, noise, |surroundings| {
+            thin_wall(
+                surroundings,
+                first.round() as f32,
+                0.0,
+                &mut [0.0; 512],
+                &mut [0.0; 416],
+            )
+        });
+        let found = found.unwrap_or_else(|why| panic!("{name}: {why:?}"));
+        let bound = f64::from(noise) / PEAK * thin_bound(&model, &times, truth);
+        let (off, stated) = (
+            f64::from(found.period) - period,
+            f64::from(found.period_uncertainty) / bound,
+        );
+        println!("{name}: off {:+.3} of the bound, stated {stated:.3}", off / bound);
+        assert!(off.abs() < 0.3 * bound, "{name}: {off} {bound}");
+        assert!((stated - 1.0).abs() < 0.1, "{name}: {stated}");
+    }
+}
+
+/// Standard deviation of the second number of a model for noise of 1 a sample: Fisher's matrix by numerical derivatives, and
+/// elimination of the others.
+fn thin_bound(model: &impl Fn(f64, [f64; 5]) -> f64, times: &[f64], truth: [f64; 5]) -> f64 {
+    let mut fisher = [[0.0; 5]; 5];
+    for &t in times {
+        let slopes = oracle::gradient(|p| model(t, p), truth, 1e-6);
+        for (row, a) in fisher.iter_mut().zip(slopes) {
+            for (cell, b) in row.iter_mut().zip(slopes) {
+                *cell += a * b;
+            }
+        }
+    }
+    // What is left of the second number's information when the others are eliminated.
+    for pivot in [0, 2, 3, 4] {
+        let lead = fisher[pivot];
+        for i in 0..5 {
+            let factor = fisher[i][pivot] / lead[pivot];
+            if i != pivot {
+                for j in 0..5 {
+                    fisher[i][j] -= factor * lead[j];
+                }
+            }
+        }
+    }
+    fisher[1][1].sqrt().recip()
 }
 
 /// Twice the logarithm of the likelihood ratio of two echoes over one.
