@@ -1,13 +1,16 @@
 //! The uncertainty budget against the examples of the guides, and term by term against numerical derivatives.
 
 use halfpulse::echo::pulse::PulseFacts;
+use halfpulse::path::Spreading;
+use halfpulse::wall::coupling::{STEEL_IMPEDANCE, transmission_delay};
 use halfpulse::wall::thickness::{Timed, TrainTimes};
 use halfpulse::wall::uncertainty::{
     Budget, Source, budget, coating_uncertainty, excess_uncertainty, reference_pulse, unknown_temperature_matters,
 };
+use halfpulse::wall::way::path_law;
 use halfpulse::{
-    CalibratedRange, Celsius, Coating, DriftState, GaugeSetup, Guard, Hertz, LimitState, Limits, Material, Metres,
-    MetresPerSecond, Probe, Seconds, Span, VelocityTemperature, Window, Zero,
+    CalibratedRange, Celsius, Coating, DriftState, ElementSeparation, GaugeSetup, Guard, Hertz, LimitState, Limits,
+    Material, Metres, MetresPerSecond, Probe, Seconds, Span, VelocityTemperature, Window, Zero,
 };
 use halfpulse_published::oracle;
 
@@ -68,6 +71,18 @@ fn val_examples_of_the_guides() {
     assert!((combined(&[25.0, 9.7, 2.9, 16.6]) - 32.0).abs() < 0.5);
     assert!((combined(&[1.0, 1.0, 1.0, 1.0]) - 2.0).abs() < 1e-6);
     assert!((combined(&[3.0, 4.0]) - 5.0).abs() < 1e-6);
+    for (terms, largest) in [
+        ([3.0, 4.0, 2.0], Source::Velocity),
+        ([5.0, 4.0, 2.0], Source::Timing),
+        ([3.0, 3.5, 4.0], Source::Zero),
+    ] {
+        let mut budget = Budget::new();
+        for (source, value) in [Source::Timing, Source::Velocity, Source::Zero].into_iter().zip(terms) {
+            budget.add(source, Metres::new(value));
+        }
+        assert_eq!(budget.dominating(), Some(largest));
+    }
+    assert_eq!(Budget::new().dominating(), None);
 }
 
 /// Standard uncertainty of a rectangle.
@@ -156,6 +171,61 @@ fn val_budget_by_derivatives() {
     }
 }
 
+/// Along a V every error of a time counts more than straight down, and every error of the velocity more again.
+///
+/// Source: JCGM 100:2008, 5.1.2 over d = sqrt((c (t - t0) / 2)² - (p / 2)²) with numerical derivatives (`oracle::propagated`);
+/// the velocity's error from its calibration and, as a rectangle, from a temperature that nobody knows.
+#[test]
+fn val_budget_along_a_v() {
+    let span = Span::TransmissionPulseToBackWall;
+    for wall in [1.5e-3, 4e-3, 15e-3] {
+        let mut dual = setup(span, 10.0, 2.0, 0.0);
+        dual.probe = Probe::dual_element(Hertz::from_mhz(5.0), 0.6)
+            .with_couplant_film(Metres::ZERO)
+            .with_separation(ElementSeparation::new(Metres::from_mm(5.0), Metres::from_mm(0.1)));
+        dual.material = dual
+            .material
+            .with_temperature(VelocityTemperature::new(-0.8, Celsius::new(20.0)));
+        let time = 0.5 + 2e6 * f64::hypot(wall, 2.5e-3) / C;
+        let times =
+            TrainTimes::single(timed(time, 1.0)).straightened(&path_law(&dual, &Spreading::NONE), dual.zero.offset);
+        let by_temperature = 0.8f64.hypot(0.16) * 10.0 / 3f64.sqrt();
+        let distance = |[c, warm, zero, time, apart]: [f64; 5]| {
+            let way = 0.5 * (c + warm) * 1e-6 * (time - zero);
+            (way * way - 0.25 * apart * apart).sqrt()
+        };
+        let at = [C, 0.0, 0.5, time, 5e-3];
+        let expected = oracle::propagated(distance, at, [10.0, by_temperature, 2e-3, 1e-3, 1e-4], |_, _| 0.0);
+        let found = budget(&dual, &times, Metres::new(wall as f32));
+        let ratio = f64::from(found.combined().get()) / expected;
+        assert!((ratio - 1.0).abs() < 2e-3, "{wall} m: {ratio}, {found:?}");
+        for (source, number, uncertainty) in [
+            (Source::Velocity, 0, 10.0),
+            (Source::Temperature, 1, by_temperature),
+            (Source::Zero, 2, 2e-3),
+            (Source::Timing, 3, 1e-3),
+            (Source::VPath, 4, 1e-4),
+        ] {
+            let slope = oracle::gradient(distance, at, 1e-5)[number].abs();
+            let ratio = term(&found, source) / (slope * uncertainty);
+            assert!((ratio - 1.0).abs() < 3e-3, "{wall} m, {source:?}: {ratio}");
+        }
+        // A film counts as the zero does.
+        let mut wet = dual;
+        wet.probe.couplant_film = Metres::new(3e-6);
+        let film = term(&budget(&wet, &times, Metres::new(wall as f32)), Source::Coupling);
+        let half_width = transmission_delay(
+            wet.probe.face,
+            STEEL_IMPEDANCE,
+            wet.probe.centre_frequency,
+            Metres::new(3e-6),
+        );
+        let slope = oracle::gradient(distance, at, 1e-5)[2].abs();
+        let ratio = film / (slope * 1e6 * f64::from(half_width.get()) / 3f64.sqrt());
+        assert!((ratio - 1.0).abs() < 3e-3, "{wall} m: film {ratio}");
+    }
+}
+
 /// The temperature's term, stated and unknown, and when it rests on a guess.
 ///
 /// Source: JCGM 100:2008, 5.1.2 over c = c0 + β (T - T0), numerical derivatives; an unknown temperature is a rectangle of
@@ -184,6 +254,16 @@ fn val_temperature_by_derivatives() {
     let ratio = term(&found, Source::Temperature) / expected;
     assert!((ratio - 1.0).abs() < 1e-4, "{ratio}");
     assert!(unknown_temperature_matters(&setup, Metres::new(wall as f32), &found));
+    // A velocity that does not follow temperature rests on no guess, even where nothing else is in the budget.
+    let mut still = setup;
+    still.material = still
+        .material
+        .with_temperature(VelocityTemperature::new(0.0, Celsius::new(20.0)));
+    assert!(!unknown_temperature_matters(
+        &still,
+        Metres::new(wall as f32),
+        &Budget::new()
+    ));
     // 8 m/s of 5920 on 20 mm are 27.03 µm: the guess is held by the rest from half of that on, k being 2.
     for (others_um, matters) in [(13.4, true), (13.6, false)] {
         let mut rest = Budget::new();

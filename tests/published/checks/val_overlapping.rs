@@ -192,11 +192,11 @@ fn thin_bound(model: &impl Fn(f64, [f64; 5]) -> f64, times: &[f64], truth: [f64;
     // What is left of the second number's information when the others are eliminated.
     for pivot in [0, 2, 3, 4] {
         let lead = fisher[pivot];
-        for i in 0..5 {
-            let factor = fisher[i][pivot] / lead[pivot];
+        for (i, row) in fisher.iter_mut().enumerate() {
+            let factor = row[pivot] / lead[pivot];
             if i != pivot {
-                for j in 0..5 {
-                    fisher[i][j] -= factor * lead[j];
+                for (cell, above) in row.iter_mut().zip(lead) {
+                    *cell -= factor * above;
                 }
             }
         }
