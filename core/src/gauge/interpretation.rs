@@ -82,6 +82,18 @@ pub fn start_of_wall(setup: &GaugeSetup, record: &Record<'_>, echoes: &mut EchoL
     Ok(place + offset.get() * clock.rate.get())
 }
 
+/// The time through a coating and back in samples, if the set-up names one and the echoes show it: between the echoes of its two
+/// faces behind a delay line, elsewhere what lies between the zero and where the train begins.
+#[must_use]
+pub fn coating_trip(setup: &GaugeSetup, train: &Train, echoes: &[Echo]) -> Option<f32> {
+    setup.coating?;
+    if setup.probe.kind != ProbeKind::DelayLine {
+        return Some(train.start_difference);
+    }
+    let place = |role: EchoRole| echoes.iter().find(|echo| echo.role == role).map(|echo| echo.position);
+    Some(place(EchoRole::Coating)?.samples_after(place(EchoRole::Interface)?))
+}
+
 /// What the train may look like. The law counts in seconds.
 #[must_use]
 pub fn rules<'a>(

@@ -1,13 +1,13 @@
 //! The steps of [`Gauge::measure`](super::Gauge::measure), a method for each [`Stage`](super::stage::Stage).
 
-use super::interpretation::{clearest, rules, signs, start_of_wall, times};
+use super::interpretation::{clearest, coating_trip, rules, signs, start_of_wall, times};
 use super::{CoatingReading, Gauge, Reading};
 use crate::echo::noise::{Noise, TimingNoise, listen, reached};
 use crate::echo::pulse::{PulseContext, PulseFacts, ReferencePulse, measure_pulse};
 use crate::echo::rest::{Rest, is_below_the_step, rest};
 use crate::echo::scan::{CANDIDATE_CAPACITY, Candidate, Scan, scan};
 use crate::echo::separation::{judge, nearest_pair};
-use crate::echo::train::{Hypothesis, Rules, Train, Undecided, choose, fit, holds_thinner};
+use crate::echo::train::{Hypothesis, Rules, Train, Undecided, choose, fit, mark_coating, other_trains, unexplained};
 use crate::echo::{Echo, EchoRole, Surroundings, measure_echoes, settle_half_cycles};
 use crate::math;
 use crate::order;
@@ -211,9 +211,13 @@ impl Gauge<'_> {
         let fitted = apart(|| {
             let Workspace { pulse, train: lags, .. } = &mut self.workspace;
             let surroundings = surroundings(&self.setup, pulse, self.facts, record, noise);
-            let train = fit(&surroundings, &mut self.findings.echoes, &rules, &hypothesis, lags)?;
-            let thinner_too = holds_thinner(&surroundings, &self.findings.echoes, &rules, &train);
-            Ok(Train { thinner_too, ..train })
+            let mut train = fit(&surroundings, &mut self.findings.echoes, &rules, &hypothesis, lags)?;
+            if let Some(trip) = coating_trip(&self.setup, &train, &self.findings.echoes) {
+                mark_coating(&surroundings, &mut self.findings.echoes, &rules, &train, trip);
+                train.unexplained = unexplained(&surroundings, &self.findings.echoes, &rules);
+            }
+            (train.thinner_too, train.other_too) = other_trains(&surroundings, &self.findings.echoes, &rules, &train);
+            Ok(train)
         });
         let train = fitted.map_err(|why| self.undecided(record, noise, why))?;
         self.findings.train = Some(train);

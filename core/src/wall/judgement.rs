@@ -280,7 +280,10 @@ pub fn doubts(evidence: &Evidence<'_>, wrong_cycle: f32) -> Doubts {
     } else {
         UNEXPLAINED_LIMIT
     };
-    doubts.raise_if(train.unexplained > unexplained_limit, Doubt::UnexplainedEchoes);
+    doubts.raise_if(
+        train.unexplained > unexplained_limit || train.other_too,
+        Doubt::UnexplainedEchoes,
+    );
 
     let differing = evidence.differing_shift();
     doubts.raise_if(

@@ -66,14 +66,12 @@ impl Hypothesis {
 
 type Teeth = Vec<Tooth, ECHO_CAPACITY>;
 
-/// The best hypothesis, if it leads.
+/// The best hypotheses, one a period, best first.
+pub(super) type Ranked = Vec<Hypothesis, 8>;
+
+/// Every hypothesis that the echoes propose, scored.
 #[inline(never)]
-pub(super) fn choose(
-    surroundings: &Surroundings<'_>,
-    echoes: &EchoList,
-    rules: &Rules<'_>,
-    tolerance: f32,
-) -> Result<Hypothesis, Undecided> {
+pub(super) fn ranked(surroundings: &Surroundings<'_>, echoes: &EchoList, rules: &Rules<'_>, tolerance: f32) -> Ranked {
     let sigma = surroundings.amplitude_noise();
     let at_threshold = math::ln(1.0 + rules.threshold * rules.threshold / 3.0);
     let mut teeth: Teeth = Vec::new();
@@ -96,7 +94,7 @@ pub(super) fn choose(
         });
     }
     let rules = &straight;
-    let mut ranked: Vec<Hypothesis, 8> = Vec::new();
+    let mut ranked = Ranked::new();
     let mut consider = |anchor: f32, number: u32, period: f32| {
         if !(period >= rules.shortest) {
             return;
@@ -137,6 +135,11 @@ pub(super) fn choose(
             consider(tooth.place, number.unsigned_abs(), period);
         }
     }
+    ranked
+}
+
+/// The best hypothesis, if it leads.
+pub(super) fn leader(ranked: &Ranked) -> Result<Hypothesis, Undecided> {
     let Some(best) = ranked.first().copied().filter(|best| best.score > 0.0) else {
         return Err(Undecided::NoTrain);
     };
@@ -167,7 +170,7 @@ pub(super) fn choose(
 
 /// Keeps the list sorted by score, one entry a period.
 #[inline(never)]
-fn rank(ranked: &mut Vec<Hypothesis, 8>, hypothesis: Hypothesis, tolerance: f32) {
+fn rank(ranked: &mut Ranked, hypothesis: Hypothesis, tolerance: f32) {
     let same = |h: &&mut Hypothesis| (h.period - hypothesis.period).abs() < tolerance;
     if let Some(known) = ranked.iter_mut().find(same) {
         if hypothesis.score > known.score {

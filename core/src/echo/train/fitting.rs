@@ -199,6 +199,7 @@ pub(super) fn fit(
         freedom,
         unexplained: unexplained(surroundings, echoes, rules),
         thinner_too: false,
+        other_too: false,
         may_be_double: best.hidden || is_halved(surroundings, echoes, first, line.period),
     })
 }
@@ -222,7 +223,8 @@ fn is_halved(surroundings: &Surroundings<'_>, echoes: &EchoList, first: SamplePo
 
 /// Energy of what stands between the multiples over theirs. What does not look like the pulse (the tail of a strong
 /// interface echo) counts by the share of it that does.
-fn unexplained(surroundings: &Surroundings<'_>, echoes: &EchoList, rules: &Rules<'_>) -> f32 {
+#[must_use]
+pub fn unexplained(surroundings: &Surroundings<'_>, echoes: &EchoList, rules: &Rules<'_>) -> f32 {
     let (mut explained, mut left) = (0.0, 0.0);
     for echo in echoes {
         let place = echo.position.as_samples();

@@ -22,6 +22,7 @@
 //! two visible ones.
 
 mod choosing;
+mod coating;
 mod fitting;
 
 use crate::echo::{Echo, EchoList, EchoRole, Surroundings};
@@ -31,6 +32,8 @@ use crate::units::SamplePosition;
 use crate::workspace::{ECHO_CAPACITY, TRAIN_LAGS};
 
 pub use choosing::{Hypothesis, MARGIN};
+pub use coating::mark_coating;
+pub use fitting::unexplained;
 
 /// What is known before the echoes are looked at. Places are in samples from the record's first.
 #[derive(Clone, Copy, Debug, PartialEq)]
@@ -95,6 +98,8 @@ pub struct Train {
     pub unexplained: f32,
     /// Beside this train the echoes hold another one of a thinner wall: a pit, a step or a lamination under the probe.
     pub thinner_too: bool,
+    /// The echoes that this train leaves over make a train of another period.
+    pub other_too: bool,
     /// A wall of half or a third of this thickness would have its first echo in the dead zone and is not excluded by
     /// the others; or an echo stronger than the second multiple stands half-way to it.
     pub may_be_double: bool,
@@ -132,7 +137,7 @@ pub enum Undecided {
 /// # Errors
 /// [`Undecided`].
 pub fn choose(surroundings: &Surroundings<'_>, echoes: &EchoList, rules: &Rules) -> Result<Hypothesis, Undecided> {
-    choosing::choose(surroundings, echoes, rules, tolerance(surroundings))
+    choosing::leader(&choosing::ranked(surroundings, echoes, rules, tolerance(surroundings)))
 }
 
 /// Fits the chosen train, gives its echoes their roles and adds weak multiples that only the fit could find.
@@ -149,27 +154,53 @@ pub fn fit(
     fitting::fit(surroundings, echoes, rules, choice, tolerance(surroundings), lags).ok_or(Undecided::NoTrain)
 }
 
-/// Do the echoes that a fitted train has left over hold the train of a thinner wall, from the same start on? Grain's peaks
-/// are as many, but each of them speaks against every train that the others might be.
+/// Do the echoes that a fitted train has left over hold another train? Grain's peaks are as many, but each of them speaks
+/// against every train that the others might be; what follows every multiple at one distance (a mode-converted echo) has the same
+/// period. The first answer is for a thinner wall's from the same start on, the second for any other.
 #[must_use]
 #[inline(never)]
-pub fn holds_thinner(surroundings: &Surroundings<'_>, echoes: &EchoList, rules: &Rules<'_>, train: &Train) -> bool {
+pub fn other_trains(
+    surroundings: &Surroundings<'_>,
+    echoes: &EchoList,
+    rules: &Rules<'_>,
+    train: &Train,
+) -> (bool, bool) {
     let first = train.first.as_samples();
-    let before = |echo: &&Echo| {
+    let before = |echo: &Echo| {
         let place = echo.position.as_samples();
         echo.role == EchoRole::Other && place > rules.start && place < first
     };
-    if echoes.iter().filter(before).count() == 0 {
-        return false;
+    let energy = |explained: bool| {
+        let of = |echo: &&Echo| {
+            matches!(echo.role, EchoRole::BackWall(_)) == explained && (explained || echo.role == EchoRole::Other)
+        };
+        echoes
+            .iter()
+            .filter(of)
+            .fold(0.0, |sum, echo| sum + echo.amplitude * echo.amplitude)
+    };
+    // Not only of what stands out of the grain: a whole train of strangers was listened to as grain.
+    if energy(false) < WORTH_A_LOOK * energy(true) && !echoes.iter().any(before) {
+        return (false, false);
     }
     let tolerance = tolerance(surroundings);
-    choosing::choose(surroundings, echoes, rules, tolerance).is_ok_and(|other| {
-        other.score > SECOND_TRAIN
-            && other.period < train.period
-            && (other.zero - rules.start).abs() < rules.start_tolerance + tolerance
-    })
+    let ranked = choosing::ranked(surroundings, echoes, rules, tolerance);
+    let Some(best) = ranked.first().filter(|best| best.score > SECOND_TRAIN) else {
+        return (false, false);
+    };
+    let same_start = (best.zero - rules.start).abs() < rules.start_tolerance + tolerance;
+    let thinner = best.period < train.period && same_start && echoes.iter().any(before);
+    let leads = choosing::leader(&ranked).is_ok();
+    let strange = (best.period - train.period).abs() > tolerance;
+    (leads && thinner, strange && best.score > CLEAR_TRAIN)
 }
 
+/// The same for a train that need not begin where the chosen one does, nor lead: three echoes with all their weight. Grain
+/// at -20 dB of the back wall reaches it in 1 of 600 readings.
+const CLEAR_TRAIN: f32 = 10.0;
+
+/// From this share of unexplained energy on a second train is looked for behind the first back wall too.
+const WORTH_A_LOOK: f32 = 0.1;
 /// Score from which a second train is believed: two echoes that speak for it with all their weight.
 const SECOND_TRAIN: f32 = 6.0;
 
