@@ -148,6 +148,24 @@ impl Evidence<'_> {
             .fold(0.0, |m, echo| math::larger(m, echo.mismatch))
     }
 
+    /// Do all multiples but the strongest weigh at least half of it, and what is no multiple little? All strangers count here, those
+    /// too that were listened to as grain.
+    fn is_even_train(&self) -> bool {
+        let (mut all, mut strongest, mut others) = (0.0, 0.0, 0.0);
+        for echo in self.echoes {
+            let energy = echo.amplitude * echo.amplitude;
+            match echo.role {
+                EchoRole::BackWall(_) => {
+                    all += energy;
+                    strongest = math::larger(strongest, energy);
+                }
+                EchoRole::Other => others += energy,
+                _ => {}
+            }
+        }
+        all - strongest > 0.25 * strongest && others < UNEXPLAINED_LIMIT * all
+    }
+
     /// Does the strongest of the echoes that the reading rests on stand out of grain and noise? A lone one must.
     fn stands_out(&self) -> bool {
         self.used()
@@ -238,12 +256,12 @@ pub fn wrong_cycle_probability(evidence: &Evidence<'_>) -> f32 {
 }
 
 /// What a reading would rest on, if that is not the pulse: the share of its energy that is unexplained, in per cent of
-/// the explained one. Three multiples at one distance and little else are no chance, whatever they look like (the
-/// echoes of a thin wall run into each other): they are doubted instead.
+/// the explained one. Three multiples at one distance, none far below the others and little else beside them, are no
+/// chance, whatever they look like (the echoes of a thin wall run into each other): they are doubted instead. A ringing,
+/// of which each swing is a fifth of the one before, has no such multiples, nor have spikes.
 #[must_use]
 pub fn not_the_pulse(evidence: &Evidence<'_>) -> Option<u16> {
-    let train = evidence.train;
-    if train.echoes > 2 && train.unexplained < UNEXPLAINED_LIMIT {
+    if evidence.train.echoes > 2 && evidence.is_even_train() {
         return None;
     }
     let strangeness = evidence.strangeness();
