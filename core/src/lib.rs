@@ -66,6 +66,9 @@
 #[doc = include_str!("../../README.md")]
 pub struct Readme;
 
+#[doc = include_str!("../ACCURACY.md")]
+pub mod accuracy {}
+
 #[cfg(test)]
 extern crate std;
 #[cfg(test)]

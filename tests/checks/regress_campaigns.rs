@@ -8,6 +8,7 @@
 use halfpulse_sim::campaign::summary::{Tally, percent};
 use halfpulse_sim::campaign::{Campaign, Shard, Summary, runner};
 use halfpulse_sim::export;
+use halfpulse_tests::page::Figures;
 use halfpulse_tests::readme;
 use std::path::{Path, PathBuf};
 
@@ -174,7 +175,6 @@ fn regress_campaigns() {
         sum.add(stem, &summary);
     }
     let table = sum.table();
-    println!("{table}");
     compare(folder().join(SUM), &table);
     assert!(
         changed.is_empty(),
@@ -182,6 +182,9 @@ fn regress_campaigns() {
         changed.join(", ")
     );
     if times == 1 {
+        let mut figures = Figures::of("regress_campaigns");
+        table.lines().for_each(|line| figures.line(line));
+        figures.check();
         let walls = &sum.walls;
         assert!(walls.runs >= 6000, "one in 2000 needs at least 6000 walls");
         readme::figure(

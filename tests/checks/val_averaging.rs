@@ -14,6 +14,7 @@ use halfpulse::{
     Scratch, Seconds, ShotArrivals, Span, Window, Zero,
 };
 use halfpulse_tests::oracle::{self, Random};
+use halfpulse_tests::page::Figures;
 
 const RATE: f64 = 50e6;
 const FREQUENCY: f64 = 5e6;
@@ -128,11 +129,14 @@ fn half_width(trials: u32) -> f64 {
 /// 1 to 64 shots at the bound within 5 %, whatever the noise from 0.4 steps on; 256 shots stated.
 #[test]
 fn val_averages_reach_the_bound() {
+    let mut figures = Figures::of("val_averages_reach_the_bound");
     for noise in [0.4, 1.0, 3.0, 10.0] {
         for (shots, trials) in [(1, 3000), (4, 3000), (16, 2500), (64, 2500), (256, 500)] {
             let ratio = scatter(shots, level(noise), trials, 11);
             let chance = half_width(trials);
-            println!("noise {noise:>4} steps, {shots:>3} shots: scatter {ratio:.3} +- {chance:.3} of CRLB / sqrt(n)");
+            figures.line(&format!(
+                "noise {noise:>4} steps, {shots:>3} shots: scatter {ratio:.3} +- {chance:.3} of CRLB / sqrt(n)"
+            ));
             let limit = if shots > 64 { 1.10 } else { 1.05 };
             assert!(
                 ratio < limit + chance && ratio > 1.0 - 2.0 * chance,
@@ -147,28 +151,31 @@ fn val_averages_reach_the_bound() {
         noise: 0.4,
     };
     for shots in [64, 256] {
-        println!(
+        figures.line(&format!(
             "noise 0.4 steps of 12 bits (68 dB), {shots} shots: {:.3}",
             scatter(shots, fine, 500, 11)
-        );
+        ));
     }
+    figures.check();
 }
 
 /// Below 0.4 steps of noise rounding is the same in every shot: 64 shots fall short of the bound more and more, and an
 /// average is never believed to be at the bound then (`coverage`).
 #[test]
 fn val_quantisation_floor() {
+    let mut figures = Figures::of("val_quantisation_floor");
     let at = |noise: f64| {
         let ratio = scatter(64, level(noise), 1200, 12);
-        println!(
+        figures.line(&format!(
             "noise {noise} steps, 64 shots: {:.4} ns, {ratio:.2} +- {:.2} of CRLB / 8",
             ratio * bound(level(noise)) / 8.0 / RATE * 1e9,
             ratio * half_width(1200)
-        );
+        ));
         ratio
     };
     let [none, little, more, enough] = [0.0, 0.1, 0.3, 0.4].map(at);
     assert!(none > 3.0 && little > 2.0 && more > 1.02 && more < little && enough < 1.06);
+    figures.check();
 }
 
 fn gauge_setup(span: Span) -> GaugeSetup {
@@ -250,6 +257,7 @@ fn coverage(readings: &[(f64, f64)]) -> (f64, f64) {
 /// After averaging the stated uncertainty holds, whether rounding averages or not.
 #[test]
 fn val_coverage_of_averages() {
+    let mut figures = Figures::of("val_coverage_of_averages");
     for span in [Span::TransmissionPulseToBackWall, Span::BackWallToBackWall] {
         let anywhere = (0.0, 1.0);
         for (noise, offsets) in [
@@ -264,14 +272,15 @@ fn val_coverage_of_averages() {
             let (share, chance) = coverage(&all);
             let rms = (all.iter().map(|(error, _)| error * error).sum::<f64>() / all.len() as f64).sqrt();
             let stated = all.iter().map(|(_, u)| u).sum::<f64>() / all.len() as f64;
-            println!(
+            figures.line(&format!(
                 "{span:?}, 64 shots, {noise} steps, offset {offsets:?}: {:.1} +- {:.1} % inside; {rms:.4} um, stated {stated:.4} um",
                 100.0 * share,
                 100.0 * chance
-            );
+            ));
             assert!(share >= 0.93, "{span:?} {noise}: {share}");
         }
     }
+    figures.check();
 }
 
 /// Jitter from the scatter of an echo: the stated interval (k = 2) holds the true jitter as often as it should, from none to ten

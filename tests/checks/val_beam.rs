@@ -10,6 +10,7 @@ use halfpulse::{
 };
 use halfpulse_sim::scene::{Layer, Scene};
 use halfpulse_sim::synthesise::synthesise;
+use halfpulse_tests::page::Figures;
 use halfpulse_tests::published::{Table, delay_line_codes};
 
 const STEEL: MetresPerSecond = MetresPerSecond::new(5920.0);
@@ -38,6 +39,7 @@ fn contact(diameter_m: f64, span: Span, learned_on: Option<Metres>) -> GaugeSetu
 /// tenth of that with it. Of the envelope, which errs the other way, a twelfth is left.
 #[test]
 fn val_first_back_wall_against_the_exact_integral() {
+    let mut figures = Figures::of("val_first_back_wall_against_the_exact_integral");
     let table = Spreading::new(0.6);
     for row in Table::read("physics/diffraction_exact.csv").rows() {
         let (diameter, depth) = (row.number("dia_m"), row.number("d_m"));
@@ -48,13 +50,13 @@ fn val_first_back_wall_against_the_exact_integral() {
         let straightened = times.straightened(&path_law(&setup, &table), Seconds::ZERO);
         let found = f64::from(wall(&setup, &straightened).expect("a wall").get()) - depth;
         let uncorrected = 2960.0 * exact;
-        println!(
+        figures.line(&format!(
             "element {:.0} mm, wall {:.0} mm: {:+.2} um uncorrected, {:+.2} um corrected",
             1e3 * diameter,
             1e3 * depth,
             1e6 * uncorrected,
             1e6 * found
-        );
+        ));
         assert!(uncorrected < -9e-6, "{row:?}");
         assert!(
             found.abs() < 0.1 * uncorrected.abs(),
@@ -73,6 +75,7 @@ fn val_first_back_wall_against_the_exact_integral() {
             "{row:?}: {delay}"
         );
     }
+    figures.check();
 }
 
 /// Zero on one block and another wall, and the difference of the first two back walls: the table's own columns (SciPy
@@ -172,6 +175,7 @@ fn val_reference_a_scan_reads_4_mm() {
 /// 10 mm on 2 to 50 mm, 50 dB: within a tenth of what the beam does, by both spans.
 #[test]
 fn val_simulated_beams_are_corrected() {
+    let mut figures = Figures::of("val_simulated_beams_are_corrected");
     for diameter in [6.0, 10.0] {
         for (number, mm) in [3.0, 6.0, 10.0, 25.0, 50.0].into_iter().enumerate() {
             let mut scene = Scene::contact(5.0, 60.0, "carbon steel", mm);
@@ -196,16 +200,17 @@ fn val_simulated_beams_are_corrected() {
                 unknown.probe.element_diameter = None;
                 let uncorrected = read(unknown, &shot.codes, 16);
                 let before = (f64::from(uncorrected.thickness.as_mm()) - mm) * 1e3;
-                println!(
+                figures.line(&format!(
                     "{diameter} mm, wall {mm} mm, {span:?}: {before:+.2} um, corrected {error:+.2} um, U {expanded:.2} um, {}",
                     reading.doubts
-                );
+                ));
                 assert!(error.abs() < 0.1 * before.abs() + 0.3, "{span:?}: {error} of {before}");
                 assert!(error.abs() < expanded);
                 assert!(reading.doubts.is_empty(), "{}", reading.doubts);
             }
         }
     }
+    figures.check();
 }
 
 /// Far away the phase is a quarter of a cycle ahead, and two half cycles of opposite sign fit an echo about as well: 0.28 mm

@@ -16,6 +16,7 @@ use halfpulse::record::{AdcFormat, Record, SampleClock};
 use halfpulse::setup::PULSE_CAPACITY;
 use halfpulse::{Hertz, Seconds};
 use halfpulse_sim::front_end::{Purpose, Random};
+use halfpulse_tests::page::Figures;
 
 const CYCLE: f64 = 10.0;
 /// -6 dB bandwidth of 60 %: σ = 1.175394 / (π B), in samples.
@@ -52,6 +53,7 @@ fn bound(place: f64, a: f64, whole: impl Fn(usize) -> bool) -> f64 {
 
 #[test]
 fn val_clipped_echoes() {
+    let mut figures = Figures::of("val_clipped_echoes");
     let samples: Vec<f32> = (0..51).map(|i| pulse(f64::from(i) - 25.0) as f32).collect();
     let mut buffer = [0.0; PULSE_CAPACITY];
     let facts = learn(&samples, CYCLE as f32, &mut buffer).expect("a pulse");
@@ -62,7 +64,9 @@ fn val_clipped_echoes() {
     };
     // The learned origin is the interpolated maximum of the envelope, a hair beside the middle.
     let own = f64::from(facts.origin) - 25.0;
-    println!("full scales   scatter ns   bound ns   stated ns   as it is ns   inside k = 2");
+    figures.line(&format!(
+        "full scales   scatter ns   bound ns   stated ns   as it is ns   inside k = 2"
+    ));
     for over in [1.5, 3.0, 5.0] {
         let amplitude = over * FULL_SCALE;
         // 40 dB below the echo.
@@ -109,10 +113,10 @@ fn val_clipped_echoes() {
         let n = SHOTS as f64;
         let (scatter, naive, bias) = ((squares / n).sqrt(), (naive / n).sqrt(), bias / n);
         let share = f64::from(inside) / n;
-        println!(
+        figures.line(&format!(
             "{over:11}   {scatter:10.3}   {least:8.3}   {stated:9.3}   {naive:11.3}   {:8.1} %",
             100.0 * share
-        );
+        ));
         // The scatter of 1000 shots is known to 2.2 %: three standard deviations and 1.05.
         assert!(
             scatter < 1.05 * 1.07 * least && scatter > 0.93 * least,
@@ -123,4 +127,5 @@ fn val_clipped_echoes() {
         assert!((0.93..0.975).contains(&share), "{share}");
         assert!(naive > 1.3 * scatter);
     }
+    figures.check();
 }

@@ -11,6 +11,7 @@ use halfpulse::record::average::shot_delay;
 use halfpulse::setup::PULSE_CAPACITY;
 use halfpulse::{AdcFormat, AverageError, Hertz, Interleaver, Movement, Record, SampleClock, Seconds, movement};
 use halfpulse_tests::oracle::{self, Random};
+use halfpulse_tests::page::Figures;
 
 const BITS: u8 = 12;
 const AMPLITUDE: f64 = 1000.0;
@@ -170,6 +171,7 @@ fn scatter(bench: &Bench, trials: u32) -> f64 {
 /// most 11 %.
 #[test]
 fn val_interleaving_reaches_the_bound() {
+    let mut figures = Figures::of("val_interleaving_reaches_the_bound");
     let trials = 1500;
     let chance = 1.96 / f64::from(2 * trials).sqrt();
     for (frequency, base, phases) in [
@@ -193,17 +195,18 @@ fn val_interleaving_reaches_the_bound() {
         };
         let louder = Bench { noise: 31.6, ..both };
         let (both, louder) = (scatter(&both, trials), scatter(&louder, trials));
-        println!(
+        figures.line(&format!(
             "{} MHz, {} x {phases} MS/s: {plain:.3} +- {chance:.3} of the dense record's CRLB at 40 dB; offsets of 1 %: {offsets:.3}; gain 2 % as well: {louder:.3} at 30 dB, {both:.3} at 40 dB",
             frequency * 1e-6,
             base * 1e-6
-        );
+        ));
         assert!(plain > 0.95 && plain < 1.05 + chance, "{base}: {plain}");
         assert!(
             offsets < 1.05 + chance && louder < 1.11 + chance,
             "{base}: {offsets} {louder}"
         );
     }
+    figures.check();
 }
 
 /// Share of rounds in which a movement is seen.
@@ -227,6 +230,7 @@ fn alarms(bench: &Bench, again: u8, speed: f64, jitter: f64, trials: u32) -> f64
 /// repeated delay, and half a cycle or more as well.
 #[test]
 fn val_movement() {
+    let mut figures = Figures::of("val_movement");
     for (base, phases) in [(2e6, 25), (5e6, 10), (10e6, 5), (50e6, 1)] {
         let plain = Bench {
             mismatch: (0.02, 0.01),
@@ -240,12 +244,12 @@ fn val_movement() {
             ("jitter 1 ns", Bench { jitter: 1e-9, ..plain }, 1e-9, 400),
         ] {
             let share = alarms(&bench, 1, 0.0, stated, trials);
-            println!(
+            figures.line(&format!(
                 "{} x {phases} MS/s, {words}: false alarms {:.2} +- {:.2} %",
                 base * 1e-6,
                 100.0 * share,
                 196.0 * (share * (1.0 - share) / f64::from(trials)).sqrt()
-            );
+            ));
             // 1 % and three standard deviations of so many.
             assert!(
                 share <= 0.01 + 3.0 * (0.01 * 0.99 / f64::from(trials)).sqrt(),
@@ -255,14 +259,15 @@ fn val_movement() {
         for (ns, again, least) in [(10.0, 1, 0.8), (30.0, 1, 0.99), (300.0, 1, 0.9), (3.0, phases, 0.8)] {
             let speed = ns * 1e-9 / f64::from(phases);
             let share = alarms(&plain, again, speed, 0.0, 200);
-            println!(
+            figures.line(&format!(
                 "{} x {phases} MS/s: {ns} ns in a round, {again} repeated: noticed in {:.1} %",
                 base * 1e-6,
                 100.0 * share
-            );
+            ));
             assert!(share >= least, "{base} {ns}: {share}");
         }
     }
+    figures.check();
 }
 
 /// Two whole records whose noise has gone through a band-pass of the probe: correlated noise is no movement.

@@ -4,6 +4,7 @@
 use halfpulse::echo::pulse::{self, PulseContext, PulseMetrics, ReferencePulse, measure_pulse};
 use halfpulse::setup::PULSE_CAPACITY;
 use halfpulse::{GaugeSetup, Hertz, Material, MetresPerSecond, Probe, Seconds, Span, Window, Zero};
+use halfpulse_tests::page::Figures;
 use halfpulse_tests::published::{Table, number_rows};
 use halfpulse_tests::{oracle, readme};
 use std::f64::consts::PI;
@@ -295,6 +296,7 @@ fn val_metrics_of_scipy_echoes() {
 /// that is allowed there.
 #[test]
 fn val_metrics_scatter() {
+    let mut figures = Figures::of("val_metrics_scatter");
     let mut random = oracle::Random::new(7);
     let mut shown = Vec::new();
     let study = [
@@ -340,10 +342,10 @@ fn val_metrics_scatter() {
             // Fisher information of the carrier frequency (closed form): A² fs 2 π² / σn² times the integral of t² exp(-t² / σ²).
             let fisher = (1000.0 / noise).powi(2) * rate * PI * PI * PI.sqrt() * sigma.powi(3);
             let bound = fisher.sqrt().recip() / f0;
-            println!(
+            figures.line(&format!(
                 "{relative:.1} at {per_cycle} samples a cycle, 30 dB: Cramér-Rao bound of the centre {:.2} %",
                 100.0 * bound
-            );
+            ));
             for (number, what) in ["centre", "bandwidth", "duration"].iter().enumerate() {
                 let (mean, deviation) = oracle::mean_and_deviation(&found[number]);
                 let rms = mean.hypot(deviation);
@@ -352,13 +354,13 @@ fn val_metrics_scatter() {
                 if relative == 0.6 && per_cycle == 10.0 {
                     shown.push(format!("{:.2} ± {:.2} %", 100.0 * rms, 100.0 * interval));
                 }
-                println!(
+                figures.line(&format!(
                     "{relative:.1} at {per_cycle} samples a cycle, 30 dB: {what} rms {:.2} ± {:.2} % ({:+.2} +- {:.2} %)",
                     100.0 * rms,
                     100.0 * interval,
                     100.0 * mean,
                     100.0 * deviation
-                );
+                ));
                 let limit = if number == 0 {
                     allowed[0].max(1.3 * bound)
                 } else {
@@ -383,6 +385,7 @@ fn val_metrics_scatter() {
         &shown.join(" / "),
         "val_metrics_scatter",
     );
+    figures.check();
 }
 
 /// Below 26 dB the -20 dB points lie in the noise (6 dB above it at 26 dB): nothing is said. Above, the pulse is described.

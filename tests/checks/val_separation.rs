@@ -11,6 +11,7 @@ use halfpulse::echo::separation::model::{Stretch, decide};
 use halfpulse::echo::separation::{PulseTrust, Unresolved, Verdict};
 use halfpulse::{AdcFormat, Gauge, Hertz, Record, SampleClock, Scratch};
 use halfpulse_tests::oracle::{self, Random};
+use halfpulse_tests::page::Figures;
 use halfpulse_tests::published::Table;
 use halfpulse_tests::readme;
 
@@ -19,13 +20,14 @@ use halfpulse_tests::readme;
 /// uncertainty not too small.
 #[test]
 fn val_separation_with_a_learned_pulse() {
+    let mut figures = Figures::of("val_separation_with_a_learned_pulse");
     const SHOTS: usize = 300;
     let truth = Pulse::of_the_vectors();
     let mut scratch = Box::new(Scratch::<1024>::ZERO);
     let mut gauge = gauge_with_pulse(&mut scratch, Some((&truth, 16, 40.0)));
     let mut random = Random::new(31);
     let single = tally(&mut gauge, &truth, Case::single(30.0), 1000, &mut random);
-    println!("learned pulse, one echo: split {}", single.wrong_share());
+    figures.line(&format!("learned pulse, one echo: split {}", single.wrong_share()));
     assert!(single.wrong <= 10, "{} of 1000 single echoes split", single.wrong);
     let mut closest = Vec::new();
     for row in Table::read("vectors/pair_bound.csv").rows() {
@@ -33,12 +35,12 @@ fn val_separation_with_a_learned_pulse() {
         let cell = tally(&mut gauge, &truth, Case::pair(ratio, x, 30.0), SHOTS, &mut random);
         let bound = row.number("spacing_bound_ns");
         let (bias, deviation) = oracle::mean_and_deviation(&cell.errors_ns);
-        println!(
+        figures.line(&format!(
             "learned pulse, ratio {ratio:+}, x {x}: {cell}; spacing {deviation:.2} ns ({:.2} of the bound), bias {bias:+.2} ns, \
              within k = 2: {:.1} %",
             deviation / bound,
             100.0 * cell.covered
-        );
+        ));
         assert!(cell.right * 100 >= 95 * SHOTS, "ratio {ratio}, x {x}: {cell}");
         // 4 % is the standard deviation of a standard deviation of 300.
         assert!(
@@ -64,6 +66,7 @@ fn val_separation_with_a_learned_pulse() {
         &format!("{} of 1000", single.wrong),
         "val_separation",
     );
+    figures.check();
 }
 
 /// What attenuation in the part does to a single echo (spectrum times exp(-beta (f - f0) / f0), which moves the centre frequency
@@ -98,6 +101,7 @@ fn val_separation_of_an_attenuated_echo() {
 /// the false splits keep to that, but spacings between 0.2 and 0.4 can be those of a neighbouring half cycle.
 #[test]
 fn val_separation_with_a_modelled_pulse() {
+    let mut figures = Figures::of("val_separation_with_a_modelled_pulse");
     const SHOTS: usize = 200;
     let mut scratch = Box::new(Scratch::<1024>::ZERO);
     let mut gauge = gauge_with_pulse(&mut scratch, None);
@@ -111,7 +115,10 @@ fn val_separation_with_a_modelled_pulse() {
         ("all three", Pulse::gaussian(4.75, 2.7, degrees(20.0)), false),
     ] {
         let single = tally(&mut gauge, &truth, Case::single(30.0), 300, &mut random);
-        println!("modelled pulse, {what}, one echo: split {}", single.wrong_share());
+        figures.line(&format!(
+            "modelled pulse, {what}, one echo: split {}",
+            single.wrong_share()
+        ));
         assert!(
             single.wrong <= 15,
             "{what}: {} of 300 single echoes split",
@@ -134,7 +141,7 @@ fn val_separation_with_a_modelled_pulse() {
             (-0.5, 0.5),
         ] {
             let cell = tally(&mut gauge, &truth, Case::pair(ratio, x, 30.0), SHOTS, &mut random);
-            println!("modelled pulse, {what}, ratio {ratio:+}, x {x}: {cell}");
+            figures.line(&format!("modelled pulse, {what}, ratio {ratio:+}, x {x}: {cell}"));
             if sole {
                 // A pulse wider than the sheet says looks like this pair: missed by silence, not by a wrong answer.
                 let hard = what == "bandwidth -10 %" && ratio == -0.5 && x == 0.25;
@@ -147,6 +154,7 @@ fn val_separation_with_a_modelled_pulse() {
             }
         }
     }
+    figures.check();
 }
 
 /// One clipped sample under the echoes, and there is no verdict, whatever the model would say.

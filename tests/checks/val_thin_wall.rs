@@ -11,6 +11,7 @@ use halfpulse::echo::separation::{LEARNED_MISMATCH, Unresolved};
 use halfpulse::setup::PULSE_CAPACITY;
 use halfpulse::{AdcFormat, Hertz, Record, SampleClock, Scratch};
 use halfpulse_tests::oracle::{self, Random};
+use halfpulse_tests::page::Figures;
 use halfpulse_tests::published::{Table, number_rows};
 use halfpulse_tests::readme;
 
@@ -71,6 +72,7 @@ fn read(codes: &[i16], snr: f64) -> Result<ThinWall, Unresolved> {
 /// the period, which rules out half and double of it.
 #[test]
 fn val_thin_wall() {
+    let mut figures = Figures::of("val_thin_wall");
     const SHOTS: usize = 150;
     let pulse = Pulse::of_the_vectors();
     let mut random = Random::new(41);
@@ -99,11 +101,11 @@ fn val_thin_wall() {
                 (0.0, 0.0)
             };
             let bound = row.number("period_bound_ns");
-            println!(
+            figures.line(&format!(
                 "wall {wall}, decay {decay}, {snr} dB, x {x}: right {}, wrong {wrong}, silent {silent}; {deviation:.2} ns, bias \
                  {bias:+.2} ns, bound for decay 0.5: {bound} ns; within k = 2: {covered}",
                 share(errors.len(), SHOTS)
-            );
+            ));
             assert!(errors.len() * 100 >= 95 * SHOTS, "wall {wall}, {snr} dB, x {x}");
             assert!(
                 covered * 100 >= 93 * errors.len(),
@@ -125,6 +127,7 @@ fn val_thin_wall() {
             }
         }
     }
+    figures.check();
 }
 
 /// An interface echo without a wall is none, and a clipped sample stops everything.

@@ -15,6 +15,7 @@ use halfpulse_sim::front_end::{Purpose, Random};
 use halfpulse_sim::record_file::RecordFile;
 use halfpulse_sim::scene::Scene;
 use halfpulse_sim::synthesise::{Synthesiser, Variation};
+use halfpulse_tests::page::Figures;
 use halfpulse_tests::{oracle, readme};
 use std::path::Path;
 
@@ -75,6 +76,7 @@ fn bound(decay: f64, snr_db: f64, amplitude: f64) -> f64 {
 
 #[test]
 fn val_train_fit() {
+    let mut figures = Figures::of("val_train_fit");
     let mut scratch = Box::new(Scratch::<4096>::ZERO);
     let mut gauge = Gauge::new(setup(), scratch.workspace()).expect("the set-up is sound");
     learn(&mut gauge);
@@ -117,11 +119,11 @@ fn val_train_fit() {
         let amplitude = 0.5 * 2048.0;
         let ratio = deviation / bound(decay, snr_db, amplitude);
         let share = f64::from(inside) / errors.len() as f64;
-        println!(
+        figures.line(&format!(
             "decay {decay}, {snr_db} dB: deviation over bound {ratio:.3}, bias over deviation {:+.3}, within k = 2 {:.1} %",
             bias / deviation,
             100.0 * share
-        );
+        ));
         assert!(ratio <= 1.10, "decay {decay}, {snr_db} dB: {ratio} of the bound");
         assert!(
             (0.93..0.97).contains(&share),
@@ -152,4 +154,5 @@ fn val_train_fit() {
         &format!("{doubted} / {refused}"),
         test,
     );
+    figures.check();
 }

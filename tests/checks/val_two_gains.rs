@@ -6,6 +6,7 @@ use halfpulse::{
     SampleClock, Scratch, Seconds, Span, TwoGains, TwoGainsError, Window, Zero,
 };
 use halfpulse_tests::oracle::{self, Random};
+use halfpulse_tests::page::Figures;
 
 const RATE: f64 = 50e6;
 const SAMPLES: usize = 1024;
@@ -62,6 +63,7 @@ fn setup(span: Span) -> GaugeSetup {
 /// doubted, the quiet one alone several times less certain.
 #[test]
 fn val_two_gains() {
+    let mut figures = Figures::of("val_two_gains");
     let mut scratch = Box::new(Scratch::<SAMPLES>::ZERO);
     let stated = Decibels::new(46.0);
     for (step_error, jitter_ns, noise) in [
@@ -107,18 +109,19 @@ fn val_two_gains() {
             }
         }
         let share = f64::from(inside) / f64::from(read);
-        println!(
+        figures.line(&format!(
             "step error {step_error} dB, jitter {jitter_ns} ns, noise {noise} steps: {read} of {trials} read, {doubted} doubted, {:.1} +- {:.1} % inside, {:.3} um rms, stated {:.3} um; loud record alone undoubted {alone}, quiet one alone {:.2} um rms",
             100.0 * share,
             196.0 * (share * (1.0 - share) / f64::from(read)).sqrt(),
             (squares / f64::from(read)).sqrt(),
             uncertainties / f64::from(read),
             quiet_squares.sqrt()
-        );
+        ));
         assert!(read >= trials * 97 / 100 && share >= 0.93 && doubted <= trials / 50);
         assert_eq!(alone, 0);
         assert!(jitter_ns > 0.0 || quiet_squares > 3.0 * squares / f64::from(read));
     }
+    figures.check();
 }
 
 /// What contradicts itself is a set-up error; what shows no interface is refused.

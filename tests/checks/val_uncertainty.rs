@@ -6,6 +6,7 @@ use halfpulse::{
     Seconds, Span, Window, Zero,
 };
 use halfpulse_tests::oracle;
+use halfpulse_tests::page::Figures;
 use halfpulse_tests::published::{Table, code_rows};
 
 const RATE: f64 = 50e6;
@@ -37,6 +38,7 @@ fn pulse(t: f64) -> f64 {
 /// 0.93 to 1.07 are 2.8 standard deviations of that ratio over 800 shots.
 #[test]
 fn val_stated_uncertainty_is_the_bound_and_holds() {
+    let mut figures = Figures::of("val_stated_uncertainty_is_the_bound_and_holds");
     const SHOTS: usize = 800;
     for (decay, snr_db) in [(0.7f64, 20.0f64), (0.7, 30.0), (0.85, 40.0)] {
         let noise = PEAK * 10f64.powf(-snr_db / 20.0);
@@ -79,11 +81,11 @@ fn val_stated_uncertainty_is_the_bound_and_holds() {
         let (bias, scatter) = oracle::mean_and_deviation(&scores);
         let (period_ratio, arrival_ratio) = (mean_stated / (0.5 * VELOCITY * of_period), mean_arrival / of_arrival);
         let within = scores.iter().filter(|score| score.abs() < 2.0).count() as f64 / SHOTS as f64;
-        println!(
+        figures.line(&format!(
             "decay {decay}, {snr_db} dB: stated over bound {period_ratio:.3} (thickness), {arrival_ratio:.3} (first arrival); \
              errors over stated {scatter:.3}, bias {bias:+.3}; within k = 2: {:.1} %",
             100.0 * within
-        );
+        ));
         assert!((arrival_ratio - 1.0).abs() < 0.1, "arrival {arrival_ratio}");
         assert!((period_ratio - 1.0).abs() < 0.1, "thickness {period_ratio}");
         assert!(
@@ -93,6 +95,7 @@ fn val_stated_uncertainty_is_the_bound_and_holds() {
         assert!(bias.abs() < 0.15, "bias {bias}");
         assert!((0.93..0.975).contains(&within), "within k = 2: {within}");
     }
+    figures.check();
 }
 
 /// The noise estimate on records of noise alone against NumPy's standard deviation of the same codes

@@ -11,13 +11,15 @@ use halfpulse::{
 };
 use halfpulse_sim::scene::Scene;
 use halfpulse_sim::synthesise::Synthesiser;
+use halfpulse_tests::page::Figures;
 
 const SHOTS: u64 = 4000;
 const VELOCITY: f32 = 5920.0;
 
 #[test]
 fn val_wrong_cycle() {
-    println!("SNR   sign      readings   another cycle   stated");
+    let mut figures = Figures::of("val_wrong_cycle");
+    figures.line(&format!("SNR   sign      readings   another cycle   stated"));
     let mut unknown_at_ten = 0;
     for snr in [8.0, 10.0, 12.0, 15.0] {
         let mut scene = Scene::contact(5.0, 60.0, "carbon steel", 10.0);
@@ -56,7 +58,9 @@ fn val_wrong_cycle() {
                 wrong += u32::from((reading.thickness.as_mm() - 10.0).abs() > 0.148);
             }
             let spread = 3.0 * f64::from(wrong.max(1)).sqrt();
-            println!("{snr:3}   {word:7}   {readings:8}   {wrong:13}   {stated:6.1}");
+            figures.line(&format!(
+                "{snr:3}   {word:7}   {readings:8}   {wrong:13}   {stated:6.1}"
+            ));
             assert!(
                 f64::from(readings) > 0.5 * SHOTS as f64,
                 "{readings} readings at {snr} dB"
@@ -73,4 +77,5 @@ fn val_wrong_cycle() {
             }
         }
     }
+    figures.check();
 }

@@ -4,6 +4,7 @@
 //! mistake in this repository, so everything here panics with file, line and column.
 
 pub mod oracle;
+pub mod page;
 pub mod readme;
 
 use std::path::PathBuf;
