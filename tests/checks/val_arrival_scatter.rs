@@ -63,7 +63,7 @@ fn val_arrival_over_the_bound() {
     let mean_chance = 2.0 / (SHOTS as f64).sqrt();
     for samples_per_cycle in [4.0, 5.0, 10.0, 20.0] {
         for snr_db in [20.0, 30.0, 40.0, 50.0] {
-            let (ratio, bias) = over_the_bound(Estimator::LeastSquares, samples_per_cycle, snr_db, 71);
+            let (ratio, bias) = over_the_bound(Estimator::LeastSquares, samples_per_cycle, snr_db, 71 + snr_db as u64);
             figures.line(&format!(
                 "least squares, {samples_per_cycle:2} samples a cycle, {snr_db} dB: scatter {ratio:.3} +- {:.3} of the bound, bias {bias:+.3} +- {mean_chance:.3} of it",
                 chance * ratio

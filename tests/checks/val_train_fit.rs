@@ -120,7 +120,8 @@ fn val_train_fit() {
         let ratio = deviation / bound(decay, snr_db, amplitude);
         let share = f64::from(inside) / errors.len() as f64;
         figures.line(&format!(
-            "decay {decay}, {snr_db} dB: deviation over bound {ratio:.3}, bias over deviation {:+.3}, within k = 2 {:.1} %",
+            "decay {decay}, {snr_db} dB: deviation over bound {ratio:.3} +- {:.3}, bias over deviation {:+.3}, within k = 2 {:.1} %",
+            ratio * 2.0 / (2.0 * errors.len() as f64).sqrt(),
             bias / deviation,
             100.0 * share
         ));
