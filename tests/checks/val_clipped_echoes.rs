@@ -64,9 +64,7 @@ fn val_clipped_echoes() {
     };
     // The learned origin is the interpolated maximum of the envelope, a hair beside the middle.
     let own = f64::from(facts.origin) - 25.0;
-    figures.line(&format!(
-        "full scales   scatter ns   bound ns   stated ns   as it is ns   inside k = 2"
-    ));
+    figures.line("full scales   scatter ns   bound ns   stated ns   as it is ns   inside k = 2");
     for over in [1.5, 3.0, 5.0] {
         let amplitude = over * FULL_SCALE;
         // 40 dB below the echo.

@@ -19,7 +19,7 @@ const VELOCITY: f32 = 5920.0;
 #[test]
 fn val_wrong_cycle() {
     let mut figures = Figures::of("val_wrong_cycle");
-    figures.line(&format!("SNR   sign      readings   another cycle   stated"));
+    figures.line("SNR   sign      readings   another cycle   stated");
     let mut unknown_at_ten = 0;
     for snr in [8.0, 10.0, 12.0, 15.0] {
         let mut scene = Scene::contact(5.0, 60.0, "carbon steel", 10.0);

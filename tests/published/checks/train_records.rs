@@ -8,7 +8,7 @@ use halfpulse::echo::arrival::{Estimator, Search, estimate};
 use halfpulse::echo::correlation::Sign;
 use halfpulse::echo::noise::TimingNoise;
 use halfpulse::echo::pulse::{ReferencePulse, learn};
-use halfpulse::echo::train::{Hypothesis, Rules, Train, Undecided, choose, fit, holds_thinner};
+use halfpulse::echo::train::{Hypothesis, Rules, Train, Undecided, choose, fit, other_trains};
 use halfpulse::echo::{EchoList, Surroundings, echo_at};
 use halfpulse::path::PathLaw;
 use halfpulse::setup::PULSE_CAPACITY;
@@ -105,7 +105,7 @@ pub fn read_codes(codes: &[i16], seen: &[(f64, f64)], rules: &Rules<'_>) -> Outc
     let mut lags = [0.0; ECHO_CAPACITY * TRAIN_LAGS];
     let choice = choose(&surroundings, &found, rules);
     let train = choice.and_then(|choice| fit(&surroundings, &mut found, rules, &choice, &mut lags));
-    let thinner = train.is_ok_and(|train| holds_thinner(&surroundings, &found, rules, &train));
+    let thinner = train.is_ok_and(|train| other_trains(&surroundings, &found, rules, &train).0);
     Outcome {
         choice,
         train,
