@@ -4,6 +4,7 @@
 //! mutant of the core (`.cargo/mutants.toml`).
 
 mod law_gauge;
+mod separation_rules;
 mod sources;
 mod train_records;
 mod val_arrival;

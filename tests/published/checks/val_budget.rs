@@ -2,12 +2,12 @@
 
 use halfpulse::echo::pulse::PulseFacts;
 use halfpulse::path::Spreading;
-use halfpulse::wall::coupling::{STEEL_IMPEDANCE, transmission_delay};
+use halfpulse::wall::coupling::{STEEL_IMPEDANCE, half_width, transmission_delay};
 use halfpulse::wall::thickness::{Timed, TrainTimes};
 use halfpulse::wall::uncertainty::{
     Budget, Source, budget, coating_uncertainty, excess_uncertainty, reference_pulse, unknown_temperature_matters,
 };
-use halfpulse::wall::way::path_law;
+use halfpulse::wall::way::{beam_uncertainty, gain, path_law, v_path_uncertainty};
 use halfpulse::{
     CalibratedRange, Celsius, Coating, DriftState, ElementSeparation, GaugeSetup, Guard, Hertz, LimitState, Limits,
     Material, Metres, MetresPerSecond, Probe, Seconds, Span, VelocityTemperature, Window, Zero,
@@ -332,6 +332,37 @@ fn val_coating_by_derivatives() {
     assert!((found / expected - 1.0).abs() < 1e-4, "{found} {expected}");
     let coat = f64::from(coating_uncertainty(&painted, &times, wall).expect("a coating").get());
     assert!((coat / (1150.0 * 1e-9 * expected) - 1.0).abs() < 1e-4, "{coat}");
+    // Beam, film and V of the first back wall and of the period hang together: they add up before they are squared. Their
+    // sizes are checked elsewhere (`val_way`, `val_beam_and_film`).
+    let (pulse, train) = (Span::TransmissionPulseToBackWall, Span::BackWallToBackWall);
+    let of = |setup: &GaugeSetup, span: Span| {
+        let mut setup = *setup;
+        (setup.span, setup.coating) = (span, None);
+        setup
+    };
+    let mut spread = painted;
+    spread.probe = spread.probe.with_element_diameter(Metres::from_mm(6.0));
+    let both = beam_uncertainty(&of(&spread, pulse), wall) + beam_uncertainty(&of(&spread, train), wall);
+    let found = f64::from(excess_uncertainty(&spread, &times, wall).expect("a period").as_ns());
+    let with_beam = expected.hypot(f64::from(both.as_ns()));
+    assert!((found / with_beam - 1.0).abs() < 1e-4, "beam: {found} {with_beam}");
+    let mut wet = painted;
+    wet.probe.couplant_film = Metres::new(2e-6);
+    let both = half_width(&wet.probe, pulse) + half_width(&wet.probe, train);
+    let found = f64::from(excess_uncertainty(&wet, &times, wall).expect("a period").as_ns());
+    let with_film = expected.hypot(f64::from(both.as_ns()) / 3f64.sqrt());
+    assert!((found / with_film - 1.0).abs() < 1e-4, "film: {found} {with_film}");
+    let mut dual = painted;
+    dual.probe = Probe::dual_element(Hertz::from_mhz(5.0), 0.6)
+        .with_couplant_film(Metres::ZERO)
+        .with_separation(ElementSeparation::new(Metres::from_mm(6.0), Metres::from_mm(0.2)));
+    let both = v_path_uncertainty(&of(&dual, pulse), wall) + v_path_uncertainty(&of(&dual, train), wall);
+    let found = f64::from(excess_uncertainty(&dual, &times, wall).expect("a period").as_ns());
+    // The zero counts 1 / cos θ as much.
+    let slanted = f64::from(gain(&of(&dual, pulse), wall));
+    let timing = (expected * expected - u_zero * u_zero).sqrt();
+    let with_v = timing.hypot(u_zero * slanted).hypot(f64::from(both.get()) * 2e9 / C);
+    assert!((found / with_v - 1.0).abs() < 1e-4, "V: {found} {with_v}");
     let mut bare = painted;
     bare.coating = None;
     assert_eq!(coating_uncertainty(&bare, &times, wall), None);

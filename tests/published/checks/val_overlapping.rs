@@ -29,7 +29,7 @@ fn noise_of(snr_db: f64) -> f32 {
 }
 
 /// What a record says to somebody who knows this pulse of ten samples a cycle.
-fn with_record<T>(samples: &[f64], template: &[f32], noise: f32, ask: impl FnOnce(&Surroundings<'_>) -> T) -> T {
+pub fn with_record<T>(samples: &[f64], template: &[f32], noise: f32, ask: impl FnOnce(&Surroundings<'_>) -> T) -> T {
     sampled(10.0, samples, template, noise, ask)
 }
 
@@ -435,7 +435,7 @@ fn one_echo_is_not_split() {
     }
 }
 
-fn gaussian(t: f64, frequency: f64, bandwidth: f64, phase: f64) -> f64 {
+pub fn gaussian(t: f64, frequency: f64, bandwidth: f64, phase: f64) -> f64 {
     let sigma = oracle::gaussian_sigma(frequency, bandwidth);
     (-0.5 * (t / sigma).powi(2)).exp() * (TAU * frequency * t + phase).cos()
 }
