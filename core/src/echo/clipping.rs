@@ -21,8 +21,13 @@ use crate::units::SamplePosition;
 
 /// Share of the pulse's delay information below which a cut echo is not believed.
 pub const LEAST_INFORMATION: f32 = 0.03;
-/// Steps of the fit; it converges in three or four.
-const STEPS: usize = 8;
+/// Most steps of the fit; it converges in three or four.
+const STEPS: usize = 6;
+/// Steps below this many samples are the last: what follows them is smaller by far.
+const SMALL: f32 = 1e-3;
+
+/// By how much each step has to be smaller than the one before.
+const LESS: f32 = 0.7;
 
 /// A cut echo, fitted to its whole samples.
 #[derive(Clone, Copy, Debug, PartialEq)]
@@ -106,6 +111,7 @@ pub fn mend(
     let under = codes.get(start.index as usize..)?;
     let mut place = start.fraction;
     let mut result = None;
+    let mut last = f32::INFINITY;
     for _ in 0..STEPS {
         let normal = sums(under, format, pulse, place);
         let (amplitude, constant, found, left) = normal.solve()?;
@@ -119,10 +125,13 @@ pub fn mend(
             normal.ss,
         ));
         let step = math::clamp(step, -0.1 * samples_per_cycle, 0.1 * samples_per_cycle);
-        if !(step.abs() > 1e-4) {
+        place += step;
+        // Steps that do not become small are those of a shape that is not the pulse's: no number of them ends.
+        let leaves = (place - start.fraction).abs() > 0.5 * samples_per_cycle;
+        if !(step.abs() > SMALL && step.abs() < LESS * last) || leaves {
             break;
         }
-        place += step;
+        last = step.abs();
     }
     let (amplitude, left, unexplained, energy) = result?;
     let information = math::clamp(left / pulse.facts.derivative_energy, 0.0, 1.0);
@@ -145,19 +154,21 @@ pub fn mend(
 
 /// The sums over the whole samples, with the pulse's first sample at `place` after the first of `under`.
 fn sums(under: &[i16], format: &AdcFormat, pulse: &ReferencePulse<'_>, place: f32) -> Normal {
-    let at = interpolate::Between::new(-place);
-    let (earlier, later) = (
-        interpolate::Between::new(-place - 0.25),
-        interpolate::Between::new(-place + 0.25),
-    );
+    let between = interpolate::Between::new(-place);
+    let at = |number: i32| between.of(pulse.samples, number);
     let mut normal = Normal::default();
-    for (number, &code) in under.iter().enumerate().take(pulse.samples.len()) {
+    // The pulse from three samples before the one that is looked at to three behind it.
+    let mut near = [0.0, at(-3), at(-2), at(-1), at(0), at(1), at(2)];
+    for (number, &code) in (3..).zip(under).take(pulse.samples.len()) {
+        let [_, b, c, d, e, f, g] = near;
+        near = [b, c, d, e, f, g, at(number)];
         if is_cut(code, format) {
             continue;
         }
-        let s = at.of(pulse.samples, number);
-        let d = 2.0 * (later.of(pulse.samples, number) - earlier.of(pulse.samples, number));
-        normal.add(s, d, f32::from(code));
+        let [first, second, third, s, fifth, sixth, seventh] = near;
+        // Its slope by central differences of sixth order: 0.1 % low at a sixth of the sample rate.
+        let slope = 0.75 * (fifth - third) - 0.15 * (sixth - second) + (1.0 / 60.0) * (seventh - first);
+        normal.add(s, slope, f32::from(code));
     }
     normal
 }
@@ -176,13 +187,13 @@ pub fn fill_in(
     let start = SamplePosition::new(echo.index, echo.fraction - pulse.facts.origin);
     let between = interpolate::Between::new(-start.fraction);
     let under = codes.get(start.index as usize..).unwrap_or(&[]);
-    for (number, &code) in under.iter().enumerate().take(pulse.samples.len() + 1) {
+    for (number, &code) in (0..).zip(under).take(pulse.samples.len() + 1) {
         if !is_cut(code, format) {
             continue;
         }
         let lacking = amplitude * between.of(pulse.samples, number) - f32::from(code);
         // The sample's place in the pulse, for the first lag.
-        let place = i64::from(start.index) + number as i64 - i64::from(first);
+        let place = i64::from(start.index) + i64::from(number) - i64::from(first);
         for (k, lag) in lags.iter_mut().enumerate() {
             let sample = usize::try_from(place - k as i64)
                 .ok()

@@ -139,22 +139,46 @@ impl Between {
 
     /// The value of `samples` at `number` plus the shift. Samples beyond the ends count as zero.
     #[must_use]
-    pub fn of(&self, samples: &[f32], number: usize) -> f32 {
-        let first = number as i64 + i64::from(self.shift);
+    pub fn of(&self, samples: &[f32], number: i32) -> f32 {
+        let first = number.saturating_add(self.shift);
         let (skip, start) = if first < 0 {
             (first.unsigned_abs() as usize, 0)
         } else {
-            (0, first as usize)
+            (0, first.unsigned_abs() as usize)
         };
         let (Some(weights), Some(taps)) = (self.weights.get(skip..), samples.get(start..)) else {
             return 0.0;
         };
+        if let (Some(weights), Some(taps)) = (weights.first_chunk(), taps.first_chunk()) {
+            return dot(weights, taps);
+        }
         let mut sum = 0.0;
         for (weight, tap) in weights.iter().zip(taps) {
             sum += weight * tap;
         }
         sum
     }
+}
+
+/// Sum of products in the order of a plain loop.
+#[inline(always)]
+fn dot(weights: &[f32; 2 * REACH], taps: &[f32; 2 * REACH]) -> f32 {
+    let mut sum = 0.0;
+    let (weights, taps) = (weights.as_chunks::<10>().0, taps.as_chunks::<10>().0);
+    for (w, x) in weights.iter().zip(taps) {
+        let ([a, b, c, d, e, f, g, h, i, j], [k, l, m, n, o, p, q, r, s, t]) = (w, x);
+        sum += a * k;
+        sum += b * l;
+        sum += c * m;
+        sum += d * n;
+        sum += e * o;
+        sum += f * p;
+        sum += g * q;
+        sum += h * r;
+        sum += i * s;
+        sum += j * t;
+    }
+    sum
 }
 
 #[cfg(test)]
@@ -204,7 +228,7 @@ mod tests {
             for number in [0, 1, 5, 30, 60, 63] {
                 let expected = at(&samples, number as f32 + shift);
                 assert!(
-                    (between.of(&samples, number) - expected).abs() < 1e-4,
+                    (between.of(&samples, number as i32) - expected).abs() < 1e-4,
                     "{number} {shift}"
                 );
             }

@@ -165,14 +165,27 @@ impl embedded_io::Write for Serial {
 #[derive(Debug)]
 pub struct SampleBlock(());
 
-impl SampleMemory for SampleBlock {
-    fn copy(&mut self, codes: &mut [i16]) {
+impl SampleBlock {
+    /// All that lies there; to be called once.
+    #[must_use]
+    pub fn start() -> Self {
+        Self(())
+    }
+
+    /// Copies what lies from the sample number `first` on; beyond the memory nothing is copied.
+    pub fn copy_from(&mut self, first: usize, codes: &mut [i16]) {
         fence(Ordering::SeqCst);
-        for (place, code) in codes.iter_mut().enumerate().take(MOST_SAMPLES) {
+        for (place, code) in (first..MOST_SAMPLES).zip(codes) {
             // SAFETY: inside the PSRAM, which only the front end writes to; volatile, because the
             // compiler does not know of it. Halves of two shots are found out by the check sum.
             *code = unsafe { SAMPLES.wrapping_add(place).read_volatile() };
         }
+    }
+}
+
+impl SampleMemory for SampleBlock {
+    fn copy(&mut self, codes: &mut [i16]) {
+        self.copy_from(0, codes);
     }
 }
 

@@ -80,7 +80,7 @@ pub(crate) const CONTACT: GaugeSetup = GaugeSetup::new(
     },
 );
 
-const PAINTED: GaugeSetup = CONTACT.with_coating(Coating {
+pub(crate) const PAINTED: GaugeSetup = CONTACT.with_coating(Coating {
     velocity: MetresPerSecond::new(2300.0),
 });
 

@@ -7,6 +7,7 @@
 pub mod canned;
 pub mod plan;
 pub mod printout;
+pub mod search;
 #[cfg(target_os = "none")]
 #[allow(unsafe_code)]
 pub mod board;

@@ -13,7 +13,7 @@ use crate::math;
 use crate::order;
 use heapless::Vec;
 
-/// Grid points a cycle. The grid only finds basins, half a cycle wide: what is decided on is interpolated to
+/// Least number of grid points a cycle. The grid only finds basins, half a cycle wide: what is decided on is interpolated to
 /// 3e-5 of the correlation, and polished.
 pub const GRID: f32 = 20.0;
 /// Most starts that are polished.

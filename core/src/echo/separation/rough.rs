@@ -61,7 +61,8 @@ impl Decision<'_> {
         }
         mean /= window.len().max(1) as f32;
         let model = Model::new(codes.unwrap_or(&[]), mean, pulse, *samples_per_cycle, self.noise);
-        let unit = 1.0 / math::sqrt(pulse.facts.energy);
+        let raised = model.amplitude_of_samples();
+        let unit = 1.0 / (math::sqrt(pulse.facts.energy) * raised);
         let shifted = |place: f32| model.point_of(self.samples(place) + self.lags.start.min(0) as f32);
 
         let single = Fit {
@@ -119,8 +120,8 @@ impl Decision<'_> {
                 first: SamplePosition::new(base.unsigned_abs(), model.sample_of(fit.first)),
                 spacing,
                 spacing_uncertainty: stride * math::sqrt(fit.spacing_variance * self.inflation(mismatch)),
-                first_amplitude: fit.first_amplitude,
-                second_amplitude: fit.second_amplitude,
+                first_amplitude: fit.first_amplitude * raised,
+                second_amplitude: fit.second_amplitude * raised,
             })
         });
         Answer {

@@ -7,7 +7,6 @@
 //! one echo too. Gauss-Newton with Marquardt's damping (1963, from memory) on the samples themselves.
 
 use super::equations::solve;
-use super::lags::step;
 use crate::echo::pulse::ReferencePulse;
 use crate::math;
 
@@ -27,8 +26,11 @@ const SUPPORT: f32 = 3.1;
 /// delay of the second.
 const COUNT: usize = 8;
 
-/// What the fit knows from the start. It counts in points: means of as many neighbouring samples as leave 8 to 16 points a
-/// cycle, so that its work does not grow with the sample rate.
+/// Points a cycle: enough for a band up to two and a half times the centre frequency, and no more, for every point costs.
+const POINTS_PER_CYCLE: f32 = 5.0;
+
+/// What the fit knows from the start. It counts in points: means of as many neighbouring samples as leave 5 to 10 points a
+/// cycle, so that its work does not grow with the sample rate. What the means do to the pulse is in its figures.
 #[derive(Clone, Copy, Debug)]
 pub struct Model<'a> {
     codes: &'a [i16],
@@ -42,6 +44,8 @@ pub struct Model<'a> {
     sigma: f32,
     /// Root mean square of a point's noise, in codes.
     noise: f32,
+    /// Amplitude of the points' pulse over that of the samples'.
+    lowered: f32,
 }
 
 /// Where a fit stands or starts.
@@ -97,16 +101,32 @@ impl<'a> Model<'a> {
     /// Takes the figures of the modelled pulse; `noise` is that of a sample.
     #[must_use]
     pub fn new(codes: &'a [i16], mean: f32, pulse: &ReferencePulse<'_>, samples_per_cycle: f32, noise: f32) -> Self {
-        let stride = step(samples_per_cycle);
+        let stride = usize::try_from(math::saturating_i32(samples_per_cycle / POINTS_PER_CYCLE))
+            .unwrap_or(1)
+            .max(1);
         let samples = stride as f32;
+        // A mean of n samples smooths about as a Gaussian of the variance (n² - 1) / 12 does, which leaves a Gaussian
+        // pulse one: longer, at a lower frequency, lower.
+        let variance = (samples * samples - 1.0) / 12.0;
+        let sigma = pulse.facts.envelope_duration / DURATION_OVER_SIGMA;
+        let longer = math::sqrt(1.0 + variance / (sigma * sigma));
+        let turn = core::f32::consts::TAU / samples_per_cycle;
+        let slower = 1.0 / (longer * longer);
         Self {
             codes,
             stride,
             mean,
-            turn: core::f32::consts::TAU * samples / samples_per_cycle,
-            sigma: pulse.facts.envelope_duration / (DURATION_OVER_SIGMA * samples),
+            turn: turn * slower * samples,
+            sigma: sigma * longer / samples,
             noise: noise / math::sqrt(samples),
+            lowered: math::exp(-0.5 * variance * turn * turn * slower) / longer,
         }
+    }
+
+    /// What a fit's amplitudes are times this, samples' amplitudes are.
+    #[must_use]
+    pub fn amplitude_of_samples(&self) -> f32 {
+        1.0 / self.lowered
     }
 
     /// The point at a sample of the codes.

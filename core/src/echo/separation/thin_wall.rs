@@ -12,7 +12,6 @@ use super::Unresolved;
 use super::equations::solve;
 use super::lags::Lags;
 use super::model::LEFT_OVER;
-use super::pair::GRID;
 use crate::echo::Surroundings;
 use crate::echo::correlation::energy;
 use crate::echo::interpolate::REACH;
@@ -28,6 +27,8 @@ const PULSES: usize = MULTIPLES + 1;
 const COUNT: usize = 5;
 /// Shortest and longest period that is looked for, in pulse durations.
 const PERIODS: (f32, f32) = (0.2, 1.3);
+/// Grid points a cycle.
+const GRID: f32 = 20.0;
 /// Decays of the grid.
 const DECAYS: [f32; 4] = [0.25, 0.5, 0.75, 0.9];
 /// Multiples below this share of the first are left out.

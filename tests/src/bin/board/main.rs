@@ -22,6 +22,7 @@ mod image;
 mod panics;
 mod records;
 mod toolchain;
+mod worst;
 
 use std::process::ExitCode;
 use toolchain::{CORTEX_M0_PLUS, CORTEX_M4F, Features, Toolchain};
@@ -39,6 +40,8 @@ usage: cargo board VERB
   panics          no panic can be reached in the image, and the check that says so can fail
   figures         instructions, flash, static RAM and stack, beside the budgets of tests/board_budget.toml
   records         make the canned records again from their scenes (firmware-example/mps2/records)
+  worst [--write] search for the record that is costliest to read (some minutes), held against the budget; with --write its
+                  scene becomes the canned record `costliest`
   tools           what is there and what is missing
 
 Every verb builds what it needs. Exit status 0: all is well; 1: something failed; 3: a tool is missing.
@@ -114,6 +117,8 @@ fn main() -> ExitCode {
         // The emulator's serial port is a Unix socket.
         #[cfg(unix)]
         ["device"] => device::run(&mut checks),
+        ["worst"] => worst::run(&mut checks, false),
+        ["worst", "--write"] => worst::run(&mut checks, true),
         ["panics"] => panics::run(&mut checks),
         ["figures"] => figures::run(&mut checks),
         ["records"] => return told(records::write()),
