@@ -228,7 +228,7 @@ mod tests {
             for number in [0, 1, 5, 30, 60, 63] {
                 let expected = at(&samples, number as f32 + shift);
                 assert!(
-                    (between.of(&samples, number as i32) - expected).abs() < 1e-4,
+                    (between.of(&samples, number) - expected).abs() < 1e-4,
                     "{number} {shift}"
                 );
             }
