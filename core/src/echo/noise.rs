@@ -166,13 +166,15 @@ pub fn reached(
     skirt: &[u16; PULSE_CAPACITY],
 ) -> Vec<Reached, REACHED_CAPACITY> {
     let beyond = u32::from(pulse.facts.length) / 4;
-    candidates
-        .map(|candidate| {
-            let reach = detector.skirt_reach(skirt, candidate.height, 0.3 * scan.level);
-            (candidate.index, reach + beyond)
-        })
-        .take(REACHED_CAPACITY)
-        .collect()
+    // No `collect`: whether its panic for a full list can be reached is left to the optimiser.
+    let mut all = Vec::new();
+    for candidate in candidates {
+        let reach = detector.skirt_reach(skirt, candidate.height, 0.3 * scan.level);
+        if all.push((candidate.index, reach + beyond)).is_err() {
+            break;
+        }
+    }
+    all
 }
 
 /// The record's timing noise beside the echoes. A steady one is never less than the noise per sample that the scan has

@@ -133,7 +133,10 @@ impl Gauge<'_> {
         let (scan, mut noise) = self.scan(record, range);
         self.measure_echoes(record, range, &scan, &mut noise);
         self.take_front(&front, pair, noise.per_sample / quiet_noise);
-        let taken: Front = self.findings.echoes.iter().take(front.len()).copied().collect();
+        let mut taken = Front::new();
+        for echo in self.findings.echoes.iter().take(front.len()) {
+            let _ = taken.push(*echo);
+        }
         let train = self.find_train(record, range, &scan, &mut noise);
         // The loud record tells nothing of the quiet one's echoes.
         let before = |echo: &&mut Echo| matches!(echo.role, EchoRole::Interface | EchoRole::Coating);
