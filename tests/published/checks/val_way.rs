@@ -249,6 +249,65 @@ fn val_beam_uncertainty_by_derivatives() {
     }
 }
 
+/// What the start of the wall holds: behind a delay line the interface echo's own spreading, unless a zero is added whose block
+/// nobody knows; then nothing is corrected, and all of it is a rectangle.
+///
+/// Source: Rogers and Van Buren 1974 (from memory), `oracle::piston_advance`; JCGM 100:2008, 4.3.7.
+#[test]
+fn val_what_a_start_holds() {
+    let line = DelayLine {
+        length: mm(8.0),
+        velocity: MetresPerSecond::new(2350.0),
+    };
+    let probe = Probe::delay_line(FIVE, 0.6)
+        .with_element_diameter(mm(6.0))
+        .with_element_diameter_uncertainty(0.1)
+        .with_delay_line(line);
+    let at = |way: f64, diameter: f64| {
+        let start = 4.0 * 16.0 * (2350.0 / 5e3) / (diameter * diameter);
+        advance(start, way, diameter)
+    };
+    let behind = setup(probe, Span::InterfaceToBackWall);
+    let mut with_zero = behind;
+    with_zero.zero.offset = Seconds::from_ns(20.0);
+    let mut of_a_block = with_zero;
+    of_a_block.zero = of_a_block.zero.with_learned_on(mm(9.0));
+    let spreading = Spreading::new(0.6);
+    for d in [4.0, 15.0] {
+        let shift = |diameter: f64| (at(2.0 * d, diameter) - at(0.0, diameter)).abs();
+        let corrected = (0.5 * (shift(6.6) - shift(5.4))).hypot(0.05 * shift(6.0) / 3f64.sqrt());
+        assert!(near(beam_uncertainty(&behind, mm(d)), corrected), "{d} mm: {corrected}");
+        assert!(
+            near(beam_uncertainty(&with_zero, mm(d)), shift(6.0) / 3f64.sqrt()),
+            "{d} mm"
+        );
+        assert!(near(beam_uncertainty(&of_a_block, mm(d)), corrected), "{d} mm");
+        // What is taken off: the difference to what is held, as far as a pulse's mean over its band follows the phase.
+        let found = f64::from(path_deviation(&behind, &spreading, mm(d)).as_ns());
+        let expected = at(0.0, 6.0) - at(2.0 * d, 6.0);
+        assert!((0.7..1.35).contains(&(found / expected)), "{d} mm: {found} {expected}");
+        assert_eq!(path_deviation(&with_zero, &spreading, mm(d)), Seconds::ZERO);
+        let found = f64::from(path_deviation(&of_a_block, &spreading, mm(d)).as_ns());
+        let expected = at(18.0, 6.0) - at(2.0 * d, 6.0);
+        assert!((0.7..1.35).contains(&(found / expected)), "{d} mm: {found} {expected}");
+    }
+    // The zero may have been learned on the blocks: the longer way of wall and what is left to the thickest block.
+    let calibrated = behind.with_calibrated_range(blocks(5.0, 25.0));
+    for (d, way) in [(4.0, 42.0), (10.0, 30.0), (15.0, 30.0), (40.0, 80.0)] {
+        assert!(
+            near(beam_shift(&calibrated, mm(d)), (at(way, 6.0) - at(0.0, 6.0)).abs()),
+            "{d} mm"
+        );
+    }
+    // Between back walls a zero does not count.
+    let mut train = with_zero;
+    train.span = Span::BackWallToBackWall;
+    assert_eq!(
+        path_law(&train, &spreading),
+        path_law(&setup(probe, Span::BackWallToBackWall), &spreading)
+    );
+}
+
 /// How much later than straight a wall's first echo comes along a V, as calibration takes it off a block's time.
 ///
 /// Source: Pythagoras, 2 (sqrt(d² + p²) - d) / c.
