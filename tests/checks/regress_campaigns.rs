@@ -5,7 +5,7 @@
 //! `HALFPULSE_TIMES=10` each cell has ten times as many runs, and nothing is compared or written.
 //! tests/campaigns/README.md tells more.
 
-use halfpulse_sim::campaign::summary::{Tally, percent};
+use halfpulse_sim::campaign::summary::{Sides, Tally, percent};
 use halfpulse_sim::campaign::{Campaign, Shard, Summary, runner};
 use halfpulse_sim::export;
 use halfpulse_tests::page::Figures;
@@ -128,6 +128,25 @@ impl Sum {
     }
 }
 
+/// One campaign: how often the readings without a doubt hold what they state (too thick + too thin where not), how far off the worst is;
+/// how many of all readings were grossly wrong, how many doubted, how many refused.
+fn coverage_line(summary: &Summary) -> String {
+    let all = &summary.all;
+    let name = summary.title.split(':').next().unwrap_or_default();
+    let sides = |sides: Sides| format!("{}+{}", sides.over, sides.under);
+    format!(
+        "{name:<56}{:>6}  {:<22}{:>10}{:>10}  {:<20}{:<20}{:<20}{:.2}",
+        all.runs,
+        percent(all.inside, all.inside + all.outside.both()),
+        sides(all.outside),
+        sides(all.beyond_twice),
+        percent(all.all_gross(), all.runs),
+        percent(all.doubted, all.runs),
+        percent(all.all_refused(), all.runs),
+        all.worst
+    )
+}
+
 /// Compares a table with the committed one, or writes it; whether it is another one.
 fn differs(snapshot: &Path, table: &str, write: bool) -> bool {
     if write {
@@ -148,7 +167,7 @@ fn regress_campaigns() {
     });
     let files = campaigns();
     assert!(!files.is_empty(), "no campaign in tests/campaigns");
-    let (mut changed, mut sum) = (Vec::new(), Sum::default());
+    let (mut changed, mut sum, mut coverage) = (Vec::new(), Sum::default(), Vec::new());
     let mut compare = |snapshot: PathBuf, table: &str| {
         if times == 1 && differs(&snapshot, table, write) {
             changed.push(snapshot.display().to_string());
@@ -173,6 +192,9 @@ fn regress_campaigns() {
         compare(path.with_extension("txt"), &table);
         let stem = path.file_stem().and_then(|stem| stem.to_str()).unwrap_or_default();
         sum.add(stem, &summary);
+        if stem != "no_echo" && stem != "no_echo_bursts" {
+            coverage.push(coverage_line(&summary));
+        }
     }
     let table = sum.table();
     compare(folder().join(SUM), &table);
@@ -184,6 +206,13 @@ fn regress_campaigns() {
     if times == 1 {
         let mut figures = Figures::of("regress_campaigns");
         table.lines().for_each(|line| figures.line(line));
+        figures.check();
+        let mut figures = Figures::of("regress_campaigns_coverage");
+        figures.line(&format!(
+            "{:<56}{:>6}  {:<22}{:>10}{:>10}  {:<20}{:<20}{:<20}{}",
+            "", "runs", "inside U %", "> U", "> 2 U", "gross %", "doubted %", "refused %", "worst over U"
+        ));
+        coverage.iter().for_each(|line| figures.line(line));
         figures.check();
         let walls = &sum.walls;
         assert!(walls.runs >= 6000, "one in 2000 needs at least 6000 walls");
