@@ -89,7 +89,7 @@ pub mod gauge;
 pub use echo::shots::{Jitter, ShotArrivals};
 pub use echo::{Echo, EchoList, EchoRole, Polarity};
 pub use gauge::two_gains::{TwoGains, TwoGainsError};
-pub use gauge::{CoatingReading, Findings, Gauge, Reading};
+pub use gauge::{CoatingReading, CoatingThickness, Findings, Gauge, Reading};
 pub use outcome::{Doubt, Doubts, NoReading};
 pub use record::average::{AverageError, Averager, Interleaver};
 pub use record::movement::{Movement, movement};
@@ -97,7 +97,7 @@ pub use record::rounds::TwoRounds;
 pub use record::{AdcFormat, Record, SampleClock};
 pub use setup::{
     CalibratedRange, Coating, DelayLine, EchoSign, ElementSeparation, GaugeSetup, Material, PartTemperature, Probe,
-    ProbeFace, ProbeKind, SetupError, Span, VelocityTemperature, Window, Zero,
+    ProbeFace, ProbeKind, SetupError, Span, Surface, VelocityTemperature, Window, Zero,
 };
 pub use units::{Celsius, Decibels, Hertz, Metres, MetresPerSecond, SamplePosition, Seconds};
 pub use wall::calibration::{Block, CalibrationError, DriftCheck, DriftState};

@@ -259,6 +259,8 @@ doubts! {
     UnexplainedEchoes = 13, "unexplained-echoes", "look at the A-scan: grain, a lamination or interference?";
     /// An echo came back before the back wall: something under the probe may be thinner than the reading.
     EarlierEcho = 15, "earlier-echo", "look at the A-scan: a pit, a step or a lamination above the back wall?";
+    /// The part is more curved than a flat probe takes, and that could have moved the reading.
+    CurvedSurface = 16, "curved-surface", "take a smaller probe, or one made to fit, and calibrate on a block of the same curvature";
     /// The part's temperature is not stated, and most of the uncertainty is a guess of it.
     TemperatureUnknown = 14, "temperature-unknown", "measure the part's temperature and state it in the set-up";
 }

@@ -179,6 +179,7 @@ fn setup() -> GaugeSetup {
         calibrated: None,
         trigger_jitter: Seconds::ZERO,
         roughness: Metres::ZERO,
+        surface: halfpulse::Surface::Flat,
     }
 }
 
@@ -233,7 +234,7 @@ impl Inspected {
 
     fn paint_verdict(&self) -> Option<Verdict> {
         let reading = self.outcome.as_ref().ok()?;
-        let paint = reading.coating?;
+        let paint = reading.coating?.thickness?;
         let error = f64::from(paint.thickness.as_mm()) - self.point.paint_mm;
         let expanded = paint.standard_uncertainty * reading.coverage_factor;
         Some(judge(error, expanded, PAINT_VELOCITY))
@@ -261,9 +262,8 @@ fn inspect() -> Result<Vec<Inspected>, InputError> {
     let mut scratch = HeapScratch::new(SAMPLES);
     let mut gauge = Gauge::new(setup(), scratch.workspace()).map_err(fault)?;
     learn(&mut gauge)?;
-    let coating = Coating {
-        velocity: MetresPerSecond::new(PAINT_VELOCITY as f32),
-    };
+    // The simulated paint has this very velocity.
+    let coating = Coating::new(MetresPerSecond::new(PAINT_VELOCITY as f32), MetresPerSecond::ZERO);
     gauge.change_setup(setup().with_coating(coating)).map_err(fault)?;
     POINTS
         .iter()
@@ -323,7 +323,8 @@ fn table(points: &[Inspected]) -> Table {
                 row.push(stated(reading.thickness, reading.expanded()));
                 row.push(format!("{:+.3}", inspected.error_mm().unwrap_or(f64::NAN)));
                 row.push(paint(point));
-                row.push(reading.coating.map_or_else(String::new, |coating| {
+                let coating = reading.coating.and_then(|coating| coating.thickness);
+                row.push(coating.map_or_else(String::new, |coating| {
                     stated(
                         coating.thickness,
                         coating.standard_uncertainty * reading.coverage_factor,

@@ -7,11 +7,12 @@ mod socket;
 
 use crate::faults::Behaviour;
 use embedded_io::{ErrorType, Read, ReadReady, Write};
+use halfpulse::echo::pulse::PulseQuality;
 use halfpulse::record::receiver::{Fired, PulseReceiver, Shot};
 use halfpulse::{Decibels, Seconds};
 use halfpulse_app::link::{
-    Counts, Done, Fire, FrontEndFault, Hello, LinkError, LinkReport, Message, NotFired, PROTOCOL, Port, Status, Take,
-    crc_of_codes,
+    Counts, Done, Fire, FrontEndFault, Hello, LinkError, LinkReport, Message, NotFired, PART_SAMPLES, PROTOCOL,
+    PULSE_INCOMPLETE, Port, PulsePart, Status, Take, TakePulse, crc_of_codes, crc_of_samples,
 };
 use std::cell::RefCell;
 use std::collections::VecDeque;
@@ -114,6 +115,8 @@ pub enum ConversationError {
     OtherProtocol(u8),
     /// The gauge refused the set-up; the number is [`Message::SetUpTaken`]'s.
     SetUpRefused(u8),
+    /// The gauge refused the pulse; the number is [`Message::PulseTaken`]'s.
+    PulseRefused(u8),
 }
 
 impl fmt::Display for ConversationError {
@@ -133,6 +136,15 @@ impl fmt::Display for ConversationError {
                 f.write_str("the gauge refuses a value of the set-up; check it with halfpulse read")
             }
             Self::SetUpRefused(3) => f.write_str("the probe's pulse is too long for the gauge; lower the sample rate"),
+            Self::PulseRefused(2) => {
+                f.write_str("the gauge refuses what is stated of the pulse; check it with halfpulse read")
+            }
+            Self::PulseRefused(PULSE_INCOMPLETE) => {
+                f.write_str("the gauge did not get the whole pulse; check the line and send it again")
+            }
+            Self::PulseRefused(_) => {
+                f.write_str("the gauge cannot hold this pulse, or finds no echo in it; learn it again on a block")
+            }
             Self::SetUpRefused(_) => {
                 f.write_str("the gauge has too little memory for this set-up; lower the sample rate")
             }
@@ -355,6 +367,51 @@ where
             Ok(())
         } else {
             Err(ConversationError::SetUpRefused(answer))
+        }
+    }
+
+    /// Puts a learned pulse in force, part by part; without samples the data sheet's.
+    ///
+    /// # Errors
+    /// The gauge refuses it, or does not answer.
+    pub fn teach_pulse(
+        &mut self,
+        samples: &[f32],
+        quality: PulseQuality,
+        patience: Duration,
+    ) -> Result<(), ConversationError> {
+        let number = |count: usize| u16::try_from(count).map_err(|_| ConversationError::PulseRefused(3));
+        let mut sent = 0;
+        for part in samples.chunks(PART_SAMPLES) {
+            self.port.send(&Message::PulsePart(PulsePart {
+                first: number(sent)?,
+                samples: part.iter().copied().collect(),
+            }))?;
+            sent += part.len();
+            let held = self.await_answer(patience, |message| match message {
+                Message::PulseHeld(held) => Some(held),
+                _ => None,
+            })?;
+            if usize::from(held) != sent {
+                // Too long for the gauge, or somebody else's part came between.
+                return Err(ConversationError::PulseRefused(3));
+            }
+        }
+        self.port.send(&Message::TakePulse(TakePulse {
+            samples: number(samples.len())?,
+            noise: quality.noise,
+            mismatch: quality.mismatch,
+            learned_on: quality.learned_on.map(halfpulse::Metres::get),
+            crc: crc_of_samples(samples),
+        }))?;
+        let answer = self.await_answer(patience, |message| match message {
+            Message::PulseTaken(answer) => Some(answer),
+            _ => None,
+        })?;
+        if answer == 0 {
+            Ok(())
+        } else {
+            Err(ConversationError::PulseRefused(answer))
         }
     }
 

@@ -6,7 +6,9 @@ use crate::setup_file::SetupFile;
 use halfpulse::record::average::{AverageError, Averager, MOST_SHOTS};
 use halfpulse::setup::PULSE_CAPACITY;
 use halfpulse::workspace::{CORRELATION_CAPACITY, ECHO_CAPACITY, TRAIN_LAGS};
-use halfpulse::{AdcFormat, Findings, Gauge, NoReading, Reading, Record, SampleClock, Seconds, Span, Workspace};
+use halfpulse::{
+    AdcFormat, Findings, Gauge, Metres, NoReading, Reading, Record, SampleClock, Seconds, Span, Workspace,
+};
 use std::path::Path;
 
 /// Scratch memory on the heap, for records whose length is known only when they are read.
@@ -91,6 +93,8 @@ pub struct Measured {
     pub findings: Findings,
     /// Codes from zero to full scale.
     pub full_scale: f32,
+    /// The smallest and the largest wall that set-up and record can read, if there is a set-up.
+    pub wall_limits: Option<(Metres, Metres)>,
 }
 
 /// How far, in samples, the set-up's time of the first sample may lie from the file's: the rounding of times
@@ -213,6 +217,7 @@ pub fn measure(gauge: &mut Gauge<'_>, name: &str, shot: &Shot, clock: SampleCloc
         outcome,
         findings: gauge.findings().clone(),
         full_scale: shot.format.full_scale(),
+        wall_limits: Some(gauge.wall_limits_of(&record)),
     }
 }
 

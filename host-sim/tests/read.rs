@@ -5,7 +5,7 @@ mod support;
 use serde_json::Value;
 use support::{Bench, Train, setup};
 
-const KEYS: [&str; 18] = [
+const KEYS: [&str; 22] = [
     "file",
     "shot",
     "span",
@@ -15,12 +15,16 @@ const KEYS: [&str; 18] = [
     "coverage_factor",
     "coating_mm",
     "coating_standard_uncertainty_mm",
+    "coating_round_trip_ns",
+    "coating_round_trip_standard_uncertainty_ns",
     "wrong_cycle_probability",
     "doubts",
     "no_reading",
     "echoes",
     "pulse",
     "separation",
+    "smallest_wall_mm",
+    "largest_wall_mm",
     "budget",
     "dominating_term",
     "limits",
@@ -379,4 +383,113 @@ fn an_echo_that_is_two_is_told_when_asked() {
         text.contains("resolved-by-model; more than a million to one for two"),
         "{text}"
     );
+}
+
+/// 0.4 µs of coating above 10 mm of steel: the first back wall comes that much later than the period says.
+#[test]
+fn a_coating_is_read_with_and_without_its_velocity() {
+    let bench = Bench::new();
+    let train = Train {
+        zero_us: 0.4,
+        ..Train::CLEAN
+    };
+    bench.write_shots("a.npy", &[train.shot(3)]);
+    let plain = setup("back-wall-to-back-wall", 0.0, 1.0);
+    for (table, thickness, uncertainty) in [
+        (
+            "[coating]\nvelocity_m_s = 2500\nvelocity_standard_uncertainty_m_s = 50\n",
+            Some(0.5),
+            0.01,
+        ),
+        // Not stated: 5 %.
+        ("[coating]\nvelocity_m_s = 2500\n", Some(0.5), 0.025),
+        ("[coating]\n", None, 0.0),
+    ] {
+        bench.write("coated.toml", format!("{plain}{table}"));
+        let run = bench.run(&["read", "a.npy", "--setup", "coated.toml", "--format", "json"]);
+        let record = &run.json()[0];
+        assert!(
+            (record["thickness_mm"].as_f64().unwrap() - 10.0).abs() < 0.005,
+            "{record}"
+        );
+        let trip = record["coating_round_trip_ns"].as_f64().unwrap();
+        let u = record["coating_round_trip_standard_uncertainty_ns"].as_f64().unwrap();
+        assert!((trip - 400.0).abs() < 4.0 * u && u < 5.0, "{record}");
+        assert_eq!(record["coating_mm"].as_f64().is_some(), thickness.is_some(), "{record}");
+        let text = bench.run(&["read", "a.npy", "--setup", "coated.toml"]).out;
+        if let Some(thickness) = thickness {
+            assert!(
+                (record["coating_mm"].as_f64().unwrap() - thickness).abs() < 0.01,
+                "{record}"
+            );
+            let stated = record["coating_standard_uncertainty_mm"].as_f64().unwrap();
+            assert!((stated / uncertainty - 1.0).abs() < 0.1, "{record}");
+            assert!(text.contains("  coating 0.") && text.contains(" mm +- 0.0"), "{text}");
+        } else {
+            assert!(
+                text.contains(" ns down and up; state its velocity for a thickness"),
+                "{text}"
+            );
+        }
+    }
+}
+
+/// 1500 samples at 50 MS/s end before the window does: between back walls the second of 44 mm is the last that fits, by hand
+/// (30 - 0.27) µs · 5.92 mm/µs / 4; the smallest is 0.62 pulses of 535 ns.
+#[test]
+fn the_walls_that_can_be_read_are_told() {
+    let bench = Bench::new();
+    bench.write_shots("a.npy", &Train::CLEAN.shots(1, 1));
+    let arguments = ["read", "a.npy", "--setup", "setup.toml", "--format", "json"];
+    let record = &bench.run(&arguments).json()[0];
+    let (smallest, largest) = (
+        record["smallest_wall_mm"].as_f64().unwrap(),
+        record["largest_wall_mm"].as_f64().unwrap(),
+    );
+    assert!(
+        (largest - 44.0).abs() < 0.1 && (smallest - 0.982).abs() < 0.02,
+        "{record}"
+    );
+    let text = bench.run(&["read", "a.npy", "--setup", "setup.toml"]).out;
+    assert!(
+        text.contains("set-up and record read walls from 0.98 to 44.0 mm"),
+        "{text}"
+    );
+    let unknown = &bench.run(&["read", "a.npy", "--format", "json"]).json()[0];
+    assert!(unknown["largest_wall_mm"].is_null());
+    // A window that leaves no room.
+    let late =
+        setup("back-wall-to-back-wall", 0.0, 1.0).replace("from_us = 0.5\nto_us = 60.0", "from_us = 1.0\nto_us = 1.4");
+    bench.write("late.toml", late);
+    let text = bench.run(&["read", "a.npy", "--setup", "late.toml"]).out;
+    assert!(text.contains("read no wall") && text.contains("no reading"), "{text}");
+}
+
+#[test]
+fn what_contradicts_itself_in_the_new_tables_is_said() {
+    let bench = Bench::new();
+    bench.write_shots("a.npy", &Train::CLEAN.shots(1, 1));
+    let plain = setup("back-wall-to-back-wall", 0.0, 1.0);
+    for (table, words) in [
+        ("[coating]\nvelocity_m_s = -1\n", "coating.velocity_m_s"),
+        ("[coating]\nvelocity_standard_uncertainty_m_s = 5\n", "is not stated"),
+        (
+            "[coating]\nvelocity_m_s = 2500\nvelocity_standard_uncertainty_m_s = -5\n",
+            "velocity_standard_uncertainty_m_s",
+        ),
+        ("[part]\nouter_radius_mm = 0\n", "outer_radius_mm"),
+        ("[part]\ninner_radius_mm = nan\n", "inner_radius_mm"),
+        (
+            "[part]\nouter_radius_mm = 50\ninner_radius_mm = 50\n",
+            "beside outer_radius_mm",
+        ),
+    ] {
+        bench.write("wrong.toml", format!("{plain}{table}"));
+        let run = bench.run(&["read", "a.npy", "--setup", "wrong.toml"]);
+        assert!(run.error().contains(words), "{table}: {}", run.errors);
+    }
+    // A pipe of 20 mm under a probe whose element nobody states: doubted, with advice.
+    bench.write("pipe.toml", format!("{plain}[part]\nouter_radius_mm = 20\n"));
+    let text = bench.run(&["read", "a.npy", "--setup", "pipe.toml"]).out;
+    assert!(text.contains("doubt curved-surface: take a smaller probe"), "{text}");
 }

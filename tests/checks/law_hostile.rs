@@ -6,8 +6,8 @@ use halfpulse::wall::calibration::{velocity_from_thickness, zero_and_velocity, z
 use halfpulse::{
     AdcFormat, Averager, Block, CalibratedRange, Celsius, Coating, Decibels, DelayLine, EchoRole, ElementSeparation,
     Gauge, GaugeSetup, Hertz, Interleaver, Material, Metres, MetresPerSecond, NoReading, PartTemperature, Probe,
-    ProbeKind, Reading, Record, SampleClock, Scratch, Seconds, Span, TwoGains, TwoRounds, VelocityTemperature, Window,
-    Zero, movement,
+    ProbeKind, Reading, Record, SampleClock, Scratch, Seconds, Span, Surface, TwoGains, TwoRounds, VelocityTemperature,
+    Window, Zero, movement,
 };
 use halfpulse_tests::oracle::{self, Random};
 use proptest::prelude::*;
@@ -119,7 +119,8 @@ prop_compose! {
         coverage in around(2.0),
         diameter in prop::option::of(around(6e-3)),
         film in around(2e-6),
-        coating in prop::option::of(around(2300.0)),
+        coating in prop::option::of((prop::option::of(around(2300.0)), around(100.0))),
+        surface in (0u8..3, around(0.03)),
         calibrated in prop::option::of((around(2e-3), around(25e-3))),
         delay_line in prop::option::of((around(8e-3), around(2350.0))),
         separation in prop::option::of((around(6e-3), around(1e-4))),
@@ -170,7 +171,15 @@ prop_compose! {
                 to: Seconds::new(window.1),
             },
             coverage_factor: coverage,
-            coating: coating.map(|velocity| Coating { velocity: MetresPerSecond::new(velocity) }),
+            coating: coating.map(|(velocity, u)| Coating {
+                velocity: velocity.map(MetresPerSecond::new),
+                velocity_standard_uncertainty: MetresPerSecond::new(u),
+            }),
+            surface: match surface.0 {
+                0 => Surface::Flat,
+                1 => Surface::Convex(Metres::new(surface.1)),
+                _ => Surface::Concave(Metres::new(surface.1)),
+            },
             calibrated: calibrated.map(|(from, to)| CalibratedRange { from: Metres::new(from), to: Metres::new(to) }),
             trigger_jitter: Seconds::new(zero.1),
             roughness: Metres::ZERO,
@@ -272,6 +281,10 @@ fn check(gauge: &Gauge<'_>, codes: &[i16], outcome: &Result<Reading, NoReading>)
                 positive(term.source.word(), term.standard_uncertainty.get())?;
             }
             if let Some(coating) = reading.coating {
+                positive("coating's time", coating.round_trip.time.get())?;
+                not_negative("its uncertainty", coating.round_trip.standard_uncertainty.get())?;
+            }
+            if let Some(coating) = reading.coating.and_then(|coating| coating.thickness) {
                 positive("coating", coating.thickness.get())?;
                 not_negative("a coating's uncertainty", coating.standard_uncertainty.get())?;
             }

@@ -86,6 +86,7 @@ fn noisy_pulse(random: &mut oracle::Random, noise: f64, buffer: &mut [f32; PULSE
         .with_quality(PulseQuality {
             noise: noise as f32,
             mismatch: 0.0,
+            learned_on: None,
         })
 }
 

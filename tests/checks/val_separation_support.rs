@@ -239,6 +239,7 @@ pub fn gauge_with_pulse<'s>(scratch: &'s mut Scratch<1024>, learned: Option<(&Pu
         let quality = PulseQuality {
             noise: noise as f32,
             mismatch: 0.0,
+            learned_on: None,
         };
         gauge.learn_pulse_of_quality(&samples, quality).expect("the pulse fits");
     }

@@ -54,7 +54,7 @@ pub struct PulseLearner<'b> {
 pub struct LearnedPulse<'b> {
     /// Its samples at the shots' rate, envelope peak 1.
     pub samples: &'b [f32],
-    /// Its own noise; its mismatch is not measured yet, and 0.
+    /// Its own noise; its mismatch is not measured yet, and 0; what it was learned on, the caller knows.
     pub quality: PulseQuality,
     /// How many shots are in it.
     pub shots: u16,
@@ -185,6 +185,7 @@ impl<'b> PulseLearner<'b> {
             quality: PulseQuality {
                 noise: noise / peak,
                 mismatch: 0.0,
+                learned_on: None,
             },
             shots,
         })

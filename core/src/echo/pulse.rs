@@ -51,7 +51,7 @@ pub struct PulseFacts {
     pub mismatch: f32,
 }
 
-/// How good a learned pulse is: found while it is learned, kept with it in the set-up.
+/// How good a learned pulse is, and what it was learned on: found while it is learned, kept with it in the set-up.
 #[derive(Clone, Copy, Debug, PartialEq, Default)]
 #[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct PulseQuality {
@@ -60,6 +60,10 @@ pub struct PulseQuality {
     /// Root of the energy of an isolated echo of another shot that the fitted pulse leaves unexplained, less the noise's,
     /// over the root of the fitted energy. 0.03 is -30 dB.
     pub mismatch: f32,
+    /// Thickness of the block whose first back wall it was learned from; 0 for the interface echo of a delay line. The
+    /// beam has turned the pulse's phase on its way there, and what it does to an echo is told against that. `None`: not
+    /// known, and taken for a pulse that no beam has changed.
+    pub learned_on: Option<Metres>,
 }
 
 impl PulseQuality {
@@ -67,12 +71,17 @@ impl PulseQuality {
     pub const UNKNOWN: Self = Self {
         noise: 0.0,
         mismatch: 0.0,
+        learned_on: None,
     };
 
-    /// Are both what shares of a pulse can be, 0 to 1?
+    /// Are both what shares of a pulse can be, 0 to 1, and is the block's thickness one, up to 1 km?
     #[must_use]
     pub const fn is_possible(&self) -> bool {
-        self.noise >= 0.0 && self.noise <= 1.0 && self.mismatch >= 0.0 && self.mismatch <= 1.0
+        let on_block = match self.learned_on {
+            Some(block) => block.get() >= 0.0 && block.get() <= 1e3,
+            None => true,
+        };
+        on_block && self.noise >= 0.0 && self.noise <= 1.0 && self.mismatch >= 0.0 && self.mismatch <= 1.0
     }
 }
 

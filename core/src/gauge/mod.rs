@@ -12,21 +12,22 @@ pub mod two_gains;
 mod two_rounds;
 
 use self::stage::{Stage, StageMeter};
-use crate::echo::EchoList;
 use crate::echo::noise::Noise;
 use crate::echo::pulse::{PulseFacts, PulseMetrics, PulseQuality, ReferencePulse, learn, model};
 use crate::echo::scan::Detector;
 use crate::echo::separation::{PulseTrust, Separation};
 use crate::echo::train::Train;
+use crate::echo::{EchoList, EchoRole};
 use crate::outcome::{Doubts, NoReading};
 use crate::path::Spreading;
 use crate::record::{Record, RecordHealth};
-use crate::setup::{GaugeSetup, SetupError};
-use crate::units::{Metres, Seconds};
+use crate::setup::{DelayLine, GaugeSetup, SetupError};
+use crate::units::{Metres, MetresPerSecond, Seconds};
 use crate::wall::limits::{Limits, LimitsVerdict};
+use crate::wall::thickness::{self, Timed};
 use crate::wall::uncertainty::Budget;
-use crate::wall::{thickness, way};
-use crate::workspace::Workspace;
+use crate::wall::way;
+use crate::workspace::{CORRELATION_CAPACITY, Workspace};
 
 /// A thickness that can be signed for.
 #[derive(Clone, Debug, PartialEq)]
@@ -38,7 +39,7 @@ pub struct Reading {
     pub standard_uncertainty: Metres,
     /// k of the expanded uncertainty.
     pub coverage_factor: f32,
-    /// The coating, where the set-up names one and the echoes show it.
+    /// The coating, where the set-up names one and the echoes show it. The wall owes nothing to it.
     pub coating: Option<CoatingReading>,
     /// Upper bound of the probability that another cycle was read.
     pub wrong_cycle_probability: f32,
@@ -68,13 +69,24 @@ impl Reading {
     }
 }
 
-/// A coating's thickness.
+/// What the echoes show of a coating.
 #[derive(Clone, Copy, Debug, PartialEq)]
 #[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct CoatingReading {
-    /// Its thickness.
+    /// The time that sound takes down and up through it, with its standard uncertainty (k = 1): of timing, zero, beam and
+    /// couplant, and of the echoes that overlap.
+    pub round_trip: Timed,
+    /// Its thickness, if the set-up names its velocity.
+    pub thickness: Option<CoatingThickness>,
+}
+
+/// A coating's thickness.
+#[derive(Clone, Copy, Debug, PartialEq)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
+pub struct CoatingThickness {
+    /// The thickness.
     pub thickness: Metres,
-    /// Standard uncertainty (k = 1).
+    /// Standard uncertainty (k = 1): of the round trip, and of the coating's velocity.
     pub standard_uncertainty: Metres,
 }
 
@@ -107,16 +119,8 @@ pub struct Gauge<'w> {
     noise: Noise,
     detector: Detector,
     spreading: Spreading,
+    learned_on: Option<Metres>,
     findings: Findings,
-}
-
-/// What the spreading of the set-up's beam does to arrivals; nothing if it is not known.
-fn spreading(setup: &GaugeSetup) -> Spreading {
-    if way::corrects_beam(setup) {
-        Spreading::new(setup.probe.relative_bandwidth)
-    } else {
-        Spreading::NONE
-    }
 }
 
 impl<'w> Gauge<'w> {
@@ -143,7 +147,8 @@ impl<'w> Gauge<'w> {
             trust: PulseTrust::Modelled,
             noise: Noise::default(),
             detector,
-            spreading: spreading(&setup),
+            spreading: way::spreading(&setup, None),
+            learned_on: None,
             findings: Findings::default(),
         };
         gauge.fit_detector();
@@ -170,18 +175,59 @@ impl<'w> Gauge<'w> {
             return Err(SetupError::PulseQuality);
         }
         let learned = learn(samples, self.setup.samples_per_cycle(), self.workspace.pulse);
-        self.trust = PulseTrust::Modelled;
-        let result = match learned {
-            Ok(facts) => {
-                self.facts = facts.with_quality(quality);
-                self.trust = PulseTrust::learned(&self.facts);
-                Ok(())
-            }
-            Err(error) => {
-                self.facts = model(&self.setup, self.workspace.pulse)?;
-                Err(error)
-            }
+        self.take_pulse(learned, quality)
+    }
+
+    /// Memory for the samples of a pulse on their way to [`Gauge::learn_pulse_from_scratch`], for who has none of their own.
+    /// Every record that is measured overwrites it.
+    pub fn scratch(&mut self) -> &mut [f32; CORRELATION_CAPACITY] {
+        self.workspace.correlation
+    }
+
+    /// As [`Gauge::learn_pulse_of_quality`], from the first `length` samples of [`Gauge::scratch`].
+    ///
+    /// # Errors
+    /// As there.
+    #[inline(never)]
+    pub fn learn_pulse_from_scratch(&mut self, length: usize, quality: PulseQuality) -> Result<(), SetupError> {
+        if !quality.is_possible() {
+            return Err(SetupError::PulseQuality);
+        }
+        let Workspace { correlation, pulse, .. } = &mut self.workspace;
+        let learned = match correlation.get(..length) {
+            Some(samples) => learn(samples, self.setup.samples_per_cycle(), pulse),
+            None => Err(SetupError::PulseTooLong),
         };
+        self.take_pulse(learned, quality)
+    }
+
+    /// Back to the pulse that the probe's data sheet promises.
+    ///
+    /// # Errors
+    /// None for a set-up that made this gauge.
+    pub fn forget_pulse(&mut self) -> Result<(), SetupError> {
+        let modelled = model(&self.setup, self.workspace.pulse);
+        self.take_pulse(modelled, PulseQuality::UNKNOWN)?;
+        self.trust = PulseTrust::Modelled;
+        Ok(())
+    }
+
+    /// Puts a pulse in force whose samples stand in the workspace, or the modelled one if it is none.
+    #[inline(never)]
+    fn take_pulse(&mut self, learned: Result<PulseFacts, SetupError>, quality: PulseQuality) -> Result<(), SetupError> {
+        self.trust = PulseTrust::Modelled;
+        let (facts, learned_on, result) = match learned {
+            Ok(facts) => (facts.with_quality(quality), quality.learned_on, Ok(())),
+            Err(error) => (model(&self.setup, self.workspace.pulse)?, None, Err(error)),
+        };
+        self.facts = facts;
+        if result.is_ok() {
+            self.trust = PulseTrust::learned(&self.facts);
+        }
+        if learned_on != self.learned_on {
+            self.learned_on = learned_on;
+            self.spreading = way::spreading(&self.setup, learned_on);
+        }
         self.fit_detector();
         result
     }
@@ -199,6 +245,7 @@ impl<'w> Gauge<'w> {
         let same_pulse = self.setup.sample_rate == setup.sample_rate
             && old.centre_frequency == new.centre_frequency
             && old.relative_bandwidth == new.relative_bandwidth;
+        let learned_on = if same_pulse { self.learned_on } else { None };
         if !same_pulse {
             self.trust = PulseTrust::Modelled;
             // Only a pulse that is too long can fail, and then the old one is written back.
@@ -210,10 +257,9 @@ impl<'w> Gauge<'w> {
             }
             self.facts = modelled?;
         }
-        if way::corrects_beam(&setup) != way::corrects_beam(&self.setup)
-            || old.relative_bandwidth != new.relative_bandwidth
-        {
-            self.spreading = spreading(&setup);
+        if learned_on != self.learned_on || !way::same_spreading(&self.setup, &setup, learned_on) {
+            self.spreading = way::spreading(&setup, learned_on);
+            self.learned_on = learned_on;
         }
         self.setup = setup;
         self.fit_detector();
@@ -237,6 +283,39 @@ impl<'w> Gauge<'w> {
         )
     }
 
+    /// The same as far as a record goes that was just measured, and behind a delay line that the set-up does not state, from the
+    /// interface echo that it shows. What is thicker (and what no record of this length can show) is refused.
+    #[must_use]
+    pub fn wall_limits_of(&self, record: &Record<'_>) -> (Metres, Metres) {
+        let clock = record.clock();
+        let mut setup = self.setup;
+        let end = clock.first_sample + clock.rate.period() * record.codes().len() as f32;
+        if end < setup.window.to {
+            setup.window.to = end;
+        }
+        if clock.first_sample > setup.window.from {
+            setup.window.from = clock.first_sample;
+        }
+        let interface = self
+            .findings
+            .echoes
+            .iter()
+            .find(|echo| echo.role == EchoRole::Interface);
+        if let (None, Some(interface)) = (setup.probe.delay_line, interface) {
+            // Any velocity: only the time counts.
+            let velocity = MetresPerSecond::new(2000.0);
+            setup.probe.delay_line = Some(DelayLine {
+                length: velocity * interface.arrival * 0.5,
+                velocity,
+            });
+        }
+        let duration = clock.rate.period() * self.facts.envelope_duration;
+        (
+            thickness::thinnest_wall(&setup, duration),
+            thickness::thickest_wall(&setup, duration),
+        )
+    }
+
     /// The set-up in force.
     #[must_use]
     pub const fn setup(&self) -> &GaugeSetup {
@@ -247,6 +326,13 @@ impl<'w> Gauge<'w> {
     #[must_use]
     pub fn pulse(&self) -> ReferencePulse<'_> {
         ReferencePulse::new(self.workspace.pulse, self.facts)
+    }
+
+    /// The block that the reference pulse in force was learned on, if that is known: what the beam does to echoes is told
+    /// against what it did to the pulse, see [`Spreading::relative_to`].
+    #[must_use]
+    pub const fn pulse_learned_on(&self) -> Option<Metres> {
+        self.learned_on
     }
 
     /// What the last record held: echoes, pulse, separation.

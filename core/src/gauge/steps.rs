@@ -1,7 +1,7 @@
 //! The steps of [`Gauge::measure`](super::Gauge::measure), a method for each [`Stage`](super::stage::Stage).
 
 use super::interpretation::{clearest, coating_trip, rules, signs, start_of_wall, times};
-use super::{CoatingReading, Gauge, Reading};
+use super::{CoatingReading, CoatingThickness, Gauge, Reading};
 use crate::echo::noise::{Noise, TimingNoise, listen, reached};
 use crate::echo::pulse::{PulseContext, PulseFacts, ReferencePulse, measure_pulse};
 use crate::echo::rest::{Rest, is_below_the_step, rest};
@@ -15,8 +15,9 @@ use crate::outcome::NoReading;
 use crate::path::PathLaw;
 use crate::record::{Record, RecordHealth, SampleRange};
 use crate::setup::{EchoSign, GaugeSetup, PULSE_CAPACITY, ProbeKind, Span};
-use crate::units::Metres;
+use crate::units::Seconds;
 use crate::wall::judgement::{self, Evidence};
+use crate::wall::thickness::Timed;
 use crate::wall::uncertainty::Source;
 use crate::wall::way::path_law;
 use crate::wall::{thickness, uncertainty};
@@ -54,6 +55,24 @@ const GRAIN_PEAKS: usize = 4;
 #[inline(never)]
 fn apart<R>(work: impl FnOnce() -> R) -> R {
     work()
+}
+
+/// The coating, where one is asked for and shown.
+#[inline(never)]
+fn coating(evidence: &Evidence<'_>) -> Option<CoatingReading> {
+    let coating = evidence.setup.coating.as_ref()?;
+    // The echoes show none where nothing is left.
+    let trip = evidence.excess.filter(|excess| excess.time > Seconds::ZERO)?;
+    let from_overlap = judgement::coating_overlap(evidence)?;
+    let (a, b) = (trip.standard_uncertainty.get(), from_overlap.get());
+    let round_trip = Timed::new(trip.time, Seconds::new(math::sqrt(a * a + b * b)));
+    Some(CoatingReading {
+        round_trip,
+        thickness: thickness::coating(coating, round_trip).map(|(thickness, standard_uncertainty)| CoatingThickness {
+            thickness,
+            standard_uncertainty,
+        }),
+    })
 }
 
 impl Gauge<'_> {
@@ -329,6 +348,12 @@ impl Gauge<'_> {
             uncertainty::reference_pulse(&self.setup, &self.facts),
         );
         let standard_uncertainty = budget.combined();
+        // Start and period against the first back wall: a coating, or a check of the zero.
+        let excess = if self.setup.coating.is_some() || !needs_two {
+            uncertainty::whole_excess(&self.setup, &times, wall)
+        } else {
+            None
+        };
         let evidence = Evidence {
             setup: &self.setup,
             surroundings: &surroundings,
@@ -339,19 +364,12 @@ impl Gauge<'_> {
             wall,
             budget: &budget,
             expanded: standard_uncertainty * self.setup.coverage_factor,
+            excess,
         };
         if let Some(unexplained_percent) = judgement::not_the_pulse(&evidence) {
             return Err(NoReading::NotThePulse { unexplained_percent });
         }
-        let coating = thickness::coating(&self.setup, &times).and_then(|thickness| {
-            let from_times = uncertainty::coating_uncertainty(&self.setup, &times, wall)?;
-            let from_overlap = judgement::coating_overlap(&evidence)?;
-            let (a, b) = (from_times.get(), from_overlap.get());
-            Some(CoatingReading {
-                thickness,
-                standard_uncertainty: Metres::new(math::sqrt(a * a + b * b)),
-            })
-        });
+        let coating = coating(&evidence);
         let wrong_cycle_probability = judgement::wrong_cycle_probability(&evidence);
         Ok(Reading {
             thickness: wall,

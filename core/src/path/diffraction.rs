@@ -6,8 +6,9 @@
 //! between an echo and a zero that was learned on a block.
 //!
 //! A fluid's piston: shear waves from the element's edge are neglected. The pulse counts by its -6 dB band, as a
-//! Gaussian spectrum. A reference pulse that was itself learned through some path takes part of the turned phase with
-//! it; between two echoes, and between echo and block, that cancels to 4 % of the shift.
+//! Gaussian spectrum. A reference pulse that was itself learned through some path has the turned phase of that path in it:
+//! what an echo differs by is D(S) / D(S_ref), which [`Spreading::relative_to`] tabulates. Where the pulse's path is not
+//! known, S_ref = 0 is taken; between two echoes, and between echo and block, the difference cancels to 4 % of the shift.
 
 use crate::math;
 use core::f32::consts::{FRAC_1_SQRT_2, FRAC_PI_2, TAU};
@@ -66,6 +67,15 @@ impl Diffraction {
         }
     }
 
+    /// This factor times another's conjugate: what correlation with a pulse of that distance makes of an echo of this.
+    fn seen_from(&self, pulse: &Self) -> Self {
+        Self {
+            in_phase: self.in_phase * pulse.in_phase + self.quadrature * pulse.quadrature,
+            quadrature: self.quadrature * pulse.in_phase - self.in_phase * pulse.quadrature,
+            phase_advance: self.phase_advance - pulse.phase_advance,
+        }
+    }
+
     /// Amplitude relative to a plane wave, 0 to about 1.
     #[must_use]
     pub fn magnitude(&self) -> f32 {
@@ -97,11 +107,12 @@ struct Line {
 
 type Lines = Vec<Line, 9>;
 
-/// A Gaussian spectrum of this standard deviation at a normalised distance of the centre frequency.
-fn spectrum(s: f32, deviation: f32) -> Lines {
+/// A Gaussian spectrum of this standard deviation at a normalised distance of the centre frequency, as a pulse from the
+/// distance `reference` sees it.
+fn spectrum(s: f32, reference: f32, deviation: f32) -> Lines {
     let mut lines = Lines::new();
     let mut add = |frequency: f32, weight: f32| {
-        let factor = Diffraction::at(s / frequency);
+        let factor = Diffraction::at(s / frequency).seen_from(&Diffraction::at(reference / frequency));
         // Nine places for nine nodes.
         let _ = lines.push(Line {
             frequency,
@@ -126,11 +137,13 @@ fn spectrum(s: f32, deviation: f32) -> Lines {
 /// where the centre frequency's phase puts it.
 #[must_use]
 pub fn correlation_advance(s: f32, bandwidth: f32) -> f32 {
-    advance_of_carrier(s, &spectrum(s, bandwidth * (FRAC_1_SQRT_2 / WIDTH)))
+    let start = Diffraction::at(s).phase_advance;
+    advance_of_carrier(start, &spectrum(s, 0.0, bandwidth * (FRAC_1_SQRT_2 / WIDTH)))
 }
 
-fn advance_of_carrier(s: f32, lines: &Lines) -> f32 {
-    let mut advance = Diffraction::at(s).phase_advance / TAU;
+/// The maximum near the centre frequency's phase, in cycles.
+fn advance_of_carrier(phase: f32, lines: &Lines) -> f32 {
+    let mut advance = phase / TAU;
     for _ in 0..4 {
         let (mut slope, mut curve) = (0.0, 0.0);
         for line in lines {
@@ -152,7 +165,7 @@ fn advance_of_carrier(s: f32, lines: &Lines) -> f32 {
 /// [`correlation_advance`]; for [`Estimator::EnvelopePeak`](crate::echo::arrival::Estimator::EnvelopePeak).
 #[must_use]
 pub fn envelope_delay(s: f32, bandwidth: f32) -> f32 {
-    delay_of_envelope(&spectrum(s, bandwidth / WIDTH))
+    delay_of_envelope(&spectrum(s, 0.0, bandwidth / WIDTH))
 }
 
 fn delay_of_envelope(lines: &Lines) -> f32 {
@@ -203,23 +216,33 @@ impl Spreading {
         lag: [0.0; STEPS + 1],
     };
 
-    /// The table for a relative bandwidth.
+    /// The table for a relative bandwidth and a pulse that no beam has changed.
     #[must_use]
     pub fn new(bandwidth: f32) -> Self {
+        Self::relative_to(0.0, bandwidth)
+    }
+
+    /// The table for correlation with a pulse that has come the normalised distance `reference` itself, 0 for one that no
+    /// beam has changed: the mean of D(S f0 / f) D*(S_ref f0 / f) over the pulse's energy spectrum, which has its maximum at 0
+    /// for S = S_ref.
+    #[must_use]
+    pub fn relative_to(reference: f32, bandwidth: f32) -> Self {
         let mut table = Self::NONE;
-        let rows = table.advance.iter_mut().zip(&mut table.lag).enumerate().skip(1);
-        for (step, (advance, lag)) in rows {
+        let of_pulse = Diffraction::at(reference).phase_advance;
+        let rows = table.advance.iter_mut().zip(&mut table.lag).enumerate();
+        for (step, (advance, lag)) in rows.skip(usize::from(!(reference > 0.0))) {
             // The last one stands for infinity; a million is as far as a tenth of the table's error.
             let root = step as f32 / math::larger((STEPS - step) as f32, 0.032);
+            let s = root * root;
             // The correlation's spectrum is the pulse's, squared.
-            let lines = spectrum(root * root, bandwidth * (FRAC_1_SQRT_2 / WIDTH));
-            *advance = advance_of_carrier(root * root, &lines);
+            let lines = spectrum(s, reference, bandwidth * (FRAC_1_SQRT_2 / WIDTH));
+            *advance = advance_of_carrier(Diffraction::at(s).phase_advance - of_pulse, &lines);
             *lag = *advance + delay_of_envelope(&lines);
         }
         table
     }
 
-    /// [`correlation_advance`] at a normalised distance; 0 for a distance of 0 or less.
+    /// [`correlation_advance`] at a normalised distance, against that of the pulse; that of 0 for less.
     #[must_use]
     pub fn advance(&self, s: f32) -> f32 {
         interpolated(&self.advance, s)
@@ -347,21 +370,31 @@ pub(crate) mod tests {
     /// How far correlation with the undisturbed pulse finds an echo too early, in cycles of the centre frequency:
     /// Newton's method on the correlation's peak, over a Gaussian spectrum of the given -6 dB width.
     pub(crate) fn correlation_advance_over_60_lines(s: f64, bandwidth: f64) -> f64 {
+        advance_against_a_pulse(s, 0.0, bandwidth)
+    }
+
+    /// The same by correlation with a pulse that has come the distance `reference` itself.
+    fn advance_against_a_pulse(s: f64, reference: f64, bandwidth: f64) -> f64 {
         const LINES: i32 = 60;
         let lines: Vec<(f64, f64, f64)> = (1..=LINES)
             .map(|line| 1.0 + 1.3 * bandwidth * (2.0 * f64::from(line) / f64::from(LINES) - 1.0))
             .filter(|f| *f > 0.02)
             .map(|f| {
-                let factor = Diffraction::at((s / f) as f32);
+                let at = |s: f64| {
+                    let factor = Diffraction::at((s / f) as f32);
+                    (f64::from(factor.in_phase), f64::from(factor.quadrature))
+                };
+                let ((re, im), (of_pulse, turned)) = (at(s), at(reference));
                 let weight = (-(f - 1.0).powi(2) * 8.0 * std::f64::consts::LN_2 / bandwidth.powi(2)).exp();
                 (
                     f,
-                    weight * f64::from(factor.in_phase),
-                    weight * f64::from(factor.quadrature),
+                    weight * (re * of_pulse + im * turned),
+                    weight * (im * of_pulse - re * turned),
                 )
             })
             .collect();
-        let mut advance = f64::from(Diffraction::at(s as f32).phase_advance) / std::f64::consts::TAU;
+        let phase = |s: f64| f64::from(Diffraction::at(s as f32).phase_advance);
+        let mut advance = (phase(s) - phase(reference)) / std::f64::consts::TAU;
         for _ in 0..8 {
             let (mut slope, mut curve) = (0.0, 0.0);
             for &(f, re, im) in &lines {
@@ -424,6 +457,26 @@ pub(crate) mod tests {
     }
 
     #[test]
+    fn against_a_pulse_that_has_come_a_way_itself() {
+        for bandwidth in [0.3, 0.6, 1.0] {
+            for reference in [0.4f32, 2.6, 6.6, 40.0] {
+                let table = Spreading::relative_to(reference, bandwidth);
+                assert!(table.advance(reference).abs() < 1e-3, "{bandwidth}, {reference}");
+                assert!(table.group_lag(reference).abs() < 2e-3, "{bandwidth}, {reference}");
+                for step in 0..120 {
+                    let s = 0.03 * 1.1f32.powi(step);
+                    let exact = advance_against_a_pulse(s.into(), reference.into(), bandwidth.into()) as f32;
+                    let off = table.advance(s) - exact;
+                    assert!(
+                        off.abs() < 1e-3,
+                        "{bandwidth}, S = {s} of {reference}: {off} of {exact}"
+                    );
+                }
+            }
+        }
+    }
+
+    #[test]
     fn ends_of_the_table() {
         let table = Spreading::new(0.6);
         assert_eq!((table.advance(0.0), table.advance(-1.0)), (0.0, 0.0));
@@ -466,6 +519,7 @@ pub(crate) mod tests {
         #[test]
         fn any_input_ends(s in any::<f32>(), bandwidth in any::<f32>()) {
             let _ = Spreading::new(bandwidth).advance(s);
+            let _ = Spreading::relative_to(s, bandwidth).group_lag(s);
             let _ = envelope_delay(s, bandwidth);
         }
     }

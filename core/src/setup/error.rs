@@ -53,15 +53,17 @@ pub enum SetupError {
     TriggerJitter,
     /// The coverage factor is not a positive number.
     CoverageFactor,
-    /// The coating's velocity is not a positive number.
+    /// The coating's velocity is not a positive number, or its uncertainty is negative.
     CoatingVelocity,
+    /// The part's radius is not a positive length.
+    Surface,
     /// The calibrated range is empty, reversed or not positive.
     CalibratedRange,
     /// The reference pulse needs more than [`super::PULSE_CAPACITY`] samples.
     PulseTooLong,
     /// The reference pulse has no echo in it: too short, all zero, or not numbers.
     PulseEmpty,
-    /// The reference pulse's noise or mismatch is not between 0 and 1.
+    /// The reference pulse's noise or mismatch is not between 0 and 1, or what it was learned on is no thickness.
     PulseQuality,
     /// The caller's scratch memory is too small; the numbers are samples of a record.
     WorkspaceTooSmall {
@@ -114,14 +116,17 @@ impl SetupError {
             Self::Window => "the window must start before it ends",
             Self::TriggerJitter => "trigger jitter must be zero or positive, up to 1 ms",
             Self::CoverageFactor => "coverage factor must be a positive number up to 1000, normally 2",
-            Self::CoatingVelocity => "coating velocity must be a positive number of metres per second, from 1 to 1e6",
+            Self::CoatingVelocity => {
+                "coating velocity must be metres per second from 1 to 1e6, its standard uncertainty zero or positive"
+            }
+            Self::Surface => "the part's radius must be a length from 0.1 mm to 10 km: leave it out for a flat part",
             Self::CalibratedRange => "calibrated range must go from a positive thickness to one not below it",
             Self::PulseTooLong => {
                 "the reference pulse is longer than the gauge can hold: lower the sample rate or use a wider band"
             }
             Self::PulseEmpty => "the reference pulse holds no echo: learn it again on a block",
             Self::PulseQuality => {
-                "the reference pulse's noise and mismatch must be shares from 0 to 1: learn it again on a block"
+                "the reference pulse's noise and mismatch must be shares from 0 to 1, its block a thickness: learn it again"
             }
             Self::WorkspaceTooSmall { .. } => "the scratch memory is smaller than the record",
         }

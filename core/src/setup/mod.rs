@@ -6,10 +6,12 @@
 
 mod error;
 mod material;
+mod part;
 mod probe;
 
 pub use error::SetupError;
 pub use material::{Material, PartTemperature, UNKNOWN_TEMPERATURE, VelocityTemperature};
+pub use part::{Coating, Surface};
 pub use probe::{DelayLine, EchoSign, ElementSeparation, Probe, ProbeFace, ProbeKind};
 
 use crate::units::{Celsius, Hertz, Metres, MetresPerSecond, Seconds};
@@ -38,13 +40,6 @@ pub enum Span {
     InterfaceToBackWall,
     /// 2 d / c = the period of the back-wall train; the zero offset is only used to check.
     BackWallToBackWall,
-}
-
-/// A coating between probe and part.
-#[derive(Clone, Copy, Debug, PartialEq)]
-pub struct Coating {
-    /// Velocity of longitudinal waves in the coating.
-    pub velocity: MetresPerSecond,
 }
 
 /// The probe's zero, as learned on a block. It belongs to the reference pulse it was learned with.
@@ -130,6 +125,8 @@ pub struct GaugeSetup {
     /// Root mean square roughness of the back wall, for the budget: a reading gives the mean wall under the beam, and the
     /// least one is two to two and a half times the roughness thinner. 0 (the default) for a smooth one.
     pub roughness: Metres,
+    /// The shape of the part under the probe; flat (the default) if nobody says otherwise.
+    pub surface: Surface,
 }
 
 impl GaugeSetup {
@@ -157,6 +154,7 @@ impl GaugeSetup {
             calibrated: None,
             trigger_jitter: Seconds::ZERO,
             roughness: Metres::ZERO,
+            surface: Surface::Flat,
         };
         match setup.check() {
             None => Ok(setup),
@@ -223,6 +221,13 @@ impl GaugeSetup {
     #[must_use]
     pub const fn with_roughness(mut self, roughness: Metres) -> Self {
         self.roughness = roughness;
+        self
+    }
+
+    /// The same set-up for a part of this shape.
+    #[must_use]
+    pub const fn with_surface(mut self, surface: Surface) -> Self {
+        self.surface = surface;
         self
     }
 
@@ -332,9 +337,12 @@ impl GaugeSetup {
             return Some(SetupError::CoverageFactor);
         }
         if let Some(coating) = self.coating
-            && !within(coating.velocity.get(), 1.0, 1e6)
+            && !coating.is_possible()
         {
             return Some(SetupError::CoatingVelocity);
+        }
+        if !self.surface.is_possible() {
+            return Some(SetupError::Surface);
         }
         if let Some(range) = self.calibrated {
             let ordered = range.from.is_finite() && range.to.get() <= 1e3 && range.from.get() <= range.to.get();
@@ -464,12 +472,23 @@ mod tests {
             Some(SetupError::TriggerJitter)
         );
         assert_eq!(spoilt(|s| s.coverage_factor = 0.0), Some(SetupError::CoverageFactor));
-        assert_eq!(
-            spoilt(|s| s.coating = Some(Coating {
-                velocity: MetresPerSecond::ZERO
-            })),
-            Some(SetupError::CoatingVelocity)
-        );
+        let coated = |velocity, u| {
+            let coating = Coating::new(MetresPerSecond::new(velocity), MetresPerSecond::new(u));
+            spoilt(|s| s.coating = Some(coating))
+        };
+        assert_eq!(coated(2300.0, 50.0), None);
+        assert_eq!(coated(0.0, 50.0), Some(SetupError::CoatingVelocity));
+        assert_eq!(coated(2300.0, -1.0), Some(SetupError::CoatingVelocity));
+        assert_eq!(coated(2300.0, f32::NAN), Some(SetupError::CoatingVelocity));
+        assert_eq!(spoilt(|s| s.coating = Some(Coating::UNKNOWN)), None);
+        for radius in [0.0, -1.0, f32::NAN, f32::INFINITY] {
+            for surface in [Surface::Convex, Surface::Concave] {
+                assert_eq!(
+                    spoilt(|s| s.surface = surface(Metres::new(radius))),
+                    Some(SetupError::Surface)
+                );
+            }
+        }
         assert_eq!(
             spoilt(|s| s.calibrated = Some(CalibratedRange {
                 from: Metres::new(2.0),

@@ -11,9 +11,9 @@ use crate::outcome::{Doubt, Doubts};
 use crate::path::PathLaw;
 use crate::setup::{EchoSign, GaugeSetup, ProbeKind, Span};
 use crate::units::{Metres, Seconds};
-use crate::wall::thickness::{self, TrainTimes};
+use crate::wall::thickness::{self, Timed, TrainTimes};
 use crate::wall::uncertainty::{self, Budget};
-use crate::wall::way;
+use crate::wall::{curvature, way};
 
 /// Wrong-cycle probability above which the signal counts as low.
 const WRONG_CYCLE_LIMIT: f32 = 1e-3;
@@ -55,6 +55,9 @@ pub struct Evidence<'a> {
     pub budget: &'a Budget,
     /// Its expanded uncertainty.
     pub expanded: Metres,
+    /// What is left of the first back wall's time beside start and period, with its whole uncertainty
+    /// ([`uncertainty::excess_uncertainty`]), where the set-up gives a use to it.
+    pub excess: Option<Timed>,
 }
 
 impl Evidence<'_> {
@@ -189,6 +192,23 @@ impl Evidence<'_> {
         })
     }
 
+    /// On a coated part: does the train begin at the zero, as if there were no coating? So do the coating's own reverberations,
+    /// and a whole number of their periods later. Behind a delay line the train begins at the coating's far side,
+    /// if its front does not show.
+    fn begins_at_the_zero(&self, excess: Timed) -> bool {
+        let Some(period) = self.times.period else {
+            return false;
+        };
+        let turns = excess.time / period.time;
+        let nearest = turns - math::floor(turns + 0.5);
+        let chance = excess.standard_uncertainty * BEYOND_CHANCE;
+        self.setup.coating.is_some()
+            && self.setup.probe.kind != ProbeKind::DelayLine
+            // Of a zero that nobody knows nothing can be told.
+            && chance < period.time * 0.1
+            && (period.time * nearest).abs() < chance
+    }
+
     /// Echoes that the reading is made from.
     fn used(&self) -> impl Iterator<Item = &Echo> {
         let span = thickness::wall_span(self.setup);
@@ -201,12 +221,11 @@ impl Evidence<'_> {
     }
 }
 
-/// What overlapping echoes add to a coating's standard uncertainty; `None` if they may have moved an
+/// What overlapping echoes add to the standard uncertainty of a coating's round trip; `None` if they may have moved an
 /// arrival by a cycle, or if the coating's front gives no echo of its own behind a delay line: then
 /// nothing is said of the coating.
 #[must_use]
-pub fn coating_overlap(evidence: &Evidence<'_>) -> Option<Metres> {
-    let coating = evidence.setup.coating?;
+pub fn coating_overlap(evidence: &Evidence<'_>) -> Option<Seconds> {
     let mut worst = evidence.back_wall(1)?.mismatch;
     if evidence.setup.probe.kind == ProbeKind::DelayLine {
         evidence.echoes.iter().find(|echo| echo.role == EchoRole::Coating)?;
@@ -215,8 +234,8 @@ pub fn coating_overlap(evidence: &Evidence<'_>) -> Option<Metres> {
     if worst > UNRECOGNISED {
         return None;
     }
-    // A rectangular half width, in the coating's own velocity.
-    let half_width = evidence.shift_by(worst) * (coating.velocity / evidence.setup.velocity());
+    // A rectangular half width.
+    let half_width = evidence.shift_by(worst) * 2.0 / evidence.setup.velocity();
     Some(half_width * RECTANGULAR)
 }
 
@@ -331,6 +350,7 @@ pub fn doubts(evidence: &Evidence<'_>, wrong_cycle: f32) -> Doubts {
         );
     }
     doubts.raise_if(way::unknown_beam_matters(setup, wall, expanded), Doubt::BeamUnknown);
+    doubts.raise_if(curvature::matters(setup, expanded), Doubt::CurvedSurface);
     doubts.raise_if(
         uncertainty::unknown_temperature_matters(setup, wall, evidence.budget),
         Doubt::TemperatureUnknown,
@@ -346,14 +366,16 @@ pub fn doubts(evidence: &Evidence<'_>, wrong_cycle: f32) -> Doubts {
     );
 
     // First arrival less zero against the period: paint and a wrong zero show here.
-    if span != Span::BackWallToBackWall
-        && let Some(excess) = thickness::excess(setup, times)
-        && let Some(chance) = uncertainty::excess_uncertainty(setup, times, wall)
-    {
+    if let Some(excess) = evidence.excess {
         // Straight times already. More than the reading allows, and more than chance.
         let shown = (setup.velocity() * excess.time * 0.5).abs();
-        let chance = setup.velocity() * chance * (0.5 * BEYOND_CHANCE);
-        doubts.raise_if(shown > expanded && shown > chance, Doubt::ZeroContradicted);
+        let chance = setup.velocity() * excess.standard_uncertainty * (0.5 * BEYOND_CHANCE);
+        let contradicted = if span == Span::BackWallToBackWall {
+            evidence.begins_at_the_zero(excess)
+        } else {
+            shown > expanded && shown > chance
+        };
+        doubts.raise_if(contradicted, Doubt::ZeroContradicted);
     }
     // Arrivals that do not lie on a line, by more than chance and by more than the reading allows.
     let typical = evidence

@@ -4,6 +4,7 @@ pub mod beam;
 pub mod judgement;
 pub mod calibration;
 pub mod coupling;
+pub mod curvature;
 pub mod limits;
 pub mod thickness;
 pub mod uncertainty;

@@ -2,12 +2,13 @@
 
 use crate::math;
 use crate::path::PathLaw;
-use crate::setup::{GaugeSetup, ProbeKind, Span};
+use crate::setup::{Coating, GaugeSetup, ProbeKind, Span};
 use crate::units::{Metres, MetresPerSecond, Seconds};
 use crate::wall::way;
 
 /// A time and its standard uncertainty from the record's noise (and the trigger's jitter; k = 1).
 #[derive(Clone, Copy, Debug, PartialEq, Default)]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
 pub struct Timed {
     /// The time.
     pub time: Seconds,
@@ -165,12 +166,18 @@ pub fn excess(setup: &GaugeSetup, times: &TrainTimes) -> Option<Timed> {
     ))
 }
 
-/// The coating, its velocity / 2 times [`excess`]. `None` if the set-up names no coating, if the times do not hold
-/// it, or if what is left is not positive: then the echoes show no coating.
+/// The coating that a round trip stands for, its velocity / 2 times the time, with its standard uncertainty (k = 1).
+/// `None` if nobody knows its velocity.
+///
+/// d = v t / 2, so that u²(d) = (v / 2)² u²(t) + (t / 2)² u²(v) (JCGM 100:2008, 5.1.2): what the velocity is off by, the
+/// coating is off by in the same proportion.
 #[must_use]
-pub fn coating(setup: &GaugeSetup, times: &TrainTimes) -> Option<Metres> {
-    let thickness = half_path(setup.coating?.velocity, excess(setup, times)?.time);
-    (thickness > Metres::ZERO).then_some(thickness)
+pub fn coating(coating: &Coating, trip: Timed) -> Option<(Metres, Metres)> {
+    let velocity = coating.velocity?;
+    let by_time = half_path(velocity, trip.standard_uncertainty).get();
+    let by_velocity = half_path(coating.velocity_standard_uncertainty, trip.time).get();
+    let uncertainty = math::sqrt(by_time * by_time + by_velocity * by_velocity);
+    Some((half_path(velocity, trip.time), Metres::new(uncertainty)))
 }
 
 /// The thinnest wall that a set-up reads with a pulse of this -20 dB envelope duration T20.
@@ -238,7 +245,7 @@ fn root_of_squares(a: Seconds, b: Seconds) -> Seconds {
 #[cfg(test)]
 mod tests {
     use super::*;
-    use crate::setup::{Coating, Material, Probe, Window, Zero};
+    use crate::setup::{Material, Probe, Window, Zero};
     use crate::units::Hertz;
     use proptest::prelude::*;
 
@@ -301,8 +308,9 @@ mod tests {
     fn coating_and_wall_from_one_record() {
         // Arrival times by layer arithmetic in double precision: polystyrene | 0.8 mm of coating at 2600 m/s |
         // 3 mm of steel at 5920 m/s. From the front surface to the first back wall: 0.6153846 + 1.0135135 µs.
-        let coat = Coating {
-            velocity: MetresPerSecond::new(2600.0),
+        let coat = Coating::new(MetresPerSecond::new(2600.0), MetresPerSecond::new(100.0));
+        let coating = |setup: &GaugeSetup, times: &TrainTimes| {
+            super::coating(setup.coating.as_ref()?, excess(setup, times)?).map(|(thickness, _)| thickness)
         };
         let times = TrainTimes::single(us(8.437_398)).with_period(us(1.013_513_5), -0.7);
         let contact = setup(Span::TransmissionPulseToBackWall, 6.808_5).with_coating(coat);
@@ -312,13 +320,28 @@ mod tests {
         let delay_line = setup(Span::InterfaceToBackWall, 0.0).with_coating(coat);
         let times = times.with_interface(us(6.808_5));
         assert!((coating(&delay_line, &times).unwrap().as_mm() - 0.8).abs() < 2e-6);
-        // Not named: not reported. Nothing left: not shown.
+        // Not named: not reported.
         assert_eq!(
             coating(&setup(Span::TransmissionPulseToBackWall, 6.808_5), &times),
             None
         );
-        let late = setup(Span::TransmissionPulseToBackWall, 8.0).with_coating(coat);
-        assert_eq!(coating(&late, &times), None);
+        // Of unknown velocity: a time, 0.6153846 µs, and no thickness.
+        let unknown = contact.with_coating(Coating::UNKNOWN);
+        assert_eq!(coating(&unknown, &times), None);
+        let trip = excess(&unknown, &times.with_interface(us(6.808_5))).unwrap();
+        assert!((trip.time.as_ns() - 615.384_6).abs() < 1e-2, "{trip:?}");
+    }
+
+    #[test]
+    fn val_uncertainty_of_a_coating() {
+        // By hand: 0.8 mm at 2600(100) m/s, 615.3846(5) ns: 1300 · 5 ns = 6.5 µm and 0.8 mm / 26 = 30.76923 µm.
+        let coat = Coating::new(MetresPerSecond::new(2600.0), MetresPerSecond::new(100.0));
+        let trip = Timed::new(Seconds::from_ns(615.384_6), Seconds::from_ns(5.0));
+        let (thickness, u) = coating(&coat, trip).unwrap();
+        assert!((thickness.as_mm() - 0.8).abs() < 1e-6);
+        let expected = 6.5f32.hypot(30.769_23);
+        assert!((u.get() * 1e6 - expected).abs() < 1e-3, "{u:?} {expected}");
+        assert_eq!(coating(&Coating::UNKNOWN, trip), None);
     }
 
     #[test]

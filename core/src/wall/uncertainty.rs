@@ -4,7 +4,7 @@ use crate::echo::pulse::PulseFacts;
 use crate::math::{self, RECTANGULAR};
 use crate::setup::{GaugeSetup, ProbeKind, Span, UNKNOWN_TEMPERATURE};
 use crate::units::{Metres, MetresPerSecond, Seconds};
-use crate::wall::thickness::{TrainTimes, excess, round_trip, wall_span};
+use crate::wall::thickness::{Timed, TrainTimes, excess, round_trip, wall_span};
 use crate::wall::{coupling, way};
 use heapless::Vec;
 
@@ -242,6 +242,13 @@ fn add_calibration(budget: &mut Budget, setup: &GaugeSetup, wall: Metres) {
     }
 }
 
+/// [`excess`] with its whole uncertainty, [`excess_uncertainty`].
+#[must_use]
+pub fn whole_excess(setup: &GaugeSetup, times: &TrainTimes, wall: Metres) -> Option<Timed> {
+    let excess = excess(setup, times)?;
+    Some(Timed::new(excess.time, excess_uncertainty(setup, times, wall)?))
+}
+
 /// Standard uncertainty (k = 1) of [`excess`] as a whole: timing of first back wall, start and period; the zero; beam,
 /// V-path and couplant of the first back wall and of the period together. An excess far beyond it on a part that is
 /// said to be bare contradicts the zero. `None` where there is no excess.
@@ -266,21 +273,12 @@ pub fn excess_uncertainty(setup: &GaugeSetup, times: &TrainTimes, wall: Metres) 
     Some(Seconds::new(math::sqrt(variance)))
 }
 
-/// Standard uncertainty (k = 1) of a coating that was read with [`crate::wall::thickness::coating`]: half its velocity
-/// times [`excess_uncertainty`]. The coating's velocity is taken as exact: what it is off by, the coating is off by in
-/// the same proportion. `None` if there is no coating to read.
-#[must_use]
-pub fn coating_uncertainty(setup: &GaugeSetup, times: &TrainTimes, wall: Metres) -> Option<Metres> {
-    Some(setup.coating?.velocity * excess_uncertainty(setup, times, wall)? * 0.5)
-}
-
 #[cfg(test)]
 mod tests {
     use super::*;
     use crate::setup::{CalibratedRange, Coating, Material, Probe, Window, Zero};
     use crate::units::{Hertz, MetresPerSecond};
     use crate::wall::calibration::{Block, zero_and_velocity, zero_at_known_velocity};
-    use crate::wall::thickness::Timed;
     use proptest::prelude::*;
 
     const STEEL: MetresPerSecond = MetresPerSecond::new(5920.0);
@@ -502,13 +500,10 @@ mod tests {
             -core::f32::consts::FRAC_1_SQRT_2,
         );
         let wall = Metres::from_mm(5.92);
-        assert_eq!(coating_uncertainty(&setup, &times, wall), None);
-        // Five squared nanoseconds of timing and one of the zero, at half of 2300 m/s.
-        let painted = setup.with_coating(Coating {
-            velocity: MetresPerSecond::new(2300.0),
-        });
-        let um = coating_uncertainty(&painted, &times, wall).unwrap().get() * 1e6;
-        assert!((um - 6f32.sqrt() * 1.15).abs() < 1e-3, "{um}");
+        // Five squared nanoseconds of timing and one of the zero.
+        let painted = setup.with_coating(Coating::UNKNOWN);
+        let ns = excess_uncertainty(&painted, &times, wall).unwrap().as_ns();
+        assert!((ns - 6f32.sqrt()).abs() < 1e-3, "{ns}");
         // Couplant: 29.5 ns on the way in and out and 31.1 ns at the reflection, added, as a rectangle.
         let mut wet = painted;
         wet.probe.couplant_film = Metres::new(2e-6);

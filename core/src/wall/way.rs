@@ -72,6 +72,11 @@ impl Distances {
         })
     }
 
+    /// The distance that a pulse from a block's first back wall has come; 0 if nobody knows.
+    fn of_pulse(&self, learned_on: Option<Metres>) -> f32 {
+        learned_on.map_or(0.0, |block| self.start + self.of_wall * block.get())
+    }
+
     /// The distance whose advance the start of the wall holds: see [`Beam::held`].
     fn held(&self, setup: &GaugeSetup) -> Option<f32> {
         let rests_on_zero = match (setup.probe.kind, wall_span(setup)) {
@@ -84,6 +89,29 @@ impl Distances {
             Some(self.start)
         }
     }
+}
+
+/// What the spreading of this set-up's beam does to arrivals by a pulse that was learned on a block of this thickness;
+/// nothing if it is not known. A table that costs a third of a million instructions.
+#[must_use]
+pub fn spreading(setup: &GaugeSetup, pulse_learned_on: Option<Metres>) -> Spreading {
+    match Distances::of(setup) {
+        Some(distances) => {
+            let reference = distances.of_pulse(pulse_learned_on);
+            Spreading::relative_to(reference, setup.probe.relative_bandwidth)
+        }
+        None => Spreading::NONE,
+    }
+}
+
+/// Would [`spreading`] give the same for both set-ups?
+#[must_use]
+pub fn same_spreading(one: &GaugeSetup, other: &GaugeSetup, pulse_learned_on: Option<Metres>) -> bool {
+    let of = |setup: &GaugeSetup| {
+        let distances = Distances::of(setup)?;
+        Some((distances.of_pulse(pulse_learned_on), setup.probe.relative_bandwidth))
+    };
+    of(one) == of(other)
 }
 
 /// How much later than straight the first back wall of a wall comes: a block's time less this is what calibration needs.

@@ -2,13 +2,15 @@
 
 use crate::acquire::{self, FrontEnd};
 use crate::link::{
-    Hello, LinkError, Message, PROTOCOL, SetUp, SharedPort, Status, Take, UNKNOWN_CHOICE, setup_error_code,
+    Hello, LinkError, Message, PROTOCOL, PULSE_INCOMPLETE, PulsePart, SetUp, SharedPort, Status, Take, TakePulse,
+    UNKNOWN_CHOICE, crc_of_samples, pulse_error_code, setup_error_code,
 };
 use crate::report::{Fault, Report, ReportSink, Shortfall};
 use embedded_hal::delay::DelayNs;
 use embedded_io::{Read, ReadReady, Write};
+use halfpulse::echo::pulse::PulseQuality;
 use halfpulse::record::receiver::PulseReceiver;
-use halfpulse::{Decibels, Gauge};
+use halfpulse::{Decibels, Gauge, Metres};
 
 /// What one call of [`App::step`] did.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
@@ -31,6 +33,10 @@ enum Request {
     Hello(u8),
     /// A set-up was tried; this is the answer.
     SetUp(u8),
+    /// Samples of a pulse came; so many are held now.
+    PulsePart(u16),
+    /// A pulse was tried; this is the answer.
+    Pulse(u8),
     Take(Take),
     Query,
     Bye,
@@ -70,6 +76,7 @@ pub struct App<'p, 'm, 's, R, D, L, S> {
     memory: RecordMemory<'m>,
     sink: S,
     introduced: bool,
+    held: u16,
     reports: u32,
     stack_used: fn() -> u32,
 }
@@ -100,6 +107,7 @@ where
             memory,
             sink,
             introduced: false,
+            held: 0,
             reports: 0,
             stack_used,
         }
@@ -120,6 +128,8 @@ where
         Ok(self.port.poll()?.map(|message| match message {
             Message::Hello(hello) => Request::Hello(hello.protocol),
             Message::SetUp(setup) if self.introduced => Request::SetUp(self.change_setup(&setup)),
+            Message::PulsePart(part) if self.introduced => Request::PulsePart(self.hold(&part)),
+            Message::TakePulse(pulse) if self.introduced => Request::Pulse(self.take_pulse(&pulse)),
             Message::Take(take) if self.introduced => Request::Take(take),
             Message::Query if self.introduced => Request::Query,
             Message::Bye if self.introduced => Request::Bye,
@@ -140,6 +150,8 @@ where
                 send(&self.port, || Message::Hello(answer))?;
             }
             Request::SetUp(answer) => send(&self.port, || Message::SetUpTaken(*answer))?,
+            Request::PulsePart(held) => send(&self.port, || Message::PulseHeld(*held))?,
+            Request::Pulse(answer) => send(&self.port, || Message::PulseTaken(*answer))?,
             Request::Take(take) => {
                 let port = self.port;
                 send_report(&port, &self.take(take))?;
@@ -163,9 +175,56 @@ where
         }
     }
 
+    /// Puts samples of a pulse behind those that are held, in the gauge's scratch memory. A part that does not continue them,
+    /// or that does not fit, is not taken.
+    fn hold(&mut self, part: &PulsePart) -> u16 {
+        if part.first == 0 {
+            self.held = 0;
+        }
+        let (from, count) = (usize::from(self.held), part.samples.len());
+        if part.first == self.held
+            && let Some(places) = self.gauge.scratch().get_mut(from..from.saturating_add(count))
+        {
+            for (place, sample) in places.iter_mut().zip(&part.samples) {
+                *place = *sample;
+            }
+            self.held = u16::try_from(from + count).unwrap_or(self.held);
+        }
+        self.held
+    }
+
+    /// Measures with the pulse that is held from now on, or with the data sheet's.
+    #[inline(never)]
+    fn take_pulse(&mut self, pulse: &TakePulse) -> u8 {
+        let held = core::mem::take(&mut self.held);
+        if pulse.samples != 0 && pulse.samples != held {
+            return PULSE_INCOMPLETE;
+        }
+        let length = usize::from(pulse.samples);
+        let sum = self.gauge.scratch().get(..length).map(crc_of_samples);
+        if sum != Some(pulse.crc) {
+            return PULSE_INCOMPLETE;
+        }
+        let quality = PulseQuality {
+            noise: pulse.noise,
+            mismatch: pulse.mismatch,
+            learned_on: pulse.learned_on.map(Metres::new),
+        };
+        let taken = match length {
+            0 => self.gauge.forget_pulse(),
+            _ => self.gauge.learn_pulse_from_scratch(length, quality),
+        };
+        match taken {
+            Ok(()) => 0,
+            Err(error) => pulse_error_code(&error),
+        }
+    }
+
     /// Acquires, measures, and tells the sink.
     #[inline(never)]
     pub fn take(&mut self, take: &Take) -> Report<'_> {
+        // Measuring overwrites the scratch memory, and what is held of a pulse.
+        self.held = 0;
         let request = acquire::Request {
             shots: take.shots,
             samples: usize::from(take.samples),

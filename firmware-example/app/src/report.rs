@@ -1,6 +1,6 @@
 //! What comes of one place: a reading, a refusal, or a fault of the hardware. Never two of them.
 
-use crate::link::{EchoPlace, FrontEndFault, LinkReading, LinkReport, Outcome, Refusal};
+use crate::link::{EchoPlace, FrontEndFault, LinkCoatingReading, LinkReading, LinkReport, Outcome, Refusal};
 use core::fmt;
 use halfpulse::{Decibels, Findings, NoReading, Reading};
 use heapless::Vec;
@@ -150,9 +150,14 @@ impl Report<'_> {
                     thickness: reading.thickness.get(),
                     standard_uncertainty: reading.standard_uncertainty.get(),
                     coverage_factor: reading.coverage_factor,
-                    coating: reading
-                        .coating
-                        .map(|coating| [coating.thickness.get(), coating.standard_uncertainty.get()]),
+                    coating: reading.coating.map(|coating| LinkCoatingReading {
+                        round_trip: [
+                            coating.round_trip.time.get(),
+                            coating.round_trip.standard_uncertainty.get(),
+                        ],
+                        thickness: (coating.thickness)
+                            .map(|coating| [coating.thickness.get(), coating.standard_uncertainty.get()]),
+                    }),
                     wrong_cycle_probability: reading.wrong_cycle_probability,
                     doubts: reading.doubts.bits(),
                 }),

@@ -1,13 +1,14 @@
 //! The link's specification against its code: every worked example of `LINK.md`, byte by byte.
 
 use halfpulse::{
-    Celsius, GaugeSetup, Hertz, Material, Metres, MetresPerSecond, Probe, Seconds, Span, VelocityTemperature, Window,
-    Zero,
+    Celsius, Coating, EchoSign, GaugeSetup, Hertz, Material, Metres, MetresPerSecond, Probe, Seconds, Span, Surface,
+    VelocityTemperature, Window, Zero,
 };
 use halfpulse_app::link::frame::{read_frame, write_frame};
 use halfpulse_app::link::{
-    Done, EchoPlace, Fire, FrontEndFault, GainChoice, Hello, LinkReading, LinkReport, Message, NotFired, Outcome,
-    Refusal, SetUp, Status, Take,
+    Done, EchoPlace, Fire, FrameError, FrontEndFault, GainChoice, Hello, LinkCoatingReading, LinkReading, LinkReport,
+    Message, NotFired, Outcome, PART_SAMPLES, PROTOCOL, PulsePart, Refusal, SetUp, Status, Take, TakePulse,
+    crc_of_bytes,
 };
 
 const SPECIFICATION: &str = include_str!("../../LINK.md");
@@ -24,6 +25,16 @@ const SETUP: GaugeSetup = GaugeSetup::new(
     },
 );
 
+/// What a calibration and a painted pipe add.
+fn calibrated() -> GaugeSetup {
+    let mut setup = SETUP
+        .with_trigger_jitter(Seconds::from_ns(0.5))
+        .with_coating(Coating::new(MetresPerSecond::new(2300.0), MetresPerSecond::new(115.0)))
+        .with_surface(Surface::Convex(Metres::new(0.0625)));
+    setup.probe = setup.probe.with_signs(EchoSign::AsPulse, EchoSign::Inverted);
+    setup
+}
+
 fn examples() -> Vec<(&'static str, Message)> {
     let report = |outcome, echoes: &[EchoPlace]| {
         Message::Report(LinkReport {
@@ -39,11 +50,12 @@ fn examples() -> Vec<(&'static str, Message)> {
         (
             "hello",
             Message::Hello(Hello {
-                protocol: 2,
+                protocol: PROTOCOL,
                 samples: 4096,
             }),
         ),
         ("set-up", Message::SetUp(SetUp::of(&SETUP))),
+        ("set-up-calibrated", Message::SetUp(SetUp::of(&calibrated()))),
         ("set-up-taken", Message::SetUpTaken(0)),
         (
             "take",
@@ -133,6 +145,25 @@ fn examples() -> Vec<(&'static str, Message)> {
             }),
         ),
         ("bye", Message::Bye),
+        (
+            "pulse-part",
+            Message::PulsePart(PulsePart {
+                first: 32,
+                samples: [0.5, -0.25, 1.0].into_iter().collect(),
+            }),
+        ),
+        ("pulse-held", Message::PulseHeld(35)),
+        (
+            "take-pulse",
+            Message::TakePulse(TakePulse {
+                samples: 35,
+                noise: 0.002,
+                mismatch: 0.01,
+                learned_on: Some(0.025),
+                crc: 0xcbf4_3926,
+            }),
+        ),
+        ("pulse-taken", Message::PulseTaken(0)),
     ]
 }
 
@@ -202,10 +233,27 @@ fn a_set_up_comes_back_as_it_went() {
         warm.material = warm.material.with_part_uncertainty(MetresPerSecond::new(9.0));
         assert_eq!(SetUp::of(&warm).setup(), Some(warm));
     }
+    assert_eq!(SetUp::of(&calibrated()).setup(), Some(calibrated()));
+    for surface in [
+        Surface::Flat,
+        Surface::Convex(Metres::new(0.05)),
+        Surface::Concave(Metres::new(0.1)),
+    ] {
+        let mut other = SETUP.with_surface(surface).with_coating(Coating::UNKNOWN);
+        for (back_wall, interface) in [
+            (EchoSign::Unknown, EchoSign::AsPulse),
+            (EchoSign::Inverted, EchoSign::Unknown),
+        ] {
+            other.probe = other.probe.with_signs(back_wall, interface);
+            assert_eq!(SetUp::of(&other).setup(), Some(other));
+        }
+    }
     for wrong in [
         SetUp { kind: 3, ..sent },
         SetUp { face: 2, ..sent },
         SetUp { span: 3, ..sent },
+        SetUp { signs: [3, 0], ..sent },
+        SetUp { signs: [0, 3], ..sent },
     ] {
         assert_eq!(wrong.setup(), None);
     }
@@ -226,7 +274,10 @@ fn the_longest_report_fits_a_frame() {
             thickness: 1.5,
             standard_uncertainty: 1.5,
             coverage_factor: 1.5,
-            coating: Some([1.5; 2]),
+            coating: Some(LinkCoatingReading {
+                round_trip: [1.5; 2],
+                thickness: Some([1.5; 2]),
+            }),
             wrong_cycle_probability: 1.5,
             doubts: u32::MAX,
         }),
@@ -234,4 +285,46 @@ fn the_longest_report_fits_a_frame() {
     });
     let bytes = bytes_of(&longest);
     assert!(bytes.len() <= 257, "{}", bytes.len());
+}
+
+#[test]
+fn the_longest_set_up_and_part_of_a_pulse_fit_a_frame() {
+    let follows = VelocityTemperature::new(-0.8, Celsius::new(21.0)).with_part(Celsius::new(60.0), Celsius::new(2.0));
+    let mut longest = calibrated();
+    longest.material = longest.material.with_temperature(follows);
+    longest.zero = longest.zero.with_learned_on(Metres::new(0.025));
+    let sent = SetUp {
+        calibrated: Some([1.5; 2]),
+        delay_line: Some([1.5; 2]),
+        separation: Some([1.5; 2]),
+        ..SetUp::of(&longest)
+    };
+    let part = PulsePart {
+        first: u16::MAX,
+        samples: [f32::from_bits(0x7f7f_7f7f); PART_SAMPLES].into_iter().collect(),
+    };
+    for message in [Message::SetUp(sent), Message::PulsePart(part)] {
+        let bytes = bytes_of(&message);
+        assert!(bytes.len() <= 257, "{}", bytes.len());
+    }
+}
+
+/// A set-up of the version before, which had no signs, no jitter and no radius, is no message any more: it is dropped and
+/// counted, and never half read.
+#[test]
+fn a_set_up_of_the_version_before_is_dropped() {
+    let mut payload = [0u8; 250];
+    let whole = postcard::to_slice(&Message::SetUp(SetUp::of(&SETUP)), &mut payload)
+        .expect("fits")
+        .to_vec();
+    // Two bytes of signs, twice four of numbers.
+    let mut old = whole[..whole.len() - 10].to_vec();
+    old.extend(crc_of_bytes(&old).to_le_bytes());
+    let mut frame = Vec::new();
+    for run in old.split(|&byte| byte == 0) {
+        frame.push(u8::try_from(run.len() + 1).expect("short"));
+        frame.extend(run);
+    }
+    assert_eq!(read_frame(&mut frame), Err(FrameError::Unknown));
+    assert!(SPECIFICATION.contains(&format!("Version {PROTOCOL}. ")));
 }

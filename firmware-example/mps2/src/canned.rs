@@ -80,9 +80,8 @@ pub(crate) const CONTACT: GaugeSetup = GaugeSetup::new(
     },
 );
 
-pub(crate) const PAINTED: GaugeSetup = CONTACT.with_coating(Coating {
-    velocity: MetresPerSecond::new(2300.0),
-});
+pub(crate) const PAINTED: GaugeSetup =
+    CONTACT.with_coating(Coating::new(MetresPerSecond::new(2300.0), MetresPerSecond::new(115.0)));
 
 const DELAY_LINE: GaugeSetup = GaugeSetup::new(
     Hertz::from_mhz(100.0),

@@ -100,15 +100,17 @@ fn write_reading(sink: &mut impl Sink, reading: &Reading) {
         .word("doubts", reading.doubts.bits())
         .sentence(&reading.doubts)
         .end();
-    if let Some(CoatingReading {
-        thickness,
-        standard_uncertainty,
-    }) = reading.coating
-    {
-        Line::new(sink, "coating")
-            .bits("thickness", thickness.get())
-            .bits("standard-uncertainty", standard_uncertainty.get())
+    if let Some(CoatingReading { round_trip, thickness }) = reading.coating {
+        Line::new(sink, "coating-round-trip")
+            .bits("time", round_trip.time.get())
+            .bits("standard-uncertainty", round_trip.standard_uncertainty.get())
             .end();
+        if let Some(coating) = thickness {
+            Line::new(sink, "coating")
+                .bits("thickness", coating.thickness.get())
+                .bits("standard-uncertainty", coating.standard_uncertainty.get())
+                .end();
+        }
     }
     for term in reading.budget.terms() {
         Line::new(sink, "budget")

@@ -66,7 +66,10 @@ pub fn learned(
     let learned = learner.finish(setup.samples_per_cycle()).map_err(fault)?;
     Ok(LearnedPulse {
         samples: learned.samples.to_vec(),
-        quality: learned.quality,
+        quality: PulseQuality {
+            learned_on: Some(block.thickness),
+            ..learned.quality
+        },
         shots: usize::from(learned.shots),
     })
 }

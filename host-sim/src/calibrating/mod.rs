@@ -235,7 +235,7 @@ pub fn check(setup: &SetupFile, block: &BlockRecord, temperature_c: Option<f64>)
 /// A zero that was learned with another pulse, as the new pulse sees it.
 ///
 /// The two pulses' origins lie differently in the same echo: the zero moves by as much as the block's
-/// arrival did. Between interface and back wall the origin cancels. The uncertainty takes up that of the
+/// arrival did, each less what the beam does to it against its own pulse. Between interface and back wall the origin cancels. The uncertainty takes up that of the
 /// arrival, although most of the noise is common to both.
 fn translated(setup: &GaugeSetup, before: &BlockTimes, after: &BlockTimes) -> Zero {
     if setup.span == Span::InterfaceToBackWall {
@@ -244,7 +244,7 @@ fn translated(setup: &GaugeSetup, before: &BlockTimes, after: &BlockTimes) -> Ze
     let (old, new) = (before.first_back_wall, after.first_back_wall);
     let (known, noise) = (setup.zero.standard_uncertainty.get(), new.standard_uncertainty.get());
     Zero {
-        offset: setup.zero.offset + (new.time - old.time),
+        offset: setup.zero.offset + (new.time - old.time) - (after.deviation - before.deviation),
         standard_uncertainty: Seconds::new((known * known + noise * noise).sqrt()),
         ..setup.zero
     }
@@ -430,6 +430,7 @@ fn new_keys(
     let percent = |share: f32| rounded((share * 1e6).round() * 1e-4);
     keys.probe.reference_pulse_noise_percent = Some(percent(pulse.quality.noise));
     keys.probe.reference_pulse_mismatch_percent = Some(percent(pulse.quality.mismatch));
+    keys.probe.reference_pulse_learned_on_mm = pulse.quality.learned_on.map(|block| rounded(block.as_mm()));
     // An unknown zero (see the set-up file) stays unknown.
     if learn != Learn::Velocity || keys.zero.standard_uncertainty_ns.is_some() {
         keys.zero.offset_ns = rounded(zero.offset.as_ns());

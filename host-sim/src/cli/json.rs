@@ -18,7 +18,8 @@ JSON, one object a record and line; numbers or null, never NaN; more keys may fo
   standard_uncertainty_mm        k = 1
   expanded_uncertainty_mm        coverage_factor times as much
   coverage_factor
-  coating_mm, coating_standard_uncertainty_mm
+  coating_mm, coating_standard_uncertainty_mm         null without a velocity in [coating]
+  coating_round_trip_ns, coating_round_trip_standard_uncertainty_ns
   wrong_cycle_probability        upper bound of having read another cycle
   doubts                         words, see below; empty if there is none
   no_reading                     null, or {reason, detail}: a word, and a sentence with the advice
@@ -42,6 +43,8 @@ JSON, one object a record and line; numbers or null, never NaN; more keys may fo
                                  echoes; reason: why it is not resolved, else null; ratio: second over
                                  first; log_odds: natural logarithm of the likelihood ratio of two echoes
                                  over one, null without --separate; without a pair its keys are null
+  smallest_wall_mm, largest_wall_mm   between which walls span, pulse, window and record's length allow a
+                                 reading; null without a set-up, largest below smallest where none does
   budget                         [{term, standard_uncertainty_mm}]
   dominating_term                the largest of them
   limits                         null without a reading or without [limits] in the set-up, or
@@ -62,12 +65,16 @@ struct JsonRecord<'m> {
     coverage_factor: Option<f32>,
     coating_mm: Option<f32>,
     coating_standard_uncertainty_mm: Option<f32>,
+    coating_round_trip_ns: Option<f32>,
+    coating_round_trip_standard_uncertainty_ns: Option<f32>,
     wrong_cycle_probability: Option<f32>,
     doubts: Vec<&'static str>,
     no_reading: Option<JsonRefusal<'m>>,
     echoes: Vec<JsonEcho>,
     pulse: Option<JsonPulse>,
     separation: Option<JsonSeparation>,
+    smallest_wall_mm: Option<f32>,
+    largest_wall_mm: Option<f32>,
     budget: Vec<JsonTerm>,
     dominating_term: Option<&'static str>,
     limits: Option<JsonLimits>,
@@ -194,7 +201,10 @@ fn verdict(verdict: &LimitsVerdict) -> JsonLimits {
 #[must_use]
 pub fn line(measured: &Measured, limits: Option<&Limits>) -> String {
     let reading = measured.outcome.as_ref().ok();
-    let coating = reading.and_then(|reading| reading.coating);
+    let trip = reading
+        .and_then(|reading| reading.coating)
+        .map(|coating| coating.round_trip);
+    let coating = reading.and_then(|reading| reading.coating?.thickness);
     let record = JsonRecord {
         file: &measured.file,
         shot: measured.shot,
@@ -205,6 +215,8 @@ pub fn line(measured: &Measured, limits: Option<&Limits>) -> String {
         coverage_factor: reading.and_then(|r| finite(r.coverage_factor)),
         coating_mm: coating.and_then(|c| finite(c.thickness.as_mm())),
         coating_standard_uncertainty_mm: coating.and_then(|c| finite(c.standard_uncertainty.as_mm())),
+        coating_round_trip_ns: trip.and_then(|trip| finite(trip.time.as_ns())),
+        coating_round_trip_standard_uncertainty_ns: trip.and_then(|trip| finite(trip.standard_uncertainty.as_ns())),
         wrong_cycle_probability: reading.and_then(|r| finite(r.wrong_cycle_probability)),
         doubts: reading.map_or(Vec::new(), |r| r.doubts.iter().map(|d| d.word()).collect()),
         no_reading: measured.outcome.as_ref().err().map(|refusal| JsonRefusal {
@@ -223,6 +235,8 @@ pub fn line(measured: &Measured, limits: Option<&Limits>) -> String {
             .as_ref()
             .map(|p| pulse(p, measured.span.is_some())),
         separation: measured.findings.separation.as_ref().map(separation),
+        smallest_wall_mm: measured.wall_limits.and_then(|(smallest, _)| finite(smallest.as_mm())),
+        largest_wall_mm: measured.wall_limits.and_then(|(_, largest)| finite(largest.as_mm())),
         budget: reading.map_or(Vec::new(), |r| {
             let terms = r.budget.terms().iter();
             terms

@@ -253,6 +253,7 @@ fn look_at(name: &str, shot: &Shot, clock: SampleClock, separate: bool) -> Measu
         outcome: Err(Refusal::no_setup()),
         findings: Findings::default(),
         full_scale: shot.format.full_scale(),
+        wall_limits: None,
     };
     let Some(setup) = assumed_setup(&shot.codes, clock) else {
         return measured;

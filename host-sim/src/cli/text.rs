@@ -23,13 +23,21 @@ fn reading_block(text: &mut String, reading: &Reading) {
         reading.coverage_factor
     );
     if let Some(coating) = reading.coating {
-        let expanded = coating.standard_uncertainty.as_mm() * reading.coverage_factor;
-        let digits = decimals(expanded);
-        let _ = writeln!(
-            text,
-            "  coating {:.digits$} mm +- {expanded:.digits$} mm",
-            coating.thickness.as_mm()
-        );
+        let k = reading.coverage_factor;
+        let _ = match coating.thickness {
+            Some(coating) => {
+                let expanded = coating.standard_uncertainty.as_mm() * k;
+                let digits = decimals(expanded);
+                let thickness = coating.thickness.as_mm();
+                writeln!(text, "  coating {thickness:.digits$} mm +- {expanded:.digits$} mm")
+            }
+            None => writeln!(
+                text,
+                "  coating {:.1} ns +- {:.1} ns down and up; state its velocity for a thickness",
+                coating.round_trip.time.as_ns(),
+                coating.round_trip.standard_uncertainty.as_ns() * k
+            ),
+        };
     }
     for doubt in reading.doubts.iter() {
         let _ = writeln!(text, "  doubt {}: {}", doubt.word(), doubt.advice());
@@ -193,6 +201,20 @@ pub fn block(measured: &Measured, limits: Option<&Limits>) -> String {
     }
     if let Some(separation) = &findings.separation {
         separation_line(&mut text, separation);
+    }
+    if let Some((smallest, largest)) = measured.wall_limits {
+        let _ = if smallest < largest {
+            let (smallest, largest) = (smallest.as_mm(), largest.as_mm());
+            writeln!(
+                text,
+                "  set-up and record read walls from {smallest:.2} to {largest:.1} mm"
+            )
+        } else {
+            writeln!(
+                text,
+                "  set-up and record read no wall: record for longer, or move the window"
+            )
+        };
     }
     if let Ok(reading) = &measured.outcome {
         budget_block(&mut text, reading);

@@ -7,7 +7,8 @@ use crate::record_file::CodeKind;
 use halfpulse::echo::pulse::PulseQuality;
 use halfpulse::{
     CalibratedRange, Celsius, Coating, DelayLine, EchoSign, ElementSeparation, GaugeSetup, Guard, Hertz, Limits,
-    Material, Metres, MetresPerSecond, Probe, ProbeFace, ProbeKind, Seconds, Span, VelocityTemperature, Window, Zero,
+    Material, Metres, MetresPerSecond, Probe, ProbeFace, ProbeKind, Seconds, Span, Surface, VelocityTemperature,
+    Window, Zero,
 };
 
 /// `[record]`: what the converter's numbers mean.
@@ -54,6 +55,8 @@ pub struct ProbeKeys {
     pub reference_pulse_noise_percent: Option<f64>,
     /// How far other shots' echoes differ from it.
     pub reference_pulse_mismatch_percent: Option<f64>,
+    /// The block that it was learned on.
+    pub reference_pulse_learned_on_mm: Option<f64>,
 }
 
 /// `[delay_line]`: also the delay blocks of a dual-element probe.
@@ -102,6 +105,19 @@ pub struct PartKeys {
     pub temperature_c: Option<f64>,
     /// The temperature's standard uncertainty.
     pub temperature_standard_uncertainty_k: Option<f64>,
+    /// Radius of a pipe's outside under the probe.
+    pub outer_radius_mm: Option<f64>,
+    /// Radius of a pipe's inside under the probe.
+    pub inner_radius_mm: Option<f64>,
+}
+
+/// `[coating]`.
+#[derive(Clone, Copy, Debug, PartialEq, Default)]
+pub struct CoatingKeys {
+    /// Velocity of longitudinal waves, if known.
+    pub velocity_m_s: Option<f64>,
+    /// Its standard uncertainty; `None`: 5 %.
+    pub velocity_standard_uncertainty_m_s: Option<f64>,
 }
 
 /// `[limits]`: between which thicknesses the wall shall be.
@@ -175,8 +191,8 @@ pub struct SetupKeys {
     pub dual_element: Option<DualElementKeys>,
     /// `[material]`
     pub material: MaterialKeys,
-    /// `[coating] velocity_m_s`, if the table is there.
-    pub coating_velocity_m_s: Option<f64>,
+    /// `[coating]`
+    pub coating: Option<CoatingKeys>,
     /// `[zero]`
     pub zero: ZeroKeys,
     /// `[part]`
@@ -218,6 +234,7 @@ impl SetupKeys {
                 reference_pulse: document.text("probe", "reference_pulse")?,
                 reference_pulse_noise_percent: document.number("probe", "reference_pulse_noise_percent")?,
                 reference_pulse_mismatch_percent: document.number("probe", "reference_pulse_mismatch_percent")?,
+                reference_pulse_learned_on_mm: document.number("probe", "reference_pulse_learned_on_mm")?,
             },
             delay_line: if document.has_table("delay_line") {
                 Some(DelayLineKeys {
@@ -255,9 +272,15 @@ impl SetupKeys {
                 roughness_um: document.number("part", "roughness_um")?,
                 temperature_c: document.number("part", "temperature_c")?,
                 temperature_standard_uncertainty_k: document.number("part", "temperature_standard_uncertainty_k")?,
+                outer_radius_mm: document.number("part", "outer_radius_mm")?,
+                inner_radius_mm: document.number("part", "inner_radius_mm")?,
             },
-            coating_velocity_m_s: if document.has_table("coating") {
-                Some(document.needed_number("coating", "velocity_m_s")?)
+            coating: if document.has_table("coating") {
+                Some(CoatingKeys {
+                    velocity_m_s: document.number("coating", "velocity_m_s")?,
+                    velocity_standard_uncertainty_m_s: document
+                        .number("coating", "velocity_standard_uncertainty_m_s")?,
+                })
             } else {
                 None
             },
@@ -326,12 +349,23 @@ impl SetupKeys {
         material
     }
 
+    /// The shape of the part under the probe, unchecked.
+    fn to_surface(&self) -> Surface {
+        let radius = |mm: f64| Metres::from_mm(mm as f32);
+        match (self.part.outer_radius_mm, self.part.inner_radius_mm) {
+            (Some(mm), _) => Surface::Convex(radius(mm)),
+            (None, Some(mm)) => Surface::Concave(radius(mm)),
+            (None, None) => Surface::Flat,
+        }
+    }
+
     /// The learned pulse's quality, unchecked.
     pub(super) fn pulse_quality(&self) -> PulseQuality {
         let share = |percent: Option<f64>| percent.map_or(0.0, |percent| (percent / 100.0) as f32);
         PulseQuality {
             noise: share(self.probe.reference_pulse_noise_percent),
             mismatch: share(self.probe.reference_pulse_mismatch_percent),
+            learned_on: (self.probe.reference_pulse_learned_on_mm).map(|mm| Metres::from_mm(mm as f32)),
         }
     }
 
@@ -400,9 +434,19 @@ impl SetupKeys {
                 to: Seconds::from_us(self.measure.to_us.unwrap_or(1e6) as f32),
             },
             coverage_factor: self.measure.coverage_factor as f32,
-            coating: self.coating_velocity_m_s.map(|velocity| Coating {
-                velocity: MetresPerSecond::new(velocity as f32),
+            coating: self.coating.map(|coating| match coating.velocity_m_s {
+                Some(velocity) => {
+                    let uncertainty = coating
+                        .velocity_standard_uncertainty_m_s
+                        .unwrap_or(0.05 * velocity.abs());
+                    Coating::new(
+                        MetresPerSecond::new(velocity as f32),
+                        MetresPerSecond::new(uncertainty as f32),
+                    )
+                }
+                None => Coating::UNKNOWN,
             }),
+            surface: self.to_surface(),
             roughness: Metres::new((self.part.roughness_um.unwrap_or(0.0) * 1e-6) as f32),
             calibrated: calibration.and_then(|c| {
                 Some(CalibratedRange {

@@ -135,6 +135,12 @@ pub const KEYS: &[Key] = &[
         "root of the energy by which other shots' echoes differ from the learned pulse; written by calibrate, default 0",
     ),
     key(
+        "probe",
+        "reference_pulse_learned_on_mm",
+        "block whose first back wall the pulse was learned from, 0 for a delay line's interface echo: the beam is \
+         corrected against what it did to the pulse; written by calibrate, without it that is not known",
+    ),
+    key(
         "delay_line",
         "length_mm",
         "length of the delay line, or of each delay block of a dual-element probe; the table may be left out",
@@ -198,9 +204,25 @@ pub const KEYS: &[Key] = &[
          than the reading); default 0",
     ),
     key(
+        "part",
+        "outer_radius_mm",
+        "radius of the pipe on whose outside a flat probe sits; a doubt where that is too curved; without it flat",
+    ),
+    key(
+        "part",
+        "inner_radius_mm",
+        "instead of it: radius of the pipe in which a flat probe sits",
+    ),
+    key(
         "coating",
         "velocity_m_s",
-        "velocity in the coating; the table asks for coating and wall",
+        "velocity in the coating; the table asks for coating and wall. Without it the coating is given as a time; the \
+         wall needs none",
+    ),
+    key(
+        "coating",
+        "velocity_standard_uncertainty_m_s",
+        "its standard uncertainty (k = 1); default 5 % of it",
     ),
     key(
         "zero",

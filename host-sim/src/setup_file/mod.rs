@@ -12,6 +12,10 @@
 //! * With `[dual_element]` the times are those along a V, and with an element diameter those of a beam that spreads; both
 //!   are corrected. A transmission-pulse-to-back-wall reading also rests on what the zero holds of the beam
 //!   (`learned_on_mm`): not known, the first back wall stays as it came, and the budget says so.
+//!   Likewise the pulse carries the way it was learned through (`reference_pulse_learned_on_mm`): what an echo is corrected by is
+//!   what the beam does to it against what it did to the pulse.
+//! * With `[coating]` wall and coating are read from one record: the wall between back walls, the coating from what is left
+//!   of the first back wall's time. With a velocity it is a thickness, without one a time.
 //! * A zero belongs to the reference pulse it was learned with: if the file names the pulse's checksum,
 //!   another pulse is an error.
 //! * Unknown keys are refused; every key is described in [`keys::KEYS`] and by `halfpulse read --help`.
@@ -23,8 +27,8 @@ pub mod keys;
 mod write;
 
 pub use contents::{
-    CalibrationKeys, DelayLineKeys, DualElementKeys, LimitsKeys, MaterialKeys, MeasureKeys, PartKeys, ProbeKeys,
-    RecordKeys, SetupKeys, ZeroKeys,
+    CalibrationKeys, CoatingKeys, DelayLineKeys, DualElementKeys, LimitsKeys, MaterialKeys, MeasureKeys, PartKeys,
+    ProbeKeys, RecordKeys, SetupKeys, ZeroKeys,
 };
 
 use crate::input_error::InputError;
@@ -204,6 +208,35 @@ impl SetupFile {
                 "add temperature_c, or leave this out",
             ));
         }
+        if self.keys.part.outer_radius_mm.is_some() && self.keys.part.inner_radius_mm.is_some() {
+            return Err(self.place.fault(
+                "part",
+                "inner_radius_mm",
+                "stands beside outer_radius_mm, and a probe sits on one side of a pipe",
+                "state the one under the probe",
+            ));
+        }
+        if let Some(coating) = self.keys.coating
+            && coating.velocity_standard_uncertainty_m_s.is_some()
+            && coating.velocity_m_s.is_none()
+        {
+            return Err(self.place.fault(
+                "coating",
+                "velocity_standard_uncertainty_m_s",
+                "belongs to a velocity that is not stated",
+                "add velocity_m_s, or leave this out",
+            ));
+        }
+        if let Some(block) = self.keys.probe.reference_pulse_learned_on_mm
+            && !(0.0..=1e6).contains(&block)
+        {
+            return Err(self.place.fault(
+                "probe",
+                "reference_pulse_learned_on_mm",
+                "must be a thickness from 0 to 1e6",
+                "state the block's thickness, or leave it out",
+            ));
+        }
         if !self.keys.pulse_quality().is_possible() {
             return Err(self.place.fault(
                 "probe",
@@ -300,7 +333,9 @@ impl SetupFile {
             SetupError::Window => ("measure", "from_us"),
             SetupError::TriggerJitter => ("record", "trigger_jitter_ns"),
             SetupError::CoverageFactor => ("measure", "coverage_factor"),
-            SetupError::CoatingVelocity => ("coating", "velocity_m_s"),
+            SetupError::CoatingVelocity => ("coating", self.blame_in_coating()),
+            SetupError::Surface if self.keys.part.outer_radius_mm.is_some() => ("part", "outer_radius_mm"),
+            SetupError::Surface => ("part", "inner_radius_mm"),
             SetupError::CalibratedRange => ("calibration", "from_mm"),
             SetupError::PulseTooLong | SetupError::PulseEmpty if self.keys.probe.reference_pulse.is_some() => {
                 ("probe", "reference_pulse")
@@ -312,6 +347,16 @@ impl SetupFile {
         // The core's sentences hold what must be; some hold the remedy behind a colon.
         let (what, remedy) = sentence.split_once(": ").unwrap_or((&sentence, "correct this value"));
         self.place.fault(table, name, what, remedy)
+    }
+
+    /// Which of the coating's keys is wrong, if one is.
+    fn blame_in_coating(&self) -> &'static str {
+        let velocity = self.keys.coating.and_then(|coating| coating.velocity_m_s);
+        if velocity.is_some_and(|velocity| (1.0..=1e6).contains(&velocity)) {
+            "velocity_standard_uncertainty_m_s"
+        } else {
+            "velocity_m_s"
+        }
     }
 
     /// The learned pulse, if the set-up names one; its checksum must be the one that the zero was

@@ -25,9 +25,8 @@ fn the_example_becomes_the_cores_setup() {
             to: Seconds::from_us(60.0),
         },
     )
-    .with_coating(Coating {
-        velocity: MetresPerSecond::new(2300.0),
-    });
+    // Without a stated uncertainty: 5 % of the velocity.
+    .with_coating(Coating::new(MetresPerSecond::new(2300.0), MetresPerSecond::new(115.0)));
     assert_eq!(setup, expected);
 }
 
@@ -338,6 +337,7 @@ fn every_key_is_described_and_written() {
             reference_pulse: Some("a \"b\" \\ c\u{7}.npy".to_string()),
             reference_pulse_noise_percent: Some(0.25),
             reference_pulse_mismatch_percent: Some(1.5),
+            reference_pulse_learned_on_mm: Some(25.0),
         },
         delay_line: Some(DelayLineKeys {
             length_mm: 8.0,
@@ -360,6 +360,8 @@ fn every_key_is_described_and_written() {
             roughness_um: Some(25.0),
             temperature_c: Some(60.0),
             temperature_standard_uncertainty_k: Some(2.0),
+            outer_radius_mm: Some(57.0),
+            inner_radius_mm: None,
         },
         limits: Some(LimitsKeys {
             minimum_mm: 5.0,
@@ -368,7 +370,10 @@ fn every_key_is_described_and_written() {
             guard_band_factor: None,
             wrong_decision_probability: Some(0.05),
         }),
-        coating_velocity_m_s: Some(2300.0),
+        coating: Some(CoatingKeys {
+            velocity_m_s: Some(2300.0),
+            velocity_standard_uncertainty_m_s: Some(80.0),
+        }),
         zero: ZeroKeys {
             offset_ns: 12.345,
             standard_uncertainty_ns: Some(0.5),
@@ -397,7 +402,11 @@ fn every_key_is_described_and_written() {
         limits.guard_band_factor = Some(1.5);
         limits.wrong_decision_probability = None;
     }
+    (other.part.outer_radius_mm, other.part.inner_radius_mm) = (None, Some(200.0));
     assert_eq!(parse(&other.to_toml()).unwrap().keys, other);
+    let mut unknown = full.clone();
+    unknown.coating = Some(CoatingKeys::default());
+    assert_eq!(parse(&unknown.to_toml()).unwrap().keys, unknown);
     let text = text + &other.to_toml();
     for key in keys::KEYS {
         assert!(

@@ -1,7 +1,7 @@
 //! A set-up back into its file, each key with what it says.
 
 use super::keys::KEYS;
-use super::{CODES, FACES, KINDS, SIGNS, SPANS, SetupKeys, word_of};
+use super::{CODES, CoatingKeys, FACES, KINDS, SIGNS, SPANS, SetupKeys, word_of};
 use crate::input_error::InputError;
 use std::path::Path;
 
@@ -53,6 +53,7 @@ impl SetupKeys {
             ("probe", "reference_pulse") => self.probe.reference_pulse.as_deref().and_then(word),
             ("probe", "reference_pulse_noise_percent") => self.probe.reference_pulse_noise_percent.map(number),
             ("probe", "reference_pulse_mismatch_percent") => self.probe.reference_pulse_mismatch_percent.map(number),
+            ("probe", "reference_pulse_learned_on_mm") => self.probe.reference_pulse_learned_on_mm.map(number),
             ("delay_line", "length_mm") => self.delay_line.map(|line| number(line.length_mm)),
             ("delay_line", "velocity_m_s") => self.delay_line.map(|line| number(line.velocity_m_s)),
             ("dual_element", "separation_mm") => self.dual_element.map(|dual| number(dual.separation_mm)),
@@ -76,6 +77,8 @@ impl SetupKeys {
                 .map(number),
             ("material", "velocity_temperature_c") => self.material.velocity_temperature_c.map(number),
             ("part", "roughness_um") => self.part.roughness_um.map(number),
+            ("part", "outer_radius_mm") => self.part.outer_radius_mm.map(number),
+            ("part", "inner_radius_mm") => self.part.inner_radius_mm.map(number),
             ("part", "temperature_c") => self.part.temperature_c.map(number),
             ("part", "temperature_standard_uncertainty_k") => self.part.temperature_standard_uncertainty_k.map(number),
             ("limits", "minimum_mm") => limits.map(|limits| number(limits.minimum_mm)),
@@ -85,7 +88,10 @@ impl SetupKeys {
             ("limits", "wrong_decision_probability") => {
                 limits.and_then(|limits| limits.wrong_decision_probability).map(number)
             }
-            ("coating", "velocity_m_s") => self.coating_velocity_m_s.map(number),
+            ("coating", "velocity_m_s") => self.coating.and_then(|coating| coating.velocity_m_s).map(number),
+            ("coating", "velocity_standard_uncertainty_m_s") => (self.coating)
+                .and_then(|coating| coating.velocity_standard_uncertainty_m_s)
+                .map(number),
             ("zero", "offset_ns") => Some(number(self.zero.offset_ns)),
             ("zero", "standard_uncertainty_ns") => self.zero.standard_uncertainty_ns.map(number),
             ("zero", "learned_on_mm") => self.zero.learned_on_mm.map(number),
@@ -123,6 +129,10 @@ impl SetupKeys {
                 text.push_str(&format!("\n[{table}]\n"));
             }
             text.push_str(&format!("# {}\n{} = {value}\n", key.about, key.name));
+        }
+        // A table that asks for something by being there.
+        if self.coating == Some(CoatingKeys::default()) {
+            text.push_str("\n[coating]\n");
         }
         text
     }

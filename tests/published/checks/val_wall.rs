@@ -151,17 +151,18 @@ fn val_jitter_against_monte_carlo() {
 fn val_coating_by_layer_arithmetic() {
     for (coat_mm, coat_velocity, wall_mm) in [(0.3, 2300.0, 4.0), (1.1, 2700.0, 12.0), (0.05, 2000.0, 3.0)] {
         let (zero, trip) = (0.6, 2e3 * wall_mm / 5920.0);
-        let painted = setup(contact(), Span::TransmissionPulseToBackWall, 5920.0, zero).with_coating(Coating {
-            velocity: MetresPerSecond::new(coat_velocity as f32),
-        });
+        let coat = Coating::new(MetresPerSecond::new(coat_velocity as f32), MetresPerSecond::new(50.0));
+        let painted = setup(contact(), Span::TransmissionPulseToBackWall, 5920.0, zero).with_coating(coat);
         let first = zero + 2e3 * coat_mm / coat_velocity + trip;
         let times = TrainTimes::single(timed(first, 1.0)).with_period(timed(trip, 1.0), -0.7);
         let found = f64::from(wall(&painted, &times).expect("a period").as_mm());
         assert!((found - wall_mm).abs() < 1e-5, "{found}");
-        let found = f64::from(coating(&painted, &times).expect("a coating").as_mm());
+        let left = excess(&painted, &times).expect("a period");
+        let found = f64::from(coating(&coat, left).expect("a velocity").0.as_mm());
         assert!((found - coat_mm).abs() < 1e-5, "{coat_mm} mm: {found}");
-        let bare = TrainTimes::single(timed(zero + trip - 0.01, 1.0)).with_period(timed(trip, 1.0), -0.7);
-        assert_eq!(coating(&painted, &bare), None);
+        // Without a velocity the time is all there is.
+        assert!((f64::from(left.time.as_us()) - 2e3 * coat_mm / coat_velocity).abs() < 1e-5, "{left:?}");
+        assert_eq!(coating(&Coating::UNKNOWN, left), None);
     }
 }
 

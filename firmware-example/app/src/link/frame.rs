@@ -30,6 +30,16 @@ pub fn crc_of_codes(codes: &[i16]) -> u32 {
     digest.finalize()
 }
 
+/// CRC-32 of a pulse's samples, each as four bytes, the lowest first.
+#[must_use]
+pub fn crc_of_samples(samples: &[f32]) -> u32 {
+    let mut digest = CHECK_SUM.digest();
+    for sample in samples {
+        digest.update(&sample.to_le_bytes());
+    }
+    digest.finalize()
+}
+
 /// Why bytes are not a message.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
 pub enum FrameError {

@@ -6,13 +6,15 @@ use halfpulse::setup::{EchoSign, ProbeFace, ProbeKind};
 use halfpulse::workspace::ECHO_CAPACITY;
 use halfpulse::{
     CalibratedRange, Celsius, Coating, DelayLine, ElementSeparation, GaugeSetup, Hertz, Material, Metres,
-    MetresPerSecond, PartTemperature, Probe, Seconds, SetupError, Span, VelocityTemperature, Window, Zero,
+    MetresPerSecond, PartTemperature, Probe, Seconds, SetupError, Span, Surface, VelocityTemperature, Window, Zero,
 };
 use heapless::Vec;
 use serde::{Deserialize, Serialize};
 
 /// Version of this protocol. Both ends must speak the same.
-pub const PROTOCOL: u8 = 3;
+pub const PROTOCOL: u8 = 4;
+/// Most samples of a learned pulse in one [`PulsePart`].
+pub const PART_SAMPLES: usize = 32;
 
 /// Everything that can be said. Numbers are in SI units unless their name says otherwise.
 #[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
@@ -41,6 +43,14 @@ pub enum Message {
     Status(Status),
     /// To the gauge: the conversation is over.
     Bye,
+    /// To the gauge: some samples of a learned pulse.
+    PulsePart(PulsePart),
+    /// From the gauge: how many of them it holds, from the first and without a gap.
+    PulseHeld(u16),
+    /// To the gauge: measure with the pulse whose samples it holds.
+    TakePulse(TakePulse),
+    /// From the gauge: 0 if the pulse is in force, else why not: [`pulse_error_code`], [`PULSE_INCOMPLETE`].
+    PulseTaken(u8),
 }
 
 /// Introduces one end.
@@ -79,8 +89,8 @@ pub struct SetUp {
     pub window: [f32; 2],
     /// k of the expanded uncertainty.
     pub coverage_factor: f32,
-    /// Velocity in the coating, if there is one.
-    pub coating: Option<f32>,
+    /// The coating, if there is one.
+    pub coating: Option<LinkCoating>,
     /// Thinnest and thickest block of the calibration, if there was one.
     pub calibrated: Option<[f32; 2]>,
     /// Root mean square roughness of the back wall.
@@ -99,6 +109,45 @@ pub struct SetUp {
     pub velocity_temperature: Option<[f32; 3]>,
     /// Temperature of the part and its standard uncertainty, if known.
     pub part_temperature: Option<[f32; 2]>,
+    /// Sign of back walls and of the interface echo: 0 unknown, 1 as the pulse, 2 inverted.
+    pub signs: [u8; 2],
+    /// Jitter of the trigger, root mean square.
+    pub trigger_jitter: f32,
+    /// Radius of the part under the probe: 0 flat, positive on the outside of a pipe, negative inside.
+    pub radius: f32,
+}
+
+/// A coating of the set-up.
+#[derive(Clone, Copy, Debug, PartialEq, Serialize, Deserialize)]
+pub struct LinkCoating {
+    /// Velocity in it, if known.
+    pub velocity: Option<f32>,
+    /// The velocity's standard uncertainty.
+    pub velocity_uncertainty: f32,
+}
+
+/// Some samples of a learned pulse, in their order: the first part begins at 0, each other where the one before ended.
+#[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
+pub struct PulsePart {
+    /// Number of the first of them.
+    pub first: u16,
+    /// The samples, at the set-up's sample rate.
+    pub samples: Vec<f32, PART_SAMPLES>,
+}
+
+/// Puts the pulse in force whose samples were sent.
+#[derive(Clone, Copy, Debug, PartialEq, Serialize, Deserialize)]
+pub struct TakePulse {
+    /// How many samples it has; 0: back to the pulse of the probe's data sheet.
+    pub samples: u16,
+    /// Its own noise over its peak.
+    pub noise: f32,
+    /// How far other shots' echoes differ from it.
+    pub mismatch: f32,
+    /// Thickness of the block that it was learned on, if known.
+    pub learned_on: Option<f32>,
+    /// [`crate::link::crc_of_samples`] of them.
+    pub crc: u32,
 }
 
 impl SetUp {
@@ -136,7 +185,10 @@ impl SetUp {
             },
             window: [setup.window.from.get(), setup.window.to.get()],
             coverage_factor: setup.coverage_factor,
-            coating: setup.coating.map(|coating| coating.velocity.get()),
+            coating: setup.coating.map(|coating| LinkCoating {
+                velocity: coating.velocity.map(MetresPerSecond::get),
+                velocity_uncertainty: coating.velocity_standard_uncertainty.get(),
+            }),
             roughness: setup.roughness.get(),
             calibrated: setup.calibrated.map(|range| [range.from.get(), range.to.get()]),
             element_diameter_uncertainty: setup.probe.element_diameter_uncertainty,
@@ -151,10 +203,20 @@ impl SetUp {
             part_temperature: (setup.material.temperature)
                 .and_then(|follows| follows.part)
                 .map(|part| [part.temperature.get(), part.standard_uncertainty.get()]),
+            signs: [
+                number_of(setup.probe.back_wall_sign),
+                number_of(setup.probe.interface_sign),
+            ],
+            trigger_jitter: setup.trigger_jitter.get(),
+            radius: match setup.surface {
+                Surface::Flat => 0.0,
+                Surface::Convex(radius) => radius.get(),
+                Surface::Concave(radius) => -radius.get(),
+            },
         }
     }
 
-    /// The set-up it stands for; `None` for a kind, face or span that does not exist. Values are not
+    /// The set-up it stands for; `None` for a kind, face, span or sign that does not exist. Values are not
     /// checked: making or changing a gauge does that.
     #[must_use]
     pub fn setup(&self) -> Option<GaugeSetup> {
@@ -175,6 +237,7 @@ impl SetUp {
             2 => Span::BackWallToBackWall,
             _ => return None,
         };
+        let [back_wall_sign, interface_sign] = self.signs;
         let [velocity, velocity_uncertainty] = self.velocity;
         let [offset, offset_uncertainty, correlation] = self.zero;
         let [from, to] = self.window;
@@ -194,9 +257,8 @@ impl SetUp {
                 }),
                 separation: (self.separation)
                     .map(|[distance, u]| ElementSeparation::new(Metres::new(distance), Metres::new(u))),
-                // The link carries no learned pulse, so no sign can be known.
-                back_wall_sign: EchoSign::Unknown,
-                interface_sign: EchoSign::Unknown,
+                back_wall_sign: sign_of(back_wall_sign)?,
+                interface_sign: sign_of(interface_sign)?,
             },
             material: Material {
                 velocity: MetresPerSecond::new(velocity),
@@ -226,21 +288,55 @@ impl SetUp {
                 to: Seconds::new(to),
             },
             coverage_factor: self.coverage_factor,
-            coating: self.coating.map(|velocity| Coating {
-                velocity: MetresPerSecond::new(velocity),
+            coating: self.coating.map(|coating| Coating {
+                velocity: coating.velocity.map(MetresPerSecond::new),
+                velocity_standard_uncertainty: MetresPerSecond::new(coating.velocity_uncertainty),
             }),
             roughness: Metres::new(self.roughness),
             calibrated: self.calibrated.map(|[from, to]| CalibratedRange {
                 from: Metres::new(from),
                 to: Metres::new(to),
             }),
-            // The link carries none: the board's clock fires its pulser.
-            trigger_jitter: Seconds::ZERO,
+            trigger_jitter: Seconds::new(self.trigger_jitter),
+            surface: if self.radius == 0.0 {
+                Surface::Flat
+            } else if self.radius < 0.0 {
+                Surface::Concave(Metres::new(-self.radius))
+            } else {
+                Surface::Convex(Metres::new(self.radius))
+            },
         })
     }
 }
 
-/// [`Message::SetUpTaken`] for a kind, face or span that does not exist.
+const fn number_of(sign: EchoSign) -> u8 {
+    match sign {
+        EchoSign::Unknown => 0,
+        EchoSign::AsPulse => 1,
+        EchoSign::Inverted => 2,
+    }
+}
+
+const fn sign_of(number: u8) -> Option<EchoSign> {
+    match number {
+        0 => Some(EchoSign::Unknown),
+        1 => Some(EchoSign::AsPulse),
+        2 => Some(EchoSign::Inverted),
+        _ => None,
+    }
+}
+
+/// [`Message::PulseTaken`] where parts are missing, where a reading came between them, or where the check sum is not theirs.
+pub const PULSE_INCOMPLETE: u8 = 5;
+
+/// What [`Message::PulseTaken`] says about a pulse that the core refused: 2 a wrong value, 3 a pulse that does not fit, or that
+/// holds no echo. After a 3 the pulse of the probe's data sheet is in force.
+#[must_use]
+pub const fn pulse_error_code(error: &SetupError) -> u8 {
+    setup_error_code(error)
+}
+
+/// [`Message::SetUpTaken`] for a kind, face, span or sign that does not exist.
 pub const UNKNOWN_CHOICE: u8 = 1;
 
 /// What [`Message::SetUpTaken`] says about a set-up that the core refused: 2 a wrong value, 3 a pulse
@@ -313,12 +409,21 @@ pub struct LinkReading {
     pub standard_uncertainty: f32,
     /// k of the expanded uncertainty.
     pub coverage_factor: f32,
-    /// The coating and its standard uncertainty.
-    pub coating: Option<[f32; 2]>,
+    /// What is shown of the coating.
+    pub coating: Option<LinkCoatingReading>,
     /// Probability that another cycle was read.
     pub wrong_cycle_probability: f32,
     /// The doubts, as [`halfpulse::Doubts::bits`].
     pub doubts: u32,
+}
+
+/// A coating that was read.
+#[derive(Clone, Copy, Debug, PartialEq, Serialize, Deserialize)]
+pub struct LinkCoatingReading {
+    /// The time down and up through it, with its standard uncertainty.
+    pub round_trip: [f32; 2],
+    /// Its thickness with its standard uncertainty, if its velocity is known.
+    pub thickness: Option<[f32; 2]>,
 }
 
 /// Where one echo is.

@@ -10,10 +10,11 @@ pub mod message;
 pub mod port;
 pub mod refusal;
 
-pub use frame::{FRAME_CAPACITY, FrameError, crc_of_bytes, crc_of_codes};
+pub use frame::{FRAME_CAPACITY, FrameError, crc_of_bytes, crc_of_codes, crc_of_samples};
 pub use message::{
-    Done, EchoPlace, Fire, FrontEndFault, GainChoice, Hello, LinkReading, LinkReport, Message, NotFired, Outcome,
-    PROTOCOL, SetUp, Status, Take, UNKNOWN_CHOICE, setup_error_code,
+    Done, EchoPlace, Fire, FrontEndFault, GainChoice, Hello, LinkCoating, LinkCoatingReading, LinkReading, LinkReport,
+    Message, NotFired, Outcome, PART_SAMPLES, PROTOCOL, PULSE_INCOMPLETE, PulsePart, SetUp, Status, Take, TakePulse,
+    UNKNOWN_CHOICE, pulse_error_code, setup_error_code,
 };
 pub use port::{Counts, LinkError, Port, SharedPort};
 pub use refusal::Refusal;

@@ -119,6 +119,9 @@ fn same_bits(gauge: &mut EmulatedGauge, count: u32) -> Result<Tally, String> {
         if in_force != Some(place.setup) {
             let answer = gauge.conversation.set_up(&place.setup, PATIENCE);
             answer.map_err(|error| format!("{}: {error}", place.name))?;
+            let (samples, quality) = place.pulse.clone().unwrap_or_default();
+            let answer = gauge.conversation.teach_pulse(&samples, quality, PATIENCE);
+            answer.map_err(|error| format!("{}: {error}", place.name))?;
             in_force = Some(place.setup);
         }
         *gauge.front_end() = place.receiver();
@@ -134,7 +137,10 @@ fn same_bits(gauge: &mut EmulatedGauge, count: u32) -> Result<Tally, String> {
             Outcome::Reading(reading) => {
                 tally.readings += 1;
                 tally.doubted += u32::from(reading.doubts != 0);
-                tally.numbers += 5 + 2 * u32::from(reading.coating.is_some());
+                let coating = reading
+                    .coating
+                    .map(|coating| 2 + 2 * u32::from(coating.thickness.is_some()));
+                tally.numbers += 5 + coating.unwrap_or(0);
             }
             Outcome::NoReading(_) => {
                 tally.refusals += 1;
@@ -165,6 +171,10 @@ fn progress(done: u32, all: u32, what: &str) {
 fn compare(place: &Place, report: &LinkReport, shots: &[FiredShot]) -> Result<(), String> {
     let mut scratch = Box::new(Scratch::<CAPACITY>::ZERO);
     let mut gauge = Gauge::new(place.setup, scratch.workspace()).map_err(|error| error.to_string())?;
+    if let Some((samples, quality)) = &place.pulse {
+        let learned = gauge.learn_pulse_of_quality(samples, *quality);
+        learned.map_err(|error| error.to_string())?;
+    }
     let (mut codes, mut sums) = (vec![0i16; CAPACITY], vec![0i32; CAPACITY]);
 
     let wanted = usize::from(report.shots);

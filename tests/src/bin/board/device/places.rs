@@ -2,7 +2,8 @@
 //! number of shots. A place depends on its number alone.
 
 use crate::records::scene_of;
-use halfpulse::GaugeSetup;
+use halfpulse::echo::pulse::PulseQuality;
+use halfpulse::{EchoSign, GaugeSetup, Metres, Seconds, Span, Surface, math};
 use halfpulse_app::link::frame::write_frame;
 use halfpulse_app::link::{GainChoice, LinkReport, Message, Take};
 use halfpulse_mps2::canned::RECORDS;
@@ -19,18 +20,54 @@ pub struct Base {
     name: &'static str,
     scene: Scene,
     setup: GaugeSetup,
+    pulse: Option<LearnedPulse>,
 }
 
-/// The scenes of the canned records.
+/// A learned pulse with its quality.
+pub type LearnedPulse = (Vec<f32>, PulseQuality);
+
+/// A calibrated gauge: signs, jitter, curvature, and a pulse that was learned on a block, here a skewed one of 5 MHz.
+fn calibrated(base: &Base) -> Base {
+    let pulse = (-40i8..=40).map(|place| {
+        let t = f32::from(place) / 50.0;
+        let spread = if t < 0.0 { 0.11 } else { 0.14 };
+        math::exp(-t * t / (2.0 * spread * spread)) * math::cos(std::f32::consts::TAU * 5.0 * t + 0.4)
+    });
+    let quality = PulseQuality {
+        noise: 0.002,
+        mismatch: 0.02,
+        learned_on: Some(Metres::from_mm(25.0)),
+    };
+    let mut setup = base
+        .setup
+        .with_trigger_jitter(Seconds::from_ns(1.0))
+        .with_surface(Surface::Convex(Metres::from_mm(20.0)));
+    setup.span = Span::TransmissionPulseToBackWall;
+    setup.zero = setup.zero.with_learned_on(Metres::ZERO);
+    setup.probe = setup.probe.with_signs(EchoSign::AsPulse, EchoSign::Unknown);
+    Base {
+        name: "calibrated-steel-10-mm",
+        scene: base.scene.clone(),
+        setup,
+        pulse: Some((pulse.collect(), quality)),
+    }
+}
+
+/// The scenes of the canned records, and the first once more with a calibrated gauge.
 pub fn bases() -> Result<Vec<Base>, String> {
     let base = |record: &halfpulse_mps2::canned::Canned| {
         Ok(Base {
             name: record.name,
             scene: scene_of(record.name)?,
             setup: record.setup,
+            pulse: None,
         })
     };
-    RECORDS.iter().map(base).collect()
+    let mut bases = RECORDS.iter().map(base).collect::<Result<Vec<Base>, String>>()?;
+    if let Some(first) = bases.first().map(calibrated) {
+        bases.push(first);
+    }
+    Ok(bases)
 }
 
 /// One place with the request for its reading.
@@ -40,6 +77,8 @@ pub struct Place {
     pub name: String,
     /// The set-up of the gauge.
     pub setup: GaugeSetup,
+    /// The pulse that it was calibrated with; the data sheet's without.
+    pub pulse: Option<LearnedPulse>,
     /// The request.
     pub take: Take,
     scene: Scene,
@@ -79,6 +118,7 @@ impl Place {
         Self {
             name: format!("{} {:.3} mm, {shots} shots", base.name, scene.wall.thickness_mm),
             setup: base.setup,
+            pulse: base.pulse.clone(),
             take: Take {
                 number,
                 shots,
