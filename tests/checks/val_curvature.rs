@@ -87,7 +87,9 @@ fn val_pipes_within_the_limit_and_beyond() {
                     let beyond = curved.doubts.contains(Doubt::CurvedSurface);
                     beyond_limit += u32::from(beyond);
                     let limit = (5.0 * diameter).max(25.4);
-                    assert_eq!(beyond, radius < limit);
+                    assert!(beyond || radius >= limit, "{face:?} {diameter} {radius} {span:?}");
+                    // No pipe as wide as this is doubted for its curvature.
+                    assert!(!beyond || radius < 499.0, "{face:?} {diameter} {radius} {span:?}");
                     assert!(
                         !curved.doubts.is_empty() || moved.abs() < expanded,
                         "{face:?} {diameter} {radius} {span:?}"

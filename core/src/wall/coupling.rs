@@ -13,9 +13,9 @@ use core::f32::consts::{PI, TAU};
 /// taken to be.
 pub const STEEL_IMPEDANCE: f32 = 46.47e6;
 /// Impedance of the couplant film, oil, in Rayl.
-const FILM_IMPEDANCE: f32 = 1.51e6;
+pub(super) const FILM_IMPEDANCE: f32 = 1.51e6;
 /// Velocity in the couplant film in metres per second.
-const FILM_VELOCITY: f32 = 1740.0;
+pub(super) const FILM_VELOCITY: f32 = 1740.0;
 
 /// Acoustic impedance of the probe's face in Rayl.
 #[must_use]
@@ -75,7 +75,7 @@ pub fn largest_reflection_advance(face: ProbeFace, part_impedance: f32, frequenc
 }
 
 /// Impedance of the part over that of the film's compliance.
-fn spring(part_impedance: f32, omega: f32, film: Metres) -> f32 {
+pub(super) fn spring(part_impedance: f32, omega: f32, film: Metres) -> f32 {
     omega * film.get() * part_impedance / (FILM_IMPEDANCE * FILM_VELOCITY)
 }
 

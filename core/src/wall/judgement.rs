@@ -294,7 +294,6 @@ pub fn doubts(evidence: &Evidence<'_>, wrong_cycle: f32) -> Doubts {
     let Evidence {
         setup,
         train,
-        times,
         wall,
         expanded,
         ..
