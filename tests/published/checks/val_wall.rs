@@ -161,7 +161,10 @@ fn val_coating_by_layer_arithmetic() {
         let found = f64::from(coating(&coat, left).expect("a velocity").0.as_mm());
         assert!((found - coat_mm).abs() < 1e-5, "{coat_mm} mm: {found}");
         // Without a velocity the time is all there is.
-        assert!((f64::from(left.time.as_us()) - 2e3 * coat_mm / coat_velocity).abs() < 1e-5, "{left:?}");
+        assert!(
+            (f64::from(left.time.as_us()) - 2e3 * coat_mm / coat_velocity).abs() < 1e-5,
+            "{left:?}"
+        );
         assert_eq!(coating(&Coating::UNKNOWN, left), None);
     }
 }
