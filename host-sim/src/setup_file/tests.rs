@@ -163,10 +163,26 @@ fn every_fault_names_line_and_remedy() {
             "velocity_m_s = -5920.0",
             "s.toml:14: [material] velocity_m_s: ",
         ),
+        // A coating may be of unknown velocity, but what is stated of a velocity needs one.
         (
             "velocity_m_s = 2300.0",
-            "",
-            "s.toml:16: [coating] velocity_m_s: is missing",
+            "velocity_standard_uncertainty_m_s = 50",
+            "s.toml:17: [coating] velocity_standard_uncertainty_m_s: belongs to a velocity",
+        ),
+        (
+            "velocity_m_s = 2300.0",
+            "velocity_m_s = 2300.0\nvelocity_standard_uncertainty_m_s = -1",
+            "s.toml:18: [coating] velocity_standard_uncertainty_m_s: ",
+        ),
+        (
+            "[coating]",
+            "[part]\nouter_radius_mm = 0\n[coating]",
+            "s.toml:17: [part] outer_radius_mm: ",
+        ),
+        (
+            "[material]",
+            "reference_pulse_learned_on_mm = -1\n[material]",
+            "s.toml:12: [probe] reference_pulse_learned_on_mm: ",
         ),
         (
             "from_us = 0.5",
