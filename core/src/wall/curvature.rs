@@ -156,11 +156,11 @@ mod tests {
     fn val_gap_under_a_flat_probe() {
         // Made with NumPy: R - sqrt(R² - D²/4) in double precision, in µm.
         for (diameter, radius, um) in [
-            (6.0, 10.0, 460.607_99),
-            (6.0, 25.0, 180.652_71),
-            (10.0, 25.0, 505.102_57),
-            (10.0, 50.0, 250.628_14),
-            (10.0, 100.0, 125.078_22f32),
+            (6.0, 10.0, 460.608),
+            (6.0, 25.0, 180.652_7),
+            (10.0, 25.0, 505.102_6),
+            (10.0, 50.0, 250.628_1),
+            (10.0, 100.0, 125.078_2f32),
         ] {
             let found = gap(Metres::from_mm(radius), Metres::from_mm(diameter)).get() * 1e6;
             assert!((found - um).abs() < 1e-4 * um, "{diameter} on {radius}: {found}");
