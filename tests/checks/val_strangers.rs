@@ -50,9 +50,7 @@ fn painted(wall_mm: f64, paint_mm: f64) -> Scene {
 #[test]
 fn val_reverberations_of_a_coating() {
     let mut scratch = Box::new(Scratch::<4096>::ZERO);
-    let setup = setup().with_coating(Coating {
-        velocity: MetresPerSecond::new(EPOXY),
-    });
+    let setup = setup().with_coating(Coating::new(MetresPerSecond::new(EPOXY), MetresPerSecond::ZERO));
     let mut gauge = Gauge::new(setup, scratch.workspace()).expect("the set-up is sound");
     let (mut undoubted, mut rounds, walls) = (0u32, 0u32, 40u8);
     for number in 0..walls {

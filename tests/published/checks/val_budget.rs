@@ -337,7 +337,10 @@ fn val_coating_by_derivatives() {
         |_, _| 0.0,
     );
     let (_, coat) = coating(&paint, left).expect("a velocity");
-    assert!((f64::from(coat.get()) / in_coating - 1.0).abs() < 1e-4, "{coat:?} {in_coating}");
+    assert!(
+        (f64::from(coat.get()) / in_coating - 1.0).abs() < 1e-4,
+        "{coat:?} {in_coating}"
+    );
     // Beam, film and V of the first back wall and of the period hang together: they add up before they are squared. Their
     // sizes are checked elsewhere (`val_way`, `val_beam_and_film`).
     let (pulse, train) = (Span::TransmissionPulseToBackWall, Span::BackWallToBackWall);
