@@ -248,6 +248,12 @@ fn search_in_the_stated_memory() {
                 (found.position.samples_after(wide.position)).abs() < 1e-3,
                 "{found:?} {wide:?}"
             );
+            // At the edge of the reach as in its middle, the side lobes half a cycle off included.
+            let mut plenty = vec![0.0; 2048];
+            let edge =
+                estimate(Estimator::LeastSquares, &codes, &search(200, 12.0), pulse, &mut plenty).expect("an echo");
+            assert!((edge.group_lag - wide.group_lag).abs() < 1e-3, "{edge:?} {wide:?}");
+            assert!((edge.sharpness - wide.sharpness).abs() < 1e-4, "{edge:?} {wide:?}");
             for entries in 0..33 {
                 let mut scratch = vec![0.0; entries];
                 if let Some(found) = estimate(Estimator::LeastSquares, &codes, &near, pulse, &mut scratch) {
@@ -268,6 +274,25 @@ fn search_in_the_stated_memory() {
             ),
             None
         );
+    });
+}
+
+/// A stronger echo just beyond the reach is not looked at, on either side.
+#[test]
+fn search_keeps_to_its_reach() {
+    with_pulse(|pulse| {
+        for beyond in [11.5, -11.5] {
+            let codes = codes(|t| 0.6 * gaussian(t - 200.0, 0.0, 0.6) + 0.72 * gaussian(t - 200.0 - beyond, 0.0, 0.6));
+            for (reach, expected) in [(8.0, 200.0), (12.0, 200.0 + beyond)] {
+                let search = Search {
+                    sign: Sign::Positive,
+                    ..search(200, reach)
+                };
+                let found = estimate(Estimator::LeastSquares, &codes, &search, pulse, &mut [0.0; 512]);
+                let place = f64::from(found.expect("an echo").position.as_samples());
+                assert!((place - expected).abs() < 1.0, "{beyond}, reach {reach}: {place}");
+            }
+        }
     });
 }
 
