@@ -164,19 +164,14 @@ impl Between {
 #[inline(always)]
 fn dot(weights: &[f32; 2 * REACH], taps: &[f32; 2 * REACH]) -> f32 {
     let mut sum = 0.0;
-    let (weights, taps) = (weights.as_chunks::<10>().0, taps.as_chunks::<10>().0);
+    let (weights, taps) = (weights.as_chunks::<5>().0, taps.as_chunks::<5>().0);
     for (w, x) in weights.iter().zip(taps) {
-        let ([a, b, c, d, e, f, g, h, i, j], [k, l, m, n, o, p, q, r, s, t]) = (w, x);
+        let ([a, b, c, d, e], [k, l, m, n, o]) = (w, x);
         sum += a * k;
         sum += b * l;
         sum += c * m;
         sum += d * n;
         sum += e * o;
-        sum += f * p;
-        sum += g * q;
-        sum += h * r;
-        sum += i * s;
-        sum += j * t;
     }
     sum
 }

@@ -6,6 +6,7 @@
 #[cfg(target_os = "none")]
 mod app {
     use core::cell::RefCell;
+    use core::mem::MaybeUninit;
     use cortex_m_rt::entry;
     use halfpulse::{Gauge, Scratch};
     use halfpulse_app::acquire::{FrontEnd, ShotCounts};
@@ -22,27 +23,49 @@ mod app {
         static mut SCRATCH: Scratch<CAPACITY> = Scratch::ZERO;
         static mut CODES: [i16; CAPACITY] = [0; CAPACITY];
         static mut SUMS: [i32; CAPACITY] = [0; CAPACITY];
+        static mut GAUGE: MaybeUninit<Gauge<'static>> = MaybeUninit::uninit();
         let board = Board::start();
+        let Some(gauge) = start(GAUGE, SCRATCH) else {
+            board::exit(false)
+        };
+        run(
+            board,
+            gauge,
+            RecordMemory {
+                codes: CODES,
+                sums: SUMS,
+            },
+        )
+    }
+
+    /// Apart, so that its memory is not on the stack while the gauge is made.
+    #[inline(never)]
+    fn run(board: Board, gauge: &'static mut Gauge<'static>, memory: RecordMemory<'static>) -> ! {
         let port = RefCell::new(Port::new(board.serial));
         let link = SharedPort::new(&port);
-        // Not taken out of its result: that would be a second copy on the stack.
-        let mut made = Gauge::new(FIRST_SETUP, SCRATCH.workspace());
-        let Ok(gauge) = &mut made else { board::exit(false) };
         let front_end = FrontEnd {
             receiver: RemoteReceiver::new(link, board.samples, board.delay, PATIENCE_US),
             delay: board.delay,
             plan: PLAN,
             counts: ShotCounts::default(),
         };
-        let memory = RecordMemory {
-            codes: CODES,
-            sums: SUMS,
-        };
         let mut app = App::new(link, front_end, gauge, memory, LogSink, board::stack_used);
         defmt::info!("gauge ready: records of up to {=usize} samples", CAPACITY);
         while app.step() != Step::Finished {}
         defmt::info!("good-bye after {=u32} reports", app.status().reports);
         board::exit(true)
+    }
+
+    /// Puts a gauge where it stays: it is a third of what the stack would have to hold.
+    #[inline(never)]
+    fn start(
+        place: &'static mut MaybeUninit<Gauge<'static>>,
+        scratch: &'static mut Scratch<CAPACITY>,
+    ) -> Option<&'static mut Gauge<'static>> {
+        match Gauge::new(FIRST_SETUP, scratch.workspace()) {
+            Ok(gauge) => Some(place.write(gauge)),
+            Err(_) => None,
+        }
     }
 }
 

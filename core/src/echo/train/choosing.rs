@@ -273,7 +273,14 @@ fn score(hypothesis: &mut Hypothesis, teeth: &Teeth, rules: &Rules<'_>, toleranc
                     hypothesis.last = number;
                 }
             }
-            None => sum += missing,
+            None => {
+                sum += missing;
+                // Not even all echoes that are left could still raise the score.
+                let left = teeth.len().saturating_sub(index) as f32;
+                if sum + left * GAIN_LIMIT < hypothesis.score {
+                    break;
+                }
+            }
         }
         number += 1;
     }

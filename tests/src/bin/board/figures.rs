@@ -15,8 +15,14 @@ pub struct Budget {
     pub instructions: u64,
     /// The same with the question whether an echo is two.
     pub instructions_with_separation: u64,
+    /// The same for the costliest record that a search has found (`cargo board worst`).
+    pub instructions_of_worst_record: u64,
     /// Code and constants.
     pub flash_bytes: u64,
+    /// The core's share of them, and that of the mathematics it brings.
+    pub flash_of_core_bytes: u64,
+    /// Scratch memory beyond codes and sums of averages.
+    pub scratch_bytes: u64,
     /// Variables.
     pub static_ram_bytes: u64,
     /// The deepest call of a measurement.
@@ -40,6 +46,7 @@ pub fn run(checks: &mut Checks) -> Result<(), Trouble> {
     let file = toolchain.build_measure_anyhow()?;
     let costs = parse(&emulator::run(&file)?).map_err(Trouble::Failed)?;
     let sizes = image::sizes(&file).map_err(Trouble::Failed)?;
+    let scratch = image::variable(&file, "::SCRATCH").map_err(Trouble::Failed)?;
     let records: u64 = RECORDS.iter().map(|record| record.file.len() as u64).sum();
 
     say!(
@@ -68,6 +75,7 @@ pub fn run(checks: &mut Checks) -> Result<(), Trouble> {
     };
     let separated = costs.iter().map(|cost| whole(&cost.record)).max().unwrap_or(u64::MAX);
     let stack = costs.iter().map(|cost| cost.stack).max().unwrap_or(u64::MAX);
+    let core = image::flash_of_core(&file, records).map_err(Trouble::Failed)?;
     say!("\nCortex-M4F, {toolchain}; instructions as executed, not cycles; records of 4096 samples");
     let code = image::code_by_crate(&file).map_err(Trouble::Failed)?;
     let largest: Vec<String> = code
@@ -97,6 +105,20 @@ pub fn run(checks: &mut Checks) -> Result<(), Trouble> {
             "bytes of flash without the canned records",
             sizes.flash.saturating_sub(records),
             budget.flash_bytes,
+        ),
+        (
+            "flash_of_core",
+            "of it the core, separation and texts included",
+            "bytes of flash that are not the image's own: core, its texts and mathematics",
+            core,
+            budget.flash_of_core_bytes,
+        ),
+        (
+            "scratch",
+            "scratch memory for 4096 samples, beyond the codes",
+            "bytes of scratch memory for 4096 samples",
+            scratch,
+            budget.scratch_bytes,
         ),
         (
             "static_ram",

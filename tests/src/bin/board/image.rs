@@ -56,6 +56,64 @@ pub fn code_by_crate(file: &Path) -> Result<Vec<(String, u64)>, String> {
     Ok(crates)
 }
 
+/// Bytes of flash that are the core's and that of the mathematics it brings: all that is loaded, less what the image's own crates
+/// and the start-up code name theirs, less `given` (files that the image only carries). What nobody names, as
+/// constants and texts, counts as the core's, so that this is rather too much than too little.
+pub fn flash_of_core(file: &Path, given: u64) -> Result<u64, String> {
+    let flash = sizes(file)?.flash;
+    let bytes = read(file)?;
+    let elf = parse(file, &bytes)?;
+    let mut others = given;
+    for symbol in elf.symbols().filter(|symbol| symbol.size() > 0) {
+        let section = symbol
+            .section_index()
+            .and_then(|index| elf.section_by_index(index).ok());
+        let is_loaded = section.is_some_and(|section| {
+            let header = section.elf_section_header();
+            header.sh_flags(Endianness::Little) & object::elf::SHF_ALLOC != object::elf::SectionFlags(0)
+                && header.sh_type(Endianness::Little) != object::elf::SHT_NOBITS
+        });
+        if is_loaded && is_of_the_image(&format!("{:#}", rustc_demangle::demangle(symbol.name().unwrap_or("?")))) {
+            others += symbol.size();
+        }
+    }
+    Ok(flash.saturating_sub(others))
+}
+
+/// Code and constants of the board, the image and their start-up code.
+fn is_of_the_image(name: &str) -> bool {
+    let name = name.trim_start_matches(['<', '&']);
+    let own = [
+        "halfpulse_mps2::",
+        "halfpulse_app::",
+        "measure::",
+        "cortex_m",
+        "defmt::",
+    ];
+    let start_up = [
+        "Reset",
+        "main",
+        "HardFault",
+        "DefaultPreInit",
+        "DefaultHandler",
+        "__INTERRUPTS",
+        "__EXCEPTIONS",
+        "__syscall",
+    ];
+    own.iter().any(|own| name.starts_with(own)) || start_up.iter().any(|start_up| name.starts_with(start_up))
+}
+
+/// Size of the largest variable whose name ends like this.
+pub fn variable(file: &Path, ending: &str) -> Result<u64, String> {
+    let bytes = read(file)?;
+    let elf = parse(file, &bytes)?;
+    let sizes = elf.symbols().filter_map(|symbol| {
+        let name = format!("{:#}", rustc_demangle::demangle(symbol.name().unwrap_or("?")));
+        name.ends_with(ending).then_some(symbol.size())
+    });
+    sizes.max().ok_or_else(|| format!("{} has no {ending}", file.display()))
+}
+
 /// Every call of a panicking function of the core library from one that is not: `caller -> callee`.
 /// Empty for an image in which no panic can be reached.
 pub fn panic_calls(file: &Path) -> Result<BTreeSet<String>, String> {
@@ -157,6 +215,26 @@ mod tests {
         assert_eq!(branch_targets(0x8000, &[0x00, 0xf0, 0xfe, 0xbf]), [0x9000]);
         // movw r0, #0xf000 holds the pattern of a branch in neither half: f24f 0000
         assert_eq!(branch_targets(0x8000, &[0x4f, 0xf2, 0x00, 0x00]), [0u64; 0]);
+    }
+
+    #[test]
+    fn the_core_is_told_from_the_image() {
+        for name in [
+            "halfpulse::gauge::Gauge::measure",
+            "<halfpulse::outcome::NoReading as core::fmt::Display>::fmt",
+            "libm::math::expf",
+            "memcpy",
+        ] {
+            assert!(!is_of_the_image(name), "{name}");
+        }
+        for name in [
+            "halfpulse_mps2::canned::RECORDS",
+            "<halfpulse_mps2::printout::Line<S>>::word",
+            "measure::app::read",
+            "__INTERRUPTS",
+        ] {
+            assert!(is_of_the_image(name), "{name}");
+        }
     }
 
     #[test]

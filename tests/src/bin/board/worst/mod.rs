@@ -90,7 +90,7 @@ pub fn run(checks: &mut Checks, write: bool) -> Result<(), Trouble> {
         fs::write(&file, text).map_err(|error| Trouble::Failed(format!("{}: {error}", file.display())))?;
         say!("{} written; now: cargo board records", file.display());
     }
-    let limit = budget.instructions_with_separation;
+    let limit = budget.instructions_of_worst_record;
     let told = format!("{} instructions, budget {limit}", most.cost());
     checks.check(
         "no_record_found_beyond_the_budget",
