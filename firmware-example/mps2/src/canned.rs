@@ -50,6 +50,9 @@ impl Canned {
     }
 }
 
+/// The record that is costliest to read of all that `cargo board worst` has searched; nothing that a technician meets.
+pub const COSTLIEST: &str = "costliest";
+
 /// Includes `records/NAME.npy`.
 macro_rules! record {
     ($name:literal, $setup:expr, $bits:literal, $first_sample_us:literal) => {
@@ -108,12 +111,13 @@ const FROM_TRANSMISSION_PULSE: GaugeSetup = GaugeSetup::new(
 );
 
 /// The records, in the order in which they are measured.
-pub static RECORDS: [Canned; 5] = [
+pub static RECORDS: [Canned; 6] = [
     record!("steel-10-mm", CONTACT, 12, 0.0),
     record!("painted-steel-6-mm", PAINTED, 12, 0.0),
     record!("delay-line-4-mm", DELAY_LINE, 12, 6.0),
     record!("aluminium-60-mm", FROM_TRANSMISSION_PULSE, 12, 0.0),
     record!("not-coupled", CONTACT, 12, 0.0),
+    record!("costliest", CONTACT, 12, 0.0),
 ];
 
 #[cfg(test)]

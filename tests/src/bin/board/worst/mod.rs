@@ -3,13 +3,13 @@
 //! Scenes are numbers between 0 and 1 ([`scenes`]). For every set-up a population is drawn, and in each round the costliest
 //! are kept, crossed and changed a little. What counts is the instructions of the emulated board itself, many records in one
 //! boot. Same seed, same search, same end. The costliest record that it found is committed as the canned record
-//! [`NAME`], whose cost `cargo board figures` holds against the budget.
+//! [`COSTLIEST`], whose cost `cargo board figures` holds against the budget.
 
 mod scenes;
 
 use crate::toolchain::{CORTEX_M4F, Toolchain, root};
 use crate::{Checks, Trouble, emulator};
-use halfpulse_mps2::canned::CAPACITY;
+use halfpulse_mps2::canned::{CAPACITY, COSTLIEST};
 use halfpulse_mps2::search::{HEADER, MOST_RECORDS, SETUPS};
 use halfpulse_sim::{Scene, synthesise};
 use halfpulse_tests::oracle::Random;
@@ -17,8 +17,6 @@ use scenes::{GENES, Genes, scene};
 use std::fs;
 use std::path::{Path, PathBuf};
 
-/// The canned record.
-pub const NAME: &str = "costliest";
 /// Seed of the search.
 const SEED: u64 = 5;
 /// Seed of every record, as of the canned ones.
@@ -100,7 +98,7 @@ pub fn run(checks: &mut Checks, write: bool) -> Result<(), Trouble> {
 }
 
 fn path() -> PathBuf {
-    root().join(format!("firmware-example/mps2/records/{NAME}.toml"))
+    root().join(format!("firmware-example/mps2/records/{COSTLIEST}.toml"))
 }
 
 fn file_of(scene: &Scene, setup: usize) -> Result<String, Trouble> {
