@@ -89,6 +89,7 @@ pub mod gauge;
 pub use echo::shots::{Jitter, ShotArrivals};
 pub use echo::{Echo, EchoList, EchoRole, Polarity};
 pub use gauge::two_gains::{TwoGains, TwoGainsError};
+pub use gauge::uncoupled::{TailFit, Uncoupled, UncoupledError};
 pub use gauge::{CoatingReading, CoatingThickness, Findings, Gauge, Reading};
 pub use outcome::{Doubt, Doubts, NoReading};
 pub use record::average::{AverageError, Averager, Interleaver};

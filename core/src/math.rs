@@ -211,7 +211,7 @@ pub const fn saturating_i32(x: f32) -> i32 {
 
 /// 1 / sqrt(3): the standard uncertainty of a rectangular distribution over its half-width
 /// (JCGM 100:2008, 4.3.7).
-pub(crate) const RECTANGULAR: f32 = 0.577_350_26;
+pub const RECTANGULAR: f32 = 0.577_350_26;
 
 /// The smaller of two. Unlike `f32::min` the result for ±0 does not depend on the machine: the
 /// first argument is kept unless the second is truly below it.

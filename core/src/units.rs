@@ -114,6 +114,11 @@ quantity! {
 }
 
 impl Seconds {
+    /// The longer of two times.
+    #[must_use]
+    pub fn longer(self, other: Self) -> Self {
+        if other > self { other } else { self }
+    }
     /// From nanoseconds.
     #[must_use]
     pub const fn from_ns(ns: f32) -> Self {

@@ -42,6 +42,7 @@ pub mod spelling;
 pub mod synthesise;
 #[cfg_attr(not(test), deny(clippy::disallowed_methods))]
 pub mod transducer;
+pub mod uncoupled;
 
 pub use scene::Scene;
 pub use synthesise::{Shot, Synthesiser, Truth, Variation, synthesise};

@@ -200,7 +200,7 @@ impl Surroundings<'_> {
 
 /// Standard deviations of an amplitude above which a peak is an echo and not grain: among the hundred independent values of a
 /// record, chance reaches 4.
-const STANDS_OUT: f32 = 6.0;
+pub(crate) const STANDS_OUT: f32 = 6.0;
 
 /// The least-squares arrival near `index`, within three quarters of a cycle. `None` if the pulse would stand out of
 /// the record.

@@ -12,6 +12,7 @@ use crate::record::{Record, SampleRange};
 use crate::setup::{EchoSign, GaugeSetup, ProbeKind, Span};
 use crate::units::Seconds;
 use crate::wall::thickness::{self, Timed, TrainTimes};
+use crate::wall::uncertainty;
 
 /// An interface echo is the first one that reaches this share of the strongest.
 const INTERFACE_SHARE: f32 = 0.35;
@@ -153,14 +154,14 @@ pub fn times(setup: &GaugeSetup, law: &PathLaw<'_>, record: &Record<'_>, train: 
     };
     let period = train.period_uncertainty.map(|u| {
         // Arrivals that scatter more than noise explains widen the period's uncertainty (Birge's
-        // ratio), once they do so beyond chance.
+        // ratio), once they do so beyond chance; but not by what the budget counts as phase between echoes.
         let limit = 1.0 + 3.0 * math::sqrt(2.0 / f32::from(train.freedom).max(1.0));
-        let ratio = if train.unevenness > limit {
-            math::sqrt(train.unevenness)
-        } else {
-            1.0
-        };
-        Timed::new(seconds(train.period), seconds(u * ratio))
+        let mut variance = u * u;
+        if train.unevenness > limit {
+            let phase = uncertainty::phase_of_echo(setup).get() * clock.rate.get() * train.contrast;
+            variance = math::larger(variance, variance * train.unevenness - phase * phase);
+        }
+        Timed::new(seconds(train.period), seconds(math::sqrt(variance)))
     });
     let interface = role(EchoRole::Interface).map(timed);
     let start = match (interface, thickness::wall_span(setup)) {
@@ -187,7 +188,9 @@ pub fn times(setup: &GaugeSetup, law: &PathLaw<'_>, record: &Record<'_>, train: 
         ))
     });
     if let Some(period) = period {
-        times = times.with_period(period, train.correlation);
+        times = times
+            .with_period(period, train.correlation)
+            .with_contrast(train.contrast);
     }
     if let Some(interface) = interface {
         times = times.with_interface(interface);

@@ -10,6 +10,7 @@ pub mod stage;
 mod steps;
 pub mod two_gains;
 mod two_rounds;
+pub mod uncoupled;
 
 use self::stage::{Stage, StageMeter};
 use crate::echo::noise::Noise;

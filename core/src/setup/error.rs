@@ -37,6 +37,8 @@ pub enum SetupError {
     ReferenceTemperature,
     /// The part's temperature is none, or its uncertainty is negative.
     PartTemperature,
+    /// The phase between echoes is negative, above 180° or not a number.
+    EchoPhase,
     /// The back wall's roughness is negative, above 100 mm or not a number.
     Roughness,
     /// The zero offset is not a number.
@@ -103,6 +105,7 @@ impl SetupError {
                 "temperature coefficient must be metres per second and kelvin that leave a velocity, from -1000 to 1000"
             }
             Self::ReferenceTemperature => "the velocity's temperature must be degrees Celsius, from -273.15 to 3000",
+            Self::EchoPhase => "the phase between echoes must lie from 0 to 180 degrees",
             Self::Roughness => "the back wall's roughness must lie from 0 to 100 mm",
             Self::PartTemperature => {
                 "the part's temperature must be degrees Celsius, from -273.15 to 3000, its standard uncertainty positive"

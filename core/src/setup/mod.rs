@@ -267,6 +267,11 @@ impl GaugeSetup {
         if !within(probe.couplant_film.get(), 0.0, 1.0) {
             return Some(SetupError::CouplantFilm);
         }
+        if let Some(degrees) = probe.echo_phase_degrees
+            && !within(degrees, 0.0, 180.0)
+        {
+            return Some(SetupError::EchoPhase);
+        }
         if let Some(line) = probe.delay_line
             && !(within(line.length.get(), 1e-6, 1e3) && within(line.velocity.get(), 1.0, 1e6))
         {
@@ -400,6 +405,10 @@ mod tests {
         assert_eq!(
             spoilt(|s| s.probe.couplant_film = Metres::new(-1e-6)),
             Some(SetupError::CouplantFilm)
+        );
+        assert_eq!(
+            spoilt(|s| s.probe.echo_phase_degrees = Some(f32::NAN)),
+            Some(SetupError::EchoPhase)
         );
         assert_eq!(
             spoilt(|s| s.probe.delay_line = Some(DelayLine {

@@ -38,6 +38,9 @@ pub struct TrainTimes {
     /// Correlation of the errors of first back wall and period, -1 to 1: two echoes of equal quality give
     /// -0.707, a joint fit of more tends to -0.87. 0 without a period.
     pub first_period_correlation: f32,
+    /// What errors of its own in each echo's arrival count in the period, [`crate::echo::train::Train::contrast`]: the root of 2 for two
+    /// back walls.
+    pub period_contrast: f32,
     /// Arrival of the interface echo; `None` if there is none.
     pub interface: Option<Timed>,
 }
@@ -50,6 +53,7 @@ impl TrainTimes {
             first_back_wall,
             period: None,
             first_period_correlation: 0.0,
+            period_contrast: core::f32::consts::SQRT_2,
             interface: None,
         }
     }
@@ -59,6 +63,13 @@ impl TrainTimes {
     pub const fn with_period(mut self, period: Timed, correlation: f32) -> Self {
         self.period = Some(period);
         self.first_period_correlation = correlation;
+        self
+    }
+
+    /// The same with a period from more echoes than two.
+    #[must_use]
+    pub const fn with_contrast(mut self, contrast: f32) -> Self {
+        self.period_contrast = contrast;
         self
     }
 

@@ -26,6 +26,8 @@ pub enum Source {
     Beam,
     /// The couplant film differs from the one at calibration.
     Coupling,
+    /// Coupling turns one echo of the record against another.
+    Phase,
     /// The part is warmer or colder than its velocity holds for.
     Temperature,
     /// The noise that the reference pulse itself was learned with.
@@ -47,6 +49,7 @@ impl Source {
             Self::Calibration => "calibration",
             Self::Beam => "beam",
             Self::Coupling => "coupling",
+            Self::Phase => "phase",
             Self::Temperature => "temperature",
             Self::ReferencePulse => "reference-pulse",
             Self::VPath => "v-path",
@@ -82,11 +85,22 @@ impl Budget {
     /// Adds a term; one that is zero, negative or not a number is left out.
     pub fn add(&mut self, source: Source, standard_uncertainty: Metres) {
         if standard_uncertainty.get() > 0.0 {
-            // Eight places for nine sources, of which calibration takes the place of zero: a full list cannot happen.
+            // Ten places for eleven sources, of which calibration takes the place of zero: a full list cannot happen.
             let _ = self.terms.push(Term {
                 source,
                 standard_uncertainty,
             });
+        }
+    }
+
+    /// Adds to a term that may be there, as the root of the sum of squares, what is `more` metres (k = 1).
+    pub(crate) fn widen(&mut self, source: Source, more: f32) {
+        match self.terms.iter_mut().find(|term| term.source == source) {
+            Some(term) => {
+                let known = term.standard_uncertainty.get();
+                term.standard_uncertainty = Metres::new(math::sqrt(known * known + more * more));
+            }
+            None => self.add(source, Metres::new(more)),
         }
     }
 
@@ -133,6 +147,7 @@ const DEEPEST: f32 = 2.5;
 /// | calibration | instead of the two before, where the set-up says that their errors are correlated; only what the part may differ from the blocks stays apart, as velocity |
 /// | beam | c / 2 times what is left of the diffraction shift, see [`way::beam_uncertainty`]; only if the element is known |
 /// | coupling | c / 2 times the shift by the couplant film, likewise |
+/// | phase | c / 2 times what coupling turns echoes of one record against each other by, see [`phase`]; only between two echoes |
 /// | temperature | d / c times what temperature does to the velocity, [`crate::setup::Material::temperature_uncertainty`] |
 /// | v-path | what the distance of a dual-element probe's elements may be off by moves the wall, see [`way::v_path_uncertainty`] |
 ///
@@ -155,12 +170,33 @@ pub fn budget(setup: &GaugeSetup, times: &TrainTimes, wall: Metres) -> Budget {
     budget.add(Source::Beam, moved * way::beam_uncertainty(setup, wall));
     let coupling = moved * coupling::half_width(&setup.probe, wall_span(setup));
     budget.add(Source::Coupling, coupling * RECTANGULAR);
+    budget.add(Source::Phase, moved * phase(setup, times));
     let temperature = setup.material.temperature_uncertainty() / setup.velocity();
     let by_velocity = way::gain(setup, wall) * way::gain(setup, wall);
     budget.add(Source::Temperature, (wall * temperature).abs() * by_velocity);
     budget.add(Source::VPath, way::v_path_uncertainty(setup, wall));
     budget.add(Source::Roughness, setup.roughness * (DEEPEST * RECTANGULAR));
     budget
+}
+
+/// What the phase between echoes ([`crate::setup::Probe::phase_between_echoes`]) does to a round trip that is read between echoes, as a standard
+/// uncertainty (k = 1): φ / ω for each echo, independent of the others', counted as the echoes count in the round trip.
+/// That is sqrt(2) φ / ω from interface to back wall, and [`TrainTimes::period_contrast`] times φ / ω between back walls. Nothing from the
+/// transmission pulse: there the zero's block had the like.
+#[must_use]
+pub fn phase(setup: &GaugeSetup, times: &TrainTimes) -> Seconds {
+    let contrast = match wall_span(setup) {
+        Span::TransmissionPulseToBackWall => return Seconds::ZERO,
+        Span::InterfaceToBackWall => core::f32::consts::SQRT_2,
+        Span::BackWallToBackWall => times.period_contrast,
+    };
+    phase_of_echo(setup) * contrast
+}
+
+/// What the phase between echoes does to the arrival of one, φ / ω, as a standard uncertainty (k = 1).
+#[must_use]
+pub fn phase_of_echo(setup: &GaugeSetup) -> Seconds {
+    setup.probe.centre_frequency.period() * (setup.probe.phase_between_echoes() / core::f32::consts::TAU)
 }
 
 /// What the noise in the reference pulse adds to a reading, as a standard uncertainty (k = 1).
@@ -269,7 +305,8 @@ pub fn excess_uncertainty(setup: &GaugeSetup, times: &TrainTimes, wall: Metres) 
     let v_path = (v_path * 2.0 / setup.velocity()).get();
     let film = coupling::half_width(&setup.probe, first.span) + coupling::half_width(&setup.probe, period.span);
     let film = film.get() * RECTANGULAR;
-    let variance = timing * timing + zero * zero + beam * beam + film * film + v_path * v_path;
+    let phase = (phase(&first, times) + phase(&period, times)).get();
+    let variance = timing * timing + zero * zero + beam * beam + film * film + v_path * v_path + phase * phase;
     Some(Seconds::new(math::sqrt(variance)))
 }
 
@@ -449,6 +486,41 @@ mod tests {
         setup.probe.couplant_film = Metres::new(2e-6);
         let film = term(&budget(&setup, &single(0.0), ten), Source::Coupling);
         assert!((film - 29.500_315 * 2.96 * RECTANGULAR).abs() < 0.03 * film);
+    }
+
+    #[test]
+    fn phase_between_echoes_counts_as_the_echoes_do() {
+        let wall = Metres::from_mm(10.0);
+        let period = Timed::new(Seconds::from_us(3.378), Seconds::ZERO);
+        let two = TrainTimes::single(period)
+            .with_period(period, -0.7)
+            .with_interface(period);
+        let of = |setup: &GaugeSetup, times: &TrainTimes| term(&budget(setup, times, wall), Source::Phase);
+        let zero = Zero::new(Seconds::ZERO, Seconds::ZERO);
+        let with = |probe: Probe, span| {
+            let mut setup = bare(probe, span, 0.0, zero);
+            setup.probe.couplant_film = Metres::new(2e-6);
+            setup
+        };
+        // Two degrees at 5 MHz are 1.111111 ns or 3.288889 µm of steel (by hand), sqrt(2) times that between two echoes.
+        let two_degrees = 3.288_889;
+        let hard = with(contact(), Span::BackWallToBackWall);
+        assert!((of(&hard, &two) - two_degrees * core::f32::consts::SQRT_2).abs() < 1e-4);
+        assert!((of(&hard, &two.with_contrast(0.5)) - two_degrees * 0.5).abs() < 1e-4);
+        // Half a degree under plastic; nothing from the transmission pulse, and nothing where the film cannot differ.
+        let delay_line = Probe::delay_line(Hertz::from_mhz(5.0), 0.6);
+        let plastic = with(delay_line, Span::InterfaceToBackWall);
+        assert!((of(&plastic, &two) - 0.25 * two_degrees * core::f32::consts::SQRT_2).abs() < 1e-4);
+        assert_eq!(of(&with(contact(), Span::TransmissionPulseToBackWall), &two), 0.0);
+        assert_eq!(of(&bare(contact(), Span::BackWallToBackWall, 0.0, zero), &two), 0.0);
+        // What is stated counts, film or not.
+        let stated = bare(
+            contact().with_echo_phase_degrees(4.0),
+            Span::BackWallToBackWall,
+            0.0,
+            zero,
+        );
+        assert!((of(&stated, &two) - 2.0 * two_degrees * core::f32::consts::SQRT_2).abs() < 1e-4);
     }
 
     #[test]

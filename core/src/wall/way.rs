@@ -283,7 +283,7 @@ fn remaining_shift(shift: impl Fn(Metres, Metres) -> Seconds, range: CalibratedR
     } else if wall < range.from {
         (to_thin, range.from - wall)
     } else {
-        return larger(to_thin, to_thick);
+        return to_thin.longer(to_thick);
     };
     let length = range.to - range.from;
     if length > Metres::ZERO {
@@ -304,9 +304,4 @@ pub fn unknown_beam_matters(setup: &GaugeSetup, wall: Metres, limit: Metres) -> 
     let mut smallest = *setup;
     smallest.probe.element_diameter = Some(setup.velocity() / setup.probe.centre_frequency * 2.0);
     setup.velocity() * 0.5 * beam_shift(&smallest, wall) > limit
-}
-
-/// The longer of two times.
-fn larger(a: Seconds, b: Seconds) -> Seconds {
-    if b > a { b } else { a }
 }

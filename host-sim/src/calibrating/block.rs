@@ -3,7 +3,9 @@
 use crate::input_error::InputError;
 use crate::measuring::{self, Shot};
 use crate::record_file::RecordFile;
+use halfpulse::echo::Polarity;
 use halfpulse::wall::thickness::Timed;
+use halfpulse::wall::uncertainty::Source;
 use halfpulse::{Echo, EchoRole, Gauge, GaugeSetup, Metres, Record, SampleClock, Seconds, Span};
 use std::path::{Path, PathBuf};
 
@@ -61,6 +63,10 @@ pub struct BlockTimes {
     pub interface: Option<Timed>,
     /// The period of the back walls, where there is one.
     pub period: Option<Timed>,
+    /// What the phase between echoes may have done to the period (k = 1); 0 without one.
+    pub period_phase: Seconds,
+    /// All back walls of the averaged record have the pulse's own sign.
+    pub upright: bool,
     /// The nearest echoes before and after the first back wall.
     pub neighbours: (Option<Seconds>, Option<Seconds>),
     /// The first back wall in each shot that shows it, with the shot's number.
@@ -136,6 +142,13 @@ pub fn measure(gauge: &mut Gauge<'_>, block: &BlockRecord, needs_period: bool) -
         }
         Err(_) => None,
     };
+    let period_phase = period.map_or(Seconds::ZERO, |trip| trip.phase);
+    let period = period.map(|trip| trip.timed);
+    let upright = echoes
+        .iter()
+        .filter(|echo| matches!(echo.role, EchoRole::BackWall(_)))
+        .chain([&back_wall])
+        .all(|echo| echo.polarity == Polarity::Positive);
     let expected = expected_trip(block, &setup);
     if let Some(period) = period
         && (period.time / expected - 1.0).abs() > UNKNOWN_VELOCITY
@@ -165,7 +178,9 @@ pub fn measure(gauge: &mut Gauge<'_>, block: &BlockRecord, needs_period: bool) -
         first_back_wall: timed(&back_wall, scatter.back_wall),
         deviation: gauge.path_deviation(block.thickness),
         interface: interface.map(|echo| timed(&echo, scatter.interface)),
-        period: period.map(|period| Timed::new(period.time, larger(period.standard_uncertainty, scatter.period))),
+        period: period.map(|period| Timed::new(period.time, period.standard_uncertainty.longer(scatter.period))),
+        period_phase,
+        upright,
         back_wall,
         neighbours,
         of_shots: scatter.of_shots,
@@ -176,28 +191,32 @@ fn expected_trip(block: &BlockRecord, setup: &GaugeSetup) -> Seconds {
     block.thickness * 2.0 / setup.material.velocity
 }
 
-fn larger(a: Seconds, b: Seconds) -> Seconds {
-    if b > a { b } else { a }
-}
-
 fn timed(echo: &Echo, scatter: Seconds) -> Timed {
-    Timed::new(echo.arrival, larger(echo.standard_uncertainty, scatter))
+    Timed::new(echo.arrival, echo.standard_uncertainty.longer(scatter))
 }
 
-/// Echoes of one shot, and its period: the reading times 2 / c, or why there is none.
-fn look(gauge: &mut Gauge<'_>, block: &BlockRecord, shot: &Shot) -> (Vec<Echo>, Result<Timed, String>) {
+/// A round trip, and what the phase between echoes may have done to it (k = 1).
+#[derive(Clone, Copy)]
+struct Trip {
+    timed: Timed,
+    phase: Seconds,
+}
+
+/// Echoes of one shot, and its round trip: the reading times 2 / c, or why there is none.
+fn look(gauge: &mut Gauge<'_>, block: &BlockRecord, shot: &Shot) -> (Vec<Echo>, Result<Trip, String>) {
     let record = Record::new(&shot.codes, shot.format, block.clock);
     let velocity = gauge.setup().material.velocity;
     let outcome = gauge.measure(&record);
     let period = match outcome {
         Ok(reading) => {
-            let timing = reading
-                .budget
-                .terms()
-                .iter()
-                .find(|term| term.source == halfpulse::wall::uncertainty::Source::Timing)
-                .map_or(Metres::ZERO, |term| term.standard_uncertainty);
-            Ok(Timed::new(reading.thickness * 2.0 / velocity, timing * 2.0 / velocity))
+            let of = |source: Source| {
+                let term = reading.budget.terms().iter().find(|term| term.source == source);
+                term.map_or(Metres::ZERO, |term| term.standard_uncertainty) * 2.0 / velocity
+            };
+            Ok(Trip {
+                timed: Timed::new(reading.thickness * 2.0 / velocity, of(Source::Timing)),
+                phase: of(Source::Phase),
+            })
         }
         Err(why) => Err(why.to_string()),
     };
@@ -209,8 +228,8 @@ fn period_of(
     gauge: &mut Gauge<'_>,
     block: &BlockRecord,
     setup: &GaugeSetup,
-    outcome: Result<Timed, String>,
-) -> Result<Timed, String> {
+    outcome: Result<Trip, String>,
+) -> Result<Trip, String> {
     if setup.span == Span::BackWallToBackWall {
         return outcome;
     }
@@ -293,7 +312,7 @@ fn scatter(
         }
         interfaces.extend(interface.and_then(|of| near(&echoes, of)).map(|(_, distance)| distance));
         if let (Some(of), Ok(this), Span::BackWallToBackWall) = (period, outcome, setup.span) {
-            periods.extend(Some(this.time - of.time).filter(|d| d.abs() < half_cycle));
+            periods.extend(Some(this.timed.time - of.time).filter(|d| d.abs() < half_cycle));
         }
     }
     Scatter {

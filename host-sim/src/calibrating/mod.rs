@@ -8,6 +8,10 @@
 //!    measures between: the first back wall; the first back wall after the interface; or the period for
 //!    the velocity and the first back wall for the zero.
 //!
+//! A pulse that was learned is a back wall, and where all back walls of the blocks have its sign, so will the parts': the
+//! new set-up says `back_wall_sign = "as-pulse"`, unless the old one keeps it `"unknown"`. That holds for walls with something soft
+//! behind them (air, water, oil), and for parts that are stiffer than the probe's face, as steel is.
+//!
 //! If only the velocity is learned, the set-up's zero is carried over to the new pulse: see `translated`.
 //!
 //! Uncertainties contain the thickness of the block, the noise of the averaged record or the scatter of
@@ -22,13 +26,15 @@ use crate::measuring::HeapScratch;
 use crate::setup_file::{CalibrationKeys, SetupFile, SetupKeys, checksum};
 use block::{BlockRecord, BlockTimes};
 use cut::LearnedPulse;
+use halfpulse::echo::Polarity;
 use halfpulse::echo::pulse::PulseQuality;
+use halfpulse::math::RECTANGULAR;
 use halfpulse::wall::calibration::{self, Block, CalibrationError};
 use halfpulse::wall::thickness::Timed;
 use halfpulse::wall::{coupling, way};
 use halfpulse::{
-    CalibratedRange, Celsius, DriftCheck, DriftState, GaugeSetup, Material, Metres, MetresPerSecond, NoReading,
-    Reading, Record, Seconds, Span, Zero,
+    CalibratedRange, Celsius, DriftCheck, DriftState, EchoSign, GaugeSetup, Material, Metres, MetresPerSecond,
+    NoReading, Reading, Record, Seconds, Span, Zero,
 };
 
 /// What shall be learned from the blocks, besides the reference pulse.
@@ -62,9 +68,6 @@ pub struct Calibrated {
     /// What was measured on each block.
     pub times: Vec<BlockTimes>,
 }
-
-/// Standard uncertainty over half-width of a rectangular distribution (JCGM 100:2008, 4.3.7).
-const RECTANGULAR: f32 = 0.577_350_26;
 
 /// How well the temperature of a block is known, where one is stated: its standard uncertainty (k = 1) in kelvin.
 const BLOCK_TEMPERATURE_UNCERTAINTY: Celsius = Celsius::new(1.0);
@@ -124,7 +127,21 @@ pub fn calibrate_at(
             "give --block 5.000mm=FILE",
         ));
     };
+    // Signs that the set-up states count from the pulse at hand. The one that is learned is a back wall itself.
+    let stated = setup.keys.probe.back_wall_sign;
+    let mut interface_sign = setup.keys.probe.interface_sign;
+    if before
+        .get(pulse_from)
+        .is_some_and(|times| times.back_wall.polarity == Polarity::Negative)
+    {
+        interface_sign = interface_sign.map(opposite);
+    }
+    core_setup.probe.interface_sign = interface_sign.unwrap_or_default();
+    if core_setup.probe.back_wall_sign != EchoSign::Unknown {
+        core_setup.probe.back_wall_sign = EchoSign::AsPulse;
+    }
     let learned = cut::learn_with_mismatch(&mut gauge, blocks, &before, pulse_from)?;
+    gauge.change_setup(core_setup).map_err(|error| setup.locate(error))?;
 
     let needs_period = core_setup.span == Span::BackWallToBackWall && learn != Learn::Zero;
     let mut times: Vec<BlockTimes> = blocks
@@ -157,6 +174,11 @@ pub fn calibrate_at(
         material = as_stated;
     }
     let mut keys = new_keys(setup, blocks, learn, (&zero, &material), &learned, pulse_name);
+    keys.probe.interface_sign = interface_sign;
+    // With the sign free on the blocks themselves, all of their back walls had the pulse's own: so will the parts'.
+    if stated != Some(EchoSign::Unknown) && times.iter().all(|times| times.upright) {
+        keys.probe.back_wall_sign = Some(EchoSign::AsPulse);
+    }
     if let Some(calibration) = &mut keys.calibration {
         calibration.temperature_c = temperature_c;
     }
@@ -173,6 +195,15 @@ pub fn calibrate_at(
         pulse_from,
         times,
     })
+}
+
+/// The same sign as a pulse upside down sees it.
+fn opposite(sign: EchoSign) -> EchoSign {
+    match sign {
+        EchoSign::Unknown => EchoSign::Unknown,
+        EchoSign::AsPulse => EchoSign::Inverted,
+        EchoSign::Inverted => EchoSign::AsPulse,
+    }
 }
 
 /// The material as the blocks have it, at their temperature.
@@ -375,9 +406,11 @@ fn velocity_from_periods(
         let mut between = *setup;
         between.span = Span::BackWallToBackWall;
         let beam = way::beam_uncertainty(&between, block.thickness) * (1.0 / RECTANGULAR);
+        let phase = times.period_phase * (1.0 / RECTANGULAR);
         let nothing = Zero::new(Seconds::ZERO, Seconds::ZERO);
         let (_, material) =
-            calibration::velocity_from_thickness(&as_block(block, period, &[film, beam]), &nothing).map_err(refusal)?;
+            calibration::velocity_from_thickness(&as_block(block, period, &[film, beam, phase]), &nothing)
+                .map_err(refusal)?;
         materials.push(material);
     }
     weighted(&materials)

@@ -10,6 +10,8 @@ use crate::input_error::InputError;
 use crate::measuring;
 use crate::record_file::{self, npy};
 use crate::setup_file::{SetupFile, span_word};
+use crate::uncoupled::StoredRecord;
+use halfpulse::Seconds;
 use halfpulse::echo::learning::ENOUGH_SHOTS;
 use std::io::Write;
 use std::path::{Path, PathBuf};
@@ -41,6 +43,12 @@ pub struct Arguments {
     /// The new set-up; its reference pulse is written beside it
     #[arg(short, long, value_name = "OUT.toml", required_unless_present = "check")]
     output: Option<PathBuf>,
+    /// Shots of the probe in air, at the gain in use: the transmission pulse's tail that will be taken off in the dead zone
+    #[arg(long, value_name = "FILE", conflicts_with = "check", requires = "uncoupled_from")]
+    uncoupled: Option<PathBuf>,
+    /// Where echoes are looked for then, in microseconds: some 0.3 us behind the last clipped sample
+    #[arg(long, value_name = "US", requires = "uncoupled")]
+    uncoupled_from: Option<f64>,
     /// Learn nothing: read the blocks with the set-up as it is, and say whether it still reads them right
     #[arg(long, conflicts_with_all = ["output", "learn", "date"])]
     check: bool,
@@ -76,6 +84,13 @@ cannot determine is refused.
   * The reference pulse is the mean of all shots, each moved to the same place. Record 128 shots or more: its own
     noise is that of a shot over their root. Its noise, and by how much other shots differ from it (mismatch),
     are noted in the set-up.
+  * Where all back walls of the blocks have the pulse's sign, the new set-up says back_wall_sign = \"as-pulse\":
+    half cycles are then told apart under another couplant film too. Write \"unknown\" into the old set-up where
+    something stiffer than the part may stand behind it, where the part may be softer than the probe's face, or where the
+    probe's leads may be swapped: a sign that no longer holds is doubted or refused, but not read.
+  * --uncoupled stores what the transmission pulse leaves in the dead zone: shots in air (64 or more), same gain, probe
+    and cable. read takes it off between --uncoupled-from and from_us only; what differs counts as noise, and another
+    gain or probe is refused (other-transmission-pulse). Coupling must not change the ringing.
   * A zero belongs to the pulse it was learned with: the new set-up names the pulse's file and its checksum.
   * --check reads blocks with the set-up as it is: within or outside, by how much, and what to do. Check before
     and after a series, on a block that the calibration did not use. Exit status: 0 all within, 2 some not,
@@ -118,6 +133,11 @@ pub fn run(arguments: &Arguments, out: &mut dyn Write) -> Result<Outcome, InputE
     if let Some(calibration) = &mut learned.keys.calibration {
         calibration.date = Some(date);
     }
+    if let (Some(file), Some(from_us)) = (&arguments.uncoupled, arguments.uncoupled_from) {
+        let measure = &mut learned.keys.measure;
+        measure.uncoupled_record = Some(keep_uncoupled(file, from_us, &setup, &blocks, output)?);
+        measure.uncoupled_from_us = Some(from_us);
+    }
     npy::write_pulse(&pulse_path, &learned.pulse)?;
     learned.keys.write(output)?;
     // What was written must be usable: read it as `read` will.
@@ -125,6 +145,44 @@ pub fn run(arguments: &Arguments, out: &mut dyn Write) -> Result<Outcome, InputE
     let report = report(&learned, &blocks, learn, output, &pulse_path);
     written(out.write_all(report.as_bytes()).and_then(|()| out.flush()))?;
     Ok(Outcome::Done)
+}
+
+/// Copies the record of the uncoupled probe beside the new set-up, if it belongs to the blocks' shots; the copy's name.
+fn keep_uncoupled(
+    file: &Path,
+    from_us: f64,
+    setup: &SetupFile,
+    blocks: &[BlockRecord],
+    output: &Path,
+) -> Result<String, InputError> {
+    let to_us = setup.keys.measure.from_us;
+    if from_us.is_nan() || from_us >= to_us {
+        return Err(InputError::in_argument(
+            format!("--uncoupled-from {from_us} does not lie before from_us = {to_us}"),
+            "give a time inside the dead zone",
+        ));
+    }
+    let stored = StoredRecord::read(file, from_us, setup)?;
+    for block in blocks {
+        stored
+            .fits(&block.average, &block.clock, Seconds::from_us(to_us as f32))
+            .map_err(|why| {
+                let sentence = why.to_string();
+                let (what, remedy) = sentence.split_once(": ").unwrap_or((&sentence, "record it anew"));
+                InputError::in_file(
+                    file,
+                    format!("does not go with {}: {what}", block.path.display()),
+                    remedy,
+                )
+            })?;
+    }
+    let ending = file.extension().and_then(|ending| ending.to_str()).unwrap_or("npy");
+    let kept = output.with_file_name(format!("{}-uncoupled.{ending}", stem(output)?));
+    std::fs::copy(file, &kept).map_err(|error| InputError::unwritable(&kept, &error))?;
+    Ok(kept
+        .file_name()
+        .map(|name| name.to_string_lossy().into_owned())
+        .unwrap_or_default())
 }
 
 /// Reads `5.000mm+-0.002mm=FILE` and the file.
@@ -176,11 +234,14 @@ fn parse_block(text: &str) -> Result<(f64, f64, PathBuf), InputError> {
 
 /// `OUT-pulse.npy` beside `OUT.toml`.
 fn pulse_path(output: &Path) -> Result<PathBuf, InputError> {
-    let stem = output
+    Ok(output.with_file_name(format!("{}-pulse.npy", stem(output)?)))
+}
+
+fn stem(output: &Path) -> Result<&str, InputError> {
+    output
         .file_stem()
         .and_then(|stem| stem.to_str())
-        .ok_or_else(|| InputError::in_file(output, "is no name for a set-up", "give a name like ready.toml"))?;
-    Ok(output.with_file_name(format!("{stem}-pulse.npy")))
+        .ok_or_else(|| InputError::in_file(output, "is no name for a set-up", "give a name like ready.toml"))
 }
 
 fn checked_date(date: &str) -> Result<String, InputError> {

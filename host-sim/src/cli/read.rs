@@ -6,6 +6,7 @@ use crate::input_error::InputError;
 use crate::measuring::{self, HeapScratch, Measured, Refusal, Shot};
 use crate::record_file::{self, CodeKind, Coding, RecordFile};
 use crate::setup_file::{SetupFile, keys};
+use crate::uncoupled::StoredRecord;
 use halfpulse::{
     EchoRole, Findings, Gauge, GaugeSetup, Hertz, Limits, Material, MetresPerSecond, Probe, SampleClock, Seconds, Span,
     Window, Zero,
@@ -182,8 +183,12 @@ fn read_file(
             let clock = measuring::clock(path, &file, setup)?;
             let mut scratch = HeapScratch::new(file.shots.first().map_or(0, Vec::len));
             let mut gauge = setup.gauge(scratch.workspace())?;
-            for shot in measuring::shots(path, file, arguments.average)? {
-                let mut measured = measuring::measure(&mut gauge, &name, &shot, clock);
+            let stored = StoredRecord::of(setup)?;
+            for mut shot in measuring::shots(path, file, arguments.average)? {
+                let mut measured = match &stored {
+                    Some(stored) => stored.measure(&mut gauge, &name, &mut shot, clock),
+                    None => measuring::measure(&mut gauge, &name, &shot, clock),
+                };
                 if arguments.separate {
                     measuring::separate(&mut gauge, &shot, clock, &mut measured);
                 }

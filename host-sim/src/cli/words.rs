@@ -1,6 +1,7 @@
 //! The words that programs meet: roles, verdicts, doubts, refusals, terms of the budget.
 
 use crate::measuring::NO_SETUP;
+use crate::uncoupled::OTHER_TAIL;
 use halfpulse::echo::separation::Unresolved;
 use halfpulse::wall::uncertainty::Source;
 use halfpulse::{Doubt, EchoRole, Hertz, Metres, NoReading, Seconds};
@@ -62,6 +63,7 @@ const TERMS: &[(Source, &str)] = &[
         Source::Coupling,
         "the couplant film differs from the one at calibration",
     ),
+    (Source::Phase, "coupling turns one echo of the record against another"),
     (
         Source::Temperature,
         "the part is warmer or colder than its velocity holds for",
@@ -110,6 +112,9 @@ pub fn help() -> String {
     }
     text.push_str("\nRefusals (there is no reading):\n");
     text.push_str(&format!("  {NO_SETUP:<31}give a set-up with --setup\n"));
+    text.push_str(&format!(
+        "  {OTHER_TAIL:<31}record the uncoupled probe anew, at this gain and with this probe\n"
+    ));
     for refusal in REFUSALS {
         text.push_str(&format!("  {:<31}{}\n", refusal.word(), refusal.advice()));
     }
@@ -175,7 +180,7 @@ mod tests {
     fn words_are_kebab_case_and_all_different() {
         let mut words: Vec<&str> = Doubt::ALL.iter().map(|d| d.word()).collect();
         words.extend(REFUSALS.iter().map(NoReading::word));
-        words.push(NO_SETUP);
+        words.extend([NO_SETUP, OTHER_TAIL]);
         // "clipped" and the like must not mean a doubt here and a refusal there.
         let count = words.len();
         words.sort_unstable();

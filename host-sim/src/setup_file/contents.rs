@@ -45,6 +45,8 @@ pub struct ProbeKeys {
     pub face: Option<ProbeFace>,
     /// Uncertain couplant film.
     pub couplant_film_um: f64,
+    /// Standard uncertainty of the phase between echoes; `None`: by face.
+    pub echo_phase_degrees: Option<f64>,
     /// Sign of the back-wall echoes relative to the reference pulse.
     pub back_wall_sign: Option<EchoSign>,
     /// Sign of the interface echo.
@@ -157,6 +159,10 @@ pub struct MeasureKeys {
     pub from_us: f64,
     /// End of the window; `None`: the record's end.
     pub to_us: Option<f64>,
+    /// File of the uncoupled probe's record, relative to the set-up file.
+    pub uncoupled_record: Option<String>,
+    /// From when on echoes are looked for once it has been taken off.
+    pub uncoupled_from_us: Option<f64>,
     /// k.
     pub coverage_factor: f64,
 }
@@ -229,6 +235,7 @@ impl SetupKeys {
                     .unwrap_or(7.0),
                 face: document.word("probe", "face", FACES)?,
                 couplant_film_um: document.number("probe", "couplant_film_um")?.unwrap_or(2.0),
+                echo_phase_degrees: document.number("probe", "echo_phase_degrees")?,
                 back_wall_sign: document.word("probe", "back_wall_sign", SIGNS)?,
                 interface_sign: document.word("probe", "interface_sign", SIGNS)?,
                 reference_pulse: document.text("probe", "reference_pulse")?,
@@ -296,6 +303,8 @@ impl SetupKeys {
                     .ok_or_else(|| needed_word("measure", "span"))?,
                 from_us: document.needed_number("measure", "from_us")?,
                 to_us: document.number("measure", "to_us")?,
+                uncoupled_record: document.text("measure", "uncoupled_record")?,
+                uncoupled_from_us: document.number("measure", "uncoupled_from_us")?,
                 coverage_factor: document.number("measure", "coverage_factor")?.unwrap_or(2.0),
             },
             limits: if document.has_table("limits") {
@@ -397,6 +406,7 @@ impl SetupKeys {
         probe.face = self.probe.face.unwrap_or(probe.face);
         probe.element_diameter_uncertainty = (self.probe.element_diameter_uncertainty_percent / 100.0) as f32;
         probe.couplant_film = Metres::new((self.probe.couplant_film_um * 1e-6) as f32);
+        probe.echo_phase_degrees = self.probe.echo_phase_degrees.map(|degrees| degrees as f32);
         probe.delay_line = self.delay_line.map(|line| DelayLine {
             length: Metres::from_mm(line.length_mm as f32),
             velocity: MetresPerSecond::new(line.velocity_m_s as f32),

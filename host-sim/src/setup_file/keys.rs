@@ -111,8 +111,17 @@ pub const KEYS: &[Key] = &[
     ),
     key(
         "probe",
+        "echo_phase_degrees",
+        "standard uncertainty (k = 1) of the phase by which coupling turns one echo against another, 0 to 180: widens \
+         what is read between echoes; default 2 for a hard face, 0.5 for a plastic one, 0 if couplant_film_um is 0",
+    ),
+    key(
+        "probe",
         "back_wall_sign",
-        "\"as-pulse\", \"inverted\" or \"unknown\" (default): sign of the back walls relative to the reference pulse",
+        "\"as-pulse\", \"inverted\" or \"unknown\" (default): sign of the back walls relative to the reference pulse. Written by \
+         calibrate, where the blocks' back walls all had the pulse's sign. Write \"unknown\" where something stiffer than the part \
+         may stand behind the wall, where the part may be softer than the probe's face (aluminium under a hard one), or where \
+         the probe's leads may be swapped",
     ),
     key(
         "probe",
@@ -255,6 +264,17 @@ pub const KEYS: &[Key] = &[
         "where to look for echoes: beyond the transmission pulse",
     ),
     key("measure", "to_us", "where to stop looking; default: the record's end"),
+    key(
+        "measure",
+        "uncoupled_record",
+        "file with shots of the uncoupled probe, relative to this file: what the transmission pulse leaves in the dead zone, \
+         taken off each shot before from_us; written by calibrate --uncoupled",
+    ),
+    key(
+        "measure",
+        "uncoupled_from_us",
+        "where to look for echoes then, instead of from_us: some 0.3 us behind the last clipped sample",
+    ),
     key("measure", "coverage_factor", "k of the expanded uncertainty; default 2"),
     key(
         "limits",

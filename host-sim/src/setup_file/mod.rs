@@ -141,6 +141,31 @@ impl SetupFile {
 
     /// What the core does not see.
     fn check_host_keys(&self) -> Result<(), InputError> {
+        let measure = &self.keys.measure;
+        match (&measure.uncoupled_record, measure.uncoupled_from_us) {
+            (None, None) => {}
+            (Some(_), Some(from)) if from < measure.from_us && measure.span != Span::InterfaceToBackWall => {}
+            (Some(_), Some(_)) => {
+                return Err(self.place.fault(
+                    "measure",
+                    "uncoupled_from_us",
+                    "an uncoupled record opens the time before from_us, of spans that do not begin at an interface",
+                    "give a time before from_us, or remove both keys",
+                ));
+            }
+            (Some(_), None) | (None, Some(_)) => {
+                return Err(self.place.fault(
+                    "measure",
+                    if measure.uncoupled_record.is_some() {
+                        "uncoupled_record"
+                    } else {
+                        "uncoupled_from_us"
+                    },
+                    "uncoupled_record and uncoupled_from_us belong together",
+                    "give both, or remove both",
+                ));
+            }
+        }
         let record = &self.keys.record;
         if record.bits.is_some_and(|bits| !(2..=16).contains(&bits)) {
             return Err(self
@@ -318,6 +343,7 @@ impl SetupFile {
             SetupError::DelayLine => ("delay_line", "velocity_m_s"),
             SetupError::ElementSeparation => ("dual_element", "separation_mm"),
             SetupError::ZeroLearnedOn => ("zero", "learned_on_mm"),
+            SetupError::EchoPhase => ("probe", "echo_phase_degrees"),
             SetupError::CouplantFilm => ("probe", "couplant_film_um"),
             SetupError::Velocity => ("material", "velocity_m_s"),
             SetupError::VelocityUncertainty => ("material", "velocity_standard_uncertainty_m_s"),

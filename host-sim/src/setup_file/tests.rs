@@ -348,6 +348,7 @@ fn every_key_is_described_and_written() {
             element_diameter_uncertainty_percent: 5.0,
             face: Some(ProbeFace::Hard),
             couplant_film_um: 3.0,
+            echo_phase_degrees: Some(1.5),
             back_wall_sign: Some(EchoSign::AsPulse),
             interface_sign: Some(EchoSign::Inverted),
             reference_pulse: Some("a \"b\" \\ c\u{7}.npy".to_string()),
@@ -397,9 +398,11 @@ fn every_key_is_described_and_written() {
             reference_pulse_checksum: Some("fnv1a64:00".to_string()),
         },
         measure: MeasureKeys {
-            span: Span::InterfaceToBackWall,
+            span: Span::BackWallToBackWall,
             from_us: 0.5,
             to_us: Some(60.0),
+            uncoupled_record: Some("air.npy".to_string()),
+            uncoupled_from_us: Some(0.4),
             coverage_factor: 3.0,
         },
         calibration: Some(CalibrationKeys {

@@ -48,6 +48,7 @@ impl SetupKeys {
             }
             ("probe", "face") => self.probe.face.and_then(|face| word(word_of(FACES, face))),
             ("probe", "couplant_film_um") => Some(number(self.probe.couplant_film_um)),
+            ("probe", "echo_phase_degrees") => self.probe.echo_phase_degrees.map(number),
             ("probe", "back_wall_sign") => self.probe.back_wall_sign.and_then(|sign| word(word_of(SIGNS, sign))),
             ("probe", "interface_sign") => self.probe.interface_sign.and_then(|sign| word(word_of(SIGNS, sign))),
             ("probe", "reference_pulse") => self.probe.reference_pulse.as_deref().and_then(word),
@@ -99,6 +100,8 @@ impl SetupKeys {
             ("measure", "span") => word(word_of(SPANS, self.measure.span)),
             ("measure", "from_us") => Some(number(self.measure.from_us)),
             ("measure", "to_us") => self.measure.to_us.map(number),
+            ("measure", "uncoupled_record") => self.measure.uncoupled_record.as_deref().and_then(word),
+            ("measure", "uncoupled_from_us") => self.measure.uncoupled_from_us.map(number),
             ("measure", "coverage_factor") => Some(number(self.measure.coverage_factor)),
             ("calibration", "velocity_zero_correlation") => {
                 calibration.and_then(|c| c.velocity_zero_correlation).map(number)

@@ -49,7 +49,14 @@ impl Bench {
         self.run_into(arguments, Stdio::piped())
     }
 
-    /// The same with stdout going elsewhere.
+    /// `halfpulse calibrate` with these arguments, which has to work; what it says.
+    pub fn calibrate(&self, arguments: &[&str]) -> String {
+        let run = self.run(&[&["calibrate"], arguments].concat());
+        assert_eq!(run.status, 0, "{}{}", run.out, run.errors);
+        run.out
+    }
+
+    /// [`Bench::run`] with stdout going elsewhere.
     pub fn run_into(&self, arguments: &[&str], out: Stdio) -> Run {
         let output = Command::new(env!("CARGO_BIN_EXE_halfpulse"))
             .args(arguments)
@@ -164,6 +171,19 @@ impl Train {
         phase: 0.0,
         interface: 0.0,
     };
+
+    /// A pulse that the gauge's model does not know, and a zero of 0.4 us.
+    pub const UNMODELLED: Self = Self {
+        zero_us: 0.4,
+        skew: 1.6,
+        phase: 0.9,
+        ..Self::CLEAN
+    };
+
+    /// The same train in another wall.
+    pub fn of_wall(self, wall_mm: f64) -> Self {
+        Self { wall_mm, ..self }
+    }
 
     /// One shot as 12-bit codes.
     pub fn shot(&self, seed: u64) -> Vec<i16> {

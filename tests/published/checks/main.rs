@@ -18,6 +18,7 @@ mod val_functions;
 mod val_gauge;
 mod val_overlapping;
 mod val_pairs;
+mod val_phase;
 mod val_tables;
 mod val_train;
 mod val_train_choice;

@@ -178,6 +178,14 @@ pub(super) fn fit(
         strongest = math::larger(strongest, member.weight * member.weight);
         scatter += member.off * member.off * member.weight * member.weight / variance;
     }
+    // The period is Σ c t with c = w (S0 n - S1) / determinant.
+    let mut contrast = 0.0;
+    if !lone && determinant > 0.0 {
+        for member in &members {
+            let share = member.weight * member.weight * (s0 * line.lever(member.step) - s1) / determinant;
+            contrast += share * share;
+        }
+    }
     let freedom = members.len().saturating_sub(2) as u8;
     let unevenness = if freedom > 0 { scatter / f32::from(freedom) } else { 0.0 };
     let period_uncertainty = if lone || !(determinant > 0.0) {
@@ -191,6 +199,7 @@ pub(super) fn fit(
         echoes: members.len() as u8,
         period: line.period,
         period_uncertainty,
+        contrast: math::sqrt(contrast),
         correlation: if lone { 0.0 } else { -s1 / math::sqrt(s0 * s2) },
         support: math::sqrt(s0 - strongest),
         first,

@@ -79,6 +79,9 @@ pub struct Train {
     pub period: f32,
     /// Its standard uncertainty in samples from noise; `None` for a lone echo.
     pub period_uncertainty: Option<f32>,
+    /// Root of the sum of squares of what the arrivals count in the period: its error, if each arrival were off by one of
+    /// its own. The root of 2 for two echoes, less for more. 0 for a lone echo.
+    pub contrast: f32,
     /// Correlation of the errors of period and first place: -S1 / sqrt(S0 S2). 0 for a lone echo.
     pub correlation: f32,
     /// Root of the sum of squared amplitudes (codes) of all multiples but the strongest: what a wrong

@@ -250,6 +250,7 @@ impl SetUp {
                 element_diameter: self.element_diameter.map(Metres::new),
                 face,
                 couplant_film: Metres::new(self.couplant_film),
+                echo_phase_degrees: None,
                 element_diameter_uncertainty: self.element_diameter_uncertainty,
                 delay_line: self.delay_line.map(|[length, velocity]| DelayLine {
                     length: Metres::new(length),
