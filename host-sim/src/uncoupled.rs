@@ -4,7 +4,7 @@ use crate::input_error::InputError;
 use crate::measuring::{self, Measured, Refusal, Shot};
 use crate::record_file;
 use crate::setup_file::SetupFile;
-use halfpulse::{Gauge, Record, SampleClock, Seconds, Uncoupled, UncoupledError};
+use halfpulse::{Gauge, Metres, Record, SampleClock, Seconds, Uncoupled, UncoupledError};
 use std::path::Path;
 
 /// The word for a shot whose transmission pulse is not that of the stored record.
@@ -82,6 +82,18 @@ impl StoredRecord {
                 halfpulse::Findings::default()
             },
             full_scale: shot.format.full_scale(),
+            wall_limits: self.wall_limits(gauge, &Record::new(&shot.codes, shot.format, clock)),
         }
+    }
+
+    /// The smallest and the largest wall, with a window that begins inside the dead zone.
+    fn wall_limits(&self, gauge: &mut Gauge<'_>, record: &Record<'_>) -> Option<(Metres, Metres)> {
+        let setup = *gauge.setup();
+        let mut opened = setup;
+        opened.window.from = self.from;
+        gauge.change_setup(opened).ok()?;
+        let limits = gauge.wall_limits_of(record);
+        gauge.change_setup(setup).ok()?;
+        Some(limits)
     }
 }
