@@ -24,6 +24,7 @@ const COUPLANT: MetresPerSecond = MetresPerSecond::new(1480.0);
 /// The gap at the rim of a flat, round element on the outside of a cylinder, R - sqrt(R² - D²/4); inside one it is the
 /// gap under the middle. The radius itself where the element is wider than the cylinder.
 #[must_use]
+#[inline(never)]
 pub fn gap(radius: Metres, diameter: Metres) -> Metres {
     let half = diameter * 0.5;
     if !(half < radius) {
@@ -61,6 +62,7 @@ const PLACES: u8 = 16;
 /// over the element, each place as if it were plane. For a part of steel under oil, as [`crate::wall::coupling`] has it. 0 for
 /// a flat part, or if the element is not known.
 #[must_use]
+#[inline(never)]
 pub fn shift(setup: &GaugeSetup, least: Metres) -> Seconds {
     let (Surface::Convex(radius) | Surface::Concave(radius), Some(diameter)) =
         (setup.surface, setup.probe.element_diameter)
@@ -68,16 +70,7 @@ pub fn shift(setup: &GaugeSetup, least: Metres) -> Seconds {
         return Seconds::ZERO;
     };
     let concave = matches!(setup.surface, Surface::Concave(_));
-    let omega = TAU * setup.probe.centre_frequency.get();
     let passes = matches!(wall_span(setup), Span::TransmissionPulseToBackWall);
-    let face = coupling::face_impedance(setup.probe.face);
-    let of_film = |film: Metres| {
-        if passes {
-            passage(face, omega, film)
-        } else {
-            reflection(face, omega, film)
-        }
-    };
     let rim = gap(radius, diameter);
     let (mut re, mut im) = (0.0, 0.0);
     for place in 0..PLACES {
@@ -86,14 +79,26 @@ pub fn shift(setup: &GaugeSetup, least: Metres) -> Seconds {
         let across = u * u;
         let share = math::sqrt(1.0 - across * across) * u;
         let here = gap(radius, diameter * across);
-        let (a, b) = of_film(least + if concave { rim - here } else { here });
+        let (a, b) = of_film(setup, passes, least + if concave { rim - here } else { here });
         re += share * a;
         im += share * b;
     }
-    let (flat_re, flat_im) = of_film(least);
+    let (flat_re, flat_im) = of_film(setup, passes, least);
     // The mean's phase against that of the plain film.
     let turned = math::atan2(im * flat_re - re * flat_im, re * flat_re + im * flat_im);
-    Seconds::new(turned.abs() / omega)
+    Seconds::new(turned.abs() / (TAU * setup.probe.centre_frequency.get()))
+}
+
+/// What a film of this thickness does to an echo, as a complex factor.
+#[inline(never)]
+fn of_film(setup: &GaugeSetup, passes: bool, film: Metres) -> (f32, f32) {
+    let omega = TAU * setup.probe.centre_frequency.get();
+    let face = coupling::face_impedance(setup.probe.face);
+    if passes {
+        passage(face, omega, film)
+    } else {
+        reflection(face, omega, film)
+    }
 }
 
 /// In and out through a film once, as a complex factor: 1 / ((Z0 + Zs) cos θ + j (Z0 Zs / Zf + Zf) sin θ) squared, but for
@@ -122,16 +127,16 @@ fn reflection(face: f32, omega: f32, film: Metres) -> (f32, f32) {
 /// [`shift`], for the thinnest and the thickest film that the set-up speaks of. Or beyond [`smallest_radius`], if the gap,
 /// full of water, delays sound by as much at the rim; of an element that is not known, the radius alone decides.
 #[must_use]
+#[inline(never)]
 pub fn matters(setup: &GaugeSetup, limit: Metres) -> bool {
     let (Surface::Convex(radius) | Surface::Concave(radius), Some(smallest)) = (setup.surface, smallest_radius(setup))
     else {
         return false;
     };
     let by_gap = |diameter| gap(radius, diameter) * (setup.velocity() / COUPLANT) > limit;
-    let by_film = |least| setup.velocity() * 0.5 * shift(setup, least) > limit;
+    let mut films = [Metres::ZERO, setup.probe.couplant_film].into_iter();
     (radius < smallest && setup.probe.element_diameter.is_none_or(by_gap))
-        || by_film(Metres::ZERO)
-        || by_film(setup.probe.couplant_film)
+        || films.any(|least| setup.velocity() * 0.5 * shift(setup, least) > limit)
 }
 
 #[cfg(test)]
