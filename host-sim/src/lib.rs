@@ -25,6 +25,7 @@ pub mod fourier;
 pub mod front_end;
 pub mod input_error;
 #[cfg_attr(not(test), deny(clippy::disallowed_methods))]
+pub mod joining;
 pub mod layered;
 #[cfg_attr(not(test), deny(clippy::disallowed_methods))]
 pub mod link;

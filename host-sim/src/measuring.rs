@@ -1,6 +1,7 @@
 //! Recorded shots through the core: memory for records of any length, and what comes out.
 
 use crate::input_error::InputError;
+use crate::joining::TriggerJitter;
 use crate::record_file::RecordFile;
 use crate::setup_file::SetupFile;
 use halfpulse::record::average::{AverageError, Averager, MOST_SHOTS};
@@ -95,26 +96,35 @@ pub struct Measured {
     pub full_scale: f32,
     /// The smallest and the largest wall that set-up and record can read, if there is a set-up.
     pub wall_limits: Option<(Metres, Metres)>,
+    /// The trigger's jitter as the file's shots show it, if that was asked for and an echo tells it.
+    pub jitter: Option<TriggerJitter>,
 }
 
 /// How far, in samples, the set-up's time of the first sample may lie from the file's: the rounding of times
 /// to whole nanoseconds at up to 200 MS/s.
 const FIRST_SAMPLE_TOLERANCE: f64 = 0.1;
 
-/// The clock of a file's records under a set-up.
+/// The clock of a file's shots under a set-up, whose sample rate is that of the record that `phases` delayed shots make (1: of a
+/// shot).
 ///
 /// # Errors
 /// The file states another sample rate, or another time of its first sample, than the set-up.
-pub fn clock(path: &Path, file: &RecordFile, setup: &SetupFile) -> Result<SampleClock, InputError> {
+pub fn clock(path: &Path, file: &RecordFile, setup: &SetupFile, phases: u8) -> Result<SampleClock, InputError> {
     let keys = &setup.keys.record;
-    let rate = keys.sample_rate_mhz * 1e6;
+    let phases = phases.max(1);
+    let rate = keys.sample_rate_mhz * 1e6 / f64::from(phases);
     if let Some(stated) = file.sample_rate
         && !stated.agrees_with(rate)
     {
+        let interleaved = if phases > 1 {
+            format!(", {phases} delays of {} MHz", rate * 1e-6)
+        } else {
+            String::new()
+        };
         return Err(InputError::in_file(
             path,
             format!(
-                "was sampled at {} MHz, {} says {} MHz",
+                "was sampled at {} MHz, {} says {} MHz{interleaved}",
                 stated.hertz * 1e-6,
                 setup.path().display(),
                 keys.sample_rate_mhz
@@ -138,12 +148,13 @@ pub fn clock(path: &Path, file: &RecordFile, setup: &SetupFile) -> Result<Sample
         (None, stated) => stated.unwrap_or(0.0),
     };
     Ok(SampleClock {
-        rate: halfpulse::Hertz::from_mhz(keys.sample_rate_mhz as f32),
+        rate: halfpulse::Hertz::from_mhz((keys.sample_rate_mhz / f64::from(phases)) as f32),
         first_sample: Seconds::new(first as f32),
     })
 }
 
 /// One shot, or the average of all, of a file.
+#[derive(Clone, Debug)]
 pub struct Shot {
     /// Which one; `None` for the average.
     pub number: Option<usize>,
@@ -153,23 +164,18 @@ pub struct Shot {
     pub format: AdcFormat,
 }
 
-/// The shots of a file one by one, or their average.
-///
-/// # Errors
-/// More shots than one average takes.
-pub fn shots(path: &Path, file: RecordFile, average: bool) -> Result<Vec<Shot>, InputError> {
-    if average {
-        return Ok(vec![averaged(path, &file)?]);
-    }
+/// The shots of a file one by one.
+#[must_use]
+pub fn shots(file: RecordFile) -> Vec<Shot> {
     let format = file.format;
     let numbered = file.shots.into_iter().enumerate();
-    Ok(numbered
+    numbered
         .map(|(number, codes)| Shot {
             number: Some(number),
             codes,
             format,
         })
-        .collect())
+        .collect()
 }
 
 /// The average of a file's shots, with the resolution that averaging gains.
@@ -218,6 +224,7 @@ pub fn measure(gauge: &mut Gauge<'_>, name: &str, shot: &Shot, clock: SampleCloc
         findings: gauge.findings().clone(),
         full_scale: shot.format.full_scale(),
         wall_limits: Some(gauge.wall_limits_of(&record)),
+        jitter: None,
     }
 }
 

@@ -37,7 +37,7 @@ impl StoredRecord {
     pub fn read(path: &Path, from_us: f64, setup: &SetupFile) -> Result<Self, InputError> {
         let file = record_file::read(path, &setup.coding())?;
         Ok(Self {
-            clock: measuring::clock(path, &file, setup)?,
+            clock: measuring::clock(path, &file, setup, 1)?,
             shot: measuring::averaged(path, &file)?,
             from: Seconds::from_us(from_us as f32),
         })
@@ -83,6 +83,7 @@ impl StoredRecord {
             },
             full_scale: shot.format.full_scale(),
             wall_limits: self.wall_limits(gauge, &Record::new(&shot.codes, shot.format, clock)),
+            jitter: None,
         }
     }
 

@@ -5,7 +5,7 @@ mod support;
 use serde_json::Value;
 use support::{Bench, Train, setup};
 
-const KEYS: [&str; 22] = [
+const KEYS: [&str; 23] = [
     "file",
     "shot",
     "span",
@@ -28,6 +28,7 @@ const KEYS: [&str; 22] = [
     "budget",
     "dominating_term",
     "limits",
+    "jitter",
 ];
 
 fn keys(value: &Value) -> Vec<&str> {

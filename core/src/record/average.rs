@@ -264,6 +264,12 @@ impl<'c> Interleaver<'c> {
         self
     }
 
+    /// The clock of the dense record: it begins with the shot that fired last.
+    #[must_use]
+    pub const fn clock(&self) -> SampleClock {
+        self.clock
+    }
+
     /// Puts one shot where its clock says that it belongs. The order of the shots does not matter.
     ///
     /// # Errors

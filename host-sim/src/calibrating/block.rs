@@ -44,7 +44,7 @@ impl BlockRecord {
             thickness_uncertainty: Metres::new((uncertainty_mm * 1e-3) as f32),
             path: path.to_path_buf(),
             average: measuring::averaged(path, &file)?,
-            shots: measuring::shots(path, file, false)?,
+            shots: measuring::shots(file),
             clock,
         })
     }

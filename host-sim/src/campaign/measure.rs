@@ -132,6 +132,7 @@ impl<'c> Measurer<'c> {
             findings: gauge.findings().clone(),
             full_scale: shot.format.full_scale(),
             wall_limits: None,
+            jitter: None,
         };
         let quarter_mm = 250.0 * shot.truth.wall_velocity_m_s / (maker.scene().probe.centre_frequency_mhz * 1e6);
         // The bound is that of the timing alone: a velocity that was learned has its own error.

@@ -189,7 +189,7 @@ fn keep_uncoupled(
 fn read_block(text: &str, setup: &SetupFile) -> Result<BlockRecord, InputError> {
     let (thickness_mm, uncertainty_mm, path) = parse_block(text)?;
     let file = record_file::read(&path, &setup.coding())?;
-    let clock = measuring::clock(&path, &file, setup)?;
+    let clock = measuring::clock(&path, &file, setup, 1)?;
     BlockRecord::new(&path, (thickness_mm, uncertainty_mm), file, clock)
 }
 

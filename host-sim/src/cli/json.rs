@@ -12,7 +12,8 @@ use super::words;
 /// What the keys mean, for help.
 pub const KEYS: &str = "\
 JSON, one object a record and line; numbers or null, never NaN; more keys may follow later:
-  file, shot                     as given; shots count from 0, null with --average
+  file, shot                     as given; shots count from 0, and so do averages of N shots; null with
+                                 --average of all and with --interleave
   span                           as in the set-up; null without one
   thickness_mm                   the wall without coating; null if refused
   standard_uncertainty_mm        k = 1
@@ -52,6 +53,10 @@ JSON, one object a record and line; numbers or null, never NaN; more keys may fo
                                  the three are below, above or undecided, null if not asked for; always
                                  undecided for a reading with doubts; the probability that the wall
                                  keeps to minimum and maximum rests on reading and uncertainty alone
+  jitter                         null without --jitter and where no echo tells it, or {rms_ns,
+                                 standard_uncertainty_ns, shots, arrival_ns, snr_db, wanders} of all
+                                 shots of the file: noise taken off; wanders: the echo slides rather than
+                                 scatters, so something moved; null of fewer than eight shots
 ";
 
 #[derive(Serialize)]
@@ -78,6 +83,17 @@ struct JsonRecord<'m> {
     budget: Vec<JsonTerm>,
     dominating_term: Option<&'static str>,
     limits: Option<JsonLimits>,
+    jitter: Option<JsonJitter>,
+}
+
+#[derive(Serialize)]
+struct JsonJitter {
+    rms_ns: Option<f32>,
+    standard_uncertainty_ns: Option<f32>,
+    shots: u16,
+    arrival_ns: Option<f32>,
+    snr_db: Option<f32>,
+    wanders: Option<bool>,
 }
 
 #[derive(Serialize)]
@@ -248,6 +264,14 @@ pub fn line(measured: &Measured, limits: Option<&Limits>) -> String {
         }),
         dominating_term: reading.and_then(|r| r.budget.dominating()).map(|source| source.word()),
         limits: reading.and_then(|r| Some(verdict(&r.against(limits?)))),
+        jitter: measured.jitter.as_ref().map(|found| JsonJitter {
+            rms_ns: finite(found.jitter.rms.as_ns()),
+            standard_uncertainty_ns: finite(found.jitter.standard_uncertainty.as_ns()),
+            shots: found.jitter.shots,
+            arrival_ns: finite(found.arrival.as_ns()),
+            snr_db: finite(found.snr.get()),
+            wanders: found.wanders,
+        }),
     };
     // Strings and finite numbers always serialise.
     serde_json::to_string(&record).unwrap_or_default()

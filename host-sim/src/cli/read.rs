@@ -3,7 +3,8 @@
 use super::{Outcome, json, print_error, text, words, written};
 use crate::band;
 use crate::input_error::InputError;
-use crate::measuring::{self, HeapScratch, Measured, Refusal, Shot};
+use crate::joining::{self, Joined, Joining};
+use crate::measuring::{self, HeapScratch, Measured, Refusal};
 use crate::record_file::{self, CodeKind, Coding, RecordFile};
 use crate::setup_file::{SetupFile, keys};
 use crate::uncoupled::StoredRecord;
@@ -32,9 +33,19 @@ pub struct Arguments {
     /// For people, or one JSON object a record for programs
     #[arg(long, value_enum, default_value_t = Format::Text)]
     format: Format,
-    /// The shots of each file are of one place: measure their average
-    #[arg(long)]
-    average: bool,
+    /// The shots of each file are of one place: measure their average, or those of N at a time
+    #[arg(long, value_name = "N", num_args = 0..=1, require_equals = true, value_parser = clap::value_parser!(u16).range(1..=512))]
+    average: Option<Option<u16>>,
+    /// The shots of each file are N delays of a slow converter, shot n fired n / N samples later (and so on from the
+    /// first): measure the dense record that they make
+    #[arg(long, value_name = "N", conflicts_with = "average", value_parser = clap::value_parser!(u8).range(2..=64))]
+    interleave: Option<u8>,
+    /// Nothing can move between the delays: one of each is enough
+    #[arg(long, requires = "interleave")]
+    still: bool,
+    /// Tell how much the trigger jitters, from the scatter of the strongest echo over each file's shots
+    #[arg(long, requires = "setup", conflicts_with = "interleave")]
+    jitter: bool,
     /// Ask whether an echo hides a second one, closer than half the spatial pulse length: with a learned pulse in the
     /// set-up from 0.15 of the pulse duration on, with the data sheet's from 0.25
     #[arg(long)]
@@ -62,9 +73,22 @@ Examples:
   halfpulse read pipe.csv --setup probe.toml        thickness with its uncertainty
   halfpulse read shots.npy --setup probe.toml --average --format json
   halfpulse read pipe.csv --setup probe.toml --separate         is an echo two?
+  halfpulse read shots.npy --setup probe.toml --average=16 --jitter
+  halfpulse read slow.npy --setup dense.toml --interleave 25    2 MS/s to 50
+
+Several shots of one place:
+  --average     The shots are averaged as two rounds, first half and second: what only one of them has is no echo, and
+                a wall that moves from one to the other by more than its uncertainty is refused (unsteady). Of an odd number
+                the last shot is left out. Noise below 0.4 steps of the converter does not average: add some.
+  --interleave  Shot n (from 0) was fired (n mod N) / (N x sample rate) later than the first against the sample clock. The set-up
+                states the rate of the dense record, the file's is N times less. One round needs a delay fired again (N + 1
+                shots or more), two rounds or more are compared with each other; or say --still. `halfpulse simulate
+                --rounds` makes such files from a scene with [equivalent_time].
+  --jitter      j = sqrt(scatter^2 - noise^2) of an echo 30 dB or more above the noise; take 32 shots or more, with a probe that keeps
+                still. State it as trigger_jitter_ns in the set-up: what counts from the trigger then carries it.
 
 Files:
-  .npy   1-D: one shot; 2-D: one shot a row; int16, int32: codes; float32, float64: +-1 is full scale
+  .npy   1-D: one shot; 2-D: one shot a row, in the order in which they were fired; int16, int32: codes; float32, float64: +-1 is full scale
   .csv   one column of codes a shot; or a header time_s,value with seconds after the trigger
   .wav   mono, one shot; its sample rate is the converter's
 `halfpulse read --help` describes the set-up file, the JSON keys and all words.
@@ -177,21 +201,42 @@ fn read_file(
     sink: &mut dyn FnMut(&Measured) -> std::io::Result<()>,
 ) -> Result<(), Stop> {
     let name = path.display().to_string();
+    let joining = joining(arguments);
     match source {
         Source::Known(setup) => {
             let file = record_file::read(path, &setup.coding())?;
-            let clock = measuring::clock(path, &file, setup)?;
-            let mut scratch = HeapScratch::new(file.shots.first().map_or(0, Vec::len));
+            let clock = measuring::clock(path, &file, setup, joining.phases())?;
+            let samples = file.shots.first().map_or(0, Vec::len);
+            let mut scratch = HeapScratch::new(samples.saturating_mul(usize::from(joining.phases())));
             let mut gauge = setup.gauge(scratch.workspace())?;
-            let stored = StoredRecord::of(setup)?;
-            for mut shot in measuring::shots(path, file, arguments.average)? {
-                let mut measured = match &stored {
-                    Some(stored) => stored.measure(&mut gauge, &name, &mut shot, clock),
-                    None => measuring::measure(&mut gauge, &name, &shot, clock),
-                };
-                if arguments.separate {
-                    measuring::separate(&mut gauge, &shot, clock, &mut measured);
+            let (format, jitter) = (file.format, gauge.setup().trigger_jitter);
+            let found = if arguments.jitter {
+                let found = joining::trigger_jitter(&mut gauge, &file.shots, format, clock);
+                if found.is_none() {
+                    tell(
+                        path,
+                        "no echo of 30 dB in two shots or more: the trigger's jitter is not told",
+                    );
                 }
+                found
+            } else {
+                None
+            };
+            let (records, clock) = joining::join(path, file.shots, format, clock, joining, jitter)?;
+            let stored = StoredRecord::of(setup)?;
+            for record in records {
+                let mut measured = match (&stored, record.clone().into_shot(clock)) {
+                    // What is taken off one record of the two rounds is not in their difference.
+                    (Some(stored), Some(mut shot)) => {
+                        let mut measured = stored.measure(&mut gauge, &name, &mut shot, clock);
+                        if arguments.separate {
+                            measuring::separate(&mut gauge, &shot, clock, &mut measured);
+                        }
+                        measured
+                    }
+                    _ => joining::measure(&mut gauge, &name, &record, clock, arguments.separate),
+                };
+                measured.jitter = found;
                 sink(&measured).map_err(Stop::Output)?;
             }
         }
@@ -204,8 +249,10 @@ fn read_file(
             let file = record_file::read(path, &coding)?;
             let clock = unknown_clock(path, &file, unknown.rate_mhz)?;
             tell_assumptions(path, &file, unknown);
-            for shot in measuring::shots(path, file, arguments.average)? {
-                let measured = look_at(&name, &shot, clock, arguments.separate);
+            let format = file.format;
+            let (records, clock) = joining::join(path, file.shots, format, clock, joining, Seconds::ZERO)?;
+            for record in &records {
+                let measured = look_at(&name, record, clock, arguments.separate);
                 sink(&measured).map_err(Stop::Output)?;
             }
         }
@@ -233,12 +280,27 @@ fn unknown_clock(path: &Path, file: &RecordFile, typed_mhz: Option<f64>) -> Resu
     })
 }
 
+/// A note on stderr.
+fn tell(path: &Path, what: &str) {
+    let _ = writeln!(std::io::stderr(), "note: {}: {what}", path.display());
+}
+
+/// What becomes of each file's shots.
+fn joining(arguments: &Arguments) -> Joining {
+    match (arguments.interleave, arguments.average) {
+        (Some(phases), _) => Joining::Interleave {
+            phases,
+            still: arguments.still,
+        },
+        (None, Some(size)) => Joining::Average(size),
+        (None, None) => Joining::None,
+    }
+}
+
 /// What was assumed because nobody said it, on stderr: it is no error, but every time, or every amplitude,
 /// rests on it.
 fn tell_assumptions(path: &Path, file: &RecordFile, unknown: &UnknownRecord) {
-    let note = |what: String| {
-        let _ = writeln!(std::io::stderr(), "note: {}: {what}", path.display());
-    };
+    let note = |what: String| tell(path, &what);
     if file.sample_rate.is_none() && unknown.rate_mhz.is_none() {
         note(format!(
             "states no sample rate, {ASSUMED_RATE_MHZ} MHz assumed; give --sample-rate"
@@ -250,25 +312,25 @@ fn tell_assumptions(path: &Path, file: &RecordFile, unknown: &UnknownRecord) {
 }
 
 /// Echoes and pulse of a record that nobody has told anything about.
-fn look_at(name: &str, shot: &Shot, clock: SampleClock, separate: bool) -> Measured {
+fn look_at(name: &str, record: &Joined, clock: SampleClock, separate: bool) -> Measured {
     let mut measured = Measured {
         file: name.to_string(),
-        shot: shot.number,
+        shot: record.number(),
         span: None,
         outcome: Err(Refusal::no_setup()),
         findings: Findings::default(),
-        full_scale: shot.format.full_scale(),
         wall_limits: None,
+        full_scale: record.format().full_scale(),
+        jitter: None,
     };
-    let Some(setup) = assumed_setup(&shot.codes, clock) else {
+    let codes = record.codes();
+    let Some(setup) = assumed_setup(codes, clock) else {
         return measured;
     };
-    let mut scratch = HeapScratch::new(shot.codes.len());
+    let mut scratch = HeapScratch::new(codes.len());
     if let Ok(mut gauge) = Gauge::new(setup, scratch.workspace()) {
-        measured.findings = measuring::measure(&mut gauge, name, shot, clock).findings;
-        if separate {
-            measuring::separate(&mut gauge, shot, clock, &mut measured);
-        }
+        let found = joining::measure(&mut gauge, name, record, clock, separate);
+        (measured.findings, measured.full_scale) = (found.findings, found.full_scale);
         // Which echo is which rests on a set-up; so do not claim it.
         for echo in &mut measured.findings.echoes {
             echo.role = EchoRole::Other;

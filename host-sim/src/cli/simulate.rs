@@ -42,12 +42,13 @@ is stated as it reaches the converter: band limits act on echoes and thermal noi
 Examples:
   halfpulse simulate host-sim/scenes/painted_steel.toml -o painted.npy
   halfpulse simulate host-sim/scenes/clean_train.toml --seed 7 --shots 64 -o train.csv
+  halfpulse simulate host-sim/scenes/equivalent_time.toml --rounds 2 -o slow.npy
 
 The truth (every echo's arrival, amplitude and role, the pulse's figures, the noise) is written beside
 the shots under the same name, ending in .json. The same scene, seed and shot give the same codes on
 every machine. Names of materials: halfpulse materials. Noise, and what the receiver does wrong, is all
 that differs between the shots of one scene. With [equivalent_time] each shot is one phase: shot n fires
-(n mod phases) steps later.")]
+(n mod phases) steps later; --rounds counts in whole rounds, for `halfpulse read --interleave`.")]
 pub struct Arguments {
     /// The scene: probe, part, receiver (TOML)
     pub scene: PathBuf,
@@ -57,9 +58,23 @@ pub struct Arguments {
     /// How many shots of the same place
     #[arg(long, default_value_t = 1)]
     pub shots: u32,
+    /// How many rounds of all delays of [equivalent_time] instead; after a single round the first delay is fired again
+    #[arg(long, conflicts_with = "shots", value_parser = clap::value_parser!(u32).range(1..=65_535))]
+    pub rounds: Option<u32>,
     /// Where to write the shots: .npy, .csv or .wav (one shot); the truth goes beside it as .json
     #[arg(short, long)]
     pub output: PathBuf,
+}
+
+impl Arguments {
+    /// How many shots that is.
+    fn count(&self, scene: &Scene) -> u32 {
+        match (self.rounds, u32::from(scene.phases())) {
+            (Some(1), phases) if phases > 1 => phases + 1,
+            (Some(rounds), phases) => rounds.saturating_mul(phases),
+            (None, _) => self.shots,
+        }
+    }
 }
 
 /// The file beside the records.
@@ -88,10 +103,19 @@ pub fn run(arguments: &Arguments, out: &mut dyn Write) -> Result<Outcome, InputE
             "let the shots' name end in .npy, .csv or .wav",
         ));
     }
-    let shots = arguments.shots as usize;
+    let count = arguments.count(&scene);
+    let shots = count as usize;
     if shots == 0 || shots.saturating_mul(scene.record.samples) > MOST_SAMPLES {
         return Err(InputError::in_argument(
-            format!("--shots {shots} of {} samples cannot be made", scene.record.samples),
+            format!(
+                "{}{shots} of {} samples cannot be made",
+                if arguments.rounds.is_some() {
+                    "shots: "
+                } else {
+                    "--shots "
+                },
+                scene.record.samples
+            ),
             format!("give 1 to {}", (MOST_SAMPLES / scene.record.samples).max(1)),
         ));
     }
@@ -100,7 +124,7 @@ pub fn run(arguments: &Arguments, out: &mut dyn Write) -> Result<Outcome, InputE
         InputError::in_file(&arguments.scene, format!("{field}: {}", error.what), error.remedy)
     })?;
     let (mut codes, mut truths) = (Vec::with_capacity(shots), Vec::with_capacity(shots));
-    for number in 0..u64::from(arguments.shots) {
+    for number in 0..u64::from(count) {
         let shot = maker.phased_shot(arguments.seed, number);
         codes.push(shot.codes);
         truths.push(shot.truth);
@@ -159,6 +183,7 @@ mod tests {
             scene: scene.to_path_buf(),
             seed: 5,
             shots,
+            rounds: None,
             output,
         }
     }

@@ -1,6 +1,7 @@
 //! One record as a block of text, for people.
 
 use super::words;
+use crate::joining::TriggerJitter;
 use crate::measuring::Measured;
 use halfpulse::echo::pulse::METRICS_MINIMUM_SNR;
 use halfpulse::echo::separation::Separation;
@@ -124,6 +125,23 @@ fn separation_line(text: &mut String, separation: &Separation) {
     text.push('\n');
 }
 
+/// What the scatter of an echo tells of the trigger.
+fn jitter_line(text: &mut String, found: &TriggerJitter) {
+    let _ = write!(
+        text,
+        "  trigger jitter: {:.3} ns rms (u {:.3} ns), from {} shots of the echo at {:.1} ns ({:.1} dB)",
+        found.jitter.rms.as_ns(),
+        found.jitter.standard_uncertainty.as_ns(),
+        found.jitter.shots,
+        found.arrival.as_ns(),
+        found.snr.get()
+    );
+    text.push_str(match found.wanders {
+        Some(true) => "; but the echo wanders: probe or part moved\n",
+        _ => "\n",
+    });
+}
+
 /// The block of one record.
 #[must_use]
 pub fn block(measured: &Measured, limits: Option<&Limits>) -> String {
@@ -218,6 +236,9 @@ pub fn block(measured: &Measured, limits: Option<&Limits>) -> String {
     }
     if let Ok(reading) = &measured.outcome {
         budget_block(&mut text, reading);
+    }
+    if let Some(found) = &measured.jitter {
+        jitter_line(&mut text, found);
     }
     text
 }
