@@ -132,16 +132,17 @@ fn val_averages_reach_the_bound() {
     let mut figures = Figures::of("val_averages_reach_the_bound");
     for noise in [0.4, 1.0, 3.0, 10.0] {
         for (shots, trials) in [(1, 3000), (4, 3000), (16, 2500), (64, 2500), (256, 500)] {
-            let ratio = scatter(shots, level(noise), trials, 11);
-            let chance = half_width(trials);
-            figures.line(&format!(
-                "noise {noise:>4} steps, {shots:>3} shots: scatter {ratio:.3} +- {chance:.3} of CRLB / sqrt(n)"
-            ));
+            let (trials, chance) = (trials / 2, half_width(trials / 2));
             let limit = if shots > 64 { 1.10 } else { 1.05 };
-            assert!(
-                ratio < limit + chance && ratio > 1.0 - 2.0 * chance,
-                "{noise} {shots}: {ratio}"
-            );
+            // The limits were set with the first seed: the second one has to keep them too.
+            for seed in [11, 111] {
+                let ratio = scatter(shots, level(noise), trials, seed);
+                figures.line(&format!(                    "noise {noise:>4} steps, {shots:>3} shots, seed {seed}: scatter {ratio:.3} +- {chance:.3} of CRLB / sqrt(n)"));
+                assert!(
+                    ratio < limit + chance && ratio > 1.0 - 2.0 * chance,
+                    "{noise} {shots}: {ratio}"
+                );
+            }
         }
     }
     // What 16 bits hold: 256 shots of 12 bits have codes of a sixteenth of a step, and rounding to them shows.
@@ -151,11 +152,25 @@ fn val_averages_reach_the_bound() {
         noise: 0.4,
     };
     for shots in [64, 256] {
+        let [first, second] = [11, 111].map(|seed| scatter(shots, fine, 400, seed));
         figures.line(&format!(
-            "noise 0.4 steps of 12 bits (68 dB), {shots} shots: {:.3}",
-            scatter(shots, fine, 500, 11)
+            "noise 0.4 steps of 12 bits (68 dB), {shots} shots: {first:.3}, second seed {second:.3}"
         ));
+        assert!(first.max(second) < if shots > 64 { 1.8 } else { 1.35 });
     }
+    // What is left without any noise, at the height that those 256 shots have in 16 bits: rounding, and the interpolation's
+    // error of 3e-5 of the echo.
+    let still = Level {
+        bits: 16,
+        amplitude: 16_000.0,
+        noise: 0.0,
+    };
+    let floor = scatter(1, still, 400, 11) * bound(still) / RATE * 1e9;
+    let rounding = bound(still) / RATE * 1e9;
+    figures.line(&format!(
+        "no noise, 16000 codes: {floor:.5} ns, of which rounding {rounding:.5} ns"
+    ));
+    assert!(floor < 4.0 * rounding);
     figures.check();
 }
 
@@ -164,17 +179,19 @@ fn val_averages_reach_the_bound() {
 #[test]
 fn val_quantisation_floor() {
     let mut figures = Figures::of("val_quantisation_floor");
-    let at = |noise: f64| {
-        let ratio = scatter(64, level(noise), 1200, 12);
-        figures.line(&format!(
-            "noise {noise} steps, 64 shots: {:.4} ns, {ratio:.2} +- {:.2} of CRLB / 8",
-            ratio * bound(level(noise)) / 8.0 / RATE * 1e9,
-            ratio * half_width(1200)
-        ));
-        ratio
-    };
-    let [none, little, more, enough] = [0.0, 0.1, 0.3, 0.4].map(at);
-    assert!(none > 3.0 && little > 2.0 && more > 1.02 && more < little && enough < 1.06);
+    for seed in [12, 112] {
+        let mut at = |noise: f64| {
+            let ratio = scatter(64, level(noise), 800, seed);
+            figures.line(&format!(
+                "noise {noise} steps, 64 shots, seed {seed}: {:.4} ns, {ratio:.2} +- {:.2} of CRLB / 8",
+                ratio * bound(level(noise)) / 8.0 / RATE * 1e9,
+                ratio * half_width(800)
+            ));
+            ratio
+        };
+        let [none, little, more, enough] = [0.0, 0.1, 0.3, 0.4].map(&mut at);
+        assert!(none > 3.0 && little > 2.0 && more < little && enough < 1.05 + half_width(800));
+    }
     figures.check();
 }
 
@@ -202,9 +219,10 @@ fn readings(
     (noise, jitter): (f64, f64),
     (low, high): (f64, f64),
     trials: u32,
+    seed: u64,
 ) -> Vec<(f64, f64)> {
     const LENGTH: usize = 560;
-    let mut random = Random::new(21);
+    let mut random = Random::new(seed);
     let mut scratch = Box::new(Scratch::<LENGTH>::ZERO);
     let mut gauge = Gauge::new(*setup, scratch.workspace()).expect("a sound set-up");
     let (mut sums, mut codes) = ([0; LENGTH], [0; LENGTH]);
@@ -268,7 +286,8 @@ fn val_coverage_of_averages() {
             (0.4, anywhere),
             (1.0, anywhere),
         ] {
-            let all = readings(&gauge_setup(span), 64, (noise, 0.0), offsets, 300);
+            let seeds = [21, 121].map(|seed| readings(&gauge_setup(span), 64, (noise, 0.0), offsets, 150, seed));
+            let all = seeds.concat();
             let (share, chance) = coverage(&all);
             let rms = (all.iter().map(|(error, _)| error * error).sum::<f64>() / all.len() as f64).sqrt();
             let stated = all.iter().map(|(_, u)| u).sum::<f64>() / all.len() as f64;
@@ -289,17 +308,18 @@ fn val_coverage_of_averages() {
 fn val_jitter_from_scatter() {
     let mut buffer = [0.0; PULSE_CAPACITY];
     let pulse = reference(&mut buffer);
-    let mut random = Random::new(31);
+    let mut seeds = [31, 131].map(Random::new);
     let noise = 3.0;
     let (one, shots, series) = (bound(level(noise)) / RATE * 1e9, 32, 300);
     for jitter in [0.0, 0.5, 1.0, 3.0, 10.0].map(|times| times * one) {
         let (mut inside, mut sum) = (0, 0.0);
-        for _ in 0..series {
+        for number in 0..series {
+            let random = &mut seeds[number % 2];
             let mut arrivals = ShotArrivals::new();
             for _ in 0..shots {
                 let place = 47.3;
                 let late = jitter * 1e-9 * RATE;
-                let (codes, _) = average(place, 1, level(noise), late, &mut [0; SAMPLES], &mut random);
+                let (codes, _) = average(place, 1, level(noise), late, &mut [0; SAMPLES], random);
                 let found = arrival(&codes, place, &pulse) / RATE;
                 arrivals.add(Seconds::new(found as f32), Seconds::from_ns(one as f32));
             }
@@ -308,10 +328,10 @@ fn val_jitter_from_scatter() {
             inside += u32::from(off.abs() <= 2.0 * f64::from(found.standard_uncertainty.as_ns()));
             sum += f64::from(found.rms.as_ns()).powi(2);
         }
-        let share = f64::from(inside) / f64::from(series);
+        let share = f64::from(inside) / series as f64;
         println!(
             "jitter {jitter:.4} ns in noise of {one:.4} ns: found {:.4} ns rms, {:.1} % within k = 2",
-            (sum / f64::from(series)).sqrt(),
+            (sum / series as f64).sqrt(),
             100.0 * share
         );
         assert!(share > 0.92, "{jitter}: {share}");
@@ -357,9 +377,10 @@ fn val_average_of_jittering_shots() {
         (noise, 1e-9),
         (0.0, 1.0),
         250,
+        21,
     );
     let (share, chance) = coverage(&all);
-    let unaware = readings(&setup, 16, (noise, 1e-9), (0.0, 1.0), 250);
+    let unaware = readings(&setup, 16, (noise, 1e-9), (0.0, 1.0), 250, 21);
     println!(
         "1 ns of jitter, 16 shots: {:.1} +- {:.1} % inside, {:.1} % if the set-up does not state it",
         100.0 * share,

@@ -1,10 +1,13 @@
 //! A wall behind a delay line whose interface echo is five hundred times its back wall (54 dB), from records at two gains. Truth: the signal that
-//! the check itself makes (oracle.rs): interface, back walls, noise of the receiver's input, an ideal converter.
+//! the check itself makes (oracle.rs): interface, back walls, noise of the receiver's input, an ideal converter; and the
+//! simulator's walls, which share no code with the core.
 
 use halfpulse::{
     AdcFormat, Decibels, Gauge, GaugeSetup, Hertz, Material, Metres, MetresPerSecond, NoReading, Probe, Record,
     SampleClock, Scratch, Seconds, Span, TwoGains, TwoGainsError, Window, Zero,
 };
+use halfpulse_sim::scene::{Back, DelayLine, ProbeKind, Scene};
+use halfpulse_sim::synthesise::{Shot, Synthesiser};
 use halfpulse_tests::oracle::{self, Random};
 use halfpulse_tests::page::Figures;
 
@@ -161,4 +164,81 @@ fn two_gains_that_contradict() {
     let silence: Vec<i16> = (0..SAMPLES).map(|_| random.normal().round() as i16).collect();
     let pair = TwoGains::new(record(&silence), record(&loud), Decibels::new(20.0)).expect("nothing to contradict");
     assert!(matches!(gauge.measure_two_gains(&pair), Err(NoReading::NoEcho { .. })));
+}
+
+/// A simulated steel wall between plastic and a medium hardly softer, so that its back wall returns 15 %: 31 dB below the
+/// interface echo, the next one 16 dB lower. `gain_db` is asked of a receiver whose steps are off by 0.3 dB rms.
+fn simulated(wall_mm: f64, delay_mm: f64, gain_db: f64, shot: u64) -> Shot {
+    let mut scene = Scene::contact(5.0, 60.0, "carbon steel", wall_mm);
+    scene.probe.kind = ProbeKind::DelayLine;
+    scene.delay_line = Some(DelayLine {
+        material: Some("polystyrene".into()),
+        length_mm: Some(delay_mm),
+        attenuation_exponent: 1.0,
+        ..DelayLine::default()
+    });
+    scene.wall.velocity_m_s = Some(5920.0);
+    scene.back = Back {
+        impedance_mrayl: Some(34.3),
+        ..Back::default()
+    };
+    scene.record.samples = SAMPLES;
+    scene.record.first_sample_us = 9.0;
+    (scene.record.first_back_wall_percent, scene.record.gain_db) = (None, Some(gain_db));
+    (scene.noise.snr_db, scene.noise.rms_steps) = (None, Some(0.3));
+    scene.receiver.thermal_noise_uv = 60.0;
+    (scene.receiver.gain_step_db, scene.receiver.gain_error_db) = (0.5, 0.3);
+    Synthesiser::new(&scene).expect("a sound scene").shot(93, shot)
+}
+
+/// The same of simulated walls: quiet and loud record of each wall read right within k = 2, the loud one alone never without a
+/// doubt, and its interface echo is clipped.
+#[test]
+fn val_two_gains_of_simulated_walls() {
+    let mut scratch = Box::new(Scratch::<SAMPLES>::ZERO);
+    let mut setup = setup(Span::InterfaceToBackWall);
+    setup.window = Window {
+        from: Seconds::from_us(10.0),
+        to: Seconds::from_us(29.0),
+    };
+    let mut gauge = Gauge::new(setup, scratch.workspace()).expect("a sound set-up");
+    let mut random = Random::new(94);
+    let trials = 150;
+    let (mut read, mut inside, mut doubted, mut alone) = (0, 0, 0, 0);
+    let (mut squares, mut uncertainties, mut gross) = (0.0, 0.0, 0);
+    for shot in 0..trials {
+        let wall_mm = 5.0 + 6.0 * random.uniform();
+        let delay_mm = 14.0 + 0.5 * random.uniform();
+        let (quiet, loud) = (
+            simulated(wall_mm, delay_mm, 0.0, 2 * shot),
+            simulated(wall_mm, delay_mm, 26.0, 2 * shot + 1),
+        );
+        assert!(loud.codes.iter().any(|&code| code == 2047 || code == -2048));
+        let pair = TwoGains::new(quiet.record(), loud.record(), Decibels::new(26.0)).expect("two gains of one place");
+        match gauge.measure_two_gains(&pair) {
+            Ok(reading) => {
+                let error = f64::from(reading.thickness.as_mm()) - wall_mm;
+                let u = f64::from(reading.standard_uncertainty.as_mm());
+                read += 1;
+                doubted += u32::from(!reading.doubts.is_empty());
+                inside += u32::from(error.abs() <= 2.0 * u);
+                gross += u32::from(error.abs() > 2.0 * u + 0.25 * 5920.0 / 5e6 * 1e3);
+                squares += error * error;
+                uncertainties += u;
+            }
+            Err(why) => println!("{wall_mm:.3} mm: {why}"),
+        }
+        let undoubted = |reading: halfpulse::Reading| reading.doubts.is_empty();
+        alone += u32::from(gauge.measure(&loud.record()).is_ok_and(undoubted));
+    }
+    let share = f64::from(inside) / f64::from(read);
+    println!(
+        "simulated walls, 26 dB apart: {read} of {trials} read, {doubted} doubted, {:.1} +- {:.1} % inside, {gross} gross, {:.3} um rms, stated {:.3} um; loud record alone undoubted {alone}",
+        100.0 * share,
+        196.0 * (share * (1.0 - share) / f64::from(read)).sqrt(),
+        1e3 * (squares / f64::from(read)).sqrt(),
+        1e3 * uncertainties / f64::from(read)
+    );
+    assert!(read >= trials as u32 * 97 / 100 && share >= 0.91 && doubted <= trials as u32 / 20);
+    assert!(gross == 0 && alone == 0);
 }
