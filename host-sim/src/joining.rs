@@ -30,6 +30,12 @@ pub enum Joining {
 }
 
 impl Joining {
+    /// What becomes of a campaign's shots of one run.
+    #[must_use]
+    pub const fn of_run(shots: u64) -> Self {
+        if shots > 1 { Self::Average(None) } else { Self::None }
+    }
+
     /// Samples of the record for each of a shot.
     #[must_use]
     pub const fn phases(self) -> u8 {

@@ -100,6 +100,23 @@ pub struct Measured {
     pub jitter: Option<TriggerJitter>,
 }
 
+impl Measured {
+    /// What was not measured at all.
+    #[must_use]
+    pub fn refused(gauge: &Gauge<'_>, reason: &'static str, detail: String) -> Self {
+        Self {
+            file: String::new(),
+            shot: None,
+            span: Some(gauge.setup().span),
+            outcome: Err(Refusal { reason, detail }),
+            findings: gauge.findings().clone(),
+            full_scale: 1.0,
+            wall_limits: None,
+            jitter: None,
+        }
+    }
+}
+
 /// How far, in samples, the set-up's time of the first sample may lie from the file's: the rounding of times
 /// to whole nanoseconds at up to 200 MS/s.
 const FIRST_SAMPLE_TOLERANCE: f64 = 0.1;

@@ -4,8 +4,7 @@ Three echoes of a Gaussian pulse of 60 % (relative heights 1, 0.7, 0.49), 40 dB 
 2 % rms. A gain pattern mirrors the echo about multiples of the base rate, into its band and beside it; what is beside the band is
 regressed on what is inside, phase by phase, until nothing is left (with all sums over several rounds for the last column).
 
-Needs NumPy only: python3 tests/oracles/phase_gains.py. Where the base rate is so low that images of one phase pattern lie
-wholly inside the band (2 MS/s for 5 MHz, 5 MS/s for 10 MHz) the gains are not determined at all.
+Needs NumPy only: python3 tests/oracles/phase_gains.py (a few minutes).
 """
 import numpy as np
 

@@ -10,6 +10,7 @@ use super::path;
 use super::places::{Lines, Places};
 use crate::input_error::InputError;
 use crate::spelling;
+use halfpulse::record::average::MOST_SHOTS;
 use std::path::{Path, PathBuf};
 use toml::{Table, Value};
 
@@ -47,6 +48,10 @@ pub const KEYS: &[(&str, &str)] = &[
     ("about", "what it is for; any text"),
     ("seed", "a whole number; run i draws from it and i alone; default 1"),
     ("runs", "runs of each cell"),
+    (
+        "shots",
+        "shots of each run, 1 if left out; an even number up to 512 is averaged as two rounds, whose difference tells noise, movement and interference",
+    ),
     ("scene_file", "scene file, relative to this file"),
     ("setup_file", "set-up file, relative to this file"),
     ("scene", "tables of the scene, laid over the scene file; or all of it"),
@@ -119,6 +124,8 @@ pub struct Campaign {
     pub seed: u64,
     /// Runs of each cell.
     pub runs: u64,
+    /// Shots of each run: one, or an even number that is averaged as two rounds.
+    pub shots: u64,
     /// Tables `scene`, `setup` and `shot` before grid and draws.
     pub base: Table,
     /// The grid; the last axis changes first.
@@ -230,6 +237,7 @@ impl Campaign {
             name,
             seed: whole_number(&written, &places, "seed", Some(1))?,
             runs: whole_number(&written, &places, "runs", None)?,
+            shots: whole_number(&written, &places, "shots", Some(1))?,
             axes: axes(&written, &places)?,
             draws: draws(&written, &places, "draw", &[])?,
             pulse: LearnedPulse::parse(&written, &places)?,
@@ -288,6 +296,11 @@ impl Campaign {
             return Err(self
                 .places
                 .fault("runs", "runs = 0 measures nothing", "give at least 1"));
+        }
+        let two_rounds = self.shots.is_multiple_of(2) && (2..=2 * u64::from(MOST_SHOTS)).contains(&self.shots);
+        if self.shots != 1 && !two_rounds {
+            let what = format!("shots = {} make no two rounds", self.shots);
+            return Err(self.places.fault("shots", what, "give 1, or an even number up to 512"));
         }
         let cells = self
             .axes

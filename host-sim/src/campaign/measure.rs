@@ -7,10 +7,12 @@ use super::learned::Pulses;
 use super::resolve::Resolved;
 use super::row::{Row, RowReading};
 use crate::input_error::InputError;
-use crate::measuring::{HeapScratch, Measured, Refusal};
+use crate::joining::{self, Joining};
+use crate::measuring::{HeapScratch, Measured};
 use crate::setup_file::SetupFile;
 use crate::synthesise::{Shot, Synthesiser, Truth, Variation};
-use halfpulse::Span;
+use halfpulse::{Seconds, Span};
+use std::path::Path;
 use toml::Value;
 
 /// What one thread keeps from run to run; no result depends on it.
@@ -93,11 +95,16 @@ impl<'c> Measurer<'c> {
             ));
         };
         let seed = shot_seed(campaign.seed, run);
-        let shot = if variation == Variation::default() {
-            maker.shot(seed, 0)
-        } else {
-            maker.varied_shot(seed, 0, variation)
+        let mut taken = |number: u64| {
+            if variation == Variation::default() {
+                maker.shot(seed, number)
+            } else {
+                maker.varied_shot(seed, number, variation)
+            }
         };
+        let shot = taken(0);
+        let mut shots = vec![shot.codes.clone()];
+        shots.extend((1..campaign.shots).map(|number| taken(number).codes));
         if shot.codes.len() > self.samples {
             self.samples = shot.codes.len();
             self.scratch = HeapScratch::new(self.samples);
@@ -117,23 +124,15 @@ impl<'c> Measurer<'c> {
             Some(pulse) => setup.gauge_with_pulse(self.scratch.workspace(), Some(pulse))?,
             None => setup.gauge(self.scratch.workspace())?,
         };
-        let outcome = match &calibrated {
-            Some(Err(error)) => Err(Refusal {
-                reason: calibration::REFUSED,
-                detail: error.to_string(),
-            }),
-            _ => gauge.measure(&shot.record()).map_err(Refusal::from),
+        let name = format!("run {run}");
+        let (path, joining) = (Path::new(&name), Joining::of_run(campaign.shots));
+        let (records, clock) = joining::join(path, shots, shot.format, shot.clock, joining, Seconds::ZERO)?;
+        let mut measured = match (&calibrated, records.first()) {
+            (Some(Err(error)), _) => Measured::refused(&gauge, calibration::REFUSED, error.to_string()),
+            (_, Some(record)) => joining::measure(&mut gauge, &name, record, clock, false),
+            (_, None) => Measured::refused(&gauge, calibration::REFUSED, "no shots".to_string()),
         };
-        let measured = Measured {
-            file: format!("run {run}"),
-            shot: Some(0),
-            span: Some(gauge.setup().span),
-            outcome,
-            findings: gauge.findings().clone(),
-            full_scale: shot.format.full_scale(),
-            wall_limits: None,
-            jitter: None,
-        };
+        (measured.file, measured.shot) = (name, Some(0));
         let quarter_mm = 250.0 * shot.truth.wall_velocity_m_s / (maker.scene().probe.centre_frequency_mhz * 1e6);
         // The bound is that of the timing alone: a velocity that was learned has its own error.
         let between_back_walls = gauge.setup().span == Span::BackWallToBackWall;
@@ -143,7 +142,8 @@ impl<'c> Measurer<'c> {
             cell: resolved.cell,
             truth_mm: true_wall_mm(&shot.truth),
             quarter_mm,
-            bound_mm: bound.map(|bound| bound * 1e3),
+            // That of a shot over the root of their number.
+            bound_mm: bound.map(|bound| bound * 1e3 / (campaign.shots as f64).sqrt()),
             outcome: match &measured.outcome {
                 Ok(reading) => Ok(RowReading {
                     thickness_mm: reading.thickness.get() * 1e3,
