@@ -191,8 +191,8 @@ fn simulated(wall_mm: f64, delay_mm: f64, gain_db: f64, shot: u64) -> Shot {
     Synthesiser::new(&scene).expect("a sound scene").shot(93, shot)
 }
 
-/// The same of simulated walls: quiet and loud record of each wall read right within k = 2, the loud one alone never without a
-/// doubt, and its interface echo is clipped.
+/// The same of simulated walls: quiet and loud record of each wall read right within k = 2; the loud one alone, whose interface echo
+/// is clipped, hardly ever without a doubt, and never grossly wrong then.
 #[test]
 fn val_two_gains_of_simulated_walls() {
     let mut scratch = Box::new(Scratch::<SAMPLES>::ZERO);
@@ -228,8 +228,14 @@ fn val_two_gains_of_simulated_walls() {
             }
             Err(why) => println!("{wall_mm:.3} mm: {why}"),
         }
-        let undoubted = |reading: halfpulse::Reading| reading.doubts.is_empty();
-        alone += u32::from(gauge.measure(&loud.record()).is_ok_and(undoubted));
+        if let Ok(reading) = gauge.measure(&loud.record())
+            && reading.doubts.is_empty()
+        {
+            // What is left of the interface echo may tell its place.
+            let error = f64::from(reading.thickness.as_mm()) - wall_mm;
+            alone += 1;
+            gross += u32::from(error.abs() > f64::from(reading.expanded().as_mm()) + 0.25 * 5920.0 / 5e6 * 1e3);
+        }
     }
     let share = f64::from(inside) / f64::from(read);
     println!(
@@ -240,5 +246,5 @@ fn val_two_gains_of_simulated_walls() {
         1e3 * uncertainties / f64::from(read)
     );
     assert!(read >= trials as u32 * 97 / 100 && share >= 0.91 && doubted <= trials as u32 / 20);
-    assert!(gross == 0 && alone == 0);
+    assert!(gross == 0 && alone <= trials as u32 / 10);
 }

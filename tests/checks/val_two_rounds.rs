@@ -12,6 +12,7 @@ use halfpulse::{
 use halfpulse_sim::scene::{Bursts, Scene, Spikes};
 use halfpulse_sim::synthesise::Synthesiser;
 use halfpulse_tests::oracle::{self, Random};
+use halfpulse_tests::page::Figures;
 
 const RATE: f64 = 50e6;
 const LENGTH: usize = 2048;
@@ -82,6 +83,7 @@ fn two_rounds(gauge: &mut Gauge<'_>, mut earlier: Vec<i16>, mut later: Vec<i16>)
 /// anywhere between two codes; from one shot and from two.
 #[test]
 fn val_noise_estimate() {
+    let mut figures = Figures::of("val_noise_estimate");
     let mut scratch = Box::new(Scratch::<LENGTH>::ZERO);
     let mut gauge = Gauge::new(setup(Span::BackWallToBackWall, 40.0), scratch.workspace()).expect("a sound set-up");
     let trials = 60;
@@ -112,21 +114,23 @@ fn val_noise_estimate() {
             }
             let rms = |errors: &[f64]| (errors.iter().map(|e| e * e).sum::<f64>() / errors.len() as f64).sqrt();
             let mean = |errors: &[f64]| errors.iter().sum::<f64>() / errors.len() as f64;
-            println!(
+            figures.line(&format!(
                 "{words}, {noise:>4} steps: one shot {:.1} % rms ({:+.1} % on average), two {:.1} % ({:+.1} %)",
                 100.0 * rms(&one),
                 100.0 * mean(&one),
                 100.0 * rms(&two),
                 100.0 * mean(&two)
-            );
+            ));
             assert!(rms(&one) < limits.0 && rms(&two) < limits.1, "{words} {noise}");
         }
     }
+    figures.check();
 }
 
 /// The stated uncertainty holds in white noise from one shot and from two, from 0.3 steps on, wherever the record rests.
 #[test]
 fn val_coverage_below_the_step() {
+    let mut figures = Figures::of("val_coverage_below_the_step");
     let mut scratch = Box::new(Scratch::<LENGTH>::ZERO);
     let trials = 500;
     for span in [Span::TransmissionPulseToBackWall, Span::BackWallToBackWall] {
@@ -158,17 +162,18 @@ fn val_coverage_below_the_step() {
                 two += u32::from(found.as_ref().is_ok_and(inside));
             }
             let percent = |count: u32| 100.0 * f64::from(count) / f64::from(trials);
-            println!(
+            figures.line(&format!(
                 "{span:?}, {noise} steps: inside k = 2 from one shot {:.1} %, from two {:.1} %, {refused} refused",
                 percent(one),
                 percent(two)
-            );
+            ));
             let range = if noise < 0.5 { 91.5..=99.6 } else { 92.0..=98.5 };
             assert!(range.contains(&percent(one)), "{span:?} {noise}: {}", percent(one));
             assert!(range.contains(&percent(two)), "{span:?} {noise}: {}", percent(two));
             assert!(refused <= 1, "{refused}");
         }
     }
+    figures.check();
 }
 
 /// What came of records without a wall.
@@ -192,6 +197,7 @@ impl Tally {
 /// Bursts of another machine, and spikes, that come at another time in each shot: never read without a doubt from two shots.
 #[test]
 fn val_interference_is_not_in_both_rounds() {
+    let mut figures = Figures::of("val_interference_is_not_in_both_rounds");
     let mut scratch = Box::new(Scratch::<4096>::ZERO);
     let mut random = Random::new(37);
     for kind in ["bursts", "spikes", "bursts in step with the trigger"] {
@@ -229,10 +235,10 @@ fn val_interference_is_not_in_both_rounds() {
                 one.count(&gauge.measure(&Record::new(&a, AdcFormat::signed(12), clock())));
                 two.count(&two_rounds(&mut gauge, a, b));
             }
-            println!(
+            figures.line(&format!(
                 "{kind}, {span:?}: undoubted, doubted, refused from one shot {} {} {}, from two {} {} {}",
                 one.undoubted, one.doubted, one.refused, two.undoubted, two.doubted, two.refused
-            );
+            ));
             if kind.contains("step") {
                 // The same in all shots: nothing but another trigger could tell.
                 assert!(two.undoubted <= one.undoubted + 2);
@@ -246,12 +252,14 @@ fn val_interference_is_not_in_both_rounds() {
             }
         }
     }
+    figures.check();
 }
 
 /// A wall that moves from round to round by more than its uncertainty is refused, one that keeps still is not, and one whose trigger
 /// jitters as the set-up says is not either.
 #[test]
 fn val_a_moving_wall_is_refused() {
+    let mut figures = Figures::of("val_a_moving_wall_is_refused");
     let mut scratch = Box::new(Scratch::<LENGTH>::ZERO);
     let trials = 200;
     for span in [Span::TransmissionPulseToBackWall, Span::BackWallToBackWall] {
@@ -291,9 +299,7 @@ fn val_a_moving_wall_is_refused() {
                     Err(_) => refused += 1,
                 }
             }
-            println!(
-                "{span:?}, {moved_um} um, jitter {jitter_ns} ns: {unsteady} of {trials} unsteady, {refused} refused, {outside} not right at both ends"
-            );
+            figures.line(&format!("{span:?}, {moved_um} um, jitter {jitter_ns} ns: {unsteady} of {trials} unsteady, {refused} refused, {outside} not right at both ends"));
             assert_eq!(refused, 0);
             if doubt {
                 assert!(unsteady >= trials * 97 / 100);
@@ -302,4 +308,5 @@ fn val_a_moving_wall_is_refused() {
             }
         }
     }
+    figures.check();
 }
