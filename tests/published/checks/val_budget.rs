@@ -409,6 +409,18 @@ fn val_guard_bands_of_jcgm_106() {
     );
 }
 
+/// The deepest place of a rough back wall lies up to 2.5 times its root mean square before the mean (common practice), as the
+/// half-width of a rectangle.
+#[test]
+fn roughness_by_hand() {
+    let rough = setup(Span::BackWallToBackWall, 0.0, 0.0, 0.0).with_roughness(Metres::new(10e-6));
+    let found = budget(&rough, &TrainTimes::single(timed(3.0, 0.0)), Metres::from_mm(5.0));
+    assert!(
+        (term(&found, Source::Roughness) / (25e-6 / 3f64.sqrt()) - 1.0).abs() < 1e-5,
+        "{found:?}"
+    );
+}
+
 /// Every source has a word of its own, and every state of a drift check a word and an advice.
 #[test]
 fn words_are_distinct() {
