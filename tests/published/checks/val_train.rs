@@ -227,7 +227,7 @@ fn val_clipped_first_multiple() {
         let bound = oracle::period_bound(pulse, &times, START, 133.6, &heights, NOISE);
         let stated = f64::from(train.period_uncertainty.expect("four echoes")) / bound;
         println!("{height}: stated {stated:.3} of the bound");
-        assert!((stated - 1.0).abs() < 0.05, "{height}: {stated}");
+        assert!((stated - 1.0).abs() < 0.01, "{height}: {stated}");
         // A sample off the line it is as uncertain.
         let mut moved = echoes.clone();
         moved[0].0 += 0.9;
