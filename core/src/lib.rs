@@ -90,7 +90,7 @@ pub use echo::shots::{Jitter, ShotArrivals};
 pub use echo::{Echo, EchoList, EchoRole, Polarity};
 pub use gauge::two_gains::{TwoGains, TwoGainsError};
 pub use gauge::uncoupled::{TailFit, Uncoupled, UncoupledError};
-pub use gauge::{CoatingReading, CoatingThickness, Findings, Gauge, Reading};
+pub use gauge::{CoatingReading, CoatingThickness, Findings, Gauge, Interpretation, Reading};
 pub use outcome::{Doubt, Doubts, NoReading};
 pub use record::average::{AverageError, Averager, Interleaver};
 pub use record::movement::{Movement, movement};

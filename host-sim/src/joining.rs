@@ -325,6 +325,7 @@ pub fn measure(gauge: &mut Gauge<'_>, name: &str, joined: &Joined, clock: Sample
         span: Some(gauge.setup().span),
         outcome,
         findings: findings.clone(),
+        thin_wall: None,
         full_scale: format.full_scale(),
         wall_limits: None,
         jitter: None,

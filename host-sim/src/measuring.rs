@@ -4,11 +4,13 @@ use crate::input_error::InputError;
 use crate::joining::TriggerJitter;
 use crate::record_file::RecordFile;
 use crate::setup_file::SetupFile;
+use halfpulse::echo::separation::thin_wall::ThinWall;
 use halfpulse::record::average::{AverageError, Averager, MOST_SHOTS};
 use halfpulse::setup::PULSE_CAPACITY;
 use halfpulse::workspace::{CORRELATION_CAPACITY, ECHO_CAPACITY, TRAIN_LAGS};
 use halfpulse::{
-    AdcFormat, Findings, Gauge, Metres, NoReading, Reading, Record, SampleClock, Seconds, Span, Workspace,
+    AdcFormat, Findings, Gauge, Interpretation, Metres, NoReading, Reading, Record, SampleClock, Seconds, Span,
+    Workspace,
 };
 use std::path::Path;
 
@@ -92,6 +94,8 @@ pub struct Measured {
     pub outcome: Result<Reading, Refusal>,
     /// What the record held.
     pub findings: Findings,
+    /// What a thin wall's reading rests on.
+    pub thin_wall: Option<ThinWall>,
     /// Codes from zero to full scale.
     pub full_scale: f32,
     /// The smallest and the largest wall that set-up and record can read, if there is a set-up.
@@ -109,6 +113,7 @@ impl Measured {
             shot: None,
             span: Some(gauge.setup().span),
             outcome: Err(Refusal { reason, detail }),
+            thin_wall: None,
             findings: gauge.findings().clone(),
             full_scale: 1.0,
             wall_limits: None,
@@ -229,6 +234,12 @@ pub fn averaged(path: &Path, file: &RecordFile) -> Result<Shot, InputError> {
     })
 }
 
+/// What the reading that was made last rests on, if it is that of a thin wall.
+pub fn thin_wall(gauge: &mut Gauge<'_>, record: &Record<'_>, outcome: &Result<Reading, Refusal>) -> Option<ThinWall> {
+    let thin = matches!(outcome, Ok(reading) if reading.interpretation == Interpretation::ThinWall);
+    thin.then(|| gauge.thin_wall(record).ok()).flatten()
+}
+
 /// Measures one shot.
 pub fn measure(gauge: &mut Gauge<'_>, name: &str, shot: &Shot, clock: SampleClock) -> Measured {
     let record = Record::new(&shot.codes, shot.format, clock);
@@ -237,6 +248,7 @@ pub fn measure(gauge: &mut Gauge<'_>, name: &str, shot: &Shot, clock: SampleCloc
         file: name.to_string(),
         shot: shot.number,
         span: Some(gauge.setup().span),
+        thin_wall: thin_wall(gauge, &record, &outcome),
         outcome,
         findings: gauge.findings().clone(),
         full_scale: shot.format.full_scale(),

@@ -76,6 +76,7 @@ impl StoredRecord {
                     detail: why.to_string(),
                 }),
             },
+            thin_wall: None,
             findings: if belongs {
                 gauge.findings().clone()
             } else {

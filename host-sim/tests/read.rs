@@ -17,6 +17,7 @@ const KEYS: [&str; 23] = [
     "coating_standard_uncertainty_mm",
     "coating_round_trip_ns",
     "coating_round_trip_standard_uncertainty_ns",
+    "interpretation",
     "wrong_cycle_probability",
     "doubts",
     "no_reading",

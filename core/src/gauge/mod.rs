@@ -5,6 +5,7 @@
 //! another gauge from them; [`interpretation`] holds what a set-up means for one record.
 
 pub mod interpretation;
+mod overlapping;
 mod separating;
 pub mod stage;
 mod steps;
@@ -27,7 +28,7 @@ use crate::units::{Metres, MetresPerSecond, Seconds};
 use crate::wall::limits::{Limits, LimitsVerdict};
 use crate::wall::thickness::{self, Timed};
 use crate::wall::uncertainty::Budget;
-use crate::wall::way;
+use crate::wall::{thin, way};
 use crate::workspace::{CORRELATION_CAPACITY, Workspace};
 
 /// A thickness that can be signed for.
@@ -42,7 +43,10 @@ pub struct Reading {
     pub coverage_factor: f32,
     /// The coating, where the set-up names one and the echoes show it. The wall owes nothing to it.
     pub coating: Option<CoatingReading>,
-    /// Upper bound of the probability that another cycle was read.
+    /// What the echoes were read as.
+    pub interpretation: Interpretation,
+    /// Upper bound of the probability that another cycle was read; of a thin wall, that another period was, or that there is
+    /// no wall.
     pub wrong_cycle_probability: f32,
     /// Reasons to look twice.
     pub doubts: Doubts,
@@ -67,6 +71,30 @@ impl Reading {
             self.coverage_factor,
             self.doubts,
         )
+    }
+}
+
+/// What the echoes of a reading were taken for.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, Default)]
+#[non_exhaustive]
+#[cfg_attr(feature = "defmt", derive(defmt::Format))]
+pub enum Interpretation {
+    /// Echoes that stand clear of each other: the multiples of one wall, or a lone one.
+    #[default]
+    Train,
+    /// A wall behind a delay line so thin that its echoes overlap with each other and with the interface echo, all of them
+    /// fitted at once: see [`crate::echo::separation::thin_wall`].
+    ThinWall,
+}
+
+impl Interpretation {
+    /// One stable word for programs.
+    #[must_use]
+    pub const fn word(self) -> &'static str {
+        match self {
+            Self::Train => "train",
+            Self::ThinWall => "thin-wall",
+        }
     }
 }
 
@@ -101,7 +129,7 @@ pub struct Findings {
     pub noise: f32,
     /// The echoes in the order of their arrival.
     pub echoes: EchoList,
-    /// The multiples of the wall, if they could be told.
+    /// The multiples of the wall, if they could be told; `None` for a thin wall, see [`Gauge::thin_wall`].
     pub train: Option<Train>,
     /// The pulse as the best echo shows it; `None` if no echo stands high enough above the noise.
     pub pulse: Option<PulseMetrics>,
@@ -121,8 +149,13 @@ pub struct Gauge<'w> {
     detector: Detector,
     spreading: Spreading,
     learned_on: Option<Metres>,
+    second_look: Option<SecondLook<'w>>,
     findings: Findings,
 }
+
+/// What reads a record again whose outcome is in doubt. A function's address and not its name, so that an image that never
+/// learns a pulse, and so can never need it, does not hold it.
+type SecondLook<'w> = for<'g, 'r, 'c> fn(&'g mut Gauge<'w>, &'r Record<'c>, &'r Noise, &mut Result<Reading, NoReading>);
 
 impl<'w> Gauge<'w> {
     /// Makes a gauge with the pulse that the probe's data sheet promises.
@@ -150,6 +183,7 @@ impl<'w> Gauge<'w> {
             detector,
             spreading: way::spreading(&setup, None),
             learned_on: None,
+            second_look: None,
             findings: Findings::default(),
         };
         gauge.fit_detector();
@@ -224,6 +258,7 @@ impl<'w> Gauge<'w> {
         self.facts = facts;
         if result.is_ok() {
             self.trust = PulseTrust::learned(&self.facts);
+            self.second_look = Some(Self::look_again);
         }
         if learned_on != self.learned_on {
             self.learned_on = learned_on;
@@ -274,14 +309,18 @@ impl<'w> Gauge<'w> {
         way::path_deviation(&self.setup, &self.spreading, wall)
     }
 
-    /// The thinnest and the thickest wall that the set-up reads with the pulse in force.
+    /// The thinnest and the thickest wall that the set-up reads with the pulse in force. Behind a delay line a learned pulse
+    /// reads walls half as thin as a modelled one ([`thin::thinnest`]).
     #[must_use]
     pub fn wall_limits(&self) -> (Metres, Metres) {
         let duration = self.setup.sample_rate.period() * self.facts.envelope_duration;
-        (
-            thickness::thinnest_wall(&self.setup, duration),
-            thickness::thickest_wall(&self.setup, duration),
-        )
+        let learned = matches!(self.trust, PulseTrust::Learned { .. });
+        let thinnest = if learned && thin::applies(&self.setup) {
+            thin::thinnest(&self.setup, duration)
+        } else {
+            thickness::thinnest_wall(&self.setup, duration)
+        };
+        (thinnest, thickness::thickest_wall(&self.setup, duration))
     }
 
     /// The same as far as a record goes that was just measured, and behind a delay line that the set-up does not state, from the
@@ -368,8 +407,8 @@ impl<'w> Gauge<'w> {
         let (scan, noise) = &mut heard;
         meter.meter(Stage::Echoes, || self.measure_echoes(record, range, scan, noise));
         let outcome = match meter.meter(Stage::Train, || self.find_train(record, range, scan, noise)) {
-            Ok(train) => meter.meter(Stage::Wall, || self.wall(record, noise, &train)),
-            Err(why) => Err(why),
+            Ok(train) => meter.meter(Stage::Wall, || self.wall_or_thin_wall(record, noise, &train)),
+            Err(why) => meter.meter(Stage::Wall, || self.refused_or_thin_wall(record, noise, why)),
         };
         // What is known of the pulse helps most where there was no reading.
         meter.meter(Stage::Pulse, || self.describe(record, noise));

@@ -1,7 +1,7 @@
 //! The steps of [`Gauge::measure`](super::Gauge::measure), a method for each [`Stage`](super::stage::Stage).
 
 use super::interpretation::{clearest, coating_trip, rules, signs, start_of_wall, times};
-use super::{CoatingReading, CoatingThickness, Gauge, Reading};
+use super::{CoatingReading, CoatingThickness, Gauge, Interpretation, Reading};
 use crate::echo::noise::{Noise, TimingNoise, listen, reached};
 use crate::echo::pulse::{PulseContext, PulseFacts, ReferencePulse, measure_pulse};
 use crate::echo::rest::{Rest, is_below_the_step, rest};
@@ -376,6 +376,7 @@ impl Gauge<'_> {
             standard_uncertainty,
             coverage_factor: self.setup.coverage_factor,
             coating,
+            interpretation: Interpretation::Train,
             wrong_cycle_probability,
             doubts: judgement::doubts(&evidence, wrong_cycle_probability),
             budget,

@@ -11,12 +11,13 @@ use crate::outcome::{Doubt, Doubts};
 use crate::path::PathLaw;
 use crate::setup::{EchoSign, GaugeSetup, ProbeKind, Span};
 use crate::units::{Metres, Seconds};
+use crate::wall::company;
 use crate::wall::thickness::{self, Timed, TrainTimes};
 use crate::wall::uncertainty::{self, Budget};
 use crate::wall::{curvature, way};
 
 /// Wrong-cycle probability above which the signal counts as low.
-const WRONG_CYCLE_LIMIT: f32 = 1e-3;
+pub(super) const WRONG_CYCLE_LIMIT: f32 = 1e-3;
 /// Below this many samples a cycle the sampling counts as coarse.
 const SAMPLES_PER_CYCLE_LIMIT: f32 = 4.0;
 
@@ -288,6 +289,34 @@ pub fn not_the_pulse(evidence: &Evidence<'_>) -> Option<u16> {
     (strangeness > NOT_THE_PULSE).then(|| u16::try_from(percent).unwrap_or(u16::MAX))
 }
 
+/// The doubts that a set-up alone gives cause for, whatever the echoes look like.
+#[must_use]
+pub fn doubts_of_setup(setup: &GaugeSetup, wall: Metres, expanded: Metres, budget: &Budget) -> Doubts {
+    let mut doubts = Doubts::NONE;
+    // A single block covers a point. How far the part lies from it stands in the budget already (velocity,
+    // beam); what only a second block shows, a velocity that changes, its stated uncertainty must cover.
+    if let Some(range) = setup.calibrated
+        && range.from < range.to
+    {
+        doubts.raise_if(
+            wall + expanded < range.from || wall - expanded > range.to,
+            Doubt::OutsideCalibratedRange,
+        );
+    }
+    doubts.raise_if(way::unknown_beam_matters(setup, wall, expanded), Doubt::BeamUnknown);
+    doubts.raise_if(curvature::matters(setup, expanded), Doubt::CurvedSurface);
+    doubts.raise_if(
+        uncertainty::unknown_temperature_matters(setup, wall, budget),
+        Doubt::TemperatureUnknown,
+    );
+    doubts.raise_if(way::v_path_matters(setup, wall, expanded), Doubt::VPathUncorrected);
+    doubts.raise_if(
+        setup.samples_per_cycle() < SAMPLES_PER_CYCLE_LIMIT,
+        Doubt::CoarseSampling,
+    );
+    doubts
+}
+
 /// Every doubt that applies; `wrong_cycle` is [`wrong_cycle_probability`], which the reading states too.
 #[must_use]
 pub fn doubts(evidence: &Evidence<'_>, wrong_cycle: f32) -> Doubts {
@@ -301,7 +330,7 @@ pub fn doubts(evidence: &Evidence<'_>, wrong_cycle: f32) -> Doubts {
     let span = thickness::wall_span(setup);
     let facts = &evidence.surroundings.pulse.facts;
     let period = evidence.surroundings.record.clock().rate.period();
-    let mut doubts = Doubts::NONE;
+    let mut doubts = doubts_of_setup(setup, wall, expanded, evidence.budget);
 
     // Two echoes have one distance, and nothing but the start can contradict it.
     let start_agrees = train.start_difference.abs() < 0.6 * evidence.surroundings.samples_per_cycle;
@@ -328,6 +357,17 @@ pub fn doubts(evidence: &Evidence<'_>, wrong_cycle: f32) -> Doubts {
     );
     doubts.raise_if(evidence.strangeness() > UNRECOGNISED, Doubt::PulseMismatch);
     doubts.raise_if(train.thinner_too || evidence.has_earlier_echo(), Doubt::EarlierEcho);
+    // A V makes the first echoes of thin walls weak and moves the others by its own law.
+    if setup.probe.kind != ProbeKind::DualElement {
+        doubts.raise_if(
+            company::beats(evidence.surroundings, evidence.echoes),
+            Doubt::OverlappingEcho,
+        );
+        doubts.raise_if(
+            company::parts(evidence.surroundings, evidence.echoes, train),
+            Doubt::EarlierEcho,
+        );
+    }
     if span == Span::TransmissionPulseToBackWall
         && let Some(first) = evidence.back_wall(1)
     {
@@ -338,27 +378,6 @@ pub fn doubts(evidence: &Evidence<'_>, wrong_cycle: f32) -> Doubts {
     }
     doubts.raise_if(wrong_cycle > WRONG_CYCLE_LIMIT, Doubt::LowSignal);
     doubts.raise_if(!evidence.stands_out(), Doubt::LowSignal);
-    // A single block covers a point. How far the part lies from it stands in the budget already (velocity,
-    // beam); what only a second block shows, a velocity that changes, its stated uncertainty must cover.
-    if let Some(range) = setup.calibrated
-        && range.from < range.to
-    {
-        doubts.raise_if(
-            wall + expanded < range.from || wall - expanded > range.to,
-            Doubt::OutsideCalibratedRange,
-        );
-    }
-    doubts.raise_if(way::unknown_beam_matters(setup, wall, expanded), Doubt::BeamUnknown);
-    doubts.raise_if(curvature::matters(setup, expanded), Doubt::CurvedSurface);
-    doubts.raise_if(
-        uncertainty::unknown_temperature_matters(setup, wall, evidence.budget),
-        Doubt::TemperatureUnknown,
-    );
-    doubts.raise_if(way::v_path_matters(setup, wall, expanded), Doubt::VPathUncorrected);
-    doubts.raise_if(
-        setup.samples_per_cycle() < SAMPLES_PER_CYCLE_LIMIT,
-        Doubt::CoarseSampling,
-    );
     doubts.raise_if(
         evidence.used().any(|echo| echo.clipped && echo.information == 0.0),
         Doubt::ClippedEcho,

@@ -32,6 +32,8 @@ pub enum Source {
     Temperature,
     /// The noise that the reference pulse itself was learned with.
     ReferencePulse,
+    /// What is not known of the pulse's shape moves echoes that overlap: see [`crate::wall::thin`].
+    Overlap,
     /// The distance of a dual-element probe's elements.
     VPath,
     /// The back wall is rough: its least place lies before its mean, which is what a reading gives.
@@ -52,6 +54,7 @@ impl Source {
             Self::Phase => "phase",
             Self::Temperature => "temperature",
             Self::ReferencePulse => "reference-pulse",
+            Self::Overlap => "overlap",
             Self::VPath => "v-path",
             Self::Roughness => "roughness",
         }
@@ -85,7 +88,8 @@ impl Budget {
     /// Adds a term; one that is zero, negative or not a number is left out.
     pub fn add(&mut self, source: Source, standard_uncertainty: Metres) {
         if standard_uncertainty.get() > 0.0 {
-            // Ten places for eleven sources, of which calibration takes the place of zero: a full list cannot happen.
+            // Ten places for twelve sources, of which calibration takes the place of zero, and no probe has both a V and
+            // overlapping echoes: a full list cannot happen.
             let _ = self.terms.push(Term {
                 source,
                 standard_uncertainty,

@@ -21,6 +21,8 @@ JSON, one object a record and line; numbers or null, never NaN; more keys may fo
   coverage_factor
   coating_mm, coating_standard_uncertainty_mm         null without a velocity in [coating]
   coating_round_trip_ns, coating_round_trip_standard_uncertainty_ns
+  interpretation                 train: echoes that stand clear of each other; thin-wall: echoes that overlap,
+                                 fitted together with the interface echo; null if refused
   wrong_cycle_probability        upper bound of having read another cycle
   doubts                         words, see below; empty if there is none
   no_reading                     null, or {reason, detail}: a word, and a sentence with the advice
@@ -72,6 +74,7 @@ struct JsonRecord<'m> {
     coating_standard_uncertainty_mm: Option<f32>,
     coating_round_trip_ns: Option<f32>,
     coating_round_trip_standard_uncertainty_ns: Option<f32>,
+    interpretation: Option<&'static str>,
     wrong_cycle_probability: Option<f32>,
     doubts: Vec<&'static str>,
     no_reading: Option<JsonRefusal<'m>>,
@@ -233,6 +236,7 @@ pub fn line(measured: &Measured, limits: Option<&Limits>) -> String {
         coating_standard_uncertainty_mm: coating.and_then(|c| finite(c.standard_uncertainty.as_mm())),
         coating_round_trip_ns: trip.and_then(|trip| finite(trip.time.as_ns())),
         coating_round_trip_standard_uncertainty_ns: trip.and_then(|trip| finite(trip.standard_uncertainty.as_ns())),
+        interpretation: reading.map(|r| r.interpretation.word()),
         wrong_cycle_probability: reading.and_then(|r| finite(r.wrong_cycle_probability)),
         doubts: reading.map_or(Vec::new(), |r| r.doubts.iter().map(|d| d.word()).collect()),
         no_reading: measured.outcome.as_ref().err().map(|refusal| JsonRefusal {

@@ -319,6 +319,7 @@ fn look_at(name: &str, record: &Joined, clock: SampleClock, separate: bool) -> M
         span: None,
         outcome: Err(Refusal::no_setup()),
         findings: Findings::default(),
+        thin_wall: None,
         wall_limits: None,
         full_scale: record.format().full_scale(),
         jitter: None,

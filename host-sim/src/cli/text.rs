@@ -5,6 +5,7 @@ use crate::joining::TriggerJitter;
 use crate::measuring::Measured;
 use halfpulse::echo::pulse::METRICS_MINIMUM_SNR;
 use halfpulse::echo::separation::Separation;
+use halfpulse::echo::separation::thin_wall::ThinWall;
 use halfpulse::{EchoRole, Limits, Polarity, Reading};
 use std::fmt::Write as _;
 
@@ -94,6 +95,29 @@ fn limits_block(text: &mut String, reading: &Reading, limits: &Limits) {
     }
 }
 
+/// A likelihood ratio by its natural logarithm. Far beyond a million to one it says no more than that.
+fn ratio(log_odds: f32) -> String {
+    let tens = f64::from(log_odds) / std::f64::consts::LN_10;
+    if tens > 6.0 {
+        "more than a million to one".to_string()
+    } else {
+        format!("{:.0} to one", 10f64.powf(tens))
+    }
+}
+
+/// How a thin wall's echoes were read.
+fn thin_wall_line(text: &mut String, wall: &ThinWall) {
+    let _ = writeln!(
+        text,
+        "  a thin wall: its echoes overlap and were fitted together with the interface echo, each {:.2} of the one before; \
+         {} against no wall, {} against another period, {:.3} % of the energy left over",
+        wall.decay,
+        ratio(wall.log_odds),
+        ratio(wall.log_lead),
+        100.0 * wall.unexplained
+    );
+}
+
 /// The verdict on the nearest pair. Likelihood ratios far beyond a million to one say no more than that.
 fn separation_line(text: &mut String, separation: &Separation) {
     match &separation.pair {
@@ -155,6 +179,9 @@ pub fn block(measured: &Measured, limits: Option<&Limits>) -> String {
     match &measured.outcome {
         Ok(reading) => {
             reading_block(&mut text, reading);
+            if let Some(wall) = &measured.thin_wall {
+                thin_wall_line(&mut text, wall);
+            }
             if let Some(limits) = limits {
                 limits_block(&mut text, reading, limits);
             }

@@ -72,6 +72,7 @@ const TERMS: &[(Source, &str)] = &[
         Source::ReferencePulse,
         "the noise that the reference pulse itself was learned with",
     ),
+    (Source::Overlap, "the pulse's shape, where a thin wall's echoes overlap"),
     (Source::Roughness, "the back wall's roughness"),
     (Source::VPath, "the distance of a dual-element probe's elements"),
 ];

@@ -9,7 +9,7 @@ use halfpulse::echo::echo_at;
 use halfpulse::echo::noise::TimingNoise;
 use halfpulse::echo::pulse::{ReferencePulse, learn};
 use halfpulse::echo::separation::model::{Answer, LEAST_SPACING, Stretch, decide};
-use halfpulse::echo::separation::thin_wall::{ThinWall, thin_wall};
+use halfpulse::echo::separation::thin_wall::{Prior, ThinWall, thin_wall};
 use halfpulse::echo::separation::{LEARNED_MISMATCH, PulseTrust, Unresolved, Verdict, judge};
 use halfpulse::setup::PULSE_CAPACITY;
 use halfpulse::{AdcFormat, Hertz, Record, SampleClock};
@@ -159,8 +159,7 @@ fn val_bounds_at_other_rates() {
         let found = sampled(cycle as f32, &samples, &template, noise, |surroundings| {
             thin_wall(
                 surroundings,
-                first.round() as f32,
-                0.0,
+                &prior(first.round() as f32),
                 &mut [0.0; 512],
                 &mut [0.0; 416],
             )
@@ -468,6 +467,15 @@ fn two_echoes_of_a_modelled_pulse() {
     }
 }
 
+/// A place, and a pulse whose shape is known for certain.
+fn prior(around: f32) -> Prior {
+    Prior {
+        around,
+        offset: 0.0,
+        mismatch: 0.0,
+    }
+}
+
 fn thin(wall: f64, decay: f64, period: f64, snr_db: f64) -> Result<ThinWall, Unresolved> {
     let place = 300.4;
     let mut samples = vec![0.0; 900];
@@ -480,7 +488,7 @@ fn thin(wall: f64, decay: f64, period: f64, snr_db: f64) -> Result<ThinWall, Unr
         }
     }
     with_record(&samples, &pairs::reference(), noise_of(snr_db), |surroundings| {
-        thin_wall(surroundings, 300.0, 0.0, &mut [0.0; 512], &mut [0.0; 416])
+        thin_wall(surroundings, &prior(300.0), &mut [0.0; 512], &mut [0.0; 416])
     })
 }
 

@@ -21,9 +21,11 @@
 //! width are all off, or a probe whose pulse rises twice as fast as it decays, can give a spacing that is half a cycle off
 //! below 0.4 pulse durations: learn the pulse.
 
+mod dense;
 mod equations;
 pub mod lags;
 pub mod model;
+mod overlapping;
 pub mod pair;
 mod rough;
 pub mod shape;
