@@ -5,7 +5,7 @@ mod support;
 use serde_json::Value;
 use support::{Bench, Train, setup};
 
-const KEYS: [&str; 23] = [
+const KEYS: [&str; 24] = [
     "file",
     "shot",
     "span",
