@@ -20,6 +20,8 @@ const HIDDEN: f32 = 1.1;
 const WEAK_FIRST: f32 = 6.0;
 /// Loss for a train whose start contradicts the zero or the interface.
 const START_CONTRADICTED: f32 = 1.0;
+/// How far the shadow of another train's echo reaches, over the shortest spacing of echoes: one duration of the envelope.
+const SHADOW: f32 = 1.6;
 /// Highest number of a multiple. A start so far off that more would fit before the first echo is a wrong one.
 const LAST_MULTIPLE: u32 = 200;
 /// Echoes of other origin that may stand between two multiples.
@@ -43,6 +45,8 @@ pub struct Hypothesis {
     pub(super) score: f32,
     /// Some tooth lies in the dead zone.
     pub(super) hidden: bool,
+    /// Multiples that have an echo.
+    pub(super) echoes: u8,
     /// Number of the first and of the last multiple that has an echo.
     pub(super) first: u32,
     pub(super) last: u32,
@@ -93,6 +97,11 @@ pub(super) fn ranked(surroundings: &Surroundings<'_>, echoes: &EchoList, rules: 
             polarity: echo.polarity,
         });
     }
+    // Beside an echo that is somebody else's already, a weaker one does not show.
+    let mut taken: Vec<f32, ECHO_CAPACITY> = Vec::new();
+    for echo in echoes.iter().filter(|echo| matches!(echo.role, EchoRole::BackWall(_))) {
+        let _ = taken.push(rules.straight_place(echo.position.as_samples()));
+    }
     let rules = &straight;
     let mut ranked = Ranked::new();
     let mut consider = |anchor: f32, number: u32, period: f32| {
@@ -110,6 +119,7 @@ pub(super) fn ranked(surroundings: &Surroundings<'_>, echoes: &EchoList, rules: 
             period,
             score: 0.0,
             hidden: false,
+            echoes: 0,
             first: 0,
             last: 0,
         };
@@ -117,7 +127,7 @@ pub(super) fn ranked(surroundings: &Surroundings<'_>, echoes: &EchoList, rules: 
         if !(hypothesis.period >= rules.shortest) {
             return;
         }
-        score(&mut hypothesis, &teeth, rules, tolerance, at_threshold);
+        score(&mut hypothesis, &teeth, &taken, rules, tolerance, at_threshold);
         rank(&mut ranked, hypothesis, tolerance);
     };
     for (i, tooth) in teeth.iter().enumerate() {
@@ -222,13 +232,20 @@ fn polish(hypothesis: &mut Hypothesis, teeth: &Teeth, tolerance: f32) {
 
 /// Scores a hypothesis against the echoes, and notes which multiples it found.
 #[inline(never)]
-fn score(hypothesis: &mut Hypothesis, teeth: &Teeth, rules: &Rules<'_>, tolerance: f32, at_threshold: f32) {
+fn score(
+    hypothesis: &mut Hypothesis,
+    teeth: &Teeth,
+    taken: &[f32],
+    rules: &Rules<'_>,
+    tolerance: f32,
+    at_threshold: f32,
+) {
     hypothesis.score = f32::NEG_INFINITY;
     let largest = teeth.iter().fold(0.0, |m, tooth| math::larger(m, tooth.amplitude));
     let last_place = teeth.last().map_or(0.0, |tooth| tooth.place);
     // What a tooth without echo says: an amplitude of one standard deviation.
     let missing = math::ln(1.0 + 1.0 / 3.0) - at_threshold - HOLE;
-    let (mut sum, mut first, mut index) = (0.0, None, 0usize);
+    let (mut sum, mut first, mut index, mut hits) = (0.0, None, 0usize, 0u8);
     let mut polarity = None;
     let mut penalty = 0.0;
     if (hypothesis.zero - rules.start).abs() > rules.start_tolerance {
@@ -268,11 +285,14 @@ fn score(hypothesis: &mut Hypothesis, teeth: &Teeth, rules: &Rules<'_>, toleranc
                         penalty += WEAK_FIRST;
                     }
                 }
+                hits += 1;
                 if sum > hypothesis.score {
                     hypothesis.score = sum;
                     hypothesis.last = number;
+                    hypothesis.echoes = hits;
                 }
             }
+            None if taken.iter().any(|t| (place - t).abs() < rules.shortest * SHADOW) => {}
             None => {
                 sum += missing;
                 // Not even all echoes that are left could still raise the score.

@@ -188,15 +188,21 @@ pub fn other_trains(
     }
     let tolerance = tolerance(surroundings);
     let ranked = choosing::ranked(surroundings, echoes, rules, tolerance);
-    let Some(best) = ranked.first().filter(|best| best.score > SECOND_TRAIN) else {
+    let Some(best) = ranked.first() else {
         return (false, false);
     };
-    let same_start = (best.zero - rules.start).abs() < rules.start_tolerance + tolerance;
-    let thinner = best.period < train.period && same_start && echoes.iter().any(before);
     let leads = choosing::leader(&ranked).is_ok();
+    let off_start = (best.zero - rules.start).abs();
+    // Three echoes that find the start of the wall by themselves need not weigh much.
+    let from_start = best.echoes > 2 && off_start < tolerance && best.score > FROM_START;
+    let same_start = off_start < rules.start_tolerance + tolerance && best.score > SECOND_TRAIN;
+    let thinner = best.period < train.period && (from_start || same_start) && echoes.iter().any(before);
     let strange = (best.period - train.period).abs() > tolerance;
     (leads && thinner, strange && best.score > CLEAR_TRAIN)
 }
+
+/// The same for one that begins where the wall does.
+const FROM_START: f32 = 3.0;
 
 /// The same for a train that need not begin where the chosen one does, nor lead: three echoes with all their weight. Grain
 /// at -20 dB of the back wall reaches it in 1 of 600 readings.
