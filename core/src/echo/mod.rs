@@ -369,10 +369,13 @@ pub fn settle_half_cycles(
     }
 }
 
-/// The strongest echo without a role.
+/// The strongest echo without a role that is whole: the lag of a clipped one says how it was cut.
 fn strongest_other(echoes: &EchoList) -> Option<Echo> {
     let mut strongest: Option<Echo> = None;
-    for echo in echoes.iter().filter(|echo| echo.role == EchoRole::Other) {
+    for echo in echoes
+        .iter()
+        .filter(|echo| echo.role == EchoRole::Other && !echo.clipped)
+    {
         if strongest.is_none_or(|s| echo.amplitude > s.amplitude) {
             strongest = Some(*echo);
         }
