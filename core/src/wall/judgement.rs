@@ -30,6 +30,10 @@ const UNEXPLAINED_LIMIT: f32 = 0.3;
 /// The same for one or two multiples, to which one coincidence is enough.
 const UNEXPLAINED_LIMIT_OF_FEW: f32 = 0.1;
 
+/// Strangers of less than this share of the multiples' energy may stand beside multiples that do not look like the pulse: spikes are as
+/// many again and more, a thin block's echoes under a film, which run into each other, stay below 0.5.
+const OTHERS_LIMIT: f32 = 0.6;
+
 /// So many standard uncertainties of an excess are no chance any more (1 in 370).
 const BEYOND_CHANCE: f32 = 3.0;
 /// Unexplained over explained amplitude from which what came back is not the pulse at all. An evenly attenuated pulse or one of half the
@@ -152,7 +156,7 @@ impl Evidence<'_> {
             .fold(0.0, |m, echo| math::larger(m, echo.mismatch))
     }
 
-    /// Do all multiples but the strongest weigh at least half of it, and what is no multiple little? All strangers count here, those
+    /// Do all multiples but the strongest together reach a quarter of its height, and what is no multiple little? All strangers count here, those
     /// too that were listened to as grain.
     fn is_even_train(&self) -> bool {
         let (mut all, mut strongest, mut others) = (0.0, 0.0, 0.0);
@@ -167,7 +171,7 @@ impl Evidence<'_> {
                 _ => {}
             }
         }
-        all - strongest > 0.25 * strongest && others < UNEXPLAINED_LIMIT * all
+        all - strongest > 0.06 * strongest && others < OTHERS_LIMIT * all
     }
 
     /// Does the strongest of the echoes that the reading rests on stand out of grain and noise? A lone one must.
