@@ -30,9 +30,9 @@ const UNEXPLAINED_LIMIT: f32 = 0.3;
 /// The same for one or two multiples, to which one coincidence is enough.
 const UNEXPLAINED_LIMIT_OF_FEW: f32 = 0.1;
 
-/// Strangers of less than this share of the multiples' energy may stand beside multiples that do not look like the pulse: spikes are as
-/// many again and more, a thin block's echoes under a film, which run into each other, stay below 0.5.
-const OTHERS_LIMIT: f32 = 0.6;
+/// Strangers of less than the multiples' own energy may stand beside multiples that do not look like the pulse: spikes are as
+/// many again and more, a thin block's echoes under a film, which run into each other, stay below it.
+const OTHERS_LIMIT: f32 = 1.0;
 
 /// So many standard uncertainties of an excess are no chance any more (1 in 370).
 const BEYOND_CHANCE: f32 = 3.0;
