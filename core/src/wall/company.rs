@@ -9,9 +9,11 @@ use crate::echo::train::Train;
 use crate::echo::{Echo, EchoRole, Surroundings};
 use crate::math;
 
-/// How far the heights of three neighbouring multiples may lie off an even fall, in nepers, beyond what noise explains. The
-/// spreading of a plane beam bends them by up to 0.2 (Rogers & Van Buren 1974, formula from memory).
-const BEAT: f32 = 0.25;
+/// How far the middle one of three neighbouring multiples may rise above an even fall, in nepers, beyond what noise explains. In
+/// the near field a plane beam's spreading bends heights by up to 0.2 (Rogers & Van Buren 1974, formula from memory).
+const RISE: f32 = 0.25;
+/// How far it may sink below. In the far field heights go with 1 / n, and of the first three the second lies ln(4/3) = 0.29 low.
+const SAG: f32 = 0.34;
 /// Standard deviations that noise is allowed.
 const CHANCE: f32 = 4.0;
 /// Least height of an echo beside a multiple, as a share of the multiple's.
@@ -47,7 +49,8 @@ pub fn beats(surroundings: &Surroundings<'_>, echoes: &[Echo]) -> bool {
         }
         let bend = math::ln(before.amplitude * after.amplitude / (middle.amplitude * middle.amplitude));
         let (a, b, c) = (relative(before), 2.0 * relative(middle), relative(after));
-        bend.abs() > BEAT + CHANCE * math::sqrt(a * a + b * b + c * c)
+        let chance = CHANCE * math::sqrt(a * a + b * b + c * c);
+        bend > SAG + chance || bend < -(RISE + chance)
     })
 }
 
