@@ -1,15 +1,17 @@
 //! Which echoes are those of a coating's own reverberation.
 //!
 //! **In**: the echoes with their roles and the time through the coating. **Out**: the role [`EchoRole::Coating`] for those that
-//! lie a whole number of such times behind the start or behind a back wall, each weaker than the one before.
+//! lie a whole number of such times behind the start, or behind a back wall that is stronger.
 
 use super::{Rules, Train, tolerance};
 use crate::echo::{EchoList, EchoRole, Surroundings};
 use crate::math;
+use crate::workspace::ECHO_CAPACITY;
+use heapless::Vec;
 
 /// A coating's reverberation is followed this many times to and fro. At a fifth of the amplitude each, what comes
 /// later is lost in the noise.
-const LAST_ROUND: u8 = 6;
+const LAST_ROUND: f32 = 6.0;
 /// Of what the time through the coating is known, an echo of the n-th round may lie off by n times this, in cycles.
 const PER_ROUND: f32 = 0.05;
 
@@ -28,31 +30,25 @@ pub fn mark_coating(
     if !(trip >= rules.shortest) {
         return;
     }
-    let tolerance = tolerance(surroundings);
-    let period = train.period;
-    for back_wall in 0..=train.first_multiple.saturating_add(train.echoes) {
-        let base = if back_wall == 0 {
-            Some((rules.start, f32::INFINITY))
-        } else {
-            let wall = echoes.iter().find(|echo| echo.role == EchoRole::BackWall(back_wall));
-            wall.map(|echo| (echo.position.as_samples(), echo.amplitude))
+    let cycle = surroundings.samples_per_cycle;
+    // Where rounds begin, and what they are weaker than: the start of the wall, and every back wall.
+    let mut starts: Vec<(f32, f32), ECHO_CAPACITY> = Vec::new();
+    let _ = starts.push((rules.start, f32::INFINITY));
+    for echo in echoes.iter().filter(|echo| matches!(echo.role, EchoRole::BackWall(_))) {
+        let _ = starts.push((echo.position.as_samples(), echo.amplitude));
+    }
+    for echo in echoes.iter_mut().filter(|echo| echo.role == EchoRole::Other) {
+        let is_round = |&(from, height): &(f32, f32)| {
+            let after = echo.position.as_samples() - from;
+            if !(after > 0.0 && after < train.period + trip && echo.amplitude < height) {
+                return false;
+            }
+            let round = math::round_to_i32(after / trip) as f32;
+            let reach = tolerance(surroundings) + PER_ROUND * round * cycle;
+            (1.0..=LAST_ROUND).contains(&round) && (after - round * trip).abs() < reach
         };
-        let Some((place, mut before)) = base else { continue };
-        for round in 1..=LAST_ROUND {
-            let after = f32::from(round) * trip;
-            if after > period + trip {
-                break;
-            }
-            let reach = tolerance + PER_ROUND * f32::from(round) * surroundings.samples_per_cycle;
-            let found = echoes.iter_mut().find(|echo| {
-                matches!(echo.role, EchoRole::Other | EchoRole::Coating)
-                    && (echo.position.as_samples() - place - after).abs() < reach
-                    && echo.amplitude < before
-            });
-            if let Some(echo) = found {
-                echo.role = EchoRole::Coating;
-                before = math::smaller(before, echo.amplitude);
-            }
+        if starts.iter().any(is_round) {
+            echo.role = EchoRole::Coating;
         }
     }
 }
