@@ -58,7 +58,7 @@ pub struct Arguments {
     /// How many shots of the same place
     #[arg(long, default_value_t = 1)]
     pub shots: u32,
-    /// How many rounds of all delays of [equivalent_time] instead; after a single round the first delay is fired again
+    /// How many rounds of all delays of the scene's equivalent_time instead; after a single round the first delay is fired again
     #[arg(long, conflicts_with = "shots", value_parser = clap::value_parser!(u32).range(1..=65_535))]
     pub rounds: Option<u32>,
     /// Where to write the shots: .npy, .csv or .wav (one shot); the truth goes beside it as .json
