@@ -85,6 +85,8 @@ fn val_train_fit() {
     let half_cycle = 0.5 * VELOCITY * 0.5 / 5e6;
     // Noise of its own for each, so that their scatter tells how sure the figures are.
     for (seed, decay, snr_db) in [
+        (5, 0.7, 16.0),
+        (6, 0.85, 16.0),
         (7, 0.7, 20.0),
         (8, 0.85, 20.0),
         (9, 0.7, 30.0),
@@ -125,7 +127,11 @@ fn val_train_fit() {
             bias / deviation,
             100.0 * share
         ));
-        assert!(ratio <= 1.10, "decay {decay}, {snr_db} dB: {ratio} of the bound");
+        let chance = 2.0 / (2.0 * errors.len() as f64).sqrt();
+        assert!(
+            ratio <= 1.06 + chance,
+            "decay {decay}, {snr_db} dB: {ratio} of the bound"
+        );
         assert!(
             (0.93..0.97).contains(&share),
             "decay {decay}, {snr_db} dB: {share} within k = 2"
@@ -140,7 +146,7 @@ fn val_train_fit() {
         .fold((f64::MAX, 0.0f64), |(l, h), &r| (l.min(r), h.max(r)));
     let test = "val_train_fit";
     readme::figure(
-        "scatter of the thickness over the Cramér-Rao bound (six echoes, 20 to 40 dB)",
+        "scatter of the thickness over the Cramér-Rao bound (six echoes, 16 to 40 dB)",
         &format!("{lowest:.2} to {highest:.2}"),
         test,
     );
