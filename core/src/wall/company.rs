@@ -62,14 +62,16 @@ pub fn parts(surroundings: &Surroundings<'_>, echoes: &[Echo], train: &Train) ->
     let tolerance = TOLERANCE * surroundings.samples_per_cycle;
     // Which multiple an echo precedes, and the period that it would stand for.
     let shorter = |echo: &Echo| {
+        if echo.role != EchoRole::Other || !(echo.mismatch < UNRECOGNISED) {
+            return None;
+        }
         let place = echo.position.as_samples();
         let number = math::floor((place - zero) / train.period) + 1.0;
+        if number < 2.0 {
+            return None;
+        }
         let of = multiple(echoes, u8::try_from(math::saturating_i32(number)).ok()?)?;
-        let fits = echo.role == EchoRole::Other
-            && number >= 2.0
-            && echo.mismatch < UNRECOGNISED
-            && echo.amplitude > SHARE * of.amplitude
-            && surroundings.stands_out(echo.amplitude, place);
+        let fits = echo.amplitude > SHARE * of.amplitude && surroundings.stands_out(echo.amplitude, place);
         fits.then_some((number, (place - zero) / number))
     };
     echoes.iter().any(|echo| {

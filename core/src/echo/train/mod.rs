@@ -182,6 +182,10 @@ pub fn other_trains(
             .filter(of)
             .fold(0.0, |sum, echo| sum + echo.amplitude * echo.amplitude)
     };
+    // One echo makes no train.
+    if echoes.iter().filter(|echo| echo.role == EchoRole::Other).count() < 2 {
+        return (false, false);
+    }
     // Not only of what stands out of the grain: a whole train of strangers was listened to as grain.
     if energy(false) < WORTH_A_LOOK * energy(true) && !echoes.iter().any(before) {
         return (false, false);
