@@ -1,11 +1,10 @@
 //! Where a second echo is looked for: which echoes are suspected, and how far around them. Rules of the core's own, by hand.
 
+use crate::train_records::echo_near;
 use crate::val_overlapping::{gaussian, with_record};
 use halfpulse::SamplePosition;
-use halfpulse::echo::arrival::{Estimator, Search, estimate};
-use halfpulse::echo::correlation::Sign;
 use halfpulse::echo::separation::{PulseTrust, stretch_around, suspect};
-use halfpulse::echo::{Echo, EchoRole, echo_at};
+use halfpulse::echo::{Echo, EchoRole};
 
 const DURATION: f32 = 20.0;
 
@@ -17,23 +16,7 @@ fn echoes(list: &[(f32, f32, f32)]) -> Vec<Echo> {
     let samples: Vec<f64> = (0..400)
         .map(|i| 9_000.0 * gaussian(f64::from(i) - 200.0, 0.1, 0.6, 0.0))
         .collect();
-    let any = with_record(&samples, &template, 10.0, |surroundings| {
-        let search = Search {
-            around: 200,
-            reach: 2.0,
-            sign: Sign::Either,
-            samples_per_cycle: 10.0,
-        };
-        let codes = surroundings.record.codes();
-        let arrival = estimate(
-            Estimator::LeastSquares,
-            codes,
-            &search,
-            &surroundings.pulse,
-            &mut [0.0; 512],
-        );
-        echo_at(surroundings, arrival.expect("an echo")).expect("inside")
-    });
+    let any = with_record(&samples, &template, 10.0, |surroundings| echo_near(surroundings, 200.0));
     list.iter()
         .map(|&(place, amplitude, mismatch)| Echo {
             position: SamplePosition::new(place as u32, place.fract()),

@@ -9,7 +9,7 @@ use halfpulse::echo::correlation::Sign;
 use halfpulse::echo::noise::TimingNoise;
 use halfpulse::echo::pulse::{ReferencePulse, learn};
 use halfpulse::echo::train::{Hypothesis, Rules, Train, Undecided, choose, fit, other_trains};
-use halfpulse::echo::{EchoList, Surroundings, echo_at};
+use halfpulse::echo::{Echo, EchoList, Surroundings, echo_at};
 use halfpulse::path::PathLaw;
 use halfpulse::setup::PULSE_CAPACITY;
 use halfpulse::workspace::{ECHO_CAPACITY, TRAIN_LAGS};
@@ -24,6 +24,25 @@ pub const START: f64 = 100.25;
 
 pub fn pulse(t: f64) -> f64 {
     oracle::gaussian_pulse(t / RATE, 5e6, 0.6)
+}
+
+/// The echo at a place known within two samples, at ten samples a cycle.
+pub fn echo_near(surroundings: &Surroundings<'_>, place: f64) -> Echo {
+    let search = Search {
+        around: place.round() as u32,
+        reach: 2.0,
+        sign: Sign::Either,
+        samples_per_cycle: 10.0,
+    };
+    let codes = surroundings.record.codes();
+    let arrival = estimate(
+        Estimator::LeastSquares,
+        codes,
+        &search,
+        &surroundings.pulse,
+        &mut [0.0; 512],
+    );
+    echo_at(surroundings, arrival.expect("an echo")).expect("inside")
 }
 
 /// A record with echoes of these places and amplitudes.
@@ -86,20 +105,7 @@ pub fn read_codes(codes: &[i16], seen: &[(f64, f64)], rules: &Rules<'_>) -> Outc
     let mut seen = seen.to_vec();
     seen.sort_by(|a, b| a.0.total_cmp(&b.0));
     for (place, _) in seen {
-        let search = Search {
-            around: place.round() as u32,
-            reach: 2.0,
-            sign: Sign::Either,
-            samples_per_cycle: 10.0,
-        };
-        let arrival = estimate(
-            Estimator::LeastSquares,
-            codes,
-            &search,
-            &surroundings.pulse,
-            &mut [0.0; 512],
-        );
-        let echo = echo_at(&surroundings, arrival.expect("an echo")).expect("inside");
+        let echo = echo_near(&surroundings, place);
         found.push(echo).expect("room");
     }
     let mut lags = [0.0; ECHO_CAPACITY * TRAIN_LAGS];

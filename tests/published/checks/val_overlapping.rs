@@ -2,10 +2,8 @@
 //!
 //! The records are made here without noise; the noise that the steps are told is that of the tables of bounds.
 
+use crate::train_records::echo_near;
 use halfpulse::echo::Surroundings;
-use halfpulse::echo::arrival::{Estimator, Search, estimate};
-use halfpulse::echo::correlation::Sign;
-use halfpulse::echo::echo_at;
 use halfpulse::echo::noise::TimingNoise;
 use halfpulse::echo::pulse::{ReferencePulse, learn};
 use halfpulse::echo::separation::model::{Answer, LEAST_SPACING, Stretch, decide};
@@ -291,23 +289,7 @@ fn val_classical_verdict() {
                 .map(|i| offset + echo(f64::from(i) - 200.0) + ratio * echo(f64::from(i) - 200.0 - spacing))
                 .collect();
             with_record(&samples, &template, 10.0, |surroundings| {
-                let find = |place: f64| {
-                    let search = Search {
-                        around: place.round() as u32,
-                        reach: 2.0,
-                        sign: Sign::Either,
-                        samples_per_cycle: 10.0,
-                    };
-                    let codes = surroundings.record.codes();
-                    let arrival = estimate(
-                        Estimator::LeastSquares,
-                        codes,
-                        &search,
-                        &surroundings.pulse,
-                        &mut [0.0; 512],
-                    );
-                    echo_at(surroundings, arrival.expect("an echo")).expect("inside")
-                };
+                let find = |place: f64| echo_near(surroundings, place);
                 let (first, second) = (find(200.0), find(200.0 + spacing));
                 let found = judge(surroundings, &first, &second, &mut [0.0; 512]);
                 let name = format!("{share} durations, ratio {ratio}, offset {offset}");
