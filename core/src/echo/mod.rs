@@ -202,6 +202,9 @@ impl Surroundings<'_> {
 /// record, chance reaches 4.
 pub(crate) const STANDS_OUT: f32 = 6.0;
 
+/// An echo of which this share of the amplitude is unexplained is hardly recognised.
+pub(crate) const UNRECOGNISED: f32 = 0.5;
+
 /// The least-squares arrival near `index`, within three quarters of a cycle. `None` if the pulse would stand out of
 /// the record.
 fn find_arrival(surroundings: &Surroundings<'_>, index: u32, sign: Sign, scratch: &mut [f32]) -> Option<Arrival> {

@@ -406,10 +406,8 @@ impl<'w> Gauge<'w> {
         let mut heard = meter.meter(Stage::Scan, || self.scan(record, range));
         let (scan, noise) = &mut heard;
         meter.meter(Stage::Echoes, || self.measure_echoes(record, range, scan, noise));
-        let outcome = match meter.meter(Stage::Train, || self.find_train(record, range, scan, noise)) {
-            Ok(train) => meter.meter(Stage::Wall, || self.wall_or_thin_wall(record, noise, &train)),
-            Err(why) => meter.meter(Stage::Wall, || self.refused_or_thin_wall(record, noise, why)),
-        };
+        let found = meter.meter(Stage::Train, || self.find_train(record, range, scan, noise));
+        let outcome = meter.meter(Stage::Wall, || self.wall_or_thin_wall(record, noise, found));
         // What is known of the pulse helps most where there was no reading.
         meter.meter(Stage::Pulse, || self.describe(record, noise));
         self.noise = *noise;

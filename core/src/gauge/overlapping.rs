@@ -60,32 +60,15 @@ impl Gauge<'_> {
         }
     }
 
-    /// The wall of a train, or that of overlapping echoes where they tell one and the train is in doubt.
+    /// The wall of a train, or why there is none; or that of overlapping echoes, where they tell one and the outcome is in doubt.
     #[inline(never)]
     pub(super) fn wall_or_thin_wall(
         &mut self,
         record: &Record<'_>,
         noise: &Noise,
-        train: &Train,
+        found: Result<Train, NoReading>,
     ) -> Result<Reading, NoReading> {
-        let mut outcome = self.wall(record, noise, train);
-        if let Some(look) = self.second_look
-            && self.wants_second_look(&outcome)
-        {
-            look(self, record, noise, &mut outcome);
-        }
-        outcome
-    }
-
-    /// A refusal, or the wall of overlapping echoes where they tell one.
-    #[inline(never)]
-    pub(super) fn refused_or_thin_wall(
-        &mut self,
-        record: &Record<'_>,
-        noise: &Noise,
-        why: NoReading,
-    ) -> Result<Reading, NoReading> {
-        let mut outcome = Err(why);
+        let mut outcome = found.and_then(|train| self.wall(record, noise, &train));
         if let Some(look) = self.second_look
             && self.wants_second_look(&outcome)
         {

@@ -6,7 +6,7 @@
 //! before them, at n times a shorter period.
 
 use crate::echo::train::Train;
-use crate::echo::{Echo, EchoRole, Surroundings};
+use crate::echo::{Echo, EchoRole, Surroundings, UNRECOGNISED};
 use crate::math;
 
 /// How far the middle one of three neighbouring multiples may rise above an even fall, in nepers, beyond what noise explains. In
@@ -20,8 +20,6 @@ const CHANCE: f32 = 4.0;
 const SHARE: f32 = 0.15;
 /// Cycles by which two places may differ that stand for one period.
 const TOLERANCE: f32 = 0.15;
-/// An echo of which this share of the amplitude is unexplained is hardly recognised.
-const UNRECOGNISED: f32 = 0.5;
 
 fn multiple(echoes: &[Echo], number: u8) -> Option<&Echo> {
     echoes.iter().find(|echo| echo.role == EchoRole::BackWall(number))

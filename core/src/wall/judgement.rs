@@ -5,7 +5,7 @@
 //! everything says nothing.
 
 use crate::echo::train::Train;
-use crate::echo::{Echo, EchoRole, Surroundings};
+use crate::echo::{Echo, EchoRole, Surroundings, UNRECOGNISED};
 use crate::math::{self, RECTANGULAR};
 use crate::outcome::{Doubt, Doubts};
 use crate::path::PathLaw;
@@ -20,9 +20,6 @@ use crate::wall::{curvature, way};
 pub(super) const WRONG_CYCLE_LIMIT: f32 = 1e-3;
 /// Below this many samples a cycle the sampling counts as coarse.
 const SAMPLES_PER_CYCLE_LIMIT: f32 = 4.0;
-
-/// An echo of which this share of the amplitude is unexplained is hardly recognised.
-const UNRECOGNISED: f32 = 0.5;
 
 /// More energy than this share of the train's in echoes that the train does not explain: among so many, a train can be
 /// found by chance. Grain without any back wall reaches 0.3 in all but one of 1000 readings, paint's reverberations 0.15.
